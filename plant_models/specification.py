@@ -1,0 +1,123 @@
+"""A model file's content as frozen values, checked once at the border and trusted afterwards.
+
+Times are seconds. Every other number is in the engineering unit of its tag; noise, bias, tolerance and walk are
+differences in that unit. Gains of integrating paths are per second.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+Range = tuple[float, float]
+
+
+@dataclass(frozen=True, slots=True)
+class InputSpec:
+    """A measured input: a manipulated variable or a measured disturbance."""
+
+    tag: str
+    unit: str
+    operating_point: float
+    range: Range
+    validated_range: Range | None = None
+    max_age: float | None = None
+    """Seconds after which a held value makes the estimates Uncertain; None: three sample times."""
+
+
+@dataclass(frozen=True, slots=True)
+class SensorSpec:
+    """A measured output."""
+
+    tag: str
+    unit: str
+    operating_point: float
+    range: Range
+    noise_sd: float
+    tolerance: float
+    """Calibration tolerance, the bias worth finding; the file's default is four times noise_sd."""
+    validated_range: Range | None = None
+    bias_walk_sd: float = 0.0
+    """Random-walk offset per square root of an hour; zero for none."""
+    bias_initial_sd: float = 0.0
+    on_change: bool = False
+    """Reported on change only: no news means the same value again."""
+    max_age: float | None = None
+
+
+@dataclass(frozen=True, slots=True)
+class LabSpec:
+    """Late laboratory results of an estimate."""
+
+    tag: str
+    sd: float
+
+
+@dataclass(frozen=True, slots=True)
+class EstimateSpec:
+    """An unmeasured output."""
+
+    tag: str
+    unit: str
+    operating_point: float
+    range: Range
+    validated_range: Range | None = None
+    bias_walk_sd: float = 0.0
+    bias_initial_sd: float = 0.0
+    lab: LabSpec | None = None
+    interval_scale: float = 1.0
+
+
+@dataclass(frozen=True, slots=True)
+class DisturbanceSpec:
+    """An unmeasured disturbance: first-order Gauss-Markov (sd, time_constant) or random walk (walk_sd, initial_sd).
+
+    Exactly one of the two pairs is given. ``at_input`` names the input where it enters, through that input's paths.
+    """
+
+    name: str
+    sd: float | None = None
+    time_constant: float | None = None
+    walk_sd: float | None = None
+    """Per square root of an hour."""
+    initial_sd: float = 0.0
+    at_input: str | None = None
+
+
+@dataclass(frozen=True, slots=True)
+class PathSpec:
+    """One transfer function, from an input or a disturbance to a sensor or an estimate.
+
+    Either factored (``numerator is None``)::
+
+        gain * prod(lead_i s + 1) / prod(tau_i s + 1) / (s if integrating else 1) * exp(-dead_time s)
+
+    or polynomial, ``numerator(s) / denominator(s) * exp(-dead_time s)`` in descending powers of s, s in 1/second.
+    """
+
+    source: str
+    target: str
+    gain: float | None = None
+    time_constants: tuple[float, ...] = ()
+    lead_times: tuple[float, ...] = ()
+    dead_time: float = 0.0
+    integrating: bool = False
+    numerator: tuple[float, ...] | None = None
+    denominator: tuple[float, ...] | None = None
+
+
+@dataclass(frozen=True, slots=True)
+class UnitSpec:
+    """A whole model file: one process unit."""
+
+    name: str
+    title: str
+    sample_time: float
+    inputs: tuple[InputSpec, ...]
+    sensors: tuple[SensorSpec, ...]
+    estimates: tuple[EstimateSpec, ...]
+    disturbances: tuple[DisturbanceSpec, ...]
+    paths: tuple[PathSpec, ...]
+    false_flag_interval: float
+    """Wanted mean time between false flags, per sensor, in seconds."""
+    source_text: str = ""
+    """The file's text, kept with the revision."""
