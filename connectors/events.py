@@ -1,4 +1,4 @@
-"""What a source tells besides readings: that its connection came or went, and that readings were lost on the way."""
+"""What a source tells besides readings: its connection came or went, or readings were lost on the way."""
 
 from __future__ import annotations
 

@@ -1,4 +1,4 @@
-"""What the cycles see: the inputs and the sensors' readings of one or more cycles, after every decision that needed a clock."""
+"""What cycles see: inputs and sensor readings, after every decision that needed a clock has been taken."""
 
 from __future__ import annotations
 
@@ -34,8 +34,9 @@ class CycleQuality(IntEnum):
 class CycleReadings:
     """The readings of N consecutive cycles, all arrays C-contiguous.
 
-    Shapes: times (N,) int64 UTC microseconds; u (N, n_inputs) and y (N, n_sensors) float64 in engineering units, nan
-    where there is none; u_quality and y_quality int8 of the same shapes, codes of :class:`CycleQuality`.
+    Shapes: times (N,) int64 UTC microseconds; u (N, n_inputs) and y (N, n_sensors) float64 in engineering
+    units, nan where there is none; u_quality and y_quality int8 of the same shapes, codes of
+    :class:`CycleQuality`.
     """
 
     times: NDArray[np.int64]
