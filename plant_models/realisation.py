@@ -1,0 +1,192 @@
+"""One path as a continuous state space: x' = A x + B u, y = C x + D u, dead time apart.
+
+Every path is built on its own, from first-order sections where it can be, so that no state is shared, nothing
+has to be reduced, and the matrices are well scaled for seconds and for hours. An integrator is always the last
+state: its derivative is what the lags put out, and it is the only state that reaches the output. So an
+integrating path whose integrating state is zero contributes nothing but its direct term, however its lags were
+realised.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import NamedTuple
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy import linalg
+
+from plant_models.errors import RealisationError
+from plant_models.specification import PathSpec
+from plant_models.transfer_function import Polynomials, faults, poles, polynomials
+
+Vector = NDArray[np.float64]
+Matrix = NDArray[np.float64]
+
+_APART = 0.1
+"""Real poles at least this far apart, relatively, are realised in parallel; closer ones in companion form."""
+
+
+@dataclass(frozen=True)
+class Realisation:
+    """x' = A x + B u, y = C x + D u for one input and one output; time in seconds.
+
+    Shapes: A (n, n); B, C (n,); D a number. n is zero for a static gain. When ``integrating``, the last state
+    is the integrator: the last column of A is zero.
+    """
+
+    A: Matrix
+    B: Vector
+    C: Vector
+    D: float
+    integrating: bool
+
+    @property
+    def order(self) -> int:
+        return int(self.B.size)
+
+    def steady(self) -> Vector:
+        """(n,) the state that a constant unit input leads to, -A^{-1} B; zero for the integrating state."""
+        state = np.zeros(self.order)
+        stable = self.order - self.integrating
+        if stable:
+            state[:stable] = np.linalg.solve(-self.A[:stable, :stable], self.B[:stable])
+        return state
+
+
+class _System(NamedTuple):
+    """A realisation under construction."""
+
+    A: Matrix
+    B: Vector
+    C: Vector
+    D: float
+
+
+def realise(path: PathSpec) -> Realisation:
+    """The state space of one path, dead time apart.
+
+    :raises RealisationError: if the path is improper, unstable, integrates more than once or is not finite.
+    """
+    found = faults(path)
+    if found:
+        raise RealisationError(*found)
+    if path.numerator is None:
+        system, integrating = _factored(path), path.integrating
+    else:
+        system, integrating = _polynomial(path)
+    return Realisation(system.A, system.B, system.C, float(system.D) + 0.0, integrating)
+
+
+def _factored(path: PathSpec) -> _System:
+    """A cascade of first-order sections, the gain in C and D, an integrator at its end.
+
+    Leads and lags are paired by size. One lead more than there are lags is allowed before an integrator.
+    """
+    gain = float(path.gain or 0.0)
+    lags = sorted((lag for lag in path.time_constants if lag != 0.0), reverse=True)
+    leads = sorted((lead for lead in path.lead_times if lead != 0.0), key=abs, reverse=True)
+    unpaired = leads.pop() if len(leads) > len(lags) else 0.0
+    system = _cascade(lags, leads + [0.0] * (len(lags) - len(leads)))
+    if path.integrating:
+        system = _integrated(system, unpaired)
+    return system._replace(C=gain * system.C, D=gain * system.D)
+
+
+def _cascade(lags: list[float], leads: list[float]) -> _System:
+    """The product of (L_i s + 1)/(T_i s + 1), section by section; T positive, L of either sign. ::
+
+        x_i' = (u_i - x_i)/T_i,   y_i = (1 - L_i/T_i) x_i + (L_i/T_i) u_i,   u_{i+1} = y_i
+
+    A is lower triangular, and every state is 1 under a constant unit input.
+    """
+    order = len(lags)
+    A, B = np.zeros((order, order)), np.zeros(order)
+    row, direct = np.zeros(order), 1.0
+    for i, (lag, lead) in enumerate(zip(lags, leads, strict=True)):
+        A[i] = row / lag
+        A[i, i] -= 1.0 / lag
+        B[i] = direct / lag
+        row = lead / lag * row
+        row[i] += 1.0 - lead / lag
+        direct *= lead / lag
+    return _System(A, B, row, direct)
+
+
+def _integrated(system: _System, lead: float = 0.0) -> _System:
+    """(lead s + 1)/s after ``system``: y = z + lead D u, z' = (C + lead C A) x + (D + lead C B) u."""
+    A, B, C, D = system
+    order = B.size
+    bigger = np.zeros((order + 1, order + 1))
+    bigger[:order, :order] = A
+    bigger[order, :order] = C + lead * (C @ A)
+    output = np.zeros(order + 1)
+    output[order] = 1.0
+    return _System(bigger, np.append(B, D + lead * float(C @ B)), output, lead * D)
+
+
+def _polynomial(path: PathSpec) -> tuple[_System, bool]:
+    """The polynomial form; a pole at the origin is split off as the trailing integrator.
+
+    With n the value at infinity, numerator/(s lags) = n + rest/(s lags): z' = (rest/lags) u, y = z + n u.
+    """
+    numerator, denominator = polynomials(path)
+    if denominator.size < 2 or denominator[-1] != 0.0:
+        return _rational(Polynomials(numerator, denominator), poles(path)), False
+    direct = 0.0
+    if numerator.size == denominator.size:
+        direct = float(numerator[0] / denominator[0])
+        numerator = (numerator - direct * denominator)[1:]
+    lags = poles(path)[:-1]
+    system = _integrated(_rational(Polynomials(numerator, denominator[:-1]), lags))
+    return system._replace(D=direct), True
+
+
+def _rational(polynomial: Polynomials, roots: NDArray[np.complex128]) -> _System:
+    """A stable proper rational function with the given poles: in parallel if they allow it, or companion."""
+    numerator, denominator = polynomial
+    degree = denominator.size - 1
+    direct = float(numerator[0] / denominator[0]) if numerator.size == denominator.size else 0.0
+    if degree == 0:
+        return _System(np.zeros((0, 0)), np.zeros(0), np.zeros(0), direct)
+    if _real_and_apart(roots):
+        return _parallel(polynomial, roots.real, direct)
+    return _companion(polynomial, direct)
+
+
+def _real_and_apart(roots: NDArray[np.complex128]) -> bool:
+    if np.any(roots.imag != 0.0):
+        return False
+    values = np.sort(np.abs(roots.real))
+    return bool(np.all(np.diff(values) > _APART * values[1:]))
+
+
+def _parallel(polynomial: Polynomials, roots: Vector, direct: float) -> _System:
+    """Partial fractions over simple real poles p_i: x_i' = p_i (x_i - u), weights -residue_i/p_i in C."""
+    numerator, denominator = polynomial
+    differences = roots[:, None] - roots[None, :]
+    np.fill_diagonal(differences, 1.0)
+    residues = np.polyval(numerator, roots) / (denominator[0] * differences.prod(axis=1))
+    return _System(np.diag(roots), -roots, -residues / roots, direct)
+
+
+def _companion(polynomial: Polynomials, direct: float) -> _System:
+    """Companion form on the time scale of the mean (geometric) time constant, balanced by powers of two.
+
+    With s = sigma/scale the monic denominator in sigma ends in 1: the first state's gain is 1 before balancing.
+    """
+    numerator, denominator = polynomial
+    degree = denominator.size - 1
+    scale = float((denominator[0] / denominator[-1]) ** (1.0 / degree))
+    powers = scale ** -np.arange(degree, -1.0, -1.0)
+    leading = denominator[0] * powers[0]
+    monic = denominator * powers / leading
+    padded = np.concatenate([np.zeros(denominator.size - numerator.size), numerator])
+    rest = (padded * powers / leading - direct * monic)[1:]
+    A = np.eye(degree, k=1)
+    A[-1] = -monic[:0:-1]
+    B = np.zeros(degree)
+    B[-1] = 1.0
+    balanced, (weights, _) = linalg.matrix_balance(A, permute=False, separate=True)
+    dynamics = np.asarray(balanced / scale, dtype=np.float64)
+    return _System(dynamics, B / weights / scale, rest[::-1] * weights, direct)
