@@ -1,0 +1,19 @@
+"""Recorded histories and laboratory results, from CSV or Parquet files or data frames."""
+
+from __future__ import annotations
+
+from connectors.history import History, TagSeries
+from connectors.history_file import history_from_frame, read_history
+from connectors.lab_file import lab_from_frame, read_lab
+from connectors.lab_results import LabResults, place_lab
+
+__all__ = [
+    "History",
+    "LabResults",
+    "TagSeries",
+    "history_from_frame",
+    "lab_from_frame",
+    "place_lab",
+    "read_history",
+    "read_lab",
+]
