@@ -17,6 +17,13 @@ SQLITE_GUARD = """
 CREATE TRIGGER audit_trail_no_{event} BEFORE {event} ON audit_trail
 BEGIN SELECT RAISE(ABORT, 'the audit trail is append-only'); END
 """
+SQLITE_NO_REPLACE = """
+CREATE TRIGGER audit_trail_no_replace BEFORE INSERT ON audit_trail
+WHEN EXISTS (SELECT 1 FROM audit_trail WHERE sequence = NEW.sequence OR hash = NEW.hash
+             OR previous_hash = NEW.previous_hash)
+BEGIN SELECT RAISE(ABORT, 'the audit trail is append-only'); END
+"""
+"""INSERT OR REPLACE deletes without firing the trigger on deletes."""
 POSTGRESQL_REFUSAL = """
 CREATE FUNCTION audit_trail_refuse() RETURNS trigger LANGUAGE plpgsql AS
 $$ BEGIN RAISE EXCEPTION 'the audit trail is append-only'; END $$
@@ -280,6 +287,7 @@ def guard_trail() -> None:
     if op.get_bind().dialect.name == "sqlite":
         for event in ("update", "delete"):
             op.execute(SQLITE_GUARD.format(event=event))
+        op.execute(SQLITE_NO_REPLACE)
         return
     op.execute(POSTGRESQL_REFUSAL)
     for event in ("update", "delete", "truncate"):

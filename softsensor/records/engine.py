@@ -5,8 +5,8 @@ processes cannot fork the audit trail, and no order of writes can deadlock. A re
 of the database.
 
 SQLite runs in WAL mode, so that pages can be read while the service writes, with synchronous=FULL: in WAL
-mode NORMAL may lose the last commits at a power failure, and a record that someone was told is kept must be kept.
-Batches make the price, one flush per commit, small.
+mode NORMAL may lose the last commits at a power failure, and a record that someone was told is kept must be
+kept. Batches make the price, one flush per commit, small.
 """
 
 from __future__ import annotations
