@@ -1,10 +1,10 @@
 """One path as a continuous state space: x' = A x + B u, y = C x + D u, dead time apart.
 
-Every path is built on its own, from first-order sections where it can be, so that no state is shared, nothing
-has to be reduced, and the matrices are well scaled for seconds and for hours. An integrator is always the last
-state: its derivative is what the lags put out, and it is the only state that reaches the output. So an
-integrating path whose integrating state is zero contributes nothing but its direct term, however its lags were
-realised.
+Every path is built on its own, from first-order sections where it can be, so that no state is shared,
+nothing has to be reduced, and the matrices are well scaled for seconds and for hours. An integrator is always
+the last state: its derivative is what the lags put out, and it is the only state that reaches the output. So
+an integrating path whose integrating state is zero contributes nothing but its direct term, however its lags
+were realised.
 """
 
 from __future__ import annotations
@@ -173,7 +173,7 @@ def _parallel(polynomial: Polynomials, roots: Vector, direct: float) -> _System:
 def _companion(polynomial: Polynomials, direct: float) -> _System:
     """Companion form on the time scale of the mean (geometric) time constant, balanced by powers of two.
 
-    With s = sigma/scale the monic denominator in sigma ends in 1: the first state's gain is 1 before balancing.
+    With s = sigma/scale the monic denominator in sigma ends in 1, so that the first state has unit gain.
     """
     numerator, denominator = polynomial
     degree = denominator.size - 1

@@ -25,6 +25,9 @@ Matrix = NDArray[np.float64]
 
 HOUR = 3600.0
 
+LARGEST = 1000
+"""Most states that one disturbance may need: more is a sample time far too short for its dead times."""
+
 
 class _Driven(NamedTuple):
     """One disturbance with its past values and its paths: x(k+1) = A x(k) + (q, 0, 0, ...) noise, z = C x."""
@@ -61,8 +64,8 @@ def stochastic_part(spec: UnitSpec) -> StochasticPart:
     for row in offsets:
         at, output = len(names), outputs[row]
         A[at, at] = C[row, at] = 1.0
-        q[at] = output.bias_walk_sd**2 * spec.sample_time / HOUR
-        P0[at, at] = output.bias_initial_sd**2
+        q[at] = _variance(output.tag, output.bias_walk_sd) * spec.sample_time / HOUR
+        P0[at, at] = _variance(output.tag, output.bias_initial_sd)
         names.append(f"offset of {output.tag}")
     return StochasticPart(A=A, q=q, C=C, P0=P0, state_names=tuple(names), disturbance_index=tuple(index))
 
@@ -116,6 +119,11 @@ def _driven(spec: UnitSpec, index: int) -> _Driven:
     paths = disturbance_paths(spec, index)
     past = max((path.whole_delays + (path.fraction > 0.0) for path in paths), default=0)
     size = 1 + past + sum(path.c.size for path in paths)
+    if size > LARGEST:
+        raise RealisationError(
+            f"disturbance {disturbance.name}: its dead times need {past} past values, {size} states in all; "
+            f"at most {LARGEST} can be run: choose a longer sample time"
+        )
     A, C = np.zeros((size, size)), np.zeros((len(spec.sensors) + len(spec.estimates), size))
     steady, integrators = np.ones(size), np.zeros(size, dtype=np.bool_)
     A[0, 0], q = _dynamics(disturbance, spec.sample_time)
@@ -139,14 +147,21 @@ def _driven(spec: UnitSpec, index: int) -> _Driven:
 
 def _dynamics(disturbance: DisturbanceSpec, sample_time: float) -> tuple[float, float]:
     """A disturbance's own coefficient and the variance of the noise that enters it each sample."""
+    name = f"disturbance {disturbance.name}"
     if disturbance.time_constant is not None and disturbance.sd is not None:
         decay = sample_time / disturbance.time_constant
-        return math.exp(-decay), -(disturbance.sd**2) * math.expm1(-2.0 * decay)
+        return math.exp(-decay), -_variance(name, disturbance.sd) * math.expm1(-2.0 * decay)
     if disturbance.walk_sd is not None:
-        return 1.0, disturbance.walk_sd**2 * sample_time / HOUR
-    raise RealisationError(
-        f"disturbance {disturbance.name}: neither sd with time_constant nor walk_sd is given"
-    )
+        return 1.0, _variance(name, disturbance.walk_sd) * sample_time / HOUR
+    raise RealisationError(f"{name}: neither sd with time_constant nor walk_sd is given")
+
+
+def _variance(name: str, sd: float) -> float:
+    """sd squared; refused where the square is no finite number or the sd is negative."""
+    variance = sd * sd
+    if not (sd >= 0.0 and math.isfinite(variance)):
+        raise RealisationError(f"{name}: a standard deviation of {sd} cannot be computed with")
+    return variance
 
 
 def _initial_covariance(
@@ -154,7 +169,8 @@ def _initial_covariance(
 ) -> Matrix:
     """A block's covariance at the start (n, n): stationary, or steady with the walk; zero for integrators."""
     if disturbance.walk_sd is not None:
-        return np.asarray(disturbance.initial_sd**2 * np.outer(steady, steady))
+        initial = _variance(f"disturbance {disturbance.name}", disturbance.initial_sd)
+        return np.asarray(initial * np.outer(steady, steady))
     P0 = np.zeros_like(A)
     moving = np.flatnonzero(~integrators)
     noise = np.zeros((moving.size, moving.size))

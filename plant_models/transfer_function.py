@@ -5,8 +5,8 @@ The factored form of a path is ::
     G(s) = gain * prod(lead_i s + 1) / prod(tau_i s + 1) / (s if integrating else 1)
 
 and the polynomial form ``numerator(s) / denominator(s)``, in descending powers of s. Here s is always in
-1/second. A path that can be run has at most one pole at the origin (it then integrates), all others in the open
-left half plane, and no more zeros than poles; :func:`faults` says what is wrong with one that cannot.
+1/second. A path that can be run has at most one pole at the origin (it then integrates), all others in the
+open left half plane, and no more zeros than poles; :func:`faults` says what is wrong with one that cannot.
 """
 
 from __future__ import annotations
