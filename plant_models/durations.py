@@ -1,7 +1,7 @@
 """Times as an engineer writes them, ``"4.2 min"``, to float seconds and back.
 
-A number without a unit is refused: nobody can tell seconds from minutes afterwards. ``m`` is refused as well, since
-it may be meant as minutes or months.
+A number without a unit is refused: nobody can tell seconds from minutes afterwards. ``m`` is refused as well,
+since it may be meant as minutes or months.
 """
 
 from __future__ import annotations
@@ -11,6 +11,7 @@ import re
 from decimal import Decimal
 
 from plant_models.errors import UnitError
+from plant_models.quoting import quoted
 
 SECONDS = {"ms": "0.001", "s": "1", "min": "60", "h": "3600", "d": "86400", "week": "604800"}
 """Seconds in each unit, as decimal text so that products are exact before they are rounded once."""
@@ -39,7 +40,7 @@ def parse_duration(text: object) -> float:
     """
     seconds = parse_signed_duration(text)
     if seconds < 0.0:
-        raise UnitError(f"expected {EXPECTED}, not below zero; got {text!r}")
+        raise UnitError(f"expected {EXPECTED}, not below zero; got {quoted(text)}")
     return seconds
 
 
@@ -50,16 +51,16 @@ def parse_signed_duration(text: object) -> float:
     -30.0
     """
     if not isinstance(text, str):
-        raise UnitError(f"expected {EXPECTED}, in quotation marks; got {_short(text)}")
+        raise UnitError(f"expected {EXPECTED}, in quotation marks; got {quoted(text)}")
     match = _NUMBER_AND_UNIT.fullmatch(text.strip())
     if match is None:
-        raise UnitError(f"expected {EXPECTED}; got {_short(text)}")
+        raise UnitError(f"expected {EXPECTED}; got {quoted(text)}")
     number, unit = match.groups()
     if not unit:
-        raise UnitError(f"expected {EXPECTED}; got {_short(text)}, which has no unit")
+        raise UnitError(f"expected {EXPECTED}; got {quoted(text)}, which has no unit")
     if unit not in _UNITS:
         known = ", ".join(SECONDS)
-        raise UnitError(f"expected {EXPECTED}; got {_short(text)}, whose unit is none of {known}")
+        raise UnitError(f"expected {EXPECTED}; got {quoted(text)}, whose unit is none of {known}")
     return _product(number, SECONDS[_UNITS[unit]], text)
 
 
@@ -70,12 +71,12 @@ def parse_time_unit(text: object) -> float:
     """
     if not isinstance(text, str) or text.strip() not in _UNITS:
         known = ", ".join(f'"{unit}"' for unit in SECONDS)
-        raise UnitError(f"expected a unit of time, one of {known}; got {_short(text)}")
+        raise UnitError(f"expected a unit of time, one of {known}; got {quoted(text)}")
     return float(SECONDS[_UNITS[text.strip()]])
 
 
 def format_duration(seconds: float) -> str:
-    """The shortest text that parse_duration reads back to the same float; the larger unit where two are equally short.
+    """The shortest text that parse_duration reads back to the same float; of two as short, the larger unit.
 
     >>> format_duration(10.0), format_duration(252.0), format_duration(7200.0), format_duration(0.25)
     ('10 s', '4.2 min', '2 h', '250 ms')
@@ -105,13 +106,7 @@ def _digits(number: float) -> str:
 def _product(number: str, factor: str, text: str) -> float:
     """number * factor, rounded once."""
     if not math.isfinite(float(number) * float(factor)):
-        raise UnitError(f"expected {EXPECTED}; got {_short(text)}, which is too large")
+        raise UnitError(f"expected {EXPECTED}; got {quoted(text)}, which is too large")
     if float(number) == 0.0:
         return 0.0
     return float(Decimal(number) * Decimal(factor))
-
-
-def _short(value: object) -> str:
-    """A value as it may stand in a message: one line, not long."""
-    shown = repr(value)
-    return shown if len(shown) <= 60 else shown[:57] + "..."

@@ -1,7 +1,7 @@
 """Where each key of a TOML text stands: tomllib gives values without positions.
 
-The scanner only reads texts that tomllib has accepted, so it needs no error handling of its own. It finds statements,
-skips over values (strings of all four kinds, arrays and inline tables over several lines) and notes lines.
+The scanner only reads texts that tomllib has accepted, so it needs no error handling of its own. It finds
+statements, skips values (strings of all four kinds, arrays and tables over several lines) and notes lines.
 """
 
 from __future__ import annotations
@@ -21,7 +21,7 @@ class TomlLines:
     lines: Mapping[Place, int]
 
     def line(self, *place: str | int) -> int:
-        """The line of a place; where it has none of its own (a missing key, inside an inline table), its parent's."""
+        """The line of a place, or of its parent where it has none (a missing key, inside an inline table)."""
         for length in range(len(place), 0, -1):
             found = self.lines.get(place[:length])
             if found is not None:

@@ -1,13 +1,22 @@
 """The trade's spellings of units, and what pint is to understand by each.
 
-pint by itself does not know m3/h, wt%, Nm3/h or barg, and misreads others without a word: mol% as a remainder, pH as
-picohenry, ton as the American short ton. So every spelling that we accept is listed here and handed to pint as an
-expression that it reads one way only; whatever is not listed is refused.
+pint by itself does not know m3/h, wt%, Nm3/h or barg, and misreads others without a word: mol% as a
+remainder, pH as picohenry, ton as the American short ton. So every spelling that we accept is listed here and
+handed to pint as an expression that it reads one way only; whatever is not listed is refused.
 """
 
 from __future__ import annotations
 
-PREFIXES = {"u": "micro", "m": "milli", "c": "centi", "d": "deci", "h": "hecto", "k": "kilo", "M": "mega", "G": "giga"}
+PREFIXES = {
+    "u": "micro",
+    "m": "milli",
+    "c": "centi",
+    "d": "deci",
+    "h": "hecto",
+    "k": "kilo",
+    "M": "mega",
+    "G": "giga",
+}
 
 # Symbol: (prefixes that the trade writes before it, pint's name).
 PREFIXED = {
@@ -147,9 +156,9 @@ WHOLE = {
 GAUGE = frozenset(spelling for spelling in WHOLE if spelling.endswith(("(g)", "barg", "Pag", "psig")))
 """Pressures above that of the atmosphere: as differences the same as the others, as values not."""
 
-# Dimensions that pint lacks. Equal percentages of weight, moles and volume are different things, and a normal cubic
-# metre (0 degC, 101.325 kPa) is not a cubic metre. A standard cubic metre is at 15 degC, a standard cubic foot at 60
-# degF, both at the same pressure, so that the three differ by the ratio of the absolute temperatures.
+# Dimensions that pint lacks. Equal percentages of weight, moles and volume are different things, and a normal
+# cubic metre (0 degC, 101.325 kPa) is not a cubic metre. A standard cubic metre is at 15 degC, a standard
+# cubic foot at 60 degF, all at one pressure: they differ by the ratio of the absolute temperatures.
 DEFINITIONS = (
     "weight_fraction = [weight_fraction]",
     "weight_percent = 0.01 * weight_fraction",
@@ -195,10 +204,11 @@ MISSPELLINGS = {
     "cps": "cP",
 }
 
-# UN/CEFACT Recommendation 20 common codes. READ in the tables of node-opcua-data-access 2.182 or in OPC UA Part 8's
-# examples, except those of the second group, which are from MEMORY of the Recommendation.
+# UN/CEFACT Recommendation 20 common codes. READ in the tables of node-opcua-data-access 2.182 or in OPC UA
+# Part 8's examples, except those of the second group, which are from MEMORY of the Recommendation.
 UNECE_CODES = {
-    "m": "MTR", "cm": "CMT", "mm": "MMT", "cm3": "CMQ", "m3": "MTQ", "m/s": "MTS", "m/s2": "MSK", "km/h": "KMH",
+    "m": "MTR", "cm": "CMT", "mm": "MMT", "cm3": "CMQ", "m3": "MTQ",
+    "m/s": "MTS", "m/s2": "MSK", "km/h": "KMH",
     "g": "GRM", "kg": "KGM", "kg/s": "KGS", "ms": "C26", "us": "B98", "s": "SEC", "min": "MIN", "h": "HUR",
     "Pa": "PAL", "hPa": "A97", "kPa": "KPA", "MPa": "MPA", "bar": "BAR", "mbar": "MBR", "kgf/cm2": "D5",
     "degC": "CEL", "degF": "FAH", "K": "KEL", "V": "VLT", "A": "AMP", "Hz": "HTZ", "kHz": "KHZ", "rpm": "RPM",
@@ -207,6 +217,7 @@ UNECE_CODES = {
 
     "-": "C62", "pH": "Q30", "d": "DAY", "L": "LTR", "t": "TNE", "lb": "LBR", "mol": "C34", "mol/L": "C38",
     "kmol/m3": "B46", "kg/m3": "KMQ", "mg/L": "M1", "m3/s": "MQS", "L/min": "L2", "L/h": "E32", "kg/h": "E93",
-    "t/h": "E18", "psi": "PS", "cP": "C7", "mPa.s": "C24", "cSt": "4C", "uS/cm": "G42", "mS/cm": "H61", "mV": "2Z",
+    "t/h": "E18", "psi": "PS", "cP": "C7", "mPa.s": "C24", "cSt": "4C", "uS/cm": "G42", "mS/cm": "H61",
+    "mV": "2Z",
     "mA": "4K", "kWh": "KWH", "kJ": "KJO",
 }  # fmt: skip

@@ -1,24 +1,24 @@
 """Engineering units in the trade's spellings, on top of pint.
 
-``parse_unit`` reads a spelling with a small grammar of its own and refuses whatever it does not know; dimensions and
-conversions are pint's, whose registry is built on first use only, since that takes longer than reading a model file.
+``parse_unit`` reads a spelling with a small grammar of its own and refuses whatever it does not know;
+dimensions and conversions are pint's, whose registry is built on first use only, since that takes long.
 
 Grammar::
 
-    unit    = whole | product { "/" product }        no "." or "*" after a "/" outside brackets: kJ/kg.K means two things
+    unit    = whole | product { "/" factor }         kJ/kg.K may mean two things: brackets say which
     product = factor { ("." | "*") factor }
     factor  = ( whole | symbol | "(" unit ")" ) [ exponent ]
 """
 
 from __future__ import annotations
 
-import difflib
 import re
 from dataclasses import dataclass
 from functools import cache, lru_cache
 from typing import Any
 
 from plant_models.errors import UnitError
+from plant_models.quoting import quoted, suggestion
 from plant_models.unit_spellings import (
     DEFINITIONS,
     GAUGE,
@@ -46,10 +46,12 @@ def _known_symbols() -> dict[str, str]:
 
 
 _SYMBOLS = _known_symbols()
-# Spellings that the grammar below cannot find by letters alone, longest first so that m3(n) is not read as m3.
-_ODD = sorted((text for text in _SYMBOLS if not _SYMBOL.fullmatch(text) and text not in "-1"), key=len, reverse=True)
-_ODD += ["Nm3", "Sm3"]
-_FRACTIONS = frozenset(text for text in WHOLE if "/" in text)
+# Spellings that are more than letters, longest first so that m3(n) is not read as m3; but no quotients.
+_ODD = sorted(
+    (text for text in _SYMBOLS if not _SYMBOL.fullmatch(text) and "/" not in text and text not in "-1"),
+    key=len,
+    reverse=True,
+)
 
 
 @dataclass(frozen=True, slots=True)
@@ -83,11 +85,11 @@ def parse_unit(text: str) -> Unit:
     >>> parse_unit("mol%").dimension
     '[mole_fraction]'
 
-    :raises UnitError: what was found, what was expected and, where one is near, the spelling that may be meant.
+    :raises UnitError: what was found, what was expected and, where one is near, what may be meant.
     """
     plain = text.strip().translate(_SUPERSCRIPTS).replace("Ω", "ohm")
     if not plain or len(plain) > _LONGEST:
-        raise UnitError(f"expected {EXPECTED}; got {_short(text)}")
+        raise UnitError(f"expected {EXPECTED}; got {quoted(text)}")
     plain = re.sub(r"^(wt|mass|mol|vol)[. -]+%$", r"\1%", plain)
     plain = re.sub(r"^(bar|mbar|kPa|MPa|Pa|psi) ?\(?(g|a)\)?$", r"\1(\2)", plain)
     if plain in _SYMBOLS:
@@ -120,14 +122,15 @@ def _ratio(from_unit: str, to_unit: str) -> float:
         return float(quantity.to(registry.dimensionless).magnitude)
     except pint.DimensionalityError:
         raise UnitError(
-            f"expected units of one dimension; {from_unit} is {source.dimension}, {to_unit} is {target.dimension}"
+            f"expected units of one dimension; {from_unit} is {source.dimension}, "
+            f"{to_unit} is {target.dimension}"
         ) from None
 
 
 def engineering_units(text: str) -> tuple[str | None, int, str]:
     """UN/CEFACT code, unitId and display name for an OPC UA EUInformation (Part 8, 5.6.3).
 
-    The unitId is the code's ASCII bytes read as one big-endian number, -1 where the Recommendation has no code.
+    The unitId is the code's ASCII bytes read as one big-endian number, -1 where there is no code.
     Gauge pressures have none: the code for bar would claim an absolute one.
 
     >>> engineering_units("degC"), engineering_units("wt%")
@@ -151,7 +154,9 @@ def _display(text: str) -> str:
         return ""
     shown = re.sub(r"\bdeg([CF])\b", r"°\1", text)
     shown = re.sub(r"\bu(?=[A-Zgms])", "µ", shown)
-    return re.sub(r"(?<=[A-Za-z)])(?:\^|\*\*)?([23])(?![0-9A-Za-z])", lambda found: "²³"[int(found[1]) - 2], shown)
+    return re.sub(
+        r"(?<=[A-Za-z)])(?:\^|\*\*)?([23])(?![0-9A-Za-z])", lambda found: "²³"[int(found[1]) - 2], shown
+    )
 
 
 @cache
@@ -176,7 +181,7 @@ class _Reader:
     def unit(self) -> str:
         expression = self._quotient()
         if self._rest:
-            raise self._refusal(f"cannot read on from {_short(self._rest)}")
+            raise self._refusal(f"cannot read on from {quoted(self._rest)}")
         return expression
 
     def _quotient(self) -> str:
@@ -211,16 +216,18 @@ class _Reader:
         return f"({base}) ** {match[1]}" if " " in base else f"{base} ** {match[1]}"
 
     def _symbol(self) -> str:
-        odd = next((text for text in _ODD if text not in _FRACTIONS and self._rest.startswith(text)), None)
+        odd = next((text for text in _ODD if self._rest.startswith(text)), None)
         if odd is not None:
             found = odd
         else:
             match = _SYMBOL.match(self._rest)
             if match is None:
-                raise self._refusal("a unit is missing" if not self._rest else f"cannot read {_short(self._rest)}")
+                raise self._refusal(
+                    "a unit is missing" if not self._rest else f"cannot read {quoted(self._rest)}"
+                )
             found = match[0]
         if found not in _SYMBOLS:
-            raise self._refusal(f"{_short(found)} is not known{_suggestion(found)}")
+            raise self._refusal(f"{quoted(found)} is not known{_suggestion(found)}")
         self.gauge = self.gauge or found in GAUGE
         self._rest = self._rest[len(found) :]
         name = _SYMBOLS[found]
@@ -234,19 +241,11 @@ class _Reader:
 
     def _refusal(self, reason: str) -> UnitError:
         hint = _suggestion(self._text.strip()) if "did you mean" not in reason else ""
-        return UnitError(f"expected {EXPECTED}; got {_short(self._text)}: {reason}{hint}")
+        return UnitError(f"expected {EXPECTED}; got {quoted(self._text)}: {reason}{hint}")
 
 
 def _suggestion(text: str) -> str:
-    """``; did you mean "kPa"?`` where one spelling is near, else nothing."""
+    """``; did you mean 'kPa'?`` where one spelling is near, else nothing."""
     if text in MISSPELLINGS:
-        return f'; did you mean "{MISSPELLINGS[text]}"?'
-    same_letters = [known for known in _SYMBOLS if known.casefold() == text.casefold()]
-    near = same_letters or difflib.get_close_matches(text, _SYMBOLS, n=1, cutoff=0.75)
-    return f'; did you mean "{near[0]}"?' if near else ""
-
-
-def _short(value: str) -> str:
-    """A value as it may stand in a message: one line, not long."""
-    shown = repr(value)
-    return shown if len(shown) <= 60 else shown[:57] + "..."
+        return f"; did you mean {quoted(MISSPELLINGS[text])}?"
+    return suggestion(text, _SYMBOLS)

@@ -1,0 +1,161 @@
+"""The sections of a model file, all but its transfer functions."""
+
+from __future__ import annotations
+
+import math
+
+from plant_models.model_kinds import (
+    ABOVE_ZERO,
+    DURATION_ABOVE_ZERO,
+    FLAG,
+    INPUT_TAG,
+    NAME,
+    NOT_BELOW_ZERO,
+    NUMBER,
+    RANGE,
+    TAG,
+    TEXT,
+    UNIT,
+    Kind,
+)
+from plant_models.model_tables import Table
+from plant_models.quoting import quoted
+from plant_models.specification import (
+    DisturbanceSpec,
+    EstimateSpec,
+    InputSpec,
+    LabSpec,
+    Range,
+    SensorSpec,
+)
+
+FALSE_FLAG_INTERVAL = 30 * 86400.0
+"""Wanted mean time between false flags where the file names none, in seconds."""
+
+_VARIABLE = ("tag", "unit", "operating_point", "range", "validated_range")
+_EITHER = "expected sd with time_constant, or walk_sd with initial_sd"
+_OFFSET = ("bias_walk_sd", "bias_initial_sd")
+
+
+def read_unit(table: Table) -> tuple[str, str, float]:
+    """Name, title (the name where there is none) and sample time in seconds."""
+    table.only("name", "title", "sample_time")
+    name = table.read("name", NAME)
+    title = table.read_or("title", TEXT, name)
+    return name, title, table.read("sample_time", DURATION_ABOVE_ZERO)
+
+
+def read_false_flag_interval(table: Table | None) -> float:
+    """Seconds between false flags."""
+    if table is None:
+        return FALSE_FLAG_INTERVAL
+    table.only("false_flag_interval")
+    return table.read_or("false_flag_interval", DURATION_ABOVE_ZERO, FALSE_FLAG_INTERVAL)
+
+
+def read_input(table: Table) -> InputSpec:
+    table.only(*_VARIABLE, "max_age")
+    operating_point, limits, validated = _limits(table)
+    return InputSpec(
+        tag=table.read("tag", TAG),
+        unit=table.read("unit", UNIT),
+        operating_point=operating_point,
+        range=limits,
+        validated_range=validated,
+        max_age=table.read_or("max_age", DURATION_ABOVE_ZERO, None),
+    )
+
+
+def read_sensor(table: Table) -> SensorSpec:
+    """A sensor; its tolerance is four times noise_sd unless it has one of its own."""
+    table.only(*_VARIABLE, "noise_sd", "tolerance", *_OFFSET, "on_change", "max_age")
+    operating_point, limits, validated = _limits(table)
+    noise_sd = table.read("noise_sd", ABOVE_ZERO)
+    if not math.isfinite(4.0 * noise_sd):
+        table.fault("noise_sd", ABOVE_ZERO.refusal(noise_sd, "which is too large"))
+    return SensorSpec(
+        tag=table.read("tag", TAG),
+        unit=table.read("unit", UNIT),
+        operating_point=operating_point,
+        range=limits,
+        noise_sd=noise_sd,
+        tolerance=table.read_or("tolerance", ABOVE_ZERO, 4.0 * noise_sd),
+        validated_range=validated,
+        bias_walk_sd=table.read_or("bias_walk_sd", NOT_BELOW_ZERO, 0.0),
+        bias_initial_sd=table.read_or("bias_initial_sd", NOT_BELOW_ZERO, 0.0),
+        on_change=table.read_or("on_change", FLAG, False),
+        max_age=table.read_or("max_age", DURATION_ABOVE_ZERO, None),
+    )
+
+
+def read_estimate(table: Table) -> EstimateSpec:
+    table.only(*_VARIABLE, *_OFFSET, "lab", "interval_scale")
+    operating_point, limits, validated = _limits(table)
+    return EstimateSpec(
+        tag=table.read("tag", TAG),
+        unit=table.read("unit", UNIT),
+        operating_point=operating_point,
+        range=limits,
+        validated_range=validated,
+        bias_walk_sd=table.read_or("bias_walk_sd", NOT_BELOW_ZERO, 0.0),
+        bias_initial_sd=table.read_or("bias_initial_sd", NOT_BELOW_ZERO, 0.0),
+        lab=_lab(table),
+        interval_scale=table.read_or("interval_scale", ABOVE_ZERO, 1.0),
+    )
+
+
+def read_disturbance(table: Table) -> DisturbanceSpec:
+    """A disturbance: sd with time_constant, or walk_sd with or without initial_sd, and not both."""
+    table.only("name", "sd", "time_constant", "walk_sd", "initial_sd", "at_input")
+    name = table.read("name", NAME)
+    at_input = table.read_or("at_input", INPUT_TAG, None)
+    gauss_markov, walk = table.has("sd", "time_constant"), table.has("walk_sd", "initial_sd")
+    mixed = gauss_markov and walk
+    if mixed:
+        key = "walk_sd" if table.has("walk_sd") else "initial_sd"
+        table.fault(key, f"{_EITHER}; got some of both")
+    elif not gauss_markov and not walk:
+        table.fault("sd", f"missing; {_EITHER}")
+
+    def read(key: str, kind: Kind[float], needed: bool) -> float | None:
+        return table.read(key, kind) if needed and not mixed else table.read_or(key, kind, None)
+
+    return DisturbanceSpec(
+        name=name,
+        sd=read("sd", ABOVE_ZERO, gauss_markov),
+        time_constant=read("time_constant", DURATION_ABOVE_ZERO, gauss_markov),
+        walk_sd=read("walk_sd", ABOVE_ZERO, walk),
+        initial_sd=table.read_or("initial_sd", NOT_BELOW_ZERO, 0.0),
+        at_input=at_input,
+    )
+
+
+def _limits(table: Table) -> tuple[float, Range, Range | None]:
+    """Operating point, instrument range and validated range, which must lie within one another."""
+    operating_point = table.read("operating_point", NUMBER)
+    limits = table.read("range", RANGE)
+    validated = table.read_or("validated_range", RANGE, None)
+    if not table.sound("range"):
+        return operating_point, limits, validated
+    low, high = limits
+    if table.sound("operating_point") and not low <= operating_point <= high:
+        table.fault(
+            "operating_point",
+            f"expected a number within range, {low:g} to {high:g}; got {quoted(operating_point)}",
+        )
+    if (
+        validated is not None
+        and table.sound("validated_range")
+        and not (low <= validated[0] and validated[1] <= high)
+    ):
+        found = quoted(list(validated))
+        table.fault("validated_range", f"expected limits within range, {low:g} to {high:g}; got {found}")
+    return operating_point, limits, validated
+
+
+def _lab(table: Table) -> LabSpec | None:
+    inner = table.subtable("lab", "a table such as { tag = 'AL2101', sd = 0.02 }")
+    if inner is None:
+        return None
+    inner.only("tag", "sd")
+    return LabSpec(tag=inner.read("tag", TAG), sd=inner.read("sd", ABOVE_ZERO))
