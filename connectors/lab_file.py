@@ -41,7 +41,7 @@ _KNOWN = frozenset((*NEEDED, UNCERTAINTY))
 def read_lab(path: str | Path, tags: Sequence[str], timezone: str | None = None) -> LabResults:
     """Read a file of laboratory results, CSV or Parquet; one without rows has no results and no fault.
 
-    :param tags: the laboratory tags that the model names; results of others are ignored and named in the result.
+    :param tags: the laboratory tags that the model names; results of others are ignored and named.
     :param timezone: an IANA name for times without an offset; None refuses such times.
     :raises LabFileError: with file, row, column and what was expected.
     """

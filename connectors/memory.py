@@ -1,4 +1,4 @@
-"""A source and a sink in memory: the same faces as those to a plant, for tests, replays and demonstrations."""
+"""A source and a sink in memory, with the faces of those to a plant: for tests, replays, demonstrations."""
 
 from __future__ import annotations
 
