@@ -119,5 +119,7 @@ class UnitSpec:
     paths: tuple[PathSpec, ...]
     false_flag_interval: float
     """Wanted mean time between false flags, per sensor, in seconds."""
+    leave_out_isolated: bool = False
+    """A sensor that the data name alone as faulty is kept from the estimate until a person puts it back."""
     source_text: str = ""
     """The file's text, kept with the revision."""

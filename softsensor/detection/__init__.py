@@ -1,0 +1,1 @@
+"""Fault tests and diagnosis: cumulative sums, run lengths, signatures, likelihoods, flags."""

@@ -1,0 +1,1 @@
+"""The Kalman estimator: its kernel, late results, steady state, observability."""

@@ -1,0 +1,144 @@
+"""The compiled loop: correct, report, predict, test, cycle after cycle. Called by softsensor.cycle alone."""
+
+from __future__ import annotations
+
+from typing import NamedTuple
+
+import numpy as np
+from numba import njit
+
+from softsensor.detection.fault_tests import TestDesign, TestState, test_cycle
+from softsensor.estimation.input_driven import accept_inputs, advance_input_driven, input_driven_outputs
+from softsensor.estimation.kalman import correct, predict, row_covariance, row_mean
+from softsensor.estimation.kernel import EstimatorState, Floats, Ints, Kernel
+
+UNSOUND = -1
+"""Returned where an innovation variance is not positive and finite."""
+
+
+class BlockInputs(NamedTuple):
+    """N cycles as the loop takes them.
+
+    u (N, n_inputs) finite; y (N, n_sensors), nan where missing; scale (N, n_sensors): factor on the noise variance;
+    use (N, n_sensors): 0 keeps a reading from the estimate; fresh (n_sensors,): see :func:`test_cycle`; lab_at: cycle
+    within the block, ascending; lab_row: output row; lab_value in engineering units; lab_variance.
+    """
+
+    u: Floats
+    y: Floats
+    scale: Floats
+    use: Ints
+    fresh: Ints
+    lab_at: Ints
+    lab_row: Ints
+    lab_value: Floats
+    lab_variance: Floats
+
+
+class BlockOutputs(NamedTuple):
+    """What the loop fills: (N, n_sensors) each, estimates (N, n_estimates), one entry per laboratory result."""
+
+    predicted: Floats
+    innovation: Floats
+    innovation_sd: Floats
+    high: Floats
+    low: Floats
+    estimate: Floats
+    estimate_sd: Floats
+    events: Ints
+    lab_predicted: Floats
+    lab_sd: Floats
+
+
+def empty_outputs(cycles: int, kernel: Kernel, labs: int) -> BlockOutputs:
+    """Arrays for the results of ``cycles`` cycles."""
+    sensors, estimates = (cycles, kernel.n_sensors), (cycles, kernel.n_estimates)
+    return BlockOutputs(
+        np.full(sensors, np.nan),
+        np.full(sensors, np.nan),
+        np.full(sensors, np.nan),
+        np.zeros(sensors),
+        np.zeros(sensors),
+        np.full(estimates, np.nan),
+        np.full(estimates, np.nan),
+        np.zeros(sensors, dtype=np.int64),
+        np.full(labs, np.nan),
+        np.full(labs, np.nan),
+    )
+
+
+@njit(cache=True)
+def _innovate(kernel: Kernel, est: EstimatorState, base: Floats, k: int, data: BlockInputs, out: BlockOutputs, v: Floats) -> None:
+    for i in range(kernel.n_sensors):
+        variance = row_covariance(kernel, est.P, i, v) + kernel.r[i] * data.scale[k, i]
+        out.predicted[k, i] = base[i] + row_mean(kernel, est.x, i)
+        out.innovation_sd[k, i] = np.sqrt(variance)
+        if data.y[k, i] == data.y[k, i]:
+            out.innovation[k, i] = data.y[k, i] - out.predicted[k, i]
+
+
+@njit(cache=True)
+def _correct_all(
+    kernel: Kernel, est: EstimatorState, base: Floats, k: int, data: BlockInputs, out: BlockOutputs, lab: int, v: Floats, K: Floats
+) -> int:
+    """Sensors in file order, then laboratory results; returns the next result's index, or UNSOUND."""
+    first = lab
+    while lab < len(data.lab_at) and data.lab_at[lab] == k:
+        row = data.lab_row[lab]
+        variance = row_covariance(kernel, est.P, row, v) + data.lab_variance[lab]
+        out.lab_predicted[lab] = base[row] + row_mean(kernel, est.x, row)
+        out.lab_sd[lab] = np.sqrt(variance)
+        lab += 1
+    for i in range(kernel.n_sensors):
+        if data.use[k, i] != 0 and data.y[k, i] == data.y[k, i]:
+            deviation, r = data.y[k, i] - base[i], kernel.r[i] * data.scale[k, i]
+            if not correct(kernel, est.x, est.P, i, deviation, r, v, K):
+                return UNSOUND
+    for e in range(first, lab):
+        row = data.lab_row[e]
+        if not correct(kernel, est.x, est.P, row, data.lab_value[e] - base[row], data.lab_variance[e], v, K):
+            return UNSOUND
+    return lab
+
+
+@njit(cache=True)
+def _report(kernel: Kernel, est: EstimatorState, base: Floats, k: int, out: BlockOutputs, v: Floats) -> None:
+    for e in range(kernel.n_estimates):
+        row = kernel.n_sensors + e
+        out.estimate[k, e] = base[row] + row_mean(kernel, est.x, row)
+        out.estimate_sd[k, e] = np.sqrt(row_covariance(kernel, est.P, row, v))
+
+
+@njit(cache=True)
+def run_block(
+    kernel: Kernel, est: EstimatorState, design: TestDesign, tests: TestState, data: BlockInputs, out: BlockOutputs, testing: bool
+) -> int:
+    """Run cycles until the block ends or, while ``testing``, a test has news; returns the number run, or UNSOUND.
+
+    ``est`` and ``tests`` are work arrays: they hold the state after the last cycle run.
+    """
+    n = len(kernel.q)
+    v, K, M = np.zeros(n), np.zeros(n), np.zeros((n, n))
+    base = np.zeros(kernel.n_sensors + kernel.n_estimates)
+    work = np.zeros(len(kernel.steady) + 1)
+    lab = 0
+    for k in range(data.u.shape[0]):
+        accept_inputs(kernel, est, data.u[k])
+        input_driven_outputs(kernel, est, base)
+        _innovate(kernel, est, base, k, data, out, v)
+        lab = _correct_all(kernel, est, base, k, data, out, lab, v, K)
+        if lab < 0:
+            return UNSOUND
+        _report(kernel, est, base, k, out, v)
+        advance_input_driven(kernel, est, work)
+        predict(kernel, est.x, est.P, v, M)
+        if testing:
+            news = test_cycle(
+                design, tests, data.y[k], data.fresh, out.innovation[k], out.innovation_sd[k], out.events[k]
+            )
+            for i in range(kernel.n_sensors):
+                out.high[k, i] = tests.high[i]
+                out.low[k, i] = tests.low[i]
+            if news != 0:
+                return k + 1
+    return data.u.shape[0]

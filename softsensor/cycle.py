@@ -1,0 +1,325 @@
+"""THE path: the readings of a cycle and the state before it give the state after it and the results.
+
+Live, replay, late results and commissioning all come through :func:`run_cycles`. It has no clock, no input or output,
+and changes nothing that it is given.
+"""
+
+from __future__ import annotations
+
+import hashlib
+from dataclasses import dataclass, replace
+
+import numpy as np
+from numpy.typing import NDArray
+
+from plant_models.errors import Problem
+from plant_models.plant_model import PlantModel
+from softsensor.compiled_cycle import BlockInputs, BlockOutputs, empty_outputs, run_block
+from softsensor.detection.fault_tests import LOOK, TestState, initial_tests
+from softsensor.detection.flags import Flag, FlagBook, Note
+from softsensor.detection.follow_up import DetectionDesign, FollowUp, Moment, follow_up
+from softsensor.estimation.kernel import EstimatorState, Floats, Ints, Kernel, initial_state
+from softsensor.readings_of_cycle import CycleQuality, CycleReadings
+
+UNCERTAIN_VARIANCE = 9.0
+"""An Uncertain reading counts as one with three times the noise_sd."""
+BEYOND_BELOW, BEYOND_ABOVE = 0.025, 0.0625
+"""Share of the span below and above a sensor's range beyond which a reading is a failed instrument's, not a reading:
+the failure limits 3.6 mA and 21 mA of a 4-20 mA signal (NAMUR NE 43; from memory)."""
+DIGEST_CHUNK = 64
+"""Cycles per link of the digest's chain."""
+
+
+class UnsoundArithmetic(Problem):
+    """An innovation's variance is not positive: nothing is repaired, the unit stops."""
+
+
+@dataclass(frozen=True)
+class UnitDesign:
+    """One unit's model, its kernel and its tests, made once."""
+
+    model: PlantModel
+    kernel: Kernel
+    detection: DetectionDesign
+    fresh: Ints
+    limits: tuple[Floats, Floats]
+    """Lowest and highest value of each sensor that is still a reading."""
+
+
+@dataclass(frozen=True)
+class LabAtCycle:
+    """A laboratory result where it counts: cycle, index of its estimate, value, variance."""
+
+    cycle: int
+    estimate: int
+    value: float
+    variance: float
+
+
+@dataclass(frozen=True)
+class Digest:
+    """A chained hash of every result row, the same however the cycles were cut into blocks."""
+
+    chain: bytes = b""
+    pending: bytes = b""
+    rows: int = 0
+
+    def add(self, rows: list[bytes]) -> Digest:
+        """The digest after more rows."""
+        chain, pending, count = self.chain, [self.pending], self.rows
+        for row in rows:
+            pending.append(row)
+            count += 1
+            if count % DIGEST_CHUNK == 0:
+                chain = hashlib.sha256(chain + b"".join(pending)).digest()
+                pending = []
+        return Digest(chain, b"".join(pending), count)
+
+    def mix(self, data: bytes) -> Digest:
+        """The digest after bytes that belong to the coming row: what a laboratory result did."""
+        return replace(self, pending=self.pending + data)
+
+    def hexdigest(self) -> str:
+        """The digest so far, as text."""
+        return hashlib.sha256(self.chain + self.pending).hexdigest()
+
+
+@dataclass(frozen=True)
+class CycleState:
+    """All that goes from one cycle to the next."""
+
+    estimator: EstimatorState
+    tests: TestState
+    book: FlagBook
+    digest: Digest
+
+    @property
+    def next_cycle(self) -> int:
+        """Number of the coming cycle; the first one is 0."""
+        return int(self.tests.cycle[0])
+
+
+@dataclass(frozen=True)
+class CycleResults:
+    """Results of N cycles as known at each of them, row k for cycle ``first + k``.
+
+    Shapes: times (N,); estimates, sd, status (N, n_estimates), sd with the interval scale in it, status 0 Good,
+    1 Uncertain, 2 Bad; predicted, innovation, innovation_sd, used, left_out, high, low, reading
+    (N, n_sensors). lab_predicted and lab_sd: one entry per laboratory result that counts within these cycles, the
+    prediction before the cycle's readings and the sd of the result's innovation.
+    """
+
+    first: int
+    times: NDArray[np.int64]
+    reading: Floats
+    estimate: Floats
+    sd: Floats
+    status: NDArray[np.int8]
+    predicted: Floats
+    innovation: Floats
+    innovation_sd: Floats
+    used: NDArray[np.int8]
+    left_out: NDArray[np.int8]
+    """1 where a sensor is kept from the estimate, whether or not it has a reading."""
+    high: Floats
+    low: Floats
+    lab_predicted: Floats
+    lab_sd: Floats
+    flags: tuple[Flag, ...] = ()
+    notes: tuple[Note, ...] = ()
+    rewind: FollowUp | None = None
+    """Set where a sensor is to be left out from an earlier cycle on: the caller goes back and forward again."""
+
+    def __len__(self) -> int:
+        return len(self.times)
+
+
+def start(design: UnitDesign) -> CycleState:
+    """The state before the first cycle."""
+    return CycleState(
+        initial_state(design.model, design.kernel),
+        initial_tests(design.kernel.n_sensors, design.detection.window),
+        FlagBook(),
+        Digest(),
+    )
+
+
+def usable(design: UnitDesign, readings: CycleReadings) -> tuple[Floats, Floats]:
+    """Sensor values with what is no reading taken out, and the factor on each one's noise variance."""
+    low, high = design.limits
+    bad = readings.y_quality > CycleQuality.UNCERTAIN
+    with np.errstate(invalid="ignore"):
+        y = np.where(bad | (readings.y < low) | (readings.y > high), np.nan, readings.y)
+    scale = np.where(readings.y_quality == CycleQuality.UNCERTAIN, UNCERTAIN_VARIANCE, 1.0)
+    return np.ascontiguousarray(y), np.ascontiguousarray(scale)
+
+
+def in_use(book: FlagBook, first: int, cycles: int, n_sensors: int) -> Ints:
+    """(cycles, n_sensors): 0 where a sensor is left out of the estimate."""
+    use = np.ones((cycles, n_sensors), dtype=np.int64)
+    for item in book.exclusions:
+        start = max(item.since - first, 0)
+        stop = cycles if item.until is None else min(max(item.until - first, 0), cycles)
+        use[start:stop, item.sensor] = 0
+    return use
+
+
+def block_inputs(
+    design: UnitDesign, book: FlagBook, first: int, readings: CycleReadings, labs: tuple[LabAtCycle, ...]
+) -> BlockInputs:
+    """Lay readings and laboratory results out for the compiled loop."""
+    y, scale = usable(design, readings)
+    return BlockInputs(
+        np.ascontiguousarray(readings.u, dtype=np.float64),
+        y,
+        scale,
+        in_use(book, first, len(readings), design.kernel.n_sensors),
+        design.fresh,
+        np.array([lab.cycle - first for lab in labs], dtype=np.int64),
+        np.array([design.kernel.n_sensors + lab.estimate for lab in labs], dtype=np.int64),
+        np.array([lab.value for lab in labs], dtype=np.float64),
+        np.array([lab.variance for lab in labs], dtype=np.float64),
+    )
+
+
+def run_cycles(
+    design: UnitDesign, state: CycleState, readings: CycleReadings, labs: tuple[LabAtCycle, ...] = ()
+) -> tuple[CycleState, CycleResults]:
+    """Run cycles up to the end of ``readings`` or to the first one at which a test has news, that one included.
+
+    :param readings: every input finite; row 0 is cycle ``state.next_cycle``.
+    :param labs: results that count within these cycles, in order of cycle.
+    :raises UnsoundArithmetic: a variance is not positive.
+    """
+    first, n = state.next_cycle, len(readings)
+    estimator, tests = state.estimator.copy(), state.tests.copy()
+    data = block_inputs(design, state.book, first, readings, labs)
+    out = empty_outputs(n, design.kernel, len(labs))
+    done = run_block(design.kernel, estimator, design.detection.tests, tests, data, out, True)
+    if done < 0:
+        raise UnsoundArithmetic(f"{design.model.spec.name}: an innovation's variance is not positive near cycle {first}")
+    outcome = FollowUp(state.book)
+    if done and (np.any(out.events[done - 1]) or _looked(design, tests)):
+        moment = Moment(first + done - 1, int(readings.times[done - 1]), out.events[done - 1])
+        outcome = follow_up(design.detection, state.book, tests, moment)
+    results = _results(design, state.book, first, done, readings, data, out)
+    results = replace(
+        results,
+        flags=outcome.changes,
+        notes=outcome.notes,
+        rewind=outcome if outcome.exclusion is not None else None,
+    )
+    digest = state.digest.add(result_rows(results))
+    return CycleState(estimator, tests, outcome.book, digest), results
+
+
+def _looked(design: UnitDesign, tests: TestState) -> bool:
+    return tests.watch[0] != 0 and int(tests.cycle[0]) % design.detection.tests.look_every == 0
+
+
+def rerun(
+    design: UnitDesign,
+    estimator: EstimatorState,
+    book: FlagBook,
+    first: int,
+    readings: CycleReadings,
+    labs: tuple[LabAtCycle, ...],
+) -> tuple[EstimatorState, BlockOutputs]:
+    """Run the estimator alone over past cycles: what late results and sensors left out from their onset on need.
+
+    The fault tests are not run again: what was flagged stays as flagged.
+    """
+    estimator = estimator.copy()
+    data = block_inputs(design, book, first, readings, labs)
+    out = empty_outputs(len(readings), design.kernel, len(labs))
+    unused = initial_tests(design.kernel.n_sensors, 1)
+    done = run_block(design.kernel, estimator, design.detection.tests, unused, data, out, False)
+    if done < 0:
+        raise UnsoundArithmetic(f"{design.model.spec.name}: an innovation's variance is not positive near cycle {first}")
+    return estimator, out
+
+
+def _results(
+    design: UnitDesign,
+    book: FlagBook,
+    first: int,
+    done: int,
+    readings: CycleReadings,
+    data: BlockInputs,
+    out: BlockOutputs,
+) -> CycleResults:
+    scale = np.array([item.interval_scale for item in design.model.spec.estimates])
+    used = ((data.use[:done] != 0) & np.isfinite(data.y[:done])).astype(np.int8)
+    estimate = out.estimate[:done]
+    in_block = data.lab_at < done
+    return CycleResults(
+        first,
+        readings.times[:done],
+        np.where(np.isfinite(out.innovation[:done]), data.y[:done], np.nan),
+        estimate,
+        out.estimate_sd[:done] * scale,
+        estimate_status(design, readings, estimate, data.use[:done]),
+        out.predicted[:done],
+        out.innovation[:done],
+        out.innovation_sd[:done],
+        used,
+        (data.use[:done] == 0).astype(np.int8),
+        out.high[:done],
+        out.low[:done],
+        out.lab_predicted[in_block],
+        out.lab_sd[in_block],
+    )
+
+
+def estimate_status(
+    design: UnitDesign, readings: CycleReadings, estimate: Floats, use: Ints
+) -> NDArray[np.int8]:
+    """1 (Uncertain) where an input is old, bad or Uncertain, something lies outside its validated range, or a sensor is left out."""
+    n, spec = len(estimate), design.model.spec
+    doubtful = np.any(readings.u_quality[:n] != CycleQuality.GOOD, axis=1) | np.any(use == 0, axis=1)
+    for j, item in enumerate(spec.inputs):
+        doubtful |= outside(readings.u[:n, j], item.validated_range)
+    status = np.repeat(doubtful[:, None], len(spec.estimates), axis=1)
+    for e, estimated in enumerate(spec.estimates):
+        status[:, e] |= outside(estimate[:, e], estimated.validated_range)
+    return status.astype(np.int8)
+
+
+def outside(values: Floats, limits: tuple[float, float] | None) -> NDArray[np.bool_]:
+    """Which values lie outside the limits; none where there are no limits."""
+    if limits is None:
+        return np.zeros(len(values), dtype=np.bool_)
+    return (values < limits[0]) | (values > limits[1])
+
+
+def result_rows(results: CycleResults) -> list[bytes]:
+    """Every result of each cycle as bytes, for the digest; flags belong to the last row's cycle."""
+    parts = [
+        results.times.reshape(-1, 1),
+        results.estimate,
+        results.sd,
+        results.status,
+        results.predicted,
+        results.innovation,
+        results.innovation_sd,
+        results.used,
+        results.high,
+        results.low,
+    ]
+    table = np.concatenate(
+        [np.ascontiguousarray(part).view(np.uint8).reshape(len(results), -1) for part in parts], axis=1
+    )
+    rows = [row.tobytes() for row in table]
+    if rows:
+        rows[-1] += b"".join(_flag_bytes(flag) for flag in results.flags)
+    return rows
+
+
+def _flag_bytes(flag: Flag) -> bytes:
+    times = np.array([flag.onset, flag.detected, -1 if flag.cleared is None else flag.cleared], dtype="<i8")
+    sizes = np.array([flag.size, flag.size_sd, flag.probability], dtype="<f8")
+    text = "\x1f".join((flag.flag, flag.tag, flag.kind, *flag.group))
+    return text.encode() + times.tobytes() + sizes.tobytes()
+
+
+__all__ = ["LOOK", "CycleResults", "CycleState", "UnitDesign", "rerun", "run_cycles", "start"]

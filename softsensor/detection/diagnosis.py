@@ -1,0 +1,150 @@
+"""Which explanation do the innovations favour: likelihoods of every hypothesis, averaged over onsets and sizes.
+
+For a hypothesis with whitened signature v(l), l cycles after its onset, and whitened innovations eps, over the last
+a cycles::
+
+    N = sum v(l)' eps,   D = sum v(l)' v(l),   size ~ N(0, p^2) beforehand
+    log likelihood ratio against "nothing happened" = N^2 / (2 (D + p^-2)) - ln(1 + p^2 D) / 2
+    size afterwards: mean N / (D + p^-2), variance 1 / (D + p^-2)
+
+Sources: Willsky & Jones (1976) for the recursion over signatures; the average over onsets and the prior on the size are
+the textbook Bayes factor of a Gaussian linear model (Bernardo & Smith, Bayesian Theory, 1994, ch. 5).
+"""
+
+from __future__ import annotations
+
+from typing import NamedTuple
+
+import numpy as np
+from numba import njit
+
+from softsensor.detection.elementary import exponential, logarithm
+from softsensor.detection.signatures import Hypothesis
+from softsensor.estimation.kernel import Floats, Ints
+
+NAMING_RATIO = 10.0
+"""A single name is given only when it is this many times as probable as any other explanation."""
+
+
+class Likelihoods(NamedTuple):
+    """Per hypothesis: log of the averaged likelihood ratio, best onset (cycles back), size there, its sd."""
+
+    evidence: Floats
+    age: Ints
+    size: Floats
+    size_sd: Floats
+
+
+class Verdict(NamedTuple):
+    """The outcome of one look: explanations by probability, and the group that cannot be told apart."""
+
+    names: tuple[str, ...]
+    """Instruments and disturbances, most probable first; "nothing" stands for none of them."""
+    probabilities: tuple[float, ...]
+    best: int
+    """Index of the most probable hypothesis of the first name; -1 for "nothing"."""
+    instrument: float
+    """Probability that some instrument is at fault."""
+    group: tuple[str, ...]
+
+
+@njit(cache=True)
+def _recent(ring: Floats, newest: int, whitening: Floats, use: Ints, count: int, out: Floats, whole: Ints) -> None:
+    """The last ``count`` innovations, newest last, whitened; whole[k] = 0 where a reading in use was missing."""
+    window, m = ring.shape
+    for k in range(count):
+        slot = (newest - (count - 1 - k)) % window
+        whole[k] = 1
+        for i in range(m):
+            if use[i] != 0 and ring[slot, i] != ring[slot, i]:
+                whole[k] = 0
+        for i in range(m):
+            total = 0.0
+            if whole[k] != 0 and use[i] != 0:
+                for j in range(i + 1):
+                    if use[j] != 0:
+                        total += whitening[i, j] * ring[slot, j]
+            out[k, i] = total
+
+
+@njit(cache=True)
+def _score(signature: Floats, eps: Floats, whole: Ints, age: int) -> tuple[float, float]:
+    start = eps.shape[0] - age
+    numerator, denominator = 0.0, 0.0
+    for lag in range(age):
+        if whole[start + lag] == 0:
+            continue
+        for i in range(eps.shape[1]):
+            value = signature[lag, i]
+            numerator += value * eps[start + lag, i]
+            denominator += value * value
+    return numerator, denominator
+
+
+@njit(cache=True)
+def likelihoods(
+    table: Floats, prior_sd: Floats, ring: Floats, newest: int, whitening: Floats, use: Ints, ages: Ints
+) -> Likelihoods:
+    """Score every hypothesis over the onsets in ``ages`` (cycles back, ascending; the largest sets the window)."""
+    n, count = table.shape[0], ages[-1]
+    eps, whole = np.zeros((count, ring.shape[1])), np.ones(count, dtype=np.int64)
+    _recent(ring, newest, whitening, use, count, eps, whole)
+    evidence, best_age = np.full(n, -1e300), np.zeros(n, dtype=np.int64)
+    size, size_sd = np.zeros(n), np.zeros(n)
+    for h in range(n):
+        precision = 1.0 / (prior_sd[h] * prior_sd[h])
+        scores = np.zeros(len(ages))
+        for a in range(len(ages)):
+            numerator, denominator = _score(table[h], eps, whole, ages[a])
+            scores[a] = 0.5 * numerator * numerator / (denominator + precision) - 0.5 * logarithm(
+                1.0 + denominator / precision
+            )
+            if a == 0 or scores[a] > evidence[h]:
+                evidence[h], best_age[h] = scores[a], ages[a]
+                size[h] = numerator / (denominator + precision)
+                size_sd[h] = np.sqrt(1.0 / (denominator + precision))
+        total = 0.0
+        for a in range(len(ages)):
+            total += exponential(scores[a] - evidence[h])
+        evidence[h] += logarithm(total / len(ages))
+    return Likelihoods(evidence, best_age, size, size_sd)
+
+
+def onset_ages(available: int) -> Ints:
+    """Candidate onsets, in cycles back: every age at first, then about a sixth further each time.
+
+    >>> onset_ages(10).tolist()
+    [1, 2, 3, 4, 5, 6, 7, 8, 9, 10]
+    """
+    ages, age = [], 1
+    while age < available:
+        ages.append(age)
+        age = max(age + 1, age + age // 6)
+    return np.array([*ages, max(available, 1)], dtype=np.int64)
+
+
+def judge(suspects: tuple[Hypothesis, ...], found: Likelihoods, temper: float = 1.0) -> Verdict:
+    """Turn evidence into probabilities per name, "nothing" among them, and the group within ten to one of the first."""
+    top = max(0.0, float(np.max(found.evidence)))
+    weights: dict[str, float] = {"nothing": exponential(-top * temper)}
+    best: dict[str, int] = {"nothing": -1}
+    instrument = 0.0
+    for h, suspect in enumerate(suspects):
+        weight = 0.5 * exponential((float(found.evidence[h]) - top) * temper)
+        weights[suspect.name] = weights.get(suspect.name, 0.0) + weight
+        if suspect.source != "disturbance":
+            instrument += weight
+        known = best.get(suspect.name)
+        if known is None or found.evidence[h] > found.evidence[known]:
+            best[suspect.name] = h
+    total = sum(weights.values())
+    names = sorted(weights, key=lambda name: -weights[name])
+    first = weights[names[0]]
+    group = tuple(name for name in names if weights[name] * NAMING_RATIO > first)
+    return Verdict(
+        tuple(names),
+        tuple(weights[name] / total for name in names),
+        best[names[0]],
+        instrument / total,
+        group,
+    )

@@ -1,0 +1,205 @@
+"""The per-sensor tests of one cycle, compiled: cumulative sums, stuck, lost, spike. Deterministic arithmetic only.
+
+A test says that a sensor's innovations are not what they should be; which instrument is at fault, if any, is the
+diagnosis's business. Sums are bounded by ``cap`` and do not restart after a flag.
+"""
+
+from __future__ import annotations
+
+from typing import NamedTuple
+
+import numpy as np
+from numba import njit
+
+from softsensor.detection.cusum import cusum_step
+from softsensor.estimation.kernel import Floats, Ints
+
+SHIFT_UP = 1
+SHIFT_CLEARED = 2
+STUCK = 4
+STUCK_ENDED = 8
+LOST = 16
+LOST_ENDED = 32
+SPIKE = 64
+LOOK = 128
+
+MIN_REPEATS = 10
+"""Fewer equal readings than this are never called stuck."""
+
+WARM_UP = 200
+"""Readings before the share of equal neighbours says anything about a sensor's resolution."""
+
+
+class TestDesign(NamedTuple):
+    """Settings of the tests, one entry per sensor where an array."""
+
+    reference: Floats
+    interval: Floats
+    clip: float
+    spike: float
+    """|standardised innovation| beyond which a single reading is a spike."""
+    lost_after: Ints
+    """Cycles without a usable reading after which a sensor is lost."""
+    stuck_probability: float
+    """A run of equal readings less probable than this is a stuck sensor."""
+    look_every: int
+    """While a test is up, the diagnosis looks again every so many cycles."""
+
+
+class TestState(NamedTuple):
+    """What the tests carry from cycle to cycle; (n_sensors,) each unless said.
+
+    high_since and low_since: cycle at which each sum last left zero, the plain estimate of a shift's onset.
+    ring (window, n_sensors): the latest innovations, nan where a reading was missing; cycle (1,): the next cycle.
+    """
+
+    high: Floats
+    low: Floats
+    high_since: Ints
+    low_since: Ints
+    up: Ints
+    last_value: Floats
+    repeats: Ints
+    run_probability: Floats
+    changes: Ints
+    equal: Ints
+    stuck: Ints
+    missing: Ints
+    lost: Ints
+    last_z: Floats
+    ring: Floats
+    valid_from: Ints
+    """(1,) First cycle whose innovations the diagnosis may use."""
+    cycle: Ints
+    watch: Ints
+    """(1,) 1 while a flag or an undecided test needs looking after every ``look_every`` cycles."""
+
+    def copy(self) -> TestState:
+        """A copy that shares nothing with this state."""
+        return TestState(*(part.copy() for part in self))
+
+
+def initial_tests(n_sensors: int, window: int) -> TestState:
+    """All sums at zero, nothing seen."""
+
+    def floats(value: float = 0.0) -> Floats:
+        return np.full(n_sensors, value)
+
+    def ints(value: int = 0) -> Ints:
+        return np.full(n_sensors, value, dtype=np.int64)
+
+    return TestState(
+        floats(),
+        floats(),
+        ints(),
+        ints(),
+        ints(),
+        floats(np.nan),
+        ints(),
+        floats(1.0),
+        ints(9),
+        ints(1),
+        ints(),
+        ints(),
+        ints(),
+        floats(),
+        np.full((window, n_sensors), np.nan),
+        np.zeros(1, dtype=np.int64),
+        np.zeros(1, dtype=np.int64),
+        np.zeros(1, dtype=np.int64),
+    )
+
+
+@njit(cache=True)
+def _test_shift(design: TestDesign, state: TestState, i: int, z: float) -> int:
+    cap = 2.0 * design.interval[i]
+    high, low = cusum_step(state.high[i], state.low[i], z, design.reference[i], design.clip, cap)
+    now = state.cycle[0]
+    if state.high[i] == 0.0 and high > 0.0:
+        state.high_since[i] = now
+    if state.low[i] == 0.0 and low > 0.0:
+        state.low_since[i] = now
+    state.high[i] = high
+    state.low[i] = low
+    top = max(high, low)
+    if state.up[i] == 0 and top > design.interval[i]:
+        state.up[i] = 1 if high >= low else -1
+        return SHIFT_UP
+    if state.up[i] != 0 and top < 0.5 * design.interval[i]:
+        state.up[i] = 0
+        return SHIFT_CLEARED
+    return 0
+
+
+@njit(cache=True)
+def _test_stuck(design: TestDesign, state: TestState, i: int, value: float) -> int:
+    """A run of equal readings is judged by how often this very sensor repeats itself: its own resolution."""
+    event = 0
+    if value == state.last_value[i]:
+        state.repeats[i] += 1
+        share = state.equal[i] / (state.equal[i] + state.changes[i])
+        state.run_probability[i] *= share
+        improbable = state.run_probability[i] < design.stuck_probability
+        warm = state.equal[i] + state.changes[i] + state.repeats[i] >= WARM_UP
+        if state.stuck[i] == 0 and improbable and warm and state.repeats[i] >= MIN_REPEATS:
+            state.stuck[i] = 1
+            event = STUCK
+    else:
+        if state.stuck[i] == 1:
+            state.stuck[i] = 0
+            event = STUCK_ENDED
+        else:
+            state.equal[i] += state.repeats[i]
+        state.changes[i] += 1
+        state.repeats[i] = 0
+        state.run_probability[i] = 1.0
+    state.last_value[i] = value
+    return event
+
+
+@njit(cache=True)
+def _test_lost(design: TestDesign, state: TestState, i: int, missing: bool) -> int:
+    state.missing[i] = state.missing[i] + 1 if missing else 0
+    if state.lost[i] == 0 and state.missing[i] > design.lost_after[i]:
+        state.lost[i] = 1
+        return LOST
+    if state.lost[i] == 1 and not missing:
+        state.lost[i] = 0
+        return LOST_ENDED
+    return 0
+
+
+@njit(cache=True)
+def _test_spike(design: TestDesign, state: TestState, i: int, z: float) -> int:
+    """One reading far out with its neighbours in place, seen one cycle later."""
+    before = state.last_z[i]
+    state.last_z[i] = z
+    return SPIKE if abs(before) > design.spike and abs(z) < 0.5 * design.spike else 0
+
+
+@njit(cache=True)
+def test_cycle(
+    design: TestDesign, state: TestState, y: Floats, fresh: Ints, innovation: Floats, sd: Floats, events: Ints
+) -> int:
+    """Run all tests on one cycle's innovations; events (n_sensors,) gets the bits, the return value their union.
+
+    ``fresh`` is 0 for a value that the assembly repeated (reported on change): it is no evidence of being stuck.
+    """
+    union = 0
+    slot = state.cycle[0] % state.ring.shape[0]
+    for i in range(len(y)):
+        missing = not (y[i] == y[i])
+        code = _test_lost(design, state, i, missing)
+        state.ring[slot, i] = innovation[i]
+        if not missing:
+            z = innovation[i] / sd[i]
+            code |= _test_shift(design, state, i, z)
+            code |= _test_spike(design, state, i, z)
+            if fresh[i] != 0:
+                code |= _test_stuck(design, state, i, y[i])
+        events[i] = code
+        union |= code
+    state.cycle[0] += 1
+    if state.watch[0] != 0 and state.cycle[0] % design.look_every == 0:
+        union |= LOOK
+    return union

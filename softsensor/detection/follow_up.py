@@ -1,0 +1,269 @@
+"""What follows when a test has news: open a flag, name a sensor, say that a disturbance moved, clear what has passed."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field, replace
+
+import numpy as np
+
+from plant_models.plant_model import PlantModel
+from softsensor.detection import fault_tests
+from softsensor.detection.diagnosis import (
+    NAMING_RATIO,
+    Likelihoods,
+    Verdict,
+    judge,
+    likelihoods,
+    onset_ages,
+)
+from softsensor.detection.fault_tests import TestDesign, TestState
+from softsensor.detection.flags import Episode, Exclusion, Flag, FlagBook, Kind, Note, flag_name
+from softsensor.detection.signatures import Hypothesis, SteadyFilter, signatures, steady_filter
+from softsensor.estimation.kernel import Floats, Ints, Kernel
+
+SHIFT_KINDS: tuple[Kind, ...] = ("bias", "drift")
+PATIENCE = 60
+"""Cycles for which a name is waited for before a group is flagged."""
+SPIKE_QUIET = 360
+"""Cycles without another spike after which a spike flag clears."""
+
+
+@dataclass(frozen=True)
+class DetectionDesign:
+    """Everything the tests and the diagnosis of one unit need; tables are computed once per set of sensors in use."""
+
+    model: PlantModel
+    kernel: Kernel
+    tests: TestDesign
+    suspects: tuple[Hypothesis, ...]
+    window: int
+    sample_us: int
+    leave_out: bool
+    armed: bool
+    tables: dict[tuple[int, ...], tuple[SteadyFilter, Floats]] = field(default_factory=dict, repr=False)
+
+    def table(self, use: Ints) -> tuple[SteadyFilter, Floats]:
+        """Settled filter and whitened signatures with these sensors in use."""
+        key = tuple(int(value) for value in use)
+        if key not in self.tables:
+            steady = steady_filter(self.model, self.kernel, use)
+            self.tables[key] = (
+                steady,
+                signatures(self.model, self.kernel, self.suspects, steady, use, self.window),
+            )
+        return self.tables[key]
+
+
+@dataclass(frozen=True)
+class FollowUp:
+    """The outcome of one cycle's news."""
+
+    book: FlagBook
+    changes: tuple[Flag, ...] = ()
+    """Flags opened or cleared at this cycle."""
+    notes: tuple[Note, ...] = ()
+    exclusion: Exclusion | None = None
+    """A sensor to be left out, from its onset on."""
+
+
+@dataclass(frozen=True)
+class Moment:
+    """The cycle that has news: its number, its time, the event bits per sensor."""
+
+    cycle: int
+    time: int
+    events: Ints
+
+
+def follow_up(design: DetectionDesign, book: FlagBook, tests: TestState, moment: Moment) -> FollowUp:
+    """Deal with all news of one cycle; ``tests`` is a work array and may be restarted here."""
+    outcome = FollowUp(book)
+    for sensor in range(design.kernel.n_sensors):
+        outcome = _simple_faults(design, outcome, tests, moment, sensor)
+    outcome = _clear_shifts(design, outcome, tests, moment)
+    if design.armed:
+        outcome = _diagnose(design, outcome, tests, moment)
+    tests.watch[0] = int(bool(outcome.book.open) or outcome.book.episode is not None)
+    return outcome
+
+
+def _opened(outcome: FollowUp, flag: Flag) -> FollowUp:
+    book = replace(outcome.book, open=(*outcome.book.open, flag))
+    return replace(outcome, book=book, changes=(*outcome.changes, flag))
+
+
+def _cleared(outcome: FollowUp, flag: Flag, time: int) -> FollowUp:
+    remaining = tuple(item for item in outcome.book.open if item.flag != flag.flag)
+    return replace(
+        outcome,
+        book=replace(outcome.book, open=remaining),
+        changes=(*outcome.changes, flag.closed(time)),
+    )
+
+
+def _certain(design: DetectionDesign, tag: str, kind: Kind, onset: int, moment: Moment) -> Flag:
+    name = flag_name(design.model.spec.name, tag, kind, moment.time)
+    return Flag(name, tag, kind, onset, moment.time, None, np.nan, np.nan, 1.0, (tag,))
+
+
+def _simple_faults(
+    design: DetectionDesign, outcome: FollowUp, tests: TestState, moment: Moment, sensor: int
+) -> FollowUp:
+    """Stuck, lost and spike: each shows in the sensor's own readings and needs no comparison."""
+    bits, tag = int(moment.events[sensor]), design.model.spec.sensors[sensor].tag
+    starts: tuple[tuple[int, Kind, int], ...] = (
+        (fault_tests.LOST, "lost", int(tests.missing[sensor]) - 1),
+        (fault_tests.STUCK, "stuck", int(tests.repeats[sensor])),
+        (fault_tests.SPIKE, "spike", 1),
+    )
+    for bit, kind, ago in starts:
+        if bits & bit and outcome.book.find(tag, (kind,)) is None:
+            onset = moment.time - ago * design.sample_us
+            outcome = _opened(outcome, _certain(design, tag, kind, onset, moment))
+    ends: tuple[tuple[int, Kind], ...] = ((fault_tests.LOST_ENDED, "lost"), (fault_tests.STUCK_ENDED, "stuck"))
+    for bit, kind in ends:
+        flag = outcome.book.find(tag, (kind,))
+        if bits & bit and flag is not None:
+            outcome = _cleared(outcome, flag, moment.time)
+    if bits & (fault_tests.LOST | fault_tests.LOST_ENDED):
+        tests.valid_from[0] = moment.cycle + 1
+    spike = outcome.book.find(tag, ("spike",))
+    if spike is not None and moment.time - spike.detected > SPIKE_QUIET * design.sample_us:
+        outcome = _cleared(outcome, spike, moment.time)
+    return outcome
+
+
+def _clear_shifts(design: DetectionDesign, outcome: FollowUp, tests: TestState, moment: Moment) -> FollowUp:
+    """A shift's flag clears when its sensor's own sums have come down (an input's: when all sums have)."""
+    tags = [item.tag for item in design.model.spec.sensors]
+    for flag in outcome.book.open:
+        if flag.kind not in SHIFT_KINDS or flag.detected == moment.time:
+            continue
+        up = tests.up[tags.index(flag.tag)] != 0 if flag.tag in tags else bool(np.any(tests.up != 0))
+        settled = moment.time - flag.detected > PATIENCE * design.sample_us
+        if not up and settled:
+            outcome = _cleared(outcome, flag, moment.time)
+    return outcome
+
+
+def _in_use(design: DetectionDesign, book: FlagBook, tests: TestState, cycle: int) -> Ints:
+    return np.array(
+        [
+            int(not book.excluded(i, cycle) and tests.lost[i] == 0)
+            for i in range(design.kernel.n_sensors)
+        ],
+        dtype=np.int64,
+    )
+
+
+def _diagnose(design: DetectionDesign, outcome: FollowUp, tests: TestState, moment: Moment) -> FollowUp:
+    """While a test of a sensor in use is up and no flag explains it: weigh the explanations and act on the verdict."""
+    book = outcome.book
+    use = _in_use(design, book, tests, moment.cycle)
+    up = bool(np.any((tests.up != 0) & (use != 0)))
+    if not up:
+        return replace(outcome, book=replace(book, episode=None))
+    explained = any(
+        flag.kind in SHIFT_KINDS and not _is_left_out(design, book, flag.tag, moment.cycle) for flag in book.open
+    )
+    if explained:
+        return outcome
+    if book.episode is None:
+        outcome = replace(outcome, book=replace(book, episode=Episode(moment.cycle)))
+    return _act(design, outcome, tests, moment, use)
+
+
+def _is_left_out(design: DetectionDesign, book: FlagBook, tag: str, cycle: int) -> bool:
+    tags = [item.tag for item in design.model.spec.sensors]
+    return tag in tags and book.excluded(tags.index(tag), cycle)
+
+
+def look(design: DetectionDesign, tests: TestState, use: Ints) -> tuple[Verdict, Likelihoods]:
+    """Weigh all explanations of the innovations since the tests were last restarted."""
+    steady, table = design.table(use)
+    newest = int(tests.cycle[0]) - 1
+    available = min(newest + 1 - int(tests.valid_from[0]), design.window)
+    prior_sd = np.array([suspect.prior_sd for suspect in design.suspects])
+    found = likelihoods(table, prior_sd, tests.ring, newest, steady.whitening, use, onset_ages(available))
+    return judge(design.suspects, found), found
+
+
+def _act(
+    design: DetectionDesign, outcome: FollowUp, tests: TestState, moment: Moment, use: Ints
+) -> FollowUp:
+    verdict, found = look(design, tests, use)
+    episode = outcome.book.episode
+    waited = moment.cycle - episode.since if episode is not None else 0
+    suspect = design.suspects[verdict.best] if verdict.best >= 0 else None
+    if suspect is not None and suspect.source != "disturbance":
+        named = len(verdict.group) == 1
+        size = abs(_present_size(suspect, found, verdict.best)[0])
+        worth = suspect.source != "sensor" or size > design.model.spec.sensors[suspect.index].tolerance
+        certain = verdict.instrument * (NAMING_RATIO + 1.0) > NAMING_RATIO
+        if named or (certain and worth and waited >= PATIENCE):
+            return _open_shift(design, outcome, tests, moment, (verdict, found, use))
+    if waited >= PATIENCE and episode is not None and not episode.noted:
+        return _note(outcome, moment, verdict)
+    return outcome
+
+
+def _note(outcome: FollowUp, moment: Moment, verdict: Verdict) -> FollowUp:
+    text = "test up; most probable: " + ", ".join(
+        f"{name} {probability:.2f}"
+        for name, probability in zip(verdict.names[:3], verdict.probabilities[:3], strict=True)
+    )
+    episode = outcome.book.episode
+    assert episode is not None
+    return replace(
+        outcome,
+        book=replace(outcome.book, episode=replace(episode, noted=True)),
+        notes=(*outcome.notes, Note(moment.time, "test up", text)),
+    )
+
+
+def _present_size(suspect: Hypothesis, found: Likelihoods, best: int) -> tuple[float, float]:
+    """Size of the error now, with its sd: a ramp has run for as many cycles as its onset lies back."""
+    factor = float(found.age[best]) if suspect.shape == "ramp" else 1.0
+    return float(found.size[best]) * factor, float(found.size_sd[best]) * factor
+
+
+def _open_shift(
+    design: DetectionDesign,
+    outcome: FollowUp,
+    tests: TestState,
+    moment: Moment,
+    seen: tuple[Verdict, Likelihoods, Ints],
+) -> FollowUp:
+    verdict, found, use = seen
+    suspect = design.suspects[verdict.best]
+    kind: Kind = "bias" if suspect.shape == "step" else "drift"
+    size, size_sd = _present_size(suspect, found, verdict.best)
+    back = int(found.age[verdict.best]) - 1
+    flag = Flag(
+        flag_name(design.model.spec.name, suspect.name, kind, moment.time),
+        suspect.name,
+        kind,
+        moment.time - back * design.sample_us,
+        moment.time,
+        None,
+        size,
+        size_sd,
+        verdict.probabilities[0],
+        verdict.group,
+    )
+    outcome = _opened(outcome, flag)
+    isolated = flag.isolated and suspect.source == "sensor"
+    if not (design.leave_out and isolated and int(np.sum(use)) > 1):
+        return outcome
+    exclusion = Exclusion(suspect.index, moment.cycle - back)
+    book = replace(outcome.book, episode=None, exclusions=(*outcome.book.exclusions, exclusion))
+    _restart(tests, moment.cycle + 1)
+    return replace(outcome, book=book, exclusion=exclusion)
+
+
+def _restart(tests: TestState, cycle: int) -> None:
+    """After a sensor has been left out the sums start anew: what they had added up is explained."""
+    tests.high[:] = 0.0
+    tests.low[:] = 0.0
+    tests.up[:] = 0
+    tests.valid_from[0] = cycle

@@ -1,0 +1,65 @@
+"""The input-driven part, compiled: paths held over each sample, dead times in a ring buffer of past inputs."""
+
+from __future__ import annotations
+
+from numba import njit
+
+from softsensor.estimation.kernel import EstimatorState, Floats, Kernel
+
+
+@njit(cache=True)
+def accept_inputs(kernel: Kernel, state: EstimatorState, u: Floats) -> None:
+    """Put this cycle's inputs (engineering units) at the head of the ring; the first ones are taken as steady."""
+    first = state.head[0] < 0
+    head = 0 if first else (state.head[0] + 1) % kernel.ring
+    for j in range(kernel.n_inputs):
+        deviation = u[j] - kernel.operating_u[j]
+        state.u_past[j, head] = deviation
+        if first:
+            for lag in range(kernel.ring):
+                state.u_past[j, lag] = deviation
+    if first:
+        for b in range(len(kernel.block_source)):
+            deviation = state.u_past[kernel.block_source[b], 0]
+            start = kernel.block_state[b]
+            for i in range(start, start + kernel.block_size[b]):
+                state.x_in[i] = kernel.steady[i] * deviation
+    state.head[0] = head
+
+
+@njit(cache=True)
+def past_input(kernel: Kernel, state: EstimatorState, source: int, delay: int) -> float:
+    """u(k - delay) of one input, as a deviation."""
+    return state.u_past[source, (state.head[0] - delay) % kernel.ring]
+
+
+@njit(cache=True)
+def input_driven_outputs(kernel: Kernel, state: EstimatorState, out: Floats) -> None:
+    """Operating point plus input-driven part of every output at this cycle, into ``out``."""
+    for i in range(kernel.n_sensors + kernel.n_estimates):
+        out[i] = kernel.operating_y[i]
+    for b in range(len(kernel.block_source)):
+        total = 0.0
+        start = kernel.block_state[b]
+        for i in range(start, start + kernel.block_size[b]):
+            total += kernel.c_in[i] * state.x_in[i]
+        if kernel.block_d[b] != 0.0:
+            delay = kernel.block_whole[b] + kernel.block_older[b]
+            total += kernel.block_d[b] * past_input(kernel, state, kernel.block_source[b], delay)
+        out[kernel.block_row[b]] += total
+
+
+@njit(cache=True)
+def advance_input_driven(kernel: Kernel, state: EstimatorState, work: Floats) -> None:
+    """x(k+1) = phi x(k) + gamma_recent u(k-m) + gamma_older u(k-m-1), path by path."""
+    for b in range(len(kernel.block_source)):
+        size, start, at = kernel.block_size[b], kernel.block_state[b], kernel.block_phi[b]
+        recent = past_input(kernel, state, kernel.block_source[b], kernel.block_whole[b])
+        older = past_input(kernel, state, kernel.block_source[b], kernel.block_whole[b] + 1)
+        for i in range(size):
+            total = kernel.gamma_recent[start + i] * recent + kernel.gamma_older[start + i] * older
+            for j in range(size):
+                total += kernel.phi[at + i * size + j] * state.x_in[start + j]
+            work[i] = total
+        for i in range(size):
+            state.x_in[start + i] = work[i]

@@ -1,0 +1,144 @@
+"""A unit's model laid out for the compiled loop: flat arrays, known structure used, nothing computed twice.
+
+Input-driven paths are deterministic and stay out of the covariance; their dead times are a ring buffer of past inputs.
+The stochastic part keeps A and C in compressed rows, so that shift registers and offsets cost what they move.
+"""
+
+from __future__ import annotations
+
+from typing import NamedTuple
+
+import numpy as np
+from numpy.typing import NDArray
+
+from plant_models.plant_model import DiscretePath, Matrix, PlantModel
+
+Floats = NDArray[np.float64]
+Ints = NDArray[np.int64]
+
+
+class Kernel(NamedTuple):
+    """Everything that the compiled cycle reads; rows are sensors first, then estimates."""
+
+    n_inputs: int
+    n_sensors: int
+    n_estimates: int
+    ring: int
+    """Length of the ring buffer of past inputs: the longest dead time in samples, plus two."""
+    operating_u: Floats
+    operating_y: Floats
+    """(n_sensors + n_estimates,)"""
+    block_source: Ints
+    block_row: Ints
+    block_size: Ints
+    block_state: Ints
+    """First state of each path among the input-driven states."""
+    block_phi: Ints
+    """Offset of each path's phi, row by row, in ``phi``."""
+    block_whole: Ints
+    block_older: Ints
+    """1 where the direct term acts on the older of the two inputs of a fractional dead time."""
+    block_d: Floats
+    phi: Floats
+    gamma_recent: Floats
+    gamma_older: Floats
+    c_in: Floats
+    steady: Floats
+    a_ptr: Ints
+    a_idx: Ints
+    a_val: Floats
+    c_ptr: Ints
+    c_idx: Ints
+    c_val: Floats
+    q: Floats
+    r: Floats
+    """Variance of each sensor's noise (n_sensors,)."""
+
+
+class EstimatorState(NamedTuple):
+    """What the estimator carries from cycle to cycle: the prediction for the coming cycle.
+
+    x (n,), P (n, n): mean and covariance of the stochastic part; x_in: input-driven states; u_past (n_inputs, ring):
+    past inputs as deviations; head (1,): column of the newest of them, -1 before the first cycle.
+    """
+
+    x: Floats
+    P: Floats
+    x_in: Floats
+    u_past: Floats
+    head: Ints
+
+    def copy(self) -> EstimatorState:
+        """A copy that shares nothing with this state."""
+        return EstimatorState(*(part.copy() for part in self))
+
+
+def compressed_rows(matrix: Matrix) -> tuple[Ints, Ints, Floats]:
+    """Row pointers, column indices and values of the entries that are not zero.
+
+    >>> [part.tolist() for part in compressed_rows(np.array([[0.0, 2.0], [0.0, 0.0]]))]
+    [[0, 1, 1], [1], [2.0]]
+    """
+    rows, columns = np.nonzero(matrix)
+    pointers = np.searchsorted(rows, np.arange(matrix.shape[0] + 1)).astype(np.int64)
+    return pointers, columns.astype(np.int64), np.ascontiguousarray(matrix[rows, columns])
+
+
+def _flat(parts: list[Floats]) -> Floats:
+    return np.ascontiguousarray(np.concatenate([part.ravel() for part in parts])) if parts else np.zeros(0)
+
+
+def _offsets(sizes: list[int]) -> Ints:
+    return np.concatenate(([0], np.cumsum(sizes)[:-1])).astype(np.int64) if sizes else np.zeros(0, np.int64)
+
+
+def _ring_length(paths: tuple[DiscretePath, ...]) -> int:
+    return max((path.whole_delays for path in paths), default=0) + 2
+
+
+def build_kernel(model: PlantModel) -> Kernel:
+    """Lay a model out for the compiled loop."""
+    spec, paths, part = model.spec, model.paths, model.stochastic
+    sizes = [len(path.steady) for path in paths]
+    outputs = [*spec.sensors, *spec.estimates]
+
+    def ints(values: list[int]) -> Ints:
+        return np.array(values, dtype=np.int64)
+
+    return Kernel(
+        len(spec.inputs),
+        len(spec.sensors),
+        len(spec.estimates),
+        _ring_length(paths),
+        np.array([item.operating_point for item in spec.inputs], dtype=np.float64),
+        np.array([item.operating_point for item in outputs], dtype=np.float64),
+        ints([path.source for path in paths]),
+        ints([path.row for path in paths]),
+        ints(sizes),
+        _offsets(sizes),
+        _offsets([size * size for size in sizes]),
+        ints([path.whole_delays for path in paths]),
+        ints([int(path.fraction > 0.0) for path in paths]),
+        np.array([path.d for path in paths], dtype=np.float64),
+        _flat([path.phi for path in paths]),
+        _flat([path.gamma_recent for path in paths]),
+        _flat([path.gamma_older for path in paths]),
+        _flat([path.c for path in paths]),
+        _flat([path.steady for path in paths]),
+        *compressed_rows(part.A),
+        *compressed_rows(part.C),
+        np.array(part.q, dtype=np.float64),
+        np.array([item.noise_sd**2 for item in spec.sensors], dtype=np.float64),
+    )
+
+
+def initial_state(model: PlantModel, kernel: Kernel) -> EstimatorState:
+    """The state before the first cycle; input-driven states are set in steady state by the first cycle's inputs."""
+    n = len(kernel.q)
+    return EstimatorState(
+        np.zeros(n),
+        np.array(model.stochastic.P0, dtype=np.float64, order="C"),
+        np.zeros(len(kernel.steady)),
+        np.zeros((kernel.n_inputs, kernel.ring)),
+        np.array([-1], dtype=np.int64),
+    )

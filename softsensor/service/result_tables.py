@@ -1,0 +1,140 @@
+"""Results of cycles as tables, one row per cycle and tag, with the columns of the result files."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+
+import numpy as np
+import pandas as pd
+
+from softsensor.cycle import CycleResults, UnitDesign, outside
+from softsensor.detection.flags import Flag
+from softsensor.estimation.lab_results import LabOutcome
+from softsensor.readings_of_cycle import CycleQuality, CycleReadings
+
+NORMAL_95 = 1.959963984540054
+"""97.5 % quantile of the standard normal distribution."""
+STATUS_NAMES = np.array(["Good", "Uncertain", "Bad"])
+
+ESTIMATE_COLUMNS = ("time", "tag", "value", "sd", "lower", "upper", "status", "reason")
+INNOVATION_COLUMNS = (
+    "time", "tag", "reading", "predicted", "innovation", "sd", "used", "cusum_high", "cusum_low",
+)  # fmt: skip
+FLAG_COLUMNS = (
+    "flag", "tag", "kind", "onset", "detected", "cleared", "size", "size_sd", "probability", "group",
+)  # fmt: skip
+LAB_COLUMNS = (
+    "sampled_at", "reported_at", "tag", "value", "arrived_at_cycle", "counted_at_cycle",
+    "predicted", "innovation", "sd", "status", "reason",
+)  # fmt: skip
+
+INPUT_REASONS = {
+    CycleQuality.UNCERTAIN: "{} is Uncertain",
+    CycleQuality.BAD: "{} is Bad, its last value is held",
+    CycleQuality.MISSING: "{} has had no value yet",
+    CycleQuality.STALE: "{} is too old, its last value is held",
+}
+
+
+def moments(times: np.ndarray | Sequence[int | None]) -> pd.DatetimeIndex:
+    """UTC times of integer microseconds; None becomes not-a-time."""
+    return pd.DatetimeIndex(pd.to_datetime(pd.array(list(times), dtype="Int64"), unit="us", utc=True))
+
+
+def reasons(design: UnitDesign, readings: CycleReadings, results: CycleResults) -> np.ndarray:
+    """(N, n_estimates) texts: why an estimate is not Good; empty where it is."""
+    spec, n = design.model.spec, len(results)
+    out = np.full((n, len(spec.estimates)), "", dtype=object)
+    for k in np.flatnonzero(np.any(results.status != 0, axis=1)):
+        shared = _shared_reasons(design, readings, results, int(k))
+        for e, item in enumerate(spec.estimates):
+            own = []
+            if item.validated_range is not None and outside(results.estimate[k : k + 1, e], item.validated_range)[0]:
+                own = [f"{item.tag} is outside its validated range"]
+            out[k, e] = "; ".join(shared + own)
+    return out
+
+
+def _shared_reasons(design: UnitDesign, readings: CycleReadings, results: CycleResults, k: int) -> list[str]:
+    spec, found = design.model.spec, []
+    for j, item in enumerate(spec.inputs):
+        quality = CycleQuality(int(readings.u_quality[k, j]))
+        if quality in INPUT_REASONS:
+            found.append(INPUT_REASONS[quality].format(item.tag))
+        if outside(readings.u[k : k + 1, j], item.validated_range)[0]:
+            found.append(f"{item.tag} is outside its validated range")
+    found += [f"{item.tag} is left out" for i, item in enumerate(spec.sensors) if results.left_out[k, i]]
+    return found
+
+
+def estimate_table(design: UnitDesign, readings: CycleReadings, results: CycleResults) -> pd.DataFrame:
+    """One row per cycle and estimate, cycle by cycle."""
+    tags, n = list(design.model.estimate_tags), len(results)
+    value, sd = results.estimate.ravel(), results.sd.ravel()
+    return pd.DataFrame(
+        {
+            "time": moments(results.times).repeat(len(tags)),
+            "tag": pd.Categorical.from_codes(np.tile(np.arange(len(tags)), n), tags),
+            "value": value,
+            "sd": sd,
+            "lower": value - NORMAL_95 * sd,
+            "upper": value + NORMAL_95 * sd,
+            "status": pd.Categorical.from_codes(results.status.ravel(), STATUS_NAMES),
+            "reason": reasons(design, readings, results).ravel(),
+        }
+    )
+
+
+def innovation_table(design: UnitDesign, results: CycleResults) -> pd.DataFrame:
+    """One row per cycle and sensor, cycle by cycle."""
+    tags, n = list(design.model.sensor_tags), len(results)
+    return pd.DataFrame(
+        {
+            "time": moments(results.times).repeat(len(tags)),
+            "tag": pd.Categorical.from_codes(np.tile(np.arange(len(tags)), n), tags),
+            "reading": results.reading.ravel(),
+            "predicted": results.predicted.ravel(),
+            "innovation": results.innovation.ravel(),
+            "sd": results.innovation_sd.ravel(),
+            "used": results.used.ravel(),
+            "cusum_high": results.high.ravel(),
+            "cusum_low": results.low.ravel(),
+        }
+    )
+
+
+def flag_table(flags: Sequence[Flag]) -> pd.DataFrame:
+    """One row per flag, in order of detection."""
+    return pd.DataFrame(
+        {
+            "flag": [flag.flag for flag in flags],
+            "tag": [flag.tag for flag in flags],
+            "kind": [flag.kind for flag in flags],
+            "onset": moments([flag.onset for flag in flags]),
+            "detected": moments([flag.detected for flag in flags]),
+            "cleared": moments([flag.cleared for flag in flags]),
+            "size": np.array([flag.size for flag in flags], dtype=np.float64),
+            "size_sd": np.array([flag.size_sd for flag in flags], dtype=np.float64),
+            "probability": np.array([flag.probability for flag in flags], dtype=np.float64),
+            "group": ["; ".join(flag.group) for flag in flags],
+        }
+    )
+
+
+def lab_table(labs: Sequence[LabOutcome]) -> pd.DataFrame:
+    """One row per laboratory result, in order of arrival."""
+    return pd.DataFrame(
+        {
+            "sampled_at": moments([lab.arrival.sampled for lab in labs]),
+            "reported_at": moments([lab.arrival.reported for lab in labs]),
+            "tag": [lab.arrival.tag for lab in labs],
+            "value": np.array([lab.arrival.value for lab in labs], dtype=np.float64),
+            "arrived_at_cycle": np.array([lab.arrived_cycle for lab in labs], dtype=np.int64),
+            "counted_at_cycle": np.array([lab.counted_cycle for lab in labs], dtype=np.int64),
+            "predicted": np.array([lab.predicted for lab in labs], dtype=np.float64),
+            "innovation": np.array([lab.innovation for lab in labs], dtype=np.float64),
+            "sd": np.array([lab.sd for lab in labs], dtype=np.float64),
+            "status": [lab.status for lab in labs],
+            "reason": [lab.reason for lab in labs],
+        }
+    )

@@ -1,0 +1,105 @@
+"""The summary of a run: per sensor and per estimate the figures that say whether the model and its promises hold."""
+
+from __future__ import annotations
+
+from typing import Any
+
+import numpy as np
+
+from softsensor.cycle import CycleResults, UnitDesign
+from softsensor.detection.flags import Flag, Note
+from softsensor.estimation.lab_results import LabOutcome
+from softsensor.service.result_tables import NORMAL_95
+
+
+class RunSummary:
+    """Adds results up as they come; nothing is kept per cycle."""
+
+    def __init__(self, design: UnitDesign) -> None:
+        n = design.kernel.n_sensors
+        self._design = design
+        self._cycles = 0
+        self._count = np.zeros(n, dtype=np.int64)
+        self._squares = np.zeros(n)
+        self._pairs = np.zeros(n)
+        self._pair_count = np.zeros(n, dtype=np.int64)
+        self._last = np.full((1, n), np.nan)
+        self._ups = np.zeros(n, dtype=np.int64)
+        self._up = np.zeros(n, dtype=bool)
+        self.flags: dict[str, Flag] = {}
+        self.notes: list[Note] = []
+        self.labs: list[LabOutcome] = []
+
+    def add(self, results: CycleResults) -> None:
+        """Count these cycles' results."""
+        self._cycles += len(results)
+        z = results.innovation / results.innovation_sd
+        present = np.isfinite(z)
+        self._count += present.sum(axis=0)
+        self._squares += np.nansum(z * z, axis=0)
+        both = np.concatenate([self._last, z])
+        product = both[1:] * both[:-1]
+        self._pairs += np.nansum(product, axis=0)
+        self._pair_count += np.isfinite(product).sum(axis=0)
+        self._last = both[-1:]
+        self._count_tests(results)
+        for flag in results.flags:
+            self.flags[flag.flag] = flag
+        self.notes += results.notes
+
+    def _count_tests(self, results: CycleResults) -> None:
+        interval = self._design.detection.tests.interval
+        top = np.maximum(results.high, results.low)
+        for row in top[np.any(top > 0.5 * interval, axis=1)]:
+            rising = (row > interval) & ~self._up
+            self._ups += rising
+            self._up = (self._up | rising) & (row >= 0.5 * interval)
+        if len(top) and np.all(top[-1] < 0.5 * interval):
+            self._up[:] = False
+
+    def as_dict(self, digest: str) -> dict[str, Any]:
+        """The content of summary.json."""
+        return {
+            "unit": self._design.model.spec.name,
+            "cycles": self._cycles,
+            "digest": digest,
+            "model_digest": self._design.model.digest,
+            "sensors": {tag: self._sensor(i, tag) for i, tag in enumerate(self._design.model.sensor_tags)},
+            "estimates": {
+                tag: self._estimate(e) for e, tag in enumerate(self._design.model.estimate_tags)
+            },
+            "flags": len(self.flags),
+            "notes": [note.text for note in self.notes],
+            "caution": "Advisory only: not a safety function and no basis for defeating one.",
+        }
+
+    def _sensor(self, i: int, tag: str) -> dict[str, Any]:
+        count, pairs = int(self._count[i]), int(self._pair_count[i])
+        nis = float(self._squares[i]) / count if count else None
+        whiteness = float(self._pairs[i]) / pairs / nis if pairs and nis else None
+        return {
+            "readings": count,
+            "nis": nis,
+            "whiteness": whiteness,
+            "flags": sum(flag.tag == tag for flag in self.flags.values()),
+            "promised_run_length": self._design.model.spec.false_flag_interval
+            / self._design.model.spec.sample_time,
+            "achieved_run_length": self._cycles / int(self._ups[i]) if self._ups[i] else None,
+        }
+
+    def _estimate(self, e: int) -> dict[str, Any]:
+        used = [lab for lab in self.labs if lab.arrival.estimate == e and lab.status == "used"]
+        errors = np.array([lab.innovation for lab in used])
+        inside = [abs(lab.innovation) <= NORMAL_95 * lab.sd for lab in used]
+        return {
+            "lab_count": len(used),
+            "lab_left_out": sum(
+                lab.arrival.estimate == e and lab.status != "used" for lab in self.labs
+            ),
+            "rmsep": float(np.sqrt(np.mean(errors**2))) if used else None,
+            "bias": float(np.mean(errors)) if used else None,
+            "coverage": float(np.mean(inside)) if used else None,
+        }
+
+
+

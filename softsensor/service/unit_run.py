@@ -1,0 +1,221 @@
+"""One unit's run through time: cycles forward, and back and forward again for late results and excluded sensors.
+
+Live and replay both drive this. It has no clock: what arrived when is handed in.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterable
+from dataclasses import dataclass, replace
+
+import numpy as np
+
+from softsensor.cycle import (
+    CycleResults,
+    CycleState,
+    LabAtCycle,
+    UnitDesign,
+    rerun,
+    run_cycles,
+)
+from softsensor.estimation.kernel import EstimatorState, Floats
+from softsensor.estimation.lab_results import (
+    IMPOSSIBLE,
+    LabArrival,
+    LabOutcome,
+    counting_cycle,
+    likely_reason,
+    slope_variance,
+)
+from softsensor.estimation.past import CHUNK, Past, Revision
+from softsensor.readings_of_cycle import CycleReadings
+
+
+@dataclass(frozen=True)
+class Advance:
+    """What a stretch of cycles brought, in order: results, what became of laboratory results, what was revised."""
+
+    results: tuple[CycleResults, ...]
+    labs: tuple[LabOutcome, ...] = ()
+    revisions: tuple[Revision, ...] = ()
+
+
+def slice_readings(readings: CycleReadings, start: int, stop: int) -> CycleReadings:
+    """Rows start to stop of some cycles' readings."""
+    return CycleReadings(
+        readings.times[start:stop],
+        readings.u[start:stop],
+        readings.u_quality[start:stop],
+        readings.y[start:stop],
+        readings.y_quality[start:stop],
+    )
+
+
+class UnitRun:
+    """A unit under way. ``state`` and ``past`` may come from the records; ``labs`` are the results already counted."""
+
+    def __init__(
+        self,
+        design: UnitDesign,
+        state: CycleState,
+        past: Past,
+        labs: Iterable[LabAtCycle] = (),
+        first_time: int | None = None,
+    ) -> None:
+        self.design = design
+        self.state = state
+        self.past = past
+        self.first_time = first_time
+        self._labs = sorted(labs, key=_order)
+        self._sample_us = design.detection.sample_us
+
+    @property
+    def started(self) -> bool:
+        """Has every input had a value, so that cycle 0 has run?"""
+        return self.first_time is not None
+
+    def advance(self, readings: CycleReadings, arrivals: Iterable[LabArrival] = ()) -> Advance:
+        """Run these cycles; ``arrivals`` are the laboratory results that arrived by the first of them."""
+        waiting = 0 if self.started else self._rows_to_wait(readings)
+        results = [_waiting_results(self.design, slice_readings(readings, 0, waiting))] if waiting else []
+        if waiting == len(readings):
+            early = [_too_late(item, -1, "before the first cycle") for item in arrivals]
+            return Advance(tuple(results), tuple(early))
+        if self.first_time is None:
+            self.first_time = int(readings.times[waiting])
+        outcomes: list[LabOutcome] = []
+        revisions: list[Revision] = []
+        for arrival in sorted(arrivals, key=lambda item: (item.sampled, item.reported, item.tag, item.value)):
+            outcome, revision = self._take(arrival, slice_readings(readings, waiting, waiting + 1))
+            outcomes.append(outcome)
+            revisions += [revision] if revision is not None else []
+        row = waiting
+        while row < len(readings):
+            part = slice_readings(readings, row, min(row + self.past.room(), len(readings)))
+            result, revision = self._run(part)
+            results.append(result)
+            revisions += [revision] if revision is not None else []
+            row += len(result)
+        return Advance(tuple(results), tuple(outcomes), tuple(revisions))
+
+    def _rows_to_wait(self, readings: CycleReadings) -> int:
+        complete = np.flatnonzero(np.all(np.isfinite(readings.u), axis=1))
+        return int(complete[0]) if len(complete) else len(readings)
+
+    def _labs_between(self, first: int, stop: int) -> tuple[LabAtCycle, ...]:
+        return tuple(lab for lab in self._labs if first <= lab.cycle < stop)
+
+    def _run(self, readings: CycleReadings) -> tuple[CycleResults, Revision | None]:
+        first = self.state.next_cycle
+        labs = self._labs_between(first, first + len(readings))
+        before = self.state.estimator
+        self.state, results = run_cycles(self.design, self.state, readings, labs)
+        done = slice_readings(readings, 0, len(results))
+        self.past.remember(before, done, results.estimate, results.sd)
+        if results.rewind is None or results.rewind.exclusion is None:
+            return results, None
+        return results, self._go_back(max(results.rewind.exclusion.since, self.past.first_cycle))
+
+    def _go_back(self, cycle: int) -> Revision:
+        estimator, revision = self.past.run_again(cycle, self._rerun)
+        self.state = replace(self.state, estimator=estimator)
+        return revision
+
+    def _rerun(
+        self, before: EstimatorState, first: int, readings: CycleReadings
+    ) -> tuple[EstimatorState, Floats, Floats]:
+        labs = self._labs_between(first, first + len(readings))
+        after, out = rerun(self.design, before, self.state.book, first, readings, labs)
+        scale = np.array([item.interval_scale for item in self.design.model.spec.estimates])
+        return after, out.estimate, out.estimate_sd * scale
+
+    def _take(self, arrival: LabArrival, now: CycleReadings) -> tuple[LabOutcome, Revision | None]:
+        """Judge one laboratory result and, unless it cannot be right, count it where it belongs."""
+        assert self.first_time is not None
+        here = self.state.next_cycle
+        cycle = counting_cycle(arrival.sampled, self.first_time, self._sample_us)
+        if cycle < self.past.first_cycle or cycle < 0:
+            return _too_late(arrival, here, "sampled before the first cycle that is remembered"), None
+        if cycle > here:
+            return _too_late(arrival, here, "sampled after it was reported"), None
+        lab = LabAtCycle(cycle, arrival.estimate, arrival.value, self._variance(arrival, cycle))
+        predicted, sd = self._predict(lab, now)
+        innovation = arrival.value - predicted
+        possible = abs(innovation) <= IMPOSSIBLE * sd or arrival.decided
+        reason = "" if possible else self._reason(arrival, lab.variance)
+        status = "used" if possible else "left out"
+        outcome = LabOutcome(arrival, here, cycle, predicted, innovation, sd, status, reason)
+        self.state = replace(self.state, digest=self.state.digest.mix(_lab_bytes(outcome)))
+        if not possible:
+            return outcome, None
+        self._labs = sorted([*self._labs, lab], key=_order)
+        return outcome, self._go_back(cycle) if cycle < here else None
+
+    def _variance(self, arrival: LabArrival, cycle: int) -> float:
+        lab = self.design.model.spec.estimates[arrival.estimate].lab
+        sd = lab.sd if lab is not None else 0.0
+        first, _, estimate, _ = self.past.estimates()
+        course = estimate[:, arrival.estimate]
+        slope = slope_variance(
+            course, cycle - first, self.design.model.spec.sample_time, arrival.time_uncertainty
+        )
+        return sd**2 + slope
+
+    def _predict(self, lab: LabAtCycle, now: CycleReadings) -> tuple[float, float]:
+        """The prediction of a result from everything known before its cycle, and the sd of its innovation."""
+        found = self.past.state_before(lab.cycle) if lab.cycle < self.state.next_cycle else None
+        if found is None:
+            readings, first, before = now, lab.cycle, self.state.estimator
+        else:
+            first, before = found
+            readings = self.past.readings_between(first, lab.cycle + 1)
+        labs = (*self._labs_between(first, lab.cycle + 1), lab)
+        _, out = rerun(self.design, before, self.state.book, first, readings, tuple(sorted(labs, key=_order)))
+        at = sorted(labs, key=_order).index(lab)
+        return float(out.lab_predicted[at]), float(out.lab_sd[at])
+
+    def _reason(self, arrival: LabArrival, variance: float) -> str:
+        _, times, estimate, sd = self.past.estimates()
+        e = arrival.estimate
+        return likely_reason(arrival.value, variance**0.5, arrival.sampled, times, estimate[:, e], sd[:, e])
+
+
+def _order(lab: LabAtCycle) -> tuple[int, int, float]:
+    return lab.cycle, lab.estimate, lab.value
+
+
+def _too_late(arrival: LabArrival, here: int, reason: str) -> LabOutcome:
+    return LabOutcome(arrival, here, -1, np.nan, np.nan, np.nan, "too late", reason)
+
+
+def _lab_bytes(outcome: LabOutcome) -> bytes:
+    whole = np.array([outcome.arrived_cycle, outcome.counted_cycle, outcome.arrival.estimate], dtype="<i8")
+    real = np.array([outcome.arrival.value, outcome.predicted, outcome.innovation, outcome.sd], dtype="<f8")
+    return outcome.status.encode() + whole.tobytes() + real.tobytes()
+
+
+def _waiting_results(design: UnitDesign, readings: CycleReadings) -> CycleResults:
+    """Cycles before every input has had a value: Bad, and nothing estimated."""
+    n, kernel = len(readings), design.kernel
+    sensors, estimates = np.full((n, kernel.n_sensors), np.nan), np.full((n, kernel.n_estimates), np.nan)
+    zeros, none = np.zeros((n, kernel.n_sensors)), np.zeros((n, kernel.n_sensors), dtype=np.int8)
+    return CycleResults(
+        -1,
+        readings.times,
+        readings.y,
+        estimates,
+        estimates,
+        np.full((n, kernel.n_estimates), 2, dtype=np.int8),
+        sensors,
+        sensors,
+        sensors,
+        none,
+        none,
+        zeros,
+        zeros,
+        np.zeros(0),
+        np.zeros(0),
+    )
+
+
+__all__ = ["CHUNK", "Advance", "UnitRun", "slice_readings"]
