@@ -32,7 +32,7 @@ from plant_models.unit_spellings import (
 EXPECTED = 'a unit such as "degC", "m3/h", "kg/h", "mol/L", "wt%", "bar(g)" or "-" for none'
 
 _LONGEST = 60
-_EXPONENT = re.compile(r"(?:\^|\*\*)?([+-]?[1-9])(?![0-9.])")
+_EXPONENT = re.compile(r"(?:\^|\*\*)?([+-]?[1-9])(?![0-9]|\.[0-9])")
 _SYMBOL = re.compile(r"[A-Za-z°%_]+")
 _SUPERSCRIPTS = str.maketrans("⁰¹²³⁴⁵⁶⁷⁸⁹⁻·µμΩ", "0123456789-.uuΩ")
 

@@ -1,0 +1,1 @@
+"""From step tests to transfer functions with confidence intervals."""

@@ -1,0 +1,1 @@
+"""Nonlinear first-principles plants to try the estimator on."""
