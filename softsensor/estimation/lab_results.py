@@ -17,7 +17,7 @@ FITS = 2.0
 SEARCH_HOURS = 12.0
 HOUR_US = 3_600_000_000
 
-LabStatus = Literal["used", "left out", "too late"]
+LabStatus = Literal["used", "waiting for a person", "left out"]
 
 
 @dataclass(frozen=True, slots=True)

@@ -23,6 +23,7 @@ from softsensor.estimation.lab_results import (
     IMPOSSIBLE,
     LabArrival,
     LabOutcome,
+    LabStatus,
     counting_cycle,
     likely_reason,
     slope_variance,
@@ -143,7 +144,7 @@ class UnitRun:
         innovation = arrival.value - predicted
         possible = abs(innovation) <= IMPOSSIBLE * sd or arrival.decided
         reason = "" if possible else self._reason(arrival, lab.variance)
-        status = "used" if possible else "left out"
+        status: LabStatus = "used" if possible else "waiting for a person"
         outcome = LabOutcome(arrival, here, cycle, predicted, innovation, sd, status, reason)
         self.state = replace(self.state, digest=self.state.digest.mix(_lab_bytes(outcome)))
         if not possible:
@@ -185,7 +186,7 @@ def _order(lab: LabAtCycle) -> tuple[int, int, float]:
 
 
 def _too_late(arrival: LabArrival, here: int, reason: str) -> LabOutcome:
-    return LabOutcome(arrival, here, -1, np.nan, np.nan, np.nan, "too late", reason)
+    return LabOutcome(arrival, here, -1, np.nan, np.nan, np.nan, "left out", reason)
 
 
 def _lab_bytes(outcome: LabOutcome) -> bytes:
