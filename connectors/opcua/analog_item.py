@@ -7,6 +7,7 @@ ASCII bytes as one number, -1 where there is none).
 from __future__ import annotations
 
 from dataclasses import dataclass
+from enum import IntEnum
 
 from asyncua import Server, ua
 
@@ -100,6 +101,31 @@ async def add_number_property(
     """A Double as a property of ``parent``, waiting for its first value; gives its node id."""
     node = await server.get_node(parent).add_property(
         ua.NodeId(identifier, index), ua.QualifiedName(name, index), 0.0, ua.VariantType.Double
+    )
+    waiting = ua.StatusCode(ua.StatusCodes.BadWaitingForInitialData)
+    await server.write_attribute_value(node.nodeid, ua.DataValue(StatusCode=waiting))
+    return node.nodeid
+
+
+async def add_enumeration(server: Server, index: int, name: str, members: type[IntEnum]) -> ua.NodeId:
+    """An enumeration data type with its members' names as EnumStrings (Part 3, 8.14); gives its node id."""
+    parent = server.get_node(ua.NodeId(ua.ObjectIds.Enumeration))
+    node = await parent.add_data_type(ua.NodeId(name, index), ua.QualifiedName(name, index))
+    await node.add_property(
+        ua.NodeId(f"{name}.EnumStrings", index),
+        ua.QualifiedName("EnumStrings", 0),
+        [ua.LocalizedText(member.name) for member in members],
+    )
+    return node.nodeid
+
+
+async def add_enumerated_variable(
+    server: Server, parent: ua.NodeId, node_id: ua.NodeId, name: str, data_type: ua.NodeId
+) -> ua.NodeId:
+    """A read-only variable of an enumeration, an Int32 on the wire, waiting for its first value."""
+    index = node_id.NamespaceIndex
+    node = await server.get_node(parent).add_variable(
+        node_id, ua.QualifiedName(name, index), 0, ua.VariantType.Int32, data_type
     )
     waiting = ua.StatusCode(ua.StatusCodes.BadWaitingForInitialData)
     await server.write_attribute_value(node.nodeid, ua.DataValue(StatusCode=waiting))

@@ -195,18 +195,20 @@ class OpcUaSource:
 
     async def _start_delivery(self, session: PlantSession) -> None:
         self._resolved, problems = await session.resolve(self._nodes)
-        if problems and self._strict and not self._connected_once:
+        strict = self._strict and not self._connected_once
+        if problems and strict:
             raise _node_error(problems)
+        self._connected_once = True
+        self._problems = problems
         values = await session.read_values(self._resolved)
         self._told = ""
         self._tell_connected(problems)
         for tag, data in values.items():
             self._deliver(tag, data)
         refused = await session.subscribe(self._resolved)
-        if refused and self._strict and not self._connected_once:
+        if refused and strict:
             raise _node_error(refused)
         self._problems = problems | refused
-        self._connected_once = True
         if refused:
             self._tell_connected(self._problems)
 
