@@ -6,6 +6,7 @@ that was put back shows them twice, or the clock that was put forward never show
 
 from __future__ import annotations
 
+import contextlib
 from datetime import UTC, datetime, timedelta
 from zoneinfo import ZoneInfo
 
@@ -20,7 +21,7 @@ from connectors.table import Column, Origin, Table
 EXPECTED = "expected a time such as 2026-01-31T14:00:00Z or 2026-01-31T15:00:00+01:00"
 _EPOCH = datetime(1970, 1, 1)
 _ONE = timedelta(microseconds=1)
-_EMPTY = np.iinfo(np.int64).min
+_BEYOND_MICROSECONDS = r"(:\d\d\.\d{6})\d+"
 
 
 def time_zone(name: str | None, origin: Origin) -> ZoneInfo | None:
@@ -77,13 +78,10 @@ def _microseconds(table: Table, name: str, column: Column) -> NDArray[np.int64]:
 
 def _from_text(table: Table, name: str, column: Column, zone: ZoneInfo | None) -> NDArray[np.int64]:
     """Whole columns of one form go through Arrow; anything else cell by cell, which also finds the fault."""
-    for kind in (pa.timestamp("us", tz="UTC"), pa.timestamp("us")):
-        try:
-            times = pc.cast(column, kind)
-        except pa.ArrowInvalid:
-            continue
-        numbers = _microseconds(table, name, times)
-        return numbers if kind.tz else _local(table, name, numbers, zone)
+    times = _as_one_form(column)
+    if times is not None:
+        whole = _microseconds(table, name, times)
+        return whole if times.type.tz else _local(table, name, whole, zone)
     numbers = np.empty(table.rows, dtype=np.int64)
     local = np.zeros(table.rows, dtype=np.bool_)
     for row, cell in enumerate(column.to_pylist()):
@@ -95,6 +93,16 @@ def _from_text(table: Table, name: str, column: Column, zone: ZoneInfo | None) -
     if local.any():
         numbers[local] = _local(table, name, numbers[local], zone, np.flatnonzero(local))
     return numbers
+
+
+def _as_one_form(column: Column) -> Column | None:
+    """The column as timestamps, where all its cells are of one form that Arrow knows."""
+    for shorten in (False, True):
+        text = pc.replace_substring_regex(column, _BEYOND_MICROSECONDS, r"\1") if shorten else column
+        for kind in (pa.timestamp("us", tz="UTC"), pa.timestamp("us")):
+            with contextlib.suppress(pa.ArrowInvalid):
+                return pc.cast(text, kind)
+    return None
 
 
 def _parsed(table: Table, name: str, row: int, cell: str) -> datetime:

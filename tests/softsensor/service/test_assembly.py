@@ -182,6 +182,14 @@ def test_live_a_late_input_value_is_held_where_the_newest_is_bad() -> None:
     assert seen.u_quality[0, 0] == CycleQuality.BAD
 
 
+def test_live_a_late_input_value_does_not_replace_a_newer_one() -> None:
+    live = LiveAssembly(unit())
+    live.accept(reading("FI1", 11.5, 9.0))
+    live.readings_at(10 * SECOND)
+    live.accept(reading("FI1", 11.8, 8.0))
+    assert live.readings_at(20 * SECOND).u[0, 0] == 11.5
+
+
 def test_live_of_two_values_of_one_time_the_later_arrival_counts() -> None:
     live = LiveAssembly(unit())
     live.accept(reading("TI1", 92.1, 4.0))
