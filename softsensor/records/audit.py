@@ -31,6 +31,8 @@ from softsensor.records.tables import audit_trail, schema_info
 NO_HASH = "0" * 64
 PROGRAM = "softsensor"
 """The actor of what the program does by itself."""
+PAGE = 1000
+"""Entries read at a time."""
 
 Json = Mapping[str, Any]
 
@@ -150,11 +152,12 @@ def append(connection: Connection, entry: Entry) -> int:
 
 
 def _stored(connection: Connection) -> Iterator[StoredEntry]:
-    rows = connection.execution_options(yield_per=1000).execute(
-        select(audit_trail).order_by(audit_trail.c.sequence)
-    )
-    for row in rows:
-        yield StoredEntry(**row._mapping)
+    query = select(audit_trail).order_by(audit_trail.c.sequence).limit(PAGE)
+    rows = connection.execute(query).all()
+    while rows:
+        for row in rows:
+            yield StoredEntry(**row._mapping)
+        rows = connection.execute(query.where(audit_trail.c.sequence > rows[-1].sequence)).all()
 
 
 def _guarded(connection: Connection) -> bool:

@@ -148,7 +148,7 @@ rollups = Table(
 flags = Table(
     "flags",
     metadata,
-    Column("id", String(36), primary_key=True),
+    Column("id", Text, primary_key=True),
     Column("unit_id", BigInteger, ForeignKey("units.id"), nullable=False),
     Column("tag", Text, nullable=False),
     Column("kind", Text, nullable=False),
@@ -176,7 +176,7 @@ flag_comments = Table(
     "flag_comments",
     metadata,
     Column("id", Identity, primary_key=True, autoincrement=True),
-    Column("flag_id", String(36), ForeignKey("flags.id"), nullable=False, index=True),
+    Column("flag_id", Text, ForeignKey("flags.id"), nullable=False, index=True),
     Column("time_us", BigInteger, nullable=False),
     Column("actor", Text, nullable=False),
     Column("text", Text, nullable=False),

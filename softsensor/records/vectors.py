@@ -21,7 +21,7 @@ def pack(array: NDArray[np.float64] | NDArray[np.int8] | NDArray[np.uint8]) -> b
     >>> pack(np.array([1.0, -0.0])).hex()
     '000000000000f03f0000000000000080'
     """
-    if array.dtype == np.float64:
+    if array.dtype.newbyteorder("=") == np.float64:
         return array.astype("<f8", copy=False).tobytes()
     if array.dtype in (np.int8, np.uint8):
         return array.tobytes()
