@@ -6,7 +6,7 @@ from collections.abc import Iterable
 from dataclasses import dataclass
 
 from plant_models.model_tables import FaultList, Table
-from plant_models.quoting import nearest, quoted, suggestion
+from plant_models.quoting import nearest, printable, quoted, suggestion
 from plant_models.toml_lines import Place
 
 _ARTICLE = {
@@ -39,6 +39,8 @@ class Path:
     source: str
     target: str
     place: Place
+    certain: bool = True
+    """Whether both ends are as written."""
     from_disturbance_at: str | None = None
     """The input where a disturbance enters: the path is not in the file but follows from at_input."""
 
@@ -105,7 +107,8 @@ def _check_ends(entries: list[Entry], tables: list[Table], faults: FaultList) ->
     for table in tables:
         source = _end(table, "from", sources, "an input's tag or a disturbance's name", entries, faults)
         target = _end(table, "to", targets, "a sensor's or an estimate's tag", entries, faults)
-        found.append(Path(source, target, table.place))
+        as_written = (source, target) == (table.values.get("from"), table.values.get("to"))
+        found.append(Path(source, target, table.place, as_written))
     return found
 
 
@@ -133,7 +136,7 @@ def _entering_at_inputs(entries: list[Entry], paths: list[Path]) -> list[Path]:
     """The paths that follow from at_input: from the disturbance to wherever that input leads."""
     inputs = {entry.name for entry in entries if entry.section == "input"}
     return [
-        Path(entry.name, path.target, (*entry.place, "at_input"), from_disturbance_at=entry.at_input)
+        Path(entry.name, path.target, (*entry.place, "at_input"), path.certain, entry.at_input)
         for entry in entries
         if entry.at_input in inputs
         for path in paths
@@ -145,28 +148,26 @@ def _check_one_path_each(paths: list[Path], faults: FaultList) -> None:
     first: dict[tuple[str, str], Path] = {}
     for path in sorted(paths, key=lambda path: path.from_disturbance_at is not None):
         pair = (path.source, path.target)
-        if not all(pair):
+        if not path.certain:
             continue
-        if pair not in first:
-            first[pair] = path
-        elif path.from_disturbance_at is None:
-            message = f"expected one path from {path.source} to {path.target}"
-            faults.add(path.place, "to", f"{message}; the first is in line {faults.line(first[pair].place)}")
-        elif first[pair].from_disturbance_at is None:
-            faults.add(
-                first[pair].place,
-                "to",
-                f"expected one path from {path.source} to {path.target}; another follows from at_input = "
-                f"{quoted(path.from_disturbance_at)} in line {faults.line(path.place)}",
-            )
+        message = f"expected one path from {printable(path.source)} to {printable(path.target)}"
+        known = first.setdefault(pair, path)
+        if known is path:
+            continue
+        if path.from_disturbance_at is None:
+            message = f"{message}; the first is in line {faults.line(known.place)}"
+            faults.add((*path.place, "to"), "to", message)
+        elif known.from_disturbance_at is None:
+            at = f"at_input = {quoted(path.from_disturbance_at)} in line {faults.line(path.place)}"
+            faults.add((*known.place, "to"), "to", f"{message}; another follows from {at}")
 
 
 def _check_driven(entries: list[Entry], paths: list[Path], faults: FaultList) -> None:
     sources = {path.source for path in paths}
     targets = {path.target for path in paths}
     for entry in entries:
-        place = (*entry.place, entry.key)
+        place, name = (*entry.place, entry.key), printable(entry.name)
         if entry.section in ("input", "disturbance") and entry.name not in sources:
-            faults.add(place, entry.key, f"expected a transfer function from {entry.name}; it drives nothing")
+            faults.add(place, entry.key, f"expected a transfer function from {name}; it drives nothing")
         if entry.section in ("sensor", "estimate") and entry.name not in targets:
-            faults.add(place, entry.key, f"expected a transfer function to {entry.name}; nothing drives it")
+            faults.add(place, entry.key, f"expected a transfer function to {name}; nothing drives it")

@@ -148,9 +148,8 @@ def _list_of(convert: Callable[[object], float]) -> Callable[[object], tuple[flo
             try:
                 items.append(convert(item))
             except (RefusalError, UnitError) as error:
-                raise RefusalError(
-                    f"where item {place}, {quoted(item)}, is not: {error}".removesuffix(": ")
-                ) from None
+                reason = f": {error}" if str(error) else ""
+                raise RefusalError(f"where item {place} is not{reason}") from None
         return tuple(items)
 
     return converted

@@ -7,7 +7,7 @@ from typing import Any, TypeVar
 
 from plant_models.errors import Fault, UnitError
 from plant_models.model_kinds import Kind, RefusalError
-from plant_models.quoting import quoted, suggestion
+from plant_models.quoting import printable, quoted, suggestion
 from plant_models.toml_lines import Place, TomlLines
 
 T = TypeVar("T")
@@ -24,7 +24,7 @@ class FaultList:
 
     def add(self, place: Place, key: str, message: str) -> None:
         """A fault at a place, under the key that the message shall name."""
-        self._faults.append(Fault(self._file, self.line(place), _printable(key), message))
+        self._faults.append(Fault(self._file, self.line(place), printable(key), message))
 
     def line(self, place: Place) -> int:
         return self._lines.line(*place)
@@ -140,7 +140,3 @@ def unknown_sections(document: Mapping[str, Any], known: Iterable[str], faults: 
 def _several(value: object) -> str:
     is_array = isinstance(value, list) and all(isinstance(item, dict) for item in value)
     return "double brackets" if is_array else quoted(value)
-
-
-def _printable(key: str) -> str:
-    return key if key.isprintable() and len(key) <= 60 else quoted(key)

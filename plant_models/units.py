@@ -248,4 +248,4 @@ def _suggestion(text: str) -> str:
     """``; did you mean 'kPa'?`` where one spelling is near, else nothing."""
     if text in MISSPELLINGS:
         return f"; did you mean {quoted(MISSPELLINGS[text])}?"
-    return suggestion(text, _SYMBOLS)
+    return suggestion(text, _SYMBOLS, likeness=0.75)
