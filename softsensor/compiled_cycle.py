@@ -68,7 +68,9 @@ def empty_outputs(cycles: int, kernel: Kernel, labs: int) -> BlockOutputs:
 
 
 @njit(cache=True)
-def _innovate(kernel: Kernel, est: EstimatorState, base: Floats, k: int, data: BlockInputs, out: BlockOutputs, v: Floats) -> None:
+def _innovate(
+    kernel: Kernel, est: EstimatorState, base: Floats, k: int, data: BlockInputs, out: BlockOutputs, v: Floats
+) -> None:
     for i in range(kernel.n_sensors):
         variance = row_covariance(kernel, est.P, i, v) + kernel.r[i] * data.scale[k, i]
         out.predicted[k, i] = base[i] + row_mean(kernel, est.x, i)
@@ -79,7 +81,15 @@ def _innovate(kernel: Kernel, est: EstimatorState, base: Floats, k: int, data: B
 
 @njit(cache=True)
 def _correct_all(
-    kernel: Kernel, est: EstimatorState, base: Floats, k: int, data: BlockInputs, out: BlockOutputs, lab: int, v: Floats, K: Floats
+    kernel: Kernel,
+    est: EstimatorState,
+    base: Floats,
+    k: int,
+    data: BlockInputs,
+    out: BlockOutputs,
+    lab: int,
+    v: Floats,
+    K: Floats,
 ) -> int:
     """Sensors in file order, then laboratory results; returns the next result's index, or UNSOUND."""
     first = lab
@@ -111,7 +121,13 @@ def _report(kernel: Kernel, est: EstimatorState, base: Floats, k: int, out: Bloc
 
 @njit(cache=True)
 def run_block(
-    kernel: Kernel, est: EstimatorState, design: TestDesign, tests: TestState, data: BlockInputs, out: BlockOutputs, testing: bool
+    kernel: Kernel,
+    est: EstimatorState,
+    design: TestDesign,
+    tests: TestState,
+    data: BlockInputs,
+    out: BlockOutputs,
+    testing: bool,
 ) -> int:
     """Run cycles until the block ends or, while ``testing``, a test has news; returns the number run, or UNSOUND.
 

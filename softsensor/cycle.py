@@ -134,14 +134,12 @@ class CycleResults:
         return len(self.times)
 
 
-def start(design: UnitDesign) -> CycleState:
+def start(design: UnitDesign, first_cycle: int = 0) -> CycleState:
     """The state before the first cycle."""
-    return CycleState(
-        initial_state(design.model, design.kernel),
-        initial_tests(design.kernel.n_sensors, design.detection.window),
-        FlagBook(),
-        Digest(),
-    )
+    tests = initial_tests(design.kernel.n_sensors, design.detection.window)
+    tests.cycle[0] = first_cycle
+    tests.valid_from[0] = first_cycle
+    return CycleState(initial_state(design.model, design.kernel), tests, FlagBook(), Digest())
 
 
 def usable(design: UnitDesign, readings: CycleReadings) -> tuple[Floats, Floats]:
@@ -197,7 +195,9 @@ def run_cycles(
     out = empty_outputs(n, design.kernel, len(labs))
     done = run_block(design.kernel, estimator, design.detection.tests, tests, data, out, True)
     if done < 0:
-        raise UnsoundArithmetic(f"{design.model.spec.name}: an innovation's variance is not positive near cycle {first}")
+        raise UnsoundArithmetic(
+            f"{design.model.spec.name}: an innovation's variance is not positive near cycle {first}"
+        )
     outcome = FollowUp(state.book)
     if done and (np.any(out.events[done - 1]) or _looked(design, tests)):
         moment = Moment(first + done - 1, int(readings.times[done - 1]), out.events[done - 1])
@@ -235,7 +235,9 @@ def rerun(
     unused = initial_tests(design.kernel.n_sensors, 1)
     done = run_block(design.kernel, estimator, design.detection.tests, unused, data, out, False)
     if done < 0:
-        raise UnsoundArithmetic(f"{design.model.spec.name}: an innovation's variance is not positive near cycle {first}")
+        raise UnsoundArithmetic(
+            f"{design.model.spec.name}: an innovation's variance is not positive near cycle {first}"
+        )
     return estimator, out
 
 

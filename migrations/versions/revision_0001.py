@@ -161,7 +161,7 @@ def make_happenings() -> None:
     """Flags, laboratory results, and what else happened."""
     op.create_table(
         "flags",
-        sa.Column("id", sa.String(length=36), nullable=False),
+        sa.Column("id", sa.Text(), nullable=False),
         sa.Column("unit_id", sa.BigInteger(), nullable=False),
         sa.Column("tag", sa.Text(), nullable=False),
         sa.Column("kind", sa.Text(), nullable=False),
@@ -192,7 +192,7 @@ def make_happenings() -> None:
     op.create_table(
         "flag_comments",
         sa.Column("id", IDENTITY, autoincrement=True, nullable=False),
-        sa.Column("flag_id", sa.String(length=36), nullable=False),
+        sa.Column("flag_id", sa.Text(), nullable=False),
         sa.Column("time_us", sa.BigInteger(), nullable=False),
         sa.Column("actor", sa.Text(), nullable=False),
         sa.Column("text", sa.Text(), nullable=False),

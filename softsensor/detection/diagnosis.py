@@ -49,7 +49,9 @@ class Verdict(NamedTuple):
 
 
 @njit(cache=True)
-def _recent(ring: Floats, newest: int, whitening: Floats, use: Ints, count: int, out: Floats, whole: Ints) -> None:
+def _recent(
+    ring: Floats, newest: int, whitening: Floats, use: Ints, count: int, out: Floats, whole: Ints
+) -> None:
     """The last ``count`` innovations, newest last, whitened; whole[k] = 0 where a reading in use was missing."""
     window, m = ring.shape
     for k in range(count):

@@ -120,7 +120,10 @@ def _simple_faults(
         if bits & bit and outcome.book.find(tag, (kind,)) is None:
             onset = moment.time - ago * design.sample_us
             outcome = _opened(outcome, _certain(design, tag, kind, onset, moment))
-    ends: tuple[tuple[int, Kind], ...] = ((fault_tests.LOST_ENDED, "lost"), (fault_tests.STUCK_ENDED, "stuck"))
+    ends: tuple[tuple[int, Kind], ...] = (
+        (fault_tests.LOST_ENDED, "lost"),
+        (fault_tests.STUCK_ENDED, "stuck"),
+    )
     for bit, kind in ends:
         flag = outcome.book.find(tag, (kind,))
         if bits & bit and flag is not None:
@@ -148,10 +151,7 @@ def _clear_shifts(design: DetectionDesign, outcome: FollowUp, tests: TestState, 
 
 def _in_use(design: DetectionDesign, book: FlagBook, tests: TestState, cycle: int) -> Ints:
     return np.array(
-        [
-            int(not book.excluded(i, cycle) and tests.lost[i] == 0)
-            for i in range(design.kernel.n_sensors)
-        ],
+        [int(not book.excluded(i, cycle) and tests.lost[i] == 0) for i in range(design.kernel.n_sensors)],
         dtype=np.int64,
     )
 
@@ -164,7 +164,8 @@ def _diagnose(design: DetectionDesign, outcome: FollowUp, tests: TestState, mome
     if not up:
         return replace(outcome, book=replace(book, episode=None))
     explained = any(
-        flag.kind in SHIFT_KINDS and not _is_left_out(design, book, flag.tag, moment.cycle) for flag in book.open
+        flag.kind in SHIFT_KINDS and not _is_left_out(design, book, flag.tag, moment.cycle)
+        for flag in book.open
     )
     if explained:
         return outcome
@@ -188,9 +189,7 @@ def look(design: DetectionDesign, tests: TestState, use: Ints) -> tuple[Verdict,
     return judge(design.suspects, found), found
 
 
-def _act(
-    design: DetectionDesign, outcome: FollowUp, tests: TestState, moment: Moment, use: Ints
-) -> FollowUp:
+def _act(design: DetectionDesign, outcome: FollowUp, tests: TestState, moment: Moment, use: Ints) -> FollowUp:
     verdict, found = look(design, tests, use)
     episode = outcome.book.episode
     waited = moment.cycle - episode.since if episode is not None else 0

@@ -228,7 +228,12 @@ def _signal(model: PlantModel, kernel: Kernel, hypothesis: Hypothesis, window: i
 
 
 def signatures(
-    model: PlantModel, kernel: Kernel, suspects: tuple[Hypothesis, ...], steady: SteadyFilter, use: Ints, window: int
+    model: PlantModel,
+    kernel: Kernel,
+    suspects: tuple[Hypothesis, ...],
+    steady: SteadyFilter,
+    use: Ints,
+    window: int,
 ) -> Floats:
     """Whitened signatures of unit size, shape (hypotheses, window, n_sensors)."""
     out = np.zeros((len(suspects), window, kernel.n_sensors))

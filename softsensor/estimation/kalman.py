@@ -38,7 +38,9 @@ def row_covariance(kernel: Kernel, P: Floats, row: int, v: Floats) -> float:
 
 
 @njit(cache=True)
-def correct(kernel: Kernel, x: Floats, P: Floats, row: int, deviation: float, r: float, v: Floats, K: Floats) -> bool:
+def correct(
+    kernel: Kernel, x: Floats, P: Floats, row: int, deviation: float, r: float, v: Floats, K: Floats
+) -> bool:
     """One scalar correction with the reading ``deviation`` (from the input-driven part) of variance ``r``.
 
     K = v / s, v = P c', s = c P c' + r;  P+ = (I - K c) P (I - K c)' + K r K'.  False where s is not positive.

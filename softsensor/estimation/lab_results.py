@@ -24,7 +24,8 @@ LabStatus = Literal["used", "waiting for a person", "left out"]
 class LabArrival:
     """One result as it arrives; times in UTC microseconds, time_uncertainty in seconds (one standard deviation).
 
-    ``decided``: a person has decided that it is to be used although it was left out.
+    ``decided_at`` is set where a person has since decided that it is to be used although it was left out: it arrives
+    once more, at that time.
     """
 
     estimate: int
@@ -33,7 +34,12 @@ class LabArrival:
     reported: int
     value: float
     time_uncertainty: float = 0.0
-    decided: bool = False
+    decided_at: int | None = None
+
+    @property
+    def arrived(self) -> int:
+        """When it arrives: once reported, or once decided."""
+        return self.reported if self.decided_at is None else self.decided_at
 
 
 @dataclass(frozen=True, slots=True)

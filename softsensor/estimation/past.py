@@ -74,9 +74,7 @@ class Past:
         """Cycles that fit before the next state has to be remembered."""
         return CHUNK - self.next_cycle % CHUNK
 
-    def remember(
-        self, before: EstimatorState, readings: CycleReadings, estimate: Floats, sd: Floats
-    ) -> None:
+    def remember(self, before: EstimatorState, readings: CycleReadings, estimate: Floats, sd: Floats) -> None:
         """Add cycles that have been run; they must fit in :meth:`room`."""
         number, row = divmod(self.next_cycle, CHUNK)
         count = len(readings)
@@ -96,7 +94,9 @@ class Past:
             chunk.filled = row + count
         self.next_cycle += count
 
-    def restore(self, cycle: int, state: EstimatorState, readings: CycleReadings, estimate: Floats, sd: Floats) -> None:
+    def restore(
+        self, cycle: int, state: EstimatorState, readings: CycleReadings, estimate: Floats, sd: Floats
+    ) -> None:
         """Put back a chunk from the records: the state before ``cycle`` (a multiple of CHUNK) and what followed."""
         self.next_cycle = cycle
         self.remember(state, readings, estimate, sd)
@@ -159,6 +159,10 @@ def _empty_chunk(before: EstimatorState, like: CycleReadings, n_estimates: int) 
         return np.zeros((CHUNK, *array.shape[1:]), dtype=array.dtype)
 
     readings = CycleReadings(
-        rows(like.times), rows(like.u), rows(like.u_quality), rows(like.y), rows(like.y_quality)  # type: ignore[arg-type]
+        rows(like.times),
+        rows(like.u),
+        rows(like.u_quality),
+        rows(like.y),
+        rows(like.y_quality),  # type: ignore[arg-type]
     )
     return Chunk(before, readings, np.zeros((CHUNK, n_estimates)), np.zeros((CHUNK, n_estimates)))

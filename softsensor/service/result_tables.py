@@ -49,7 +49,10 @@ def reasons(design: UnitDesign, readings: CycleReadings, results: CycleResults) 
         shared = _shared_reasons(design, readings, results, int(k))
         for e, item in enumerate(spec.estimates):
             own = []
-            if item.validated_range is not None and outside(results.estimate[k : k + 1, e], item.validated_range)[0]:
+            if (
+                item.validated_range is not None
+                and outside(results.estimate[k : k + 1, e], item.validated_range)[0]
+            ):
                 own = [f"{item.tag} is outside its validated range"]
             out[k, e] = "; ".join(shared + own)
     return out

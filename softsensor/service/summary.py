@@ -65,9 +65,7 @@ class RunSummary:
             "digest": digest,
             "model_digest": self._design.model.digest,
             "sensors": {tag: self._sensor(i, tag) for i, tag in enumerate(self._design.model.sensor_tags)},
-            "estimates": {
-                tag: self._estimate(e) for e, tag in enumerate(self._design.model.estimate_tags)
-            },
+            "estimates": {tag: self._estimate(e) for e, tag in enumerate(self._design.model.estimate_tags)},
             "flags": len(self.flags),
             "notes": [note.text for note in self.notes],
             "caution": "Advisory only: not a safety function and no basis for defeating one.",
@@ -93,13 +91,8 @@ class RunSummary:
         inside = [abs(lab.innovation) <= NORMAL_95 * lab.sd for lab in used]
         return {
             "lab_count": len(used),
-            "lab_left_out": sum(
-                lab.arrival.estimate == e and lab.status != "used" for lab in self.labs
-            ),
+            "lab_left_out": sum(lab.arrival.estimate == e and lab.status != "used" for lab in self.labs),
             "rmsep": float(np.sqrt(np.mean(errors**2))) if used else None,
             "bias": float(np.mean(errors)) if used else None,
             "coverage": float(np.mean(inside)) if used else None,
         }
-
-
-

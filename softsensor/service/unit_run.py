@@ -53,7 +53,11 @@ def slice_readings(readings: CycleReadings, start: int, stop: int) -> CycleReadi
 
 
 class UnitRun:
-    """A unit under way. ``state`` and ``past`` may come from the records; ``labs`` are the results already counted."""
+    """A unit under way.
+
+    ``state`` and ``past`` may come from the records; ``labs`` are the results already counted; ``first_time`` is the
+    time of cycle 0, counted back from the first cycle run where that has another number.
+    """
 
     def __init__(
         self,
@@ -72,7 +76,7 @@ class UnitRun:
 
     @property
     def started(self) -> bool:
-        """Has every input had a value, so that cycle 0 has run?"""
+        """Has every input had a value, so that the first cycle has run?"""
         return self.first_time is not None
 
     def advance(self, readings: CycleReadings, arrivals: Iterable[LabArrival] = ()) -> Advance:
@@ -83,7 +87,7 @@ class UnitRun:
             early = [_too_late(item, -1, "before the first cycle") for item in arrivals]
             return Advance(tuple(results), tuple(early))
         if self.first_time is None:
-            self.first_time = int(readings.times[waiting])
+            self.first_time = int(readings.times[waiting]) - self.state.next_cycle * self._sample_us
         outcomes: list[LabOutcome] = []
         revisions: list[Revision] = []
         for arrival in sorted(arrivals, key=lambda item: (item.sampled, item.reported, item.tag, item.value)):
@@ -98,6 +102,11 @@ class UnitRun:
             revisions += [revision] if revision is not None else []
             row += len(result)
         return Advance(tuple(results), tuple(outcomes), tuple(revisions))
+
+    @property
+    def labs(self) -> tuple[LabAtCycle, ...]:
+        """The laboratory results counted so far that can still be gone back to."""
+        return tuple(lab for lab in self._labs if lab.cycle >= self.past.first_cycle)
 
     def _rows_to_wait(self, readings: CycleReadings) -> int:
         complete = np.flatnonzero(np.all(np.isfinite(readings.u), axis=1))
@@ -142,7 +151,7 @@ class UnitRun:
         lab = LabAtCycle(cycle, arrival.estimate, arrival.value, self._variance(arrival, cycle))
         predicted, sd = self._predict(lab, now)
         innovation = arrival.value - predicted
-        possible = abs(innovation) <= IMPOSSIBLE * sd or arrival.decided
+        possible = abs(innovation) <= IMPOSSIBLE * sd or arrival.decided_at is not None
         reason = "" if possible else self._reason(arrival, lab.variance)
         status: LabStatus = "used" if possible else "waiting for a person"
         outcome = LabOutcome(arrival, here, cycle, predicted, innovation, sd, status, reason)

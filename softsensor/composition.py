@@ -1,0 +1,237 @@
+"""The one place below the command line that knows concrete connectors: a site file becomes a running service."""
+
+from __future__ import annotations
+
+import asyncio
+import contextlib
+import socket
+from collections.abc import AsyncIterator, Iterator, Mapping
+from contextlib import AsyncExitStack, asynccontextmanager
+from dataclasses import dataclass
+
+import uvicorn
+
+from connectors.opcua.analog_item import EngineeringUnit
+from connectors.opcua.publisher import DeviceHealth, PublishedEstimate, PublishedUnit, Publisher
+from connectors.opcua.settings import OpcUaSettings
+from connectors.opcua.source import OpcUaSource
+from plant_models.building import build_plant_model
+from plant_models.errors import Problem
+from plant_models.model_file import read_model_file
+from plant_models.plant_model import PlantModel
+from plant_models.units import engineering_units
+from softsensor.alarms.sensor_status import sensor_health
+from softsensor.errors import SiteFileError
+from softsensor.records.engine import Database, open_database
+from softsensor.records.named_arrays import pack_arrays
+from softsensor.records.plant import Deed, Revision, register_revision, register_unit, set_revision_state
+from softsensor.records.writer import RecordsWriter
+from softsensor.service.clock import Clock, ScaledClock, SystemClock
+from softsensor.service.live import LiveService
+from softsensor.service.recording import Step
+from softsensor.service.result_tables import NORMAL_95
+from softsensor.service.site_file import SiteSettings, UnitSettings
+from softsensor.service.unit_service import UnitIdentity, UnitService
+from softsensor.unit_design import design_unit
+from softsensor.web.app import create_app
+
+PROGRAM = "softsensor"
+STATUS_CODES = (0x00000000, 0x40950000, 0x80310000)
+"""OPC UA codes of Good, Uncertain (UncertainSubNormal) and Bad (BadNoCommunication)."""
+
+
+@dataclass(frozen=True)
+class Site:
+    """A site that is up: its service, and the page's address where there is one."""
+
+    service: LiveService
+    page: str | None
+    database: Database
+
+
+def site_clock(settings: SiteSettings) -> Clock:
+    """The wall's clock, or the one that the site file describes."""
+    if settings.clock is None:
+        return SystemClock()
+    return ScaledClock(settings.clock.plant_start, settings.clock.wall_start, settings.clock.speed)
+
+
+def read_models(settings: SiteSettings) -> list[PlantModel]:
+    """Every unit's model, with its tags compared with the site's nodes.
+
+    :raises Problem: all faults of all files.
+    """
+    models, lines = [], []
+    for unit in settings.units:
+        try:
+            model = build_plant_model(read_model_file(unit.model))
+        except Problem as problem:
+            lines += problem.lines
+            continue
+        lines += _node_faults(settings, unit, model)
+        models.append(model)
+    names = [model.spec.name for model in models]
+    lines += [f"{settings.path}: unit {name} appears twice" for name in {n for n in names if names.count(n) > 1}]
+    if lines:
+        raise SiteFileError(*lines)
+    return models
+
+
+def _node_faults(settings: SiteSettings, unit: UnitSettings, model: PlantModel) -> Iterator[str]:
+    needed = {*model.input_tags, *model.sensor_tags}
+    labs = {item.lab.tag for item in model.spec.estimates if item.lab is not None}
+    for tag in sorted(needed - set(unit.nodes)):
+        yield f"{settings.path}: nodes: {tag} of {unit.model.name} has none; expected a node id for it"
+    for tag in sorted(set(unit.nodes) - needed - labs):
+        yield f"{settings.path}: nodes: {tag} is no input, sensor or laboratory tag of {unit.model.name}"
+
+
+def _source(settings: SiteSettings, models: list[PlantModel]) -> tuple[OpcUaSource, dict[str, tuple[str, str]]]:
+    plant = settings.plant
+    opcua = OpcUaSettings(
+        plant.endpoint,
+        "Basic256Sha256" if plant.security_policy == "Basic256Sha256" else "None",
+        plant.user,
+        plant.password,
+        plant.pki,
+        plant.allow_unencrypted,
+        plant.publishing_interval,
+        0.0 if settings.clock is not None else None,
+    )
+    nodes, routes = {}, {}
+    for unit, model in zip(settings.units, models, strict=True):
+        for tag, node in unit.nodes.items():
+            key = f"{model.spec.name} {tag}"
+            nodes[key] = node
+            routes[key] = (model.spec.name, tag)
+    return OpcUaSource(opcua, nodes), routes
+
+
+def register(database: Database, model: PlantModel, clock: Clock) -> UnitIdentity:
+    """The unit and this revision of its model on record and in service, audited."""
+    spec, now = model.spec, clock.now()
+    part = model.stochastic
+    arrays = {"A": part.A, "q": part.q, "C": part.C, "P0": part.P0}
+    for number, path in enumerate(model.paths):
+        arrays |= {f"path{number}.phi": path.phi, f"path{number}.gamma_recent": path.gamma_recent}
+        arrays |= {f"path{number}.gamma_older": path.gamma_older, f"path{number}.c": path.c}
+    deed = Deed(PROGRAM, "started with this model file", now)
+    with database.write() as connection:
+        unit_id = register_unit(connection, spec.name, spec.title, now)
+        revision = Revision(model.digest, spec.source_text, pack_arrays(arrays))
+        revision_id = register_revision(connection, unit_id, revision, deed)
+        set_revision_state(connection, revision_id, "in service", deed)
+    return UnitIdentity(unit_id, revision_id)
+
+
+class OpcUaSink:
+    """Publishes each cycle on our own OPC UA server."""
+
+    def __init__(self, publisher: Publisher) -> None:
+        self._publisher = publisher
+
+    async def publish(self, unit: UnitService, step: Step) -> None:
+        results, now = step.results, int(step.results.times[0])
+        for e, tag in enumerate(unit.model.estimate_tags):
+            value, sd = float(results.estimate[0, e]), float(results.sd[0, e])
+            await self._publisher.publish_estimate(
+                unit.name,
+                tag,
+                value,
+                sd,
+                value - NORMAL_95 * sd,
+                value + NORMAL_95 * sd,
+                now,
+                STATUS_CODES[int(results.status[0, e])],
+            )
+        for tag in unit.model.sensor_tags:
+            health = DeviceHealth(sensor_health(unit.run.state.book, tag).code)
+            await self._publisher.publish_sensor_health(unit.name, tag, health, now)
+
+
+def published_units(models: list[PlantModel]) -> list[PublishedUnit]:
+    """What our own server shows."""
+    return [
+        PublishedUnit(
+            model.spec.name,
+            tuple(
+                PublishedEstimate(item.tag, _engineering_unit(item.unit), item.range)
+                for item in model.spec.estimates
+            ),
+            model.sensor_tags,
+        )
+        for model in models
+    ]
+
+
+def _engineering_unit(text: str) -> EngineeringUnit:
+    units = engineering_units(text)
+    return EngineeringUnit(units.display_name, units.unit_id)
+
+
+class _PageServer(uvicorn.Server):
+    """The web server on our own loop: signals stay with the program."""
+
+    @contextlib.contextmanager
+    def capture_signals(self) -> Iterator[None]:
+        yield
+
+
+def _listening(address: tuple[str, int]) -> socket.socket:
+    family = socket.AF_INET6 if ":" in address[0] else socket.AF_INET
+    listener = socket.socket(family, socket.SOCK_STREAM)
+    try:
+        listener.setsockopt(socket.SOL_SOCKET, socket.SO_REUSEADDR, 1)
+        listener.bind(address)
+    except OSError as error:
+        listener.close()
+        raise SiteFileError(f"web: address {address[0]}:{address[1]} cannot be had: {error.strerror or error}") from None
+    return listener
+
+
+@asynccontextmanager
+async def _page(database: Database, service: LiveService, address: tuple[str, int] | None) -> AsyncIterator[str | None]:
+    if address is None:
+        yield None
+        return
+    listener = _listening(address)
+    app = create_app(database, service.feed)
+    config = uvicorn.Config(app, log_level="warning", access_log=False, lifespan="off", timeout_graceful_shutdown=1)
+    server = _PageServer(config)
+    task = asyncio.create_task(server.serve(sockets=[listener]), name="web page")
+    host, port = listener.getsockname()[:2]
+    try:
+        yield f"http://{f'[{host}]' if ':' in host else host}:{port}"
+    finally:
+        server.should_exit = True
+        await task
+        listener.close()
+
+
+@asynccontextmanager
+async def running_site(settings: SiteSettings, environment: Mapping[str, str] | None = None) -> AsyncIterator[Site]:
+    """Everything of a site up and checked; the caller then awaits ``site.service.serve()``.
+
+    :raises Problem: whatever keeps the site from starting, in lines.
+    """
+    models = read_models(settings)
+    clock = site_clock(settings)
+    async with AsyncExitStack() as stack:
+        database = stack.enter_context(open_database(settings.database, clock.now))
+        source, routes = _source(settings, models)
+        await source.probe()
+        designs = [await asyncio.to_thread(design_unit, model) for model in models]
+        identities = [register(database, model, clock) for model in models]
+        writer = stack.enter_context(RecordsWriter(database))
+        units = [
+            UnitService(design, identity, database, writer)
+            for design, identity in zip(designs, identities, strict=True)
+        ]
+        sinks = []
+        if settings.publish is not None:
+            publisher = await stack.enter_async_context(Publisher(settings.publish, published_units(models)))
+            sinks.append(OpcUaSink(publisher))
+        await stack.enter_async_context(source)
+        service = LiveService(units, source, routes, clock, writer, sinks)
+        page = await stack.enter_async_context(_page(database, service, settings.web))
+        yield Site(service, page, database)

@@ -1,0 +1,149 @@
+"""What a unit's run brings, put on record: which tables a stretch of cycles touches, in one transaction."""
+
+from __future__ import annotations
+
+import json
+from dataclasses import dataclass
+
+import numpy as np
+from sqlalchemy import Connection
+
+from plant_models.plant_model import PlantModel
+from softsensor.cycle import CycleResults, UnitDesign
+from softsensor.detection.flags import Flag, Note
+from softsensor.estimation.lab_results import LabArrival, LabOutcome
+from softsensor.estimation.past import Revision
+from softsensor.readings_of_cycle import CycleReadings
+from softsensor.records import blocks, happenings, storing
+from softsensor.service.checkpoints import FORMAT, pack_estimator
+from softsensor.service.result_tables import reasons
+
+
+@dataclass(frozen=True)
+class Step:
+    """One cycle's outcome on its way to the records."""
+
+    readings: CycleReadings
+    results: CycleResults
+    digest: bytes
+    labs: tuple[LabOutcome, ...]
+    revisions: tuple[Revision, ...]
+    checkpoint: bytes | None
+    """The state before the coming cycle, where it is to be kept."""
+
+
+def pack_decisions(arrivals: list[LabArrival]) -> bytes:
+    """What was decided before a cycle ran besides its readings: the laboratory results that arrived; empty for none."""
+    if not arrivals:
+        return b""
+    rows = [
+        [a.estimate, a.tag, a.sampled, a.reported, a.value.hex(), a.time_uncertainty, a.decided_at]
+        for a in arrivals
+    ]
+    return json.dumps({"laboratory": rows}, separators=(",", ":")).encode()
+
+
+def unpack_decisions(blob: bytes) -> list[LabArrival]:
+    """The laboratory results that arrived before a recorded cycle."""
+    if not blob:
+        return []
+    return [
+        LabArrival(e, tag, sampled, reported, float.fromhex(value), uncertainty, decided)
+        for e, tag, sampled, reported, value, uncertainty, decided in json.loads(blob)["laboratory"]
+    ]
+
+
+def results_block(design: UnitDesign, step: Step) -> blocks.ResultsBlock:
+    """One cycle's results as the records keep them."""
+    results = step.results
+    texts = reasons(design, step.readings, results)
+    return blocks.ResultsBlock(
+        results.first,
+        results.estimate,
+        results.sd,
+        results.status,
+        results.predicted,
+        results.innovation,
+        results.innovation_sd,
+        results.used,
+        np.concatenate([results.high, results.low], axis=1),
+        tuple(_joined(design.model, row) for row in texts),
+        (step.digest,),
+    )
+
+
+def _joined(model: PlantModel, row: np.ndarray) -> str:
+    named = {tag: text for tag, text in zip(model.estimate_tags, row, strict=True) if text}
+    return json.dumps(named, ensure_ascii=False) if named else ""
+
+
+def write_step(connection: Connection, unit_id: int, design: UnitDesign, step: Step) -> None:
+    """Results, flags, laboratory outcomes, revised estimates and states of one cycle; may be repeated."""
+    storing.store_results(connection, unit_id, results_block(design, step))
+    cycle = step.results.first
+    for flag in step.results.flags:
+        _write_flag(connection, unit_id, flag)
+    for number, note in enumerate(step.results.notes):
+        _write_note(connection, unit_id, note, f"{unit_id} {cycle} {number} {note.kind}")
+    for outcome in step.labs:
+        _write_lab(connection, unit_id, outcome)
+    for revision in step.revisions:
+        _write_revision(connection, unit_id, revision, cycle)
+    if step.checkpoint is not None:
+        storing.store_checkpoint(connection, unit_id, blocks.Checkpoint(cycle + 1, FORMAT, step.checkpoint))
+
+
+def _write_flag(connection: Connection, unit_id: int, flag: Flag) -> None:
+    if flag.cleared is not None:
+        happenings.clear_flag(connection, flag.flag, flag.cleared, "its test has come down")
+        return
+    row = happenings.Flag(
+        flag.flag,
+        flag.tag,
+        flag.kind,
+        flag.onset,
+        flag.detected,
+        flag.size,
+        flag.size_sd,
+        flag.probability,
+        flag.group,
+    )
+    happenings.open_flag(connection, unit_id, row)
+
+
+def _write_note(connection: Connection, unit_id: int, note: Note, key: str) -> None:
+    event = happenings.Event(unit_id, note.time, note.kind, note.text, key=key)
+    happenings.record_event(connection, event)
+
+
+def _write_lab(connection: Connection, unit_id: int, outcome: LabOutcome) -> None:
+    arrival = outcome.arrival
+    result = happenings.LabResult(
+        arrival.tag, arrival.sampled, arrival.reported, arrival.value, arrival.time_uncertainty
+    )
+    lab_id = happenings.store_lab(connection, unit_id, result)
+    used = outcome.status == "used"
+    happenings.settle_lab(
+        connection,
+        lab_id,
+        happenings.LabOutcome(
+            outcome.status,
+            outcome.reason,
+            outcome.arrived_cycle if outcome.arrived_cycle >= 0 else None,
+            outcome.counted_cycle if used else None,
+            outcome.predicted,
+            outcome.innovation,
+            outcome.sd,
+        ),
+    )
+
+
+def _write_revision(connection: Connection, unit_id: int, revision: Revision, cycle: int) -> None:
+    if len(revision.estimate):
+        storing.store_revised(
+            connection,
+            unit_id,
+            blocks.RevisedEstimates(revision.first, cycle, revision.estimate, revision.sd),
+        )
+    for at, state in revision.states:
+        storing.store_checkpoint(connection, unit_id, blocks.Checkpoint(at, FORMAT, pack_estimator(state)))

@@ -1,0 +1,199 @@
+"""One unit in service: readings in, cycles on the grid, everything on record, news to whoever is looking."""
+
+from __future__ import annotations
+
+import asyncio
+from dataclasses import dataclass, replace
+
+import numpy as np
+
+from connectors.readings import Quality, Reading
+from plant_models.plant_model import PlantModel
+from softsensor.cycle import UnitDesign
+from softsensor.estimation.lab_results import LabArrival
+from softsensor.estimation.past import CHUNK
+from softsensor.readings_of_cycle import CycleReadings
+from softsensor.records import blocks, storing
+from softsensor.records.engine import Database
+from softsensor.records.reader import lab_results_of
+from softsensor.records.writer import RecordsWriter
+from softsensor.service.assembly import AssemblyState, LiveAssembly
+from softsensor.service.checkpoints import FORMAT, Context, pack_state
+from softsensor.service.reading_rules import TagState
+from softsensor.service.recording import Step, pack_decisions, write_step
+from softsensor.service.replay import LEAST_HORIZON_S
+from softsensor.service.resuming import LastSeen, fresh_run, last_seen, recorded_cycles, resumed_run
+from softsensor.service.sample_grid import first_cycle_time
+from softsensor.service.unit_run import slice_readings
+
+COMMIT_PATIENCE = 2.0
+"""Seconds a cycle waits for its readings to be on record before it goes on with them queued."""
+
+
+@dataclass(frozen=True)
+class UnitIdentity:
+    """Where a unit's records go."""
+
+    unit_id: int
+    revision_id: int
+
+
+class UnitService:
+    """A unit under way. Feed it readings with :meth:`accept`; run each cycle, in order, with :meth:`run_cycle`."""
+
+    def __init__(
+        self, design: UnitDesign, identity: UnitIdentity, database: Database, writer: RecordsWriter
+    ) -> None:
+        self.design = design
+        self.identity = identity
+        self._database = database
+        self._writer = writer
+        self._sample_us = design.detection.sample_us
+        self._lab_index = {
+            item.lab.tag: e for e, item in enumerate(design.model.spec.estimates) if item.lab is not None
+        }
+        self._seen_labs: set[tuple[str, int, float]] = set()
+        self._pending_labs: list[LabArrival] = []
+        self._horizon = int(np.ceil(LEAST_HORIZON_S / design.model.spec.sample_time)) + 2
+        self._assembly = LiveAssembly(design.model.spec)
+        self.run = fresh_run(design, self._horizon)
+        self.next_time: int | None = None
+        self.records_late = False
+
+    @property
+    def name(self) -> str:
+        """The unit's name."""
+        return self.design.model.spec.name
+
+    @property
+    def model(self) -> PlantModel:
+        """The revision that runs."""
+        return self.design.model
+
+    def accept(self, reading: Reading, now: int) -> None:
+        """Take a reading, or a laboratory result: its source timestamp is its sampling time."""
+        index = self._lab_index.get(reading.tag)
+        if index is None:
+            self._assembly.accept(reading)
+            return
+        key = (reading.tag, reading.time, reading.value)
+        if reading.quality is Quality.BAD or not np.isfinite(reading.value) or key in self._seen_labs:
+            return
+        self._seen_labs.add(key)
+        self._pending_labs.append(
+            LabArrival(index, reading.tag, reading.time, max(now, reading.time), reading.value)
+        )
+
+    def decided_labs(self) -> list[tuple[int, LabArrival]]:
+        """Results that were left out and that a person has since decided to use, with their place in the records."""
+        return [
+            (row.id, LabArrival(self._lab_index[row.tag], row.tag, row.sampled_us, row.reported_us, row.value))
+            for row in lab_results_of(self._database, self.identity.unit_id)
+            if row.decided_by is not None and row.status == "used" and row.counted_cycle is None
+        ]
+
+    def decide(self, arrival: LabArrival, now: int) -> None:
+        """A result that a person has decided to use arrives once more."""
+        self._pending_labs.append(replace(arrival, decided_at=now))
+
+    def complete_to(self) -> int:
+        """Time up to which every tag has been heard."""
+        return self._assembly.complete_to()
+
+    async def run_cycle(self, time: int) -> Step | None:
+        """Run the cycle at ``time``; None while an input has never had a value."""
+        readings = self._assembly.readings_at(time)
+        self.next_time = time + self._sample_us
+        if not self.run.started:
+            if not np.all(np.isfinite(readings.u)):
+                return None
+            self._keep_first_state(time)
+        arrivals = [lab for lab in self._pending_labs if lab.arrived <= time]
+        self._pending_labs = [lab for lab in self._pending_labs if lab.arrived > time]
+        await self._store_readings(readings, arrivals)
+        step = self._advance(readings, arrivals)
+        self._submit(step)
+        return step
+
+    def _keep_first_state(self, time: int) -> None:
+        cycle = self.run.state.next_cycle
+        context = Context(self.model.digest, time - cycle * self._sample_us)
+        checkpoint = blocks.Checkpoint(cycle, FORMAT, pack_state(self.run.state, context))
+        self._writer.submit(storing.store_checkpoint, self.identity.unit_id, checkpoint)
+
+    async def _store_readings(self, readings: CycleReadings, arrivals: list[LabArrival]) -> None:
+        """Before the cycle runs its readings are on record, or queued for it where the database is away."""
+        block = blocks.ReadingsBlock(
+            self.identity.revision_id,
+            self.run.state.next_cycle,
+            readings,
+            (pack_decisions(arrivals),),
+        )
+        future = self._writer.submit(storing.store_readings, self.identity.unit_id, block)
+        patience = 0.0 if self.records_late else COMMIT_PATIENCE
+        done, _ = await asyncio.wait([asyncio.wrap_future(future)], timeout=patience)
+        self.records_late = not done
+        for item in done:
+            item.result()
+
+    def _advance(self, readings: CycleReadings, arrivals: list[LabArrival]) -> Step:
+        advance = self.run.advance(readings, arrivals)
+        keep = self.run.state.next_cycle % CHUNK == 0 or bool(advance.revisions)
+        return Step(
+            readings,
+            advance.results[-1],
+            bytes.fromhex(self.run.state.digest.hexdigest()),
+            advance.labs,
+            advance.revisions,
+            self._checkpoint() if keep else None,
+        )
+
+    def _checkpoint(self) -> bytes:
+        assert self.run.first_time is not None
+        return pack_state(self.run.state, Context(self.model.digest, self.run.first_time, self.run.labs))
+
+    def _submit(self, step: Step) -> None:
+        self._writer.submit(write_step, self.identity.unit_id, self.design, step)
+        if step.checkpoint is not None:
+            oldest = step.results.first - self._horizon - 2 * CHUNK
+            self._writer.submit(storing.drop_checkpoints, self.identity.unit_id, oldest)
+
+    def resume(self, now: int) -> int:
+        """Go on from the records, if there are any; returns how many recorded cycles ran again.
+
+        Cycles between the last one on record and now are run by the caller, one after the other, without readings.
+        """
+        unit_id = self.identity.unit_id
+        seen = last_seen(self._database, unit_id)
+        self.run = resumed_run(self.design, self._database, unit_id, self._horizon)
+        if seen is None:
+            self.next_time = first_cycle_time(now, self._sample_us)
+            return 0
+        first, again = self.run.state.next_cycle, 0
+        for part, arrivals in recorded_cycles(self._database, unit_id, first, seen.cycle):
+            for k in range(len(part)):
+                self._submit(self._advance(slice_readings(part, k, k + 1), arrivals if k == 0 else []))
+                again += 1
+        self._remember_labs()
+        self._hold(seen, now)
+        return again
+
+    def _remember_labs(self) -> None:
+        """A laboratory result that the plant's server shows again after a restart is not a new one."""
+        for lab in lab_results_of(self._database, self.identity.unit_id):
+            self._seen_labs.add((lab.tag, lab.sampled_us, lab.value))
+
+    def _hold(self, seen: LastSeen, now: int) -> None:
+        """Inputs go on from the last recorded cycle's values; a unit whose run is fresh starts now."""
+        last = int(seen.readings.times[-1])
+        if not self.run.started:
+            self.next_time = max(first_cycle_time(now, self._sample_us), last + self._sample_us)
+            return
+        self.next_time = last + self._sample_us
+        inputs = tuple(
+            TagState(last, float(value), int(quality), last, last, float(value), min(int(quality), 1))
+            for value, quality in zip(seen.readings.u[-1], seen.readings.u_quality[-1], strict=True)
+        )
+        used = TagState(newest_time=last, used_time=last)
+        sensors = (used,) * self.design.kernel.n_sensors
+        self._assembly = LiveAssembly(self.model.spec, AssemblyState(last, inputs, sensors))
