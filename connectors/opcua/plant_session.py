@@ -50,6 +50,8 @@ class PlantSession:
         self._client = client
         self._on_data = on_data
         self._tags: dict[int, str] = {}
+        self._unheard: dict[str, ua.NodeId] = {}
+        self._published = False
         self._next_handle = _NAMESPACE_HANDLE + 1
         self._subscription: ua.CreateSubscriptionResult | None = None
         self._last_sign = asyncio.get_running_loop().time()
@@ -122,10 +124,18 @@ class PlantSession:
                 problems[tag] = f"{node}: not a variable, so it has no value"
         return problems
 
-    async def read_values(self, nodes: Mapping[str, ua.NodeId]) -> dict[str, ua.DataValue]:
-        """Every node's present value, whatever its status."""
+    async def read_unheard(self) -> None:
+        """Read the present value of those nodes for which the subscription did not bring one.
+
+        A server sends each item's present value first (Part 4, 5.13.1.2). Reading before that would leave a
+        gap between the value read and the first one sent, so it is done later, and only where needed.
+        """
+        if not self._published or not self._unheard:
+            return
+        nodes, self._unheard = self._unheard, {}
         values = await self._read(list(nodes.values()), ua.AttributeIds.Value)
-        return dict(zip(nodes, values, strict=True))
+        for tag, data in zip(nodes, values, strict=True):
+            self._on_data(tag, data)
 
     async def subscribe(self, nodes: Mapping[str, ua.NodeId]) -> dict[str, str]:
         """Ask for every change of value, status or source time; gives the tags that are refused, and why."""
@@ -183,11 +193,14 @@ class PlantSession:
             _request(handle, node, sampling, depth)
             for handle, node in zip(handles, nodes.values(), strict=True)
         ]
+        self._unheard.update(nodes)
+        self._published = False
         results = await self._create_items(requests)
         problems: dict[str, str] = {}
         for handle, (tag, node), result in zip(handles, nodes.items(), results, strict=True):
             if not result.StatusCode.is_good() or not result.MonitoredItemId:
                 del self._tags[handle]
+                self._unheard.pop(tag, None)
                 problems[tag] = (
                     f"{node.to_string()}: not to be subscribed to: {status_text(result.StatusCode.value)}"
                 )
@@ -245,6 +258,7 @@ class PlantSession:
 
     def _on_publish(self, result: ua.PublishResult) -> None:
         self._last_sign = asyncio.get_running_loop().time()
+        self._published = True
         message = result.NotificationMessage
         for notification in message.NotificationData or ():
             if isinstance(notification, ua.DataChangeNotification):
@@ -257,6 +271,7 @@ class PlantSession:
     def _on_item(self, item: ua.MonitoredItemNotification) -> None:
         tag = self._tags.get(item.ClientHandle)
         if tag is not None:
+            self._unheard.pop(tag, None)
             self._on_data(tag, item.Value)
         elif item.ClientHandle == _NAMESPACE_HANDLE:
             self._on_namespaces(item.Value)

@@ -200,11 +200,8 @@ class OpcUaSource:
             raise _node_error(problems)
         self._connected_once = True
         self._problems = problems
-        values = await session.read_values(self._resolved)
         self._told = ""
         self._tell_connected(problems)
-        for tag, data in values.items():
-            self._deliver(tag, data)
         refused = await session.subscribe(self._resolved)
         if refused and strict:
             raise _node_error(refused)
@@ -213,7 +210,7 @@ class OpcUaSource:
             self._tell_connected(self._problems)
 
     async def _watch(self, session: PlantSession) -> str:
-        """Wait for the end of a connection; meanwhile ask again for nodes that were not there."""
+        """Wait for the end of a connection; meanwhile ask for what has not come."""
         loop = asyncio.get_running_loop()
         asked = loop.time()
         while True:
@@ -223,6 +220,7 @@ class OpcUaSource:
                 return session.loss
             if session.silent_for() > session.silence_limit():
                 return f"the subscription has been silent for {session.silent_for():.0f} s"
+            await session.read_unheard()
             if self._problems and loop.time() - asked >= _NODE_RETRY:
                 await self._ask_again(session)
                 asked = loop.time()
@@ -230,8 +228,6 @@ class OpcUaSource:
     async def _ask_again(self, session: PlantSession) -> None:
         missing = {tag: self._nodes[tag] for tag in self._problems}
         found, problems = await session.resolve(missing)
-        for tag, data in (await session.read_values(found)).items():
-            self._deliver(tag, data)
         problems |= await session.subscribe(found)
         self._resolved |= found
         self._problems = problems
