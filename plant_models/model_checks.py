@@ -5,8 +5,10 @@ from __future__ import annotations
 from collections.abc import Iterable
 from dataclasses import dataclass
 
+from plant_models.durations import format_duration
 from plant_models.model_tables import FaultList, Table
 from plant_models.quoting import nearest, printable, quoted, suggestion
+from plant_models.specification import UnitSpec
 from plant_models.toml_lines import Place
 
 _ARTICLE = {
@@ -15,6 +17,11 @@ _ARTICLE = {
     "estimate": "an",
     "disturbance": "a",
 }
+MOST_PAST_DISTURBANCES = 2000
+"""Sample times of dead time on a path from a disturbance; each is a state of the estimator."""
+
+MOST_PAST_INPUTS = 1_000_000
+
 _NAME_KEY = {"input": "tag", "sensor": "tag", "estimate": "tag", "disturbance": "name"}
 
 
@@ -57,6 +64,23 @@ def check_whole(sections: dict[str, list[Table]], paths: list[Table], faults: Fa
     ends += _entering_at_inputs(entries, ends)
     _check_one_path_each(ends, faults)
     _check_driven(entries, ends, faults)
+
+
+def check_dead_times(spec: UnitSpec, paths: list[Table], faults: FaultList) -> None:
+    """Dead times are kept as past values, one a sample: for an input in a ring, for a disturbance as states.
+
+    :param paths: the tables of spec.paths, in the same order.
+    """
+    disturbed = {item.name for item in spec.disturbances} | {item.at_input for item in spec.disturbances}
+    for path, table in zip(spec.paths, paths, strict=True):
+        most = MOST_PAST_DISTURBANCES if path.source in disturbed else MOST_PAST_INPUTS
+        if path.dead_time > most * spec.sample_time:
+            table.fault(
+                "dead_time",
+                f"expected at most {most} sample times of {format_duration(spec.sample_time)}"
+                f"{' where a disturbance enters' if path.source in disturbed else ''}; "
+                f"got {format_duration(path.dead_time)}",
+            )
 
 
 def _entries(sections: dict[str, list[Table]]) -> list[Entry]:

@@ -12,7 +12,7 @@ from pathlib import Path
 from typing import Any
 
 from plant_models.errors import Fault, ModelFileError
-from plant_models.model_checks import check_whole
+from plant_models.model_checks import check_dead_times, check_whole
 from plant_models.model_paths import read_path
 from plant_models.model_sections import (
     read_disturbance,
@@ -96,6 +96,8 @@ def _unit_spec(document: dict[str, Any], faults: FaultList, source: str) -> Unit
         source_text=source,
     )
     check_whole(named, paths, faults)
+    if unit is not None and unit.sound("sample_time"):
+        check_dead_times(spec, paths, faults)
     return spec
 
 

@@ -20,6 +20,9 @@ from plant_models.units import parse_unit
 
 T = TypeVar("T")
 
+LONGEST = 1000 * 365.25 * 86400.0
+"""The longest time that a model file may name, in seconds; with it times in microseconds stay 64-bit integers."""
+
 
 class RefusalError(Exception):
     """A value that is not of its kind; the text says why where the expectation alone does not."""
@@ -123,8 +126,23 @@ def _unit(value: object) -> str:
     return parse_unit(value).text
 
 
-def _positive_duration(value: object) -> float:
+def _duration(value: object) -> float:
     seconds = durations.parse_duration(value)
+    if seconds > LONGEST:
+        raise RefusalError("which is longer than a thousand years")
+    return seconds
+
+
+def _sample_time(value: object) -> float:
+    """Cycles lie on whole microseconds, so the sample time is a whole number of them."""
+    seconds = _positive_duration(value)
+    if round(seconds * 1e6) / 1e6 != seconds:
+        raise RefusalError("which is no whole number of microseconds")
+    return seconds
+
+
+def _positive_duration(value: object) -> float:
+    seconds = _duration(value)
     if seconds == 0.0:
         raise RefusalError("")
     return seconds
@@ -132,6 +150,8 @@ def _positive_duration(value: object) -> float:
 
 def _lead_time(value: object) -> float:
     seconds = durations.parse_signed_duration(value)
+    if abs(seconds) > LONGEST:
+        raise RefusalError("which is longer than a thousand years")
     if seconds == 0.0:
         raise RefusalError("but a lead of zero does nothing")
     return seconds
@@ -171,7 +191,8 @@ COEFFICIENTS: Kind[tuple[float, ...]] = Kind(
     "a list of finite numbers in descending powers of s, such as [16.7, 1.0]", _numbers, (1.0,)
 )
 FLAG = Kind("true or false", _flag, False)
-DURATION = Kind(durations.EXPECTED, durations.parse_duration, 1.0)
+DURATION = Kind(durations.EXPECTED, _duration, 1.0)
+SAMPLE_TIME = Kind(f"{durations.EXPECTED}, above zero", _sample_time, 1.0)
 DURATION_ABOVE_ZERO = Kind(f"{durations.EXPECTED}, above zero", _positive_duration, 1.0)
 TIME_UNIT = Kind("a unit of time such as 'min'", durations.parse_time_unit, 1.0)
 TIME_CONSTANTS: Kind[tuple[float, ...]] = Kind(

@@ -13,6 +13,7 @@ from plant_models.model_kinds import (
     NOT_BELOW_ZERO,
     NUMBER,
     RANGE,
+    SAMPLE_TIME,
     TAG,
     TEXT,
     UNIT,
@@ -42,7 +43,7 @@ def read_unit(table: Table) -> tuple[str, str, float]:
     table.only("name", "title", "sample_time")
     name = table.read("name", NAME)
     title = table.read_or("title", TEXT, name)
-    return name, title, table.read("sample_time", DURATION_ABOVE_ZERO)
+    return name, title, table.read("sample_time", SAMPLE_TIME)
 
 
 def read_false_flag_interval(table: Table | None) -> float:

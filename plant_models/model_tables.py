@@ -75,8 +75,8 @@ class Table:
         """Every other key is a fault: a misspelt optional key must not be passed over."""
         for key in self.values:
             if key not in known:
-                near = suggestion(key, known) or f"; expected one of {', '.join(known)}"
-                self.fault(key, f"unknown key{near}")
+                words = ", ".join(known)
+                self.fault(key, f"unknown key, expected one of {words}{suggestion(key, known)}")
 
     def fault(self, key: str, message: str) -> None:
         self._unsound.add(key)
@@ -133,8 +133,8 @@ def unknown_sections(document: Mapping[str, Any], known: Iterable[str], faults: 
     words = tuple(known)
     for key in document:
         if key not in words:
-            near = suggestion(key, words) or f"; expected one of {', '.join(words)}"
-            faults.add((key,), key, f"unknown section{near}")
+            message = f"unknown section, expected one of {', '.join(words)}{suggestion(key, words)}"
+            faults.add((key,), key, message)
 
 
 def _several(value: object) -> str:

@@ -1,4 +1,3 @@
-# ruff: noqa: E501  (one fault a line, however long)
 """Every fault of a model file is reported, with its line, its key and what was expected, and all in one go."""
 
 from __future__ import annotations
@@ -92,12 +91,12 @@ FAULTS = [
     ("[[disturbance]]", "[[disturbance]] #!", "time_constant", "missing; expected a time with its unit"),
     ('lab = { tag = "AL1", sd = 0.02 }', 'lab = { tag = "AL1" } #!', "lab.sd", "missing; expected a finite number"),
     ('lab = { tag = "AL1", sd = 0.02 }', "lab = { sd = 0.02 } #!", "lab.tag", "missing; expected a tag"),
-    ("noise_sd = 0.15", "noise_sd = 0.15\nnoise = 1 #!", "noise", "unknown key; did you mean 'noise_sd'?"),
-    ("sd = 0.02 }", "sd = 0.02, unit = 1 } #!", "lab.unit", "unknown key; expected one of tag, sd"),
-    ('name = "feed"', 'name = "feed"\ngain = 1 #!', "gain", "unknown key; expected one of name, sd, time_constant"),
+    ("noise_sd = 0.15", "noise_sd = 0.15\nnoise = 1 #!", "noise", "validated_range, noise_sd, tolerance, bias_walk_sd"),
+    ("sd = 0.02 }", "sd = 0.02, unit = 1 } #!", "lab.unit", "unknown key, expected one of tag, sd"),
+    ('name = "feed"', 'name = "feed"\ngain = 1 #!', "gain", "unknown key, expected one of name, sd, time_constant"),
     ("[fault_tests]", "[fault_tests]\nfalse_alarm = 1 #!", "false_alarm", "unknown key"),
-    ("[fault_tests]", "[fault_test] #!", "fault_test", "unknown section; did you mean 'fault_tests'?"),
-    ("[unit]", "extra = 1 #!\n[unit]", "extra", "unknown section; expected one of unit, input"),
+    ("[fault_tests]", "[fault_test] #!", "fault_test", "; did you mean 'fault_tests'?"),
+    ("[unit]", "extra = 1 #!\n[unit]", "extra", "unknown section, expected one of unit, input"),
     # kinds of values
     ('name = "R-210"', "name = 210 #!", "name", "expected a name such as 'feed concentration'; got 210"),
     ('name = "R-210"', 'name = "" #!', "name", "got ''"),
@@ -137,6 +136,12 @@ FAULTS = [
     ('sample_time = "10 s"', 'sample_time = "0 s" #!', "sample_time", "above zero; got '0 s'"),
     ('sample_time = "10 s"', 'sample_time = "-1 s" #!', "sample_time", "not below zero"),
     ('sample_time = "10 s"', 'sample_time = "1 fortnight" #!', "sample_time", "none of ms, s, min, h, d, week"),
+    ('sample_time = "10 s"', 'sample_time = "0.0000015 s" #!', "sample_time", "no whole number of microseconds"),
+    ('sample_time = "10 s"', 'sample_time = "1e300 s" #!', "sample_time", "longer than a thousand years"),
+    ('false_flag_interval = "30 d"', 'false_flag_interval = "1e9 d" #!', "false_flag_interval", "a thousand years"),
+    ("lead_times = []", 'lead_times = ["-1e9 d"] #!', "lead_times", "longer than a thousand years"),
+    ('dead_time = "1 min"', 'dead_time = "200 d" #!', "dead_time", "at most 1000000 sample times of 10 s; got 200 d"),
+    (FEED_PATH, FEED_PATH + 'dead_time = "6 h" #!\n', "dead_time", "at most 2000 sample times of 10 s where a disturbance"),
     ('dead_time = "1 min"', 'dead_time = "-1 min" #!', "dead_time", "not below zero"),
     ('dead_time = "1 min"', "dead_time = 1.0 #!", "dead_time", "in quotation marks"),
     ('time_constants = ["1 min"]', 'time_constants = ["-1 min"] #!', "time_constants", "item 1 is not"),
