@@ -15,7 +15,7 @@ from __future__ import annotations
 import re
 from dataclasses import dataclass
 from functools import cache, lru_cache
-from typing import Any
+from typing import Any, NamedTuple
 
 from plant_models.errors import UnitError
 from plant_models.quoting import quoted, suggestion
@@ -76,6 +76,14 @@ class Unit:
         return self.text
 
 
+class EngineeringUnits(NamedTuple):
+    """What an OPC UA EUInformation says of a unit."""
+
+    unece_code: str | None
+    unit_id: int
+    display_name: str
+
+
 @lru_cache(maxsize=1024)
 def parse_unit(text: str) -> Unit:
     """Read a unit.
@@ -127,19 +135,19 @@ def _ratio(from_unit: str, to_unit: str) -> float:
         ) from None
 
 
-def engineering_units(text: str) -> tuple[str | None, int, str]:
+def engineering_units(text: str) -> EngineeringUnits:
     """UN/CEFACT code, unitId and display name for an OPC UA EUInformation (Part 8, 5.6.3).
 
     The unitId is the code's ASCII bytes read as one big-endian number, -1 where there is no code.
     Gauge pressures have none: the code for bar would claim an absolute one.
 
-    >>> engineering_units("degC"), engineering_units("wt%")
-    (('CEL', 4408652, '°C'), (None, -1, 'wt%'))
+    >>> engineering_units("degC")
+    EngineeringUnits(unece_code='CEL', unit_id=4408652, display_name='°C')
     """
     unit = parse_unit(text)
     code = None if unit.gauge else _codes().get(unit.expression)
     unit_id = -1 if code is None else int.from_bytes(code.encode("ascii"), "big")
-    return code, unit_id, _display(unit.text)
+    return EngineeringUnits(code, unit_id, _display(unit.text))
 
 
 @cache
