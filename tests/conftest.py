@@ -131,6 +131,35 @@ def postgres_server() -> Iterator[PostgresServer]:
     yield from own_server()
 
 
+def make_database(server: URL, template: str = "template1") -> URL:
+    """A new database on the server, a copy of another one there."""
+    name = f"test_{uuid4().hex}"
+    statement = sql.SQL("CREATE DATABASE {} TEMPLATE {}")
+    run_on(server, statement.format(sql.Identifier(name), sql.Identifier(template)))
+    return server.set(database=name)
+
+
+def drop_database(made: URL, server: URL) -> None:
+    """Take a database off the server, whoever is still connected."""
+    run_on(server, sql.SQL("DROP DATABASE {} WITH (FORCE)").format(sql.Identifier(str(made.database))))
+
+
+def run_on(server: URL, statement: sql.Composed) -> None:
+    """Run one statement outside a transaction."""
+    admin = server.set(drivername="postgresql").render_as_string(hide_password=False)
+    with psycopg.connect(admin, autocommit=True) as connection:
+        connection.execute(statement)
+
+
+@pytest.fixture(scope="session")
+def upgraded_template(postgres_url: URL) -> Iterator[str]:
+    """The name of a PostgreSQL database at this release's revision, to be copied."""
+    made = make_database(postgres_url)
+    upgrade_database(made.render_as_string(hide_password=False))
+    yield str(made.database)
+    drop_database(made, postgres_url)
+
+
 @pytest.fixture(params=["sqlite", "postgresql"])
 def empty_database_url(request: pytest.FixtureRequest, tmp_path: Path) -> Iterator[str]:
     """The address of a new database that holds nothing, of each kind in turn."""
@@ -138,20 +167,23 @@ def empty_database_url(request: pytest.FixtureRequest, tmp_path: Path) -> Iterat
         yield f"sqlite:///{(tmp_path / 'records.db').as_posix()}"
         return
     server: URL = request.getfixturevalue("postgres_url")
-    name = f"test_{uuid4().hex}"
-    admin = server.set(drivername="postgresql").render_as_string(hide_password=False)
-    with psycopg.connect(admin, autocommit=True) as connection:
-        connection.execute(sql.SQL("CREATE DATABASE {}").format(sql.Identifier(name)))
-    yield server.set(database=name).render_as_string(hide_password=False)
-    with psycopg.connect(admin, autocommit=True) as connection:
-        connection.execute(sql.SQL("DROP DATABASE {} WITH (FORCE)").format(sql.Identifier(name)))
+    made = make_database(server)
+    yield made.render_as_string(hide_password=False)
+    drop_database(made, server)
 
 
-@pytest.fixture
-def database_url(empty_database_url: str) -> str:
+@pytest.fixture(params=["sqlite", "postgresql"])
+def database_url(request: pytest.FixtureRequest, tmp_path: Path) -> Iterator[str]:
     """The address of a new database at this release's revision, of each kind in turn."""
-    upgrade_database(empty_database_url)
-    return empty_database_url
+    if request.param == "sqlite":
+        url = f"sqlite:///{(tmp_path / 'records.db').as_posix()}"
+        upgrade_database(url)
+        yield url
+        return
+    server: URL = request.getfixturevalue("postgres_url")
+    made = make_database(server, request.getfixturevalue("upgraded_template"))
+    yield made.render_as_string(hide_password=False)
+    drop_database(made, server)
 
 
 @pytest.fixture

@@ -19,8 +19,9 @@ def insert_new(connection: Connection, table: Table, rows: Sequence[Row]) -> int
     """Insert the rows that are not there yet, by any unique key; returns how many were new."""
     if not rows:
         return 0
-    statement = _insert(connection, table).on_conflict_do_nothing().returning(*table.primary_key)
-    return len(connection.execute(statement, [dict(row) for row in rows]).all())
+    statement = _insert(connection, table).on_conflict_do_nothing()
+    counted = statement.execution_options(preserve_rowcount=True)
+    return connection.execute(counted, [dict(row) for row in rows]).rowcount
 
 
 def insert_or_replace(connection: Connection, table: Table, rows: Sequence[Row]) -> None:
