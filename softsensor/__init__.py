@@ -11,13 +11,13 @@ from importlib import import_module
 from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
-    from softsensor.service.replay import replay
+    from softsensor.recorded_data import replay
     from softsensor.unit_design import load_model
 
 __all__ = ["load_model", "replay"]
 __version__ = "0.1.0"
 
-_HOMES = {"load_model": "softsensor.unit_design", "replay": "softsensor.service.replay"}
+_HOMES = {"load_model": "softsensor.unit_design", "replay": "softsensor.recorded_data"}
 
 
 def __getattr__(name: str) -> Any:

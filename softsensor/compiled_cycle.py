@@ -157,4 +157,5 @@ def run_block(
                 out.low[k, i] = tests.low[i]
             if news != 0:
                 return k + 1
-    return data.u.shape[0]
+    cycles: int = data.u.shape[0]
+    return cycles

@@ -61,7 +61,8 @@ def read_models(settings: SiteSettings) -> list[PlantModel]:
 
     :raises Problem: all faults of all files.
     """
-    models, lines = [], []
+    models: list[PlantModel] = []
+    lines: list[str] = []
     for unit in settings.units:
         try:
             model = build_plant_model(read_model_file(unit.model))
@@ -71,7 +72,9 @@ def read_models(settings: SiteSettings) -> list[PlantModel]:
         lines += _node_faults(settings, unit, model)
         models.append(model)
     names = [model.spec.name for model in models]
-    lines += [f"{settings.path}: unit {name} appears twice" for name in {n for n in names if names.count(n) > 1}]
+    lines += [
+        f"{settings.path}: unit {name} appears twice" for name in {n for n in names if names.count(n) > 1}
+    ]
     if lines:
         raise SiteFileError(*lines)
     return models
@@ -86,7 +89,9 @@ def _node_faults(settings: SiteSettings, unit: UnitSettings, model: PlantModel) 
         yield f"{settings.path}: nodes: {tag} is no input, sensor or laboratory tag of {unit.model.name}"
 
 
-def _source(settings: SiteSettings, models: list[PlantModel]) -> tuple[OpcUaSource, dict[str, tuple[str, str]]]:
+def _source(
+    settings: SiteSettings, models: list[PlantModel]
+) -> tuple[OpcUaSource, dict[str, tuple[str, str]]]:
     plant = settings.plant
     opcua = OpcUaSettings(
         plant.endpoint,
@@ -165,8 +170,8 @@ def published_units(models: list[PlantModel]) -> list[PublishedUnit]:
 
 
 def _engineering_unit(text: str) -> EngineeringUnit:
-    units = engineering_units(text)
-    return EngineeringUnit(units.display_name, units.unit_id)
+    _, unit_id, display_name = engineering_units(text)
+    return EngineeringUnit(display_name, unit_id)
 
 
 class _PageServer(uvicorn.Server):
@@ -185,18 +190,24 @@ def _listening(address: tuple[str, int]) -> socket.socket:
         listener.bind(address)
     except OSError as error:
         listener.close()
-        raise SiteFileError(f"web: address {address[0]}:{address[1]} cannot be had: {error.strerror or error}") from None
+        raise SiteFileError(
+            f"web: address {address[0]}:{address[1]} cannot be had: {error.strerror or error}"
+        ) from None
     return listener
 
 
 @asynccontextmanager
-async def _page(database: Database, service: LiveService, address: tuple[str, int] | None) -> AsyncIterator[str | None]:
+async def _page(
+    database: Database, service: LiveService, address: tuple[str, int] | None
+) -> AsyncIterator[str | None]:
     if address is None:
         yield None
         return
     listener = _listening(address)
     app = create_app(database, service.feed)
-    config = uvicorn.Config(app, log_level="warning", access_log=False, lifespan="off", timeout_graceful_shutdown=1)
+    config = uvicorn.Config(
+        app, log_level="warning", access_log=False, lifespan="off", timeout_graceful_shutdown=1
+    )
     server = _PageServer(config)
     task = asyncio.create_task(server.serve(sockets=[listener]), name="web page")
     host, port = listener.getsockname()[:2]
@@ -209,7 +220,9 @@ async def _page(database: Database, service: LiveService, address: tuple[str, in
 
 
 @asynccontextmanager
-async def running_site(settings: SiteSettings, environment: Mapping[str, str] | None = None) -> AsyncIterator[Site]:
+async def running_site(
+    settings: SiteSettings, environment: Mapping[str, str] | None = None
+) -> AsyncIterator[Site]:
     """Everything of a site up and checked; the caller then awaits ``site.service.serve()``.
 
     :raises Problem: whatever keeps the site from starting, in lines.

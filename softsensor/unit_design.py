@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from pathlib import Path
+
 import numpy as np
 
 from plant_models.building import build_plant_model
@@ -24,7 +26,7 @@ LOOK_EVERY = 6
 LOST_SECONDS, LOST_CYCLES = 300.0, 10
 
 
-def load_model(path: str) -> PlantModel:
+def load_model(path: str | Path) -> PlantModel:
     """Read a model file and discretise it.
 
     :raises ModelFileError: with every fault of the file.

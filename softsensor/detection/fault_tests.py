@@ -76,7 +76,7 @@ class TestState(NamedTuple):
 
     def copy(self) -> TestState:
         """A copy that shares nothing with this state."""
-        return TestState(*(part.copy() for part in self))
+        return TestState(**{name: part.copy() for name, part in self._asdict().items()})
 
 
 def initial_tests(n_sensors: int, window: int) -> TestState:

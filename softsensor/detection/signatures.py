@@ -11,6 +11,7 @@ so that the same discretised model has the same signatures on every machine.
 
 from __future__ import annotations
 
+from dataclasses import dataclass
 from typing import Literal, NamedTuple
 
 import numpy as np
@@ -28,7 +29,8 @@ SETTLE_CYCLES = 200_000
 SETTLE_TOLERANCE = 1e-12
 
 
-class Hypothesis(NamedTuple):
+@dataclass(frozen=True, slots=True)
+class Hypothesis:
     """One explanation: which instrument or disturbance, and the shape of its error over time."""
 
     source: Source

@@ -30,7 +30,8 @@ def accept_inputs(kernel: Kernel, state: EstimatorState, u: Floats) -> None:
 @njit(cache=True)
 def past_input(kernel: Kernel, state: EstimatorState, source: int, delay: int) -> float:
     """u(k - delay) of one input, as a deviation."""
-    return state.u_past[source, (state.head[0] - delay) % kernel.ring]
+    value: float = state.u_past[source, (state.head[0] - delay) % kernel.ring]
+    return value
 
 
 @njit(cache=True)

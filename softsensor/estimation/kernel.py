@@ -70,7 +70,9 @@ class EstimatorState(NamedTuple):
 
     def copy(self) -> EstimatorState:
         """A copy that shares nothing with this state."""
-        return EstimatorState(*(part.copy() for part in self))
+        return EstimatorState(
+            self.x.copy(), self.P.copy(), self.x_in.copy(), self.u_past.copy(), self.head.copy()
+        )
 
 
 def compressed_rows(matrix: Matrix) -> tuple[Ints, Ints, Floats]:
@@ -100,7 +102,8 @@ def build_kernel(model: PlantModel) -> Kernel:
     """Lay a model out for the compiled loop."""
     spec, paths, part = model.spec, model.paths, model.stochastic
     sizes = [len(path.steady) for path in paths]
-    outputs = [*spec.sensors, *spec.estimates]
+    operating = [item.operating_point for item in spec.sensors]
+    operating += [item.operating_point for item in spec.estimates]
 
     def ints(values: list[int]) -> Ints:
         return np.array(values, dtype=np.int64)
@@ -111,7 +114,7 @@ def build_kernel(model: PlantModel) -> Kernel:
         len(spec.estimates),
         _ring_length(paths),
         np.array([item.operating_point for item in spec.inputs], dtype=np.float64),
-        np.array([item.operating_point for item in outputs], dtype=np.float64),
+        np.array(operating, dtype=np.float64),
         ints([path.source for path in paths]),
         ints([path.row for path in paths]),
         ints(sizes),

@@ -155,14 +155,12 @@ class Past:
 
 
 def _empty_chunk(before: EstimatorState, like: CycleReadings, n_estimates: int) -> Chunk:
-    def rows(array: NDArray[np.generic]) -> NDArray[np.generic]:
-        return np.zeros((CHUNK, *array.shape[1:]), dtype=array.dtype)
-
+    inputs, sensors = like.u.shape[1], like.y.shape[1]
     readings = CycleReadings(
-        rows(like.times),
-        rows(like.u),
-        rows(like.u_quality),
-        rows(like.y),
-        rows(like.y_quality),  # type: ignore[arg-type]
+        np.zeros(CHUNK, dtype=np.int64),
+        np.zeros((CHUNK, inputs)),
+        np.zeros((CHUNK, inputs), dtype=np.int8),
+        np.zeros((CHUNK, sensors)),
+        np.zeros((CHUNK, sensors), dtype=np.int8),
     )
     return Chunk(before, readings, np.zeros((CHUNK, n_estimates)), np.zeros((CHUNK, n_estimates)))

@@ -161,4 +161,3 @@ class LiveService:
     def _event(self, unit: UnitService, kind: str, text: str) -> None:
         event = happenings.Event(unit.identity.unit_id, self._clock.now(), kind, text)
         self._writer.submit(happenings.record_event, event)
-

@@ -14,7 +14,7 @@ from softsensor.readings_of_cycle import CycleQuality, CycleReadings
 
 NORMAL_95 = 1.959963984540054
 """97.5 % quantile of the standard normal distribution."""
-STATUS_NAMES = np.array(["Good", "Uncertain", "Bad"])
+STATUS_NAMES = ("Good", "Uncertain", "Bad")
 
 ESTIMATE_COLUMNS = ("time", "tag", "value", "sd", "lower", "upper", "status", "reason")
 INNOVATION_COLUMNS = (
@@ -39,6 +39,11 @@ INPUT_REASONS = {
 def moments(times: np.ndarray | Sequence[int | None]) -> pd.DatetimeIndex:
     """UTC times of integer microseconds; None becomes not-a-time."""
     return pd.DatetimeIndex(pd.to_datetime(pd.array(list(times), dtype="Int64"), unit="us", utc=True))
+
+
+def _words(codes: np.ndarray, words: Sequence[str]) -> pd.Categorical:
+    """Texts by their codes, kept as codes."""
+    return pd.Categorical.from_codes(codes, pd.Index(list(words), dtype=object))
 
 
 def reasons(design: UnitDesign, readings: CycleReadings, results: CycleResults) -> np.ndarray:
@@ -77,12 +82,12 @@ def estimate_table(design: UnitDesign, readings: CycleReadings, results: CycleRe
     return pd.DataFrame(
         {
             "time": moments(results.times).repeat(len(tags)),
-            "tag": pd.Categorical.from_codes(np.tile(np.arange(len(tags)), n), tags),
+            "tag": _words(np.tile(np.arange(len(tags)), n), tags),
             "value": value,
             "sd": sd,
             "lower": value - NORMAL_95 * sd,
             "upper": value + NORMAL_95 * sd,
-            "status": pd.Categorical.from_codes(results.status.ravel(), STATUS_NAMES),
+            "status": _words(results.status.ravel(), STATUS_NAMES),
             "reason": reasons(design, readings, results).ravel(),
         }
     )
@@ -94,7 +99,7 @@ def innovation_table(design: UnitDesign, results: CycleResults) -> pd.DataFrame:
     return pd.DataFrame(
         {
             "time": moments(results.times).repeat(len(tags)),
-            "tag": pd.Categorical.from_codes(np.tile(np.arange(len(tags)), n), tags),
+            "tag": _words(np.tile(np.arange(len(tags)), n), tags),
             "reading": results.reading.ravel(),
             "predicted": results.predicted.ravel(),
             "innovation": results.innovation.ravel(),

@@ -89,7 +89,7 @@ def _address(value: object) -> tuple[str, int]:
     return host.strip("[]"), int(port)
 
 
-def _nodes(value: object) -> dict[str, str]:
+def _nodes(value: object) -> Mapping[str, str]:
     if not isinstance(value, dict) or not value:
         raise RefusalError("")
     if not all(isinstance(item, str) and item.strip() for item in value.values()):
@@ -111,13 +111,15 @@ def _speed(value: object) -> float:
 
 TEXT: Kind[str] = Kind("a text", _word, "-")
 DATABASE_URL: Kind[str] = Kind(
-    'a database\'s address such as "sqlite:///records.db" or "postgresql+psycopg://user@host/name"', _word, "-"
+    'a database\'s address such as "sqlite:///records.db" or "postgresql+psycopg://user@host/name"',
+    _word,
+    "-",
 )
 ENDPOINT: Kind[str] = Kind('an address such as "opc.tcp://plant-server:4840"', _word, "opc.tcp://localhost:1")
 POLICY: Kind[str] = Kind('"Basic256Sha256" or "None"', _policy, "None")
 SWITCH: Kind[bool] = Kind("true or false", _switch, False)
 ADDRESS: Kind[tuple[str, int]] = Kind('host and port such as "127.0.0.1:8080"', _address, ("127.0.0.1", 1))
-NODES: Kind[dict[str, str]] = Kind(
+NODES: Kind[Mapping[str, str]] = Kind(
     'node ids by tag such as { FI2103 = "nsu=urn:example:plant;s=R210.FI2103" }', _nodes, {}
 )
 MICROSECONDS: Kind[int] = Kind("UTC microseconds since 1970, a whole number", _whole, 0)
@@ -218,5 +220,7 @@ def _unit(table: Table, path: Path) -> UnitSettings:
 def _clock(table: Table) -> ClockSettings:
     table.only("plant_start", "wall_start", "speed")
     return ClockSettings(
-        table.read("plant_start", MICROSECONDS), table.read("wall_start", MICROSECONDS), table.read("speed", SPEED)
+        table.read("plant_start", MICROSECONDS),
+        table.read("wall_start", MICROSECONDS),
+        table.read("speed", SPEED),
     )

@@ -9,15 +9,16 @@ import numpy as np
 
 from connectors.readings import Quality, Reading
 from plant_models.plant_model import PlantModel
+from plant_models.specification import UnitSpec
 from softsensor.cycle import UnitDesign
 from softsensor.estimation.lab_results import LabArrival
 from softsensor.estimation.past import CHUNK
-from softsensor.readings_of_cycle import CycleReadings
+from softsensor.readings_of_cycle import CycleQuality, CycleReadings
 from softsensor.records import blocks, storing
 from softsensor.records.engine import Database
 from softsensor.records.reader import lab_results_of
 from softsensor.records.writer import RecordsWriter
-from softsensor.service.assembly import AssemblyState, LiveAssembly
+from softsensor.service.assembly import AssemblyState, LiveAssembly, TagRule, rules_of
 from softsensor.service.checkpoints import FORMAT, Context, pack_state
 from softsensor.service.reading_rules import TagState
 from softsensor.service.recording import Step, pack_decisions, write_step
@@ -87,7 +88,10 @@ class UnitService:
     def decided_labs(self) -> list[tuple[int, LabArrival]]:
         """Results that were left out and that a person has since decided to use, with their place in the records."""
         return [
-            (row.id, LabArrival(self._lab_index[row.tag], row.tag, row.sampled_us, row.reported_us, row.value))
+            (
+                row.id,
+                LabArrival(self._lab_index[row.tag], row.tag, row.sampled_us, row.reported_us, row.value),
+            )
             for row in lab_results_of(self._database, self.identity.unit_id)
             if row.decided_by is not None and row.status == "used" and row.counted_cycle is None
         ]
@@ -190,10 +194,36 @@ class UnitService:
             self.next_time = max(first_cycle_time(now, self._sample_us), last + self._sample_us)
             return
         self.next_time = last + self._sample_us
-        inputs = tuple(
-            TagState(last, float(value), int(quality), last, last, float(value), min(int(quality), 1))
-            for value, quality in zip(seen.readings.u[-1], seen.readings.u_quality[-1], strict=True)
-        )
-        used = TagState(newest_time=last, used_time=last)
-        sensors = (used,) * self.design.kernel.n_sensors
-        self._assembly = LiveAssembly(self.model.spec, AssemblyState(last, inputs, sensors))
+        self._assembly = LiveAssembly(self.model.spec, held_values(self.model.spec, seen.readings))
+
+
+def held_values(spec: UnitSpec, last: CycleReadings) -> AssemblyState:
+    """What the assembly knew after the last recorded cycle, as far as the record tells.
+
+    Inputs hold their values, with the age that the record implies: a value that was too old stays too old. A sensor
+    reported on change holds its value too; any other has been used.
+    """
+    rules, time = rules_of(spec), int(last.times[-1])
+    inputs = tuple(
+        _held(time, float(value), int(quality), rule)
+        for value, quality, rule in zip(last.u[-1], last.u_quality[-1], rules.inputs, strict=True)
+    )
+    sensors = tuple(
+        TagState(newest_time=time, used_time=time)
+        if rule.counts_once
+        else _held(time, float(value), int(quality), rule)
+        for value, quality, rule in zip(last.y[-1], last.y_quality[-1], rules.sensors, strict=True)
+    )
+    return AssemblyState(time, inputs, sensors)
+
+
+def _held(time: int, value: float, quality: int, rule: TagRule) -> TagState:
+    if not np.isfinite(value):
+        return TagState(newest_time=time, used_time=time)
+    since = time - rule.max_age - 1 if quality == CycleQuality.STALE else time
+    usable = (
+        min(quality, int(CycleQuality.UNCERTAIN)) if quality <= CycleQuality.BAD else int(CycleQuality.GOOD)
+    )
+    return TagState(
+        since, value, quality if quality <= CycleQuality.BAD else usable, since, since, value, usable
+    )

@@ -1,0 +1,55 @@
+"""The command line: one file per command, one place that prints what went wrong."""
+
+from __future__ import annotations
+
+import sys
+
+import typer
+from click import ClickException
+from click.exceptions import Abort
+from click.exceptions import Exit as ClickExit
+
+from plant_models.errors import Problem
+from softsensor.cli import audit, check, db, demo, replay, run
+
+CAUTION = (
+    "Advisory only: estimates and flags are no safety function, no part of one and no basis for defeating one. "
+    "The program never writes to the control system. Thresholds, responses and return to service follow the site's "
+    "procedures, management of change, local codes and a licensed or otherwise authorised engineer."
+)
+
+app = typer.Typer(
+    name="softsensor",
+    help="Transfer functions and plant readings in; estimates with honest intervals and instrument fault flags out.",
+    epilog=CAUTION,
+    no_args_is_help=True,
+    pretty_exceptions_enable=False,
+    add_completion=False,
+    rich_markup_mode=None,
+)
+for command in (demo.demo, check.check, replay.replay, run.run):
+    app.command(epilog=CAUTION)(command)
+app.add_typer(db.app, name="db")
+app.add_typer(audit.app, name="audit")
+
+
+def main() -> None:
+    """Run a command; exit status 0 done, 1 the answer is no, 2 bad input."""
+    try:
+        status = app(standalone_mode=False)
+    except Problem as problem:
+        for line in problem.lines:
+            typer.echo(line, err=True)
+        sys.exit(2)
+    except ClickExit as left:
+        sys.exit(left.exit_code)
+    except ClickException as usage:
+        usage.show()
+        sys.exit(2)
+    except (Abort, KeyboardInterrupt):
+        sys.exit(130)
+    sys.exit(status if isinstance(status, int) else 0)
+
+
+if __name__ == "__main__":
+    main()

@@ -1,0 +1,122 @@
+"""``softsensor replay``: the live cycle over recorded data."""
+
+from __future__ import annotations
+
+import json as json_text
+from collections.abc import Iterator
+from pathlib import Path
+from typing import TYPE_CHECKING, Annotated, Literal
+
+import typer
+
+from softsensor.errors import ReplayError
+
+if TYPE_CHECKING:
+    from plant_models.plant_model import PlantModel
+    from softsensor.detection.flags import Note
+    from softsensor.service.replay import Replay, Stretch
+
+
+def replay(
+    model: Annotated[Path, typer.Argument(help="The model file (TOML).")],
+    history: Annotated[
+        str,
+        typer.Argument(help="CSV or Parquet with a time column; or the address of the records' database."),
+    ],
+    out: Annotated[
+        Path, typer.Option("--out", help="Folder for the result files; made where it is missing.")
+    ],
+    lab: Annotated[
+        Path | None, typer.Option("--lab", help="Late laboratory results (CSV or Parquet).")
+    ] = None,
+    format: Annotated[
+        Literal["csv", "parquet"], typer.Option("--format", help="Of the result files.")
+    ] = "csv",
+    timezone: Annotated[
+        str | None, typer.Option("--timezone", help="Zone of times that name none, such as Europe/Berlin.")
+    ] = None,
+    unit: Annotated[
+        str | None, typer.Option("--unit", help="With a database: the unit; by default the model's.")
+    ] = None,
+    start: Annotated[
+        str | None, typer.Option("--from", help="With a database: first time, ISO 8601; by default all.")
+    ] = None,
+    end: Annotated[str | None, typer.Option("--to", help="With a database: time after the last.")] = None,
+    json: Annotated[bool, typer.Option("--json", help="Print one JSON document and nothing else.")] = False,
+) -> None:
+    """Run a model over recorded data and write estimates, innovations, flags and a summary."""
+    from softsensor.service.result_files import ResultFiles
+    from softsensor.unit_design import load_model
+
+    plant_model = load_model(model)
+    if "://" in history:
+        running, notes, cycles = _from_database(plant_model, history, unit, start, end)
+        if lab is not None:
+            raise ReplayError(
+                "--lab: the records hold the laboratory results already; expected none with a database"
+            )
+    else:
+        running, notes, cycles = _from_files(plant_model, Path(history), lab, timezone)
+    running.totals.notes += notes
+    with ResultFiles(out, format, running.design) as files:
+        for stretch in _with_progress(running, cycles, quiet=json):
+            files.add(stretch)
+        summary = files.finish(running)
+    if json:
+        typer.echo(json_text.dumps(summary, ensure_ascii=False))
+    else:
+        _tell(summary, out)
+
+
+def _from_files(
+    model: PlantModel, history: Path, lab: Path | None, timezone: str | None
+) -> tuple[Replay, list[Note], int]:
+    from connectors.files import read_history, read_lab
+    from softsensor.recorded_data import lab_tags, prepare
+    from softsensor.service.assembly import rules_of
+
+    recorded = read_history(history, rules_of(model.spec).tags, timezone)
+    results = read_lab(lab, lab_tags(model), timezone) if lab is not None else None
+    running, notes = prepare(model, recorded, results)
+    span = (recorded.last_time - recorded.first_time) * 1e-6
+    return running, notes, int(span / model.spec.sample_time) + 1
+
+
+def _from_database(
+    model: PlantModel, url: str, unit: str | None, start: str | None, end: str | None
+) -> tuple[Replay, list[Note], int]:
+    from softsensor.recorded_data import prepare_from_records
+
+    return prepare_from_records(model, url, unit or model.spec.name, start, end)
+
+
+def _with_progress(running: Replay, cycles: int, quiet: bool) -> Iterator[Stretch]:
+    from rich.console import Console
+    from rich.progress import Progress
+
+    console = Console(stderr=True)
+    with Progress(console=console, disable=quiet or not console.is_terminal, transient=True) as progress:
+        task = progress.add_task("cycles", total=cycles)
+        for stretch in running.stretches():
+            progress.advance(task, len(stretch.results))
+            yield stretch
+
+
+def _tell(summary: dict[str, object], out: Path) -> None:
+    typer.echo(
+        f"{summary['unit']}: {summary['cycles']} cycles, {summary['flags']} flags; digest {summary['digest']}"
+    )
+    estimates = summary["estimates"]
+    assert isinstance(estimates, dict)
+    for tag, item in estimates.items():
+        if item["lab_count"]:
+            typer.echo(
+                f"{tag}: {item['lab_count']} laboratory results, rmsep {item['rmsep']:.4g}, bias {item['bias']:.3g}, "
+                f"coverage {item['coverage']:.0%}"
+            )
+    notes = summary["notes"]
+    assert isinstance(notes, list)
+    for note in notes:
+        typer.echo(f"note: {note}")
+    typer.echo(f"written to {out}")
+    typer.echo(str(summary["caution"]))

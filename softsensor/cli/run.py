@@ -1,0 +1,65 @@
+"""``softsensor run``: the service."""
+
+from __future__ import annotations
+
+import asyncio
+import contextlib
+import signal
+from pathlib import Path
+from typing import Annotated
+
+import typer
+
+
+def run(
+    site: Annotated[Path, typer.Argument(help="The site file (TOML).")],
+) -> None:
+    """Serve a site: OPC UA in, estimates and flags out, records, web page. Ends on Ctrl-C."""
+    from softsensor.service.site_file import read_site_file
+
+    settings = read_site_file(site)
+    asyncio.run(_serve(settings))
+
+
+async def _serve(settings: object) -> None:
+    from softsensor.cli.console import tell_news
+    from softsensor.composition import running_site
+    from softsensor.service.site_file import SiteSettings
+
+    assert isinstance(settings, SiteSettings)
+    stop = asyncio.Event()
+    _stop_on_signals(stop)
+    async with running_site(settings) as site:
+        if site.page is not None:
+            typer.echo(f"page: {site.page}")
+        typer.echo("running; Ctrl-C ends it. Advisory only: nothing is written to the control system.")
+        serving = asyncio.create_task(site.service.serve(), name="service")
+        telling = asyncio.create_task(tell_news(site.service.feed), name="console")
+        stopping = asyncio.create_task(stop.wait(), name="stop")
+        await asyncio.wait([serving, stopping], return_when=asyncio.FIRST_COMPLETED)
+        for task in (telling, stopping):
+            task.cancel()
+        if not serving.done():
+            serving.cancel()
+        try:
+            with contextlib.suppress(asyncio.CancelledError):
+                await serving
+        except* Exception as group:
+            raise _first(group) from None
+
+
+def _first(group: BaseExceptionGroup[BaseException]) -> BaseException:
+    error: BaseException = group
+    while isinstance(error, BaseExceptionGroup):
+        error = error.exceptions[0]
+    return error
+
+
+def _stop_on_signals(stop: asyncio.Event) -> None:
+    """Ctrl-C and a polite kill end the service in order; Windows has no signal handlers on the loop."""
+    loop = asyncio.get_running_loop()
+    for number in (signal.SIGINT, signal.SIGTERM):
+        try:
+            loop.add_signal_handler(number, stop.set)
+        except NotImplementedError:
+            signal.signal(number, lambda *_: loop.call_soon_threadsafe(stop.set))

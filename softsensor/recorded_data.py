@@ -1,0 +1,150 @@
+"""Recorded histories and laboratory results, from frames or files, through the live cycle."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Any
+
+import pandas as pd
+
+from connectors.files import history_from_frame, lab_from_frame
+from connectors.history import History
+from connectors.lab_results import LabResults, place_lab
+from plant_models.plant_model import PlantModel
+from softsensor.detection.flags import Note
+from softsensor.errors import ReplayError
+from softsensor.estimation.lab_results import LabArrival
+from softsensor.records.engine import open_database
+from softsensor.records.reader import find_unit
+from softsensor.records.series import cycles_between
+from softsensor.service.assembly import assemble_blocks, rules_of
+from softsensor.service.replay import Replay, horizon_of, parts_of
+from softsensor.service.result_tables import (
+    ESTIMATE_COLUMNS,
+    INNOVATION_COLUMNS,
+    estimate_table,
+    flag_table,
+    innovation_table,
+    lab_table,
+)
+from softsensor.service.resuming import recorded_cycles
+from softsensor.unit_design import design_unit
+
+BLOCK = 8192
+
+
+@dataclass(frozen=True)
+class ReplayResult:
+    """Tables with the columns of the result files, and the summary."""
+
+    estimates: pd.DataFrame
+    innovations: pd.DataFrame
+    flags: pd.DataFrame
+    lab_results: pd.DataFrame
+    summary: dict[str, Any]
+
+
+def lab_arrivals(model: PlantModel, lab: LabResults) -> list[LabArrival]:
+    """Laboratory results as the estimator takes them; results of tags that the model does not know are not here."""
+    index = {item.lab.tag: e for e, item in enumerate(model.spec.estimates) if item.lab is not None}
+    return [
+        LabArrival(
+            index[lab.tag(k)],
+            lab.tag(k),
+            int(lab.sampled_at[k]),
+            int(lab.reported_at[k]),
+            float(lab.values[k]),
+            float(lab.time_uncertainty[k]),
+        )
+        for k in range(len(lab))
+    ]
+
+
+def lab_tags(model: PlantModel) -> list[str]:
+    """Tags of laboratory results that the model names."""
+    return [item.lab.tag for item in model.spec.estimates if item.lab is not None]
+
+
+def prepare(model: PlantModel, history: History, lab: LabResults | None) -> tuple[Replay, list[Note]]:
+    """A replay of a history, with the laboratory results that it can see; the others are named in notes."""
+    notes: list[Note] = []
+    arrivals: list[LabArrival] = []
+    if lab is not None:
+        usable, remarks = place_lab(lab, history.first_time, history.last_time)
+        notes = [Note(history.first_time, "laboratory", text) for text in remarks]
+        arrivals = lab_arrivals(model, usable)
+    if history.ignored_columns:
+        names = ", ".join(history.ignored_columns)
+        notes.append(Note(history.first_time, "history", f"columns that the model does not know: {names}"))
+    parts = parts_of(assemble_blocks(model.spec, history, BLOCK), arrivals)
+    return Replay(design_unit(model), parts, horizon_of(arrivals)), notes
+
+
+def replay(
+    model: PlantModel, history: pd.DataFrame, lab: pd.DataFrame | None = None, timezone: str | None = None
+) -> ReplayResult:
+    """Run a model over a recorded history held in data frames.
+
+    :param history: a ``time`` column and one column per tag; optional ``<tag>.quality`` columns.
+    :param lab: columns sampled_at, reported_at, tag, value and, where known, time_uncertainty.
+    :raises ReplayError: no cycle lies within the history.
+    :raises HistoryFileError, LabFileError: a frame that cannot be used.
+    """
+    recorded = history_from_frame(history, rules_of(model.spec).tags, timezone)
+    results = lab_from_frame(lab, lab_tags(model), timezone) if lab is not None else None
+    running, notes = prepare(model, recorded, results)
+    running.totals.notes += notes
+    estimates, innovations = [], []
+    for stretch in running.stretches():
+        estimates.append(estimate_table(running.design, stretch.readings, stretch.results))
+        innovations.append(innovation_table(running.design, stretch.results))
+    if not estimates:
+        raise ReplayError("history: no cycle lies within it; expected at least one row at or after a cycle")
+    return ReplayResult(
+        _joined(estimates, ESTIMATE_COLUMNS),
+        _joined(innovations, INNOVATION_COLUMNS),
+        flag_table(list(running.totals.flags.values())),
+        lab_table(running.totals.labs),
+        running.totals.as_dict(running.digest),
+    )
+
+
+def _joined(tables: list[pd.DataFrame], columns: tuple[str, ...]) -> pd.DataFrame:
+    joined = pd.concat(tables, ignore_index=True)[list(columns)]
+    for name in ("tag", "status"):
+        if name in joined:
+            joined[name] = joined[name].astype(str)
+    return joined
+
+
+def prepare_from_records(
+    model: PlantModel, url: str, unit: str, start: str | None, end: str | None
+) -> tuple[Replay, list[Note], int]:
+    """A replay of a unit's recorded cycles, with the laboratory results as they arrived; and how many cycles it has.
+
+    Started at the first cycle of a revision it gives the digest of the live run.
+
+    :raises RecordsError: no such database or unit.
+    :raises ReplayError: no cycle is on record in the period.
+    """
+    with open_database(url) as database:
+        unit_id = find_unit(database, unit).id
+        period = (_moment(start, "--from", -(2**62)), _moment(end, "--to", 2**62))
+        cycles = cycles_between(database, unit_id, *period)
+        if not cycles:
+            raise ReplayError(f"{database.name}: no cycle of {unit} is on record in this period")
+        parts = recorded_cycles(database, unit_id, cycles.start, cycles.stop - 1)
+        running = Replay(design_unit(model), list(parts))
+    return running, [], len(cycles)
+
+
+def _moment(text: str | None, option: str, default: int) -> int:
+    if text is None:
+        return default
+    try:
+        moment = pd.Timestamp(text)
+    except ValueError:
+        raise ReplayError(f"{option}: {text!r}; expected a time such as 2026-12-01T08:00:00Z") from None
+    if moment.tz is None:
+        raise ReplayError(f"{option}: {text!r} names no time zone; expected Z or an offset")
+    return int(moment.tz_convert("UTC").value // 1000)
