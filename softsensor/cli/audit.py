@@ -9,7 +9,6 @@ from typing import Annotated
 
 import typer
 
-from plant_models.errors import Problem
 from softsensor.cli.db import DatabaseOption, JsonOption
 from softsensor.errors import RecordsError
 from softsensor.records import audit
@@ -40,14 +39,9 @@ def verify(
     cut its newest entries off, and adapt the count: keep the head somewhere else and hand it back with
     --expect-head.
     """
-    try:
-        head = _checked(expect_head)
-        with open_database(database) as opened:
-            report = audit.verify(opened, head)
-    except Problem as problem:
-        for line in problem.lines:
-            typer.echo(line, err=True)
-        raise typer.Exit(2) from None
+    head = _checked(expect_head)
+    with open_database(database) as opened:
+        report = audit.verify(opened, head)
     typer.echo(json_text.dumps(asdict(report)) if json else _in_words(report))
     raise typer.Exit(0 if report.whole else 1)
 

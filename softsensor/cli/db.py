@@ -7,7 +7,6 @@ from typing import Annotated
 
 import typer
 
-from plant_models.errors import Problem
 from softsensor.records.upgrade import upgrade_database
 
 app = typer.Typer(
@@ -36,12 +35,7 @@ def group() -> None:
 @app.command()
 def upgrade(database: DatabaseOption, json: JsonOption = False) -> None:
     """Make the database, or bring it to this release's revision; all of it or nothing."""
-    try:
-        applied = upgrade_database(database)
-    except Problem as problem:
-        for line in problem.lines:
-            typer.echo(line, err=True)
-        raise typer.Exit(2) from None
+    applied = upgrade_database(database)
     if json:
         typer.echo(json_text.dumps({"applied": applied}))
     elif applied:

@@ -28,8 +28,7 @@ class DatabaseAwayError(RecordsError):
 
 def shown(url: URL) -> str:
     """The address as it may be printed: without any password."""
-    query = {key: "***" if key in HIDDEN_QUERY_KEYS else value for key, value in url.query.items()}
-    return url.set(query=query).render_as_string(hide_password=True)
+    return url.difference_update_query(HIDDEN_QUERY_KEYS).render_as_string(hide_password=True)
 
 
 def without_secrets(text: str, url: URL) -> str:
