@@ -14,7 +14,6 @@ from typing import NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy import linalg
 
 from plant_models.errors import RealisationError
 from plant_models.specification import PathSpec
@@ -22,9 +21,6 @@ from plant_models.transfer_function import Polynomials, faults, poles, polynomia
 
 Vector = NDArray[np.float64]
 Matrix = NDArray[np.float64]
-
-_APART = 0.1
-"""Real poles at least this far apart, relatively, are realised in parallel; closer ones in companion form."""
 
 
 @dataclass(frozen=True)
@@ -143,50 +139,57 @@ def _polynomial(path: PathSpec) -> tuple[_System, bool]:
 
 
 def _rational(polynomial: Polynomials, roots: NDArray[np.complex128]) -> _System:
-    """A stable proper rational function with the given poles: in parallel if they allow it, or companion."""
-    numerator, denominator = polynomial
-    degree = denominator.size - 1
-    direct = float(numerator[0] / denominator[0]) if numerator.size == denominator.size else 0.0
-    if degree == 0:
-        return _System(np.zeros((0, 0)), np.zeros(0), np.zeros(0), direct)
-    if _real_and_apart(roots):
-        return _parallel(polynomial, roots.real, direct)
-    return _companion(polynomial, direct)
+    """A stable proper rational function as a chain of lags, from fast to slow, weighted in C.
 
+    With sections s_1 ... s_m of unit steady gain, one per real pole or pair of complex poles, ::
 
-def _real_and_apart(roots: NDArray[np.complex128]) -> bool:
-    if np.any(roots.imag != 0.0):
-        return False
-    values = np.sort(np.abs(roots.real))
-    return bool(np.all(np.diff(values) > _APART * values[1:]))
+        numerator/denominator = D + r_1/s_1 + r_2/(s_1 s_2) + ... + r_m/(s_1 ... s_m)
 
-
-def _parallel(polynomial: Polynomials, roots: Vector, direct: float) -> _System:
-    """Partial fractions over simple real poles p_i: x_i' = p_i (x_i - u), weights -residue_i/p_i in C."""
-    numerator, denominator = polynomial
-    differences = roots[:, None] - roots[None, :]
-    np.fill_diagonal(differences, 1.0)
-    residues = np.polyval(numerator, roots) / (denominator[0] * differences.prod(axis=1))
-    return _System(np.diag(roots), -roots, -residues / roots, direct)
-
-
-def _companion(polynomial: Polynomials, direct: float) -> _System:
-    """Companion form on the time scale of the mean (geometric) time constant, balanced by powers of two.
-
-    With s = sigma/scale the monic denominator in sigma ends in 1, so that the first state has unit gain.
+    where r_m is the remainder of dividing the numerator by s_m, r_(m-1) that of dividing the quotient by
+    s_(m-1), and so on. Poles may coincide or lie decades apart.
     """
     numerator, denominator = polynomial
-    degree = denominator.size - 1
-    scale = float((denominator[0] / denominator[-1]) ** (1.0 / degree))
-    powers = scale ** -np.arange(degree, -1.0, -1.0)
-    leading = denominator[0] * powers[0]
-    monic = denominator * powers / leading
-    padded = np.concatenate([np.zeros(denominator.size - numerator.size), numerator])
-    rest = (padded * powers / leading - direct * monic)[1:]
-    A = np.eye(degree, k=1)
-    A[-1] = -monic[:0:-1]
-    B = np.zeros(degree)
-    B[-1] = 1.0
-    balanced, (weights, _) = linalg.matrix_balance(A, permute=False, separate=True)
-    dynamics = np.asarray(balanced / scale, dtype=np.float64)
-    return _System(dynamics, B / weights / scale, rest[::-1] * weights, direct)
+    padded = np.concatenate([np.zeros(denominator.size - numerator.size), numerator]) / denominator[-1]
+    sections = sorted(roots[roots.imag >= 0.0], key=abs, reverse=True)
+    A, B = _chain(sections)
+    C, D = _weights(padded, sections)
+    return _System(A, B, C, D)
+
+
+def _chain(sections: list[complex]) -> tuple[Matrix, Vector]:
+    """A and B of lags in series. A real pole has its output y as its state, a pair has y and y'/|pole|."""
+    order = sum(2 if pole.imag else 1 for pole in sections)
+    A, B = np.zeros((order, order)), np.zeros(order)
+    start, before = 0, None
+    for pole in sections:
+        rate = abs(pole)
+        if pole.imag:
+            A[start : start + 2, start : start + 2] = [[0.0, rate], [-rate, 2.0 * pole.real]]
+        else:
+            A[start, start] = -rate
+        driven = start + (1 if pole.imag else 0)
+        if before is None:
+            B[driven] = rate
+        else:
+            A[driven, before] = rate
+        start, before = driven + 1, start
+    return A, B
+
+
+def _weights(numerator: Vector, sections: list[complex]) -> tuple[Vector, float]:
+    """C and D of a chain, ``numerator`` having as many coefficients as the chain has states, and one.
+
+    The slowest section is divided out first: division from the leading coefficient on is stable in the order of
+    increasing magnitude (Peters & Wilkinson 1971, on the practical problems of solving polynomial equations).
+    """
+    rest, weights = numerator.copy(), []
+    for pole in reversed(sections):
+        rate = abs(pole)
+        monic = [-2.0 * pole.real, rate**2] if pole.imag else [rate]
+        for k in range(rest.size - len(monic)):
+            rest[k + 1 : k + 1 + len(monic)] -= rest[k] * np.array(monic)
+        remainder = rest[rest.size - len(monic) :]
+        weights.append(remainder[::-1] * np.array([1.0, rate])[: len(monic)])
+        rest = rest[: rest.size - len(monic)] * monic[-1]
+    C = np.concatenate(weights[::-1]) if weights else np.zeros(0)
+    return C, float(rest[0])

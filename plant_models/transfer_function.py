@@ -161,7 +161,8 @@ def _strip(coefficients: Vector) -> Vector:
 def _roots(coefficients: Vector) -> ComplexVector:
     """Roots of a polynomial, found on a scaled axis so that minutes and hours are as accurate as seconds.
 
-    Roots at the origin are exact zeros, and each other root is polished by one Newton step.
+    Roots at the origin are exact zeros, and isolated roots are polished by a Newton step. Close ones are left alone:
+    each is uncertain, but together they reproduce the coefficients, and polishing one by one would spoil that.
     """
     origin = 0
     while coefficients.size > 1 and coefficients[-1] == 0.0:
@@ -172,9 +173,19 @@ def _roots(coefficients: Vector) -> ComplexVector:
     scale = abs(coefficients[0] / coefficients[-1]) ** (1.0 / degree)
     scaled = coefficients / coefficients[-1] * scale ** -np.arange(degree, -1.0, -1.0)
     found = np.roots(scaled).astype(np.complex128)
-    slope = np.polyval(np.polyder(scaled), found)
-    step = np.divide(np.polyval(scaled, found), slope, out=np.zeros_like(found), where=slope != 0.0)
-    polished = np.where(np.abs(step) < 1e-3 * np.abs(found), found - step, found)
-    better = np.abs(np.polyval(scaled, polished)) < np.abs(np.polyval(scaled, found))
-    found = np.where(better, polished, found)
+    found = np.where(_isolated(found), _polished(scaled, found), found)
     return np.concatenate([found / scale, np.zeros(origin, dtype=np.complex128)])
+
+
+def _isolated(roots: ComplexVector) -> NDArray[np.bool_]:
+    """Which roots are further from every other than a tenth of their own size."""
+    distances = np.abs(roots[:, None] - roots[None, :])
+    np.fill_diagonal(distances, np.inf)
+    return np.asarray(distances.min(axis=1) > 0.1 * np.abs(roots))
+
+
+def _polished(coefficients: Vector, roots: ComplexVector) -> ComplexVector:
+    """The roots after one Newton step each."""
+    slope = np.polyval(np.polyder(coefficients), roots)
+    values = np.polyval(coefficients, roots)
+    return np.asarray(roots - np.divide(values, slope, out=np.zeros_like(roots), where=slope != 0.0))

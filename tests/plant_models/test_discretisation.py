@@ -6,7 +6,7 @@ import math
 
 import numpy as np
 import pytest
-from hypothesis import given
+from hypothesis import given, settings
 from hypothesis import strategies as st
 from numpy.typing import NDArray
 from scipy.integrate import solve_ivp
@@ -89,6 +89,7 @@ def test_a_static_gain_acts_in_the_same_cycle() -> None:
     ]
 
 
+@settings(deadline=None)
 @given(st.floats(0.0, 5000.0), st.floats(0.1, 100.0))
 def test_a_dead_time_is_whole_samples_and_a_fraction(dead_time: float, sample_time: float) -> None:
     whole, fraction = split_dead_time(dead_time, sample_time)
@@ -107,6 +108,7 @@ def test_a_dead_time_typed_in_decimal_stays_whole(whole: int, sample_time: float
         assert split_dead_time(dead_time, sample_time) == (whole, 0.0)
 
 
+@settings(deadline=None)
 @given(st.floats(0.01, 0.99), st.floats(0.5, 30.0))
 def test_both_input_matrices_add_up_to_the_hold_without_dead_time(
     fraction: float, sample_time: float

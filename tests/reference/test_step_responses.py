@@ -1,7 +1,7 @@
 """Step responses against the analytic ones at the sampling instants, gains against python-control's.
 
-The formulas are inverse Laplace transforms of G(s)/s, as any control text has them (for instance Seborg, Edgar,
-Mellichamp, Process Dynamics and Control, on first- and second-order processes): MEMORY, derived again here.
+The formulas are inverse Laplace transforms of G(s)/s, as any control text has them (for instance Seborg,
+Edgar, Mellichamp, Process Dynamics and Control, on first- and second-order processes): MEMORY, derived here.
 """
 
 from __future__ import annotations
