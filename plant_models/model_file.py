@@ -17,7 +17,7 @@ from plant_models.model_paths import read_path
 from plant_models.model_sections import (
     read_disturbance,
     read_estimate,
-    read_false_flag_interval,
+    read_fault_tests,
     read_input,
     read_sensor,
     read_unit,
@@ -83,6 +83,7 @@ def _unit_spec(document: dict[str, Any], faults: FaultList, source: str) -> Unit
             brackets = f"[{section}]" if section == "unit" else f"at least one [[{section}]]"
             faults.add((section,), section, f"missing; expected {brackets}")
     name, title, sample_time = read_unit(unit if unit is not None else _empty_unit())
+    interval, leave_out = read_fault_tests(single(document, "fault_tests", faults))
     spec = UnitSpec(
         name=name,
         title=title,
@@ -92,7 +93,8 @@ def _unit_spec(document: dict[str, Any], faults: FaultList, source: str) -> Unit
         estimates=tuple(read_estimate(table) for table in named["estimate"]),
         disturbances=tuple(read_disturbance(table) for table in named["disturbance"]),
         paths=tuple(read_path(table) for table in paths),
-        false_flag_interval=read_false_flag_interval(single(document, "fault_tests", faults)),
+        false_flag_interval=interval,
+        leave_out_isolated=leave_out,
         source_text=source,
     )
     check_whole(named, paths, faults)

@@ -46,12 +46,13 @@ def read_unit(table: Table) -> tuple[str, str, float]:
     return name, title, table.read("sample_time", SAMPLE_TIME)
 
 
-def read_false_flag_interval(table: Table | None) -> float:
-    """Seconds between false flags."""
+def read_fault_tests(table: Table | None) -> tuple[float, bool]:
+    """Seconds between false flags, and whether a sensor named alone as faulty is left out of the estimate."""
     if table is None:
-        return FALSE_FLAG_INTERVAL
-    table.only("false_flag_interval")
-    return table.read_or("false_flag_interval", DURATION_ABOVE_ZERO, FALSE_FLAG_INTERVAL)
+        return FALSE_FLAG_INTERVAL, False
+    table.only("false_flag_interval", "leave_out_isolated")
+    interval = table.read_or("false_flag_interval", DURATION_ABOVE_ZERO, FALSE_FLAG_INTERVAL)
+    return interval, table.read_or("leave_out_isolated", FLAG, False)
 
 
 def read_input(table: Table) -> InputSpec:
