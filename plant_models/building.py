@@ -64,6 +64,10 @@ def _refuse_unsound(spec: UnitSpec) -> None:
         if path.target not in targets:
             found.append(f"{label(path)}: {path.target} is neither a sensor nor an estimate")
         found.extend(faults(path))
+    tags = {item.tag for item in spec.inputs}
+    for item in spec.disturbances:
+        if item.at_input is not None and item.at_input not in tags:
+            found.append(f"disturbance {item.name}: at_input names {item.at_input}, which is not an input")
     if found:
         raise RealisationError(*found)
 

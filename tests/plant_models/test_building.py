@@ -275,12 +275,13 @@ def test_every_unsound_path_is_named_at_once() -> None:
         PathSpec("feed", "S", numerator=(1.0,), denominator=(1.0, 0.0, 0.0)),
     )
     with pytest.raises(RealisationError) as caught:
-        build_plant_model(unit(WANDERING, paths=paths))
+        build_plant_model(unit(WANDERING, replace(AT_INPUT, at_input="W"), paths=paths))
     starts = [
         "U -> S: unstable",
         "U -> X: X is neither",
         "V -> E: V is neither",
         "feed -> S: more than one pole",
+        "disturbance leak: at_input names W",
     ]
     assert [line[: len(start)] for line, start in zip(caught.value.lines, starts, strict=True)] == starts
 
