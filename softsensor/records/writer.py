@@ -33,6 +33,8 @@ T = TypeVar("T")
 
 FIRST_PAUSE = 0.2
 LONGEST_PAUSE = 5.0
+CLOSING_PATIENCE = 30.0
+"""Seconds that leaving a ``with`` waits for a database that is away."""
 
 
 class WriterState(Enum):
@@ -145,16 +147,15 @@ class RecordsWriter:
     def close(self, timeout: float | None = None) -> None:
         """Write what waits, then end the thread.
 
-        :param timeout: seconds to wait for a database that is away; what waits then is given up.
+        :param timeout: seconds without anything being written after which what waits is given up; None: never.
         :raises RecordsError: the writer has failed, or gave works up; says how many are not on record.
         """
         with self._changed:
             self._closing = True
             self._changed.notify_all()
-            ended = self._changed.wait_for(self._over, timeout)
-            if not ended:
-                self._give_up = True
-                self._changed.notify_all()
+            while not self._over() and not self._give_up:
+                self._give_up = not self._progress(timeout)
+            self._changed.notify_all()
         self._thread.join()
         with self._changed:
             lost = len(self._queue)
@@ -172,11 +173,16 @@ class RecordsWriter:
         return self
 
     def __exit__(self, *exception: object) -> None:
-        self.close()
+        self.close(CLOSING_PATIENCE)
 
     def _may_enter(self) -> bool:
         over = self._closing or self._state in (WriterState.FAILED, WriterState.CLOSED)
         return over or len(self._queue) < self._capacity
+
+    def _progress(self, timeout: float | None) -> bool:
+        """Wait until something more is written, or nothing is left to; False when the time ran out."""
+        before = self._written
+        return self._changed.wait_for(lambda: self._over() or self._written > before, timeout)
 
     def _over(self) -> bool:
         return not self._queue or self._state is WriterState.FAILED
