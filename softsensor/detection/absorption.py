@@ -1,0 +1,133 @@
+"""How much of a constant sensor bias stays in the innovations once the filter has settled with it.
+
+A filter can swallow the fault that it should show. With a bias b (m,) on the sensors the settled
+innovation has mean::
+
+    (I - C (I - A + L C)^-1 L) b        L = A K the predictor gain
+
+For a walk that one sensor alone sees this is exactly zero: the drift is followed, the estimate goes wrong
+with it, and no test ever speaks. For one first-order state a it is (1 - a) / (1 - a (1 - K)) of the bias.
+Directions without a steady variance that no sensor sees are left out (they reach no innovation), constants
+are as good as known.
+"""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy.linalg import solve
+
+from plant_models.errors import RealisationError
+from plant_models.plant_model import PlantModel
+from softsensor.detection.run_length import average_run_length, decision_interval
+from softsensor.estimation.observability import owners
+from softsensor.estimation.steady_state import SteadyState, steady_state
+
+Matrix = NDArray[np.float64]
+
+LEAST_SHIFT = 0.02
+"""Innovation shifts below this many standard deviations count as absorbed, whatever the test."""
+
+
+@dataclass(frozen=True, slots=True)
+class SensorShift:
+    """What a bias the size of a sensor's tolerance leaves in that sensor's own innovation.
+
+    ``at_once`` and ``settled``: the innovation's mean in its standard deviations, at the onset and in the
+    end; ``absorbed``: no test that keeps the promise finds it; ``absorbed_by``: what takes up most of the
+    difference, a disturbance's name or an offset's, None where next to nothing is taken up.
+    """
+
+    tag: str
+    unit: str
+    bias: float
+    innovation_sd: float
+    at_once: float
+    settled: float
+    absorbed: bool
+    absorbed_by: str | None
+
+
+def settled_innovation(state: SteadyState, A: Matrix) -> Matrix:
+    """(m, m): column j is the settled mean of all innovations for a unit bias of sensor j.
+
+    :raises RealisationError: the filter forgets its errors too slowly for this to be computed.
+    """
+    return np.asarray(np.eye(state.rows.r.size) - state.rows.C @ settled_error(state, A), dtype=np.float64)
+
+
+def settled_error(state: SteadyState, A: Matrix) -> Matrix:
+    """(n, m): where the predicted state settles for a unit bias of each sensor, (I - A + L C)^-1 L."""
+    T = state.settling
+    if not state.stabilising:
+        raise RealisationError(
+            f"the settled filter does not forget its errors: spectral radius {state.spectral_radius:.17g}"
+        )
+    L, C = T.T @ state.L, state.rows.C @ T
+    matrix = np.eye(T.shape[1]) - T.T @ A @ T + L @ C
+    error = solve(matrix, L) if T.shape[1] else L
+    if T.shape[1]:
+        wrong = np.abs(matrix @ error - L).max(initial=0.0)
+        if wrong > 1e-8 * max(1.0, np.abs(L).max(initial=0.0)):
+            raise RealisationError("the settled innovation of a biased sensor cannot be computed soundly")
+    return np.asarray(T @ error, dtype=np.float64)
+
+
+def sensor_shifts(model: PlantModel) -> tuple[SensorShift, ...]:
+    """For each sensor, what a bias the size of its tolerance leaves in its innovation.
+
+    :raises RealisationError: the filter does not settle.
+    """
+    spec, part = model.spec, model.stochastic
+    state = steady_state(model)
+    error = settled_error(state, part.A)
+    remaining = settled_innovation(state, part.A)
+    cycles = spec.false_flag_interval / spec.sample_time
+    found = []
+    for i, sensor in enumerate(spec.sensors):
+        sd = math.sqrt(state.S[i, i])
+        settled = float(abs(remaining[i, i])) * sensor.tolerance / sd
+        found.append(
+            SensorShift(
+                sensor.tag,
+                sensor.unit,
+                sensor.tolerance,
+                sd,
+                sensor.tolerance / sd,
+                settled,
+                is_absorbed(settled, cycles),
+                _absorber(owners(part), part.C[i] * error[:, i])
+                if abs(1.0 - remaining[i, i]) > 0.05
+                else None,
+            )
+        )
+    return tuple(found)
+
+
+def is_absorbed(shift: float, promised: float) -> bool:
+    """Is a lasting innovation shift (in sd) beyond finding at a run length of ``promised`` cycles without
+    a fault?
+
+    It is when smaller than LEAST_SHIFT, or when the cumulative sum made for it (reference value half of it)
+    would on average take longer than the promised run length itself.
+
+    :raises RunLengthError: a promise that no test can keep.
+    """
+    if shift < LEAST_SHIFT:
+        return True
+    reference = min(0.5 * shift, 1.0)
+    interval = decision_interval(reference, promised)
+    return average_run_length(reference, interval, shift, two_sided=False) >= promised
+
+
+def _absorber(names: tuple[str, ...], taken: NDArray[np.float64]) -> str | None:
+    """The disturbance or offset whose states take up the largest part of a bias; ``taken`` per state."""
+    totals: dict[str, float] = {}
+    for name, part in zip(names, taken, strict=True):
+        totals[name] = totals.get(name, 0.0) + float(part)
+    if not totals:
+        return None
+    return max(totals, key=lambda name: totals[name])

@@ -1,0 +1,275 @@
+"""What a model file promises before anything runs: its paths, its sampling, what it can know, which faults
+it can find.
+"""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+
+import numpy as np
+
+from plant_models.plant_model import PlantModel
+from plant_models.specification import PathSpec
+from plant_models.transfer_function import dc_gain, is_integrating, poles, ramp_gain, zeros
+from softsensor.detection.absorption import SensorShift, sensor_shifts
+from softsensor.detection.run_length import average_run_length
+from softsensor.estimation.kernel import build_kernel
+from softsensor.estimation.observability import (
+    LEAST_GAIN,
+    DisturbanceKnowledge,
+    EstimateKnowledge,
+    disturbance_knowledge,
+    estimate_knowledge,
+)
+from softsensor.estimation.steady_state import SteadyState, steady_state
+from softsensor.unit_design import test_design
+
+CAUTION = (
+    "Advisory only: estimates and flags are no safety function, no part of one "
+    "and no basis for defeating one. "
+    "Whether a model may be used is for the site's procedures and a licensed or "
+    "otherwise authorised engineer."
+)
+SLOWEST_SAMPLING = 0.5
+"""Sample time over a path's slowest time constant above which the sampling is called too slow for that
+path.
+"""
+FASTEST_SAMPLING = 0.001
+"""... of the fastest path's slowest time constant below which a longer sample time would do as well."""
+
+
+@dataclass(frozen=True, slots=True)
+class PathReport:
+    """One transfer function: steady gain (per second where integrating), lags, dead time in seconds and
+    samples.
+    """
+
+    source: str
+    target: str
+    gain: float
+    integrating: bool
+    time_constants: tuple[float, ...]
+    """-1 / Re(pole) in seconds, longest first; an oscillating pair appears twice."""
+    oscillating: bool
+    inverse_response: bool
+    dead_time: float
+    dead_time_samples: float
+
+
+@dataclass(frozen=True, slots=True)
+class SamplingReport:
+    """Sample time against the dynamics; ratio: sample time over the fastest path's slowest time constant."""
+
+    sample_time: float
+    fastest: float | None
+    ratio: float | None
+    adequate: bool
+    advice: str
+
+
+@dataclass(frozen=True, slots=True)
+class SensorReport:
+    """What a bias the size of the tolerance leaves in a sensor's innovation, and the test that watches for
+    it.
+
+    ``delay``: mean time in seconds to a flag under the settled shift, sums at zero; None where it is
+    absorbed.
+    """
+
+    shift: SensorShift
+    reference: float
+    interval: float
+    delay: float | None
+
+
+@dataclass(frozen=True, slots=True)
+class SolutionReport:
+    """The proof that the settled filter is the right solution."""
+
+    states: int
+    spectral_radius: float
+    residual: float
+    stabilising: bool
+    unbounded: int
+
+
+@dataclass(frozen=True, slots=True)
+class ModelReport:
+    """All of it. ``sound``: the sensors add something to every estimate."""
+
+    unit: str
+    title: str
+    digest: str
+    false_flag_interval: float
+    paths: tuple[PathReport, ...]
+    sampling: SamplingReport
+    solution: SolutionReport
+    disturbances: tuple[DisturbanceKnowledge, ...]
+    estimates: tuple[EstimateKnowledge, ...]
+    sensors: tuple[SensorReport, ...]
+    warnings: tuple[str, ...]
+
+    @property
+    def sound(self) -> bool:
+        return all(estimate.sensors_help for estimate in self.estimates)
+
+
+def model_report(model: PlantModel) -> ModelReport:
+    """Work out the report.
+
+    :raises RealisationError: the filter does not settle.
+    :raises RunLengthError: a false-flag interval that no test can keep.
+    """
+    spec = model.spec
+    paths = tuple(_path(path, spec.sample_time) for path in spec.paths)
+    sampling = _sampling(paths, spec.sample_time)
+    disturbances, estimates = disturbance_knowledge(model), estimate_knowledge(model)
+    sensors = _sensors(model)
+    return ModelReport(
+        spec.name,
+        spec.title,
+        model.digest,
+        spec.false_flag_interval,
+        paths,
+        sampling,
+        _solution(steady_state(model)),
+        disturbances,
+        estimates,
+        sensors,
+        (
+            *_about_sampling(sampling),
+            *_about_disturbances(disturbances),
+            *_about_estimates(estimates),
+            *_about_sensors(model, sensors),
+        ),
+    )
+
+
+def _path(path: PathSpec, sample_time: float) -> PathReport:
+    roots = poles(path)
+    integrating = is_integrating(path)
+    lags = sorted((-1.0 / float(pole.real) for pole in roots if pole.real < 0.0), reverse=True)
+    return PathReport(
+        path.source,
+        path.target,
+        ramp_gain(path) if integrating else dc_gain(path),
+        integrating,
+        tuple(lags),
+        bool(np.any(np.abs(roots.imag) > 1e-6 * np.abs(roots))),
+        bool(np.any(zeros(path).real > 0.0)),
+        path.dead_time,
+        path.dead_time / sample_time,
+    )
+
+
+def _sampling(paths: tuple[PathReport, ...], sample_time: float) -> SamplingReport:
+    """Judge the sample time by each path's slowest lag; the hold itself is exact at any sample time."""
+    slowest = [path.time_constants[0] for path in paths if path.time_constants]
+    if not slowest:
+        return SamplingReport(sample_time, None, None, True, "no path has a time constant")
+    fastest = min(slowest)
+    ratio = sample_time / fastest
+    if ratio > SLOWEST_SAMPLING:
+        advice = f"too slow for the fastest path: {duration_text(0.2 * fastest)} or less would follow it"
+        return SamplingReport(sample_time, fastest, ratio, False, advice)
+    if ratio < FASTEST_SAMPLING:
+        advice = f"faster than needed: {duration_text(0.05 * fastest)} would follow every path as well"
+        return SamplingReport(sample_time, fastest, ratio, True, advice)
+    return SamplingReport(sample_time, fastest, ratio, True, "follows every path")
+
+
+def duration_text(seconds: float) -> str:
+    """Three significant digits in the unit that suits.
+
+    >>> duration_text(93.0), duration_text(1.5 * 86400.0)
+    ('1.55 min', '1.5 d')
+    """
+    for unit, size in (("d", 86400.0), ("h", 3600.0), ("min", 60.0)):
+        if seconds >= size:
+            return f"{seconds / size:.3g} {unit}"
+    return f"{seconds:.3g} s"
+
+
+def _solution(state: SteadyState) -> SolutionReport:
+    return SolutionReport(
+        state.P_prior.shape[0],
+        state.spectral_radius,
+        state.residual,
+        state.stabilising,
+        state.unbounded.shape[1],
+    )
+
+
+def _sensors(model: PlantModel) -> tuple[SensorReport, ...]:
+    design = test_design(model, build_kernel(model))
+    found = []
+    for i, shift in enumerate(sensor_shifts(model)):
+        reference, interval = float(design.reference[i]), float(design.interval[i])
+        delay = None
+        if not shift.absorbed:
+            cycles = average_run_length(reference, interval, shift.settled, clip=design.clip)
+            delay = cycles * model.spec.sample_time
+        found.append(SensorReport(shift, reference, interval, delay))
+    return tuple(found)
+
+
+def _about_sampling(sampling: SamplingReport) -> list[str]:
+    return [] if sampling.adequate else [f"the sample time is {sampling.advice}"]
+
+
+def _about_disturbances(disturbances: tuple[DisturbanceKnowledge, ...]) -> list[str]:
+    return [
+        f"disturbance {item.name}: the sensors take less than {LEAST_GAIN:.0%} off its standard deviation"
+        for item in disturbances
+        if not item.observable
+    ]
+
+
+def _about_estimates(estimates: tuple[EstimateKnowledge, ...]) -> list[str]:
+    lines = []
+    for item in estimates:
+        if not item.sensors_help:
+            lines.append(
+                f"{item.tag}: the sensors take less than {LEAST_GAIN:.0%} off its standard "
+                f"deviation: no unmeasured "
+                "disturbance ties it to them, so for this variable the file describes no soft sensor"
+            )
+        if math.isinf(item.sd_with_sensors):
+            lines.append(
+                f"{item.tag}: its standard deviation grows without limit: a disturbance that "
+                f"walks is not seen"
+            )
+        elif item.own_offset and item.lab is None:
+            lines.append(
+                f"{item.tag}: its offset (bias_walk_sd) makes its standard deviation grow "
+                f"without limit, and no "
+                "laboratory results bound it"
+            )
+    return lines
+
+
+def _about_sensors(model: PlantModel, sensors: tuple[SensorReport, ...]) -> list[str]:
+    lines = []
+    for spec, item in zip(model.spec.sensors, sensors, strict=True):
+        if spec.bias_walk_sd > 0.0:
+            lines.append(
+                f"{spec.tag}: bias_walk_sd makes the filter follow this sensor's drift, so "
+                f"that no test can find it: "
+                "offset-free estimation and drift detection conflict; offsets belong to the "
+                "estimate's bias and to "
+                "laboratory results"
+            )
+        elif item.shift.absorbed:
+            lines.append(
+                f"{spec.tag}: a lasting bias of its tolerance is absorbed by "
+                f"{item.shift.absorbed_by}: only its onset "
+                "shows, and the estimates go wrong with it"
+            )
+        elif item.delay is not None and item.delay > 0.1 * model.spec.false_flag_interval:
+            lines.append(
+                f"{spec.tag}: a lasting bias of its tolerance leaves "
+                f"{item.shift.settled:.2g} sd; a flag takes "
+                f"{duration_text(item.delay)} on average once the filter has settled with it"
+            )
+    return lines
