@@ -7,6 +7,7 @@ and changes nothing that it is given.
 from __future__ import annotations
 
 import hashlib
+from collections.abc import Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -15,7 +16,7 @@ from numpy.typing import NDArray
 from plant_models.errors import Problem
 from plant_models.plant_model import PlantModel
 from softsensor.compiled_cycle import BlockInputs, BlockOutputs, empty_outputs, run_block
-from softsensor.detection.fault_tests import LOOK, TestState, initial_tests
+from softsensor.detection.fault_tests import TestState, initial_tests
 from softsensor.detection.flags import Flag, FlagBook, Note
 from softsensor.detection.follow_up import DetectionDesign, FollowUp, Moment, follow_up
 from softsensor.estimation.kernel import EstimatorState, Floats, Ints, Kernel, initial_state
@@ -132,6 +133,25 @@ class CycleResults:
 
     def __len__(self) -> int:
         return len(self.times)
+
+
+ROW_FIELDS = (
+    "times", "reading", "estimate", "sd", "status", "predicted", "innovation", "innovation_sd", "used", "left_out",
+    "high", "low",
+)  # fmt: skip
+
+
+def join_results(parts: Sequence[CycleResults]) -> CycleResults:
+    """The results of consecutive stretches as one; flags and notes in order."""
+    rows = {name: np.concatenate([getattr(part, name) for part in parts]) for name in ROW_FIELDS}
+    return CycleResults(
+        first=parts[0].first,
+        **rows,
+        lab_predicted=np.concatenate([part.lab_predicted for part in parts]),
+        lab_sd=np.concatenate([part.lab_sd for part in parts]),
+        flags=tuple(flag for part in parts for flag in part.flags),
+        notes=tuple(note for part in parts for note in part.notes),
+    )
 
 
 def start(design: UnitDesign, first_cycle: int = 0) -> CycleState:
@@ -276,7 +296,7 @@ def _results(
 def estimate_status(
     design: UnitDesign, readings: CycleReadings, estimate: Floats, use: Ints
 ) -> NDArray[np.int8]:
-    """1 (Uncertain) where an input is old, bad or Uncertain, something lies outside its validated range, or a sensor is left out."""
+    """1 (Uncertain) where an input is doubtful, something is outside its validated range, or a sensor is left out."""
     n, spec = len(estimate), design.model.spec
     doubtful = np.any(readings.u_quality[:n] != CycleQuality.GOOD, axis=1) | np.any(use == 0, axis=1)
     for j, item in enumerate(spec.inputs):
@@ -322,6 +342,3 @@ def _flag_bytes(flag: Flag) -> bytes:
     sizes = np.array([flag.size, flag.size_sd, flag.probability], dtype="<f8")
     text = "\x1f".join((flag.flag, flag.tag, flag.kind, *flag.group))
     return text.encode() + times.tobytes() + sizes.tobytes()
-
-
-__all__ = ["LOOK", "CycleResults", "CycleState", "UnitDesign", "rerun", "run_cycles", "start"]

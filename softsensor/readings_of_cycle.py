@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 from enum import IntEnum
 
@@ -47,3 +48,14 @@ class CycleReadings:
 
     def __len__(self) -> int:
         return int(self.times.shape[0])
+
+
+def join_readings(parts: Sequence[CycleReadings]) -> CycleReadings:
+    """The readings of consecutive stretches as one."""
+    return CycleReadings(
+        np.concatenate([part.times for part in parts]),
+        np.concatenate([part.u for part in parts]),
+        np.concatenate([part.u_quality for part in parts]),
+        np.concatenate([part.y for part in parts]),
+        np.concatenate([part.y_quality for part in parts]),
+    )

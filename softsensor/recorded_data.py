@@ -18,7 +18,7 @@ from softsensor.records.engine import open_database
 from softsensor.records.reader import find_unit
 from softsensor.records.series import cycles_between
 from softsensor.service.assembly import assemble_blocks, rules_of
-from softsensor.service.replay import Replay, horizon_of, parts_of
+from softsensor.service.replay import Replay, gathered, horizon_of, parts_of
 from softsensor.service.result_tables import (
     ESTIMATE_COLUMNS,
     INNOVATION_COLUMNS,
@@ -95,7 +95,7 @@ def replay(
     running, notes = prepare(model, recorded, results)
     running.totals.notes += notes
     estimates, innovations = [], []
-    for stretch in running.stretches():
+    for stretch in gathered(running.stretches()):
         estimates.append(estimate_table(running.design, stretch.readings, stretch.results))
         innovations.append(innovation_table(running.design, stretch.results))
     if not estimates:

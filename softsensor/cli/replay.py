@@ -94,10 +94,12 @@ def _with_progress(running: Replay, cycles: int, quiet: bool) -> Iterator[Stretc
     from rich.console import Console
     from rich.progress import Progress
 
+    from softsensor.service.replay import gathered
+
     console = Console(stderr=True)
     with Progress(console=console, disable=quiet or not console.is_terminal, transient=True) as progress:
         task = progress.add_task("cycles", total=cycles)
-        for stretch in running.stretches():
+        for stretch in gathered(running.stretches()):
             progress.advance(task, len(stretch.results))
             yield stretch
 

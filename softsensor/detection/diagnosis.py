@@ -23,7 +23,7 @@ from softsensor.detection.signatures import Hypothesis
 from softsensor.estimation.kernel import Floats, Ints
 
 NAMING_RATIO = 10.0
-"""A single name is given only when it is this many times as probable as any other explanation."""
+"""A single name is given only when it is this many times as probable as all other explanations together."""
 
 
 class Likelihoods(NamedTuple):
@@ -142,7 +142,8 @@ def judge(suspects: tuple[Hypothesis, ...], found: Likelihoods, temper: float = 
     total = sum(weights.values())
     names = sorted(weights, key=lambda name: -weights[name])
     first = weights[names[0]]
-    group = tuple(name for name in names if weights[name] * NAMING_RATIO > first)
+    alone = first >= NAMING_RATIO * (total - first)
+    group = tuple(names[:1]) if alone else tuple(name for name in names if weights[name] * NAMING_RATIO > first)
     return Verdict(
         tuple(names),
         tuple(weights[name] / total for name in names),

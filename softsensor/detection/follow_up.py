@@ -116,7 +116,10 @@ def _simple_faults(
         (fault_tests.STUCK, "stuck", int(tests.repeats[sensor])),
         (fault_tests.SPIKE, "spike", 1),
     )
+    shifted = outcome.book.find(tag, SHIFT_KINDS) is not None
     for bit, kind, ago in starts:
+        if kind == "spike" and shifted:
+            continue
         if bits & bit and outcome.book.find(tag, (kind,)) is None:
             onset = moment.time - ago * design.sample_us
             outcome = _opened(outcome, _certain(design, tag, kind, onset, moment))
@@ -195,7 +198,7 @@ def _act(design: DetectionDesign, outcome: FollowUp, tests: TestState, moment: M
     waited = moment.cycle - episode.since if episode is not None else 0
     suspect = design.suspects[verdict.best] if verdict.best >= 0 else None
     if suspect is not None and suspect.source != "disturbance":
-        named = len(verdict.group) == 1
+        named = verdict.probabilities[0] * (NAMING_RATIO + 1.0) >= NAMING_RATIO
         size = abs(_present_size(suspect, found, verdict.best)[0])
         worth = suspect.source != "sensor" or size > design.model.spec.sensors[suspect.index].tolerance
         certain = verdict.instrument * (NAMING_RATIO + 1.0) > NAMING_RATIO

@@ -18,6 +18,7 @@ import numpy as np
 from numba import njit
 
 from plant_models.plant_model import PlantModel
+from plant_models.specification import Range
 from softsensor.estimation.input_driven import accept_inputs, advance_input_driven, input_driven_outputs
 from softsensor.estimation.kalman import correct, predict, row_covariance, row_mean
 from softsensor.estimation.kernel import EstimatorState, Floats, Ints, Kernel, initial_state
@@ -193,14 +194,18 @@ def input_error_signal(kernel: Kernel, state: EstimatorState, index: int, window
     return out
 
 
+def _width(limits: Range) -> float:
+    return limits[1] - limits[0]
+
+
 def _sizes(model: PlantModel, window: int) -> list[tuple[Source, int, str, float]]:
-    """Every suspect with a plausible size of its error: three tolerances, three sd, five per cent of an input's range."""
+    """Every suspect with a plausible size of its error: three tolerances, three sd, a tenth of an input's working range."""
     hours = window * model.spec.sample_time / 3600.0
     suspects: list[tuple[Source, int, str, float]] = [
         ("sensor", i, item.tag, 3.0 * item.tolerance) for i, item in enumerate(model.spec.sensors)
     ]
     suspects += [
-        ("input", i, item.tag, 0.05 * (item.range[1] - item.range[0]))
+        ("input", i, item.tag, 0.1 * _width(item.validated_range) if item.validated_range else 0.03 * _width(item.range))
         for i, item in enumerate(model.spec.inputs)
     ]
     for i, item in enumerate(model.spec.disturbances):

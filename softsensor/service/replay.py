@@ -7,10 +7,10 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from softsensor.cycle import CycleResults, UnitDesign, start
+from softsensor.cycle import CycleResults, UnitDesign, join_results, start
 from softsensor.estimation.lab_results import LabArrival, LabOutcome
 from softsensor.estimation.past import Past
-from softsensor.readings_of_cycle import CycleReadings
+from softsensor.readings_of_cycle import CycleReadings, join_readings
 from softsensor.service.summary import RunSummary
 from softsensor.service.unit_run import UnitRun, slice_readings
 
@@ -80,3 +80,27 @@ def parts_of(blocks: Iterable[CycleReadings], labs: Iterable[LabArrival]) -> Ite
 def horizon_of(labs: Iterable[LabArrival]) -> float:
     """The longest way back of these results, in seconds."""
     return max(((lab.arrived - lab.sampled) * 1e-6 for lab in labs), default=0.0)
+
+
+def gathered(stretches: Iterable[Stretch], rows: int = 8192) -> Iterator[Stretch]:
+    """The same cycles in longer stretches: tables cost by the piece."""
+    waiting: list[Stretch] = []
+    count = 0
+    for stretch in stretches:
+        waiting.append(stretch)
+        count += len(stretch.results)
+        if count >= rows:
+            yield _joined(waiting)
+            waiting, count = [], 0
+    if waiting:
+        yield _joined(waiting)
+
+
+def _joined(parts: list[Stretch]) -> Stretch:
+    if len(parts) == 1:
+        return parts[0]
+    return Stretch(
+        join_readings([part.readings for part in parts]),
+        join_results([part.results for part in parts]),
+        tuple(lab for part in parts for lab in part.labs),
+    )

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import itertools
 from collections.abc import Iterator
 from dataclasses import dataclass
 
@@ -96,6 +97,6 @@ def recorded_cycles(
     for block in series.readings(database, unit_id, first, last):
         starts = [k for k, blob in enumerate(block.decisions) if blob]
         cuts = sorted({0, *starts, len(block)})
-        for begin, end in zip(cuts[:-1], cuts[1:], strict=True):
+        for begin, end in itertools.pairwise(cuts):
             arrivals = unpack_decisions(block.decisions[begin])
             yield slice_readings(block.readings, begin, end), arrivals

@@ -1,0 +1,167 @@
+"""``softsensor demo``: the whole job on this machine."""
+
+from __future__ import annotations
+
+import asyncio
+import contextlib
+import shutil
+import socket
+import tempfile
+import time
+from pathlib import Path
+from typing import TYPE_CHECKING, Annotated
+
+import typer
+
+from plant_models.durations import parse_duration
+from plant_models.errors import Problem, UnitError
+
+if TYPE_CHECKING:
+    from connectors.opcua.tag_server import TagServer
+    from plant_models.plant_model import PlantModel
+    from softsensor.demonstration.plant_side import Truth
+    from softsensor.service.clock import ScaledClock
+
+MODEL = "jacketed_reactor"
+LEAD = 10.0
+"""Seconds on the wall between the service's start and the plant's."""
+PREFERRED_PORT = 8080
+
+
+class DemoError(Problem):
+    """The demonstration cannot go on."""
+
+
+def demo(
+    duration: Annotated[
+        str | None,
+        typer.Option("--duration", help='Plant time after which it ends, such as "8 h"; else on Ctrl-C.'),
+    ] = None,
+    speed: Annotated[
+        float, typer.Option("--speed", help="How much faster than the wall's the plant's time runs.")
+    ] = 240.0,
+    folder: Annotated[
+        Path | None,
+        typer.Option(
+            "--folder", help="Where model, site file and records go; by default a temporary folder."
+        ),
+    ] = None,
+) -> None:
+    """Show the whole job on this machine: a simulated plant behind a real OPC UA server, and everything it takes.
+
+    Live estimates of a concentration without an instrument, a swing of the feed, a drifting thermometer that is
+    found and named, late laboratory results and a mis-timed one, records with an audit trail, the web page.
+    """
+    seconds = _seconds(duration)
+    if not 0.0 < speed <= 1000.0:
+        raise DemoError(f"--speed: {speed:g}; expected a number above 0 and up to 1000")
+    where = Path(tempfile.mkdtemp(prefix="softsensor-demo-")) if folder is None else folder
+    where.mkdir(parents=True, exist_ok=True)
+    if (where / "records.db").exists():
+        raise DemoError(f"--folder: {where} holds records of an earlier run; expected an empty folder")
+    asyncio.run(_demo(where, seconds, speed))
+
+
+def _seconds(duration: str | None) -> float | None:
+    if duration is None:
+        return None
+    try:
+        seconds = parse_duration(duration)
+    except UnitError as error:
+        raise DemoError(*(f"--duration: {line}" for line in error.lines)) from None
+    if seconds < 60.0:
+        raise DemoError(f"--duration: {duration!r}; expected at least one minute")
+    return seconds
+
+
+def _prepare(where: Path) -> PlantModel:
+    """The model file and an upgraded database in the folder; the compiled loop warmed up."""
+    from plant_models.library import published_model_path
+    from softsensor.demonstration.report import warm_up
+    from softsensor.records.upgrade import upgrade_database
+    from softsensor.unit_design import load_model
+
+    shutil.copyfile(published_model_path(MODEL), where / "r210.toml")
+    model = load_model(where / "r210.toml")
+    upgrade_database(f"sqlite:///{(where / 'records.db').as_posix()}")
+    typer.echo("preparing (the first time on a machine this compiles for about half a minute)")
+    warm_up(model)
+    return model
+
+
+def _free_port(preferred: int = 0) -> int:
+    with socket.socket() as probe:
+        try:
+            probe.bind(("127.0.0.1", preferred))
+        except OSError:
+            probe.bind(("127.0.0.1", 0))
+        port: int = probe.getsockname()[1]
+        return port
+
+
+async def _demo(where: Path, seconds: float | None, speed: float) -> None:
+    from connectors.opcua.tag_server import TagServer
+    from softsensor.demonstration.plant_side import NAMESPACE, Truth, demo_tank, served_tags
+    from softsensor.service.clock import ScaledClock
+
+    model = _prepare(where)
+    wall = time.time_ns() // 1000
+    step = round(model.spec.sample_time * 1e6)
+    clock = ScaledClock(wall // step * step, wall + round(LEAD * 1e6), speed)
+    until = None if seconds is None else clock.plant_start + round(seconds * 1e6) // step * step
+    truth, tank = Truth(), demo_tank(clock.plant_start)
+    async with TagServer(f"opc.tcp://127.0.0.1:{_free_port()}", NAMESPACE, served_tags(model)) as server:
+        site_file = _write_site(where, model, server, clock)
+        await _run(site_file, server, (tank, clock, until, truth), where, model)
+
+
+def _write_site(where: Path, model: PlantModel, server: TagServer, clock: ScaledClock) -> Path:
+    from softsensor.demonstration.service_side import site_text
+
+    ports = (_free_port(), _free_port(PREFERRED_PORT))
+    site_file = where / "site.toml"
+    site_file.write_text(site_text(model, where / "r210.toml", server, clock, ports), encoding="utf-8")
+    typer.echo(f"folder: {where}")
+    return site_file
+
+
+async def _run(site_file: Path, server: TagServer, plant: tuple, where: Path, model: PlantModel) -> None:
+    from softsensor.demonstration.plant_side import run_plant
+    from softsensor.demonstration.service_side import ServiceProcess
+
+    tank, clock, until, truth = plant
+    service = ServiceProcess(site_file, typer.echo)
+    serving = asyncio.create_task(service.keep_running(), name="service")
+    running = asyncio.create_task(run_plant(server, tank, clock, until, truth), name="plant")
+    try:
+        await asyncio.wait([serving, running], return_when=asyncio.FIRST_COMPLETED)
+        if serving.done():
+            raise DemoError(f"the demonstration cannot go on: {serving.exception()}")
+        running.result()
+        await asyncio.sleep(3.0)
+    except asyncio.CancelledError:
+        typer.echo("ending")
+    finally:
+        for task in (serving, running):
+            task.cancel()
+        with contextlib.suppress(asyncio.CancelledError, RuntimeError):
+            await serving
+        await service.stop()
+    _report(where, model, truth, tank.start, service.restarts)
+
+
+def _report(where: Path, model: PlantModel, truth: Truth, start: int, restarts: int) -> None:
+    from plant_models.simulators.scenario import DemoScenario
+    from softsensor.demonstration.report import make_report, report_lines
+    from softsensor.records.engine import open_database
+
+    url = f"sqlite:///{(where / 'records.db').as_posix()}"
+    with open_database(url) as database:
+        report = make_report(database, model, truth, restarts)
+    for line in report_lines(report, DemoScenario(), start):
+        typer.echo(line)
+    typer.echo(f"Records: {url}")
+    typer.echo(
+        f"The same again from the records: softsensor replay {where / 'r210.toml'} {url} --out results"
+    )
+    typer.echo("Advisory only: no safety function, no part of one, and no basis for defeating one.")

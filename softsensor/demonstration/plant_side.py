@@ -1,0 +1,65 @@
+"""The plant's side of the demonstration: a simulated reactor on a faster clock, served over OPC UA."""
+
+from __future__ import annotations
+
+import asyncio
+from dataclasses import dataclass, field
+
+from connectors.opcua.analog_item import EngineeringUnit
+from connectors.opcua.tag_server import ServedTag, TagServer
+from plant_models.plant_model import PlantModel
+from plant_models.simulators.reactor_plant import LabResult, StirredTank
+from plant_models.simulators.scenario import DemoScenario
+from plant_models.units import engineering_units
+from softsensor.service.clock import Clock, wait_until
+
+NAMESPACE = "urn:example:plant"
+
+
+@dataclass
+class Truth:
+    """What the simulator knows and no instrument shows: times in UTC microseconds, concentrations in mol/L."""
+
+    times: list[int] = field(default_factory=list)
+    values: list[float] = field(default_factory=list)
+    labs: list[LabResult] = field(default_factory=list)
+
+
+def served_tags(model: PlantModel) -> list[ServedTag]:
+    """Every tag that the model reads, with its unit and range, and the laboratory's."""
+    spec = model.spec
+    tags = [(item.tag, item.unit, item.range) for item in (*spec.inputs, *spec.sensors)]
+    tags += [(item.lab.tag, item.unit, item.range) for item in spec.estimates if item.lab is not None]
+    served = []
+    for tag, unit, limits in tags:
+        _, unit_id, display = engineering_units(unit)
+        served.append(ServedTag(tag, spec.name, EngineeringUnit(display, unit_id), limits, "simulated"))
+    return served
+
+
+async def run_plant(
+    server: TagServer, tank: StirredTank, clock: Clock, until: int | None, truth: Truth
+) -> None:
+    """Serve the plant's readings at their times until a plant time, or until cancelled."""
+    step = round(tank.scenario.sample_time * 1e6)
+    moment = tank.start
+    reported = tank.start - 1
+    while until is None or moment <= until:
+        tank.advance(moment)
+        if moment > tank.start:
+            await wait_until(clock, moment)
+        for reading in tank.readings_now:
+            await server.write(reading.tag, reading.value, reading.time, reading.status)
+        truth.times.append(moment)
+        truth.values.append(tank.truth.product)
+        for lab in tank.lab_results(reported):
+            await server.write(lab.tag, lab.value, lab.sampled_at, 0)
+            truth.labs.append(lab)
+        reported = moment
+        moment += step
+        await asyncio.sleep(0)
+
+
+def demo_tank(start: int) -> StirredTank:
+    """The reactor with the demonstration's story, from a plant time on."""
+    return StirredTank(DemoScenario().scenario(), start)
