@@ -37,7 +37,6 @@ class PostgresServer:
         self.folder = Path(tempfile.mkdtemp(prefix="softsensor-pg-"))
         if self._identity:
             os.chown(self.folder, self._identity["user"], self._identity["group"])
-        self._run("initdb", "-D", "data", "-U", "softsensor", "-A", "trust", "-E", "UTF8", "--no-sync")
 
     @property
     def url(self) -> URL:
@@ -46,7 +45,9 @@ class PostgresServer:
         return URL.create("postgresql+psycopg", "softsensor", database="postgres", query=query)
 
     def start(self) -> None:
-        """Start the server and wait until it takes connections."""
+        """Start the server, made the first time, and wait until it takes connections."""
+        if not (self.folder / "data").exists():
+            self._run("initdb", "-D", "data", "-U", "softsensor", "-A", "trust", "-E", "UTF8", "--no-sync")
         options = f"-c listen_addresses= -c unix_socket_directories={self.folder} -c fsync=off"
         self._run("pg_ctl", "-D", "data", "-l", "server.log", "-o", options, "-w", "start")
 

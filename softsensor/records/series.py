@@ -8,7 +8,7 @@ from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
-from sqlalchemy import Row, Select, func, select
+from sqlalchemy import Row, Select, select
 
 from softsensor.readings_of_cycle import CycleReadings
 from softsensor.records.blocks import (
@@ -39,20 +39,24 @@ class TimedResults:
 
 
 def cycles_between(database: Database, unit_id: int, from_us: int, to_us: int) -> range:
-    """The numbers of the cycles on record at ``from_us <= time < to_us``; empty where there is none."""
-    query = select(func.min(cycles.c.cycle), func.max(cycles.c.cycle)).where(
+    """From the first to the last cycle on record at ``from_us <= time < to_us``; empty where there is none.
+
+    Cycle numbers grow with time; a number in the range may be missing on record.
+    """
+    inside = select(cycles.c.cycle).where(
         cycles.c.unit_id == unit_id, cycles.c.time_us >= from_us, cycles.c.time_us < to_us
     )
     with database.read() as connection:
-        first, last = connection.execute(query).one()
-    return range(0) if first is None else range(first, last + 1)
+        first = connection.execute(inside.order_by(cycles.c.time_us).limit(1)).scalar_one_or_none()
+        last = connection.execute(inside.order_by(cycles.c.time_us.desc()).limit(1)).scalar_one_or_none()
+    return range(0) if first is None or last is None else range(first, last + 1)
 
 
 def latest_cycle(database: Database, unit_id: int) -> int | None:
     """The number of the newest cycle whose readings are on record; None before the first."""
-    query = select(func.max(cycles.c.cycle)).where(cycles.c.unit_id == unit_id)
+    query = select(cycles.c.cycle).where(cycles.c.unit_id == unit_id).order_by(cycles.c.cycle.desc())
     with database.read() as connection:
-        newest: int | None = connection.execute(query).scalar_one()
+        newest: int | None = connection.execute(query.limit(1)).scalar_one_or_none()
     return newest
 
 
@@ -95,9 +99,9 @@ def published(database: Database, unit_id: int, first: int, last: int) -> Iterat
 
 def latest_results(database: Database, unit_id: int) -> TimedResults | None:
     """The newest cycle's results, N = 1; None before the first."""
-    query = select(func.max(results.c.cycle)).where(results.c.unit_id == unit_id)
+    query = select(results.c.cycle).where(results.c.unit_id == unit_id).order_by(results.c.cycle.desc())
     with database.read() as connection:
-        newest = connection.execute(query).scalar_one()
+        newest = connection.execute(query.limit(1)).scalar_one_or_none()
     if newest is None:
         return None
     return next(published(database, unit_id, newest, newest), None)
