@@ -43,7 +43,7 @@ class ServerAccess:
 OPEN = ServerAccess()
 
 
-class _Doorkeeper:
+class Doorkeeper:
     """Decides about each session; called by the library with what the client showed."""
 
     def __init__(self, access: ServerAccess) -> None:
@@ -82,7 +82,7 @@ async def make_server(endpoint: str, access: ServerAccess = OPEN, name: str = AP
         raise ConnectorError(
             f"{endpoint}: not a loopback address, so this server needs certificates; expected a pki folder"
         )
-    server = Server(user_manager=_Doorkeeper(access))
+    server = Server(user_manager=Doorkeeper(access))
     server.set_server_name(name)
     await server.init()
     server.set_endpoint(endpoint)
@@ -106,6 +106,16 @@ async def start_server(server: Server, endpoint: str) -> None:
         await server.start()
     except OSError as error:
         raise ConnectorError(f"{endpoint}: cannot listen there: {error.strerror or error}") from error
+
+
+async def stop_server(server: Server) -> None:
+    """Stop listening and end every session; the library would leave their subscriptions running."""
+    await server.stop()
+    service = server.iserver.subscription_service
+    await service.delete_subscriptions(list(service.subscriptions))
+    for session in list(server.iserver._external_sessions.values()):
+        await session.close_session(False)
+    await asyncio.sleep(0)
 
 
 async def _require_certificates(server: Server, pki: Path) -> None:

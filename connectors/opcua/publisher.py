@@ -31,7 +31,7 @@ from connectors.opcua.analog_item import (
     add_number_property,
 )
 from connectors.opcua.conversion import to_datetime
-from connectors.opcua.hosting import OPEN, ServerAccess, make_server, start_server
+from connectors.opcua.hosting import OPEN, ServerAccess, make_server, start_server, stop_server
 
 NAMESPACE_URI = "urn:softsensor"
 _INTERVAL_PROPERTIES = ("StandardDeviation", "Lower95", "Upper95")
@@ -102,7 +102,7 @@ class Publisher:
         """Stop listening; clients see the connection break."""
         if self._server is not None:
             server, self._server = self._server, None
-            await server.stop()
+            await stop_server(server)
 
     async def publish_estimate(
         self,

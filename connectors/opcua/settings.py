@@ -78,7 +78,7 @@ class OpcUaSettings:
         for name in ("publishing_interval", "request_timeout"):
             if not 0.0 < getattr(self, name) < float("inf"):
                 yield f"{name}: {getattr(self, name)!r}; expected a number of seconds above zero"
-        if not 0.0 <= self.sampling < float("inf"):
+        if self.sampling_interval is not None and not 0.0 <= self.sampling_interval < float("inf"):
             yield f"sampling_interval: {self.sampling_interval!r}; expected a number of seconds, zero or more"
 
 

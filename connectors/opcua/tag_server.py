@@ -16,7 +16,7 @@ from asyncua import Server, ua
 
 from connectors.opcua.analog_item import AnalogItem, EngineeringUnit, add_analog_item, add_folder
 from connectors.opcua.conversion import to_datetime
-from connectors.opcua.hosting import OPEN, ServerAccess, make_server, start_server
+from connectors.opcua.hosting import OPEN, ServerAccess, make_server, start_server, stop_server
 from connectors.opcua.node_ids import NamespacedNodeId
 
 
@@ -98,7 +98,7 @@ class TagServer:
         """Stop listening; clients see the connection break."""
         if self._server is not None:
             server, self._server = self._server, None
-            await server.stop()
+            await stop_server(server)
 
     async def write(self, tag: str, value: float, source_time: int, status: int = 0) -> None:
         """Put one value out, to be seen by every subscriber at its next publication.

@@ -21,7 +21,7 @@ PLANT = "urn:example:peer-plant"
 TAGS = ("GOOD", "FAST", "BAD", "UNCERTAIN", "HIGH", "LOW")
 RECOVERY_LIMIT = 5.0
 """Seconds from a server being ready to the first fresh reading of every tag."""
-PATIENCE = 30.0
+PATIENCE = 60.0
 
 # OPC UA Part 6, table of status codes (READ): BadSensorFailure 808C0000, UncertainSensorNotAccurate 40930000,
 # UncertainEngineeringUnitsExceeded 40940000. Part 4, 7.39 (READ): limit low 01 and high 10 in bits 8-9, with
