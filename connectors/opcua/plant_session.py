@@ -85,7 +85,8 @@ class PlantSession:
         """End the session, the channel and the socket within a bounded time, whatever the server does."""
         self.end("closed by us")
         with contextlib.suppress(*LIBRARY_ERRORS):
-            await asyncio.wait_for(self._client.disconnect(), CLOSE_TIMEOUT)
+            async with asyncio.timeout(CLOSE_TIMEOUT):
+                await self._client.disconnect()
         self._client.disconnect_socket()
         await asyncio.sleep(0)
 

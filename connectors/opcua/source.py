@@ -20,7 +20,7 @@ from connectors.events import ConnectionChange, SourceEvent
 from connectors.opcua.conversion import ReadingConverter, to_datetime
 from connectors.opcua.event_queue import EventQueue
 from connectors.opcua.node_ids import NamespacedNodeId, parse_node_id
-from connectors.opcua.plant_session import PlantSession
+from connectors.opcua.plant_session import CLOSE_TIMEOUT, PlantSession
 from connectors.opcua.problems import LIBRARY_ERRORS, connection_error, user_refused
 from connectors.opcua.quality import overflowed
 from connectors.opcua.settings import OpcUaSettings
@@ -101,11 +101,10 @@ class OpcUaSource:
 
     async def close(self) -> None:
         """End the connection within a bounded time; ``events()`` ends after what is queued."""
-        if self._task is not None:
-            self._task.cancel()
-            with contextlib.suppress(asyncio.CancelledError):
-                await self._task
-            self._task = None
+        task, self._task = self._task, None
+        while task is not None and not task.done():
+            task.cancel()
+            await asyncio.wait({task}, timeout=CLOSE_TIMEOUT)
         self._queue.close()
 
     async def events(self) -> AsyncIterator[SourceEvent]:
@@ -215,7 +214,8 @@ class OpcUaSource:
         asked = loop.time()
         while True:
             with contextlib.suppress(TimeoutError):
-                await asyncio.wait_for(session.lost.wait(), _CHECK_INTERVAL)
+                async with asyncio.timeout(_CHECK_INTERVAL):
+                    await session.lost.wait()
             if session.lost.is_set():
                 return session.loss
             if session.silent_for() > session.silence_limit():
