@@ -1,0 +1,150 @@
+"""What people enter in the page's forms, checked; and the acts that follow, each on the audit trail."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+from typing import Annotated
+from urllib.parse import quote
+
+from fastapi import APIRouter, Form, Request
+from fastapi.responses import RedirectResponse
+
+from softsensor.records import changes
+from softsensor.records.tables import FINDINGS
+from softsensor.web.site import BadForm, ForeignForm, Site, choices_for
+
+LONGEST_NAME, LONGEST_TEXT = 100, 2000
+Field = Annotated[str, Form()]
+
+
+@dataclass(frozen=True)
+class Person:
+    """Who does something, and why."""
+
+    name: str
+    reason: str
+
+
+def words(text: str, what: str, longest: int) -> str:
+    """The text without blanks around it.
+
+    :raises BadForm: nothing entered, too long, or characters that are no text.
+    """
+    said = text.replace("\r\n", "\n").strip()
+    if not said:
+        raise BadForm(f"{what} is missing; expected some words")
+    if len(said) > longest:
+        raise BadForm(f"{what} has {len(said)} characters; expected at most {longest}")
+    if not all(sign.isprintable() or sign == "\n" for sign in said):
+        raise BadForm(f"{what} has a character that cannot be printed; expected plain text")
+    return said
+
+
+def person(actor: str, reason: str) -> Person:
+    """Name and reason, both needed.
+
+    :raises BadForm: one of them is missing.
+    """
+    name = words(actor, "your name", LONGEST_NAME)
+    if "\n" in name:
+        raise BadForm("your name has more than one line; expected one")
+    return Person(name, words(reason, "the reason", LONGEST_TEXT))
+
+
+def calibration(text: str, what: str) -> float | None:
+    """A calibration's result; None where nothing is entered.
+
+    :raises BadForm: not a finite number.
+    """
+    if not text.strip():
+        return None
+    try:
+        value = float(text.strip().replace("\u2212", "-"))
+    except ValueError:
+        value = math.nan
+    if not math.isfinite(value) or "_" in text:
+        raise BadForm(
+            f"{what} is {text.strip()[:40]!r}; expected a number with a decimal point, such as -0.35"
+        )
+    return value
+
+
+def form_routes(site: Site) -> APIRouter:
+    """The addresses that take forms."""
+    router = APIRouter(default_response_class=RedirectResponse)
+
+    def ours(request: Request, token: str) -> None:
+        refusal = site.guard.refusal(request, token)
+        if refusal is not None:
+            raise ForeignForm(refusal)
+
+    def back_to_flag(unit: str, flag: str) -> RedirectResponse:
+        return RedirectResponse(f"/units/{quote(unit, safe='')}/flag?id={quote(flag, safe='')}", 303)
+
+    @router.post("/units/{name}/flag/acknowledge")
+    def acknowledge(
+        request: Request, name: str, id: str, token: Field = "", actor: Field = "", reason: Field = ""
+    ) -> RedirectResponse:
+        ours(request, token)
+        site.flag(name, id)
+        who = person(actor, reason)
+        changes.acknowledge_flag(site.database, id, who.name, who.reason)
+        return back_to_flag(name, id)
+
+    @router.post("/units/{name}/flag/comment")
+    def comment(
+        request: Request, name: str, id: str, token: Field = "", actor: Field = "", reason: Field = ""
+    ) -> RedirectResponse:
+        ours(request, token)
+        site.flag(name, id)
+        who = person(actor, reason)
+        changes.comment_flag(site.database, id, who.name, who.reason)
+        return back_to_flag(name, id)
+
+    @router.post("/units/{name}/flag/finding")
+    def finding(
+        request: Request,
+        name: str,
+        id: str,
+        token: Field = "",
+        finding: Field = "",
+        actor: Field = "",
+        reason: Field = "",
+        as_found: Field = "",
+        as_left: Field = "",
+    ) -> RedirectResponse:
+        ours(request, token)
+        site.flag(name, id)
+        if finding not in FINDINGS:
+            raise BadForm(f"the finding is {finding[:40]!r}; expected one of: {', '.join(FINDINGS)}")
+        who = person(actor, reason)
+        found, left = calibration(as_found, "as found"), calibration(as_left, "as left")
+        if finding != "confirmed" and (found is not None or left is not None):
+            raise BadForm("as found and as left belong to a confirmed finding; expected them empty otherwise")
+        changes.set_finding(site.database, id, finding, who.name, who.reason, as_found=found, as_left=left)
+        return back_to_flag(name, id)
+
+    @router.post("/units/{name}/lab/decide")
+    def decide(
+        request: Request,
+        name: str,
+        id: int,
+        token: Field = "",
+        decision: Field = "",
+        actor: Field = "",
+        reason: Field = "",
+    ) -> RedirectResponse:
+        ours(request, token)
+        _, lab = site.lab(name, id)
+        choices = choices_for(lab)
+        if decision not in choices:
+            wanted = (
+                f"expected one of: {', '.join(choices)}" if choices else f"the result is {lab.status} already"
+            )
+            raise BadForm(f"the decision is {decision[:40]!r}; {wanted}")
+        who = person(actor, reason)
+        changes.decide_lab(site.database, id, decision, who.name, who.reason)
+        return RedirectResponse(f"/units/{quote(name, safe='')}/lab?id={id}", 303)
+
+    return router

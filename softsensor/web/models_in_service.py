@@ -1,0 +1,68 @@
+"""The model file of each unit's revision in service, read from the records once."""
+
+from __future__ import annotations
+
+import threading
+
+import numpy as np
+from numpy.typing import NDArray
+from sqlalchemy import select
+
+from plant_models.building import build_plant_model
+from plant_models.model_file import parse_model_text
+from plant_models.specification import UnitSpec
+from softsensor.errors import RecordsError
+from softsensor.estimation.kernel import build_kernel
+from softsensor.records.engine import Database
+from softsensor.records.reader import Unit
+from softsensor.records.tables import model_revisions
+from softsensor.unit_design import test_design
+
+
+class ModelsInService:
+    """Specifications and decision intervals by revision; safe to ask from several threads."""
+
+    def __init__(self, database: Database) -> None:
+        self._database = database
+        self._specs: dict[int, UnitSpec] = {}
+        self._intervals: dict[int, NDArray[np.float64]] = {}
+        self._solving = threading.Lock()
+
+    def revision_of(self, unit: Unit) -> int:
+        """The id of the revision in service, or of the newest one where none is.
+
+        :raises RecordsError: the unit has no revision on record.
+        """
+        table = model_revisions
+        query = (
+            select(table.c.id, table.c.state).where(table.c.unit_id == unit.id).order_by(table.c.id.desc())
+        )
+        with self._database.read() as connection:
+            rows = connection.execute(query).all()
+        if not rows:
+            raise RecordsError(f"unit {unit.name} has no model on record")
+        return int(next((row.id for row in rows if row.state == "in service"), rows[0].id))
+
+    def spec(self, revision_id: int) -> UnitSpec:
+        """The specification of a revision.
+
+        :raises ModelFileError: the text on record is no sound model file.
+        """
+        known = self._specs.get(revision_id)
+        if known is None:
+            query = select(model_revisions.c.file_text).where(model_revisions.c.id == revision_id)
+            with self._database.read() as connection:
+                text = connection.execute(query).scalar_one()
+            known = parse_model_text(text, f"revision {revision_id}")
+            self._specs[revision_id] = known
+        return known
+
+    def intervals(self, revision_id: int) -> NDArray[np.float64]:
+        """The decision interval of each sensor's sums (n_sensors,), solved as the service solves it."""
+        with self._solving:
+            known = self._intervals.get(revision_id)
+            if known is None:
+                model = build_plant_model(self.spec(revision_id))
+                known = test_design(model, build_kernel(model)).interval
+                self._intervals[revision_id] = known
+        return known
