@@ -26,6 +26,7 @@ import math
 from dataclasses import dataclass
 from functools import lru_cache
 from itertools import pairwise
+from typing import NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
@@ -40,9 +41,13 @@ Matrix = NDArray[np.float64]
 
 _NODES_PER_PANEL = 12
 _WIDEST_PANEL = 3.0
+_MOST_EDGES = 500
 _NEGLIGIBLE_JUMP = 1e-13
 _LARGEST_INTERVAL = 1000.0
-_LONGEST_CLIPPED = 1e12
+_LONGEST_CLIPPED = 1e10
+_LEAST_RATE = 1e-290
+_ROUNDING = 1e-9
+"""Polynomials may undershoot by this much beside a jump; probabilities of zero come out as small as this."""
 _SQRT_TWO_PI = math.sqrt(2.0 * math.pi)
 
 
@@ -83,18 +88,16 @@ def average_run_length(
     :raises RunLengthError: bad settings, or a run length beyond double precision.
     """
     _check(reference, interval, shift, head_start, clip)
-    upper, upper_head = _one_sided(reference, interval, shift, head_start, clip)
+    upper = _side(reference, interval, shift, head_start, clip)
     if not two_sided:
-        return _trusted(upper + upper_head, clip)
+        return _trusted(upper.rate, 1.0 + upper.gained, clip)
     if head_start > 0.5 * interval:
         raise RunLengthError(
             f"a two-sided head start of {head_start:g} exceeds half of the interval {interval:g}"
         )
-    lower, lower_head = _one_sided(reference, interval, -shift, head_start, clip)
-    # Lucas & Crosier: L = (L+(s) L-(0) + L-(s) L+(0) - L+(0) L-(0)) / (L+(0) + L-(0)), with L(s) = L(0) +
-    # head(s)
-    share = 1.0 / (1.0 / upper + 1.0 / lower)
-    return _trusted(share + upper_head * (share / upper) + lower_head * (share / lower), clip)
+    lower = _side(reference, interval, -shift, head_start, clip)
+    # Lucas & Crosier: L = (L+(s) L-(0) + L-(s) L+(0) - L+(0) L-(0)) / (L+(0) + L-(0))
+    return _trusted(upper.rate + lower.rate, 1.0 + upper.gained + lower.gained, clip)
 
 
 def decision_interval(
@@ -113,7 +116,7 @@ def decision_interval(
     _check(reference, 1.0, 0.0, 0.0, clip)
     if not (math.isfinite(run_length) and run_length > 0.0):
         raise RunLengthError(f"a run length must be a positive number of cycles, not {run_length:g}")
-    _trusted(run_length, clip)
+    _trusted(1.0 / run_length, 1.0, clip)
     return _decision_interval(float(reference), float(run_length), two_sided, clip)
 
 
@@ -122,7 +125,7 @@ def _decision_interval(reference: float, run_length: float, two_sided: bool, cli
     target = math.log(run_length * (2.0 if two_sided else 1.0))
 
     def excess(h: float) -> float:
-        return math.log(_one_sided(reference, h, 0.0, 0.0, clip)[0]) - target
+        return -math.log(max(_side(reference, h, 0.0, 0.0, clip).rate, _LEAST_RATE)) - target
 
     shortest = 1e-8
     if excess(shortest) >= 0.0:
@@ -201,13 +204,17 @@ def _check(reference: float, interval: float, shift: float, head_start: float, c
         )
 
 
-def _trusted(run_length: float, clip: float | None) -> float:
-    if clip is not None and run_length > _LONGEST_CLIPPED:
+def _trusted(rate: float, factor: float, clip: float | None) -> float:
+    """The run length factor / rate, or an error where it has lost its digits."""
+    if clip is not None and rate < 1.0 / _LONGEST_CLIPPED:
         raise RunLengthError(
-            f"a run length of {run_length:.2g} cycles with clipped values is beyond what "
-            f"can be computed to six digits"
+            f"a run length of more than {_LONGEST_CLIPPED:.0e} cycles with clipped "
+            f"values is beyond what can be "
+            "computed to six digits"
         )
-    return run_length
+    if rate <= _LEAST_RATE:
+        raise RunLengthError("the run length at these settings is beyond double precision")
+    return factor / rate
 
 
 def _siegmund_interval(reference: float, run_length: float) -> float:
@@ -234,17 +241,18 @@ def _siegmund_interval(reference: float, run_length: float) -> float:
     return max(0.0, high - 1.166)
 
 
-def _one_sided(k: float, h: float, shift: float, head: float, clip: float | None) -> tuple[float, float]:
-    """L(0), and L(head) - L(0) = tau(head) - p(head) L(0), of the upper test."""
+class _Side(NamedTuple):
+    """One side of the test: 1 / L(0), and L(head start) / L(0) - 1."""
+
+    rate: float
+    gained: float
+
+
+def _side(k: float, h: float, shift: float, head: float, clip: float | None) -> _Side:
+    """The upper test. A rate of zero: too small for double precision."""
     tau, passing = _solve(_excursions(k, h, shift, head, clip))
-    if not passing[0] > 1e-290:
-        raise RunLengthError(
-            f"the run length at reference value {k:g}, interval {h:g} and shift "
-            f"{shift:g} is beyond double precision"
-        )
-    from_zero = float(tau[0] / passing[0])
-    gained = float(tau[-1] - passing[-1] * from_zero) if head > 0.0 else 0.0
-    return from_zero, gained
+    rate = max(0.0, float(passing[0] / tau[0]))
+    return _Side(rate, float(tau[-1] * rate - passing[-1]) if head > 0.0 else 0.0)
 
 
 def _solve(excursions: _Excursions) -> tuple[Vector, Vector]:
@@ -255,7 +263,7 @@ def _solve(excursions: _Excursions) -> tuple[Vector, Vector]:
     at_nodes = _solve_linear(np.eye(nodes) - inner, right)
     everywhere = excursions.step @ at_nodes
     tau, passing = 1.0 + everywhere[:, 0], excursions.passing + everywhere[:, 1]
-    if not (np.all(np.isfinite(tau)) and np.all(tau >= 1.0) and np.all(passing >= 0.0)):
+    if not (np.all(np.isfinite(tau)) and np.all(tau >= 1.0 - _ROUNDING) and np.all(passing >= -_ROUNDING)):
         raise RunLengthError(
             "the run-length equation has no sound solution in double precision at these settings"
         )
@@ -304,7 +312,7 @@ def _clipped(k: float, h: float, shift: float, head: float, clip: float) -> _Exc
     """
     up, down = clip - k, clip + k
     atom_up, atom_down = float(ndtr(shift - clip)), float(ndtr(-clip - shift))
-    edges = _panel_edges(h, up, down, max(atom_up, atom_down))
+    edges = _panel_edges(h, up, down, atom_up, atom_down)
     unit, unit_weights = _legendre(_NODES_PER_PANEL)
     half = 0.5 * np.diff(edges)
     nodes = (edges[:-1, None] + half[:, None] * (unit + 1.0)).ravel()
@@ -329,15 +337,21 @@ def _clipped(k: float, h: float, shift: float, head: float, clip: float) -> _Exc
     return _Excursions(step.reshape(starts.size, -1), np.where(needed < -clip, 1.0, passing))
 
 
-def _panel_edges(h: float, up: float, down: float, atom: float) -> Vector:
-    """Ends of the panels: zero, h, and where p and tau jump or kink because an atom lands on such a point."""
-    points, front, size = {0.0, h}, {0.0, h}, 1.0
-    for _ in range(6):
-        size *= max(atom, 1e-4)
-        if size < _NEGLIGIBLE_JUMP:
-            break
-        front = {p for b in front for p in (b - up, b + down) if 0.0 < p < h} - points
-        points |= front
+def _panel_edges(h: float, up: float, down: float, atom_up: float, atom_down: float) -> Vector:
+    """Ends of the panels: zero, h, and where p and tau jump or kink because an atom lands on such a point.
+
+    A jump passes on to where an atom reaches it from, weakened by the atom's size, until it is negligible.
+    """
+    weights = {0.0: 1.0, h: 1.0}
+    waiting = [0.0, h]
+    while waiting and len(weights) < _MOST_EDGES:
+        point = waiting.pop(0)
+        for reached, atom in ((point - up, atom_up), (point + down, atom_down)):
+            weight = weights[point] * max(atom, 1e-4)
+            if 0.0 < reached < h and weight >= _NEGLIGIBLE_JUMP and reached not in weights:
+                weights[reached] = weight
+                waiting.append(reached)
+    points = weights.keys()
     edges = np.array(sorted(points))
     edges = edges[np.concatenate(([True], np.diff(edges) > 1e-10))]
     edges[-1] = h

@@ -123,6 +123,15 @@ def test_inside_a_jump_the_smallest_interval_that_keeps_the_promise() -> None:
     assert average_run_length(2.0, h, clip=3.0) >= wanted
 
 
+def test_the_side_that_a_large_shift_leaves_alone_does_no_harm() -> None:
+    # with clipped values and a shift of 7 every value is at the clip: each lifts the sum by clip - k = 3
+    assert average_run_length(1.0, 4.875, 7.0, clip=4.0) == pytest.approx(2.0, rel=1e-2)
+    assert average_run_length(1.0, 4.875, -7.0, clip=4.0) == pytest.approx(2.0, rel=1e-2)
+    assert average_run_length(1.0, 40.0, 30.0, clip=4.0) == pytest.approx(14.0, rel=1e-9)
+    assert average_run_length(1.0, 40.0, 30.0, head_start=10.0, clip=4.0) == pytest.approx(11.0, rel=1e-9)
+    assert average_run_length(0.5, 5.0, 30.0) == pytest.approx(1.0, rel=1e-9)
+
+
 def test_run_length_falls_with_shift_and_rises_with_interval() -> None:
     for clip in (None, 4.0):
         by_shift = [average_run_length(0.3, 7.0, s, clip=clip) for s in (0.0, 0.1, 0.3, 0.6, 1.0, 2.0, 4.0)]
