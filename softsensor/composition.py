@@ -36,6 +36,8 @@ from softsensor.unit_design import design_unit
 from softsensor.web.app import create_app
 
 PROGRAM = "softsensor"
+WRITER_PATIENCE = 1.0
+"""Seconds that a full queue of records holds a unit up before the service ends and says why."""
 STATUS_CODES = (0x00000000, 0x40950000, 0x80310000)
 """OPC UA codes of Good, Uncertain (UncertainSubNormal) and Bad (BadNoCommunication)."""
 
@@ -235,7 +237,7 @@ async def running_site(
         await source.probe()
         designs = [await asyncio.to_thread(design_unit, model) for model in models]
         identities = [register(database, model, clock) for model in models]
-        writer = stack.enter_context(RecordsWriter(database))
+        writer = stack.enter_context(RecordsWriter(database, patience=WRITER_PATIENCE))
         units = [
             UnitService(design, identity, database, writer)
             for design, identity in zip(designs, identities, strict=True)

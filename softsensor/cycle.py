@@ -9,6 +9,7 @@ from __future__ import annotations
 import hashlib
 from collections.abc import Sequence
 from dataclasses import dataclass, replace
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -143,7 +144,7 @@ ROW_FIELDS = (
 
 def join_results(parts: Sequence[CycleResults]) -> CycleResults:
     """The results of consecutive stretches as one; flags and notes in order."""
-    rows = {name: np.concatenate([getattr(part, name) for part in parts]) for name in ROW_FIELDS}
+    rows: dict[str, Any] = {name: np.concatenate([getattr(part, name) for part in parts]) for name in ROW_FIELDS}
     return CycleResults(
         first=parts[0].first,
         **rows,

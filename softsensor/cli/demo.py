@@ -19,7 +19,7 @@ from plant_models.errors import Problem, UnitError
 if TYPE_CHECKING:
     from connectors.opcua.tag_server import TagServer
     from plant_models.plant_model import PlantModel
-    from softsensor.demonstration.plant_side import Truth
+    from softsensor.demonstration.plant_side import SimulatedPlant
     from softsensor.service.clock import ScaledClock
 
 MODEL = "jacketed_reactor"
@@ -101,7 +101,13 @@ def _free_port(preferred: int = 0) -> int:
 
 async def _demo(where: Path, seconds: float | None, speed: float) -> None:
     from connectors.opcua.tag_server import TagServer
-    from softsensor.demonstration.plant_side import NAMESPACE, Truth, demo_tank, served_tags
+    from softsensor.demonstration.plant_side import (
+        NAMESPACE,
+        SimulatedPlant,
+        Truth,
+        demo_tank,
+        served_tags,
+    )
     from softsensor.service.clock import ScaledClock
 
     model = _prepare(where)
@@ -109,10 +115,10 @@ async def _demo(where: Path, seconds: float | None, speed: float) -> None:
     step = round(model.spec.sample_time * 1e6)
     clock = ScaledClock(wall // step * step, wall + round(LEAD * 1e6), speed)
     until = None if seconds is None else clock.plant_start + round(seconds * 1e6) // step * step
-    truth, tank = Truth(), demo_tank(clock.plant_start)
+    plant = SimulatedPlant(demo_tank(clock.plant_start), clock, until, Truth())
     async with TagServer(f"opc.tcp://127.0.0.1:{_free_port()}", NAMESPACE, served_tags(model)) as server:
         site_file = _write_site(where, model, server, clock)
-        await _run(site_file, server, (tank, clock, until, truth), where, model)
+        await _run(site_file, server, plant, model)
 
 
 def _write_site(where: Path, model: PlantModel, server: TagServer, clock: ScaledClock) -> Path:
@@ -125,14 +131,12 @@ def _write_site(where: Path, model: PlantModel, server: TagServer, clock: Scaled
     return site_file
 
 
-async def _run(site_file: Path, server: TagServer, plant: tuple, where: Path, model: PlantModel) -> None:
-    from softsensor.demonstration.plant_side import run_plant
+async def _run(site_file: Path, server: TagServer, plant: SimulatedPlant, model: PlantModel) -> None:
     from softsensor.demonstration.service_side import ServiceProcess
 
-    tank, clock, until, truth = plant
     service = ServiceProcess(site_file, typer.echo)
     serving = asyncio.create_task(service.keep_running(), name="service")
-    running = asyncio.create_task(run_plant(server, tank, clock, until, truth), name="plant")
+    running = asyncio.create_task(plant.run(server), name="plant")
     try:
         await asyncio.wait([serving, running], return_when=asyncio.FIRST_COMPLETED)
         if serving.done():
@@ -147,18 +151,18 @@ async def _run(site_file: Path, server: TagServer, plant: tuple, where: Path, mo
         with contextlib.suppress(asyncio.CancelledError, RuntimeError):
             await serving
         await service.stop()
-    _report(where, model, truth, tank.start, service.restarts)
+    _report(site_file.parent, model, plant, service.restarts)
 
 
-def _report(where: Path, model: PlantModel, truth: Truth, start: int, restarts: int) -> None:
+def _report(where: Path, model: PlantModel, plant: SimulatedPlant, restarts: int) -> None:
     from plant_models.simulators.scenario import DemoScenario
     from softsensor.demonstration.report import make_report, report_lines
     from softsensor.records.engine import open_database
 
     url = f"sqlite:///{(where / 'records.db').as_posix()}"
     with open_database(url) as database:
-        report = make_report(database, model, truth, restarts)
-    for line in report_lines(report, DemoScenario(), start):
+        report = make_report(database, model, plant.truth, restarts)
+    for line in report_lines(report, DemoScenario(), plant.tank.start):
         typer.echo(line)
     typer.echo(f"Records: {url}")
     typer.echo(

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import asyncio
-import contextlib
 import signal
 from pathlib import Path
 from typing import Annotated
@@ -39,11 +38,9 @@ async def _serve(settings: object) -> None:
         await asyncio.wait([serving, stopping], return_when=asyncio.FIRST_COMPLETED)
         for task in (telling, stopping):
             task.cancel()
-        if not serving.done():
-            serving.cancel()
+        site.service.stop()
         try:
-            with contextlib.suppress(asyncio.CancelledError):
-                await serving
+            await serving
         except* Exception as group:
             raise _first(group) from None
 
@@ -56,9 +53,12 @@ def _first(group: BaseExceptionGroup[BaseException]) -> BaseException:
 
 
 def _stop_on_signals(stop: asyncio.Event) -> None:
-    """Ctrl-C and a polite kill end the service in order; Windows has no signal handlers on the loop."""
+    """Ctrl-C, Ctrl-Break and a polite kill end the service in order; Windows has no signal handlers on the loop."""
     loop = asyncio.get_running_loop()
-    for number in (signal.SIGINT, signal.SIGTERM):
+    numbers = [signal.SIGINT, signal.SIGTERM]
+    if hasattr(signal, "SIGBREAK"):
+        numbers.append(signal.SIGBREAK)
+    for number in numbers:
         try:
             loop.add_signal_handler(number, stop.set)
         except NotImplementedError:

@@ -28,7 +28,8 @@ class Truth:
 def served_tags(model: PlantModel) -> list[ServedTag]:
     """Every tag that the model reads, with its unit and range, and the laboratory's."""
     spec = model.spec
-    tags = [(item.tag, item.unit, item.range) for item in (*spec.inputs, *spec.sensors)]
+    tags = [(item.tag, item.unit, item.range) for item in spec.inputs]
+    tags += [(item.tag, item.unit, item.range) for item in spec.sensors]
     tags += [(item.lab.tag, item.unit, item.range) for item in spec.estimates if item.lab is not None]
     served = []
     for tag, unit, limits in tags:
@@ -37,27 +38,35 @@ def served_tags(model: PlantModel) -> list[ServedTag]:
     return served
 
 
-async def run_plant(
-    server: TagServer, tank: StirredTank, clock: Clock, until: int | None, truth: Truth
-) -> None:
-    """Serve the plant's readings at their times until a plant time, or until cancelled."""
-    step = round(tank.scenario.sample_time * 1e6)
-    moment = tank.start
-    reported = tank.start - 1
-    while until is None or moment <= until:
-        tank.advance(moment)
-        if moment > tank.start:
-            await wait_until(clock, moment)
-        for reading in tank.readings_now:
+@dataclass(frozen=True)
+class SimulatedPlant:
+    """The reactor on its clock, until a plant time or, with None, for as long as it is let run."""
+
+    tank: StirredTank
+    clock: Clock
+    until: int | None
+    truth: Truth
+
+    async def run(self, server: TagServer) -> None:
+        """Serve the plant's readings at their times."""
+        moment, reported = self.tank.start, self.tank.start - 1
+        while self.until is None or moment <= self.until:
+            self.tank.advance(moment)
+            if moment > self.tank.start:
+                await wait_until(self.clock, moment)
+            await self._serve(server, moment, reported)
+            reported = moment
+            moment += round(self.tank.scenario.sample_time * 1e6)
+            await asyncio.sleep(0)
+
+    async def _serve(self, server: TagServer, moment: int, reported: int) -> None:
+        for reading in self.tank.readings_now:
             await server.write(reading.tag, reading.value, reading.time, reading.status)
-        truth.times.append(moment)
-        truth.values.append(tank.truth.product)
-        for lab in tank.lab_results(reported):
+        self.truth.times.append(moment)
+        self.truth.values.append(self.tank.truth.product)
+        for lab in self.tank.lab_results(reported):
             await server.write(lab.tag, lab.value, lab.sampled_at, 0)
-            truth.labs.append(lab)
-        reported = moment
-        moment += step
-        await asyncio.sleep(0)
+            self.truth.labs.append(lab)
 
 
 def demo_tank(start: int) -> StirredTank:

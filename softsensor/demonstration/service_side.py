@@ -91,7 +91,10 @@ class ServiceProcess:
         process = self._process
         if process is None or process.returncode is not None:
             return
-        process.send_signal(signal.CTRL_BREAK_EVENT if sys.platform == "win32" else signal.SIGTERM)
+        if sys.platform == "win32":
+            process.send_signal(signal.CTRL_BREAK_EVENT)
+        else:
+            process.send_signal(signal.SIGTERM)
         try:
             await asyncio.wait_for(process.wait(), STOP_PATIENCE)
         except TimeoutError:

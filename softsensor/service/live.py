@@ -11,7 +11,7 @@ from connectors.events import ConnectionChange, ReadingsLost, SourceEvent
 from connectors.readings import Reading
 from softsensor.records import happenings
 from softsensor.records.writer import RecordsWriter, WriterState
-from softsensor.service.clock import Clock, wait_until
+from softsensor.service.clock import Clock
 from softsensor.service.live_feed import LiveFeed, News
 from softsensor.service.news import cycle_news, flag_news, lab_news
 from softsensor.service.recording import Step
@@ -22,6 +22,7 @@ GRACE = 2.0
 LOOK = 0.02
 """Seconds between two looks at whether a cycle may run."""
 DECISIONS_EVERY = 2.0
+STOP_LOOK = 0.5
 
 
 class Source(Protocol):
@@ -61,6 +62,7 @@ class LiveService:
         self._clock = clock
         self._writer = writer
         self._sinks = sinks
+        self._stopping = False
         self.feed = LiveFeed()
         self.connected = False
 
@@ -68,8 +70,12 @@ class LiveService:
     def _named(units: Sequence[UnitService], name: str) -> UnitService:
         return next(unit for unit in units if unit.name == name)
 
+    def stop(self) -> None:
+        """End :meth:`serve` after the cycles under way: every cycle whose readings are on record gets its results."""
+        self._stopping = True
+
     async def serve(self) -> None:
-        """Resume every unit, then read, run and publish until cancelled.
+        """Resume every unit, then read, run and publish until :meth:`stop`.
 
         :raises RecordsError: the records refuse a write for good.
         """
@@ -78,11 +84,12 @@ class LiveService:
             if again:
                 self._event(unit, "restart", f"{again} recorded cycles ran again after the last checkpoint")
         async with asyncio.TaskGroup() as tasks:
-            tasks.create_task(self._read())
-            tasks.create_task(self._watch_records())
-            for unit in self._units:
-                tasks.create_task(self._run_unit(unit))
-                tasks.create_task(self._watch_decisions(unit))
+            watching = [tasks.create_task(self._read()), tasks.create_task(self._watch_records())]
+            watching += [tasks.create_task(self._watch_decisions(unit)) for unit in self._units]
+            running = [tasks.create_task(self._run_unit(unit)) for unit in self._units]
+            await asyncio.gather(*running)
+            for task in watching:
+                task.cancel()
 
     async def _read(self) -> None:
         async for event in self._source.events():
@@ -102,15 +109,20 @@ class LiveService:
         while True:
             assert unit.next_time is not None
             moment = unit.next_time
-            await wait_until(self._clock, moment)
+            while not self._stopping and self._clock.seconds_until(moment) > 0.0:
+                await asyncio.sleep(min(self._clock.seconds_until(moment), STOP_LOOK))
             await self._wait_for_readings(unit, moment)
+            if self._stopping:
+                return
             step = await unit.run_cycle(moment)
             if step is not None:
                 await self._publish(unit, step)
 
     async def _wait_for_readings(self, unit: UnitService, moment: int) -> None:
         """Until every tag has been heard to the cycle's time, or the grace is over."""
-        while unit.complete_to() < moment and self._clock.seconds_until(moment) > -GRACE:
+        while (
+            not self._stopping and unit.complete_to() < moment and self._clock.seconds_until(moment) > -GRACE
+        ):
             await asyncio.sleep(LOOK)
         await asyncio.sleep(0)
 
