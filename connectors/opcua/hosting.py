@@ -23,6 +23,7 @@ from cryptography import x509
 from cryptography.hazmat.primitives import serialization
 
 from connectors.errors import ConnectorError, PlantConnectionError
+from connectors.opcua.conditions import allow_conditions
 from connectors.opcua.security import APPLICATION_NAME, check_peer, own_identity
 from connectors.opcua.settings import address_fault, is_loopback
 
@@ -84,6 +85,7 @@ async def make_server(endpoint: str, access: ServerAccess = OPEN, name: str = AP
         )
     server = Server(user_manager=Doorkeeper(access))
     server.set_server_name(name)
+    allow_conditions(server)
     await server.init()
     server.set_endpoint(endpoint)
     _answer_republish_honestly(server)

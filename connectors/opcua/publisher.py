@@ -7,6 +7,7 @@ Under Objects a folder per unit, with string node ids in the namespace ``urn:sof
     <unit>/Sensors/<tag>      the sensor's NAMUR NE 107 status as DeviceHealthEnumeration (OPC UA Part 100,
     4.5.4):
                               0 normal, 1 failure, 2 check function, 3 off spec, 4 maintenance required
+    <unit>/Flags/<flag>       a fault flag as a condition, while it is retained (see conditions.py)
 
 The node id of an estimate is ``nsu=urn:softsensor;s=<unit>.Estimates.<tag>``. Everything is read-only.
 """
@@ -30,6 +31,7 @@ from connectors.opcua.analog_item import (
     add_folder,
     add_number_property,
 )
+from connectors.opcua.conditions import FlagAction, FlagCondition, FlagConditions, OnAction
 from connectors.opcua.conversion import to_datetime
 from connectors.opcua.hosting import OPEN, ServerAccess, make_server, start_server, stop_server
 
@@ -69,7 +71,17 @@ class PublishedUnit:
 class Publisher:
     """Serves estimates and sensor health; ``units`` is fixed for its life."""
 
-    def __init__(self, endpoint: str, units: Sequence[PublishedUnit], access: ServerAccess = OPEN) -> None:
+    def __init__(
+        self,
+        endpoint: str,
+        units: Sequence[PublishedUnit],
+        access: ServerAccess = OPEN,
+        on_flag_action: OnAction | None = None,
+    ) -> None:
+        """:param on_flag_action: called when a client acknowledges a flag or comments on it."""
+        self._on_flag_action = on_flag_action or _nobody_listens
+        self._conditions: FlagConditions | None = None
+        self._latest = 0
         self.endpoint = endpoint
         self._units = tuple(units)
         self._access = access
@@ -95,13 +107,15 @@ class Publisher:
         health_type = await add_enumeration(server, index, "DeviceHealthEnumeration", DeviceHealth)
         for unit in self._units:
             await self._add_unit(server, index, unit, health_type)
+        conditions = FlagConditions(server, index, self._on_flag_action, lambda: self._latest)
+        await conditions.set_up()
         await start_server(server, self.endpoint)
-        self._server = server
+        self._server, self._conditions = server, conditions
 
     async def stop(self) -> None:
         """Stop listening; clients see the connection break."""
         if self._server is not None:
-            server, self._server = self._server, None
+            server, self._server, self._conditions = self._server, None, None
             await stop_server(server)
 
     async def publish_estimate(
@@ -133,6 +147,22 @@ class Publisher:
         content = ua.Variant(int(DeviceHealth(health)), ua.VariantType.Int32)
         await self._write(self._nodes[unit, tag, "health"], content, time, 0)
 
+    async def raise_flag(self, condition: FlagCondition) -> None:
+        """Show a fault flag to every client as an active, unacknowledged condition."""
+        await self._flags().raise_flag(self._nodes[condition.unit, "", "flags"], condition)
+
+    async def acknowledge_flag(self, unit: str, flag: str, comment: str, time: int) -> None:
+        """Tell clients that a flag was acknowledged elsewhere; one that is no longer shown is passed over."""
+        await self._flags().acknowledge_flag(unit, flag, comment, time)
+
+    async def clear_flag(self, unit: str, flag: str, time: int) -> None:
+        """Tell clients that a flag's fault is over; one that is no longer shown is passed over."""
+        await self._flags().clear_flag(unit, flag, time)
+
+    def _flags(self) -> FlagConditions:
+        assert self._conditions is not None, "the publisher is not running"
+        return self._conditions
+
     async def _add_unit(
         self, server: Server, index: int, unit: PublishedUnit, health_type: ua.NodeId
     ) -> None:
@@ -148,6 +178,8 @@ class Publisher:
                 self._nodes[unit.name, estimate.tag, name] = await add_number_property(
                     server, node, index, f"{identifier}.{name}", name
                 )
+        flags = await add_folder(server, top, index, f"{unit.name}.Flags", "Flags")
+        self._nodes[unit.name, "", "flags"] = flags
         sensors = await add_folder(server, top, index, f"{unit.name}.Sensors", "Sensors")
         for tag in unit.sensors:
             self._nodes[unit.name, tag, "health"] = await add_enumerated_variable(
@@ -156,9 +188,14 @@ class Publisher:
 
     async def _write(self, node: ua.NodeId, content: ua.Variant, time: int, status: int) -> None:
         assert self._server is not None, "the publisher is not running"
+        self._latest = max(self._latest, time)
         moment = to_datetime(time)
         data = ua.DataValue(content, ua.StatusCode(status), SourceTimestamp=moment, ServerTimestamp=moment)
         await self._server.write_attribute_value(node, data)
+
+
+async def _nobody_listens(action: FlagAction) -> None:
+    """A publisher without a listener still keeps the acknowledgement in its conditions."""
 
 
 def _number(value: float) -> ua.Variant:
