@@ -21,7 +21,10 @@ CLIP = 4.0
 SPIKE = 6.0
 WINDOW = 2048
 """Innovations kept for the diagnosis."""
-REFERENCE_BOUNDS = (0.125, 1.0)
+LEAST_REFERENCE, LARGEST_REFERENCE = 0.125, 1.0
+GROSS_REFERENCE = 0.5
+"""For a sensor whose tolerance-sized bias the filter absorbs (half the shift below LEAST_REFERENCE): its sums then watch
+for gross steps only, because a more sensitive test would answer to every small misfit of the model."""
 LOOK_EVERY = 6
 LOST_SECONDS, LOST_CYCLES = 300.0, 10
 
@@ -52,7 +55,8 @@ def steady_shifts(model: PlantModel, kernel: Kernel, window: int = WINDOW) -> Fl
 def test_design(model: PlantModel, kernel: Kernel) -> TestDesign:
     """Reference values from the shifts that tolerance-sized biases leave; intervals solved for the promised run length."""
     cycles = model.spec.false_flag_interval / model.spec.sample_time
-    reference = np.clip(0.5 * steady_shifts(model, kernel), *REFERENCE_BOUNDS)
+    half = 0.5 * steady_shifts(model, kernel)
+    reference = np.where(half < LEAST_REFERENCE, GROSS_REFERENCE, np.minimum(half, LARGEST_REFERENCE))
     interval = np.array([decision_interval(float(value), cycles, clip=CLIP) for value in reference])
     lost = max(LOST_CYCLES, int(np.ceil(LOST_SECONDS / model.spec.sample_time)))
     return TestDesign(
