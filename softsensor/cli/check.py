@@ -203,11 +203,11 @@ def _sensors(report: ModelReport) -> Table:
         "sensor",
         "bias",
         "shift at once",
+        "half faded",
         "shift settled",
         "taken up by",
-        "reference value",
-        "decision interval",
-        "mean time to a flag",
+        "reference value / decision interval",
+        "flag, once settled",
     )
     for item in report.sensors:
         shift = item.shift
@@ -216,10 +216,10 @@ def _sensors(report: ModelReport) -> Table:
             shift.tag,
             f"{shift.bias:.4g} {shift.unit}",
             f"{shift.at_once:.2f} sd",
+            "later" if shift.half_faded is None else duration_text(shift.half_faded),
             f"{shift.settled:.2g} sd",
             shift.absorbed_by or "",
-            f"{item.reference:.3f}",
-            f"{item.interval:.3f}",
+            f"{item.reference:.3f} / {item.interval:.3f}",
             "absorbed" if item.delay is None else duration_text(item.delay),
         )
     return table

@@ -31,6 +31,8 @@ Matrix = NDArray[np.float64]
 LEAST_SHIFT = 0.02
 """Innovation shifts below this many standard deviations count as absorbed, whatever the test."""
 
+LONGEST_FADING = 20_000
+
 
 @dataclass(frozen=True, slots=True)
 class SensorShift:
@@ -47,6 +49,7 @@ class SensorShift:
     innovation_sd: float
     at_once: float
     settled: float
+    half_faded: float | None
     absorbed: bool
     absorbed_by: str | None
 
@@ -76,6 +79,25 @@ def settled_error(state: SteadyState, A: Matrix) -> Matrix:
     return np.asarray(T @ error, dtype=np.float64)
 
 
+def fading(state: SteadyState, A: Matrix) -> list[int | None]:
+    """Cycles after which a constant bias of each sensor has lost half of what its own innovation will lose.
+
+    None: more than LONGEST_FADING. x(k+1) = A x(k) + L (b - C x(k)) from zero, all sensors side by side.
+    """
+    count = state.rows.r.size
+    halfway = 0.5 * (1.0 + np.diag(settled_innovation(state, A)))
+    found: list[int | None] = [None] * count
+    error = np.zeros((A.shape[0], count))
+    for cycle in range(LONGEST_FADING):
+        remaining = np.eye(count) - state.rows.C @ error
+        for i in np.flatnonzero(np.diag(remaining) <= halfway + 1e-12):
+            found[i] = cycle if found[i] is None else found[i]
+        if None not in found:
+            break
+        error = A @ error + state.L @ remaining
+    return found
+
+
 def sensor_shifts(model: PlantModel) -> tuple[SensorShift, ...]:
     """For each sensor, what a bias the size of its tolerance leaves in its innovation.
 
@@ -85,6 +107,7 @@ def sensor_shifts(model: PlantModel) -> tuple[SensorShift, ...]:
     state = steady_state(model)
     error = settled_error(state, part.A)
     remaining = settled_innovation(state, part.A)
+    faded = fading(state, part.A)
     cycles = spec.false_flag_interval / spec.sample_time
     found = []
     for i, sensor in enumerate(spec.sensors):
@@ -98,6 +121,7 @@ def sensor_shifts(model: PlantModel) -> tuple[SensorShift, ...]:
                 sd,
                 sensor.tolerance / sd,
                 settled,
+                None if (half := faded[i]) is None else half * spec.sample_time,
                 is_absorbed(settled, cycles),
                 _absorber(owners(part), part.C[i] * error[:, i])
                 if abs(1.0 - remaining[i, i]) > 0.05

@@ -6,7 +6,7 @@ import numpy as np
 import pytest
 
 from plant_models.plant_model import StochasticPart
-from softsensor.detection.absorption import is_absorbed, settled_innovation
+from softsensor.detection.absorption import fading, is_absorbed, settled_innovation
 from softsensor.estimation.steady_state import Rows, SteadyState, settle
 
 
@@ -39,6 +39,14 @@ def test_the_way_there_is_the_published_one() -> None:
             innovation = 1.0 - error
             assert innovation == pytest.approx(float(value), abs=0.51e-5)
             error = a * (error + state.K[0, 0] * innovation)
+
+
+def test_half_of_the_loss_is_gone_when_the_printed_values_say_so() -> None:
+    # from the same series: halfway between 1 and .4 is .7, reached after one cycle; between 1 and 0 is .5,
+    # after three
+    for a, q, cycles in ((0.8, 0.36, 1), (1.0, 0.1, 3)):
+        state, A = settled([[a]], [q], [[1.0]], [1.0])
+        assert fading(state, A) == [cycles]
 
 
 def test_a_run_with_a_biased_sensor_settles_where_computed() -> None:
