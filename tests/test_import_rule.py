@@ -24,7 +24,8 @@ LAYERS: tuple[tuple[str, ...], ...] = (
     ("service", "commissioning"),
     ("web",),
     ("recorded_data", "composition"),
-    ("cli",),
+    ("demonstration",),
+    ("cli", "__main__"),
 )
 """Rooms of softsensor, low to high: each imports from its own layer and those below."""
 
