@@ -77,8 +77,10 @@ def average_run_length(
 ) -> float:
     """Mean number of cycles until a flag, on independent N(shift, 1) values.
 
-    >>> round(average_run_length(0.5, 4.0), 4), round(average_run_length(0.5, 4.0, shift=1.0,
-    two_sided=False), 4) (167.6838, 8.3832)
+    >>> round(average_run_length(0.5, 4.0), 4)
+    167.6838
+    >>> round(average_run_length(0.5, 4.0, shift=1.0, two_sided=False), 4)
+    8.3832
 
     :param reference: reference value k >= 0, in standard deviations.
     :param interval: decision interval h > 0.
