@@ -1,0 +1,217 @@
+"""The estimator against a dense textbook filter of our own making, on published and on random models.
+
+Norm, here and below: estimates and predictions relative to the largest deviation from the operating point in the
+run; standard deviations relative to themselves, entry by entry; innovations relative to their standard deviation.
+"""
+
+from __future__ import annotations
+
+from dataclasses import replace
+
+import numpy as np
+import pytest
+from independent.dense_filter import (
+    DenseResult,
+    filter_in_order,
+    known_at_each_cycle,
+    operating_points,
+    output_names,
+    stochastic,
+)
+from independent.random_models import random_unit
+from independent.recorded_runs import Run, by_cycle, late_labs, record
+from independent.transfer_paths import Array, rational
+from scipy.linalg import solve_discrete_are
+
+import softsensor
+from plant_models.building import build_plant_model
+from plant_models.library import published_model_path
+from plant_models.specification import UnitSpec
+from softsensor.recorded_data import ReplayResult
+
+RELATIVE = 1e-8
+"""The contract's section 2: estimates, their sd, innovations and their sd agree to 1e-8 relative."""
+SEEDS = range(1, 21)
+
+
+def published(name: str) -> UnitSpec:
+    return softsensor.load_model(str(published_model_path(name))).spec
+
+
+def agree(found: Array, expected: Array, scale: Array) -> None:
+    """Both nan in the same places, and elsewhere no further apart than 1e-8 of the scale."""
+    np.testing.assert_array_equal(np.isnan(found), np.isnan(expected))
+    apart = np.abs(found - expected) / scale
+    assert np.nanmax(apart, initial=0.0) <= RELATIVE
+
+
+def compare(run: Run, result: ReplayResult, dense: DenseResult) -> None:
+    sensors = [item.tag for item in run.spec.sensors]
+    estimates = [item.tag for item in run.spec.estimates]
+    at_rest = operating_points(run.spec)
+    swing = np.abs(dense.estimate - at_rest[len(sensors) :]).max(axis=0)
+    agree(by_cycle(result.estimates, "value", estimates), dense.estimate, swing)
+    agree(by_cycle(result.estimates, "sd", estimates), dense.sd, dense.sd)
+    swing = np.abs(dense.predicted - at_rest[: len(sensors)]).max(axis=0)
+    agree(by_cycle(result.innovations, "predicted", sensors), dense.predicted, swing)
+    used = by_cycle(result.innovations, "used", sensors) == 1
+    np.testing.assert_array_equal(used, np.isfinite(run.y))
+    agree(by_cycle(result.innovations, "innovation", sensors), dense.innovation, dense.innovation_sd)
+    sd = np.where(used, by_cycle(result.innovations, "sd", sensors), np.nan)
+    agree(sd, dense.innovation_sd, dense.innovation_sd)
+
+
+def compare_labs(result: ReplayResult, dense: DenseResult, values: Array) -> None:
+    """Both in order of arrival; sorted by value, since results that arrive in one cycle may change places."""
+    table = result.lab_results.sort_values("value")
+    order = np.argsort(values)
+    assert list(table["status"]) == ["used"] * len(values)
+    sd = dense.lab_sd[order]
+    agree(table["predicted"].to_numpy(), dense.lab_predicted[order], sd)
+    agree(table["sd"].to_numpy(), sd, sd)
+
+
+def check(spec: UnitSpec, cycles: int, seed: int, results: int, move: float = 1.0) -> None:
+    gaps = 0.05 + 0.25 * ((seed * 7) % 20) / 19.0
+    run = record(spec, cycles, seed, gaps, move)
+    frame, labs = late_labs(run, results, seed, latest=60)
+    result = softsensor.replay(build_plant_model(spec), run.history(), frame)
+    dense = known_at_each_cycle(spec, run.u, run.y, run.uncertain, labs)
+    compare(run, result, dense)
+    compare_labs(result, dense, np.array([lab.value for lab in labs]))
+
+
+@pytest.mark.parametrize(
+    ("name", "cycles", "results"), [("wood_berry", 300, 8), ("heavy_oil_fractionator", 120, 4)]
+)
+def test_published_models_agree_with_a_dense_filter(name: str, cycles: int, results: int) -> None:
+    check(published(name), cycles, 3, results, move=0.03)
+
+
+@pytest.mark.parametrize("seed", SEEDS)
+def test_random_models_agree_with_a_dense_filter(seed: int) -> None:
+    check(random_unit(seed), 200, seed, 6)
+
+
+def test_the_random_models_cover_what_a_model_file_can_say() -> None:
+    specs = [random_unit(seed) for seed in SEEDS]
+    paths = [(spec, path) for spec in specs for path in spec.paths]
+    shapes = [(rational(path, spec.sample_time), path.dead_time / spec.sample_time) for spec, path in paths]
+    assert any(den.size == 1 and delay == 0.0 for (_, den), delay in shapes)
+    assert any(den.size == 1 and delay % 1.0 > 0.0 for (_, den), delay in shapes)
+    assert any(num.size == den.size > 1 and delay % 1.0 > 0.0 for (num, den), delay in shapes)
+    assert any(np.iscomplex(np.roots(den)).any() for (_, den), _ in shapes)
+    assert any(num.size > 1 and np.roots(num)[0].real > 0.0 for (num, _), _ in shapes)
+    assert any(path.integrating and path.time_constants for _, path in paths)
+    assert any(path.integrating and not path.time_constants for _, path in paths)
+    assert any(len(set(path.time_constants)) < len(path.time_constants) for _, path in paths)
+    disturbances = [item for spec in specs for item in spec.disturbances]
+    assert any(item.walk_sd is not None and item.at_input is None for item in disturbances)
+    assert any(item.walk_sd is not None and item.at_input is not None for item in disturbances)
+    assert any(item.sd is not None and item.at_input is not None for item in disturbances)
+    assert any(sensor.bias_walk_sd > 0.0 for spec in specs for sensor in spec.sensors)
+    assert len({spec.sample_time for spec in specs}) > 5
+
+
+def test_disturbances_that_integrate_start_their_integrators_at_zero() -> None:
+    """A disturbance at an input with integrating paths, with and without a lag, a lead and a fractional dead time."""
+    spec = random_unit(4)
+    source = spec.inputs[0].tag
+    first = replace(spec.disturbances[0], at_input=None)
+    walker = replace(
+        first, name="walker", sd=None, time_constant=None, walk_sd=1.0, initial_sd=0.4, at_input=source
+    )
+    mover = replace(
+        first, name="mover", sd=0.5, time_constant=30.0 * spec.sample_time, walk_sd=None, at_input=source
+    )
+    Ts = spec.sample_time
+    kept = tuple(path for path in spec.paths if path.source in (first.name,))
+    shape = replace(
+        kept[0], source=source, gain=0.05 / Ts, integrating=True, numerator=None, denominator=None
+    )
+    forms = [
+        ((6.0 * Ts,), (), 1.4 * Ts),
+        ((), (2.0 * Ts,), 0.7 * Ts),
+        ((3.0 * Ts, 9.0 * Ts), (-2.0 * Ts,), 2.0 * Ts),
+    ]
+    tags = output_names(spec)
+    integrating = tuple(
+        replace(shape, target=tag, time_constants=lags, lead_times=leads, dead_time=delay)
+        for tag, (lags, leads, delay) in zip(tags, forms * 2, strict=False)
+    )
+    check(replace(spec, disturbances=(first, walker, mover), paths=kept + integrating), 200, 5, 6)
+
+
+def test_nothing_but_gaps_leaves_what_the_model_says_alone() -> None:
+    """No reading ever: the sd is the model's own, and nothing is an innovation."""
+    spec = published("wood_berry")
+    run = record(spec, 120, 8, gaps=1.0, move=0.03)
+    assert np.isnan(run.y).all()
+    history = run.history()
+    result = softsensor.replay(build_plant_model(spec), history)
+    compare(run, result, filter_in_order(spec, run.u, run.y))
+
+
+def test_an_input_without_news_holds_its_value_and_the_first_cycle_waits_for_every_input() -> None:
+    """Contract section 3: an input holds its last value; before each has had one there is no cycle."""
+    spec = random_unit(1)
+    run = record(spec, 150, 9, gaps=0.1)
+    history = run.history()
+    silent = np.random.default_rng(5).random(len(history)) < 0.3
+    silent[:4] = [True, True, True, False]
+    tag = spec.inputs[0].tag
+    history.loc[silent, tag] = np.nan
+    held = history[[item.tag for item in spec.inputs]].ffill().to_numpy()
+    result = softsensor.replay(build_plant_model(spec), history)
+    sensors, estimates = [s.tag for s in spec.sensors], [e.tag for e in spec.estimates]
+    value = by_cycle(result.estimates, "value", estimates)
+    assert np.isnan(value[:3]).all()
+    assert set(result.estimates["status"][: 3 * len(estimates)]) == {"Bad"}
+    dense = filter_in_order(spec, held[3:], run.y[3:], run.uncertain[3:])
+    agree(value[3:], dense.estimate, np.abs(dense.estimate).max(axis=0))
+    found = by_cycle(result.innovations, "innovation", sensors)[3:]
+    agree(found, dense.innovation, dense.innovation_sd)
+
+
+@pytest.mark.parametrize("name", ["wood_berry", "heavy_oil_fractionator", "quadruple_tank"])
+def test_the_sd_settles_at_the_stabilising_riccati_solution(name: str) -> None:
+    """The steady filter by another algorithm: scipy's ordered QZ solution of the algebraic Riccati equation."""
+    spec = published(name)
+    model, n = stochastic(spec), len(spec.sensors)
+    C, R = model.C[:n], np.diag([item.noise_sd**2 for item in spec.sensors])
+    predicted = solve_discrete_are(model.A.T, C.T, model.Q, R)
+    S = C @ predicted @ C.T + R
+    corrected = predicted - predicted @ C.T @ np.linalg.solve(S, C @ predicted)
+    E = model.C[n:]
+    run = record(spec, 1500, 17, gaps=0.0, move=0.0)
+    run = replace(run, uncertain=np.zeros_like(run.uncertain))
+    result = softsensor.replay(build_plant_model(spec), run.history())
+    sd = by_cycle(result.estimates, "sd", [item.tag for item in spec.estimates])[-1]
+    np.testing.assert_allclose(sd, np.sqrt(np.diag(E @ corrected @ E.T)), rtol=1e-8)
+    spread = by_cycle(result.innovations, "sd", [item.tag for item in spec.sensors])[-1]
+    np.testing.assert_allclose(spread, np.sqrt(np.diag(S)), rtol=1e-8)
+
+
+@pytest.mark.parametrize("numerator", [(4.0,), (-30.0, 4.0), (500.0, -30.0, 4.0, 1.0)])
+def test_high_orders_and_repeated_poles_in_polynomial_form(numerator: tuple[float, ...]) -> None:
+    """A triple pole, and two pairs of poles close together, given by their coefficients."""
+    spec = random_unit(1)
+    Ts = spec.sample_time
+    triple = np.poly1d([1.0])
+    for lag in (8.0, 8.0, 8.0):
+        triple *= np.poly1d([lag * Ts, 1.0])
+    close = np.poly1d([100.0 * Ts**2, 12.0 * Ts, 1.0]) * np.poly1d([101.0 * Ts**2, 12.0 * Ts, 1.0])
+    scaled = tuple(value * Ts ** (len(numerator) - 1 - k) for k, value in enumerate(numerator))
+    paths = tuple(
+        replace(
+            path,
+            gain=None,
+            time_constants=(),
+            lead_times=(),
+            integrating=False,
+            numerator=scaled,
+            denominator=tuple(float(value) for value in (triple if k % 2 else close).coefficients),
+        )
+        for k, path in enumerate(spec.paths)
+    )
+    check(replace(spec, paths=paths), 150, 6, 4)
