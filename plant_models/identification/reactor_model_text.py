@@ -40,14 +40,14 @@ tag = "TI2105"
 unit = "degC"
 operating_point = {feed_temperature:.5g}
 range = [0.0, 150.0]
-validated_range = [74.0, 82.0]
+validated_range = [84.0, 92.0]
 
 [[input]]
 tag = "FI2104"
 unit = "m3/h"
 operating_point = {coolant_flow:.5g}
-range = [0.0, 20.0]
-validated_range = [5.0, 12.5]
+range = [0.0, 25.0]
+validated_range = [8.0, 15.0]
 
 [[sensor]]
 tag = "TI2101A"
@@ -79,9 +79,9 @@ unit = "mol/L"
 operating_point = {product:.5g}
 range = [0.0, 4.0]
 validated_range = [1.05, 1.60]
-bias_walk_sd = 0.006
+bias_walk_sd = 0.0045
 bias_initial_sd = 0.006
-lab = {{ tag = "AL2101", sd = 0.012 }}
+lab = {{ tag = "AL2101", sd = 0.01 }}
 
 [[disturbance]]
 name = "feed concentration"
@@ -95,6 +95,7 @@ time_constant = "72 h"
 
 [fault_tests]
 false_flag_interval = "30 d"
+leave_out_isolated = true
 """
 
 

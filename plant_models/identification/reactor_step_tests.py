@@ -33,7 +33,7 @@ LONGEST_DEAD_TIME = 60.0
 
 
 @dataclass(frozen=True, slots=True)
-class TestedSource:
+class StepSource:
     """One source of movement: its name in the model file, the plant's quantity, the step's size.
 
     ``scale`` is in the model's unit per unit of the plant's quantity.
@@ -46,7 +46,7 @@ class TestedSource:
 
 
 @dataclass(frozen=True, slots=True)
-class TestPlan:
+class PlanOfTests:
     """How long each level is held and how often values are taken, in seconds."""
 
     hold: float = 4.0 * HOUR
@@ -55,18 +55,18 @@ class TestPlan:
 
 
 SOURCES = (
-    TestedSource("FI2103", "feed_flow", 0.6),
-    TestedSource("TI2105", "feed_temperature", 2.0),
-    TestedSource("FI2104", "coolant_flow", 1.0),
-    TestedSource("feed concentration", "feed_concentration", 0.10),
-    TestedSource("heat transfer", "heat_transfer_share", 0.05, 100.0),
+    StepSource("FI2103", "feed_flow", 0.6),
+    StepSource("TI2105", "feed_temperature", 2.0),
+    StepSource("FI2104", "coolant_flow", 1.4),
+    StepSource("feed concentration", "feed_concentration", 0.10),
+    StepSource("heat transfer", "heat_transfer_share", 0.05, 100.0),
 )
 TARGETS = ("TI2101A and TI2101B", "TI2102", "AY2101")
 """The two thermocouples are in one liquid and share the transfer functions fitted to their mean."""
 
 
 def run_step_test(
-    source: TestedSource, plan: TestPlan, number: int
+    source: StepSource, plan: PlanOfTests, number: int
 ) -> tuple[Vector, Vector, dict[str, Vector]]:
     """Baseline, step up, step down past the baseline, back: time, the source's move, and the outputs.
 
@@ -93,7 +93,7 @@ def run_step_test(
 
 
 def identify(
-    plan: TestPlan, sources: Sequence[TestedSource] = SOURCES, structures: Sequence[Structure] = STRUCTURES
+    plan: PlanOfTests, sources: Sequence[StepSource] = SOURCES, structures: Sequence[Structure] = STRUCTURES
 ) -> tuple[FittedPair, ...]:
     """Run a test for each source and fit each output's transfer function."""
     pairs = []
@@ -142,7 +142,7 @@ def main(arguments: Sequence[str] | None = None) -> int:
         "--out", type=Path, required=True, help="folder for jacketed_reactor.toml and misfit.csv"
     )
     out: Path = parser.parse_args(arguments).out
-    pairs = identify(TestPlan())
+    pairs = identify(PlanOfTests())
     design = inputs_holding(TankParameters(), TankInputs(), Scenario().setpoint)
     rows = misfit_rows(pairs)
     out.mkdir(parents=True, exist_ok=True)

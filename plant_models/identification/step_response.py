@@ -8,8 +8,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 Vector = NDArray[np.float64]
-_SEPARATION = 1e-4
-"""Poles closer than this share of their size are moved apart; the error of the response is its square."""
+_SEPARATION = 3e-4
+"""Half the distance, as a share of their size, to which nearly equal poles are moved apart; the error is its square."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -45,13 +45,20 @@ class Structure:
         return tuple(factors)
 
 
-def roots_of(factors: tuple[Vector, ...]) -> NDArray[np.complex128]:
-    """Roots of a product of polynomials in descending powers, those of nearly equal value moved apart."""
-    roots = np.concatenate([np.roots(factor) for factor in factors]).astype(np.complex128)
-    for i in range(1, len(roots)):
-        while np.any(np.abs(roots[:i] - roots[i]) < _SEPARATION * np.abs(roots[i])):
-            roots[i] *= 1.0 + 2.0 * _SEPARATION
-    return roots
+def separate_poles(factors: tuple[Vector, ...]) -> NDArray[np.complex128]:
+    """Poles of a product of polynomials in descending powers, those of nearly equal value spread about their mean."""
+    poles = np.concatenate([np.roots(factor) for factor in factors]).astype(np.complex128)
+    waiting, groups = list(range(len(poles))), []
+    while waiting:
+        first = waiting[0]
+        near = [i for i in waiting if abs(poles[i] - poles[first]) < 3.0 * _SEPARATION * abs(poles[first])]
+        groups.append(near)
+        waiting = [i for i in waiting if i not in near]
+    for group in groups:
+        if len(group) > 1:
+            places = 2.0 * np.arange(len(group)) - (len(group) - 1.0)
+            poles[group] = np.mean(poles[group]) * (1.0 + _SEPARATION * places)
+    return poles
 
 
 def step_response(time: Vector, numerator: Vector, factors: tuple[Vector, ...], dead_time: float) -> Vector:
@@ -59,17 +66,16 @@ def step_response(time: Vector, numerator: Vector, factors: tuple[Vector, ...], 
 
     With N(s)/D(s) strictly proper and N(0)/D(0) = 1::
 
-        S(t) = 1 + sum_i r_i exp(p_i (t - dead_time)),   r_i = N(p_i) / (p_i D'(p_i))
+        S(t) = 1 - sum_i r_i exp(p_i (t - dead_time)),   r_i = N(p_i) / prod_j!=i (1 - p_i / p_j)
 
     :param numerator: descending powers of s, last coefficient 1; the denominator's factors alike.
     """
-    poles = roots_of(factors)
-    leading = float(np.prod([factor[0] for factor in factors]))
+    poles = separate_poles(factors)
     since = np.maximum(time - dead_time, 0.0)
     response = np.ones_like(since, dtype=np.complex128)
     for i, pole in enumerate(poles):
-        slope = leading * np.prod(pole - np.delete(poles, i))
-        response += np.polyval(numerator, pole) / (pole * slope) * np.exp(pole * since)
+        slope = np.prod(1.0 - pole / np.delete(poles, i))
+        response -= np.polyval(numerator, pole) / slope * np.exp(pole * since)
     return np.where(time > dead_time, response.real, 0.0)
 
 

@@ -11,12 +11,12 @@ from typing import NamedTuple
 class Controller:
     """Settings. Positive gain: the output rises with the measurement (more coolant when it is hotter)."""
 
-    gain: float = 1.2
+    gain: float = 1.7
     """Output unit per unit of the measurement."""
     integral_time: float = 900.0
     filter_time: float = 60.0
     """Seconds of the first-order filter on the measurement."""
-    output_range: tuple[float, float] = (1.0, 19.0)
+    output_range: tuple[float, float] = (1.0, 24.0)
 
 
 class ControllerState(NamedTuple):

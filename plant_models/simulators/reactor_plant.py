@@ -28,7 +28,7 @@ THERMOWELL_LAG = 20.0
 INSTRUMENTS = (
     Instrument("FI2103", "m3/h", (0.0, 20.0), 0.03, 0.005),
     Instrument("TI2105", "degC", (0.0, 150.0), 0.10, 0.01, THERMOWELL_LAG),
-    Instrument("FI2104", "m3/h", (0.0, 20.0), 0.02, 0.005),
+    Instrument("FI2104", "m3/h", (0.0, 25.0), 0.02, 0.005),
     Instrument("TI2101A", "degC", (0.0, 200.0), 0.25, 0.01, THERMOWELL_LAG),
     Instrument("TI2101B", "degC", (0.0, 200.0), 0.25, 0.01, THERMOWELL_LAG),
     Instrument("TI2102", "degC", (0.0, 150.0), 0.04, 0.01, THERMOWELL_LAG),

@@ -65,7 +65,7 @@ class Laboratory:
     first: float = 1800.0
     interval: float = HOUR
     delay: float = 2400.0
-    noise_sd: float = 0.012
+    noise_sd: float = 0.01
     resolution: float = 0.001
     mistaken_sample: int | None = None
     mistake: float = 0.0
@@ -124,7 +124,7 @@ class DemoScenario:
 
     seed: int = 10
     swing_start: float = 1.5 * HOUR
-    swing_size: float = 0.13
+    swing_size: float = 0.11
     """Of the feed concentration, mol/L."""
     swing_rise: float = 0.4 * HOUR
     swing_plateau: float = 0.9 * HOUR

@@ -40,9 +40,9 @@ class TankParameters:
     rate_constant: float = 3.5
     """First-order rate constant at ``reference_temperature``, 1/h."""
     reference_temperature: float = 92.4
-    heat_transfer: float = 65_000.0
+    heat_transfer: float = 90_000.0
     """UA of the clean jacket, kJ/(h K)."""
-    jacket_volume: float = 0.7
+    jacket_volume: float = 0.9
     coolant_heat_capacity: float = 4180.0
 
 
@@ -50,9 +50,9 @@ class TankInputs(NamedTuple):
     """What acts on the tank: m3/h, degC, mol/L, m3/h, degC, and UA as a share of the clean jacket's."""
 
     feed_flow: float = 11.5
-    feed_temperature: float = 78.0
+    feed_temperature: float = 88.0
     feed_concentration: float = 1.9
-    coolant_flow: float = 8.0
+    coolant_flow: float = 11.2
     coolant_temperature: float = 54.0
     heat_transfer_share: float = 1.0
 
