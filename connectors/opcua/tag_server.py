@@ -69,6 +69,11 @@ class TagServer:
     ) -> None:
         await self.stop()
 
+    @property
+    def library_server(self) -> Server | None:
+        """The library's server while it runs, for what this small one does not offer, such as history."""
+        return self._server
+
     def node_id(self, tag: str) -> str:
         """The tag's node id as a site file has it."""
         return str(NamespacedNodeId(self._namespace_uri, "s", self._tags[tag].identifier))

@@ -9,6 +9,7 @@ import pytest
 
 from connectors.errors import ConnectorError, NodeError, PlantConnectionError
 from connectors.events import ConnectionChange, ReadingsLost, SourceEvent
+from connectors.opcua.node_ids import parse_node_id
 from connectors.opcua.settings import OpcUaSettings
 from connectors.opcua.source import OpcUaSource
 from connectors.opcua.tag_server import ServedTag, TagServer
@@ -250,6 +251,35 @@ def test_a_node_without_history_gives_an_empty_one(endpoint: str, plant_tags: li
             return await source.read_history("TI2101", START - CYCLE, START + CYCLE)
 
     assert asyncio.run(scenario()) == []
+
+
+def test_history_that_the_server_kept_is_read_once_each_in_order(
+    endpoint: str, plant_tags: list[ServedTag]
+) -> None:
+    async def scenario() -> list[Reading]:
+        plant = TagServer(endpoint, URI, plant_tags)
+        source = OpcUaSource(settings(endpoint), plant.node_ids())
+        async with plant, source, asyncio.timeout(PATIENCE):
+            assert plant.library_server is not None
+            node = plant.library_server.get_node(
+                parse_node_id(plant.node_id("TI2101")).resolve(["", "", URI])
+            )
+            await plant.write("TI2101", -1.0, START - 1)
+            await plant.library_server.iserver.enable_history_data_change(node, period=None)
+            events = source.events()
+            await until_connected(events)
+            for step in range(8):
+                await plant.write("TI2101", float(step), START + step, 0x40930000 if step == 3 else 0)
+            await plant.write("TI2101", 7.0, START + 7)
+            while (await next_reading(events, START)).value < 7.0:
+                pass
+            return await source.read_history("TI2101", START + 2, START + 7)
+
+    readings = asyncio.run(scenario())
+    assert [(reading.value, reading.time - START) for reading in readings] == [
+        (float(step), step) for step in range(2, 8)
+    ]
+    assert [reading.quality for reading in readings].count(Quality.UNCERTAIN) == 1
 
 
 def test_a_port_that_is_taken_is_named(endpoint: str, plant_tags: list[ServedTag]) -> None:
