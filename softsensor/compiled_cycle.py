@@ -9,7 +9,7 @@ from numba import njit
 
 from softsensor.detection.fault_tests import TestDesign, TestState, test_cycle
 from softsensor.estimation.input_driven import accept_inputs, advance_input_driven, input_driven_outputs
-from softsensor.estimation.kalman import correct, predict, row_covariance, row_mean
+from softsensor.estimation.kalman import correct, output_variance, predict, row_covariance, row_mean
 from softsensor.estimation.kernel import EstimatorState, Floats, Ints, Kernel
 
 UNSOUND = -1
@@ -112,11 +112,15 @@ def _correct_all(
 
 
 @njit(cache=True)
-def _report(kernel: Kernel, est: EstimatorState, base: Floats, k: int, out: BlockOutputs, v: Floats) -> None:
+def _report(kernel: Kernel, est: EstimatorState, base: Floats, k: int, out: BlockOutputs, v: Floats) -> bool:
     for e in range(kernel.n_estimates):
         row = kernel.n_sensors + e
         out.estimate[k, e] = base[row] + row_mean(kernel, est.x, row)
-        out.estimate_sd[k, e] = np.sqrt(row_covariance(kernel, est.P, row, v))
+        variance = output_variance(kernel, est.P, row, v)
+        if not variance >= 0.0:
+            return False
+        out.estimate_sd[k, e] = np.sqrt(variance)
+    return True
 
 
 @njit(cache=True)
@@ -145,7 +149,8 @@ def run_block(
         lab = _correct_all(kernel, est, base, k, data, out, lab, v, K)
         if lab < 0:
             return UNSOUND
-        _report(kernel, est, base, k, out, v)
+        if not _report(kernel, est, base, k, out, v):
+            return UNSOUND
         advance_input_driven(kernel, est, work)
         predict(kernel, est.x, est.P, v, M)
         if testing:

@@ -21,6 +21,8 @@ CLIP = 4.0
 SPIKE = 6.0
 WINDOW = 2048
 """Innovations kept for the diagnosis."""
+SETTLED = 20_000
+"""Cycles after a bias began at which what it leaves is taken as settled."""
 LEAST_REFERENCE, LARGEST_REFERENCE = 0.125, 1.0
 GROSS_REFERENCE = 0.5
 """For a sensor whose tolerance-sized bias the filter absorbs (half the shift below LEAST_REFERENCE): its sums then watch
@@ -37,7 +39,7 @@ def load_model(path: str | Path) -> PlantModel:
     return build_plant_model(read_model_file(path))
 
 
-def steady_shifts(model: PlantModel, kernel: Kernel, window: int = WINDOW) -> Floats:
+def steady_shifts(model: PlantModel, kernel: Kernel, window: int = SETTLED) -> Floats:
     """Innovation shift, in its standard deviations, that a tolerance-sized bias of each sensor really leaves in it.
 
     Taken ``window`` cycles after the bias began, with the filter settled; (n_sensors,).
@@ -52,7 +54,7 @@ def steady_shifts(model: PlantModel, kernel: Kernel, window: int = WINDOW) -> Fl
     return shifts
 
 
-def test_design(model: PlantModel, kernel: Kernel) -> TestDesign:
+def fault_test_design(model: PlantModel, kernel: Kernel) -> TestDesign:
     """Reference values from the shifts that tolerance-sized biases leave; intervals solved for the promised run length."""
     cycles = model.spec.false_flag_interval / model.spec.sample_time
     half = 0.5 * steady_shifts(model, kernel)
@@ -77,7 +79,7 @@ def design_unit(model: PlantModel) -> UnitDesign:
     detection = DetectionDesign(
         model,
         kernel,
-        test_design(model, kernel),
+        fault_test_design(model, kernel),
         hypotheses(model, WINDOW),
         WINDOW,
         round(spec.sample_time * 1e6),

@@ -143,7 +143,9 @@ def judge(suspects: tuple[Hypothesis, ...], found: Likelihoods, temper: float = 
     names = sorted(weights, key=lambda name: -weights[name])
     first = weights[names[0]]
     alone = first >= NAMING_RATIO * (total - first)
-    group = tuple(names[:1]) if alone else tuple(name for name in names if weights[name] * NAMING_RATIO > first)
+    group = (
+        tuple(names[:1]) if alone else tuple(name for name in names if weights[name] * NAMING_RATIO > first)
+    )
     return Verdict(
         tuple(names),
         tuple(weights[name] / total for name in names),

@@ -58,6 +58,8 @@ class TestState(NamedTuple):
     high_since: Ints
     low_since: Ints
     up: Ints
+    down_since: Ints
+    """Cycle at which each sensor's sums last came down."""
     last_value: Floats
     repeats: Ints
     run_probability: Floats
@@ -94,6 +96,7 @@ def initial_tests(n_sensors: int, window: int) -> TestState:
         ints(),
         ints(),
         ints(),
+        ints(),
         floats(np.nan),
         ints(),
         floats(1.0),
@@ -127,6 +130,7 @@ def _test_shift(design: TestDesign, state: TestState, i: int, z: float) -> int:
         return SHIFT_UP
     if state.up[i] != 0 and top < 0.5 * design.interval[i]:
         state.up[i] = 0
+        state.down_since[i] = now
         return SHIFT_CLEARED
     return 0
 

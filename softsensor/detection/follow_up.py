@@ -24,8 +24,9 @@ from softsensor.estimation.kernel import Floats, Ints, Kernel
 SHIFT_KINDS: tuple[Kind, ...] = ("bias", "drift")
 PATIENCE = 60
 """Cycles for which a name is waited for before a group is flagged."""
-SPIKE_QUIET = 360
-"""Cycles without another spike after which a spike flag clears."""
+QUIET = 360
+"""Cycles without another spike, or with the sums down, after which a spike's or a shift's flag clears: a fault that comes
+and goes, or that the filter half follows, stays one flag."""
 
 
 @dataclass(frozen=True)
@@ -134,20 +135,23 @@ def _simple_faults(
     if bits & (fault_tests.LOST | fault_tests.LOST_ENDED):
         tests.valid_from[0] = moment.cycle + 1
     spike = outcome.book.find(tag, ("spike",))
-    if spike is not None and moment.time - spike.detected > SPIKE_QUIET * design.sample_us:
+    if spike is not None and moment.time - spike.detected > QUIET * design.sample_us:
         outcome = _cleared(outcome, spike, moment.time)
     return outcome
 
 
 def _clear_shifts(design: DetectionDesign, outcome: FollowUp, tests: TestState, moment: Moment) -> FollowUp:
-    """A shift's flag clears when its sensor's own sums have come down (an input's: when all sums have)."""
+    """A shift's flag clears once its sensor's own sums have stayed down (an input's: once all sums have)."""
     tags = [item.tag for item in design.model.spec.sensors]
     for flag in outcome.book.open:
         if flag.kind not in SHIFT_KINDS or flag.detected == moment.time:
             continue
-        up = tests.up[tags.index(flag.tag)] != 0 if flag.tag in tags else bool(np.any(tests.up != 0))
-        settled = moment.time - flag.detected > PATIENCE * design.sample_us
-        if not up and settled:
+        own = slice(tags.index(flag.tag), tags.index(flag.tag) + 1) if flag.tag in tags else slice(None)
+        since = max(
+            int(np.max(tests.down_since[own])),
+            moment.cycle - (moment.time - flag.detected) // design.sample_us,
+        )
+        if not np.any(tests.up[own] != 0) and moment.cycle - since > QUIET:
             outcome = _cleared(outcome, flag, moment.time)
     return outcome
 

@@ -207,7 +207,12 @@ def _sizes(model: PlantModel, window: int) -> list[tuple[Source, int, str, float
         ("sensor", i, item.tag, 3.0 * item.tolerance) for i, item in enumerate(model.spec.sensors)
     ]
     suspects += [
-        ("input", i, item.tag, 0.1 * _width(item.validated_range) if item.validated_range else 0.03 * _width(item.range))
+        (
+            "input",
+            i,
+            item.tag,
+            0.1 * _width(item.validated_range) if item.validated_range else 0.03 * _width(item.range),
+        )
         for i, item in enumerate(model.spec.inputs)
     ]
     for i, item in enumerate(model.spec.disturbances):

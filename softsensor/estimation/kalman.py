@@ -11,6 +11,9 @@ from numba import njit
 
 from softsensor.estimation.kernel import Floats, Kernel
 
+ROUNDING = 1e-12
+"""Share of the summed terms' sizes that rounding alone may leave of a variance that is zero."""
+
 
 @njit(cache=True)
 def row_mean(kernel: Kernel, x: Floats, row: int) -> float:
@@ -35,6 +38,23 @@ def row_covariance(kernel: Kernel, P: Floats, row: int, v: Floats) -> float:
     for e in range(kernel.c_ptr[row], kernel.c_ptr[row + 1]):
         total += kernel.c_val[e] * v[kernel.c_idx[e]]
     return total
+
+
+@njit(cache=True)
+def output_variance(kernel: Kernel, P: Floats, row: int, v: Floats) -> float:
+    """C_row P C_row' of an output without noise; 0 where a true zero has come out below zero by rounding alone.
+
+    Behind a washout the terms cancel exactly in theory and to a few bits in floating point. What lies further below
+    zero than rounding explains is returned as it is, for the caller to refuse.
+    """
+    variance = row_covariance(kernel, P, row, v)
+    if variance >= 0.0:
+        return variance
+    terms = 0.0
+    for e in range(kernel.c_ptr[row], kernel.c_ptr[row + 1]):
+        for f in range(kernel.c_ptr[row], kernel.c_ptr[row + 1]):
+            terms += abs(kernel.c_val[e] * P[kernel.c_idx[e], kernel.c_idx[f]] * kernel.c_val[f])
+    return 0.0 if variance >= -ROUNDING * terms else variance
 
 
 @njit(cache=True)

@@ -23,7 +23,7 @@ from softsensor.estimation.observability import (
     estimate_knowledge,
 )
 from softsensor.estimation.steady_state import SteadyState, steady_state
-from softsensor.unit_design import test_design
+from softsensor.unit_design import fault_test_design
 
 CAUTION = (
     "Advisory only: estimates and flags are no safety function, no part of one "
@@ -202,7 +202,7 @@ def _solution(state: SteadyState) -> SolutionReport:
 
 
 def _sensors(model: PlantModel) -> tuple[SensorReport, ...]:
-    design = test_design(model, build_kernel(model))
+    design = fault_test_design(model, build_kernel(model))
     found = []
     for i, shift in enumerate(sensor_shifts(model)):
         reference, interval = float(design.reference[i]), float(design.interval[i])

@@ -16,7 +16,7 @@ from softsensor.estimation.kernel import build_kernel
 from softsensor.records.engine import Database
 from softsensor.records.reader import Unit
 from softsensor.records.tables import model_revisions
-from softsensor.unit_design import test_design
+from softsensor.unit_design import fault_test_design
 
 
 class ModelsInService:
@@ -63,6 +63,6 @@ class ModelsInService:
             known = self._intervals.get(revision_id)
             if known is None:
                 model = build_plant_model(self.spec(revision_id))
-                known = test_design(model, build_kernel(model)).interval
+                known = fault_test_design(model, build_kernel(model)).interval
                 self._intervals[revision_id] = known
         return known
