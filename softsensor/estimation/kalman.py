@@ -12,7 +12,7 @@ from numba import njit
 from softsensor.estimation.kernel import Floats, Kernel
 
 ROUNDING = 1e-12
-"""Share of the summed terms' sizes that rounding alone may leave of a variance that is zero."""
+"""What rounding alone may leave of a variance that is zero, as a share of the largest state's variance."""
 
 
 @njit(cache=True)
@@ -50,11 +50,12 @@ def output_variance(kernel: Kernel, P: Floats, row: int, v: Floats) -> float:
     variance = row_covariance(kernel, P, row, v)
     if variance >= 0.0:
         return variance
-    terms = 0.0
+    weight, largest = 0.0, 0.0
     for e in range(kernel.c_ptr[row], kernel.c_ptr[row + 1]):
-        for f in range(kernel.c_ptr[row], kernel.c_ptr[row + 1]):
-            terms += abs(kernel.c_val[e] * P[kernel.c_idx[e], kernel.c_idx[f]] * kernel.c_val[f])
-    return 0.0 if variance >= -ROUNDING * terms else variance
+        weight += abs(kernel.c_val[e])
+    for i in range(len(kernel.q)):
+        largest = max(largest, P[i, i])
+    return 0.0 if variance >= -ROUNDING * weight * weight * largest else variance
 
 
 @njit(cache=True)
