@@ -21,10 +21,15 @@ FORMAT = 1
 
 @dataclass(frozen=True)
 class Context:
-    """What belongs to a state besides itself: the model's digest, the time of its cycle 0, the results counted so far."""
+    """What belongs to a state besides itself.
+
+    The model's digest, the time of its cycle 0, the earliest cycle that the run remembers (never one of another
+    revision), the laboratory results counted so far.
+    """
 
     model_digest: str
     first_time: int
+    first_remembered: int
     labs: tuple[LabAtCycle, ...] = ()
 
 
@@ -67,7 +72,7 @@ def unpack_state(blob: bytes, version: int) -> tuple[CycleState, Context]:
             LabAtCycle(cycle, estimate, float.fromhex(value), float.fromhex(variance))
             for cycle, estimate, value, variance in rest["labs"]
         )
-        context = Context(rest["model"], rest["first_time"], labs)
+        context = Context(rest["model"], rest["first_time"], rest["first_remembered"], labs)
         return CycleState(_estimator(arrays), tests, book, digest), context
     except (KeyError, TypeError, ValueError) as error:
         raise RecordsError(f"a checkpoint is damaged: {error!r}") from None
@@ -78,6 +83,7 @@ def _rest(state: CycleState, context: Context) -> bytes:
     content = {
         "model": context.model_digest,
         "first_time": context.first_time,
+        "first_remembered": context.first_remembered,
         "labs": [
             [lab.cycle, lab.estimate, float(lab.value).hex(), float(lab.variance).hex()]
             for lab in context.labs

@@ -35,13 +35,22 @@ class Replay:
 
     :param parts: consecutive cycles, each part with the laboratory results that arrive at its first cycle.
     :param horizon_s: how far back, in seconds, a late result may reach.
+    :param first_cycle: the number of the first cycle, a multiple of the checkpoint interval.
     """
 
-    def __init__(self, design: UnitDesign, parts: Iterable[Part], horizon_s: float = LEAST_HORIZON_S) -> None:
+    def __init__(
+        self,
+        design: UnitDesign,
+        parts: Iterable[Part],
+        horizon_s: float = LEAST_HORIZON_S,
+        first_cycle: int = 0,
+    ) -> None:
         self.design = design
         self._parts = parts
         cycles = int(np.ceil(max(horizon_s, LEAST_HORIZON_S) / design.model.spec.sample_time)) + 2
-        self.run = UnitRun(design, start(design), Past(cycles, design.kernel.n_estimates))
+        past = Past(cycles, design.kernel.n_estimates)
+        past.next_cycle = first_cycle
+        self.run = UnitRun(design, start(design, first_cycle), past)
         self.totals = RunSummary(design)
 
     def stretches(self) -> Iterator[Stretch]:

@@ -51,7 +51,8 @@ def resumed_run(design: UnitDesign, database: Database, unit_id: int, horizon: i
     state, context = unpack_state(checkpoint.state, checkpoint.format_version)
     if context.model_digest != design.model.digest:
         return fresh_run(design, horizon, 0 if seen is None else _next_chunk(seen.cycle))
-    past = refilled_past(design, database, unit_id, state.next_cycle, horizon)
+    past = Past(horizon, design.kernel.n_estimates)
+    refill(past, database, unit_id, range(context.first_remembered, state.next_cycle))
     return UnitRun(design, state, past, context.labs, context.first_time)
 
 
@@ -59,15 +60,14 @@ def _next_chunk(cycle: int) -> int:
     return (cycle // CHUNK + 1) * CHUNK
 
 
-def refilled_past(design: UnitDesign, database: Database, unit_id: int, upto: int, horizon: int) -> Past:
-    """What a run remembered before cycle ``upto``, from checkpoints, readings and estimates as now known."""
-    past = Past(horizon, design.kernel.n_estimates)
-    past.next_cycle = upto
-    first = max(0, (upto - horizon) // CHUNK * CHUNK)
-    for cycle in range(first, upto, CHUNK):
-        _refill_chunk(past, database, unit_id, cycle, min(cycle + CHUNK, upto))
-    past.next_cycle = upto
-    return past
+def refill(past: Past, database: Database, unit_id: int, cycles: range) -> None:
+    """What a run remembered of these cycles, from checkpoints, readings and estimates as now known.
+
+    :param cycles: from a multiple of the checkpoint interval to the coming cycle.
+    """
+    for cycle in range(cycles.start, cycles.stop, CHUNK):
+        _refill_chunk(past, database, unit_id, cycle, min(cycle + CHUNK, cycles.stop))
+    past.next_cycle = cycles.stop
 
 
 def _refill_chunk(past: Past, database: Database, unit_id: int, cycle: int, stop: int) -> None:

@@ -18,7 +18,7 @@ from softsensor.records import blocks, storing
 from softsensor.records.engine import Database
 from softsensor.records.reader import lab_results_of
 from softsensor.records.writer import RecordsWriter
-from softsensor.service.assembly import AssemblyState, LiveAssembly, TagRule, rules_of
+from softsensor.service.assembly import NO_LIMIT, AssemblyState, LiveAssembly, TagRule, rules_of
 from softsensor.service.checkpoints import FORMAT, Context, pack_state
 from softsensor.service.reading_rules import TagState
 from softsensor.service.recording import Step, pack_decisions, write_step
@@ -121,7 +121,7 @@ class UnitService:
 
     def _keep_first_state(self, time: int) -> None:
         cycle = self.run.state.next_cycle
-        context = Context(self.model.digest, time - cycle * self._sample_us)
+        context = Context(self.model.digest, time - cycle * self._sample_us, cycle)
         checkpoint = blocks.Checkpoint(cycle, FORMAT, pack_state(self.run.state, context))
         self._writer.submit(storing.store_checkpoint, self.identity.unit_id, checkpoint)
 
@@ -154,7 +154,9 @@ class UnitService:
 
     def _checkpoint(self) -> bytes:
         assert self.run.first_time is not None
-        return pack_state(self.run.state, Context(self.model.digest, self.run.first_time, self.run.labs))
+        remembered = self.run.past.first_cycle
+        context = Context(self.model.digest, self.run.first_time, remembered, self.run.labs)
+        return pack_state(self.run.state, context)
 
     def _submit(self, step: Step) -> None:
         self._writer.submit(write_step, self.identity.unit_id, self.design, step)
@@ -200,8 +202,9 @@ class UnitService:
 def held_values(spec: UnitSpec, last: CycleReadings) -> AssemblyState:
     """What the assembly knew after the last recorded cycle, as far as the record tells.
 
-    Inputs hold their values, with the age that the record implies: a value that was too old stays too old. A sensor
-    reported on change holds its value too; any other has been used.
+    The record keeps no source times. Inputs hold their values, as old as the record allows: one that was too old stays
+    so, any other becomes too old unless it is heard again; the plant's server shows it again with its own time as soon
+    as it is connected. A sensor reported on change holds its value too; any other has been used.
     """
     rules, time = rules_of(spec), int(last.times[-1])
     inputs = tuple(
@@ -220,7 +223,8 @@ def held_values(spec: UnitSpec, last: CycleReadings) -> AssemblyState:
 def _held(time: int, value: float, quality: int, rule: TagRule) -> TagState:
     if not np.isfinite(value):
         return TagState(newest_time=time, used_time=time)
-    since = time - rule.max_age - 1 if quality == CycleQuality.STALE else time
+    oldest = time if rule.max_age == NO_LIMIT else time - rule.max_age
+    since = oldest - 1 if quality == CycleQuality.STALE else oldest
     usable = (
         min(quality, int(CycleQuality.UNCERTAIN)) if quality <= CycleQuality.BAD else int(CycleQuality.GOOD)
     )
