@@ -304,7 +304,10 @@ LIMITS = [
     (METHOD, f"{cycle.UNCERTAIN_VARIANCE:g} noise_sd^2 where the reading is Uncertain"),
     (METHOD, f"the interval of {result_tables.NORMAL_95:.2f} sd to either side"),
     (METHOD, f"clipped to {unit_design.CLIP:g} in size"),
-    (METHOD, "within {:g} and {:g}.".format(*unit_design.REFERENCE_BOUNDS)),
+    (METHOD, f"in the end, at most {unit_design.LARGEST_REFERENCE:g}."),
+    (METHOD, f"Where that half is below {unit_design.LEAST_REFERENCE:g} the filter absorbs"),
+    (METHOD, f"k is then {unit_design.GROSS_REFERENCE:g},"),
+    (METHOD, f"stayed down for more than {follow_up.QUIET} cycles"),
     (METHOD, f"more than {unit_design.LOST_SECONDS:g} s and more than {unit_design.LOST_CYCLES} cycles"),
     (METHOD, f"at least {fault_tests.MIN_REPEATS} equal readings in a row"),
     (METHOD, f"once {fault_tests.WARM_UP} readings have been seen"),
@@ -321,7 +324,7 @@ def test_a_number_of_the_program_is_the_one_in_the_handbook(chapter: str, words:
 
 def test_the_ratio_at_which_a_name_is_given_is_ten_to_one() -> None:
     assert diagnosis.NAMING_RATIO == 10.0
-    assert "nothing else is within ten to one" in plain(METHOD)
+    assert "ten times as probable as everything else together" in plain(METHOD)
 
 
 def test_the_longest_time_and_the_longest_name_are_as_described() -> None:
