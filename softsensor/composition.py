@@ -11,35 +11,31 @@ from dataclasses import dataclass
 
 import uvicorn
 
-from connectors.opcua.analog_item import EngineeringUnit
-from connectors.opcua.publisher import DeviceHealth, PublishedEstimate, PublishedUnit, Publisher
+from connectors.opcua.publisher import Publisher
 from connectors.opcua.settings import OpcUaSettings
 from connectors.opcua.source import OpcUaSource
 from plant_models.building import build_plant_model
 from plant_models.errors import Problem
 from plant_models.model_file import read_model_file
 from plant_models.plant_model import PlantModel
-from plant_models.units import engineering_units
-from softsensor.alarms.sensor_status import sensor_health
 from softsensor.errors import SiteFileError
+from softsensor.opcua_sink import OpcUaSink, flag_action, published_units
 from softsensor.records.engine import Database, open_database
 from softsensor.records.named_arrays import pack_arrays
 from softsensor.records.plant import Deed, Revision, register_revision, register_unit, set_revision_state
 from softsensor.records.writer import RecordsWriter
 from softsensor.service.clock import Clock, ScaledClock, SystemClock
-from softsensor.service.live import LiveService
-from softsensor.service.recording import Step
-from softsensor.service.result_tables import NORMAL_95
+from softsensor.service.live import GRACE, LiveService
 from softsensor.service.site_file import SiteSettings, UnitSettings
 from softsensor.service.unit_service import UnitIdentity, UnitService
 from softsensor.unit_design import design_unit
 from softsensor.web.app import create_app
 
 PROGRAM = "softsensor"
+SIMULATED_GRACE = 10.0
+"""As GRACE, for a simulated plant on a faster clock: what comes late there comes late for want of a processor."""
 WRITER_PATIENCE = 1.0
 """Seconds that a full queue of records holds a unit up before the service ends and says why."""
-STATUS_CODES = (0x00000000, 0x40950000, 0x80310000)
-"""OPC UA codes of Good, Uncertain (UncertainSubNormal) and Bad (BadNoCommunication)."""
 
 
 @dataclass(frozen=True)
@@ -131,51 +127,6 @@ def register(database: Database, model: PlantModel, clock: Clock) -> UnitIdentit
     return UnitIdentity(unit_id, revision_id)
 
 
-class OpcUaSink:
-    """Publishes each cycle on our own OPC UA server."""
-
-    def __init__(self, publisher: Publisher) -> None:
-        self._publisher = publisher
-
-    async def publish(self, unit: UnitService, step: Step) -> None:
-        results, now = step.results, int(step.results.times[0])
-        for e, tag in enumerate(unit.model.estimate_tags):
-            value, sd = float(results.estimate[0, e]), float(results.sd[0, e])
-            await self._publisher.publish_estimate(
-                unit.name,
-                tag,
-                value,
-                sd,
-                value - NORMAL_95 * sd,
-                value + NORMAL_95 * sd,
-                now,
-                STATUS_CODES[int(results.status[0, e])],
-            )
-        for tag in unit.model.sensor_tags:
-            health = DeviceHealth(sensor_health(unit.run.state.book, tag).code)
-            await self._publisher.publish_sensor_health(unit.name, tag, health, now)
-
-
-def published_units(models: list[PlantModel]) -> list[PublishedUnit]:
-    """What our own server shows."""
-    return [
-        PublishedUnit(
-            model.spec.name,
-            tuple(
-                PublishedEstimate(item.tag, _engineering_unit(item.unit), item.range)
-                for item in model.spec.estimates
-            ),
-            model.sensor_tags,
-        )
-        for model in models
-    ]
-
-
-def _engineering_unit(text: str) -> EngineeringUnit:
-    _, unit_id, display_name = engineering_units(text)
-    return EngineeringUnit(display_name, unit_id)
-
-
 class _PageServer(uvicorn.Server):
     """The web server on our own loop: signals stay with the program."""
 
@@ -244,9 +195,13 @@ async def running_site(
         ]
         sinks = []
         if settings.publish is not None:
-            publisher = await stack.enter_async_context(Publisher(settings.publish, published_units(models)))
+            server = Publisher(
+                settings.publish, published_units(models), on_flag_action=flag_action(database)
+            )
+            publisher = await stack.enter_async_context(server)
             sinks.append(OpcUaSink(publisher))
         await stack.enter_async_context(source)
-        service = LiveService(units, source, routes, clock, writer, sinks)
+        grace = GRACE if settings.clock is None else SIMULATED_GRACE
+        service = LiveService(units, source, routes, clock, writer, sinks, grace)
         page = await stack.enter_async_context(_page(database, service, settings.web))
         yield Site(service, page, database)

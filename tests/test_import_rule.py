@@ -23,7 +23,7 @@ LAYERS: tuple[tuple[str, ...], ...] = (
     ("alarms", "records"),
     ("service", "commissioning"),
     ("web",),
-    ("recorded_data", "composition"),
+    ("recorded_data", "opcua_sink", "composition"),
     ("demonstration",),
     ("cli", "__main__"),
 )
@@ -33,7 +33,7 @@ FREE = ("handbook",)
 """Holds text and no code: imports nothing of ours, and nobody's layer depends on it."""
 SPOKEN_BY_ALL = ("readings", "events", "history", "lab_results", "errors")
 """Modules of connectors that every room may import; the concrete ones are for a few."""
-KNOW_CONCRETE_CONNECTORS = ("cli", "composition", "recorded_data")
+KNOW_CONCRETE_CONNECTORS = ("cli", "composition", "opcua_sink", "recorded_data", "demonstration")
 
 INIT = ".__init__"
 Modules = Mapping[str, str]

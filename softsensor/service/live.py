@@ -36,6 +36,10 @@ class Source(Protocol):
 class Sink(Protocol):
     """Where a unit's results go besides the records."""
 
+    async def begin(self, unit: UnitService) -> None:
+        """A unit has resumed."""
+        ...
+
     async def publish(self, unit: UnitService, step: Step) -> None:
         """One cycle's outcome."""
         ...
@@ -55,6 +59,7 @@ class LiveService:
         clock: Clock,
         writer: RecordsWriter,
         sinks: Sequence[Sink] = (),
+        grace: float = GRACE,
     ) -> None:
         self._units = units
         self._source = source
@@ -62,6 +67,7 @@ class LiveService:
         self._clock = clock
         self._writer = writer
         self._sinks = sinks
+        self._grace = grace
         self._stopping = False
         self.feed = LiveFeed()
         self.connected = False
@@ -83,6 +89,8 @@ class LiveService:
             again = unit.resume(self._clock.now())
             if again:
                 self._event(unit, "restart", f"{again} recorded cycles ran again after the last checkpoint")
+            for sink in self._sinks:
+                await sink.begin(unit)
         async with asyncio.TaskGroup() as tasks:
             watching = [tasks.create_task(self._read()), tasks.create_task(self._watch_records())]
             watching += [tasks.create_task(self._watch_decisions(unit)) for unit in self._units]
@@ -121,7 +129,9 @@ class LiveService:
     async def _wait_for_readings(self, unit: UnitService, moment: int) -> None:
         """Until every tag has been heard to the cycle's time, or the grace is over."""
         while (
-            not self._stopping and unit.complete_to() < moment and self._clock.seconds_until(moment) > -GRACE
+            not self._stopping
+            and unit.complete_to() < moment
+            and self._clock.seconds_until(moment) > -self._grace
         ):
             await asyncio.sleep(LOOK)
         await asyncio.sleep(0)
