@@ -16,6 +16,7 @@ from plant_models.errors import Problem
 from softsensor.records.engine import Database
 from softsensor.service.live_feed import LiveFeed
 from softsensor.web.forms import form_routes
+from softsensor.web.live import LiveStreams
 from softsensor.web.models_in_service import ModelsInService
 from softsensor.web.pages import Pages, data_routes, page_routes
 from softsensor.web.security import ProtectiveHeaders
@@ -34,11 +35,14 @@ TITLES = {
 def create_app(database: Database, feed: LiveFeed) -> FastAPI:
     """The page over these records and this feed. Serve it on the loop on which the feed is published to.
 
-    It needs no start-up of its own. What reads the records runs in the server's thread pool.
+    It needs no start-up of its own. Before the server shuts down, ``app.state.streams.close()`` on its loop ends the
+    live streams, which would go on as long as a page is open. What reads the records runs in the server's thread pool.
     """
-    site = Site(database, feed, ModelsInService(database))
+    streams = LiveStreams(feed)
+    site = Site(database, streams, ModelsInService(database))
     pages = Pages(site)
     app = FastAPI(title="softsensor", docs_url=None, redoc_url=None, openapi_url=None)
+    app.state.streams = streams
     app.add_middleware(ProtectiveHeaders)
     app.include_router(data_routes(site))
     app.include_router(page_routes(site, pages))

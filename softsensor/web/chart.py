@@ -1,4 +1,4 @@
-"""The charts as Bokeh documents in JSON: shapes, axes and empty sources; the page's script fills the sources.
+"""The charts as Bokeh documents in JSON: shapes, axes and sources, which the page's script goes on filling.
 
 Nothing here carries script. Sources are found by their names, which are those of ``chart_data``; the band's
 source holds polygons that the page makes of the estimate's columns, one for each stretch without a gap.
@@ -6,6 +6,7 @@ source holds polygons that the page makes of the estimate's columns, one for eac
 
 from __future__ import annotations
 
+import math
 from typing import Any
 
 from bokeh.embed import json_item
@@ -26,21 +27,35 @@ from bokeh.models.annotations.labels import LabelSet
 from bokeh.plotting import figure
 
 from plant_models.specification import EstimateSpec, SensorSpec
-from softsensor.web.chart_data import Window
+from softsensor.web.chart_data import Columns, Window
+from softsensor.web.rows import estimate_decimals
 from softsensor.web.wording import decimals_for
 
 INK, MUTED, RULE, GROUND, BAND = "#1c2226", "#4b5459", "#c9cdce", "#eef0f0", "#c2cacd"
 REVISED, WAITING, FLAGGED = "#2f6f8f", "#b34700", "#d9a400"
 FONT = "11px"
-TICKS = DatetimeTickFormatter(
-    seconds="%H:%M:%S",
-    minsec="%H:%M:%S",
-    minutes="%H:%M",
-    hourmin="%H:%M",
-    hours="%H:%M",
-    days="%d %b",
-    months="%b %Y",
-)
+
+
+def _ticks() -> DatetimeTickFormatter:
+    return DatetimeTickFormatter(
+        seconds="%H:%M:%S",
+        minsec="%H:%M:%S",
+        minutes="%H:%M",
+        hourmin="%H:%M",
+        hours="%H:%M",
+        days="%d %b",
+        months="%b %Y",
+        context=DatetimeTickFormatter(
+            seconds="%Y-%m-%d",
+            minsec="%Y-%m-%d",
+            minutes="%Y-%m-%d",
+            hourmin="%Y-%m-%d",
+            hours="%Y-%m-%d",
+            days="%Y",
+        ),
+        context_which="start",
+        hide_repeats=True,
+    )
 
 
 def offset_words(offset_us: int) -> str:
@@ -53,8 +68,15 @@ def offset_words(offset_us: int) -> str:
     return f"UTC{'-' if offset_us < 0 else '+'}{minutes // 60:02d}:{minutes % 60:02d}"
 
 
-def _source(name: str, *columns: str) -> ColumnDataSource:
-    return ColumnDataSource({key: [] for key in columns}, name=name)
+def _source(
+    name: str, columns: dict[str, Columns], keys: tuple[str, ...] = ("x", "value")
+) -> ColumnDataSource:
+    """A source with its columns; None becomes nan, which breaks a line."""
+    given = columns.get(name, {key: [] for key in keys})
+    data: dict[str, Any] = {
+        key: [math.nan if value is None else value for value in given[key]] for key in given
+    }
+    return ColumnDataSource(data, name=name)
 
 
 def _plot(window: Window, y_label: str, height: int, x_range: Range1d | None = None) -> Any:
@@ -65,6 +87,7 @@ def _plot(window: Window, y_label: str, height: int, x_range: Range1d | None = N
     plot = figure(
         height=height,
         sizing_mode="stretch_width",
+        x_axis_type="datetime",
         x_range=shown,
         y_range=DataRange1d(range_padding=0.08, only_visible=True),
         tools=[
@@ -82,7 +105,7 @@ def _plot(window: Window, y_label: str, height: int, x_range: Range1d | None = N
     plot.add_tools(ResetTool())
     plot.toolbar.logo = None
     plot.toolbar.autohide = True
-    plot.xaxis.formatter = TICKS
+    plot.xaxis.formatter = _ticks()
     plot.xaxis.axis_label = f"time, {offset_words(window.offset_us)}"
     plot.yaxis.axis_label = y_label
     for axis in (*plot.xaxis, *plot.yaxis):
@@ -103,13 +126,13 @@ def _flagged(plot: Any, flags: ColumnDataSource) -> None:
         source=flags,
         level="underlay",
         fill_color=FLAGGED,
-        fill_alpha=0.16,
+        fill_alpha=0.13,
         line_color=FLAGGED,
         line_width=1,
         hatch_pattern="/",
         hatch_color=FLAGGED,
-        hatch_alpha=0.35,
-        hatch_scale=14,
+        hatch_alpha=0.22,
+        hatch_scale=18,
         hatch_weight=1,
     )
     labels = LabelSet(
@@ -118,7 +141,8 @@ def _flagged(plot: Any, flags: ColumnDataSource) -> None:
         y_units="screen",
         text="text",
         source=flags,
-        x_offset=4,
+        x_offset="shift",
+        text_align="align",
         text_font_size=FONT,
         text_color=INK,
         background_fill_color=GROUND,
@@ -127,19 +151,19 @@ def _flagged(plot: Any, flags: ColumnDataSource) -> None:
     plot.add_layout(labels)
 
 
-def estimate_chart(item: EstimateSpec, window: Window, decimals: int) -> dict[str, Any]:
+def estimate_chart(item: EstimateSpec, window: Window, columns: dict[str, Columns]) -> dict[str, Any]:
     """An estimate with its 95 % band, laboratory results, the revised estimate and flagged periods."""
     plot = _plot(window, f"{item.tag}, {item.unit}", 330)
     span = (item.range[1] - item.range[0]) / 200.0
     plot.y_range.min_interval = 4.0 * (item.lab.sd if item.lab is not None else span)
-    _flagged(plot, _source("flags", "left", "right", "text", "row"))
-    band = plot.patches("xs", "ys", source=_source("band", "xs", "ys"), fill_color=BAND, line_color=None)
-    band.level = "underlay"
-    estimate = _source("estimate", "x", "value", "lower", "upper")
-    line = plot.line("x", "value", source=estimate, line_color=INK, line_width=2)
-    revised = plot.line(
-        "x", "value", source=_source("revised", "x", "value"), line_color=REVISED, line_width=1.2
+    _flagged(plot, _source("flags", columns))
+    band = plot.patches(
+        "xs", "ys", source=_source("band", {}, ("xs", "ys")), fill_color=BAND, line_color=None
     )
+    band.level = "underlay"
+    estimate = _source("estimate", columns)
+    line = plot.line("x", "value", source=estimate, line_color=INK, line_width=2)
+    revised = plot.line("x", "value", source=_source("revised", columns), line_color=REVISED, line_width=1.2)
     revised.glyph.line_dash = [5, 3]
     drawn: dict[str, dict[str, Any]] = {
         "lab used": {"marker": "circle", "size": 9, "fill_color": INK, "line_color": GROUND},
@@ -152,19 +176,20 @@ def estimate_chart(item: EstimateSpec, window: Window, decimals: int) -> dict[st
         },
         "lab left out": {"marker": "x", "size": 11, "line_color": MUTED, "line_width": 2.5},
     }
-    labs = [
-        plot.scatter("x", "value", source=_source(name, "x", "value", "text"), **look)
-        for name, look in drawn.items()
-    ]
+    labs = [plot.scatter("x", "value", source=_source(name, columns), **look) for name, look in drawn.items()]
     plot.y_range.renderers = [band, line, *labs]
-    pattern = "0." + "0" * decimals if decimals else "0"
+    pattern = _pattern(estimate_decimals(item))
     tips = [(name, f"@{name}{{{pattern}}} {_braceless(item.unit)}") for name in ("value", "lower", "upper")]
     times = [("time", "@x{%F %T}")]
-    hover: dict[str, Any] = {"formatters": {"@x": "datetime"}, "toggleable": False}
+    hover: dict[str, Any] = {"formatters": {"@x": "datetime"}, "visible": False}
     plot.add_tools(HoverTool(renderers=[line], mode="vline", tooltips=times + tips, **hover))
     said = [("laboratory", "@text"), ("sampled", "@x{%F %T}"), tips[0]]
     plot.add_tools(HoverTool(renderers=labs, tooltips=said, **hover))
     return dict(json_item(plot))
+
+
+def _pattern(decimals: int) -> str:
+    return "0." + "0" * decimals if decimals else "0"
 
 
 def _braceless(text: str) -> str:
@@ -172,24 +197,27 @@ def _braceless(text: str) -> str:
     return text.replace("@", "").replace("$", "").replace("{", "(").replace("}", ")")
 
 
-def sensor_chart(item: SensorSpec, window: Window, interval: float) -> dict[str, Any]:
+def sensor_chart(
+    item: SensorSpec, window: Window, columns: dict[str, Columns], interval: float
+) -> dict[str, Any]:
     """A sensor's reading against its prediction, and below both cumulative sums with the decision interval."""
     top = _plot(window, f"{item.tag}, {item.unit}", 240)
     top.y_range.min_interval = 6.0 * item.noise_sd
-    _flagged(top, _source("flags", "left", "right", "text", "row"))
-    dots = top.scatter("x", "value", source=_source("reading", "x", "value"), size=3.5, marker="circle")
+    _flagged(top, _source("flags", columns))
+    dots = top.scatter("x", "value", source=_source("reading", columns), size=3.5, marker="circle")
     dots.glyph.update(fill_color=REVISED, line_color=None)
-    line = top.line("x", "value", source=_source("predicted", "x", "value"), line_color=INK, line_width=2)
+    line = top.line("x", "value", source=_source("predicted", columns), line_color=INK, line_width=2)
     top.y_range.renderers = [line, dots]
-    pattern = "0." + "0" * decimals_for(item.noise_sd) if decimals_for(item.noise_sd) else "0"
-    hover: dict[str, Any] = {"formatters": {"@x": "datetime"}, "toggleable": False, "mode": "vline"}
+    pattern = _pattern(decimals_for(item.noise_sd))
+    hover: dict[str, Any] = {"formatters": {"@x": "datetime"}, "visible": False, "mode": "vline"}
     for name, renderer in (("prediction", line), ("reading", dots)):
         tips = [("time", "@x{%F %T}"), (name, f"@value{{{pattern}}} {_braceless(item.unit)}")]
         top.add_tools(HoverTool(renderers=[renderer], tooltips=tips, **hover))
+    top.xaxis.axis_label = None
     bottom = _plot(window, "sums, sd", 170, top.x_range)
     bottom.y_range = DataRange1d(start=0.0, range_padding=0.08, min_interval=1.15 * interval)
-    high = bottom.line("x", "value", source=_source("high", "x", "value"), line_color=INK, line_width=2)
-    low = bottom.line("x", "value", source=_source("low", "x", "value"), line_color=REVISED, line_width=1.5)
+    high = bottom.line("x", "value", source=_source("high", columns), line_color=INK, line_width=2)
+    low = bottom.line("x", "value", source=_source("low", columns), line_color=REVISED, line_width=1.5)
     low.glyph.line_dash = [5, 3]
     bottom.y_range.renderers = [high, low]
     bottom.add_layout(

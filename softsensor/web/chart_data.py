@@ -19,6 +19,8 @@ Floats = NDArray[np.float64]
 Columns = dict[str, list[Any]]
 BUCKETS = 1000
 """Stretches that keep their smallest and largest value each, where there are more than twice as many points."""
+LABEL_SHARE = 0.2
+"""Share of the window at its end in which a flag's label stands before its start, so that it can be read."""
 GAP_CYCLES = 1.5
 """Sample times between two points beyond which the line breaks."""
 
@@ -34,6 +36,10 @@ class Window:
     def drawn(self, times: Any) -> Any:
         """UTC microseconds as the milliseconds that are drawn."""
         return (np.asarray(times, dtype=np.float64) + self.offset_us) / 1000.0
+
+    def ends(self) -> dict[str, float]:
+        """Where the drawn axis starts and ends."""
+        return {"start": float(self.drawn(self.from_us)), "end": float(self.drawn(self.to_us))}
 
 
 def thinned(times: NDArray[np.int64], values: Floats, buckets: int = BUCKETS) -> NDArray[np.intp]:
@@ -81,7 +87,9 @@ def with_gaps(
 
 def column(values: Floats) -> list[float | None]:
     """Numbers for JSON: None where there is none."""
-    return [float(value) if np.isfinite(value) else None for value in values]
+    boxed = values.astype(object)
+    boxed[~np.isfinite(values)] = None
+    return list(boxed)
 
 
 def _taken(values: Floats, indices: NDArray[np.intp]) -> list[float | None]:
@@ -129,14 +137,15 @@ def estimate_columns(
     sample_us = models.spec(models.revision_of(unit)).sample_time * 1e6
     flags = reader.flags_of(database, unit.id)
     return {
-        "estimate": _band(track, window, sample_us),
+        "estimate": estimate_band(track, window, sample_us),
         "revised": _revised(database, models, unit, item, track, window, sample_us),
         **_labs(database, unit, item, window),
         "flags": flag_columns(flags, window),
     }
 
 
-def _band(track: Track, window: Window, sample_us: float) -> Columns:
+def estimate_band(track: Track, window: Window, sample_us: float) -> Columns:
+    """An estimate's line and 95 % band; thinned, the band still covers every interval of its stretch."""
     times, value = track.times, track.first
     if not len(times):
         return {"x": [], "value": [], "lower": [], "upper": []}
@@ -196,15 +205,20 @@ def _labs(database: Database, unit: Unit, item: EstimateSpec, window: Window) ->
 
 def flag_columns(flags: list[StoredFlag], window: Window) -> Columns:
     """Flagged periods that touch the window, oldest first; an open one reaches beyond its end."""
-    columns: Columns = {"left": [], "right": [], "text": [], "row": []}
-    beyond = window.to_us + (window.to_us - window.from_us)
+    columns: Columns = {"left": [], "right": [], "text": [], "row": [], "align": [], "shift": []}
+    width = window.to_us - window.from_us
+    beyond = window.to_us + width
     for flag in sorted(flags, key=lambda flag: flag.onset_us):
         end = flag.cleared_us if flag.cleared_us is not None else beyond
         if flag.onset_us < window.to_us and end > window.from_us:
-            columns["left"].append(float(window.drawn(max(flag.onset_us, window.from_us))))
+            start = max(flag.onset_us, window.from_us)
+            near_end = start > window.to_us - LABEL_SHARE * width
+            columns["left"].append(float(window.drawn(start)))
             columns["right"].append(float(window.drawn(end)))
             columns["text"].append(f"{flag.tag} {flag.kind}")
             columns["row"].append(6 + 16 * (len(columns["row"]) % 3))
+            columns["align"].append("right" if near_end else "left")
+            columns["shift"].append(-4 if near_end else 4)
     return columns
 
 

@@ -20,6 +20,7 @@ INTERVAL = 0.25
 HEARTBEAT = 10.0
 """Seconds of silence after which the page is told that the stream lives."""
 RETRY_MS = 2000
+ALIVE = "event: alive\ndata: {}\n\n"
 TOLD = 50
 """News besides cycles that one update carries in full; beyond that their topics alone."""
 
@@ -61,21 +62,25 @@ class Collector:
         self._news = feed.subscribe()
         self._unit = unit
         self._pending = Pending()
-        self._arrived = asyncio.Event()
+        self._woken = asyncio.Event()
         self._task = asyncio.create_task(self._collect(), name=f"live page of {unit}")
 
     async def _collect(self) -> None:
         async for news in self._news:
             if news.unit == self._unit:
                 self._pending.add(news)
-                self._arrived.set()
+                self._woken.set()
+
+    def wake(self) -> None:
+        """Let :meth:`take` return now."""
+        self._woken.set()
 
     async def take(self, patience: float) -> Pending:
         """What has happened since the last call; waits up to ``patience`` seconds for something to happen."""
         with suppress(TimeoutError):
-            await asyncio.wait_for(self._arrived.wait(), patience)
+            await asyncio.wait_for(self._woken.wait(), patience)
         taken, self._pending = self._pending, Pending()
-        self._arrived.clear()
+        self._woken.clear()
         return taken
 
     async def close(self) -> None:
@@ -85,16 +90,32 @@ class Collector:
             await self._task
 
 
-async def live_updates(
-    feed: LiveFeed, unit: str, interval: float = INTERVAL, heartbeat: float = HEARTBEAT
-) -> AsyncIterator[str]:
-    """The stream of one page, until it is given up."""
-    collector = Collector(feed, unit)
-    try:
-        yield f"retry: {RETRY_MS}\nevent: alive\ndata: {{}}\n\n"
-        while True:
-            pending = await collector.take(heartbeat)
-            yield "event: alive\ndata: {}\n\n" if pending.empty else pending.message()
-            await asyncio.sleep(interval)
-    finally:
-        await collector.close()
+class LiveStreams:
+    """The streams of all pages that are open."""
+
+    def __init__(self, feed: LiveFeed, interval: float = INTERVAL, heartbeat: float = HEARTBEAT) -> None:
+        self._feed = feed
+        self._interval = interval
+        self._heartbeat = heartbeat
+        self._open: set[Collector] = set()
+        self._closing = False
+
+    async def updates(self, unit: str) -> AsyncIterator[str]:
+        """The stream of one page, until it is given up or :meth:`close` is called."""
+        collector = Collector(self._feed, unit)
+        self._open.add(collector)
+        try:
+            yield f"retry: {RETRY_MS}\n{ALIVE}"
+            while not self._closing:
+                pending = await collector.take(self._heartbeat)
+                yield ALIVE if pending.empty else pending.message()
+                await asyncio.sleep(0.0 if self._closing else self._interval)
+        finally:
+            self._open.discard(collector)
+            await collector.close()
+
+    def close(self) -> None:
+        """End every stream within one interval; those opened later end at once. On the loop's thread."""
+        self._closing = True
+        for collector in self._open:
+            collector.wake()

@@ -20,26 +20,20 @@ from softsensor.records.tables import FINDINGS
 from softsensor.web import wording
 from softsensor.web.chart import estimate_chart, sensor_chart
 from softsensor.web.chart_data import (
+    Columns,
     Window,
     estimate_columns,
     find_estimate,
     sensor_columns,
 )
-from softsensor.web.live import live_updates
+from softsensor.web.rows import estimate_rows, latest_cycle, tag_decimals, tag_units
 from softsensor.web.security import COOKIE
 from softsensor.web.site import NotHere, Site, choices_for
-from softsensor.web.unit_view import (
-    estimate_decimals,
-    estimate_rows,
-    latest_cycle,
-    tag_decimals,
-    tag_units,
-    unit_view,
-)
+from softsensor.web.unit_view import UnitView
 
 PERIODS = {"1 h": 1.0, "8 h": 8.0, "24 h": 24.0, "7 d": 168.0}
 USUAL_HOURS = 8.0
-PARTS = ("state", "estimates", "sensors", "flags", "laboratory", "events", "trail")
+PARTS = ("state", "sensors", "flags", "laboratory", "events", "trail")
 ENTRIES_PER_PAGE = 100
 AHEAD = 0.02
 """Share of the window left empty for what comes next."""
@@ -98,14 +92,14 @@ def page_routes(site: Site, pages: Pages) -> APIRouter:
 
     @router.get("/units/{name}")
     def unit_page(request: Request, name: str) -> Response:
-        view = unit_view(site.database, site.models, site.unit(name))
+        view = UnitView(site.database, site.models, site.unit(name))
         return pages.page(request, "unit.html", view=view, parts=PARTS)
 
     @router.get("/units/{name}/part/{part}")
     def part(name: str, part: str) -> Response:
         if part not in PARTS:
             raise NotHere(f"There is no part {part} of a unit's page. Parts: {', '.join(PARTS)}.")
-        view = unit_view(site.database, site.models, site.unit(name))
+        view = UnitView(site.database, site.models, site.unit(name))
         return pages.part(f"part_{part}.html", view=view)
 
     @router.get("/units/{name}/flag")
@@ -159,11 +153,11 @@ def data_routes(site: Site) -> APIRouter:
     router = APIRouter(default_response_class=JSONResponse)
 
     def window_of(unit: Unit, hours: float, offset: int) -> Window:
-        latest = reader_clock(unit)
+        latest = newest(unit)
         width = int(hours * 3.6e9)
         return Window(latest - width, latest + int(AHEAD * width), offset * 60_000_000)
 
-    def reader_clock(unit: Unit) -> int:
+    def newest(unit: Unit) -> int:
         latest, _ = latest_cycle(site.database, unit, site.models.revision_of(unit))
         return site.database.clock() if latest is None else int(latest.times[-1])
 
@@ -181,19 +175,28 @@ def data_routes(site: Site) -> APIRouter:
             "estimates": [{key: getattr(row, key) for key in keys} for row in rows],
         }
 
+    def columns_of(unit: Unit, tag: str, window: Window) -> dict[str, Columns]:
+        spec = site.models.spec(site.models.revision_of(unit))
+        item = find_estimate(spec, tag)
+        if item is not None:
+            return estimate_columns(site.database, site.models, unit, item, window)
+        if any(sensor.tag == tag for sensor in spec.sensors):
+            return sensor_columns(site.database, site.models, unit, tag, window)
+        raise NotHere(f"There is no estimate or sensor {tag} in unit {unit.name}.")
+
     @router.get("/units/{name}/chart.json")
     def chart(name: str, tag: str, hours: Hours = USUAL_HOURS, offset: OffsetMinutes = 0) -> dict[str, Any]:
         unit = site.unit(name)
         window = window_of(unit, hours, offset)
+        columns = columns_of(unit, tag, window)
         revision = site.models.revision_of(unit)
         spec = site.models.spec(revision)
         item = find_estimate(spec, tag)
         if item is not None:
-            return estimate_chart(item, window, estimate_decimals(item))
-        for i, sensor in enumerate(spec.sensors):
-            if sensor.tag == tag:
-                return sensor_chart(sensor, window, float(site.models.intervals(revision)[i]))
-        raise NotHere(f"There is no estimate or sensor {tag} in unit {name}.")
+            return {"window": window.ends(), "item": estimate_chart(item, window, columns)}
+        i = [sensor.tag for sensor in spec.sensors].index(tag)
+        interval = float(site.models.intervals(revision)[i])
+        return {"window": window.ends(), "item": sensor_chart(spec.sensors[i], window, columns, interval)}
 
     @router.get("/units/{name}/chart-data.json")
     def chart_data(
@@ -201,21 +204,12 @@ def data_routes(site: Site) -> APIRouter:
     ) -> dict[str, Any]:
         unit = site.unit(name)
         window = window_of(unit, hours, offset)
-        spec = site.models.spec(site.models.revision_of(unit))
-        item = find_estimate(spec, tag)
-        if item is not None:
-            columns = estimate_columns(site.database, site.models, unit, item, window)
-        elif any(sensor.tag == tag for sensor in spec.sensors):
-            columns = sensor_columns(site.database, site.models, unit, tag, window)
-        else:
-            raise NotHere(f"There is no estimate or sensor {tag} in unit {name}.")
-        shown = {"start": float(window.drawn(window.from_us)), "end": float(window.drawn(window.to_us))}
-        return {"window": shown, "columns": columns}
+        return {"window": window.ends(), "columns": columns_of(unit, tag, window)}
 
     @router.get("/units/{name}/live")
     async def live(name: str) -> StreamingResponse:
         await asyncio.to_thread(site.unit, name)
-        stream: AsyncIterator[str] = live_updates(site.feed, name)
+        stream: AsyncIterator[str] = site.streams.updates(name)
         return StreamingResponse(stream, media_type="text/event-stream")
 
     @router.get("/health")

@@ -11,7 +11,7 @@ from softsensor.records import reader
 from softsensor.records.engine import Database
 from softsensor.records.reader import Comment, StoredFlag, StoredLab, Unit
 from softsensor.records.tables import flags
-from softsensor.service.live_feed import LiveFeed
+from softsensor.web.live import LiveStreams
 from softsensor.web.models_in_service import ModelsInService
 from softsensor.web.security import FormGuard
 
@@ -33,7 +33,7 @@ class Site:
     """Everything the pages stand on."""
 
     database: Database
-    feed: LiveFeed
+    streams: LiveStreams
     models: ModelsInService
     guard: FormGuard = field(default_factory=FormGuard)
 

@@ -1,291 +1,132 @@
-"""What a unit's page shows, gathered from the records as plain values for the templates."""
+"""What a unit's page shows, read from the records piece by piece."""
 
 from __future__ import annotations
 
-import json
-import math
-from collections.abc import Sequence
-from dataclasses import dataclass
+from functools import cached_property
 
-from plant_models.specification import EstimateSpec, SensorSpec, UnitSpec
-from softsensor.alarms.sensor_status import SEVERITY, SensorStatus, status_of
+from plant_models.specification import UnitSpec
 from softsensor.readings_of_cycle import CycleReadings
 from softsensor.records import reader, series
 from softsensor.records.audit import StoredEntry
 from softsensor.records.engine import Database
 from softsensor.records.reader import StoredEvent, StoredFlag, StoredLab, Unit
-from softsensor.service.result_tables import NORMAL_95
 from softsensor.web.models_in_service import ModelsInService
-from softsensor.web.wording import QUALITY_WORDS, STATUS_WORDS, decimals_for, difference_unit, duration
+from softsensor.web.rows import (
+    EstimateRow,
+    InputRow,
+    SensorRow,
+    State,
+    connection_state,
+    estimate_rows,
+    input_rows,
+    latest_cycle,
+    progress_state,
+    records_state,
+    sensor_rows,
+    tag_decimals,
+    tag_units,
+    waiting_labs,
+)
 
 EVENTS_SHOWN, ENTRIES_SHOWN, CLEARED_SHOWN = 12, 8, 10
 EVENTS_SEARCHED = 500
-LATE_CYCLES, LATE_SECONDS = 10.0, 120.0
-"""A newest cycle older than both is said to be late."""
 
 
-@dataclass(frozen=True)
-class EstimateRow:
-    """An estimate's latest value; None where there is none."""
-
-    tag: str
-    unit: str
-    decimals: int
-    value: float | None
-    sd: float | None
-    lower: float | None
-    upper: float | None
-    status: str
-    reason: str
-    lab_tag: str | None
-
-
-@dataclass(frozen=True)
-class SensorRow:
-    """A sensor's latest reading against its prediction."""
-
-    tag: str
-    unit: str
-    difference_unit: str
-    decimals: int
-    reading: float | None
-    predicted: float | None
-    deviations: float | None
-    health: SensorStatus
-    use: str
-
-
-@dataclass(frozen=True)
-class InputRow:
-    """An input's value as the latest cycle used it."""
-
-    tag: str
-    unit: str
-    decimals: int
-    value: float | None
-    quality: str
-    validated: tuple[float, float] | None
-    outside: bool
-    health: SensorStatus
-
-
-@dataclass(frozen=True)
-class State:
-    """A word on how something stands, and whether it is as it should be."""
-
-    text: str
-    normal: bool
-
-
-@dataclass(frozen=True)
 class UnitView:
-    """All that a unit's page shows."""
+    """All that a unit's page shows; each piece is read from the records when it is first asked for, and once.
 
-    unit: Unit
-    spec: UnitSpec
-    cycle_us: int | None
-    cycle: int | None
-    plant_us: int
-    progress: State
-    connection: State
-    records: State
-    estimates: tuple[EstimateRow, ...]
-    sensors: tuple[SensorRow, ...]
-    inputs: tuple[InputRow, ...]
-    open_flags: tuple[StoredFlag, ...]
-    cleared_flags: tuple[StoredFlag, ...]
-    waiting: tuple[StoredLab, ...]
-    events: tuple[StoredEvent, ...]
-    entries: tuple[StoredEntry, ...]
-    units: dict[str, str]
-    """Unit of every tag, laboratory tags included."""
-    decimals: dict[str, int]
-
-
-def estimate_decimals(item: EstimateSpec) -> int:
-    """From the laboratory's sd where there is one, else from the range."""
-    span = item.range[1] - item.range[0]
-    return decimals_for(item.lab.sd if item.lab is not None else span / 200.0)
-
-
-def tag_units(spec: UnitSpec) -> dict[str, str]:
-    """The unit of every tag of a model file; a laboratory tag has its estimate's."""
-    units = {item.tag: item.unit for item in spec.inputs}
-    units |= {item.tag: item.unit for item in spec.sensors}
-    units |= {item.tag: item.unit for item in spec.estimates}
-    units |= {item.lab.tag: item.unit for item in spec.estimates if item.lab is not None}
-    return units
-
-
-def tag_decimals(spec: UnitSpec) -> dict[str, int]:
-    """How many decimals each tag's values are shown with."""
-    found = {item.tag: decimals_for((item.range[1] - item.range[0]) / 200.0) for item in spec.inputs}
-    found |= {item.tag: decimals_for(item.noise_sd) for item in spec.sensors}
-    for item in spec.estimates:
-        found[item.tag] = estimate_decimals(item)
-        if item.lab is not None:
-            found[item.lab.tag] = estimate_decimals(item)
-    return found
-
-
-def health_of(tag: str, flags: Sequence[StoredFlag]) -> SensorStatus:
-    """The most severe status that the open flags give a tag."""
-    found = [
-        status_of(flag.kind, flag.probability or 0.0, flag.group == (tag,))
-        for flag in flags
-        if flag.tag == tag
-    ]
-    return max(found, key=SEVERITY.index, default=SensorStatus.NORMAL)
-
-
-def finite(value: float) -> float | None:
-    """The value, or None for nan and infinities."""
-    return float(value) if math.isfinite(value) else None
-
-
-def estimate_rows(spec: UnitSpec, latest: series.TimedResults | None) -> tuple[EstimateRow, ...]:
-    """Every estimate of the model with its latest published value."""
-    rows = []
-    reasons = json.loads(latest.results.reasons[-1] or "{}") if latest is not None else {}
-    for e, item in enumerate(spec.estimates):
-        value = sd = math.nan
-        status, reason = "Bad", "no cycle has run yet"
-        if latest is not None:
-            value, sd = float(latest.results.estimate[-1, e]), float(latest.results.sd[-1, e])
-            status, reason = STATUS_WORDS[latest.results.status[-1, e]], reasons.get(item.tag, "")
-        half = NORMAL_95 * sd
-        interval = finite(value - half), finite(value + half)
-        lab = item.lab.tag if item.lab is not None else None
-        row = (finite(value), finite(sd), *interval, status, reason, lab)
-        rows.append(EstimateRow(item.tag, item.unit, estimate_decimals(item), *row))
-    return tuple(rows)
-
-
-def _sensor_row(
-    item: SensorSpec, i: int, seen: CycleReadings, latest: series.TimedResults, health: SensorStatus
-) -> SensorRow:
-    results = latest.results
-    reading = finite(seen.y[-1, i])
-    deviation = results.innovation[-1, i] / results.innovation_sd[-1, i]
-    unused = "no reading" if reading is None else "left out"
-    return SensorRow(
-        item.tag,
-        item.unit,
-        difference_unit(item.unit),
-        decimals_for(item.noise_sd),
-        reading,
-        finite(results.predicted[-1, i]),
-        finite(deviation),
-        health,
-        "in use" if results.used[-1, i] else unused,
-    )
-
-
-def sensor_rows(
-    spec: UnitSpec,
-    latest: series.TimedResults | None,
-    seen: CycleReadings | None,
-    flags: Sequence[StoredFlag],
-) -> tuple[SensorRow, ...]:
-    """Every sensor of the model with its latest reading, prediction and health."""
-    rows = []
-    for i, item in enumerate(spec.sensors):
-        health = health_of(item.tag, flags)
-        if latest is None or seen is None:
-            places = (difference_unit(item.unit), decimals_for(item.noise_sd), None, None, None)
-            rows.append(SensorRow(item.tag, item.unit, *places, health, "no reading"))
-        else:
-            rows.append(_sensor_row(item, i, seen, latest, health))
-    return tuple(rows)
-
-
-def input_rows(
-    spec: UnitSpec, seen: CycleReadings | None, flags: Sequence[StoredFlag]
-) -> tuple[InputRow, ...]:
-    """Every input of the model with the value that the latest cycle used."""
-    rows = []
-    for j, item in enumerate(spec.inputs):
-        value, quality = None, QUALITY_WORDS[3]
-        if seen is not None:
-            value, quality = finite(seen.u[-1, j]), QUALITY_WORDS[seen.u_quality[-1, j]]
-        limits = item.validated_range
-        outside = value is not None and limits is not None and not limits[0] <= value <= limits[1]
-        decimals = decimals_for((item.range[1] - item.range[0]) / 200.0)
-        health = health_of(item.tag, flags)
-        rows.append(InputRow(item.tag, item.unit, decimals, value, quality, limits, outside, health))
-    return tuple(rows)
-
-
-def connection_state(events: Sequence[StoredEvent]) -> State:
-    """From the newest event about the connection."""
-    text = next((item.event.text for item in events if item.event.kind == "connection"), "")
-    if not text:
-        return State("not yet on record", False)
-    word, _, reason = text.partition(":")
-    if word == "connected":
-        return State("connected", True)
-    return State(f"{word} ({reason.strip()})" if reason.strip() else word, False)
-
-
-def records_state(events: Sequence[StoredEvent]) -> State:
-    """From the newest event about the records; the page itself was just read from them."""
-    text = next((item.event.text for item in events if item.event.kind == "records"), "")
-    return State(text, False) if text.startswith("waiting") else State("up to date", True)
-
-
-def progress_state(spec: UnitSpec, cycle_us: int | None, plant_us: int) -> State:
-    """Whether cycles keep up with the plant's clock."""
-    if cycle_us is None:
-        return State("no cycle has run yet", False)
-    behind = (plant_us - cycle_us) * 1e-6
-    if behind > max(LATE_CYCLES * spec.sample_time, LATE_SECONDS):
-        return State(f"late: the newest cycle is {duration(behind)} old", False)
-    return State("on time", True)
-
-
-def unit_view(database: Database, models: ModelsInService, unit: Unit) -> UnitView:
-    """Everything on a unit's page.
-
-    :raises Problem: the records cannot be read, or hold no sound model of the unit.
+    Each piece raises Problem where the records cannot be read or hold no sound model of the unit.
     """
-    revision = models.revision_of(unit)
-    spec = models.spec(revision)
-    latest, seen = latest_cycle(database, unit, revision)
-    flags = reader.flags_of(database, unit.id)
-    opened = tuple(flag for flag in flags if flag.state == "open")
-    events = reader.latest_events(database, unit.id, limit=EVENTS_SEARCHED)
-    labs = reader.lab_results_of(database, unit.id)
-    cycle_us = None if latest is None else int(latest.times[-1])
-    plant_us = database.clock()
-    return UnitView(
-        unit=unit,
-        spec=spec,
-        cycle_us=cycle_us,
-        cycle=None if latest is None else latest.results.first_cycle,
-        plant_us=plant_us,
-        progress=progress_state(spec, cycle_us, plant_us),
-        connection=connection_state(events),
-        records=records_state(events),
-        estimates=estimate_rows(spec, latest),
-        sensors=sensor_rows(spec, latest, seen, opened),
-        inputs=input_rows(spec, seen, opened),
-        open_flags=opened,
-        cleared_flags=tuple(flag for flag in flags if flag.state != "open")[:CLEARED_SHOWN],
-        waiting=tuple(lab for lab in reversed(labs) if lab.status == "waiting for a person"),
-        events=tuple(events[:EVENTS_SHOWN]),
-        entries=tuple(reader.latest_audit_entries(database, limit=ENTRIES_SHOWN)),
-        units=tag_units(spec),
-        decimals=tag_decimals(spec),
-    )
 
+    def __init__(self, database: Database, models: ModelsInService, unit: Unit) -> None:
+        self._database = database
+        self._models = models
+        self.unit = unit
 
-def latest_cycle(
-    database: Database, unit: Unit, revision_id: int
-) -> tuple[series.TimedResults | None, CycleReadings | None]:
-    """The newest published cycle under a revision and its readings; None where that revision has not run yet."""
-    latest = series.latest_results(database, unit.id)
-    if latest is None or latest.revision_id != revision_id:
-        return None, None
-    cycle = latest.results.first_cycle
-    block = next(series.readings(database, unit.id, cycle, cycle), None)
-    return latest, None if block is None else block.readings
+    @cached_property
+    def _revision(self) -> int:
+        return self._models.revision_of(self.unit)
+
+    @cached_property
+    def _cycle(self) -> tuple[series.TimedResults | None, CycleReadings | None]:
+        return latest_cycle(self._database, self.unit, self._revision)
+
+    @cached_property
+    def _found_events(self) -> list[StoredEvent]:
+        return reader.latest_events(self._database, self.unit.id, limit=EVENTS_SEARCHED)
+
+    @cached_property
+    def spec(self) -> UnitSpec:
+        """The model in service."""
+        return self._models.spec(self._revision)
+
+    @cached_property
+    def cycle_us(self) -> int | None:
+        """The newest cycle's time."""
+        latest = self._cycle[0]
+        return None if latest is None else int(latest.times[-1])
+
+    @cached_property
+    def progress(self) -> State:
+        """Whether cycles keep up."""
+        return progress_state(self.spec, self.cycle_us, self._database.clock())
+
+    @cached_property
+    def connection(self) -> State:
+        """How the connection to the plant stands."""
+        return connection_state(self._found_events)
+
+    @cached_property
+    def records(self) -> State:
+        """Whether the records keep up."""
+        return records_state(self._found_events)
+
+    @cached_property
+    def estimates(self) -> tuple[EstimateRow, ...]:
+        """Every estimate."""
+        return estimate_rows(self.spec, self._cycle[0])
+
+    @cached_property
+    def sensors(self) -> tuple[SensorRow, ...]:
+        """Every sensor."""
+        return sensor_rows(self.spec, *self._cycle, self.open_flags)
+
+    @cached_property
+    def inputs(self) -> tuple[InputRow, ...]:
+        """Every input."""
+        return input_rows(self.spec, self._cycle[1], self.open_flags)
+
+    @cached_property
+    def open_flags(self) -> tuple[StoredFlag, ...]:
+        """Open flags, the newest first."""
+        return tuple(reader.flags_of(self._database, self.unit.id, "open"))
+
+    @cached_property
+    def cleared_flags(self) -> tuple[StoredFlag, ...]:
+        """The newest cleared flags."""
+        return tuple(reader.flags_of(self._database, self.unit.id, "cleared", limit=CLEARED_SHOWN))
+
+    @cached_property
+    def waiting(self) -> tuple[StoredLab, ...]:
+        """Laboratory results that wait for a person."""
+        return waiting_labs(self._database, self.unit)
+
+    @cached_property
+    def events(self) -> tuple[StoredEvent, ...]:
+        """The newest events."""
+        return tuple(self._found_events[:EVENTS_SHOWN])
+
+    @cached_property
+    def entries(self) -> tuple[StoredEntry, ...]:
+        """The newest entries of the audit trail."""
+        return tuple(reader.latest_audit_entries(self._database, limit=ENTRIES_SHOWN))
+
+    @cached_property
+    def units(self) -> dict[str, str]:
+        """Unit of every tag."""
+        return tag_units(self.spec)
+
+    @cached_property
+    def decimals(self) -> dict[str, int]:
+        """Decimals of every tag."""
+        return tag_decimals(self.spec)

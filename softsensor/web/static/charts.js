@@ -24,23 +24,43 @@ class Chart {
     this.hours = hours;
     const order = ++this.wanted;
     try {
-      const [item, data] = await Promise.all([
-        fetchJson(this.address + "/chart.json?" + this.query()),
-        fetchJson(this.address + "/chart-data.json?" + this.query()),
-      ]);
+      const { item, window } = await fetchJson(this.address + "/chart.json?" + this.query());
       if (order !== this.wanted) return;
-      this.element.replaceChildren();
+      this.dispose();
       const views = await Bokeh.embed.embed_item(item, this.element);
       this.roots = rootsOf(views);
-      this.fill(data);
+      this.bandAgain();
+      this.lastCycle = null;
+      this.followed = window;
+      this.element.dataset.drawn = String(hours);
     } catch (fault) {
       if (order !== this.wanted) return;
-      this.roots = null;
+      this.dispose();
       const line = document.createElement("p");
       line.className = "failed";
       line.textContent = "The chart cannot be drawn at the moment: " + fault.message;
       this.element.replaceChildren(line);
     }
+  }
+
+  // Bokeh keeps every document that it has drawn until it is told otherwise.
+  dispose() {
+    for (const root of this.roots || []) {
+      const drawn = root.document;
+      if (drawn === null) continue;
+      drawn.clear();
+      const place = Bokeh.documents.indexOf(drawn);
+      if (place >= 0) Bokeh.documents.splice(place, 1);
+    }
+    this.roots = null;
+    delete this.element.dataset.drawn;
+    this.element.replaceChildren();
+  }
+
+  // The chart is not wanted any more, a drawing under way included.
+  abandon() {
+    this.wanted++;
+    this.dispose();
   }
 
   async renew() {

@@ -3,7 +3,6 @@
 
 (() => {
   const PART_EVERY = 1000;
-  const CHARTS_EVERY = 30000;
   const SILENCE = 25000;
   const AGAIN = 2000;
   const PARTS_OF = {
@@ -74,9 +73,12 @@
     due.clear();
     names.forEach(renewPart);
     const now = Date.now();
-    if (now - drawn > CHARTS_EVERY && heard) renewCharts();
+    if (now - drawn > chartsEvery()) renewCharts();
     if (stream !== null && now - heard > SILENCE) restart("The program has been silent for a while.");
   }
+
+  // Long stretches take the program seconds to read, and change little.
+  function chartsEvery() { return Math.max(30000, 4000 * hours); }
 
   function renewCharts() {
     drawn = Date.now();
@@ -151,6 +153,7 @@
     stream = new EventSource(address + "/live");
     stream.addEventListener("alive", () => {
       heard = Date.now();
+      root.dataset.live = "yes";
       if (!document.getElementById("stream").hidden) {
         tell("");
         ALL.forEach((part) => due.add(part));
@@ -159,6 +162,7 @@
     });
     stream.addEventListener("update", update);
     stream.addEventListener("error", () => {
+      root.dataset.live = "no";
       tell("The page has lost its connection to the program and tries again. What is shown may be old.");
       if (stream !== null && stream.readyState === EventSource.CLOSED) restart("");
     });
@@ -192,7 +196,7 @@
     openSensor = tag === openSensor ? null : tag;
     panel.hidden = openSensor === null;
     const place = panel.querySelector(".chart");
-    place.replaceChildren();
+    if (sensorChart !== null) sensorChart.abandon();
     sensorChart = null;
     markOpenSensor();
     if (openSensor === null) return;
