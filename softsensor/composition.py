@@ -24,7 +24,7 @@ from softsensor.records.engine import Database, open_database
 from softsensor.records.named_arrays import pack_arrays
 from softsensor.records.plant import Deed, Revision, register_revision, register_unit, set_revision_state
 from softsensor.records.writer import RecordsWriter
-from softsensor.service.clock import Clock, ScaledClock, SystemClock
+from softsensor.service.clock import Clock, FollowingClock, SystemClock
 from softsensor.service.live import GRACE, LiveService
 from softsensor.service.site_file import SiteSettings, UnitSettings
 from softsensor.service.unit_service import UnitIdentity, UnitService
@@ -51,7 +51,7 @@ def site_clock(settings: SiteSettings) -> Clock:
     """The wall's clock, or the one that the site file describes."""
     if settings.clock is None:
         return SystemClock()
-    return ScaledClock(settings.clock.plant_start, settings.clock.wall_start, settings.clock.speed)
+    return FollowingClock(settings.clock.speed)
 
 
 def read_models(settings: SiteSettings) -> list[PlantModel]:

@@ -144,7 +144,9 @@ ROW_FIELDS = (
 
 def join_results(parts: Sequence[CycleResults]) -> CycleResults:
     """The results of consecutive stretches as one; flags and notes in order."""
-    rows: dict[str, Any] = {name: np.concatenate([getattr(part, name) for part in parts]) for name in ROW_FIELDS}
+    rows: dict[str, Any] = {
+        name: np.concatenate([getattr(part, name) for part in parts]) for name in ROW_FIELDS
+    }
     return CycleResults(
         first=parts[0].first,
         **rows,

@@ -359,7 +359,7 @@ SITE_SECTIONS = {
     "unit": "[[unit]]",
     "clock": "[clock]",
 }
-WHOLE_SITE = f"{SITE_EXAMPLE}\n[clock]\nplant_start = 0\nwall_start = 0\nspeed = 1.0\n"
+WHOLE_SITE = f"{SITE_EXAMPLE}\n[clock]\nspeed = 1.0\n"
 
 
 @pytest.mark.parametrize("name", SITE_SECTIONS)

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import asyncio
-import contextlib
 import shutil
 import socket
 import tempfile
@@ -19,13 +18,14 @@ from plant_models.errors import Problem, UnitError
 if TYPE_CHECKING:
     from connectors.opcua.tag_server import TagServer
     from plant_models.plant_model import PlantModel
+    from plant_models.simulators.scenario import DemoScenario
     from softsensor.demonstration.plant_side import SimulatedPlant
-    from softsensor.service.clock import ScaledClock
+    from softsensor.demonstration.service_side import ServiceProcess
 
 MODEL = "jacketed_reactor"
-LEAD = 10.0
-"""Seconds on the wall between the service's start and the plant's."""
 PREFERRED_PORT = 8080
+CATCH_UP = 1.0
+"""Seconds on the wall that the service is given to finish the last cycles."""
 
 
 class DemoError(Problem):
@@ -40,6 +40,10 @@ def demo(
     speed: Annotated[
         float, typer.Option("--speed", help="How much faster than the wall's the plant's time runs.")
     ] = 240.0,
+    seed: Annotated[
+        int | None,
+        typer.Option("--seed", help="Of the simulated plant's random numbers; by default the story's own."),
+    ] = None,
     folder: Annotated[
         Path | None,
         typer.Option(
@@ -59,7 +63,7 @@ def demo(
     where.mkdir(parents=True, exist_ok=True)
     if (where / "records.db").exists():
         raise DemoError(f"--folder: {where} holds records of an earlier run; expected an empty folder")
-    asyncio.run(_demo(where, seconds, speed))
+    asyncio.run(_demo(where, seconds, speed, seed))
 
 
 def _seconds(duration: str | None) -> float | None:
@@ -99,8 +103,9 @@ def _free_port(preferred: int = 0) -> int:
         return port
 
 
-async def _demo(where: Path, seconds: float | None, speed: float) -> None:
+async def _demo(where: Path, seconds: float | None, speed: float, seed: int | None) -> None:
     from connectors.opcua.tag_server import TagServer
+    from plant_models.simulators.scenario import DemoScenario
     from softsensor.demonstration.plant_side import (
         NAMESPACE,
         SimulatedPlant,
@@ -108,61 +113,70 @@ async def _demo(where: Path, seconds: float | None, speed: float) -> None:
         demo_tank,
         served_tags,
     )
-    from softsensor.service.clock import ScaledClock
 
+    story = DemoScenario() if seed is None else DemoScenario(seed=seed)
     model = _prepare(where)
-    wall = time.time_ns() // 1000
     step = round(model.spec.sample_time * 1e6)
-    clock = ScaledClock(wall // step * step, wall + round(LEAD * 1e6), speed)
-    until = None if seconds is None else clock.plant_start + round(seconds * 1e6) // step * step
-    plant = SimulatedPlant(demo_tank(clock.plant_start), clock, until, Truth())
+    start = time.time_ns() // 1000 // step * step
+    until = None if seconds is None else start + round(seconds * 1e6) // step * step
+    plant = SimulatedPlant(demo_tank(story, start), speed, until, Truth())
     async with TagServer(f"opc.tcp://127.0.0.1:{_free_port()}", NAMESPACE, served_tags(model)) as server:
-        site_file = _write_site(where, model, server, clock)
-        await _run(site_file, server, plant, model)
+        await plant.begin(server)
+        restarts = await _play(where, model, server, plant)
+    _report(where, (model, story), plant, restarts)
 
 
-def _write_site(where: Path, model: PlantModel, server: TagServer, clock: ScaledClock) -> Path:
-    from softsensor.demonstration.service_side import site_text
+async def _play(where: Path, model: PlantModel, server: TagServer, plant: SimulatedPlant) -> int:
+    """Start the service, then the plant's time; wait for the end; returns how often the service was started again."""
+    from softsensor.demonstration.service_side import ServiceProcess, site_text
 
     ports = (_free_port(), _free_port(PREFERRED_PORT))
     site_file = where / "site.toml"
-    site_file.write_text(site_text(model, where / "r210.toml", server, clock, ports), encoding="utf-8")
+    site_file.write_text(site_text(model, where / "r210.toml", server, plant.speed, ports), encoding="utf-8")
     typer.echo(f"folder: {where}")
-    return site_file
-
-
-async def _run(site_file: Path, server: TagServer, plant: SimulatedPlant, model: PlantModel) -> None:
-    from softsensor.demonstration.service_side import ServiceProcess
-
     service = ServiceProcess(site_file, typer.echo)
     serving = asyncio.create_task(service.keep_running(), name="service")
-    running = asyncio.create_task(plant.run(server), name="plant")
+    playing = asyncio.create_task(_play_plant(service, server, plant, ports[1]), name="plant")
     try:
-        await asyncio.wait([serving, running], return_when=asyncio.FIRST_COMPLETED)
+        await asyncio.wait([serving, playing], return_when=asyncio.FIRST_COMPLETED)
         if serving.done():
             raise DemoError(f"the demonstration cannot go on: {serving.exception()}")
-        running.result()
-        await asyncio.sleep(3.0)
+        playing.result()
     except asyncio.CancelledError:
         typer.echo("ending")
     finally:
-        for task in (serving, running):
+        for task in (serving, playing):
             task.cancel()
-        with contextlib.suppress(asyncio.CancelledError, RuntimeError):
-            await serving
+        await asyncio.gather(serving, playing, return_exceptions=True)
         await service.stop()
-    _report(site_file.parent, model, plant, service.restarts)
+    return service.restarts
 
 
-def _report(where: Path, model: PlantModel, plant: SimulatedPlant, restarts: int) -> None:
-    from plant_models.simulators.scenario import DemoScenario
+async def _play_plant(service: ServiceProcess, server: TagServer, plant: SimulatedPlant, port: int) -> None:
+    """Once the service is ready, let the plant's time run to its end and the service finish the last cycles."""
+    await service.ready(port)
+    running = asyncio.create_task(plant.run(server), name="plant's time")
+    reached = asyncio.create_task(plant.reached.wait(), name="plant's end")
+    try:
+        await asyncio.wait([running, reached], return_when=asyncio.FIRST_COMPLETED)
+        if running.done():
+            running.result()
+        await asyncio.sleep(CATCH_UP)
+    finally:
+        for task in (running, reached):
+            task.cancel()
+        await asyncio.gather(running, reached, return_exceptions=True)
+
+
+def _report(where: Path, told: tuple[PlantModel, DemoScenario], plant: SimulatedPlant, restarts: int) -> None:
     from softsensor.demonstration.report import make_report, report_lines
     from softsensor.records.engine import open_database
 
+    model, story = told
     url = f"sqlite:///{(where / 'records.db').as_posix()}"
     with open_database(url) as database:
         report = make_report(database, model, plant.truth, restarts)
-    for line in report_lines(report, DemoScenario(), plant.tank.start):
+    for line in report_lines(report, story, plant.tank.start):
         typer.echo(line)
     typer.echo(f"Records: {url}")
     typer.echo(

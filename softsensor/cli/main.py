@@ -5,9 +5,6 @@ from __future__ import annotations
 import sys
 
 import typer
-from click import ClickException
-from click.exceptions import Abort
-from click.exceptions import Exit as ClickExit
 
 from plant_models.errors import Problem
 from softsensor.cli import audit, check, db, demo, replay, run
@@ -36,19 +33,11 @@ app.add_typer(audit.app, name="audit")
 def main() -> None:
     """Run a command; exit status 0 done, 1 the answer is no, 2 bad input."""
     try:
-        status = app(standalone_mode=False)
+        app()
     except Problem as problem:
         for line in problem.lines:
             typer.echo(line, err=True)
         sys.exit(2)
-    except ClickExit as left:
-        sys.exit(left.exit_code)
-    except ClickException as usage:
-        usage.show()
-        sys.exit(2)
-    except (Abort, KeyboardInterrupt):
-        sys.exit(130)
-    sys.exit(status if isinstance(status, int) else 0)
 
 
 if __name__ == "__main__":

@@ -11,7 +11,7 @@ from plant_models.plant_model import PlantModel
 from plant_models.simulators.reactor_plant import LabResult, StirredTank
 from plant_models.simulators.scenario import DemoScenario
 from plant_models.units import engineering_units
-from softsensor.service.clock import Clock, wait_until
+from softsensor.service.clock import ScaledClock, SystemClock, wait_until
 
 NAMESPACE = "urn:example:plant"
 
@@ -40,20 +40,32 @@ def served_tags(model: PlantModel) -> list[ServedTag]:
 
 @dataclass(frozen=True)
 class SimulatedPlant:
-    """The reactor on its clock, until a plant time or, with None, for as long as it is let run."""
+    """The reactor, ``speed`` times as fast as the wall's clock.
+
+    ``reached`` is set after ``until``, a plant time, or never with None. The plant goes on after that time, as plants
+    do; the truth is kept up to it.
+    """
 
     tank: StirredTank
-    clock: Clock
+    speed: float
     until: int | None
     truth: Truth
+    reached: asyncio.Event = field(default_factory=asyncio.Event)
+
+    async def begin(self, server: TagServer) -> None:
+        """Show the readings of the start; the plant's time stands still until :meth:`run`."""
+        await self._serve(server, self.tank.start, self.tank.start - 1)
 
     async def run(self, server: TagServer) -> None:
-        """Serve the plant's readings at their times."""
-        moment, reported = self.tank.start, self.tank.start - 1
-        while self.until is None or moment <= self.until:
+        """Serve the plant's readings at their times, until cancelled."""
+        clock = ScaledClock(self.tank.start, SystemClock().now(), self.speed)
+        reported = self.tank.start
+        moment = self.tank.start + round(self.tank.scenario.sample_time * 1e6)
+        while True:
+            if self.until is not None and moment > self.until:
+                self.reached.set()
             self.tank.advance(moment)
-            if moment > self.tank.start:
-                await wait_until(self.clock, moment)
+            await wait_until(clock, moment)
             await self._serve(server, moment, reported)
             reported = moment
             moment += round(self.tank.scenario.sample_time * 1e6)
@@ -62,13 +74,14 @@ class SimulatedPlant:
     async def _serve(self, server: TagServer, moment: int, reported: int) -> None:
         for reading in self.tank.readings_now:
             await server.write(reading.tag, reading.value, reading.time, reading.status)
-        self.truth.times.append(moment)
-        self.truth.values.append(self.tank.truth.product)
+        if not self.reached.is_set():
+            self.truth.times.append(moment)
+            self.truth.values.append(self.tank.truth.product)
         for lab in self.tank.lab_results(reported):
             await server.write(lab.tag, lab.value, lab.sampled_at, 0)
             self.truth.labs.append(lab)
 
 
-def demo_tank(start: int) -> StirredTank:
+def demo_tank(story: DemoScenario, start: int) -> StirredTank:
     """The reactor with the demonstration's story, from a plant time on."""
-    return StirredTank(DemoScenario().scenario(), start)
+    return StirredTank(story.scenario(), start)

@@ -11,13 +11,12 @@ from pathlib import Path
 
 from connectors.opcua.tag_server import TagServer
 from plant_models.plant_model import PlantModel
-from softsensor.service.clock import ScaledClock
 
 STOP_PATIENCE = 20.0
 
 
 def site_text(
-    model: PlantModel, model_file: Path, server: TagServer, clock: ScaledClock, ports: tuple[int, int]
+    model: PlantModel, model_file: Path, server: TagServer, speed: float, ports: tuple[int, int]
 ) -> str:
     """A site file for the simulated plant; ``ports`` of our own OPC UA server and of the page."""
     tags = [*model.input_tags, *model.sensor_tags]
@@ -39,9 +38,7 @@ endpoint = "opc.tcp://127.0.0.1:{ports[0]}"
 address = "127.0.0.1:{ports[1]}"
 
 [clock]                           # the simulated plant's time runs faster than the wall's
-plant_start = {clock.plant_start}
-wall_start = {clock.wall_start}
-speed = {clock.speed}
+speed = {speed}
 
 [[unit]]
 model = "{model_file.name}"
@@ -85,6 +82,18 @@ class ServiceProcess:
                 *command, creationflags=subprocess.CREATE_NEW_PROCESS_GROUP
             )
         return await asyncio.create_subprocess_exec(*command)
+
+    async def ready(self, port: int) -> None:
+        """Wait until the page answers: models are compiled, the plant is connected, the records are open."""
+        while True:
+            try:
+                _, writer = await asyncio.open_connection("127.0.0.1", port)
+            except OSError:
+                await asyncio.sleep(0.1)
+                continue
+            writer.close()
+            await writer.wait_closed()
+            return
 
     async def stop(self) -> None:
         """End the service in order, and by force only where that takes too long."""

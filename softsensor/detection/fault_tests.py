@@ -192,7 +192,7 @@ def test_cycle(
     union = 0
     slot = state.cycle[0] % state.ring.shape[0]
     for i in range(len(y)):
-        missing = not (y[i] == y[i])
+        missing = y[i] != y[i]
         code = _test_lost(design, state, i, missing)
         state.ring[slot, i] = innovation[i]
         if not missing:

@@ -1,4 +1,4 @@
-"""Fault flags as frozen values: what is believed of an instrument, since when, how large, how sure, and what else it could be."""
+"""Fault flags as frozen values: what is believed of an instrument, since when, how large, how sure, and what else."""
 
 from __future__ import annotations
 

@@ -141,7 +141,7 @@ def filter_response(kernel: Kernel, gains: Floats, use: Ints, signal: Floats) ->
     """Innovations (window, n_sensors) that the signal (window, n_sensors) leaves; a sensor left out shows none."""
     n, m = len(kernel.q), kernel.n_sensors
     out = np.zeros_like(signal)
-    x, P, v, M = np.zeros(n), np.zeros((n, n)), np.zeros(n), np.zeros((n, n))
+    x, v = np.zeros(n), np.zeros(n)
     for k in range(signal.shape[0]):
         for i in range(m):
             if use[i] != 0:

@@ -2,7 +2,7 @@
 
 Covariances are updated in Joseph's form and kept exactly symmetric by writing one triangle and mirroring it. No BLAS
 and no fastmath: the same bits on every machine. Source of the recursion: Anderson & Moore, Optimal Filtering (1979),
-ch. 3 and 6 (sequential processing of readings with uncorrelated noise); equations checked against a dense filter in the tests.
+ch. 3 and 6 (sequential processing of readings with uncorrelated noise); checked against a dense filter in the tests.
 """
 
 from __future__ import annotations

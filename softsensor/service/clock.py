@@ -5,14 +5,23 @@ from __future__ import annotations
 import asyncio
 import time
 from dataclasses import dataclass
-from typing import Protocol
+from typing import ClassVar, Protocol
 
 
 class Clock(Protocol):
     """Plant time in UTC microseconds."""
 
+    @property
+    def known(self) -> bool:
+        """Is plant time known yet? Until then :meth:`now` is the wall's time and no cycle runs."""
+        ...
+
     def now(self) -> int:
         """The present plant time."""
+        ...
+
+    def observe(self, time: int) -> None:
+        """A reading with this source timestamp has come."""
         ...
 
     def seconds_until(self, moment: int) -> float:
@@ -23,6 +32,11 @@ class Clock(Protocol):
 @dataclass(frozen=True, slots=True)
 class SystemClock:
     """Plant time is the wall's time."""
+
+    known: ClassVar[bool] = True
+
+    def observe(self, time: int) -> None:
+        """The wall's time does not depend on readings."""
 
     def now(self) -> int:
         return time.time_ns() // 1000
@@ -38,6 +52,10 @@ class ScaledClock:
     plant_start: int
     wall_start: int
     speed: float
+    known: ClassVar[bool] = True
+
+    def observe(self, time: int) -> None:
+        """This clock does not depend on readings."""
 
     def now(self) -> int:
         elapsed = time.time_ns() // 1000 - self.wall_start
@@ -45,6 +63,27 @@ class ScaledClock:
 
     def seconds_until(self, moment: int) -> float:
         return (moment - self.now()) * 1e-6 / self.speed
+
+
+class FollowingClock:
+    """Plant time is the newest source timestamp that has come: for a simulated plant that runs ``speed`` times as fast."""
+
+    def __init__(self, speed: float) -> None:
+        self._speed = speed
+        self._newest: int | None = None
+
+    @property
+    def known(self) -> bool:
+        return self._newest is not None
+
+    def observe(self, time: int) -> None:
+        self._newest = time if self._newest is None else max(time, self._newest)
+
+    def now(self) -> int:
+        return SystemClock().now() if self._newest is None else self._newest
+
+    def seconds_until(self, moment: int) -> float:
+        return (moment - self.now()) * 1e-6 / self._speed
 
 
 async def wait_until(clock: Clock, moment: int) -> None:

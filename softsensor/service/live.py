@@ -86,7 +86,7 @@ class LiveService:
         :raises RecordsError: the records refuse a write for good.
         """
         for unit in self._units:
-            again = unit.resume(self._clock.now())
+            again = unit.resume()
             if again:
                 self._event(unit, "restart", f"{again} recorded cycles ran again after the last checkpoint")
             for sink in self._sinks:
@@ -103,6 +103,8 @@ class LiveService:
         async for event in self._source.events():
             if isinstance(event, Reading):
                 unit, tag = self._routes[event.tag]
+                if unit.drives_clock(tag):
+                    self._clock.observe(event.time)
                 unit.accept(replace(event, tag=tag), self._clock.now())
             elif isinstance(event, ConnectionChange):
                 self.connected = event.state == "connected"
@@ -114,9 +116,12 @@ class LiveService:
                 self._tell_all("lost readings", f"{event.count} readings came faster than they were taken")
 
     async def _run_unit(self, unit: UnitService) -> None:
+        while not self._clock.known:
+            await asyncio.sleep(LOOK)
+            if self._stopping:
+                return
         while True:
-            assert unit.next_time is not None
-            moment = unit.next_time
+            moment = unit.coming_cycle(self._clock.now())
             while not self._stopping and self._clock.seconds_until(moment) > 0.0:
                 await asyncio.sleep(min(self._clock.seconds_until(moment), STOP_LOOK))
             await self._wait_for_readings(unit, moment)

@@ -43,10 +43,8 @@ class UnitSettings:
 
 @dataclass(frozen=True, slots=True)
 class ClockSettings:
-    """A plant whose time runs faster: plant time ``plant_start`` at wall time ``wall_start``, UTC microseconds."""
+    """A simulated plant whose time runs ``speed`` times as fast as the wall's: its readings' timestamps are the clock."""
 
-    plant_start: int
-    wall_start: int
     speed: float
 
 
@@ -97,12 +95,6 @@ def _nodes(value: object) -> Mapping[str, str]:
     return {str(tag): str(node) for tag, node in value.items()}
 
 
-def _whole(value: object) -> int:
-    if isinstance(value, bool) or not isinstance(value, int):
-        raise RefusalError("")
-    return value
-
-
 def _speed(value: object) -> float:
     if isinstance(value, bool) or not isinstance(value, (int, float)) or not 0.0 < value < 1e6:
         raise RefusalError("")
@@ -122,7 +114,6 @@ ADDRESS: Kind[tuple[str, int]] = Kind('host and port such as "127.0.0.1:8080"', 
 NODES: Kind[Mapping[str, str]] = Kind(
     'node ids by tag such as { FI2103 = "nsu=urn:example:plant;s=R210.FI2103" }', _nodes, {}
 )
-MICROSECONDS: Kind[int] = Kind("UTC microseconds since 1970, a whole number", _whole, 0)
 SPEED: Kind[float] = Kind("a number above zero", _speed, 1.0)
 
 
@@ -218,9 +209,5 @@ def _unit(table: Table, path: Path) -> UnitSettings:
 
 
 def _clock(table: Table) -> ClockSettings:
-    table.only("plant_start", "wall_start", "speed")
-    return ClockSettings(
-        table.read("plant_start", MICROSECONDS),
-        table.read("wall_start", MICROSECONDS),
-        table.read("speed", SPEED),
-    )
+    table.only("speed")
+    return ClockSettings(table.read("speed", SPEED))

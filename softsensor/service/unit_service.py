@@ -59,6 +59,7 @@ class UnitService:
         self._assembly = LiveAssembly(design.model.spec)
         self.run = fresh_run(design, self._horizon)
         self.next_time: int | None = None
+        self._not_before = 0
         self.records_late = False
 
     @property
@@ -84,6 +85,16 @@ class UnitService:
         self._pending_labs.append(
             LabArrival(index, reading.tag, reading.time, max(now, reading.time), reading.value)
         )
+
+    def drives_clock(self, tag: str) -> bool:
+        """Is a tag's timestamp the time it was measured at? A laboratory result's lies far back."""
+        return tag not in self._lab_index
+
+    def coming_cycle(self, now: int) -> int:
+        """Time of the coming cycle; for a run that begins now, the first one on the grid."""
+        if self.next_time is None:
+            self.next_time = max(first_cycle_time(now, self._sample_us), self._not_before)
+        return self.next_time
 
     def decided_labs(self) -> list[tuple[int, LabArrival]]:
         """Results that were left out and that a person has since decided to use, with their place in the records."""
@@ -164,7 +175,7 @@ class UnitService:
             oldest = step.results.first - self._horizon - 2 * CHUNK
             self._writer.submit(storing.drop_checkpoints, self.identity.unit_id, oldest)
 
-    def resume(self, now: int) -> int:
+    def resume(self) -> int:
         """Go on from the records, if there are any; returns how many recorded cycles ran again.
 
         Cycles between the last one on record and now are run by the caller, one after the other, without readings.
@@ -173,7 +184,6 @@ class UnitService:
         seen = last_seen(self._database, unit_id)
         self.run = resumed_run(self.design, self._database, unit_id, self._horizon)
         if seen is None:
-            self.next_time = first_cycle_time(now, self._sample_us)
             return 0
         first, again = self.run.state.next_cycle, 0
         for part, arrivals in recorded_cycles(self._database, unit_id, first, seen.cycle):
@@ -181,7 +191,7 @@ class UnitService:
                 self._submit(self._advance(slice_readings(part, k, k + 1), arrivals if k == 0 else []))
                 again += 1
         self._remember_labs()
-        self._hold(seen, now)
+        self._hold(seen)
         return again
 
     def _remember_labs(self) -> None:
@@ -189,11 +199,11 @@ class UnitService:
         for lab in lab_results_of(self._database, self.identity.unit_id):
             self._seen_labs.add((lab.tag, lab.sampled_us, lab.value))
 
-    def _hold(self, seen: LastSeen, now: int) -> None:
-        """Inputs go on from the last recorded cycle's values; a unit whose run is fresh starts now."""
+    def _hold(self, seen: LastSeen) -> None:
+        """Inputs go on from the last recorded cycle's values; a run that is fresh starts when it can."""
         last = int(seen.readings.times[-1])
+        self._not_before = last + self._sample_us
         if not self.run.started:
-            self.next_time = max(first_cycle_time(now, self._sample_us), last + self._sample_us)
             return
         self.next_time = last + self._sample_us
         self._assembly = LiveAssembly(self.model.spec, held_values(self.model.spec, seen.readings))

@@ -229,7 +229,7 @@ class Bench:
         """Resume and run cycles first to stop; with ``cut`` it ends in cycle ``stop``, its readings handed over."""
         with open_database(self.url) as database, RecordsWriter(database) as writer:
             service = self.service(database, writer)
-            self.readings_again = service.resume(START + first * STEP)
+            self.readings_again = service.resume()
             for reading in story.shown_again(first):
                 service.accept(reading, START + first * STEP - 500_000)
             assert service.next_time is not None
