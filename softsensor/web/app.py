@@ -19,7 +19,7 @@ from softsensor.web.forms import form_routes
 from softsensor.web.live import LiveStreams
 from softsensor.web.models_in_service import ModelsInService
 from softsensor.web.pages import Pages, data_routes, page_routes
-from softsensor.web.security import ProtectiveHeaders
+from softsensor.web.security import HEADERS, ProtectiveHeaders
 from softsensor.web.site import BadForm, ForeignForm, NotHere, Site
 
 TITLES = {
@@ -85,4 +85,6 @@ def _explain_errors(app: FastAPI, pages: Pages) -> None:
     @app.exception_handler(Exception)
     def fault(request: Request, error: Exception) -> Response:
         line = "The page could not be made. The program's own log has the details; the estimator runs on."
-        return told(request, 500, line)
+        answer = told(request, 500, line)
+        answer.headers.update(HEADERS)  # this one answer is made outside the middleware
+        return answer

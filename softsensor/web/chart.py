@@ -34,6 +34,8 @@ from softsensor.web.wording import decimals_for
 INK, MUTED, RULE, GROUND, BAND = "#1c2226", "#4b5459", "#c9cdce", "#eef0f0", "#c2cacd"
 REVISED, WAITING, FLAGGED = "#2f6f8f", "#b34700", "#d9a400"
 FONT = "11px"
+TALL, LOW = 330, 230
+"""Heights in pixels of the only estimate's chart, and of one of several."""
 
 
 def _ticks() -> DatetimeTickFormatter:
@@ -151,9 +153,11 @@ def _flagged(plot: Any, flags: ColumnDataSource) -> None:
     plot.add_layout(labels)
 
 
-def estimate_chart(item: EstimateSpec, window: Window, columns: dict[str, Columns]) -> dict[str, Any]:
+def estimate_chart(
+    item: EstimateSpec, window: Window, columns: dict[str, Columns], height: int
+) -> dict[str, Any]:
     """An estimate with its 95 % band, laboratory results, the revised estimate and flagged periods."""
-    plot = _plot(window, f"{item.tag}, {item.unit}", 330)
+    plot = _plot(window, f"{item.tag}, {item.unit}", height)
     span = (item.range[1] - item.range[0]) / 200.0
     plot.y_range.min_interval = 4.0 * (item.lab.sd if item.lab is not None else span)
     _flagged(plot, _source("flags", columns))

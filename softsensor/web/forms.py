@@ -82,7 +82,7 @@ def form_routes(site: Site) -> APIRouter:
     def back_to_flag(unit: str, flag: str) -> RedirectResponse:
         return RedirectResponse(f"/units/{quote(unit, safe='')}/flag?id={quote(flag, safe='')}", 303)
 
-    @router.post("/units/{name}/flag/acknowledge")
+    @router.post("/units/{name:path}/flag/acknowledge")
     def acknowledge(
         request: Request, name: str, id: str, token: Field = "", actor: Field = "", reason: Field = ""
     ) -> RedirectResponse:
@@ -92,7 +92,7 @@ def form_routes(site: Site) -> APIRouter:
         changes.acknowledge_flag(site.database, id, who.name, who.reason)
         return back_to_flag(name, id)
 
-    @router.post("/units/{name}/flag/comment")
+    @router.post("/units/{name:path}/flag/comment")
     def comment(
         request: Request, name: str, id: str, token: Field = "", actor: Field = "", reason: Field = ""
     ) -> RedirectResponse:
@@ -102,7 +102,7 @@ def form_routes(site: Site) -> APIRouter:
         changes.comment_flag(site.database, id, who.name, who.reason)
         return back_to_flag(name, id)
 
-    @router.post("/units/{name}/flag/finding")
+    @router.post("/units/{name:path}/flag/finding")
     def finding(
         request: Request,
         name: str,
@@ -125,7 +125,7 @@ def form_routes(site: Site) -> APIRouter:
         changes.set_finding(site.database, id, finding, who.name, who.reason, as_found=found, as_left=left)
         return back_to_flag(name, id)
 
-    @router.post("/units/{name}/lab/decide")
+    @router.post("/units/{name:path}/lab/decide")
     def decide(
         request: Request,
         name: str,

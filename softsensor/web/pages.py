@@ -18,7 +18,7 @@ from softsensor.records import audit, reader
 from softsensor.records.reader import Unit
 from softsensor.records.tables import FINDINGS
 from softsensor.web import wording
-from softsensor.web.chart import estimate_chart, sensor_chart
+from softsensor.web.chart import LOW, TALL, estimate_chart, sensor_chart
 from softsensor.web.chart_data import (
     Columns,
     Window,
@@ -90,26 +90,21 @@ def page_routes(site: Site, pages: Pages) -> APIRouter:
             return RedirectResponse(f"/units/{quote(units[0].name, safe='')}", 307)
         return pages.page(request, "units.html", units=units)
 
-    @router.get("/units/{name}")
-    def unit_page(request: Request, name: str) -> Response:
-        view = UnitView(site.database, site.models, site.unit(name))
-        return pages.page(request, "unit.html", view=view, parts=PARTS)
-
-    @router.get("/units/{name}/part/{part}")
+    @router.get("/units/{name:path}/part/{part}")
     def part(name: str, part: str) -> Response:
         if part not in PARTS:
             raise NotHere(f"There is no part {part} of a unit's page. Parts: {', '.join(PARTS)}.")
         view = UnitView(site.database, site.models, site.unit(name))
         return pages.part(f"part_{part}.html", view=view)
 
-    @router.get("/units/{name}/flag")
+    @router.get("/units/{name:path}/flag")
     def flag_page(request: Request, name: str, id: str) -> Response:
         unit, flag, comments = site.flag(name, id)
         spec = site.models.spec(site.models.revision_of(unit))
         shown: dict[str, Any] = {"units": tag_units(spec), "decimals": tag_decimals(spec)}
         return pages.page(request, "flag.html", unit=unit, flag=flag, comments=comments, **shown)
 
-    @router.get("/units/{name}/lab")
+    @router.get("/units/{name:path}/lab")
     def lab_page(request: Request, name: str, id: int) -> Response:
         unit, lab = site.lab(name, id)
         spec = site.models.spec(site.models.revision_of(unit))
@@ -138,6 +133,11 @@ def page_routes(site: Site, pages: Pages) -> APIRouter:
         shown: dict[str, Any] = {"chapters": chapters, "chapter": chapter, "text": chapters[chapter]}
         return pages.page(request, "handbook.html", **shown)
 
+    @router.get("/units/{name:path}")
+    def unit_page(request: Request, name: str) -> Response:
+        view = UnitView(site.database, site.models, site.unit(name))
+        return pages.page(request, "unit.html", view=view, parts=PARTS)
+
     return router
 
 
@@ -161,7 +161,7 @@ def data_routes(site: Site) -> APIRouter:
         latest, _ = latest_cycle(site.database, unit, site.models.revision_of(unit))
         return site.database.clock() if latest is None else int(latest.times[-1])
 
-    @router.get("/units/{name}/estimates.json")
+    @router.get("/units/{name:path}/estimates.json")
     def estimates(name: str) -> dict[str, Any]:
         unit = site.unit(name)
         revision = site.models.revision_of(unit)
@@ -184,7 +184,7 @@ def data_routes(site: Site) -> APIRouter:
             return sensor_columns(site.database, site.models, unit, tag, window)
         raise NotHere(f"There is no estimate or sensor {tag} in unit {unit.name}.")
 
-    @router.get("/units/{name}/chart.json")
+    @router.get("/units/{name:path}/chart.json")
     def chart(name: str, tag: str, hours: Hours = USUAL_HOURS, offset: OffsetMinutes = 0) -> dict[str, Any]:
         unit = site.unit(name)
         window = window_of(unit, hours, offset)
@@ -193,12 +193,13 @@ def data_routes(site: Site) -> APIRouter:
         spec = site.models.spec(revision)
         item = find_estimate(spec, tag)
         if item is not None:
-            return {"window": window.ends(), "item": estimate_chart(item, window, columns)}
+            height = TALL if len(spec.estimates) == 1 else LOW
+            return {"window": window.ends(), "item": estimate_chart(item, window, columns, height)}
         i = [sensor.tag for sensor in spec.sensors].index(tag)
         interval = float(site.models.intervals(revision)[i])
         return {"window": window.ends(), "item": sensor_chart(spec.sensors[i], window, columns, interval)}
 
-    @router.get("/units/{name}/chart-data.json")
+    @router.get("/units/{name:path}/chart-data.json")
     def chart_data(
         name: str, tag: str, hours: Hours = USUAL_HOURS, offset: OffsetMinutes = 0
     ) -> dict[str, Any]:
@@ -206,7 +207,7 @@ def data_routes(site: Site) -> APIRouter:
         window = window_of(unit, hours, offset)
         return {"window": window.ends(), "columns": columns_of(unit, tag, window)}
 
-    @router.get("/units/{name}/live")
+    @router.get("/units/{name:path}/live")
     async def live(name: str) -> StreamingResponse:
         await asyncio.to_thread(site.unit, name)
         stream: AsyncIterator[str] = site.streams.updates(name)

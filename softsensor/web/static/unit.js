@@ -3,6 +3,7 @@
 
 (() => {
   const PART_EVERY = 1000;
+  const ALL_EVERY = 30000;
   const SILENCE = 25000;
   const AGAIN = 2000;
   const PARTS_OF = {
@@ -14,7 +15,7 @@
   const ALL = ["state", "sensors", "flags", "laboratory", "events", "trail"];
 
   let root, address, charts, sensorChart = null, openSensor = null;
-  let stream = null, heard = 0, hours = 8, drawn = 0;
+  let stream = null, heard = 0, hours = 8, drawn = 0, whole = 0;
   const due = new Set();
   const busy = new Set();
 
@@ -69,11 +70,16 @@
   }
 
   function renewDue() {
+    if (document.hidden) return;
     const names = Array.from(due);
     due.clear();
     names.forEach(renewPart);
     const now = Date.now();
     if (now - drawn > chartsEvery()) renewCharts();
+    if (now - whole > ALL_EVERY) {
+      whole = now;
+      ALL.forEach((part) => due.add(part));
+    }
     if (stream !== null && now - heard > SILENCE) restart("The program has been silent for a while.");
   }
 
@@ -224,7 +230,7 @@
     address = root.dataset.address;
     charts = Array.from(root.querySelectorAll(".estimate .chart")).map((e) => new Chart(e, address, e.dataset.tag));
     root.addEventListener("click", clicked);
-    drawn = heard = Date.now();
+    drawn = heard = whole = Date.now();
     charts.forEach((chart) => chart.draw(hours));
     listen();
     setInterval(renewDue, PART_EVERY);

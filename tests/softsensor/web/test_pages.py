@@ -195,6 +195,35 @@ def test_a_model_on_record_that_is_no_model_is_said_in_words(recorded: Database,
     assert "sample_time: missing" in words_of(answer.text)
 
 
+def test_a_fault_of_ours_is_no_traceback(recorded: Database, asker: Any) -> None:
+    with recorded.write() as connection:
+        connection.execute(text("UPDATE results SET reasons = '{'"))
+    answer = asker.get(f"/units/{UNIT}")
+    assert answer.status_code == 500
+    assert "The page could not be made." in answer.text
+    assert "Traceback" not in answer.text
+    assert "script-src 'self'" in answer.headers["content-security-policy"]
+
+
+def test_a_unit_s_name_may_hold_any_sign(recorded: Database, asker: Any) -> None:
+    name = "area 2/R?210#a&b%2F"
+    with recorded.write() as connection:
+        connection.execute(text("UPDATE units SET name = :name"), {"name": name})
+    address = asker.get("/").headers["location"]
+    page = asker.get(address)
+    assert page.status_code == 200
+    found = [html.unescape(link) for link in re.findall(r'href="(/units/[^"]+)"', page.text)]
+    assert len(found) == 3
+    for link in [
+        *found,
+        f"{address}/estimates.json",
+        f"{address}/part/flags",
+        f"{address}/chart.json?tag=AY2101",
+    ]:
+        assert asker.get(link).status_code == 200
+    assert f'data-address="{html.escape(address)}"' in page.text
+
+
 def test_the_latest_values_as_json(asker: Any) -> None:
     answer = asker.get(f"/units/{UNIT}/estimates.json").json()
     made = course()
