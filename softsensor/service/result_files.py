@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import contextlib
 import json
 from collections.abc import Iterator
 from contextlib import contextmanager
@@ -53,21 +54,27 @@ class TableFile:
         if self._rows >= ROWS:
             self._write()
 
-    def finish(self) -> None:
-        """Write what is left and give the file its name."""
+    def close(self) -> None:
+        """Write what is left; the file is whole, under its temporary name."""
+        self._write()
         with _plain_errors(self.path):
-            self._write()
             if self._writer is not None:
                 self._writer.close()
                 self._writer = None
+
+    def name(self) -> None:
+        """Give the file its name; one of that name before it is gone."""
+        with _plain_errors(self.path):
             self._part.replace(self.path)
 
     def drop(self) -> None:
-        """Remove what was begun."""
-        if self._writer is not None:
-            self._writer.close()
-            self._writer = None
-        self._part.unlink(missing_ok=True)
+        """Remove what was begun; why it has to go is told already, so a disk that refuses once more adds nothing."""
+        with contextlib.suppress(OSError):
+            if self._writer is not None:
+                self._writer.close()
+        self._writer = None
+        with contextlib.suppress(OSError):
+            self._part.unlink(missing_ok=True)
 
     def _write(self) -> None:
         if not self._waiting:
@@ -104,7 +111,10 @@ class TableFile:
 
 
 class ResultFiles:
-    """All files of one replay in one folder; left without :meth:`finish`, nothing stays behind."""
+    """All files of one replay in one folder; left without :meth:`finish`, nothing stays behind.
+
+    Files get their names once all of them are whole, so that a full disk leaves earlier results as they were.
+    """
 
     def __init__(self, folder: Path, kind: Format, design: UnitDesign) -> None:
         self._folder = folder
@@ -112,8 +122,8 @@ class ResultFiles:
         self._design = design
         with _plain_errors(folder):
             folder.mkdir(parents=True, exist_ok=True)
-        self._estimates = TableFile(folder, "estimates", kind)
-        self._innovations = TableFile(folder, "innovations", kind)
+        self._summary = folder / ".summary.json.part"
+        self._files: dict[str, TableFile] = {}
         self._finished = False
 
     def __enter__(self) -> ResultFiles:
@@ -123,13 +133,20 @@ class ResultFiles:
         self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None
     ) -> None:
         if not self._finished:
-            self._estimates.drop()
-            self._innovations.drop()
+            for file in self._files.values():
+                file.drop()
+            with contextlib.suppress(OSError):
+                self._summary.unlink(missing_ok=True)
 
     def add(self, stretch: Stretch) -> None:
         """Write a stretch of cycles."""
-        self._estimates.add(estimate_table(self._design, stretch.readings, stretch.results))
-        self._innovations.add(innovation_table(self._design, stretch.results))
+        self._add("estimates", estimate_table(self._design, stretch.readings, stretch.results))
+        self._add("innovations", innovation_table(self._design, stretch.results))
+
+    def _add(self, name: str, table: pd.DataFrame) -> None:
+        if name not in self._files:
+            self._files[name] = TableFile(self._folder, name, self._kind)
+        self._files[name].add(table)
 
     def finish(self, running: Replay) -> dict[str, Any]:
         """Write flags, laboratory results and summary, give all files their names; returns the summary."""
@@ -138,17 +155,17 @@ class ResultFiles:
             raise ReplayError(
                 "history: no cycle lies within it; expected at least one row at or after a cycle"
             )
-        for name, table in (
-            ("flags", flag_table(list(running.totals.flags.values()))),
-            ("lab_results", lab_table(running.totals.labs)),
-        ):
-            file = TableFile(self._folder, name, self._kind)
-            file.add(table)
-            file.finish()
-        self._estimates.finish()
-        self._innovations.finish()
+        self._add("flags", flag_table(list(running.totals.flags.values())))
+        self._add("lab_results", lab_table(running.totals.labs))
+        for file in self._files.values():
+            file.close()
         path = self._folder / "summary.json"
         with _plain_errors(path):
-            path.write_text(json.dumps(summary, indent=2, ensure_ascii=False) + "\n", encoding="utf-8")
+            text = json.dumps(summary, indent=2, ensure_ascii=False, allow_nan=False)
+            self._summary.write_text(text + "\n", encoding="utf-8")
+        for file in self._files.values():
+            file.name()
+        with _plain_errors(path):
+            self._summary.replace(path)
         self._finished = True
         return summary
