@@ -101,8 +101,23 @@ def _speed(value: object) -> float:
     return float(value)
 
 
+def _secret(value: object) -> str:
+    if not isinstance(value, str) or not value:
+        raise RefusalError("")
+    return value
+
+
+class SecretKind(Kind[str]):
+    """A value that no message shows."""
+
+    def refusal(self, value: object, reason: str) -> str:
+        """What was expected, and nothing of what was found."""
+        return f"expected {self.expected}"
+
+
 TEXT: Kind[str] = Kind("a text", _word, "-")
-DATABASE_URL: Kind[str] = Kind(
+PASSWORD = SecretKind('a text such as "${PLANT_PASSWORD}"', _secret, "-")
+DATABASE_URL = SecretKind(
     'a database\'s address such as "sqlite:///records.db" or "postgresql+psycopg://user@host/name"',
     _word,
     "-",
@@ -196,7 +211,7 @@ def _plant(table: Table, path: Path) -> PlantSettings:
         table.read("endpoint", ENDPOINT),
         table.read_or("security_policy", POLICY, "Basic256Sha256"),
         table.read_or("user", TEXT, None),
-        table.read_or("password", TEXT, None),
+        table.read_or("password", PASSWORD, None),
         path.parent / pki if pki is not None else None,
         table.read_or("allow_unencrypted", SWITCH, False),
         table.read_or("publishing_interval", SPEED, 0.5),

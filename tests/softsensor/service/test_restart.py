@@ -71,10 +71,18 @@ def on_record(url: str, first: int = 0, last: int = END - 1) -> dict[str, Any]:
             )
             for f in reader.flags_of(database, unit)
         ]
+        columns: tuple[str, ...] = (
+            "tag",
+            "sampled_us",
+            "value",
+            "arrived_cycle",
+            "counted_cycle",
+            "predicted",
+            "innovation",
+        )
+        columns += ("sd", "status", "reason")
         found["labs"] = [
-            (lab.tag, lab.sampled_us, lab.value, lab.arrived_cycle, lab.counted_cycle)
-            + (lab.predicted, lab.innovation, lab.sd, lab.status, lab.reason)
-            for lab in reader.lab_results_of(database, unit)
+            tuple(getattr(lab, name) for name in columns) for lab in reader.lab_results_of(database, unit)
         ]
         found["revised"] = {
             cycle: (item.revised_at_cycle, item.estimate.tobytes(), item.sd.tobytes())
