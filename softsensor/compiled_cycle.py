@@ -20,8 +20,8 @@ class BlockInputs(NamedTuple):
     """N cycles as the loop takes them.
 
     u (N, n_inputs) finite; y (N, n_sensors), nan where missing; scale (N, n_sensors): factor on the noise variance;
-    use (N, n_sensors): 0 keeps a reading from the estimate; fresh (n_sensors,): see :func:`test_cycle`; lab_at: cycle
-    within the block, ascending; lab_row: output row; lab_value in engineering units; lab_variance.
+    use (N, n_sensors): 0 keeps a reading from the estimate; fresh (n_sensors,) and doubtful (N,): see :func:`test_cycle`;
+    lab_at: cycle within the block, ascending; lab_row: output row; lab_value in engineering units; lab_variance.
     """
 
     u: Floats
@@ -29,6 +29,7 @@ class BlockInputs(NamedTuple):
     scale: Floats
     use: Ints
     fresh: Ints
+    doubtful: Ints
     lab_at: Ints
     lab_row: Ints
     lab_value: Floats
@@ -46,6 +47,10 @@ class BlockOutputs(NamedTuple):
     estimate: Floats
     estimate_sd: Floats
     events: Ints
+    settling: Ints
+    """(N,) 1 while the tests rest because inputs are or were missing."""
+    news: Ints
+    """(N,) Union of all news of a cycle."""
     lab_predicted: Floats
     lab_sd: Floats
 
@@ -62,6 +67,8 @@ def empty_outputs(cycles: int, kernel: Kernel, labs: int) -> BlockOutputs:
         np.full(estimates, np.nan),
         np.full(estimates, np.nan),
         np.zeros(sensors, dtype=np.int64),
+        np.zeros(cycles, dtype=np.int64),
+        np.zeros(cycles, dtype=np.int64),
         np.full(labs, np.nan),
         np.full(labs, np.nan),
     )
@@ -155,8 +162,17 @@ def run_block(
         predict(kernel, est.x, est.P, v, M)
         if testing:
             news = test_cycle(
-                design, tests, data.y[k], data.fresh, out.innovation[k], out.innovation_sd[k], out.events[k]
+                design,
+                tests,
+                data.y[k],
+                data.fresh,
+                data.doubtful[k],
+                out.innovation[k],
+                out.innovation_sd[k],
+                out.events[k],
             )
+            out.news[k] = news
+            out.settling[k] = 1 if tests.cycle[0] <= tests.settling_until[0] else 0
             for i in range(kernel.n_sensors):
                 out.high[k, i] = tests.high[i]
                 out.low[k, i] = tests.low[i]

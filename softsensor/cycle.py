@@ -123,6 +123,8 @@ class CycleResults:
     used: NDArray[np.int8]
     left_out: NDArray[np.int8]
     """1 where a sensor is kept from the estimate, whether or not it has a reading."""
+    settling: NDArray[np.int8]
+    """(N,) 1 while inputs are missing, and for a while after: the tests rest and the estimates are Uncertain."""
     high: Floats
     low: Floats
     lab_predicted: Floats
@@ -138,7 +140,7 @@ class CycleResults:
 
 ROW_FIELDS = (
     "times", "reading", "estimate", "sd", "status", "predicted", "innovation", "innovation_sd", "used", "left_out",
-    "high", "low",
+    "settling", "high", "low",
 )  # fmt: skip
 
 
@@ -196,6 +198,7 @@ def block_inputs(
         scale,
         in_use(book, first, len(readings), design.kernel.n_sensors),
         design.fresh,
+        np.any(readings.u_quality > CycleQuality.UNCERTAIN, axis=1).astype(np.int64),
         np.array([lab.cycle - first for lab in labs], dtype=np.int64),
         np.array([design.kernel.n_sensors + lab.estimate for lab in labs], dtype=np.int64),
         np.array([lab.value for lab in labs], dtype=np.float64),
@@ -222,8 +225,9 @@ def run_cycles(
             f"{design.model.spec.name}: an innovation's variance is not positive near cycle {first}"
         )
     outcome = FollowUp(state.book)
-    if done and (np.any(out.events[done - 1]) or _looked(design, tests)):
-        moment = Moment(first + done - 1, int(readings.times[done - 1]), out.events[done - 1])
+    if done and out.news[done - 1]:
+        time, news = int(readings.times[done - 1]), int(out.news[done - 1])
+        moment = Moment(first + done - 1, time, out.events[done - 1], news)
         outcome = follow_up(design.detection, state.book, tests, moment)
     results = _results(design, state.book, first, done, readings, data, out)
     results = replace(
@@ -234,10 +238,6 @@ def run_cycles(
     )
     digest = state.digest.add(result_rows(results))
     return CycleState(estimator, tests, outcome.book, digest), results
-
-
-def _looked(design: UnitDesign, tests: TestState) -> bool:
-    return tests.watch[0] != 0 and int(tests.cycle[0]) % design.detection.tests.look_every == 0
 
 
 def rerun(
@@ -283,12 +283,13 @@ def _results(
         np.where(np.isfinite(out.innovation[:done]), data.y[:done], np.nan),
         estimate,
         out.estimate_sd[:done] * scale,
-        estimate_status(design, readings, estimate, data.use[:done]),
+        estimate_status(design, readings, estimate, (data.use[:done] == 0, out.settling[:done] != 0)),
         out.predicted[:done],
         out.innovation[:done],
         out.innovation_sd[:done],
         used,
         (data.use[:done] == 0).astype(np.int8),
+        out.settling[:done].astype(np.int8),
         out.high[:done],
         out.low[:done],
         out.lab_predicted[in_block],
@@ -297,11 +298,21 @@ def _results(
 
 
 def estimate_status(
-    design: UnitDesign, readings: CycleReadings, estimate: Floats, use: Ints
+    design: UnitDesign,
+    readings: CycleReadings,
+    estimate: Floats,
+    doubts: tuple[NDArray[np.bool_], NDArray[np.bool_]],
 ) -> NDArray[np.int8]:
-    """1 (Uncertain) where an input is doubtful, something is outside its validated range, or a sensor is left out."""
+    """1 (Uncertain) where an input is doubtful or was missing, something is outside its validated range, or a sensor is
+    left out.
+
+    :param doubts: which sensors are left out (N, n_sensors); whether inputs are or were missing (N,).
+    """
     n, spec = len(estimate), design.model.spec
-    doubtful = np.any(readings.u_quality[:n] != CycleQuality.GOOD, axis=1) | np.any(use == 0, axis=1)
+    left_out, settling = doubts
+    doubtful = (
+        np.any(readings.u_quality[:n] != CycleQuality.GOOD, axis=1) | np.any(left_out, axis=1) | settling
+    )
     for j, item in enumerate(spec.inputs):
         doubtful |= outside(readings.u[:n, j], item.validated_range)
     status = np.repeat(doubtful[:, None], len(spec.estimates), axis=1)

@@ -141,7 +141,7 @@ def report_lines(report: Report, story: DemoScenario, began: int) -> list[str]:
 def _flag_line(flag: StoredFlag, story: DemoScenario, began: int) -> str:
     text = f"Flag: {flag.tag} {flag.kind}, probability {flag.probability:.3f}, group: {'; '.join(flag.group)}"
     drift_start = began + round(story.drift_start * 1e6)
-    if flag.tag == story.drift_tag and flag.detected_us > drift_start:
+    if flag.tag == story.drift_tag and flag.kind in ("bias", "drift") and flag.detected_us > drift_start:
         error = story.drift_rate * (flag.detected_us - drift_start) * 1e-6 / 3600.0
         onset = (flag.onset_us - drift_start) / 60e6
         after = (flag.detected_us - drift_start) / 60e6

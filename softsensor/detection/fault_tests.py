@@ -22,9 +22,15 @@ LOST = 16
 LOST_ENDED = 32
 SPIKE = 64
 LOOK = 128
+SETTLING = 256
+SETTLED = 512
 
 MIN_REPEATS = 10
 """Fewer equal readings than this are never called stuck."""
+
+SETTLING_SHARE = 3
+"""After inputs have been missing the tests rest until this many times that long has passed since they went missing: what
+the inputs did meanwhile is not in the prediction."""
 
 WARM_UP = 200
 """Readings before the share of equal neighbours says anything about a sensor's resolution."""
@@ -75,6 +81,8 @@ class TestState(NamedTuple):
     cycle: Ints
     watch: Ints
     """(1,) 1 while a flag or an undecided test needs looking after every ``look_every`` cycles."""
+    settling_until: Ints
+    """(1,) First cycle at which the tests go on after inputs were missing."""
 
     def copy(self) -> TestState:
         """A copy that shares nothing with this state."""
@@ -107,6 +115,7 @@ def initial_tests(n_sensors: int, window: int) -> TestState:
         ints(),
         floats(),
         np.full((window, n_sensors), np.nan),
+        np.zeros(1, dtype=np.int64),
         np.zeros(1, dtype=np.int64),
         np.zeros(1, dtype=np.int64),
         np.zeros(1, dtype=np.int64),
@@ -182,25 +191,57 @@ def _test_spike(design: TestDesign, state: TestState, i: int, z: float) -> int:
 
 
 @njit(cache=True)
+def _settle(state: TestState, doubtful: int) -> int:
+    """Rest the tests of innovations while inputs are missing and for a while after; returns the news."""
+    now, until = state.cycle[0], state.settling_until[0]
+    if doubtful != 0:
+        state.settling_until[0] = max(until, now) + SETTLING_SHARE
+        return SETTLING if until <= now else 0
+    if now == until and now > 0:
+        state.valid_from[0] = now
+        return SETTLED
+    return 0
+
+
+@njit(cache=True)
+def _rest(state: TestState, i: int) -> None:
+    state.high[i] = 0.0
+    state.low[i] = 0.0
+    state.up[i] = 0
+    state.last_z[i] = 0.0
+
+
+@njit(cache=True)
 def test_cycle(
-    design: TestDesign, state: TestState, y: Floats, fresh: Ints, innovation: Floats, sd: Floats, events: Ints
+    design: TestDesign,
+    state: TestState,
+    y: Floats,
+    fresh: Ints,
+    doubtful: int,
+    innovation: Floats,
+    sd: Floats,
+    events: Ints,
 ) -> int:
     """Run all tests on one cycle's innovations; events (n_sensors,) gets the bits, the return value their union.
 
     ``fresh`` is 0 for a value that the assembly repeated (reported on change): it is no evidence of being stuck.
+    ``doubtful`` is 1 where an input is missing or too old.
     """
-    union = 0
+    union = _settle(state, doubtful)
+    resting = state.cycle[0] < state.settling_until[0]
     slot = state.cycle[0] % state.ring.shape[0]
     for i in range(len(y)):
         missing = y[i] != y[i]
         code = _test_lost(design, state, i, missing)
         state.ring[slot, i] = innovation[i]
-        if not missing:
+        if resting:
+            _rest(state, i)
+        elif not missing:
             z = innovation[i] / sd[i]
             code |= _test_shift(design, state, i, z)
             code |= _test_spike(design, state, i, z)
-            if fresh[i] != 0:
-                code |= _test_stuck(design, state, i, y[i])
+        if not missing and fresh[i] != 0:
+            code |= _test_stuck(design, state, i, y[i])
         events[i] = code
         union |= code
     state.cycle[0] += 1

@@ -69,22 +69,34 @@ class FollowUp:
 
 @dataclass(frozen=True)
 class Moment:
-    """The cycle that has news: its number, its time, the event bits per sensor."""
+    """The cycle that has news: its number, its time, the event bits per sensor and of all together."""
 
     cycle: int
     time: int
     events: Ints
+    news: int
 
 
 def follow_up(design: DetectionDesign, book: FlagBook, tests: TestState, moment: Moment) -> FollowUp:
     """Deal with all news of one cycle; ``tests`` is a work array and may be restarted here."""
-    outcome = FollowUp(book)
+    outcome = _say_settling(FollowUp(book), moment)
     for sensor in range(design.kernel.n_sensors):
         outcome = _simple_faults(design, outcome, tests, moment, sensor)
     outcome = _clear_shifts(design, outcome, tests, moment)
     if design.armed:
         outcome = _diagnose(design, outcome, tests, moment)
     tests.watch[0] = int(bool(outcome.book.open) or outcome.book.episode is not None)
+    return outcome
+
+
+def _say_settling(outcome: FollowUp, moment: Moment) -> FollowUp:
+    """Every rest of the tests is on record, with its beginning and its end."""
+    if moment.news & fault_tests.SETTLING:
+        text = "an input is missing or too old: the tests of innovations rest, the estimates are Uncertain"
+        return replace(outcome, notes=(Note(moment.time, "suppression", text),))
+    if moment.news & fault_tests.SETTLED:
+        text = "inputs have been there long enough again: the tests of innovations go on"
+        return replace(outcome, notes=(Note(moment.time, "suppression", text),))
     return outcome
 
 

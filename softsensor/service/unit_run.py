@@ -221,6 +221,7 @@ def _waiting_results(design: UnitDesign, readings: CycleReadings) -> CycleResult
         sensors,
         none,
         none,
+        np.zeros(n, dtype=np.int8),
         zeros,
         zeros,
         np.zeros(0),

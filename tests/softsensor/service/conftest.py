@@ -215,7 +215,7 @@ class Bench:
     design: UnitDesign
     url: str
     steps: list[Step] = field(default_factory=list)
-    readings_again: int = 0
+    cycles_again: int = 0
 
     def service(self, database: Database, writer: RecordsWriter) -> UnitService:
         model = self.design.model
