@@ -55,6 +55,7 @@ class UnitService:
         }
         self._seen_labs: set[tuple[str, int, float]] = set()
         self._pending_labs: list[LabArrival] = []
+        self._decided_labs: set[tuple[str, int, float]] = set()
         self._horizon = int(np.ceil(LEAST_HORIZON_S / design.model.spec.sample_time)) + 2
         self._assembly = LiveAssembly(design.model.spec)
         self.run = fresh_run(design, self._horizon)
@@ -101,15 +102,24 @@ class UnitService:
         return [
             (
                 row.id,
-                LabArrival(self._lab_index[row.tag], row.tag, row.sampled_us, row.reported_us, row.value),
+                LabArrival(
+                    self._lab_index[row.tag],
+                    row.tag,
+                    row.sampled_us,
+                    row.reported_us,
+                    row.value,
+                    row.time_uncertainty,
+                ),
             )
             for row in lab_results_of(self._database, self.identity.unit_id)
             if row.decided_by is not None and row.status == "used" and row.counted_cycle is None
         ]
 
     def decide(self, arrival: LabArrival, now: int) -> None:
-        """A result that a person has decided to use arrives once more."""
-        self._pending_labs.append(replace(arrival, decided_at=now))
+        """A result that a person has decided to use arrives once more, and once only."""
+        if _key(arrival) not in self._decided_labs:
+            self._decided_labs.add(_key(arrival))
+            self._pending_labs.append(replace(arrival, decided_at=now))
 
     def complete_to(self) -> int:
         """Time up to which every tag has been heard."""
@@ -185,19 +195,25 @@ class UnitService:
         self.run = resumed_run(self.design, self._database, unit_id, self._horizon)
         if seen is None:
             return 0
+        self._seen_labs = {
+            (lab.tag, lab.sampled_us, lab.value) for lab in lab_results_of(self._database, unit_id)
+        }
         first, again = self.run.state.next_cycle, 0
         for part, arrivals in recorded_cycles(self._database, unit_id, first, seen.cycle):
+            self._remember_labs(arrivals)
             for k in range(len(part)):
                 self._submit(self._advance(slice_readings(part, k, k + 1), arrivals if k == 0 else []))
                 again += 1
-        self._remember_labs()
         self._hold(seen)
         return again
 
-    def _remember_labs(self) -> None:
-        """A laboratory result that the plant's server shows again after a restart is not a new one."""
-        for lab in lab_results_of(self._database, self.identity.unit_id):
-            self._seen_labs.add((lab.tag, lab.sampled_us, lab.value))
+    def _remember_labs(self, arrivals: list[LabArrival]) -> None:
+        """What the plant's server or the records show again after a restart has arrived already.
+
+        Results that arrived in cycles that ran again may not be on record yet.
+        """
+        self._seen_labs |= {_key(arrival) for arrival in arrivals}
+        self._decided_labs |= {_key(arrival) for arrival in arrivals if arrival.decided_at is not None}
 
     def _hold(self, seen: LastSeen) -> None:
         """Inputs go on from the last recorded cycle's values; a run that is fresh starts when it can."""
@@ -207,6 +223,10 @@ class UnitService:
             return
         self.next_time = last + self._sample_us
         self._assembly = LiveAssembly(self.model.spec, held_values(self.model.spec, seen.readings))
+
+
+def _key(arrival: LabArrival) -> tuple[str, int, float]:
+    return arrival.tag, arrival.sampled, arrival.value
 
 
 def held_values(spec: UnitSpec, last: CycleReadings) -> AssemblyState:

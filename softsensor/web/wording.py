@@ -45,14 +45,14 @@ def utc(us: int) -> str:
 
 
 def decimals_for(resolution: float) -> int:
-    """Decimals that show ``resolution`` with two digits; the same for every value of a tag, so that digits do not jump.
+    """Decimals that show a third of ``resolution``; the same for every value of a tag, so that digits do not jump.
 
-    >>> decimals_for(0.15), decimals_for(0.02), decimals_for(40.0)
-    (2, 3, 0)
+    >>> decimals_for(0.15), decimals_for(0.02), decimals_for(0.06), decimals_for(40.0)
+    (2, 3, 2, 0)
     """
     if not (math.isfinite(resolution) and resolution > 0.0):
         return 3
-    return min(max(1 - math.floor(math.log10(resolution)), 0), MOST_DECIMALS)
+    return min(max(math.ceil(-math.log10(resolution / 3.0)), 0), MOST_DECIMALS)
 
 
 def number(value: float | None, decimals: int, sign: bool = False) -> str:

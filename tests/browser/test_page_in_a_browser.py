@@ -180,6 +180,16 @@ def test_another_period_is_drawn(site: Served, browser_page: Watched) -> None:
     browser_page.assert_quiet()
 
 
+def test_a_chart_starts_with_what_is_on_record(site: Served, browser_page: Watched) -> None:
+    page = browser_page.page
+    opened(site, page)
+    page.get_by_role("button", name="24 h").click()
+    expect(page.locator(".estimate .chart")).to_have_attribute("data-drawn", "24")
+    first = NOW - (CYCLES - 1) * STEP + 60 * MINUTE
+    assert page.evaluate("Bokeh.documents[0].get_model_by_name('time').start") == first / 1000
+    browser_page.assert_quiet()
+
+
 def test_a_sensors_chart_opens_and_closes_from_the_keyboard(site: Served, browser_page: Watched) -> None:
     page = browser_page.page
     opened(site, page)

@@ -31,7 +31,8 @@ class Chart {
       this.roots = rootsOf(views);
       this.bandAgain();
       this.lastCycle = null;
-      this.followed = window;
+      this.followed = null;
+      this.follow(window.start, window.end);
       this.element.dataset.drawn = String(hours);
     } catch (fault) {
       if (order !== this.wanted) return;
@@ -97,8 +98,16 @@ class Chart {
     const range = this.find("time");
     if (range === null) return;
     if (this.followed !== null && (range.start !== this.followed.start || range.end !== this.followed.end)) return;
-    range.setv({ start, end });
-    this.followed = { start, end };
+    const from = this.begin(start, end);
+    range.setv({ start: from, end });
+    this.followed = { start: from, end };
+  }
+
+  // Where there is less on record than the period asked for, the axis starts with it.
+  begin(start, end) {
+    const source = this.find("estimate") || this.find("predicted");
+    const first = source !== null && source.data.x.length ? source.data.x[0] : start;
+    return Math.max(start, Math.min(first, end - (end - start) / 8));
   }
 
   bandAgain() {

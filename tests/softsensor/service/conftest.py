@@ -229,11 +229,10 @@ class Bench:
         """Resume and run cycles first to stop; with ``cut`` it ends in cycle ``stop``, its readings handed over."""
         with open_database(self.url) as database, RecordsWriter(database) as writer:
             service = self.service(database, writer)
-            self.readings_again = service.resume()
-            for reading in story.shown_again(first):
-                service.accept(reading, START + first * STEP - 500_000)
-            assert service.next_time is not None
-            number = (service.next_time - START) // STEP
+            self.cycles_again = service.resume()
+            number = (service.coming_cycle(START + first * STEP) - START) // STEP
+            for reading in story.shown_again(number):
+                service.accept(reading, START + number * STEP - 500_000)
             while number < stop:
                 self.steps += await self.cycle(service, story, number)
                 number += 1
