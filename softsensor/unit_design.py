@@ -27,6 +27,8 @@ LEAST_REFERENCE, LARGEST_REFERENCE = 0.125, 1.0
 GROSS_REFERENCE = 0.5
 """For a sensor whose tolerance-sized bias the filter absorbs (half the shift below LEAST_REFERENCE): its sums then watch
 for gross steps only, because a more sensitive test would answer to every small misfit of the model."""
+INTERVAL_STEP = 2.0**-12
+"""Decision intervals are rounded up to this: linear algebra may differ in the last bits between machines, results may not."""
 LOOK_EVERY = 6
 LOST_SECONDS, LOST_CYCLES = 300.0, 10
 
@@ -59,7 +61,8 @@ def fault_test_design(model: PlantModel, kernel: Kernel) -> TestDesign:
     cycles = model.spec.false_flag_interval / model.spec.sample_time
     half = 0.5 * steady_shifts(model, kernel)
     reference = np.where(half < LEAST_REFERENCE, GROSS_REFERENCE, np.minimum(half, LARGEST_REFERENCE))
-    interval = np.array([decision_interval(float(value), cycles, clip=CLIP) for value in reference])
+    exact = [decision_interval(float(value), cycles, clip=CLIP) for value in reference]
+    interval = np.ceil(np.array(exact) / INTERVAL_STEP) * INTERVAL_STEP
     lost = max(LOST_CYCLES, int(np.ceil(LOST_SECONDS / model.spec.sample_time)))
     return TestDesign(
         reference,

@@ -13,7 +13,7 @@ from softsensor.service.result_tables import NORMAL_95
 
 
 class RunSummary:
-    """Adds results up as they come; nothing is kept per cycle."""
+    """Adds results up as they come; nothing is kept per cycle. nis and whiteness are of the readings used."""
 
     def __init__(self, design: UnitDesign) -> None:
         n = design.kernel.n_sensors
@@ -33,7 +33,7 @@ class RunSummary:
     def add(self, results: CycleResults) -> None:
         """Count these cycles' results."""
         self._cycles += len(results)
-        z = results.innovation / results.innovation_sd
+        z = np.where(results.used != 0, results.innovation / results.innovation_sd, np.nan)
         present = np.isfinite(z)
         self._count += present.sum(axis=0)
         self._squares += np.nansum(z * z, axis=0)
