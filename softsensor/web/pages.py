@@ -26,6 +26,7 @@ from softsensor.web.chart_data import (
     find_estimate,
     sensor_columns,
 )
+from softsensor.web.handbook_text import chapter_html
 from softsensor.web.rows import estimate_rows, latest_cycle, tag_decimals, tag_units
 from softsensor.web.security import COOKIE
 from softsensor.web.site import NotHere, Site, choices_for
@@ -130,7 +131,11 @@ def page_routes(site: Site, pages: Pages) -> APIRouter:
         chapters = _chapters()
         if chapter not in chapters:
             raise NotHere(f"There is no chapter {chapter}. Chapters: {', '.join(chapters) or 'none'}.")
-        shown: dict[str, Any] = {"chapters": chapters, "chapter": chapter, "text": chapters[chapter]}
+        shown: dict[str, Any] = {
+            "chapters": chapters,
+            "chapter": chapter,
+            "text": chapter_html(chapters[chapter]),
+        }
         return pages.page(request, "handbook.html", **shown)
 
     @router.get("/units/{name:path}")

@@ -299,7 +299,7 @@ def test_older_entries_are_a_page_further(recorded: Database, asker: Any) -> Non
     assert "flag cleared" not in page
 
 
-@pytest.mark.parametrize("module", ["wording", "chart"])
+@pytest.mark.parametrize("module", ["wording", "chart", "handbook_text"])
 def test_examples_in_the_text_are_true(module: str) -> None:
     failed, tried = doctest.testmod(import_module(f"softsensor.web.{module}"))
     assert tried > 0
