@@ -10,6 +10,7 @@ from typing import Protocol
 from connectors.events import ConnectionChange, ReadingsLost, SourceEvent
 from connectors.readings import Reading
 from softsensor.records import happenings
+from softsensor.records.errors import DatabaseAwayError
 from softsensor.records.writer import RecordsWriter, WriterState
 from softsensor.service.clock import Clock
 from softsensor.service.live_feed import LiveFeed, News
@@ -171,10 +172,13 @@ class LiveService:
             await asyncio.sleep(0.5)
 
     async def _watch_decisions(self, unit: UnitService) -> None:
-        """A laboratory result that a person has decided to use arrives once more."""
+        """A laboratory result that a person has decided to use arrives once more; once the database can be asked."""
         taken: set[int] = set()
         while True:
-            rows = await asyncio.to_thread(unit.decided_labs)
+            try:
+                rows = await asyncio.to_thread(unit.decided_labs)
+            except DatabaseAwayError:  # said by _watch_records
+                rows = []
             for row, arrival in rows:
                 if row not in taken:
                     taken.add(row)

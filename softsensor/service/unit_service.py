@@ -17,7 +17,7 @@ from softsensor.readings_of_cycle import CycleQuality, CycleReadings
 from softsensor.records import blocks, storing
 from softsensor.records.engine import Database
 from softsensor.records.reader import lab_results_of
-from softsensor.records.writer import RecordsWriter
+from softsensor.records.writer import RecordsWriter, WriterState
 from softsensor.service.assembly import NO_LIMIT, AssemblyState, LiveAssembly, TagRule, rules_of
 from softsensor.service.checkpoints import FORMAT, Context, pack_state
 from softsensor.service.reading_rules import TagState
@@ -155,8 +155,10 @@ class UnitService:
             (pack_decisions(arrivals),),
         )
         future = self._writer.submit(storing.store_readings, self.identity.unit_id, block)
-        patience = 0.0 if self.records_late else COMMIT_PATIENCE
-        done, _ = await asyncio.wait([asyncio.wrap_future(future)], timeout=patience)
+        patience = 0.0 if self._writer.state is WriterState.WAITING else COMMIT_PATIENCE
+        written = asyncio.wrap_future(future)
+        written.add_done_callback(_take_note)
+        done, _ = await asyncio.wait([written], timeout=patience)
         self.records_late = not done
         for item in done:
             item.result()
@@ -223,6 +225,12 @@ class UnitService:
             return
         self.next_time = last + self._sample_us
         self._assembly = LiveAssembly(self.model.spec, held_values(self.model.spec, seen.readings))
+
+
+def _take_note(written: asyncio.Future[None]) -> None:
+    """A write that fails after its cycle went on is told by the writer; here its error only counts as seen."""
+    if not written.cancelled():
+        written.exception()
 
 
 def _key(arrival: LabArrival) -> tuple[str, int, float]:
