@@ -167,6 +167,7 @@ async def _page(
     try:
         yield f"http://{f'[{host}]' if ':' in host else host}:{port}"
     finally:
+        app.state.streams.close()
         server.should_exit = True
         await task
         listener.close()

@@ -22,7 +22,6 @@ if TYPE_CHECKING:
     from softsensor.demonstration.plant_side import SimulatedPlant
     from softsensor.demonstration.service_side import ServiceProcess
 
-MODEL = "jacketed_reactor"
 PREFERRED_PORT = 8080
 CATCH_UP = 1.0
 """Seconds on the wall that the service is given to finish the last cycles."""
@@ -80,12 +79,12 @@ def _seconds(duration: str | None) -> float | None:
 
 def _prepare(where: Path) -> PlantModel:
     """The model file and an upgraded database in the folder; the compiled loop warmed up."""
-    from plant_models.library import published_model_path
+    from plant_models.simulators import reactor_model_path
     from softsensor.demonstration.report import warm_up
     from softsensor.records.upgrade import upgrade_database
     from softsensor.unit_design import load_model
 
-    shutil.copyfile(published_model_path(MODEL), where / "r210.toml")
+    shutil.copyfile(reactor_model_path(), where / "r210.toml")
     model = load_model(where / "r210.toml")
     upgrade_database(f"sqlite:///{(where / 'records.db').as_posix()}")
     typer.echo("preparing (the first time on a machine this compiles for about half a minute)")

@@ -24,7 +24,7 @@ from plant_models.simulators.stirred_tank import (
 )
 from plant_models.specification import PathSpec
 
-COMMITTED = Path(str(files("plant_models") / "library" / "jacketed_reactor.toml"))
+COMMITTED = Path(str(files("plant_models") / "simulators" / "jacketed_reactor.toml"))
 PARAMETERS = TankParameters()
 DESIGN = inputs_holding(PARAMETERS, TankInputs(), 92.4)
 

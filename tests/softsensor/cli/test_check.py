@@ -10,6 +10,8 @@ from pathlib import Path
 
 import pytest
 
+from plant_models.simulators import reactor_model_path
+
 LIBRARY = Path(str(files("plant_models.library")))
 
 FILE = """
@@ -100,10 +102,15 @@ def write(
 
 
 @pytest.mark.parametrize(
-    "name", ["wood_berry", "heavy_oil_fractionator", "quadruple_tank", "jacketed_reactor"]
+    "path",
+    [
+        *(LIBRARY / f"{name}.toml" for name in ("wood_berry", "heavy_oil_fractionator", "quadruple_tank")),
+        reactor_model_path(),
+    ],
+    ids=lambda path: path.stem,
 )
-def test_published_models_are_sound(name: str) -> None:
-    done = run(str(LIBRARY / f"{name}.toml"), "--json")
+def test_our_models_are_sound(path: Path) -> None:
+    done = run(str(path), "--json")
     assert done.returncode == 0, done.stdout + done.stderr
     document = json.loads(done.stdout)
     assert document["sound"] is True
