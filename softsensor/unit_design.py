@@ -28,7 +28,7 @@ GROSS_REFERENCE = 0.5
 """For a sensor whose tolerance-sized bias the filter absorbs (half the shift below LEAST_REFERENCE): its sums then watch
 for gross steps only, because a more sensitive test would answer to every small misfit of the model."""
 INTERVAL_STEP = 2.0**-12
-"""Decision intervals are rounded up to this: linear algebra may differ in the last bits between machines, results may not."""
+"""Decision intervals are rounded up to this: linear algebra may differ in its last bits between machines, results not."""
 LOOK_EVERY = 6
 LOST_SECONDS, LOST_CYCLES = 300.0, 10
 
