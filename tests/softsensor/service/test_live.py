@@ -3,8 +3,9 @@
 from __future__ import annotations
 
 import asyncio
+import itertools
 import time
-from collections.abc import AsyncIterator, Callable, Iterator
+from collections.abc import AsyncIterator, Callable
 from contextlib import asynccontextmanager
 from dataclasses import dataclass, field
 from typing import Any
@@ -181,9 +182,7 @@ def test_the_plant_away_and_back(at_work: Any, design: UnitDesign) -> None:
 
     steps = asyncio.run(story())
     assert [step.results.first for step in steps] == list(range(len(steps)))
-    assert {
-        int(b.readings.times[0] - a.readings.times[0]) for a, b in zip(steps, steps[1:], strict=False)
-    } == {STEP}
+    assert {int(b.readings.times[0] - a.readings.times[0]) for a, b in itertools.pairwise(steps)} == {STEP}
     recorded = digests(at_work.url)
     assert recorded[: len(steps)] == [step.digest.hex() for step in steps]
     assert replayed_digest(design, at_work.url) == recorded[-1]
@@ -234,11 +233,11 @@ def test_a_result_that_a_person_decides_to_use_counts_once_and_is_replayed(
 
 
 @pytest.fixture
-def own_postgres(postgres_server: Any) -> Iterator[tuple[Any, str]]:
+def own_postgres(postgres_server: Any) -> tuple[Any, str]:
     """A server that may be killed, and the address of a database on it."""
     url = postgres_server.url.render_as_string(hide_password=False)
     upgrade_database(url)
-    yield postgres_server, url
+    return postgres_server, url
 
 
 def test_the_database_away_and_back(
