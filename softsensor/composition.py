@@ -151,13 +151,13 @@ def _listening(address: tuple[str, int]) -> socket.socket:
 
 @asynccontextmanager
 async def _page(
-    database: Database, service: LiveService, address: tuple[str, int] | None
+    database: Database, service: LiveService, address: tuple[str, int] | None, speed: float
 ) -> AsyncIterator[str | None]:
     if address is None:
         yield None
         return
     listener = _listening(address)
-    app = create_app(database, service.feed)
+    app = create_app(database, service.feed, speed)
     config = uvicorn.Config(
         app, log_level="warning", access_log=False, lifespan="off", timeout_graceful_shutdown=1
     )
@@ -204,5 +204,6 @@ async def running_site(
         await stack.enter_async_context(source)
         grace = GRACE if settings.clock is None else SIMULATED_GRACE
         service = LiveService(units, source, routes, clock, writer, sinks, grace)
-        page = await stack.enter_async_context(_page(database, service, settings.web))
+        speed = 1.0 if settings.clock is None else settings.clock.speed
+        page = await stack.enter_async_context(_page(database, service, settings.web, speed))
         yield Site(service, page, database)

@@ -32,14 +32,14 @@ TITLES = {
 }
 
 
-def create_app(database: Database, feed: LiveFeed) -> FastAPI:
+def create_app(database: Database, feed: LiveFeed, clock_speed: float = 1.0) -> FastAPI:
     """The page over these records and this feed. Serve it on the loop on which the feed is published to.
 
     It needs no start-up of its own. Before the server shuts down, ``app.state.streams.close()`` on its loop ends the
     live streams, which would go on as long as a page is open. What reads the records runs in the server's thread pool.
     """
     streams = LiveStreams(feed)
-    site = Site(database, streams, ModelsInService(database))
+    site = Site(database, streams, ModelsInService(database), clock_speed)
     pages = Pages(site)
     app = FastAPI(title="softsensor", docs_url=None, redoc_url=None, openapi_url=None)
     app.state.streams = streams

@@ -95,7 +95,7 @@ def page_routes(site: Site, pages: Pages) -> APIRouter:
     def part(name: str, part: str) -> Response:
         if part not in PARTS:
             raise NotHere(f"There is no part {part} of a unit's page. Parts: {', '.join(PARTS)}.")
-        view = UnitView(site.database, site.models, site.unit(name))
+        view = UnitView(site.database, site.models, site.unit(name), site.clock_speed)
         return pages.part(f"part_{part}.html", view=view)
 
     @router.get("/units/{name:path}/flag")
@@ -140,7 +140,7 @@ def page_routes(site: Site, pages: Pages) -> APIRouter:
 
     @router.get("/units/{name:path}")
     def unit_page(request: Request, name: str) -> Response:
-        view = UnitView(site.database, site.models, site.unit(name))
+        view = UnitView(site.database, site.models, site.unit(name), site.clock_speed)
         return pages.page(request, "unit.html", view=view, parts=PARTS)
 
     return router

@@ -217,12 +217,12 @@ def records_state(events: Sequence[StoredEvent]) -> State:
     return State(text, False) if text.startswith("waiting") else State("up to date", True)
 
 
-def progress_state(spec: UnitSpec, cycle_us: int | None, plant_us: int) -> State:
-    """Whether cycles keep up with the plant's clock."""
+def progress_state(spec: UnitSpec, cycle_us: int | None, plant_us: int, speed: float = 1.0) -> State:
+    """Whether cycles keep up with the plant's clock, which runs ``speed`` times as fast as the wall's."""
     if cycle_us is None:
         return State("no cycle has run yet", False)
     behind = (plant_us - cycle_us) * 1e-6
-    if behind > max(LATE_CYCLES * spec.sample_time, LATE_SECONDS):
+    if behind > max(LATE_CYCLES * spec.sample_time, LATE_SECONDS) * max(speed / LATE_CYCLES, 1.0):
         return State(f"late: the newest cycle is {duration(behind)} old", False)
     return State("on time", True)
 

@@ -35,6 +35,7 @@ class Site:
     database: Database
     streams: LiveStreams
     models: ModelsInService
+    clock_speed: float = 1.0
     guard: FormGuard = field(default_factory=FormGuard)
 
     def unit(self, name: str) -> Unit:

@@ -38,8 +38,11 @@ class UnitView:
     Each piece raises Problem where the records cannot be read or hold no sound model of the unit.
     """
 
-    def __init__(self, database: Database, models: ModelsInService, unit: Unit) -> None:
+    def __init__(
+        self, database: Database, models: ModelsInService, unit: Unit, clock_speed: float = 1.0
+    ) -> None:
         self._database = database
+        self._clock_speed = clock_speed
         self._models = models
         self.unit = unit
 
@@ -69,7 +72,7 @@ class UnitView:
     @cached_property
     def progress(self) -> State:
         """Whether cycles keep up."""
-        return progress_state(self.spec, self.cycle_us, self._database.clock())
+        return progress_state(self.spec, self.cycle_us, self._database.clock(), self._clock_speed)
 
     @cached_property
     def connection(self) -> State:
