@@ -26,12 +26,15 @@ from softsensor.service.replay import Replay, gathered, horizon_of, parts_of
 from softsensor.service.result_tables import (
     ESTIMATE_COLUMNS,
     INNOVATION_COLUMNS,
+    SMOOTHED_COLUMNS,
     estimate_table,
     flag_table,
     innovation_table,
     lab_table,
+    smoothed_table,
 )
 from softsensor.service.resuming import recorded_cycles
+from softsensor.service.smoothed_run import SmoothedRun
 from softsensor.unit_design import design_unit
 
 BLOCK = 8192
@@ -46,6 +49,8 @@ class ReplayResult:
     flags: pd.DataFrame
     lab_results: pd.DataFrame
     summary: dict[str, Any]
+    smoothed: pd.DataFrame | None = None
+    """The estimates once more, each given all readings of the period; None where they were not asked for."""
 
 
 def lab_arrivals(model: PlantModel, lab: LabResults) -> list[LabArrival]:
@@ -85,12 +90,17 @@ def prepare(model: PlantModel, history: History, lab: LabResults | None) -> tupl
 
 
 def replay(
-    model: PlantModel, history: pd.DataFrame, lab: pd.DataFrame | None = None, timezone: str | None = None
+    model: PlantModel,
+    history: pd.DataFrame,
+    lab: pd.DataFrame | None = None,
+    timezone: str | None = None,
+    smooth: bool = False,
 ) -> ReplayResult:
     """Run a model over a recorded history held in data frames.
 
     :param history: a ``time`` column and one column per tag; optional ``<tag>.quality`` columns.
     :param lab: columns sampled_at, reported_at, tag, value and, where known, time_uncertainty.
+    :param smooth: smoothed estimates as well.
     :raises ReplayError: no cycle lies within the history.
     :raises HistoryFileError, LabFileError: a frame that cannot be used.
     """
@@ -99,17 +109,24 @@ def replay(
     running, notes = prepare(model, recorded, results)
     running.totals.notes += notes
     estimates, innovations = [], []
-    for stretch in gathered(running.stretches()):
-        estimates.append(estimate_table(running.design, stretch.readings, stretch.results))
-        innovations.append(innovation_table(running.design, stretch.results))
-    if not estimates:
-        raise ReplayError("history: no cycle lies within it; expected at least one row at or after a cycle")
+    with SmoothedRun(running.design) as smoothing:
+        stretches = smoothing.keeping(running.stretches()) if smooth else running.stretches()
+        for stretch in gathered(stretches):
+            estimates.append(estimate_table(running.design, stretch.readings, stretch.results))
+            innovations.append(innovation_table(running.design, stretch.results))
+        if not estimates:
+            raise ReplayError(
+                "history: no cycle lies within it; expected at least one row at or after a cycle"
+            )
+        parts = smoothing.cycles(running) if smooth else iter(())
+        smoothed = [smoothed_table(running.design, part) for part in parts]
     return ReplayResult(
         _joined(estimates, ESTIMATE_COLUMNS),
         _joined(innovations, INNOVATION_COLUMNS),
         flag_table(list(running.totals.flags.values())),
         lab_table(running.totals.labs),
         running.totals.as_dict(running.digest),
+        _joined(smoothed, SMOOTHED_COLUMNS) if smooth else None,
     )
 
 

@@ -15,6 +15,7 @@ if TYPE_CHECKING:
     from plant_models.plant_model import PlantModel
     from softsensor.detection.flags import Note
     from softsensor.service.replay import Replay, Stretch
+    from softsensor.service.smoothed_run import SmoothedRun
 
 
 def replay(
@@ -42,10 +43,15 @@ def replay(
         str | None, typer.Option("--from", help="With a database: first time, ISO 8601; by default all.")
     ] = None,
     end: Annotated[str | None, typer.Option("--to", help="With a database: time after the last.")] = None,
+    smooth: Annotated[
+        bool,
+        typer.Option("--smooth", help="For review: each estimate also given all readings of the period."),
+    ] = False,
     json: Annotated[bool, typer.Option("--json", help="Print one JSON document and nothing else.")] = False,
 ) -> None:
     """Run a model over recorded data and write estimates, innovations, flags and a summary."""
     from softsensor.service.result_files import ResultFiles
+    from softsensor.service.smoothed_run import SmoothedRun
     from softsensor.unit_design import load_model
 
     plant_model = load_model(model)
@@ -58,9 +64,11 @@ def replay(
     else:
         running, notes, cycles = _from_files(plant_model, Path(history), lab, timezone)
     running.totals.notes += notes
-    with ResultFiles(out, format, running.design) as files:
-        for stretch in _with_progress(running, cycles, quiet=json):
+    with ResultFiles(out, format, running.design) as files, SmoothedRun(running.design, out) as smoothing:
+        for stretch in _with_progress(running, cycles, json, smoothing if smooth else None):
             files.add(stretch)
+        for part in smoothing.cycles(running) if smooth else ():
+            files.add_smoothed(part)
         summary = files.finish(running)
     if json:
         typer.echo(json_text.dumps(summary, ensure_ascii=False))
@@ -90,7 +98,9 @@ def _from_database(
     return prepare_from_records(model, url, unit or model.spec.name, start, end)
 
 
-def _with_progress(running: Replay, cycles: int, quiet: bool) -> Iterator[Stretch]:
+def _with_progress(
+    running: Replay, cycles: int, quiet: bool, smoothing: SmoothedRun | None
+) -> Iterator[Stretch]:
     from rich.console import Console
     from rich.progress import Progress
 
@@ -99,7 +109,8 @@ def _with_progress(running: Replay, cycles: int, quiet: bool) -> Iterator[Stretc
     console = Console(stderr=True)
     with Progress(console=console, disable=quiet or not console.is_terminal, transient=True) as progress:
         task = progress.add_task("cycles", total=cycles)
-        for stretch in gathered(running.stretches()):
+        stretches = running.stretches() if smoothing is None else smoothing.keeping(running.stretches())
+        for stretch in gathered(stretches):
             progress.advance(task, len(stretch.results))
             yield stretch
 

@@ -7,7 +7,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from softsensor.cycle import CycleResults, UnitDesign, join_results, start
+from softsensor.cycle import CycleResults, LabAtCycle, UnitDesign, join_results, start
 from softsensor.estimation.lab_results import LabArrival, LabOutcome
 from softsensor.estimation.past import Past
 from softsensor.readings_of_cycle import CycleReadings, join_readings
@@ -46,6 +46,7 @@ class Replay:
         first_cycle: int = 0,
     ) -> None:
         self.design = design
+        self.first_cycle = first_cycle
         self._parts = parts
         cycles = int(np.ceil(max(horizon_s, LEAST_HORIZON_S) / design.model.spec.sample_time)) + 2
         past = Past(cycles, design.kernel.n_estimates)
@@ -63,6 +64,11 @@ class Replay:
                 self.totals.add(results)
                 yield Stretch(slice_readings(part, row, row + len(results)), results, labs)
                 row, labs = row + len(results), ()
+
+    @property
+    def counted_labs(self) -> tuple[LabAtCycle, ...]:
+        """All laboratory results counted so far, in order of their cycles, however long ago."""
+        return tuple(self.run._labs)
 
     @property
     def digest(self) -> str:

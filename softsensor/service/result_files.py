@@ -16,8 +16,15 @@ import pyarrow.parquet as pq
 
 from softsensor.cycle import UnitDesign
 from softsensor.errors import ReplayError
+from softsensor.estimation.smoothing import SmoothedCycles
 from softsensor.service.replay import Replay, Stretch
-from softsensor.service.result_tables import estimate_table, flag_table, innovation_table, lab_table
+from softsensor.service.result_tables import (
+    estimate_table,
+    flag_table,
+    innovation_table,
+    lab_table,
+    smoothed_table,
+)
 
 Format = Literal["csv", "parquet"]
 ROWS = 60_000
@@ -142,6 +149,10 @@ class ResultFiles:
         """Write a stretch of cycles."""
         self._add("estimates", estimate_table(self._design, stretch.readings, stretch.results))
         self._add("innovations", innovation_table(self._design, stretch.results))
+
+    def add_smoothed(self, cycles: SmoothedCycles) -> None:
+        """Write smoothed estimates; they come once all stretches are written."""
+        self._add("smoothed", smoothed_table(self._design, cycles))
 
     def _add(self, name: str, table: pd.DataFrame) -> None:
         if name not in self._files:

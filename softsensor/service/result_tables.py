@@ -10,6 +10,7 @@ import pandas as pd
 from softsensor.cycle import CycleResults, UnitDesign, outside
 from softsensor.detection.flags import Flag
 from softsensor.estimation.lab_results import LabOutcome
+from softsensor.estimation.smoothing import SmoothedCycles
 from softsensor.readings_of_cycle import CycleQuality, CycleReadings
 
 NORMAL_95 = 1.959963984540054
@@ -17,6 +18,7 @@ NORMAL_95 = 1.959963984540054
 STATUS_NAMES = ("Good", "Uncertain", "Bad")
 
 ESTIMATE_COLUMNS = ("time", "tag", "value", "sd", "lower", "upper", "status", "reason")
+SMOOTHED_COLUMNS = ("time", "tag", "value", "sd", "lower", "upper")
 INNOVATION_COLUMNS = (
     "time", "tag", "reading", "predicted", "innovation", "sd", "used", "cusum_high", "cusum_low",
 )  # fmt: skip
@@ -91,6 +93,22 @@ def estimate_table(design: UnitDesign, readings: CycleReadings, results: CycleRe
             "upper": value + NORMAL_95 * sd,
             "status": _words(results.status.ravel(), STATUS_NAMES),
             "reason": reasons(design, readings, results).ravel(),
+        }
+    )
+
+
+def smoothed_table(design: UnitDesign, cycles: SmoothedCycles) -> pd.DataFrame:
+    """One row per cycle and estimate, cycle by cycle: the estimate given all readings of the period."""
+    tags, n = list(design.model.estimate_tags), len(cycles.times)
+    value, sd = cycles.estimate.ravel(), cycles.sd.ravel()
+    return pd.DataFrame(
+        {
+            "time": moments(cycles.times).repeat(len(tags)),
+            "tag": _words(np.tile(np.arange(len(tags)), n), tags),
+            "value": value,
+            "sd": sd,
+            "lower": value - NORMAL_95 * sd,
+            "upper": value + NORMAL_95 * sd,
         }
     )
 
