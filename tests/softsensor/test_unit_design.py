@@ -1,0 +1,72 @@
+"""From a model to what a unit runs on: test settings that keep the promise, limits, and refusals."""
+
+from __future__ import annotations
+
+from pathlib import Path
+
+import numpy as np
+import pytest
+
+import softsensor
+from plant_models.errors import ModelFileError
+from plant_models.library import published_model_path
+from softsensor.detection.run_length import average_run_length
+from softsensor.unit_design import CLIP, design_unit, load_model, steady_shifts
+
+MODELS = ("wood_berry", "quadruple_tank")
+
+
+@pytest.mark.parametrize("name", MODELS)
+def test_decision_intervals_keep_the_promised_run_length(name: str) -> None:
+    """At least the promise, and within a thousandth of it: intervals are rounded up a little."""
+    model = load_model(published_model_path(name))
+    design = design_unit(model)
+    promised = model.spec.false_flag_interval / model.spec.sample_time
+    for k, h in zip(design.detection.tests.reference, design.detection.tests.interval, strict=True):
+        achieved = average_run_length(float(k), float(h), 0.0, clip=CLIP)
+        assert promised * (1.0 - 1e-9) <= achieved <= promised * 1.002
+
+
+@pytest.mark.parametrize("name", MODELS)
+def test_reference_values_are_half_the_shift_that_really_remains(name: str) -> None:
+    model = load_model(published_model_path(name))
+    design = design_unit(model)
+    shifts = steady_shifts(model, design.kernel)
+    for shift, k in zip(shifts, design.detection.tests.reference, strict=True):
+        half = 0.5 * shift
+        assert k == (0.5 if half < 0.125 else min(half, 1.0))
+
+
+def test_readings_beyond_the_failure_limits_are_none() -> None:
+    """3.6 mA and 21 mA of 4 to 20 mA (NAMUR NE 43, MEMORY): 2.5 % below and 6.25 % above the range."""
+    model = load_model(published_model_path("quadruple_tank"))
+    low, high = design_unit(model).limits
+    for i, sensor in enumerate(model.spec.sensors):
+        bottom, top = sensor.range
+        milliampere = (top - bottom) / 16.0
+        assert np.isclose(low[i], bottom - 0.4 * milliampere, rtol=1e-12)
+        assert np.isclose(high[i], top + 1.0 * milliampere, rtol=1e-12)
+
+
+def test_designs_of_one_model_are_the_same_bit_for_bit() -> None:
+    model = load_model(published_model_path("wood_berry"))
+    one, other = design_unit(model), design_unit(model)
+    for a, b in zip(one.detection.tests, other.detection.tests, strict=True):
+        assert np.asarray(a).tobytes() == np.asarray(b).tobytes()
+    assert one.model.digest == load_model(published_model_path("wood_berry")).digest
+
+
+def test_the_public_function_refuses_with_every_fault(tmp_path: Path) -> None:
+    path = tmp_path / "bad.toml"
+    path.write_text('[unit]\nname = "X"\ntitle = 3\nsample_time = "10"\n')
+    with pytest.raises(ModelFileError) as refused:
+        softsensor.load_model(path)
+    keys = {fault.key for fault in refused.value.faults}
+    assert {"title", "sample_time"} <= keys
+    with pytest.raises(ModelFileError):
+        softsensor.load_model(tmp_path / "none.toml")
+
+
+def test_the_package_has_no_other_public_name() -> None:
+    with pytest.raises(AttributeError, match="nonsense"):
+        softsensor.nonsense  # noqa: B018
