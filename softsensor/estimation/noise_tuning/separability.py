@@ -1,0 +1,72 @@
+"""Can the data tell the parameters of a fit apart? What they cannot is refused, by name."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from softsensor.estimation.kernel import Floats
+from softsensor.estimation.noise_tuning.maximum_likelihood import Maximum
+
+NORMAL_95 = 1.959963984540054
+LARGEST_SD = 0.5
+"""Of a parameter's logarithm: its 95 % interval then reaches a factor of 2.7 to either side."""
+LARGEST_CORRELATION = 0.99
+UNKNOWN_DIRECTION = 3.0
+"""Standard deviation of a combination of logarithms from which on the information counts as singular."""
+SHARE = 0.3
+"""Smallest component by which a parameter belongs to such a combination."""
+
+
+@dataclass(frozen=True)
+class Certainty:
+    """Standard errors of the logarithms (p,), nan where unknown; and why the data do not tell, a line each."""
+
+    log_sd: Floats
+    objections: tuple[str, ...]
+
+
+def interval(value: float, log_sd: float) -> tuple[float, float]:
+    """95 % interval of a parameter from the standard error of its logarithm."""
+    factor = float(np.exp(NORMAL_95 * log_sd))
+    return value / factor, value * factor
+
+
+def certainty(fit: Maximum) -> Certainty:
+    """Standard errors from the observed information, and what stands against the fit.
+
+    Singular information: the parameters of each combination that the readings say nothing about. Otherwise parameters
+    with a standard error above LARGEST_SD, and pairs correlated beyond LARGEST_CORRELATION.
+    """
+    names = [item.name for item in fit.parameters]
+    found = [
+        f"{name}: runs to the end of the range searched"
+        for name, at in zip(names, fit.at_limit, strict=True)
+        if at
+    ]
+    if not fit.converged:
+        found.append("the likelihood has no maximum that was found within the steps allowed")
+    values, vectors = np.linalg.eigh(fit.information)
+    unknown = values < 1.0 / UNKNOWN_DIRECTION**2
+    if unknown.any():
+        for vector in vectors.T[unknown]:
+            found.append(_cannot_tell([names[j] for j in np.flatnonzero(np.abs(vector) >= SHARE)]))
+        return Certainty(np.full(len(names), np.nan), tuple(dict.fromkeys(found)))
+    covariance = (vectors / values) @ vectors.T
+    log_sd = np.sqrt(np.diag(covariance))
+    correlation = covariance / np.outer(log_sd, log_sd)
+    for j, name in enumerate(names):
+        if log_sd[j] > LARGEST_SD:
+            low, high = interval(1.0, float(log_sd[j]))
+            found.append(f"{name}: known only within factors of {low:.2g} to {high:.2g}")
+        for other in range(j):
+            if abs(correlation[j, other]) > LARGEST_CORRELATION:
+                found.append(_cannot_tell([names[other], name]))
+    return Certainty(log_sd, tuple(dict.fromkeys(found)))
+
+
+def _cannot_tell(names: list[str]) -> str:
+    if len(names) == 1:
+        return f"{names[0]}: the readings say nothing about it"
+    return f"{', '.join(names[:-1])} and {names[-1]}: the readings cannot tell them apart"
