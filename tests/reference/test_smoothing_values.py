@@ -201,6 +201,14 @@ def test_a_level_that_cannot_move_is_the_weighted_mean_of_all_there_is() -> None
     assert run.times[0] == START
 
 
+def test_far_from_both_ends_a_walk_has_the_variance_of_wieners_smoother() -> None:
+    """Closed form: the mean over frequency of q r / (q + 2 r (1 - cos w)) is q r / sqrt(q^2 + 4 q r)."""
+    q, r = 1469.1, 15099.0
+    _, variance = nile_level(np.random.default_rng(3).normal(0.0, 100.0, 20_000))
+    expected = q * r / np.sqrt(q * q + 4.0 * q * r)
+    np.testing.assert_allclose(variance[300:-300], expected, rtol=1e-10)
+
+
 def test_a_late_result_changes_the_cycles_before_it_too() -> None:
     """One laboratory result at cycle 70: what was estimated before it moves, by as much as conditioning says."""
     spec = random_unit(6)
