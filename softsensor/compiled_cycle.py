@@ -20,7 +20,8 @@ class BlockInputs(NamedTuple):
     """N cycles as the loop takes them.
 
     u (N, n_inputs) finite; y (N, n_sensors), nan where missing; scale (N, n_sensors): factor on the noise variance;
-    use (N, n_sensors): 0 keeps a reading from the estimate; fresh (n_sensors,) and doubtful (N,): see :func:`test_cycle`;
+    use (N, n_sensors): 0 keeps a reading from the estimate; fresh (n_sensors,), doubtful and quiet (N,): see
+    :func:`test_cycle`;
     lab_at: cycle within the block, ascending; lab_row: output row; lab_value in engineering units; lab_variance.
     """
 
@@ -30,6 +31,7 @@ class BlockInputs(NamedTuple):
     use: Ints
     fresh: Ints
     doubtful: Ints
+    quiet: Ints
     lab_at: Ints
     lab_row: Ints
     lab_value: Floats
@@ -167,6 +169,7 @@ def run_block(
                 data.y[k],
                 data.fresh,
                 data.doubtful[k],
+                data.quiet[k],
                 out.innovation[k],
                 out.innovation_sd[k],
                 out.events[k],

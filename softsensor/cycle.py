@@ -20,6 +20,7 @@ from softsensor.compiled_cycle import BlockInputs, BlockOutputs, empty_outputs, 
 from softsensor.detection.fault_tests import TestState, initial_tests
 from softsensor.detection.flags import Flag, FlagBook, Note
 from softsensor.detection.follow_up import DetectionDesign, FollowUp, Moment, follow_up
+from softsensor.detection.people import Decision, Taken, ended, next_end, take
 from softsensor.estimation.kernel import EstimatorState, Floats, Ints, Kernel, initial_state
 from softsensor.readings_of_cycle import CycleQuality, CycleReadings
 
@@ -199,6 +200,7 @@ def block_inputs(
         in_use(book, first, len(readings), design.kernel.n_sensors),
         design.fresh,
         np.any(readings.u_quality > CycleQuality.UNCERTAIN, axis=1).astype(np.int64),
+        np.array([book.resting(first + k) for k in range(len(readings))], dtype=np.int64),
         np.array([lab.cycle - first for lab in labs], dtype=np.int64),
         np.array([design.kernel.n_sensors + lab.estimate for lab in labs], dtype=np.int64),
         np.array([lab.value for lab in labs], dtype=np.float64),
@@ -209,35 +211,51 @@ def block_inputs(
 def run_cycles(
     design: UnitDesign, state: CycleState, readings: CycleReadings, labs: tuple[LabAtCycle, ...] = ()
 ) -> tuple[CycleState, CycleResults]:
-    """Run cycles up to the end of ``readings`` or to the first one at which a test has news, that one included.
+    """Run cycles up to the end of ``readings``, to the first one at which a test has news, that one included, or to
+    the last one before something that a person decided ends.
 
     :param readings: every input finite; row 0 is cycle ``state.next_cycle``.
     :param labs: results that count within these cycles, in order of cycle.
     :raises UnsoundArithmetic: a variance is not positive.
     """
-    first, n = state.next_cycle, len(readings)
+    first, n = state.next_cycle, min(len(readings), next_end(state.book, state.next_cycle))
     estimator, tests = state.estimator.copy(), state.tests.copy()
-    data = block_inputs(design, state.book, first, readings, labs)
+    begun = ended(design.detection, state.book, tests, first, int(readings.times[0]))
+    data = block_inputs(design, begun.book, first, readings, labs)
+    data = data._replace(u=data.u[:n])
     out = empty_outputs(n, design.kernel, len(labs))
     done = run_block(design.kernel, estimator, design.detection.tests, tests, data, out, True)
     if done < 0:
         raise UnsoundArithmetic(
             f"{design.model.spec.name}: an innovation's variance is not positive near cycle {first}"
         )
-    outcome = FollowUp(state.book)
+    outcome = FollowUp(begun.book)
     if done and out.news[done - 1]:
         time, news = int(readings.times[done - 1]), int(out.news[done - 1])
         moment = Moment(first + done - 1, time, out.events[done - 1], news)
-        outcome = follow_up(design.detection, state.book, tests, moment)
-    results = _results(design, state.book, first, done, readings, data, out)
+        outcome = follow_up(design.detection, begun.book, tests, moment)
+    results = _results(design, begun.book, first, done, readings, data, out)
     results = replace(
         results,
         flags=outcome.changes,
-        notes=outcome.notes,
+        notes=begun.notes + outcome.notes,
         rewind=outcome if outcome.exclusion is not None else None,
     )
     digest = state.digest.add(result_rows(results))
     return CycleState(estimator, tests, outcome.book, digest), results
+
+
+def decide(
+    design: UnitDesign, state: CycleState, decisions: Sequence[Decision], time: int
+) -> tuple[CycleState, FollowUp, tuple[Taken, ...]]:
+    """What people have decided takes effect at the coming cycle, at ``time``: the state, what to tell, what became of it."""
+    outcome, taken, digest = FollowUp(state.book), [], state.digest
+    for decision in decisions:
+        outcome, one = take(design.detection, outcome, state.next_cycle, time, decision)
+        digest = digest.mix(one.as_bytes())
+        taken.append(one)
+    digest = digest.mix(b"".join(_flag_bytes(flag) for flag in outcome.changes))
+    return replace(state, book=outcome.book, digest=digest), outcome, tuple(taken)
 
 
 def rerun(

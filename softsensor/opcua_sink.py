@@ -48,8 +48,9 @@ class OpcUaSink:
                 now,
                 STATUS_CODES[int(results.status[0, e])],
             )
-        for tag in unit.model.sensor_tags:
-            health = DeviceHealth(sensor_health(unit.run.state.book, tag).code)
+        book = unit.run.state.book
+        for i, tag in enumerate(unit.model.sensor_tags):
+            health = DeviceHealth(sensor_health(book, tag, book.worked_on(i, results.first)).code)
             await self._publisher.publish_sensor_health(unit.name, tag, health, now)
         for flag in results.flags:
             if flag.cleared is None:

@@ -48,7 +48,8 @@ SEVERITY = (
 """From least to most severe, as in the device manuals quoted for NE 107 (edition 2006-06-12)."""
 
 
-def sensor_health(book: FlagBook, tag: str) -> SensorStatus:
-    """The most severe status that the open flags give a sensor."""
+def sensor_health(book: FlagBook, tag: str, worked_on: bool = False) -> SensorStatus:
+    """The most severe status that the open flags give a sensor; function check where a person has left it out."""
     found = [status_of(flag.kind, flag.probability, flag.isolated) for flag in book.open if flag.tag == tag]
+    found += [SensorStatus.FUNCTION_CHECK] if worked_on else []
     return max(found, key=SEVERITY.index, default=SensorStatus.NORMAL)

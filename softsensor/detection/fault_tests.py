@@ -218,6 +218,7 @@ def test_cycle(
     y: Floats,
     fresh: Ints,
     doubtful: int,
+    quiet: int,
     innovation: Floats,
     sd: Floats,
     events: Ints,
@@ -225,10 +226,11 @@ def test_cycle(
     """Run all tests on one cycle's innovations; events (n_sensors,) gets the bits, the return value their union.
 
     ``fresh`` is 0 for a value that the assembly repeated (reported on change): it is no evidence of being stuck.
-    ``doubtful`` is 1 where an input is missing or too old.
+    ``doubtful`` is 1 where an input is missing or too old. ``quiet`` is 1 where a person has let the tests rest: only
+    lost sensors are looked for.
     """
     union = _settle(state, doubtful)
-    resting = state.cycle[0] < state.settling_until[0]
+    resting = quiet != 0 or state.cycle[0] < state.settling_until[0]
     slot = state.cycle[0] % state.ring.shape[0]
     for i in range(len(y)):
         missing = y[i] != y[i]
@@ -240,7 +242,7 @@ def test_cycle(
             z = innovation[i] / sd[i]
             code |= _test_shift(design, state, i, z)
             code |= _test_spike(design, state, i, z)
-        if not missing and fresh[i] != 0:
+        if quiet == 0 and not missing and fresh[i] != 0:
             code |= _test_stuck(design, state, i, y[i])
         events[i] = code
         union |= code

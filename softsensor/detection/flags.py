@@ -45,6 +45,8 @@ class Exclusion:
     sensor: int
     since: int
     until: int | None = None
+    by_person: bool = False
+    """Left out for work on it: its readings mean nothing, and no flag is opened on it."""
 
     def covers(self, cycle: int) -> bool:
         """Is the sensor kept out at this cycle?"""
@@ -59,6 +61,14 @@ class Episode:
     """Cycle at which the first test went up."""
     noted: bool = False
     """The cause is on record as no fault of an instrument."""
+
+
+@dataclass(frozen=True, slots=True)
+class Rest:
+    """A person's word that the plant is not as the model knows it: no tests of innovations before cycle ``until``."""
+
+    until: int
+    occasion: str
 
 
 @dataclass(frozen=True, slots=True)
@@ -77,6 +87,7 @@ class FlagBook:
     open: tuple[Flag, ...] = ()
     episode: Episode | None = None
     exclusions: tuple[Exclusion, ...] = ()
+    rest: Rest | None = None
 
     def find(self, tag: str, kinds: tuple[Kind, ...]) -> Flag | None:
         """The open flag of a tag, of one of these kinds."""
@@ -85,6 +96,14 @@ class FlagBook:
     def excluded(self, sensor: int, cycle: int) -> bool:
         """Is a sensor kept from the estimate at a cycle?"""
         return any(item.sensor == sensor and item.covers(cycle) for item in self.exclusions)
+
+    def worked_on(self, sensor: int, cycle: int) -> bool:
+        """Has a person left the sensor out at a cycle?"""
+        return any(item.sensor == sensor and item.by_person and item.covers(cycle) for item in self.exclusions)
+
+    def resting(self, cycle: int) -> bool:
+        """Do the unit's tests rest at a cycle because a person said so?"""
+        return self.rest is not None and cycle < self.rest.until
 
 
 def flag_name(unit: str, tag: str, kind: Kind, detected: int) -> str:

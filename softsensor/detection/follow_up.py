@@ -82,7 +82,8 @@ def follow_up(design: DetectionDesign, book: FlagBook, tests: TestState, moment:
     outcome = _say_settling(FollowUp(book), moment)
     for sensor in range(design.kernel.n_sensors):
         outcome = _simple_faults(design, outcome, tests, moment, sensor)
-    outcome = _clear_shifts(design, outcome, tests, moment)
+    if not book.resting(moment.cycle):
+        outcome = _clear_shifts(design, outcome, tests, moment)
     if design.armed:
         outcome = _diagnose(design, outcome, tests, moment)
     tests.watch[0] = int(bool(outcome.book.open) or outcome.book.episode is not None)
@@ -130,8 +131,9 @@ def _simple_faults(
         (fault_tests.SPIKE, "spike", 1),
     )
     shifted = outcome.book.find(tag, SHIFT_KINDS) is not None
+    worked_on = outcome.book.worked_on(sensor, moment.cycle)
     for bit, kind, ago in starts:
-        if kind == "spike" and shifted:
+        if worked_on or (kind == "spike" and shifted):
             continue
         if bits & bit and outcome.book.find(tag, (kind,)) is None:
             onset = moment.time - ago * design.sample_us
@@ -157,6 +159,8 @@ def _clear_shifts(design: DetectionDesign, outcome: FollowUp, tests: TestState, 
     tags = [item.tag for item in design.model.spec.sensors]
     for flag in outcome.book.open:
         if flag.kind not in SHIFT_KINDS or flag.detected == moment.time:
+            continue
+        if flag.tag in tags and outcome.book.worked_on(tags.index(flag.tag), moment.cycle):
             continue
         own = slice(tags.index(flag.tag), tags.index(flag.tag) + 1) if flag.tag in tags else slice(None)
         since = max(

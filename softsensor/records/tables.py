@@ -11,6 +11,7 @@ from __future__ import annotations
 
 from sqlalchemy import (
     BigInteger,
+    Boolean,
     CheckConstraint,
     Column,
     Double,
@@ -43,6 +44,7 @@ REVISION_STATES = ("draft", "in parallel run", "in service", "withdrawn")
 LAB_STATES = ("used", "left out", "waiting for a person")
 FINDINGS = ("confirmed", "not confirmed", "process change", "undecided")
 FLAG_STATES = ("open", "cleared")
+ACTS = ("put back", "leave out", "rest", "go on")
 
 
 def one_of(column: str, words: tuple[str, ...]) -> CheckConstraint:
@@ -218,6 +220,39 @@ lab_results = Table(
     Column("decided_by", Text),
     one_of("status", LAB_STATES),
     UniqueConstraint("unit_id", "tag", "sampled_us", "reported_us", "value"),
+)
+
+decisions = Table(
+    "decisions",
+    metadata,
+    Column("id", Identity, primary_key=True, autoincrement=True),
+    Column("unit_id", BigInteger, ForeignKey("units.id"), nullable=False),
+    Column("act", Text, nullable=False),
+    Column("tag", Text),
+    Column("flag_id", Text, ForeignKey("flags.id"), index=True),
+    Column("occasion", Text),
+    Column("seconds", Double),
+    Column("actor", Text, nullable=False),
+    Column("reason", Text, nullable=False),
+    Column("decided_us", BigInteger, nullable=False),
+    Column("taken_cycle", BigInteger),
+    Column("taken_us", BigInteger),
+    Column("until_us", BigInteger),
+    Column("refusal", Text),
+    one_of("act", ACTS),
+    Index(None, "unit_id", "taken_us"),
+    comment="what people decided; the last four columns are empty until a cycle has taken it",
+)
+
+left_out = Table(
+    "left_out",
+    metadata,
+    Column("unit_id", BigInteger, ForeignKey("units.id"), primary_key=True),
+    Column("tag", Text, primary_key=True),
+    Column("since_us", BigInteger, primary_key=True, autoincrement=False),
+    Column("by_person", Boolean, primary_key=True),
+    Column("until_us", BigInteger),
+    comment="when each sensor was kept from the estimate",
 )
 
 audit_trail = Table(

@@ -172,13 +172,16 @@ class LiveService:
             await asyncio.sleep(0.5)
 
     async def _watch_decisions(self, unit: UnitService) -> None:
-        """A laboratory result that a person has decided to use arrives once more; once the database can be asked."""
+        """What people decide reaches the unit: laboratory results to use, sensors, tests; once the database can be asked."""
         taken: set[int] = set()
         while True:
             try:
                 rows = await asyncio.to_thread(unit.decided_labs)
+                decisions = await asyncio.to_thread(unit.waiting_decisions)
             except DatabaseAwayError:  # said by _watch_records
-                rows = []
+                rows, decisions = [], []
+            for decision in decisions:
+                unit.take(decision)
             for row, arrival in rows:
                 if row not in taken:
                     taken.add(row)

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -10,13 +11,15 @@ from sqlalchemy import Connection
 
 from plant_models.plant_model import PlantModel
 from softsensor.cycle import CycleResults, UnitDesign
-from softsensor.detection.flags import Flag, Note
+from softsensor.detection.flags import Exclusion, Flag, Note
+from softsensor.detection.people import Decision, Taken
 from softsensor.estimation.lab_results import LabArrival, LabOutcome
 from softsensor.estimation.past import Revision
 from softsensor.readings_of_cycle import CycleReadings
-from softsensor.records import blocks, happenings, storing
+from softsensor.records import blocks, decisions, happenings, storing
 from softsensor.service.checkpoints import FORMAT, pack_estimator
 from softsensor.service.result_tables import reasons
+from softsensor.service.unit_run import Came
 
 
 @dataclass(frozen=True)
@@ -30,27 +33,39 @@ class Step:
     revisions: tuple[Revision, ...]
     checkpoint: bytes | None
     """The state before the coming cycle, where it is to be kept."""
+    taken: tuple[Taken, ...] = ()
+    exclusions: tuple[Exclusion, ...] = ()
+    """All sensors left out so far, where that has changed."""
 
 
-def pack_decisions(arrivals: list[LabArrival]) -> bytes:
-    """What was decided before a cycle ran besides its readings: the laboratory results that arrived; empty for none."""
-    if not arrivals:
-        return b""
-    rows = [
+def pack_decisions(came: Sequence[Came]) -> bytes:
+    """What came before a cycle besides its readings: laboratory results, what people decided; empty for none."""
+    labs = [
         [a.estimate, a.tag, a.sampled, a.reported, a.value.hex(), a.time_uncertainty, a.decided_at]
-        for a in arrivals
+        for a in came
+        if isinstance(a, LabArrival)
     ]
-    return json.dumps({"laboratory": rows}, separators=(",", ":")).encode()
+    people = [
+        [d.number, d.act, d.tag, d.flag, d.occasion, float(d.seconds).hex(), d.actor, d.reason]
+        for d in came
+        if isinstance(d, Decision)
+    ]
+    content = ({"laboratory": labs} if labs else {}) | ({"people": people} if people else {})
+    return json.dumps(content, separators=(",", ":")).encode() if content else b""
 
 
-def unpack_decisions(blob: bytes) -> list[LabArrival]:
-    """The laboratory results that arrived before a recorded cycle."""
+def unpack_decisions(blob: bytes) -> list[Came]:
+    """What came before a recorded cycle."""
     if not blob:
         return []
-    return [
+    content = json.loads(blob)
+    found: list[Came] = [
         LabArrival(e, tag, sampled, reported, float.fromhex(value), uncertainty, decided)
-        for e, tag, sampled, reported, value, uncertainty, decided in json.loads(blob)["laboratory"]
+        for e, tag, sampled, reported, value, uncertainty, decided in content.get("laboratory", ())
     ]
+    for number, act, tag, flag, occasion, seconds, actor, reason in content.get("people", ()):
+        found.append(Decision(number, act, tag, flag, occasion, float.fromhex(seconds), actor, reason))
+    return found
 
 
 def results_block(design: UnitDesign, step: Step) -> blocks.ResultsBlock:
@@ -81,21 +96,43 @@ def write_step(connection: Connection, unit_id: int, design: UnitDesign, step: S
     """Results, flags, laboratory outcomes, revised estimates and states of one cycle; may be repeated."""
     storing.store_results(connection, unit_id, results_block(design, step))
     cycle = step.results.first
+    answers = {item.decision.tag: item.decision for item in step.taken if item.decision.act == "put back"}
     for flag in step.results.flags:
-        _write_flag(connection, unit_id, flag)
+        _write_flag(connection, unit_id, flag, answers.get(flag.tag))
     for number, note in enumerate(step.results.notes):
         _write_note(connection, unit_id, note, f"{unit_id} {cycle} {number} {note.kind}")
     for outcome in step.labs:
         _write_lab(connection, unit_id, outcome)
     for revision in step.revisions:
         _write_revision(connection, unit_id, revision, cycle)
+    for taken in step.taken:
+        until = taken.until
+        decisions.settle_decision(
+            connection, taken.decision.number, decisions.Outcome(cycle, taken.time, until, taken.refusal)
+        )
+    _write_left_out(connection, unit_id, design, step)
     if step.checkpoint is not None:
         storing.store_checkpoint(connection, unit_id, blocks.Checkpoint(cycle + 1, FORMAT, step.checkpoint))
 
 
-def _write_flag(connection: Connection, unit_id: int, flag: Flag) -> None:
+def _write_left_out(connection: Connection, unit_id: int, design: UnitDesign, step: Step) -> None:
+    now, sample_us = int(step.results.times[0]), design.detection.sample_us
+    rows = [
+        decisions.LeftOut(
+            design.model.spec.sensors[item.sensor].tag,
+            now + (item.since - step.results.first) * sample_us,
+            None if item.until is None else now + (item.until - step.results.first) * sample_us,
+            item.by_person,
+        )
+        for item in step.exclusions
+    ]
+    decisions.store_left_out(connection, unit_id, rows)
+
+
+def _write_flag(connection: Connection, unit_id: int, flag: Flag, answer: Decision | None) -> None:
     if flag.cleared is not None:
-        happenings.clear_flag(connection, flag.flag, flag.cleared, "its test has come down")
+        reason = "its test has come down" if answer is None else f"put back by {answer.actor}"
+        happenings.clear_flag(connection, flag.flag, flag.cleared, reason)
         return
     row = happenings.Flag(
         flag.flag,

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Iterator
+from collections.abc import Iterable, Iterator, Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -12,13 +12,13 @@ from softsensor.estimation.lab_results import LabArrival, LabOutcome
 from softsensor.estimation.past import Past
 from softsensor.readings_of_cycle import CycleReadings, join_readings
 from softsensor.service.summary import RunSummary
-from softsensor.service.unit_run import UnitRun, slice_readings
+from softsensor.service.unit_run import Came, UnitRun, slice_readings
 
 LEAST_HORIZON_S = 7 * 86400.0
 """Late results are taken up to this age at least; a replay looks as far back as its latest result needs."""
 
 
-Part = tuple[CycleReadings, list[LabArrival]]
+Part = tuple[CycleReadings, Sequence[Came]]
 
 
 @dataclass(frozen=True)
@@ -33,7 +33,7 @@ class Stretch:
 class Replay:
     """A replay under way: iterate over :meth:`stretches`, then ask for the summary.
 
-    :param parts: consecutive cycles, each part with the laboratory results that arrive at its first cycle.
+    :param parts: consecutive cycles, each part with what comes before its first cycle: laboratory results, decisions.
     :param horizon_s: how far back, in seconds, a late result may reach.
     :param first_cycle: the number of the first cycle, a multiple of the checkpoint interval.
     """
@@ -56,8 +56,8 @@ class Replay:
 
     def stretches(self) -> Iterator[Stretch]:
         """Run all cycles, a stretch at a time."""
-        for part, arrivals in self._parts:
-            advance = self.run.advance(part, arrivals)
+        for part, came in self._parts:
+            advance = self.run.advance(part, came)
             self.totals.labs += advance.labs
             row, labs = 0, advance.labs
             for results in advance.results:

@@ -8,14 +8,13 @@ from dataclasses import dataclass
 
 from softsensor.cycle import UnitDesign, start
 from softsensor.errors import RecordsError
-from softsensor.estimation.lab_results import LabArrival
 from softsensor.estimation.past import CHUNK, Past
 from softsensor.readings_of_cycle import CycleReadings
 from softsensor.records import series
 from softsensor.records.engine import Database
 from softsensor.service.checkpoints import unpack_estimator, unpack_state
 from softsensor.service.recording import unpack_decisions
-from softsensor.service.unit_run import UnitRun, slice_readings
+from softsensor.service.unit_run import Came, UnitRun, slice_readings
 
 
 @dataclass(frozen=True)
@@ -92,11 +91,10 @@ def _refill_chunk(past: Past, database: Database, unit_id: int, cycle: int, stop
 
 def recorded_cycles(
     database: Database, unit_id: int, first: int, last: int
-) -> Iterator[tuple[CycleReadings, list[LabArrival]]]:
-    """Recorded cycles as they ran: stretches that begin where laboratory results arrived."""
+) -> Iterator[tuple[CycleReadings, list[Came]]]:
+    """Recorded cycles as they ran: stretches that begin where laboratory results or people's decisions came."""
     for block in series.readings(database, unit_id, first, last):
         starts = [k for k, blob in enumerate(block.decisions) if blob]
         cuts = sorted({0, *starts, len(block)})
         for begin, end in itertools.pairwise(cuts):
-            arrivals = unpack_decisions(block.decisions[begin])
-            yield slice_readings(block.readings, begin, end), arrivals
+            yield slice_readings(block.readings, begin, end), unpack_decisions(block.decisions[begin])

@@ -15,9 +15,11 @@ from softsensor.cycle import (
     CycleState,
     LabAtCycle,
     UnitDesign,
+    decide,
     rerun,
     run_cycles,
 )
+from softsensor.detection.people import Decision, Taken
 from softsensor.estimation.kernel import EstimatorState, Floats
 from softsensor.estimation.lab_results import (
     IMPOSSIBLE,
@@ -34,11 +36,18 @@ from softsensor.readings_of_cycle import CycleReadings
 
 @dataclass(frozen=True)
 class Advance:
-    """What a stretch of cycles brought, in order: results, what became of laboratory results, what was revised."""
+    """What a stretch of cycles brought, in order: results, what became of laboratory results and of people's decisions,
+    what was revised.
+    """
 
     results: tuple[CycleResults, ...]
     labs: tuple[LabOutcome, ...] = ()
     revisions: tuple[Revision, ...] = ()
+    taken: tuple[Taken, ...] = ()
+
+
+Came = LabArrival | Decision
+"""What may come before a cycle besides its readings."""
 
 
 def slice_readings(readings: CycleReadings, start: int, stop: int) -> CycleReadings:
@@ -79,8 +88,11 @@ class UnitRun:
         """Has every input had a value, so that the first cycle has run?"""
         return self.first_time is not None
 
-    def advance(self, readings: CycleReadings, arrivals: Iterable[LabArrival] = ()) -> Advance:
-        """Run these cycles; ``arrivals`` are the laboratory results that arrived by the first of them."""
+    def advance(self, readings: CycleReadings, came: Iterable[Came] = ()) -> Advance:
+        """Run these cycles; laboratory results and people's decisions came before the first of them."""
+        all_came = list(came)
+        arrivals = [item for item in all_came if isinstance(item, LabArrival)]
+        decisions = [item for item in all_came if isinstance(item, Decision)]
         waiting = 0 if self.started else self._rows_to_wait(readings)
         results = [_waiting_results(self.design, slice_readings(readings, 0, waiting))] if waiting else []
         if waiting == len(readings):
@@ -88,6 +100,8 @@ class UnitRun:
             return Advance(tuple(results), tuple(early))
         if self.first_time is None:
             self.first_time = int(readings.times[waiting]) - self.state.next_cycle * self._sample_us
+        now = int(readings.times[waiting])
+        self.state, told, taken = decide(self.design, self.state, decisions, now)
         outcomes: list[LabOutcome] = []
         revisions: list[Revision] = []
         for arrival in sorted(arrivals, key=lambda item: (item.sampled, item.reported, item.tag, item.value)):
@@ -98,10 +112,13 @@ class UnitRun:
         while row < len(readings):
             part = slice_readings(readings, row, min(row + self.past.room(), len(readings)))
             result, revision = self._run(part)
+            if row == waiting:
+                flags, notes = told.changes + result.flags, told.notes + result.notes
+                result = replace(result, flags=flags, notes=notes)
             results.append(result)
             revisions += [revision] if revision is not None else []
             row += len(result)
-        return Advance(tuple(results), tuple(outcomes), tuple(revisions))
+        return Advance(tuple(results), tuple(outcomes), tuple(revisions), taken)
 
     @property
     def labs(self) -> tuple[LabAtCycle, ...]:
@@ -229,4 +246,4 @@ def _waiting_results(design: UnitDesign, readings: CycleReadings) -> CycleResult
     )
 
 
-__all__ = ["CHUNK", "Advance", "UnitRun", "slice_readings"]
+__all__ = ["CHUNK", "Advance", "Came", "UnitRun", "slice_readings"]

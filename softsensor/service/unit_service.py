@@ -11,10 +11,12 @@ from connectors.readings import Quality, Reading
 from plant_models.plant_model import PlantModel
 from plant_models.specification import UnitSpec
 from softsensor.cycle import UnitDesign
+from softsensor.detection.people import ACTS, Decision
 from softsensor.estimation.lab_results import LabArrival
 from softsensor.estimation.past import CHUNK
 from softsensor.readings_of_cycle import CycleQuality, CycleReadings
 from softsensor.records import blocks, storing
+from softsensor.records.decisions import waiting_decisions
 from softsensor.records.engine import Database
 from softsensor.records.reader import lab_results_of
 from softsensor.records.writer import RecordsWriter, WriterState
@@ -25,7 +27,7 @@ from softsensor.service.recording import Step, pack_decisions, write_step
 from softsensor.service.replay import LEAST_HORIZON_S
 from softsensor.service.resuming import LastSeen, fresh_run, last_seen, recorded_cycles, resumed_run
 from softsensor.service.sample_grid import first_cycle_time
-from softsensor.service.unit_run import slice_readings
+from softsensor.service.unit_run import Came, slice_readings
 
 COMMIT_PATIENCE = 2.0
 """Seconds a cycle waits for its readings to be on record before it goes on with them queued."""
@@ -56,6 +58,8 @@ class UnitService:
         self._seen_labs: set[tuple[str, int, float]] = set()
         self._pending_labs: list[LabArrival] = []
         self._decided_labs: set[tuple[str, int, float]] = set()
+        self._pending_decisions: list[Decision] = []
+        self._seen_decisions: set[int] = set()
         self._horizon = int(np.ceil(LEAST_HORIZON_S / design.model.spec.sample_time)) + 2
         self._assembly = LiveAssembly(design.model.spec)
         self.run = fresh_run(design, self._horizon)
@@ -121,6 +125,28 @@ class UnitService:
             self._decided_labs.add(_key(arrival))
             self._pending_labs.append(replace(arrival, decided_at=now))
 
+    def waiting_decisions(self) -> list[Decision]:
+        """What people have decided about sensors and tests and no cycle has taken, as far as the records know."""
+        return [
+            Decision(
+                row.id,
+                next(act for act in ACTS if act == row.act),
+                row.tag or "",
+                row.flag_id or "",
+                row.occasion or "",
+                row.seconds or 0.0,
+                row.actor,
+                row.reason,
+            )
+            for row in waiting_decisions(self._database, self.identity.unit_id)
+        ]
+
+    def take(self, decision: Decision) -> None:
+        """A person's decision takes effect at the coming cycle, and once only."""
+        if decision.number not in self._seen_decisions:
+            self._seen_decisions.add(decision.number)
+            self._pending_decisions.append(decision)
+
     def complete_to(self) -> int:
         """Time up to which every tag has been heard."""
         return self._assembly.complete_to()
@@ -135,8 +161,10 @@ class UnitService:
             self._keep_first_state(time)
         arrivals = [lab for lab in self._pending_labs if lab.arrived <= time]
         self._pending_labs = [lab for lab in self._pending_labs if lab.arrived > time]
-        await self._store_readings(readings, arrivals)
-        step = self._advance(readings, arrivals)
+        came: list[Came] = [*arrivals, *self._pending_decisions]
+        self._pending_decisions = []
+        await self._store_readings(readings, came)
+        step = self._advance(readings, came)
         self._submit(step)
         return step
 
@@ -146,13 +174,13 @@ class UnitService:
         checkpoint = blocks.Checkpoint(cycle, FORMAT, pack_state(self.run.state, context))
         self._writer.submit(storing.store_checkpoint, self.identity.unit_id, checkpoint)
 
-    async def _store_readings(self, readings: CycleReadings, arrivals: list[LabArrival]) -> None:
+    async def _store_readings(self, readings: CycleReadings, came: list[Came]) -> None:
         """Before the cycle runs its readings are on record, or queued for it where the database is away."""
         block = blocks.ReadingsBlock(
             self.identity.revision_id,
             self.run.state.next_cycle,
             readings,
-            (pack_decisions(arrivals),),
+            (pack_decisions(came),),
         )
         future = self._writer.submit(storing.store_readings, self.identity.unit_id, block)
         patience = 0.0 if self._writer.state is WriterState.WAITING else COMMIT_PATIENCE
@@ -163,8 +191,10 @@ class UnitService:
         for item in done:
             item.result()
 
-    def _advance(self, readings: CycleReadings, arrivals: list[LabArrival]) -> Step:
-        advance = self.run.advance(readings, arrivals)
+    def _advance(self, readings: CycleReadings, came: list[Came]) -> Step:
+        before = self.run.state.book.exclusions
+        advance = self.run.advance(readings, came)
+        after = self.run.state.book.exclusions
         keep = self.run.state.next_cycle % CHUNK == 0 or bool(advance.revisions)
         return Step(
             readings,
@@ -173,6 +203,8 @@ class UnitService:
             advance.labs,
             advance.revisions,
             self._checkpoint() if keep else None,
+            advance.taken,
+            after if after != before else (),
         )
 
     def _checkpoint(self) -> bytes:
@@ -201,19 +233,21 @@ class UnitService:
             (lab.tag, lab.sampled_us, lab.value) for lab in lab_results_of(self._database, unit_id)
         }
         first, again = self.run.state.next_cycle, 0
-        for part, arrivals in recorded_cycles(self._database, unit_id, first, seen.cycle):
-            self._remember_labs(arrivals)
+        for part, came in recorded_cycles(self._database, unit_id, first, seen.cycle):
+            self._remember(came)
             for k in range(len(part)):
-                self._submit(self._advance(slice_readings(part, k, k + 1), arrivals if k == 0 else []))
+                self._submit(self._advance(slice_readings(part, k, k + 1), came if k == 0 else []))
                 again += 1
         self._hold(seen)
         return again
 
-    def _remember_labs(self, arrivals: list[LabArrival]) -> None:
-        """What the plant's server or the records show again after a restart has arrived already.
+    def _remember(self, came: list[Came]) -> None:
+        """What the plant's server or the records show again after a restart has come already.
 
-        Results that arrived in cycles that ran again may not be on record yet.
+        What came before cycles that ran again may not be settled on record yet.
         """
+        self._seen_decisions |= {item.number for item in came if isinstance(item, Decision)}
+        arrivals = [item for item in came if isinstance(item, LabArrival)]
         self._seen_labs |= {_key(arrival) for arrival in arrivals}
         self._decided_labs |= {_key(arrival) for arrival in arrivals if arrival.decided_at is not None}
 
