@@ -22,7 +22,6 @@ if TYPE_CHECKING:
     from softsensor.demonstration.plant_side import SimulatedPlant
     from softsensor.demonstration.service_side import ServiceProcess
 
-PREFERRED_PORT = 8080
 CATCH_UP = 1.0
 """Seconds on the wall that the service is given to finish the last cycles."""
 
@@ -92,12 +91,10 @@ def _prepare(where: Path) -> PlantModel:
     return model
 
 
-def _free_port(preferred: int = 0) -> int:
+def _free_port() -> int:
+    """A port that nobody has; the system does not hand it out again soon."""
     with socket.socket() as probe:
-        try:
-            probe.bind(("127.0.0.1", preferred))
-        except OSError:
-            probe.bind(("127.0.0.1", 0))
+        probe.bind(("127.0.0.1", 0))
         port: int = probe.getsockname()[1]
         return port
 
@@ -129,7 +126,7 @@ async def _play(where: Path, model: PlantModel, server: TagServer, plant: Simula
     """Start the service, then the plant's time; wait for the end; returns how often the service was started again."""
     from softsensor.demonstration.service_side import ServiceProcess, site_text
 
-    ports = (_free_port(), _free_port(PREFERRED_PORT))
+    ports = (_free_port(), _free_port())
     site_file = where / "site.toml"
     site_file.write_text(site_text(model, where / "r210.toml", server, plant.speed, ports), encoding="utf-8")
     typer.echo(f"folder: {where}")
