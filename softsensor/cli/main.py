@@ -7,7 +7,7 @@ import sys
 import typer
 
 from plant_models.errors import Problem
-from softsensor.cli import audit, check, db, demo, replay, run
+from softsensor.cli import audit, check, db, demo, replay, run, tune
 
 CAUTION = (
     "Advisory only: estimates and flags are no safety function, no part of one and no basis for defeating one. "
@@ -24,7 +24,7 @@ app = typer.Typer(
     add_completion=False,
     rich_markup_mode=None,
 )
-for command in (demo.demo, check.check, replay.replay, run.run):
+for command in (demo.demo, check.check, replay.replay, run.run, tune.tune):
     app.command(epilog=CAUTION)(command)
 app.add_typer(db.app, name="db")
 app.add_typer(audit.app, name="audit")

@@ -1,0 +1,315 @@
+"""Tuning a model's noise on a recorded history: fit on its first part, judge on the rest, propose interval scales.
+
+Nothing is proposed where an archive has changed the readings, where the data cannot separate what is asked for, or
+where what was fitted does worse than the file on the rest of the history.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Collection, Sequence
+from dataclasses import dataclass, replace
+
+import numpy as np
+
+from connectors.history import History
+from plant_models.building import build_plant_model
+from plant_models.durations import parse_duration
+from plant_models.plant_model import PlantModel
+from plant_models.specification import EstimateSpec, UnitSpec
+from softsensor.cycle import UnitDesign, rerun, usable
+from softsensor.detection.flags import FlagBook
+from softsensor.estimation.kernel import Floats, initial_state
+from softsensor.estimation.lab_results import LabArrival, LabOutcome
+from softsensor.estimation.noise_tuning.archive_checks import objection_to_archive, objection_to_spectrum
+from softsensor.estimation.noise_tuning.deviations import Deviations, deviations
+from softsensor.estimation.noise_tuning.interval_scale import (
+    LEAST_RESULTS,
+    LEVEL,
+    SURE_RESULTS,
+    Scores,
+    conformal_scale,
+    share_interval,
+)
+from softsensor.estimation.noise_tuning.maximum_likelihood import Maximum, NoiseFit, maximise
+from softsensor.estimation.noise_tuning.parameters import NoiseParameter, noise_parameters
+from softsensor.estimation.noise_tuning.separability import certainty, interval
+from softsensor.readings_of_cycle import CycleQuality, CycleReadings
+from softsensor.service.assembly import assemble_history
+from softsensor.service.replay import Replay, parts_of
+from softsensor.service.tuned_file import UNITS_OF_TIME, Change, changed_spec, tolerances_given
+from softsensor.service.tuning_report import FittedNumber, IntervalProposal, TuningReport, Whiteness
+from softsensor.service.unit_run import slice_readings
+from softsensor.unit_design import design_unit
+
+FIT_SHARE = 0.6
+"""Share of the history that is fitted; the rest judges the fit."""
+LEAST_CYCLES = 500
+"""In either part."""
+LEAD_IN = 0.05
+"""At most this share of the fit only leads in: the inputs before the history are not known."""
+SETTLED = 3.0
+"""Slowest time constants of the inputs' paths after which the lead-in ends."""
+DIGITS = 4
+"""Written; the fit knows no more."""
+LEAST_SCALE = 0.05
+CHANCE = 3.0
+"""By this and one per parameter log L on the rest may fall by chance."""
+
+
+@dataclass(frozen=True)
+class _Data:
+    """A history as it is tuned on: cycles, which of them are fitted, and what the likelihood sees."""
+
+    design: UnitDesign
+    readings: CycleReadings
+    y: Floats
+    split: int
+    lead_in: int
+    seen: Deviations
+
+
+def tune(
+    model: PlantModel, history: History, labs: Sequence[LabArrival] = (), keep: Collection[str] = ()
+) -> TuningReport:
+    """Fit a model's noise on the first part of a history and judge it on the rest.
+
+    :param labs: laboratory results that lie within the history.
+    :param keep: names of parameters that stay as they are, such as ``TI2101A.noise_sd``.
+    :raises Problem: a name in ``keep`` that the model does not have.
+    """
+    parameters = noise_parameters(model.spec, keep)
+    data = _data(design_unit(model), history)
+    report = _blank(model.spec, data)
+    refusals = _too_short(report) or _archive(model.spec, data)
+    if refusals:
+        return replace(report, refusals=refusals)
+    fit = NoiseFit(model, parameters, data.seen.between(0, data.split), data.lead_in)
+    best = maximise(fit)
+    known = certainty(best)
+    report = replace(
+        report,
+        readings=best.readings,
+        numbers=_numbers(best, known.log_sd),
+        log_likelihood=(best.log_likelihood_before, best.log_likelihood),
+    )
+    fitted = design_unit(build_plant_model(fit.spec_at(np.log(best.values))))
+    refusals = known.objections + _filtered(fitted, data)
+    if refusals:
+        return replace(report, refusals=refusals)
+    return _judged(data, report, labs)
+
+
+def _judged(data: _Data, report: TuningReport, labs: Sequence[LabArrival]) -> TuningReport:
+    """The report with what the rest of the history says about the numbers to be written."""
+    model = data.design.model
+    changes = tuple(
+        Change((item.parameter.section, item.parameter.index, item.parameter.key), item.written)
+        for item in report.numbers
+    )
+    tuned = design_unit(build_plant_model(changed_spec(model.spec, changes, tolerances_given(model.spec))))
+    check = NoiseFit(model, tuple(item.parameter for item in report.numbers), data.seen, data.split)
+    before = check.at(np.log([item.parameter.value for item in report.numbers])).value
+    after = check.at(np.log([item.written for item in report.numbers])).value
+    refusals: tuple[str, ...] = ()
+    if not after > before - CHANCE - len(report.numbers):
+        refusals = (
+            f"on the part that was not fitted the fit does worse than the file (log L {after:.1f}, before {before:.1f}): "
+            "the two parts of the history differ",
+        )
+    intervals = _intervals(tuned, data, labs)
+    scales = tuple(
+        Change(("estimate", e, "interval_scale"), item.scale)
+        for e, item in enumerate(intervals)
+        if item.scale != item.scale_before
+    )
+    return replace(
+        report,
+        check_log_likelihood=(before, after),
+        sensors=_whiteness(data, tuned),
+        intervals=intervals,
+        refusals=refusals,
+        changes=changes + scales,
+    )
+
+
+def _data(design: UnitDesign, history: History) -> _Data:
+    """Cycles from the first that has every input, and what the likelihood sees of them."""
+    model = design.model
+    readings = assemble_history(model.spec, history)
+    complete = np.flatnonzero(np.all(np.isfinite(readings.u), axis=1))
+    first = int(complete[0]) if len(complete) else len(readings)
+    readings = slice_readings(readings, first, len(readings))
+    y, scale = usable(design, readings)
+    doubtful = np.any(readings.u_quality > CycleQuality.UNCERTAIN, axis=1).astype(np.int64)
+    seen = deviations(model, readings.u, y, scale, doubtful)
+    split = int(FIT_SHARE * len(readings))
+    return _Data(design, readings, y, split, min(_settling(model), int(LEAD_IN * split)), seen)
+
+
+def _settling(model: PlantModel) -> int:
+    """Cycles after which what came before the history no longer shows in any path from an input."""
+    longest = 0.0
+    for path in model.paths:
+        sizes = np.abs(np.linalg.eigvals(path.phi)) if path.phi.size else np.zeros(0)
+        slow = sizes[(sizes > 0.0) & (sizes < 1.0 - 1e-9)]
+        decay = -SETTLED / float(np.log(slow.max())) if slow.size else 0.0
+        longest = max(longest, path.whole_delays + 1 + decay)
+    return math.ceil(longest)
+
+
+def _blank(spec: UnitSpec, data: _Data) -> TuningReport:
+    times = data.readings.times
+    if not len(times):
+        return TuningReport(spec.name, 0, 0, 0, 0, 0, 0)
+    split = int(times[data.split])
+    return TuningReport(
+        spec.name, int(times[0]), split, int(times[-1]), data.split, len(times) - data.split, 0
+    )
+
+
+def _too_short(report: TuningReport) -> tuple[str, ...]:
+    if min(report.fit_cycles, report.check_cycles) >= LEAST_CYCLES:
+        return ()
+    return (
+        f"the history has {report.fit_cycles} cycles to fit and {report.check_cycles} to judge the fit by; expected at "
+        f"least {LEAST_CYCLES} in either part",
+    )
+
+
+def _archive(spec: UnitSpec, data: _Data) -> tuple[str, ...]:
+    """A line per sensor whose readings an archive has changed."""
+    found = []
+    for i, sensor in enumerate(spec.sensors):
+        if sensor.on_change:
+            objection: str | None = "it is reported on change, so that its own noise is not in the history"
+        else:
+            objection = objection_to_archive(data.y[:, i])
+        if objection is not None:
+            found.append(f"{sensor.tag}: {objection}")
+    return tuple(found)
+
+
+def _filtered(fitted: UnitDesign, data: _Data) -> tuple[str, ...]:
+    """A line per sensor whose innovations, with the fitted noise, show that its readings were filtered."""
+    z = _standardised(fitted, data)[data.lead_in : data.split]
+    found = []
+    for i, sensor in enumerate(fitted.model.spec.sensors):
+        objection = objection_to_spectrum(z[:, i])
+        if objection is not None:
+            found.append(f"{sensor.tag}: {objection}")
+    return tuple(found)
+
+
+def _numbers(best: Maximum, log_sd: Floats) -> tuple[FittedNumber, ...]:
+    out = []
+    for item, value, sd in zip(best.parameters, best.values, log_sd, strict=True):
+        low, high = interval(float(value), float(sd))
+        out.append(FittedNumber(item, float(value), low, high, written_value(item, float(value))))
+    return tuple(out)
+
+
+def written_value(parameter: NoiseParameter, value: float) -> float:
+    """The value as it goes into the file: a few digits, times in the unit that suits them.
+
+    >>> written_value(NoiseParameter("sensor", 0, "TI1", "noise_sd", 1.0), 0.123456)
+    0.1235
+    >>> written_value(NoiseParameter("disturbance", 0, "feed", "time_constant", 1.0), 5432.1)
+    5432.4
+    """
+    if parameter.key != "time_constant":
+        return float(f"{value:.{DIGITS}g}")
+    unit, size = next((unit, size) for unit, size, until in UNITS_OF_TIME if value < until)
+    return parse_duration(f"{value / size:.{DIGITS}g} {unit}")
+
+
+def _standardised(design: UnitDesign, data: _Data) -> Floats:
+    """Innovations over their sd (N, m) of the live cycle without tests; nan where there is no reading."""
+    state = initial_state(design.model, design.kernel)
+    _, out = rerun(design, state, FlagBook(), 0, data.readings, ())
+    z = np.asarray(out.innovation / out.innovation_sd, dtype=np.float64)
+    z[~np.isfinite(data.seen.z)] = np.nan
+    return z
+
+
+def _whiteness(data: _Data, tuned: UnitDesign) -> tuple[Whiteness, ...]:
+    before = _standardised(data.design, data)[data.split :]
+    after = _standardised(tuned, data)[data.split :]
+    out = []
+    for i, tag in enumerate(tuned.model.sensor_tags):
+        count = int(np.isfinite(after[:, i]).sum())
+        old, new = _nis_and_whiteness(before[:, i]), _nis_and_whiteness(after[:, i])
+        out.append(Whiteness(tag, count, old[0], new[0], old[1], new[1]))
+    return tuple(out)
+
+
+def _nis_and_whiteness(z: Floats) -> tuple[float, float]:
+    """Mean square and lag-one correlation of standardised innovations (N,) with gaps; nan where there are none."""
+    present = z[np.isfinite(z)]
+    pairs = z[1:] * z[:-1]
+    pairs = pairs[np.isfinite(pairs)]
+    if not len(pairs):
+        return math.nan, math.nan
+    nis = float(np.mean(present**2))
+    return nis, float(np.mean(pairs)) / nis
+
+
+def _intervals(tuned: UnitDesign, data: _Data, labs: Sequence[LabArrival]) -> tuple[IntervalProposal, ...]:
+    """For each estimate what the laboratory results after the fit say about its interval."""
+    outcomes: list[LabOutcome] = []
+    variances: dict[tuple[int, int, float], float] = {}
+    if labs:
+        horizon = len(data.readings) * tuned.model.spec.sample_time
+        running = Replay(tuned, parts_of([data.readings], labs), horizon)
+        for stretch in running.stretches():
+            outcomes += stretch.labs
+        variances = {(item.cycle, item.estimate, item.value): item.variance for item in running.run.labs}
+    split = int(data.readings.times[data.split])
+    out = []
+    for e, estimate in enumerate(tuned.model.spec.estimates):
+        results = [
+            item
+            for item in outcomes
+            if item.arrival.estimate == e and item.arrival.sampled > split and math.isfinite(item.innovation)
+        ]
+        own = estimate.lab.sd**2 if estimate.lab is not None else math.nan
+        noise = [variances.get((item.counted_cycle, e, item.arrival.value), own) for item in results]
+        out.append(_proposal(estimate, _scores(results, noise)))
+    return tuple(out)
+
+
+def _scores(results: Sequence[LabOutcome], noise: Sequence[float]) -> Scores:
+    variance = np.array(noise, dtype=np.float64)
+    total = np.array([item.sd for item in results], dtype=np.float64) ** 2
+    return Scores(
+        np.array([item.innovation for item in results], dtype=np.float64), total - variance, variance
+    )
+
+
+def _proposal(estimate: EstimateSpec, scores: Scores) -> IntervalProposal:
+    count, before = len(scores.error), estimate.interval_scale
+    hits = scores.inside(before)
+    low, high = share_interval(hits, count) if count else (math.nan, math.nan)
+    share = hits / count if count else math.nan
+    scale, reason = _scale(scores, before, low <= LEVEL <= high)
+    scaled = scores.inside(scale) / count if count else math.nan
+    return IntervalProposal(estimate.tag, count, share, low, high, before, scale, scaled, reason)
+
+
+def _scale(scores: Scores, before: float, agrees: bool) -> tuple[float, str]:
+    """The interval scale proposed, and why."""
+    count = len(scores.error)
+    if count < LEAST_RESULTS:
+        return (
+            before,
+            f"unchanged: {count} laboratory results after the fit; expected at least {LEAST_RESULTS}",
+        )
+    if agrees and count < SURE_RESULTS:
+        return before, "unchanged: these results agree with what the interval promises"
+    scale = float(f"{conformal_scale(scores):.3g}")
+    if scale < LEAST_SCALE:
+        return (
+            before,
+            "unchanged: the laboratory's own sd explains all errors, so that the interval is not tested",
+        )
+    return scale, f"split conformal on {count} laboratory results that the fit has not seen"
