@@ -21,7 +21,8 @@ from softsensor.service.clock import ScaledClock, wait_until
 
 STEP = 10_000_000
 SPEED = 240.0
-DEADLINE = 120.0
+DEADLINE = 300.0
+"""Seconds; the first start on a machine compiles."""
 
 MODEL = """
 [unit]

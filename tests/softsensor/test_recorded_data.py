@@ -105,7 +105,7 @@ def test_frames_that_cannot_be_used(model: PlantModel, history: pd.DataFrame, la
         softsensor.replay(model, history.drop(columns=tag))
     with pytest.raises(HistoryFileError, match="time"):
         softsensor.replay(model, history.iloc[::-1].reset_index(drop=True))
-    with pytest.raises(HistoryFileError, match="--timezone|zone"):
+    with pytest.raises(HistoryFileError, match="zone"):
         softsensor.replay(model, history.assign(time=history["time"].dt.tz_localize(None)))
     with pytest.raises(HistoryFileError, match="no rows"):
         softsensor.replay(model, history.iloc[:0])
