@@ -40,7 +40,7 @@ CHUNK = 256
 """Cycles between two kept states; the filter's steps are kept for one chunk at a time."""
 ROWS = 8192
 """Cycles handed out at a time: tables cost by the piece."""
-IN_MEMORY = 64 * 2**20
+IN_MEMORY = 16 * 2**20
 """Bytes up to which nothing goes to disk."""
 
 
@@ -142,9 +142,11 @@ class SmoothedRun:
         for times in self._waited:
             nothing = np.full((len(times), estimates), np.nan)
             yield SmoothedCycles(times, nothing, nothing)
-        interval = _Interval(self._design, running.run.state.book, running.counted_labs, running.first_cycle)
-        self._forward(interval)
-        self._backward(interval)
+        if not len(self._smoothed):
+            book, labs = running.run.state.book, running.counted_labs
+            interval = _Interval(self._design, book, labs, running.first_cycle)
+            self._forward(interval)
+            self._backward(interval)
         at_once = max(1, ROWS // self._chunk)
         for stop in range(len(self._smoothed), 0, -at_once):
             first = max(stop - at_once, 0)

@@ -2,8 +2,6 @@
 
 from __future__ import annotations
 
-import sys
-from collections.abc import Callable, Sequence
 from dataclasses import replace
 from pathlib import Path
 
@@ -11,6 +9,7 @@ import numpy as np
 import pandas as pd
 import pytest
 from independent.batch_conditioning import given_everything
+from independent.dense_filter import LabRow, stochastic
 from independent.random_models import random_unit
 from independent.recorded_runs import Run, by_cycle, late_labs, record
 from independent.replaying import arrival, design_of, readings_of
@@ -18,7 +17,6 @@ from independent.transfer_paths import Array
 
 import softsensor
 from plant_models.building import build_plant_model
-from plant_models.library import published_model_path
 from plant_models.specification import (
     DisturbanceSpec,
     EstimateSpec,
@@ -27,13 +25,19 @@ from plant_models.specification import (
     SensorSpec,
     UnitSpec,
 )
-from softsensor.cli.main import main
-from softsensor.errors import ReplayError
+from softsensor.estimation.kernel import Kernel, initial_state
 from softsensor.estimation.lab_results import LabArrival
+from softsensor.estimation.smoothing import (
+    ScalarReadings,
+    empty_trace,
+    last_adjoint,
+    run_backward,
+    run_forward,
+)
 from softsensor.readings_of_cycle import CycleReadings
 from softsensor.recorded_data import ReplayResult
 from softsensor.service.replay import Replay, gathered, parts_of
-from softsensor.service.smoothed_run import Shelf, SmoothedRun
+from softsensor.service.smoothed_run import SmoothedRun
 
 COLUMNS = ["time", "tag", "value", "sd", "lower", "upper"]
 SPEC = random_unit(6)
@@ -157,6 +161,86 @@ def test_results_older_than_what_a_unit_remembers_still_count() -> None:
     np.testing.assert_allclose(by_cycle(table(found), "value", tags_of(spec)), value, rtol=1e-7)
 
 
+def test_a_result_of_uncertain_sampling_time_counts_with_the_sd_that_it_was_used_with(run: Run) -> None:
+    design, readings = design_of(SPEC), readings_of(run)
+    value = float(run.truth[300, len(SPEC.sensors)])
+    plain = arrival(SPEC, LabRow(300, 330, 0, value, 0.0))
+    doubtful = replace(plain, time_uncertainty=3.0 * SPEC.sample_time)
+    running = Replay(design, parts_of([readings], [doubtful]))
+    _, sd = smoothed_in_chunks(running, 64)
+    (counted,) = running.counted_labs
+    lab = SPEC.estimates[0].lab
+    assert lab is not None
+    assert counted.variance > lab.sd**2
+    row = LabRow(300, 330, 0, value, float(np.sqrt(counted.variance)))
+    rows = slice(200, 400)
+    _, expected = given_everything(SPEC, run.u, run.y, run.uncertain, [row])
+    np.testing.assert_allclose(sd[rows], expected[rows], rtol=1e-8)
+
+
+def test_cycles_can_be_asked_for_twice(run: Run) -> None:
+    running = Replay(design_of(SPEC), [(readings_of(run), [])])
+    with SmoothedRun(running.design) as smoothing:
+        for _ in smoothing.keeping(running.stretches()):
+            pass
+        first, second = list(smoothing.cycles(running)), list(smoothing.cycles(running))
+    assert [len(part.times) for part in first] == [len(part.times) for part in second]
+    assert first[0].estimate.tobytes() == second[0].estimate.tobytes()
+
+
+def test_a_long_silence_is_as_wide_as_the_model_alone_and_leaves_the_information_sound() -> None:
+    """20,000 cycles, 18,000 of them without a reading; the disturbance is stationary."""
+    spec = three_thermometers()
+    recorded = record(spec, 20_000, 9, move=0.3)
+    y = recorded.y.copy()
+    y[1000:19_000] = np.nan
+    readings = readings_of(replace(recorded, y=y))
+    _, sd = smoothed_in_chunks(Replay(design_of(spec), [(readings, [])]), 256)
+    model = stochastic(spec)
+    alone = np.sqrt(model.C[3] @ model.P0 @ model.C[3])
+    np.testing.assert_allclose(sd[5000:15_000], alone, rtol=1e-9)
+    assert (sd[:900] < 0.5 * alone).all()
+    assert (sd[-900:] < 0.5 * alone).all()
+
+
+def block_of(run: Run) -> tuple[Kernel, ScalarReadings]:
+    """A run's sensors as the filter takes them, written out anew."""
+    kernel = design_of(run.spec).kernel
+    at, sensor = np.nonzero(np.isfinite(run.y))
+    variance = kernel.r[sensor] * np.where(run.uncertain[at, sensor], 9.0, 1.0)
+    return kernel, ScalarReadings(run.u, at, sensor, run.y[at, sensor], variance)
+
+
+@pytest.mark.parametrize("seed", [2, 6, 11])
+def test_the_information_stays_symmetric_to_the_bit_and_not_negative(seed: int) -> None:
+    recorded = record(random_unit(seed), 3000, seed, gaps=0.2)
+    kernel, data = block_of(recorded)
+    state = initial_state(build_plant_model(recorded.spec), kernel)
+    trace = empty_trace(3000, len(data.at), kernel)
+    assert run_forward(kernel, state, data, trace)
+    adjoint = last_adjoint(kernel)
+    mean, variance = np.zeros((3000, kernel.n_estimates)), np.zeros((3000, kernel.n_estimates))
+    assert run_backward(kernel, data, trace, adjoint, mean, variance)
+    np.testing.assert_array_equal(adjoint.N, adjoint.N.T)
+    values = np.linalg.eigvalsh(adjoint.N)
+    assert values[-1] > 0.0
+    assert values[0] >= -1e-12 * values[-1]
+
+
+def test_arithmetic_that_is_not_sound_is_refused() -> None:
+    """A noise variance that makes an innovation's negative; a variance smaller than what later readings take from it."""
+    recorded = record(random_unit(6), 50, 6)
+    kernel, data = block_of(recorded)
+    model = build_plant_model(recorded.spec)
+    trace = empty_trace(50, len(data.at), kernel)
+    spoilt = data._replace(variance=np.full_like(data.variance, -1e9))
+    assert not run_forward(kernel, initial_state(model, kernel), spoilt, trace)
+    assert run_forward(kernel, initial_state(model, kernel), data, trace)
+    mean, variance = np.zeros((50, kernel.n_estimates)), np.zeros((50, kernel.n_estimates))
+    trace.variance[20] *= 1e-3
+    assert not run_backward(kernel, data, trace, last_adjoint(kernel), mean, variance)
+
+
 def test_a_result_that_waits_for_a_person_does_not_count(run: Run) -> None:
     lab = SPEC.estimates[0].lab
     assert lab is not None
@@ -241,107 +325,6 @@ def test_an_estimate_that_is_known_exactly_has_an_sd_of_zero() -> None:
     sd = table(softsensor.replay(build_plant_model(spec), recorded.history(), smooth=True))["sd"].to_numpy()
     assert (sd[:3] <= 1e-12).all()
     assert (sd[4:] > 0.0).all()
-
-
-@pytest.fixture
-def command(monkeypatch: pytest.MonkeyPatch) -> Callable[..., None]:
-    """Runs a command in this process, which must end well."""
-
-    def run_command(*words: object) -> None:
-        monkeypatch.setattr(sys, "argv", ["softsensor", *map(str, words)])
-        with pytest.raises(SystemExit) as left:
-            main()
-        assert not left.value.code
-
-    return run_command
-
-
-def files_of(folder: Path, name: str = "wood_berry") -> tuple[Path, Path, Path, Run]:
-    """Model, history and laboratory file of a published model."""
-    model = published_model_path(name)
-    spec = softsensor.load_model(str(model)).spec
-    recorded = record(spec, 150, 4, gaps=0.1, move=0.03)
-    history, lab = folder / "history.csv", folder / "lab.csv"
-    recorded.history().to_csv(history, index=False)
-    late_labs(recorded, 4, 6, latest=20)[0].to_csv(lab, index=False)
-    return Path(str(model)), history, lab, recorded
-
-
-def contents(folder: Path, but: Sequence[str] = ()) -> dict[str, bytes]:
-    return {path.name: path.read_bytes() for path in folder.iterdir() if path.name not in but}
-
-
-def test_the_command_writes_one_more_file_and_the_others_as_before(
-    tmp_path: Path, capsys: pytest.CaptureFixture[str], command: Callable[..., None]
-) -> None:
-    model, history, lab, _ = files_of(tmp_path)
-    command("replay", model, history, "--lab", lab, "--out", tmp_path / "plain", "--json")
-    command("replay", model, history, "--lab", lab, "--out", tmp_path / "more", "--json", "--smooth")
-    assert len(set(capsys.readouterr().out.splitlines())) == 1
-    assert contents(tmp_path / "more", ["smoothed.csv"]) == contents(tmp_path / "plain")
-    smoothed = pd.read_csv(tmp_path / "more" / "smoothed.csv", dtype=str)
-    result = softsensor.replay(
-        softsensor.load_model(str(model)), pd.read_csv(history), pd.read_csv(lab), smooth=True
-    )
-    assert list(smoothed.columns) == COLUMNS
-    for name in ("value", "sd", "lower", "upper"):
-        np.testing.assert_array_equal(smoothed[name].map(float), table(result)[name])
-    assert list(pd.to_datetime(smoothed["time"])) == list(table(result)["time"])
-    assert list(smoothed["tag"]) == list(table(result)["tag"])
-
-
-def test_parquet_holds_the_same_numbers(
-    tmp_path: Path, capsys: pytest.CaptureFixture[str], command: Callable[..., None]
-) -> None:
-    model, history, lab, _ = files_of(tmp_path)
-    for kind in ("csv", "parquet"):
-        command(
-            "replay", model, history, "--lab", lab, "--out", tmp_path / "out", "--smooth", "--format", kind
-        )
-    capsys.readouterr()
-    whole = pd.read_parquet(tmp_path / "out" / "smoothed.parquet")
-    text = pd.read_csv(tmp_path / "out" / "smoothed.csv", dtype=str)
-    assert list(whole.columns) == COLUMNS
-    for name in ("value", "sd", "lower", "upper"):
-        np.testing.assert_array_equal(whole[name], text[name].map(float))
-
-
-def test_a_shelf_gives_back_what_was_put_also_from_disk(
-    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
-) -> None:
-    monkeypatch.setattr("softsensor.service.smoothed_run.IN_MEMORY", 1000)
-    shelf = Shelf(tmp_path)
-    groups = [(np.arange(k, dtype=np.int64), np.full((k, 3), k / 7.0)) for k in range(1, 60)]
-    for group in groups:
-        shelf.put(group)
-    for number in (58, 0, 31, 58):
-        for found, expected in zip(shelf.get(number), groups[number], strict=True):
-            assert found.dtype == expected.dtype
-            np.testing.assert_array_equal(found, expected)
-    shelf.close()
-    assert list(tmp_path.iterdir()) == []
-
-
-def test_smoothing_from_disk_gives_the_same_bits(
-    run: Run, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
-) -> None:
-    design, readings = design_of(SPEC), readings_of(run)
-    in_memory = smoothed_in_chunks(Replay(design, [(readings, [])]), 64)
-    monkeypatch.setattr("softsensor.service.smoothed_run.IN_MEMORY", 1000)
-    on_disk = smoothed_in_chunks(Replay(design, [(readings, [])]), 64, folder=tmp_path)
-    assert on_disk[0].tobytes() == in_memory[0].tobytes()
-    assert on_disk[1].tobytes() == in_memory[1].tobytes()
-    assert list(tmp_path.iterdir()) == []
-
-
-def test_a_folder_that_cannot_be_written_is_told_in_one_line(
-    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
-) -> None:
-    monkeypatch.setattr("softsensor.service.smoothed_run.IN_MEMORY", 10)
-    shelf = Shelf(tmp_path / "missing")
-    with pytest.raises(ReplayError, match=r"temporary file of the smoother: "):
-        shelf.put((np.zeros(100),))
-    shelf.close()
 
 
 def test_what_a_run_saw_is_not_changed(run: Run) -> None:
