@@ -212,6 +212,17 @@ def _rest(state: TestState, i: int) -> None:
 
 
 @njit(cache=True)
+def _cut_off(y: Floats, doubtful: int) -> bool:
+    """Inputs and all sensors missing together: the connection or the service was away, no sensor is lost."""
+    if doubtful == 0:
+        return False
+    for i in range(len(y)):  # noqa: SIM110 (compiled)
+        if y[i] == y[i]:
+            return False
+    return True
+
+
+@njit(cache=True)
 def test_cycle(
     design: TestDesign,
     state: TestState,
@@ -232,9 +243,10 @@ def test_cycle(
     union = _settle(state, doubtful)
     resting = quiet != 0 or state.cycle[0] < state.settling_until[0]
     slot = state.cycle[0] % state.ring.shape[0]
+    cut_off = _cut_off(y, doubtful)
     for i in range(len(y)):
         missing = y[i] != y[i]
-        code = _test_lost(design, state, i, missing)
+        code = 0 if cut_off else _test_lost(design, state, i, missing)
         state.ring[slot, i] = innovation[i]
         if resting:
             _rest(state, i)

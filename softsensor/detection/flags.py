@@ -99,7 +99,9 @@ class FlagBook:
 
     def worked_on(self, sensor: int, cycle: int) -> bool:
         """Has a person left the sensor out at a cycle?"""
-        return any(item.sensor == sensor and item.by_person and item.covers(cycle) for item in self.exclusions)
+        return any(
+            item.sensor == sensor and item.by_person and item.covers(cycle) for item in self.exclusions
+        )
 
     def resting(self, cycle: int) -> bool:
         """Do the unit's tests rest at a cycle because a person said so?"""
