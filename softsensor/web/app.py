@@ -19,6 +19,7 @@ from softsensor.web.forms import form_routes
 from softsensor.web.live import LiveStreams
 from softsensor.web.models_in_service import ModelsInService
 from softsensor.web.pages import Pages, data_routes, page_routes
+from softsensor.web.people_pages import people_forms, people_pages
 from softsensor.web.security import HEADERS, ProtectiveHeaders
 from softsensor.web.site import BadForm, ForeignForm, NotHere, Site
 
@@ -45,6 +46,8 @@ def create_app(database: Database, feed: LiveFeed, clock_speed: float = 1.0) -> 
     app.state.streams = streams
     app.add_middleware(ProtectiveHeaders)
     app.include_router(data_routes(site))
+    app.include_router(people_pages(site, pages))
+    app.include_router(people_forms(site))
     app.include_router(page_routes(site, pages))
     app.include_router(form_routes(site))
     app.mount("/static/bokeh", StaticFiles(directory=bokeh_scripts()))

@@ -13,6 +13,7 @@ from plant_models.model_file import parse_model_text
 from plant_models.specification import UnitSpec
 from softsensor.errors import RecordsError
 from softsensor.estimation.kernel import build_kernel
+from softsensor.estimation.observability import EstimateKnowledge, estimate_knowledge
 from softsensor.records.engine import Database
 from softsensor.records.reader import Unit
 from softsensor.records.tables import model_revisions
@@ -20,12 +21,13 @@ from softsensor.unit_design import fault_test_design
 
 
 class ModelsInService:
-    """Specifications and decision intervals by revision; safe to ask from several threads."""
+    """Specifications, decision intervals and what can be known, by revision; safe to ask from several threads."""
 
     def __init__(self, database: Database) -> None:
         self._database = database
         self._specs: dict[int, UnitSpec] = {}
         self._intervals: dict[int, NDArray[np.float64]] = {}
+        self._knowledge: dict[int, tuple[EstimateKnowledge, ...]] = {}
         self._solving = threading.Lock()
 
     def revision_of(self, unit: Unit) -> int:
@@ -65,4 +67,13 @@ class ModelsInService:
                 model = build_plant_model(self.spec(revision_id))
                 known = fault_test_design(model, build_kernel(model)).interval
                 self._intervals[revision_id] = known
+        return known
+
+    def knowledge(self, revision_id: int) -> tuple[EstimateKnowledge, ...]:
+        """What can be known of each estimate with all sensors, and with each of them lost."""
+        with self._solving:
+            known = self._knowledge.get(revision_id)
+            if known is None:
+                known = estimate_knowledge(build_plant_model(self.spec(revision_id)))
+                self._knowledge[revision_id] = known
         return known

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import json
 import math
-from collections.abc import Sequence
+from collections.abc import Collection, Sequence
 from dataclasses import dataclass
 
 from sqlalchemy import select
@@ -112,13 +112,14 @@ def tag_decimals(spec: UnitSpec) -> dict[str, int]:
     return found
 
 
-def health_of(tag: str, flags: Sequence[StoredFlag]) -> SensorStatus:
-    """The most severe status that the open flags give a tag."""
+def health_of(tag: str, flags: Sequence[StoredFlag], worked_on: bool = False) -> SensorStatus:
+    """The most severe status that the open flags give a tag; function check where a person has left it out."""
     found = [
         status_of(flag.kind, flag.probability or 0.0, flag.group == (tag,))
         for flag in flags
         if flag.tag == tag
     ]
+    found += [SensorStatus.FUNCTION_CHECK] if worked_on else []
     return max(found, key=SEVERITY.index, default=SensorStatus.NORMAL)
 
 
@@ -170,11 +171,15 @@ def sensor_rows(
     latest: series.TimedResults | None,
     seen: CycleReadings | None,
     flags: Sequence[StoredFlag],
+    worked_on: Collection[str] = (),
 ) -> tuple[SensorRow, ...]:
-    """Every sensor of the model with its latest reading, prediction and health."""
+    """Every sensor of the model with its latest reading, prediction and health.
+
+    :param worked_on: tags that a person has left out.
+    """
     rows = []
     for i, item in enumerate(spec.sensors):
-        health = health_of(item.tag, flags)
+        health = health_of(item.tag, flags, item.tag in worked_on)
         if latest is None or seen is None:
             places = (difference_unit(item.unit), decimals_for(item.noise_sd), None, None, None)
             rows.append(SensorRow(item.tag, item.unit, *places, health, "no reading"))

@@ -6,8 +6,9 @@ from functools import cached_property
 
 from plant_models.specification import UnitSpec
 from softsensor.readings_of_cycle import CycleReadings
-from softsensor.records import reader, series
+from softsensor.records import decisions, reader, series
 from softsensor.records.audit import StoredEntry
+from softsensor.records.decisions import LeftOut
 from softsensor.records.engine import Database
 from softsensor.records.reader import StoredEvent, StoredFlag, StoredLab, Unit
 from softsensor.web.models_in_service import ModelsInService
@@ -27,6 +28,7 @@ from softsensor.web.rows import (
     tag_units,
     waiting_labs,
 )
+from softsensor.web.wording import utc
 
 EVENTS_SHOWN, ENTRIES_SHOWN, CLEARED_SHOWN = 12, 8, 10
 EVENTS_SEARCHED = 500
@@ -92,7 +94,25 @@ class UnitView:
     @cached_property
     def sensors(self) -> tuple[SensorRow, ...]:
         """Every sensor."""
-        return sensor_rows(self.spec, *self._cycle, self.open_flags)
+        worked_on = {item.tag for item in self.left_out if item.by_person}
+        return sensor_rows(self.spec, *self._cycle, self.open_flags, worked_on)
+
+    @cached_property
+    def left_out(self) -> tuple[LeftOut, ...]:
+        """Sensors that the newest cycle kept from the estimate."""
+        now = self.cycle_us
+        rows = decisions.left_out_of(self._database, self.unit.id)
+        return () if now is None else tuple(row for row in rows if row.covers(now))
+
+    @cached_property
+    def tests(self) -> State:
+        """Whether a person lets the tests rest."""
+        rest = (
+            None if self.cycle_us is None else decisions.rest_at(self._database, self.unit.id, self.cycle_us)
+        )
+        if rest is None or rest.until_us is None:
+            return State("running", True)
+        return State(f"at rest until {utc(rest.until_us)} ({rest.occasion}, {rest.actor})", False)
 
     @cached_property
     def inputs(self) -> tuple[InputRow, ...]:

@@ -1,0 +1,150 @@
+"""A still picture of courses over time as inline SVG: for paper, without a script."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Sequence
+from dataclasses import dataclass
+from typing import Any
+
+from markupsafe import Markup, escape
+
+from softsensor.web.wording import moment
+
+WIDTH, HEIGHT = 760.0, 230.0
+LEFT, RIGHT, TOP, BOTTOM = 62.0, 22.0, 12.0, 34.0
+TICKS = 5
+STEPS_S = (60, 300, 600, 1800, 3600, 7200, 14400, 28800, 86400, 172800, 604800)
+"""Distances between two times on the axis."""
+
+
+@dataclass(frozen=True)
+class Course:
+    """A line through points (milliseconds since 1970, value); None breaks it. ``kind`` names its look."""
+
+    kind: str
+    x: Sequence[float | None]
+    y: Sequence[float | None]
+
+
+@dataclass(frozen=True)
+class Picture:
+    """What is drawn between two times (milliseconds since 1970)."""
+
+    title: str
+    unit: str
+    start: float
+    end: float
+    courses: tuple[Course, ...]
+    bands: tuple[tuple[float, float, str], ...] = ()
+    """Stretches of time to shade: start, end, kind."""
+    levels: tuple[float, ...] = ()
+    """Values drawn as horizontal lines."""
+
+
+def round_step(span: float, wanted: int = TICKS) -> float:
+    """A step of 1, 2 or 5 times a power of ten that cuts a span into about so many parts.
+
+    >>> round_step(10.0), round_step(0.037), round_step(330.0)
+    (2.0, 0.01, 100.0)
+    """
+    rough = span / wanted
+    power = 10.0 ** math.floor(math.log10(rough))
+    factor = next(step for step in (1.0, 2.0, 5.0, 10.0) if rough <= step * power * (1.0 + 1e-9))
+    return float(f"{factor * power:.12g}")
+
+
+def time_step(span_s: float) -> int:
+    """Seconds between two marks on the time axis, at most eight marks."""
+    return next((step for step in STEPS_S if span_s / step <= 8.0), STEPS_S[-1])
+
+
+def svg_of(picture: Picture) -> Markup:
+    """The picture as an SVG element; times in UTC, every text escaped."""
+    values = [float(y) for course in picture.courses for y in course.y if y is not None] + list(
+        picture.levels
+    )
+    low, high = (min(values), max(values)) if values else (0.0, 1.0)
+    if high - low < 1e-12 * max(1.0, abs(high)):
+        low, high = low - 0.5, high + 0.5
+    margin = 0.06 * (high - low)
+    frame = _Frame(picture.start, picture.end, low - margin, high + margin)
+    parts = [_band(frame, *band) for band in picture.bands]
+    parts += _value_axis(frame, picture.unit) + _time_axis(frame)
+    parts += [
+        f'<path class="level" d="M{LEFT} {frame.y(level):.1f}H{WIDTH - RIGHT}"/>' for level in picture.levels
+    ]
+    parts += [_course(frame, course) for course in picture.courses]
+    title = escape(picture.title)
+    return Markup(
+        f'<svg class="still" viewBox="0 0 {WIDTH:.0f} {HEIGHT:.0f}" role="img" aria-label="{title}">'
+        f"<title>{title}</title>{''.join(parts)}</svg>"
+    )
+
+
+@dataclass(frozen=True)
+class _Frame:
+    start: float
+    end: float
+    low: float
+    high: float
+
+    def x(self, time: float) -> float:
+        share = (min(max(time, self.start), self.end) - self.start) / (self.end - self.start)
+        return LEFT + share * (WIDTH - LEFT - RIGHT)
+
+    def y(self, value: float) -> float:
+        return TOP + (self.high - value) / (self.high - self.low) * (HEIGHT - TOP - BOTTOM)
+
+
+def _band(frame: _Frame, start: float, end: float, kind: str) -> str:
+    left, right = frame.x(start), frame.x(end)
+    return (
+        f'<rect class="{escape(kind)}" x="{left:.1f}" y="{TOP}" width="{right - left:.1f}" '
+        f'height="{HEIGHT - TOP - BOTTOM}"/>'
+    )
+
+
+def _value_axis(frame: _Frame, unit: str) -> list[str]:
+    step = round_step(frame.high - frame.low)
+    decimals = max(0, -math.floor(math.log10(step) + 1e-9))
+    parts = []
+    for k in range(math.ceil(frame.low / step), math.floor(frame.high / step) + 1):
+        y = frame.y(k * step)
+        parts.append(f'<path class="grid" d="M{LEFT} {y:.1f}H{WIDTH - RIGHT}"/>')
+        parts.append(f'<text class="end" x="{LEFT - 6}" y="{y + 4:.1f}">{k * step:.{decimals}f}</text>')
+    middle = TOP + (HEIGHT - TOP - BOTTOM) / 2.0
+    parts.append(f'<text class="middle" transform="translate(13 {middle}) rotate(-90)">{escape(unit)}</text>')
+    return parts
+
+
+def _time_axis(frame: _Frame) -> list[str]:
+    step = time_step((frame.end - frame.start) / 1000.0) * 1000
+    parts = [f'<path class="axis" d="M{LEFT} {TOP}V{HEIGHT - BOTTOM}H{WIDTH - RIGHT}"/>']
+    day = ""
+    for time in range(math.ceil(frame.start / step) * step, math.floor(frame.end) + 1, step):
+        at, x = moment(time * 1000), frame.x(time)
+        new = f"{at:%Y-%m-%d}"
+        parts.append(f'<path class="axis" d="M{x:.1f} {HEIGHT - BOTTOM}v4"/>')
+        parts.append(f'<text class="middle" x="{x:.1f}" y="{HEIGHT - BOTTOM + 16}">{at:%H:%M}</text>')
+        if new != day:
+            parts.append(f'<text class="middle" x="{x:.1f}" y="{HEIGHT - 4}">{new} UTC</text>')
+            day = new
+    return parts
+
+
+def _course(frame: _Frame, course: Course) -> str:
+    pieces: list[str] = []
+    pen = False
+    for time, value in zip(course.x, course.y, strict=True):
+        if time is None or value is None or not frame.start <= time <= frame.end:
+            pen = False
+            continue
+        pieces.append(f"{'L' if pen else 'M'}{frame.x(time):.1f} {frame.y(value):.1f}")
+        pen = True
+    return f'<path class="{escape(course.kind)}" d="{"".join(pieces)}"/>'
+
+
+def course_of(kind: str, columns: dict[str, list[Any]]) -> Course:
+    """A course from a chart's columns."""
+    return Course(kind, columns["x"], columns["value"])

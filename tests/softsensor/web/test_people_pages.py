@@ -1,0 +1,188 @@
+"""Putting a sensor back, leaving one out, letting tests rest: on the page, on record, on the trail, or refused in words."""
+
+from __future__ import annotations
+
+import json
+from typing import Any
+from urllib.parse import quote
+
+import pytest
+from browser.recorded_unit import FLAG_ID, HOUR, MINUTE, NOW, OLD_FLAG_ID, UNIT
+
+from softsensor.records import decisions, reader
+from softsensor.records.decisions import LeftOut, Outcome
+from softsensor.records.engine import Database
+
+FLAG = f"/units/{UNIT}/flag?id={quote(FLAG_ID)}"
+PUT_BACK = f"/units/{UNIT}/flag/put-back?id={quote(FLAG_ID)}"
+SENSOR, TESTS = f"/units/{UNIT}/sensor?tag=TI2101B", f"/units/{UNIT}/tests"
+LEAVE_OUT, END_EARLY = (f"/units/{UNIT}/sensor/{act}?tag=TI2101B" for act in ("leave-out", "put-back"))
+REST, GO_ON = f"{TESTS}/rest", f"{TESTS}/go-on"
+PERSON = {"actor": "A. Müller", "reason": "new element"}
+CALIBRATED = {"finding": "confirmed", "as_found": "1.2", "as_left": "-0.03", **PERSON}
+
+
+def put_left_out(database: Database, until_us: int | None = None, by_person: bool = False) -> None:
+    row = LeftOut("TI2101B", NOW - HOUR, until_us, by_person)
+    with database.write() as connection:
+        decisions.store_left_out(connection, 1, [row])
+
+
+def settle(database: Database, until_us: int | None) -> None:
+    """What the service puts on record when a cycle takes the decisions that wait."""
+    for item in decisions.waiting_decisions(database, 1):
+        with database.write() as connection:
+            decisions.settle_decision(connection, item.id, Outcome(2880, NOW, until_us, ""))
+
+
+def entries(database: Database) -> list[Any]:
+    return reader.audit_entries(database, limit=1000)
+
+
+def test_a_left_out_sensor_is_put_back_with_what_was_found(recorded: Database, asker: Any) -> None:
+    put_left_out(recorded)
+    for page in (FLAG, SENSOR):
+        assert f'href="{PUT_BACK}">Put TI2101B back</a>' in asker.get(page).text
+    answer = asker.post(PUT_BACK, {"token": asker.token(PUT_BACK), **CALIBRATED})
+    assert (answer.status_code, answer.headers["location"]) == (303, FLAG)
+    flag, _ = reader.flag_with_comments(recorded, FLAG_ID)
+    assert (flag.finding, flag.finding_by, flag.as_found, flag.as_left) == (
+        "confirmed",
+        "A. Müller",
+        1.2,
+        -0.03,
+    )
+    (waiting,) = decisions.waiting_decisions(recorded, 1)
+    assert (waiting.act, waiting.tag, waiting.flag_id, waiting.actor) == (
+        "put back",
+        "TI2101B",
+        FLAG_ID,
+        "A. Müller",
+    )
+    assert [entry.action for entry in entries(recorded)[-2:]] == ["finding", "sensor put back"]
+    assert entries(recorded)[-1].object == f"sensor TI2101B of unit {UNIT}"
+    assert entries(recorded)[-1].reason == "new element"
+    page = asker.get(PUT_BACK).text
+    assert "is being put back" in page
+    assert "<form" not in page
+    again = asker.post(PUT_BACK, {"token": asker.token(FLAG), **CALIBRATED})
+    assert again.status_code == 400
+    assert "being put back already" in again.text
+
+
+def test_a_sensor_in_use_cannot_be_put_back(recorded: Database, asker: Any) -> None:
+    assert "nothing to put back" in asker.get(PUT_BACK).text
+    answer = asker.post(PUT_BACK, {"token": asker.token(FLAG), **CALIBRATED})
+    assert answer.status_code == 400
+    assert "TI2101B is in use" in answer.text
+    assert decisions.waiting_decisions(recorded, 1) == []
+
+
+def test_a_sensor_is_left_out_for_a_time_and_back_sooner(recorded: Database, asker: Any) -> None:
+    fields = {"token": asker.token(SENSOR), "time": "2.5 h", **PERSON}
+    answer = asker.post(LEAVE_OUT, fields)
+    assert (answer.status_code, answer.headers["location"]) == (303, SENSOR)
+    (waiting,) = decisions.waiting_decisions(recorded, 1)
+    assert (waiting.act, waiting.tag, waiting.seconds) == ("leave out", "TI2101B", 9000.0)
+    assert entries(recorded)[-1].action == "sensor left out"
+    assert json.loads(entries(recorded)[-1].after)["seconds"] == 9000.0
+    assert "Waits for the next cycle" in asker.get(SENSOR).text
+    settle(recorded, NOW + 2 * HOUR)
+    put_left_out(recorded, NOW + 2 * HOUR, by_person=True)
+    page = asker.get(SENSOR).text
+    assert "left out by a person" in page
+    assert "function check" in page
+    row = asker.get(f"/units/{UNIT}/part/sensors").text
+    assert '<b class="letter" aria-hidden="true">C</b> function check' in row
+    assert asker.post(END_EARLY, {"token": asker.token(SENSOR), **PERSON}).status_code == 303
+    (waiting,) = decisions.waiting_decisions(recorded, 1)
+    assert (waiting.act, waiting.flag_id) == ("put back", None)
+
+
+def test_the_tests_rest_with_who_why_and_until_when(recorded: Database, asker: Any) -> None:
+    fields = {"token": asker.token(TESTS), "occasion": "start-up", "time": "90 min", **PERSON}
+    assert asker.post(REST, fields).status_code == 303
+    assert entries(recorded)[-1].action == "tests put to rest"
+    settle(recorded, NOW + 90 * MINUTE)
+    page = asker.get(TESTS).text
+    assert "At rest until" in page
+    assert "start-up, A. Müller" in page
+    assert "new element" in page
+    state = asker.get(f"/units/{UNIT}/part/state").text
+    assert "at rest until 2026-12-01 16:30:00 UTC (start-up, A. Müller)" in state
+    assert asker.post(GO_ON, {"token": asker.token(TESTS), **PERSON}).status_code == 303
+    assert entries(recorded)[-1].action == "tests go on"
+    settle(recorded, None)
+    assert "The tests are running" in asker.get(TESTS).text
+    assert "running" in asker.get(f"/units/{UNIT}/part/state").text
+
+
+BAD = {
+    "no calibration": (
+        PUT_BACK,
+        PERSON | {"finding": "confirmed"},
+        "as found and as left; expected two numbers",
+    ),
+    "no finding": (PUT_BACK, PERSON, "expected one of: confirmed"),
+    "no name": (PUT_BACK, CALIBRATED | {"actor": ""}, "your name is missing"),
+    "no time": (LEAVE_OUT, PERSON, "expected a time such as"),
+    "no unit": (LEAVE_OUT, PERSON | {"time": "5"}, "expected a time such as"),
+    "nothing": (LEAVE_OUT, PERSON | {"time": "0 h"}, "expected a time such as"),
+    "too long": (LEAVE_OUT, PERSON | {"time": "31 d"}, "at most 30 d"),
+    "no reason": (LEAVE_OUT, {"time": "1 h", "actor": "A"}, "the reason is missing"),
+    "not left out": (END_EARLY, PERSON, "there is nothing to end"),
+    "occasion": (REST, PERSON | {"time": "1 h", "occasion": "tea"}, "expected one of: start-up, shutdown"),
+    "rest too long": (REST, PERSON | {"time": "5 week", "occasion": "shutdown"}, "at most 30 d"),
+    "not at rest": (GO_ON, PERSON, "there is nothing to end"),
+}
+
+
+@pytest.mark.parametrize("case", BAD)
+def test_what_cannot_be_taken_is_told_and_changes_nothing(recorded: Database, asker: Any, case: str) -> None:
+    put_left_out(recorded)
+    address, fields, expected = BAD[case]
+    before = len(entries(recorded))
+    answer = asker.post(address, {"token": asker.token(TESTS), **fields})
+    assert answer.status_code == 400
+    assert expected in answer.text
+    assert len(entries(recorded)) == before
+    assert decisions.waiting_decisions(recorded, 1) == []
+
+
+FORMS = {
+    PUT_BACK: CALIBRATED,
+    LEAVE_OUT: PERSON | {"time": "1 h"},
+    END_EARLY: PERSON,
+    REST: PERSON | {"time": "1 h", "occasion": "start-up"},
+    GO_ON: PERSON,
+}
+
+
+@pytest.mark.parametrize("address", FORMS)
+@pytest.mark.parametrize(
+    ("origin", "token"), [("http://evil.test", None), (None, None), ("http://plant.test", "0" * 64)]
+)
+def test_a_form_from_elsewhere_changes_nothing(
+    recorded: Database, asker: Any, address: str, origin: str | None, token: str | None
+) -> None:
+    put_left_out(recorded)
+    before = len(entries(recorded))
+    good = asker.token(TESTS)
+    answer = asker.post(address, {**FORMS[address], "token": token or good}, origin=origin)
+    assert answer.status_code == 403
+    assert len(entries(recorded)) == before
+
+
+@pytest.mark.parametrize(
+    "address",
+    [
+        f"/units/{UNIT}/sensor?tag=TI9",
+        f"/units/{UNIT}/sensor?tag=FI2103",
+        "/units/X-1/tests",
+        f"/units/{UNIT}/flag/put-back?id=gone",
+        f"/units/{UNIT}/flag/sheet?id=gone",
+        f"/units/X-1/flag/sheet?id={quote(OLD_FLAG_ID)}",
+    ],
+)
+def test_what_is_not_there_is_said(asker: Any, address: str) -> None:
+    assert asker.get(address).status_code == 404
