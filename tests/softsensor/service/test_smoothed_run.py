@@ -2,13 +2,17 @@
 
 from __future__ import annotations
 
+import asyncio
 import sys
 from collections.abc import Callable, Sequence
 from pathlib import Path
+from typing import Any
 
 import numpy as np
 import pandas as pd
 import pytest
+from independent.batch_conditioning import given_everything
+from independent.dense_filter import LabRow
 from independent.random_models import random_unit
 from independent.recorded_runs import Run, late_labs, record
 from independent.replaying import design_of, readings_of
@@ -16,7 +20,9 @@ from independent.replaying import design_of, readings_of
 import softsensor
 from plant_models.library import published_model_path
 from softsensor.cli.main import main
+from softsensor.cycle import UnitDesign
 from softsensor.errors import ReplayError
+from softsensor.recorded_data import prepare_from_records
 from softsensor.service.replay import Replay
 from softsensor.service.smoothed_run import Shelf, SmoothedRun
 
@@ -128,3 +134,28 @@ def test_a_folder_that_cannot_be_written_is_told_in_one_line(
     with pytest.raises(ReplayError, match=r"temporary file of the smoother: "):
         shelf.put((np.zeros(100),))
     shelf.close()
+
+
+def test_recorded_cycles_are_smoothed_as_they_were_run(
+    design: UnitDesign, new_bench: Any, story: Any, sqlite_url: str
+) -> None:
+    """A live run with gaps, a sensor left out and late results, from its records, against conditioning on everything."""
+    asyncio.run(new_bench(design, sqlite_url).run(story, 0, 400, cut=False))
+    running, _, _ = prepare_from_records(design.model, sqlite_url, "R-1", None, None)
+    with SmoothedRun(running.design) as smoothing:
+        stretches = list(smoothing.keeping(running.stretches()))
+        parts = list(smoothing.cycles(running))
+    y = np.concatenate([stretch.results.reading for stretch in stretches])
+    (exclusion,) = running.run.state.book.exclusions
+    y[exclusion.since : exclusion.until, exclusion.sensor] = np.nan
+    u = np.concatenate([stretch.readings.u for stretch in stretches])
+    uncertain = np.concatenate([stretch.readings.y_quality == 1 for stretch in stretches])
+    counted = [
+        LabRow(lab.cycle, 0, lab.estimate, lab.value, lab.variance**0.5) for lab in running.counted_labs
+    ]
+    assert len(counted) == 3
+    value, sd = given_everything(design.model.spec, u, y, uncertain, counted)
+    rest = np.array([item.operating_point for item in design.model.spec.estimates])
+    found = np.concatenate([part.estimate for part in parts])
+    assert np.abs(found - value).max() <= 1e-8 * np.abs(value - rest).max()
+    np.testing.assert_allclose(np.concatenate([part.sd for part in parts]), sd, rtol=1e-8)
