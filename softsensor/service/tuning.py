@@ -33,7 +33,7 @@ from softsensor.estimation.noise_tuning.interval_scale import (
 )
 from softsensor.estimation.noise_tuning.maximum_likelihood import Maximum, NoiseFit, maximise
 from softsensor.estimation.noise_tuning.parameters import NoiseParameter, noise_parameters
-from softsensor.estimation.noise_tuning.separability import certainty, interval
+from softsensor.estimation.noise_tuning.separability import alike, certainty, interval, too_fast
 from softsensor.readings_of_cycle import CycleQuality, CycleReadings
 from softsensor.service.assembly import assemble_history
 from softsensor.service.replay import Replay, parts_of
@@ -81,7 +81,9 @@ def tune(
     parameters = noise_parameters(model.spec, keep)
     data = _data(design_unit(model), history)
     report = _blank(model.spec, data)
-    refusals = _too_short(report) or _archive(model.spec, data)
+    refusals = _too_short(report) or (
+        _archive(model.spec, data) + alike(model.spec, model.stochastic, parameters)
+    )
     if refusals:
         return replace(report, refusals=refusals)
     fit = NoiseFit(model, parameters, data.seen.between(0, data.split), data.lead_in)
@@ -94,7 +96,7 @@ def tune(
         log_likelihood=(best.log_likelihood_before, best.log_likelihood),
     )
     fitted = design_unit(build_plant_model(fit.spec_at(np.log(best.values))))
-    refusals = known.objections + _filtered(fitted, data)
+    refusals = known.objections + too_fast(best, model.spec.sample_time) + _filtered(fitted, data)
     if refusals:
         return replace(report, refusals=refusals)
     return _judged(data, report, labs)

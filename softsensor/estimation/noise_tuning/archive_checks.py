@@ -18,9 +18,11 @@ ALLOWANCE = 0.1
 """Share of repeats, or of points in line, beyond what resolution explains, that is let pass."""
 RESOLUTION_SLACK = 2.5
 """In steps of the resolution: what rounding of three values can make of a point in line."""
-FLAT = 0.5
+FLAT = 0.85
 """Smallest ratio of an innovation's power in the highest quarter of frequencies to that in the quarter around the
-middle; 1 for white noise, and above it where the model lags. Below: averaged or filtered before it was recorded."""
+middle; 1 for white noise, and no less where the model is merely slow to follow. Below, beyond chance (SURE standard
+errors): averaged or filtered before it was recorded."""
+SURE = 3.0
 
 
 def resolution(values: Floats) -> float:
@@ -101,7 +103,7 @@ def high_share(innovation: Floats) -> tuple[float, float]:
 def objection_to_spectrum(innovation: Floats) -> str | None:
     """Why innovations (N,) of the fitted model look filtered, or None."""
     ratio, log_se = high_share(innovation)
-    if math.isnan(ratio) or ratio <= 0.0 or math.log(ratio) > math.log(FLAT) - 2.0 * log_se:
+    if math.isnan(ratio) or ratio <= 0.0 or math.log(ratio) >= min(math.log(FLAT), -SURE * log_se):
         return None
     return (
         f"its innovations have {ratio:.2f} times as much power at the highest frequencies as at the middle ones, where "

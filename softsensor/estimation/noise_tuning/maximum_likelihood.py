@@ -37,7 +37,7 @@ REACH = 1e4
 """A parameter is looked for within this factor of its value in the file."""
 LONGEST_STEP = 1.5
 """In any logarithm, at once: a factor of 4.5."""
-ENOUGH = 1e-7
+ENOUGH = 1e-9
 """Gain of log L below which a step is not worth taking: far below what is significant (1.92)."""
 MOST_STEPS = 60
 DIFFERENCE = 1e-4

@@ -6,8 +6,11 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from plant_models.plant_model import StochasticPart
+from plant_models.specification import UnitSpec
 from softsensor.estimation.kernel import Floats
 from softsensor.estimation.noise_tuning.maximum_likelihood import Maximum
+from softsensor.estimation.noise_tuning.parameters import NoiseParameter
 
 NORMAL_95 = 1.959963984540054
 LARGEST_SD = 0.5
@@ -15,6 +18,10 @@ LARGEST_SD = 0.5
 LARGEST_CORRELATION = 0.99
 UNKNOWN_DIRECTION = 3.0
 """Standard deviation of a combination of logarithms from which on the information counts as singular."""
+RESPONSE = 300
+"""Samples over which responses are compared."""
+ALIKE = 1.0 - 1e-9
+"""Cosine between two responses from which on they are the same."""
 SHARE = 0.3
 """Smallest component by which a parameter belongs to such a combination."""
 
@@ -64,6 +71,51 @@ def certainty(fit: Maximum) -> Certainty:
             if abs(correlation[j, other]) > LARGEST_CORRELATION:
                 found.append(_cannot_tell([names[other], name]))
     return Certainty(log_sd, tuple(dict.fromkeys(found)))
+
+
+def alike(spec: UnitSpec, part: StochasticPart, parameters: tuple[NoiseParameter, ...]) -> tuple[str, ...]:
+    """A line for each two disturbances of one kind that reach the sensors in the same way, but for a factor.
+
+    Whatever the readings, they then cannot tell which is which. Compared are the responses of all sensors to a step of
+    the disturbance, over RESPONSE samples.
+    """
+    fitted = [item.index for item in parameters if item.key in ("sd", "walk_sd")]
+    responses = {index: _response(spec, part, index) for index in fitted}
+    found = []
+    for place, one in enumerate(fitted):
+        for other in fitted[place + 1 :]:
+            first, second = spec.disturbances[one], spec.disturbances[other]
+            size = np.linalg.norm(responses[one]) * np.linalg.norm(responses[other])
+            same_kind = (first.sd is None) == (second.sd is None)
+            if same_kind and size > 0.0 and abs(np.sum(responses[one] * responses[other])) > ALIKE * size:
+                found.append(
+                    f"{first.name} and {second.name}: they reach the sensors in the same way, so that no "
+                    "readings can tell them apart"
+                )
+    return tuple(found)
+
+
+def _response(spec: UnitSpec, part: StochasticPart, disturbance: int) -> Floats:
+    """Response of the sensors (RESPONSE, m) to a unit step of a disturbance."""
+    A, at = part.A.copy(), part.disturbance_index[disturbance]
+    A[at, at] = 1.0
+    x, C = np.zeros(len(part.q)), part.C[: len(spec.sensors)]
+    x[at] = 1.0
+    out = np.zeros((RESPONSE, len(spec.sensors)))
+    for k in range(RESPONSE):
+        out[k] = C @ x
+        x = A @ x
+    return out
+
+
+def too_fast(fit: Maximum, sample_time: float) -> tuple[str, ...]:
+    """A line for each time constant that was fitted as shorter than a sample: such a disturbance looks like noise."""
+    return tuple(
+        f"{item.name}: fitted as {value:.3g} s, shorter than the sample time; such a disturbance cannot be told from the "
+        "noise of the sensors"
+        for item, value in zip(fit.parameters, fit.values, strict=True)
+        if item.key == "time_constant" and value < sample_time
+    )
 
 
 def _cannot_tell(names: list[str]) -> str:
