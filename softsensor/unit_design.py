@@ -71,6 +71,7 @@ def fault_test_design(model: PlantModel, kernel: Kernel) -> TestDesign:
         SPIKE,
         np.full(kernel.n_sensors, lost, dtype=np.int64),
         0.01 / cycles,
+        np.array([item.noise_sd for item in model.spec.sensors]),
         LOOK_EVERY,
     )
 

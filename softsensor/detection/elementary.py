@@ -35,6 +35,19 @@ def exponential(x: float) -> float:
 
 
 @njit(cache=True)
+def error_function(x: float) -> float:
+    """erf x for x >= 0, to 1.5e-7 (Abramowitz & Stegun, Handbook of Mathematical Functions, 7.1.26; from memory,
+    checked against math.erf in the tests).
+
+    >>> abs(error_function(0.5) - math.erf(0.5)) < 2e-7
+    True
+    """
+    t = 1.0 / (1.0 + 0.3275911 * x)
+    tail = t * (0.254829592 + t * (-0.284496736 + t * (1.421413741 + t * (-1.453152027 + t * 1.061405429))))
+    return 1.0 - tail * exponential(-x * x)
+
+
+@njit(cache=True)
 def logarithm(x: float) -> float:
     """ln x for x > 0, by 2 artanh((m - 1)/(m + 1)) on the mantissa.
 

@@ -12,6 +12,7 @@ import numpy as np
 from numba import njit
 
 from softsensor.detection.cusum import cusum_step
+from softsensor.detection.elementary import error_function
 from softsensor.estimation.kernel import Floats, Ints
 
 SHIFT_UP = 1
@@ -32,6 +33,8 @@ SETTLING_SHARE = 3
 """After inputs have been missing the tests rest until this many times that long has passed since they went missing: what
 the inputs did meanwhile is not in the prediction."""
 
+SQRT_TWO = 1.4142135623730951
+
 WARM_UP = 200
 """Readings before the share of equal neighbours says anything about a sensor's resolution."""
 
@@ -48,6 +51,7 @@ class TestDesign(NamedTuple):
     """Cycles without a usable reading after which a sensor is lost."""
     stuck_probability: float
     """A run of equal readings less probable than this is a stuck sensor."""
+    noise_sd: Floats
     look_every: int
     """While a test is up, the diagnosis looks again every so many cycles."""
 
@@ -75,6 +79,9 @@ class TestState(NamedTuple):
     missing: Ints
     lost: Ints
     last_z: Floats
+    older_z: Floats
+    resolution: Floats
+    """Smallest change between two readings seen so far; infinite before the first."""
     ring: Floats
     valid_from: Ints
     """(1,) First cycle whose innovations the diagnosis may use."""
@@ -114,6 +121,8 @@ def initial_tests(n_sensors: int, window: int) -> TestState:
         ints(),
         ints(),
         floats(),
+        floats(),
+        floats(np.inf),
         np.full((window, n_sensors), np.nan),
         np.zeros(1, dtype=np.int64),
         np.zeros(1, dtype=np.int64),
@@ -146,11 +155,16 @@ def _test_shift(design: TestDesign, state: TestState, i: int, z: float) -> int:
 
 @njit(cache=True)
 def _test_stuck(design: TestDesign, state: TestState, i: int, value: float) -> int:
-    """A run of equal readings is judged by how often this very sensor repeats itself: its own resolution."""
+    """A run of equal readings is judged by how often this very sensor repeats itself, and by its resolution.
+
+    However slowly the process moves, noise of sd s leaves a reading in a cell of width q with probability erf(q / (2
+    sqrt2 s)) at most. The cell is taken twice as wide, for noise that is less than the model file says.
+    """
     event = 0
     if value == state.last_value[i]:
         state.repeats[i] += 1
-        share = state.equal[i] / (state.equal[i] + state.changes[i])
+        cell = error_function(state.resolution[i] / (SQRT_TWO * design.noise_sd[i]))
+        share = max(state.equal[i] / (state.equal[i] + state.changes[i]), cell)
         state.run_probability[i] *= share
         improbable = state.run_probability[i] < design.stuck_probability
         warm = state.equal[i] + state.changes[i] + state.repeats[i] >= WARM_UP
@@ -163,6 +177,8 @@ def _test_stuck(design: TestDesign, state: TestState, i: int, value: float) -> i
             event = STUCK_ENDED
         else:
             state.equal[i] += state.repeats[i]
+        if state.last_value[i] == state.last_value[i]:
+            state.resolution[i] = min(state.resolution[i], abs(value - state.last_value[i]))
         state.changes[i] += 1
         state.repeats[i] = 0
         state.run_probability[i] = 1.0
@@ -184,10 +200,18 @@ def _test_lost(design: TestDesign, state: TestState, i: int, missing: bool) -> i
 
 @njit(cache=True)
 def _test_spike(design: TestDesign, state: TestState, i: int, z: float) -> int:
-    """One reading far out with its neighbours in place, seen one cycle later."""
-    before = state.last_z[i]
-    state.last_z[i] = z
-    return SPIKE if abs(before) > design.spike and abs(z) < 0.5 * design.spike else 0
+    """One reading far out with its neighbours in place, seen one cycle later; the diagnosis does not get to see it.
+
+    In place: the one before within half the limit, the one after within half the limit or a third of the spike, which
+    the filter has half followed.
+    """
+    older, before = state.older_z[i], state.last_z[i]
+    state.older_z[i], state.last_z[i] = before, z
+    back = max(0.5 * design.spike, abs(before) / 3.0)
+    if abs(before) > design.spike and abs(older) < 0.5 * design.spike and abs(z) < back:
+        state.ring[(state.cycle[0] - 1) % state.ring.shape[0], i] = np.nan
+        return SPIKE
+    return 0
 
 
 @njit(cache=True)
@@ -209,6 +233,7 @@ def _rest(state: TestState, i: int) -> None:
     state.low[i] = 0.0
     state.up[i] = 0
     state.last_z[i] = 0.0
+    state.older_z[i] = 0.0
 
 
 @njit(cache=True)

@@ -160,7 +160,7 @@ def ended(design: DetectionDesign, book: FlagBook, tests: TestState, cycle: int,
         text = f"{book.rest.occasion}: the tests go on"
         outcome = _noted(outcome, replace(outcome.book, rest=None), time, "suppression", text)
     if outcome.notes:
-        tests.high[:] = tests.low[:] = tests.last_z[:] = 0.0
+        tests.high[:] = tests.low[:] = tests.last_z[:] = tests.older_z[:] = 0.0
         tests.up[:] = 0
         tests.down_since[:] = cycle
         tests.valid_from[0] = cycle

@@ -13,6 +13,7 @@ DESIGN = fault_tests.TestDesign(
     spike=6.0,
     lost_after=np.full(2, 10, dtype=np.int64),
     stuck_probability=1e-8,
+    noise_sd=np.ones(2),
     look_every=6,
 )
 
