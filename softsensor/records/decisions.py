@@ -6,10 +6,11 @@ from collections.abc import Sequence
 from dataclasses import asdict, dataclass
 from typing import Any
 
-from sqlalchemy import Connection, Select, select, update
+from sqlalchemy import Connection, Select, or_, select, update
 
 from softsensor.errors import RecordsError
 from softsensor.records.engine import Database
+from softsensor.records.happenings import Event, record_event
 from softsensor.records.inserting import insert_or_replace
 from softsensor.records.tables import decisions, left_out
 
@@ -76,6 +77,18 @@ def settle_decision(connection: Connection, decision_id: int, outcome: Outcome) 
 def store_left_out(connection: Connection, unit_id: int, rows: Sequence[LeftOut]) -> None:
     """Put on record which sensors are left out since when; what is there already gets its new end."""
     insert_or_replace(connection, left_out, [{"unit_id": unit_id, **asdict(row)} for row in rows])
+
+
+def begin_anew(connection: Connection, unit_id: int, time_us: int) -> None:
+    """A run that remembers nothing of the one before uses every sensor and tests again: on record, with an event."""
+    out = update(left_out).where(left_out.c.unit_id == unit_id, left_out.c.since_us < time_us)
+    out = out.where(or_(left_out.c.until_us.is_(None), left_out.c.until_us > time_us))
+    rest = update(decisions).where(decisions.c.unit_id == unit_id, decisions.c.until_us > time_us)
+    changed = connection.execute(out.values(until_us=time_us)).rowcount
+    changed += connection.execute(rest.values(until_us=time_us)).rowcount
+    if changed:
+        text = "the run begins anew: what was left out before counts again, and tests that rested run"
+        record_event(connection, Event(unit_id, time_us, "put back", text, key=f"{unit_id} {time_us} anew"))
 
 
 def waiting_decisions(database: Database, unit_id: int) -> list[StoredDecision]:

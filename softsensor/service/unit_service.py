@@ -16,7 +16,7 @@ from softsensor.estimation.lab_results import LabArrival
 from softsensor.estimation.past import CHUNK
 from softsensor.readings_of_cycle import CycleQuality, CycleReadings
 from softsensor.records import blocks, storing
-from softsensor.records.decisions import waiting_decisions
+from softsensor.records.decisions import begin_anew, waiting_decisions
 from softsensor.records.engine import Database
 from softsensor.records.reader import lab_results_of
 from softsensor.records.writer import RecordsWriter, WriterState
@@ -232,6 +232,9 @@ class UnitService:
         self._seen_labs = {
             (lab.tag, lab.sampled_us, lab.value) for lab in lab_results_of(self._database, unit_id)
         }
+        if not self.run.started:
+            again_from = int(seen.readings.times[-1]) + self._sample_us
+            self._writer.submit(begin_anew, unit_id, again_from)
         first, again = self.run.state.next_cycle, 0
         for part, came in recorded_cycles(self._database, unit_id, first, seen.cycle):
             self._remember(came)

@@ -17,7 +17,7 @@ from connectors.memory import MemorySource
 from connectors.readings import Quality, Reading
 from softsensor.cycle import UnitDesign
 from softsensor.recorded_data import prepare_from_records
-from softsensor.records import audit, changes, reader, series
+from softsensor.records import audit, changes, decisions, reader, series
 from softsensor.records.engine import Database, open_database
 from softsensor.records.upgrade import upgrade_database
 from softsensor.records.writer import RecordsWriter
@@ -271,3 +271,36 @@ def test_the_database_away_and_back(
     assert replayed_digest(design, url) == recorded[-1]
     with open_database(url) as database:
         assert audit.verify(database).whole
+
+
+def test_what_people_decide_about_sensors_and_tests_reaches_a_running_unit_once_and_is_replayed(
+    at_work: Any, design: UnitDesign
+) -> None:
+    async def story() -> list[Step]:
+        async with running(at_work, FollowingClock(1000.0)) as site:
+            await site.begin()
+            await site.run_to(9)
+            unit = site.unit.identity.unit_id
+            changes.leave_out(site.database, unit, "TI1B", 200.0, "a fitter", "cleaning")
+            changes.rest_tests(site.database, unit, "grade change", 100.0, "an operator", "grade 7")
+            last = 10
+            while sum(len(step.taken) for step in site.steps.taken) < 2:
+                await site.run_to(last)
+                last += 1
+                assert last < 5000
+            await site.run_to(last + 25)
+            site.writer.flush(DEADLINE)
+            assert decisions.waiting_decisions(site.database, unit) == []
+            told = [item.body["text"] for item in site.news if item.topic == "event"]
+            assert [text.split(";")[-1].strip() for text in told if "until" in text] == [
+                "a fitter: cleaning",
+                "an operator: grade 7",
+            ]
+            assert {"grade change: the tests go on", "TI1B counts again"} <= set(told)
+            return list(site.steps.taken)
+
+    steps = asyncio.run(story())
+    assert [item.decision.act for step in steps for item in step.taken] == ["leave out", "rest"]
+    at = next(step.results.first for step in steps if step.taken)
+    assert [step.results.first for step in steps if step.results.left_out[0, 1]] == list(range(at, at + 20))
+    assert replayed_digest(design, at_work.url) == digests(at_work.url)[-1]

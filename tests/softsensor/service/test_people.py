@@ -15,6 +15,7 @@ from connectors.readings import Quality
 from softsensor.alarms.sensor_status import SensorStatus, sensor_health
 from softsensor.cycle import UnitDesign
 from softsensor.detection.people import Decision
+from softsensor.errors import RecordsError
 from softsensor.estimation.lab_results import LabArrival
 from softsensor.recorded_data import prepare_from_records
 from softsensor.records import changes, decisions, reader, series
@@ -331,3 +332,72 @@ def test_what_came_before_a_cycle_survives_its_record() -> None:
     assert unpack_decisions(pack_decisions(came[1:])) == came[1:]
     older = b'{"laboratory":[[0,"AL1",5,6,"0x1.0p+0",0.0,null]]}'
     assert unpack_decisions(older) == [LabArrival(0, "AL1", 5, 6, 1.0, 0.0, None)]
+
+
+def test_another_revision_begins_anew_and_the_records_say_so(
+    design: UnitDesign, other_design: UnitDesign, new_bench: Any, story: Any, sqlite_url: str
+) -> None:
+    def both(database: Database, unit: int) -> None:
+        leave_out(database, unit)
+        rest(database, unit)
+
+    first = PeopleBench(new_bench(design, sqlite_url), {120: both})
+    asyncio.run(first.run(story, 0, 130, cut=False))
+    asyncio.run(new_bench(other_design, sqlite_url).run(story, 130, 140, cut=False))
+    with open_database(sqlite_url) as database:
+        begun = START + 130 * STEP
+        by_people = [item for item in decisions.left_out_of(database, 1) if item.by_person]
+        assert [item.until_us for item in by_people] == [begun]
+        assert decisions.rest_at(database, 1, begun) is None
+        (told,) = [item.event for item in reader.events_since(database) if "begins anew" in item.event.text]
+    assert told.time_us == begun
+
+
+def test_a_put_back_needs_a_left_out_sensor_and_both_errors(
+    design: UnitDesign, new_bench: Any, mended: Any, sqlite_url: str
+) -> None:
+    refused: list[str] = []
+
+    def early(database: Database, unit: int) -> None:
+        (flag,) = reader.flags_of(database, unit)
+        for given in ({"as_found": 1.0}, {"finding": "maybe"}, {"as_found": float("nan"), "as_left": 0.0}):
+            with pytest.raises(RecordsError) as raised:
+                changes.put_back(database, flag.id, "A", "x", **given)
+            refused.append(str(raised.value))
+        changes.put_back(database, flag.id, "A", "x", finding="process change")
+        with pytest.raises(RecordsError) as raised:
+            changes.put_back(database, flag.id, "A", "x", finding="undecided")
+        refused.append(str(raised.value))
+
+    def late(database: Database, unit: int) -> None:
+        with pytest.raises(RecordsError) as raised:
+            put_back(database, unit)
+        refused.append(str(raised.value))
+
+    bench = PeopleBench(new_bench(design, sqlite_url), {322: early, 330: late})
+    asyncio.run(bench.run(mended, 0, 335, cut=False))
+    assert [text.split(":")[0] for text in refused] == [
+        "a confirmed finding needs the errors as found and as left",
+        "a finding cannot be 'maybe'; expected one of",
+        "as found cannot be nan; expected a number in the unit of the tag",
+        "TI1B is being put back already",
+        "TI1B is not left out",
+    ]
+    with open_database(sqlite_url) as database:
+        (flag,) = reader.flags_of(database)
+        assert (flag.finding, flag.as_found) == ("process change", None)
+
+
+@pytest.mark.parametrize("seconds", [0.0, -1.0, float("nan"), 30.1 * 86400.0])
+def test_a_time_limit_is_needed_and_has_an_end(database: Database, seconds: float) -> None:
+    with pytest.raises(RecordsError, match="expected more than none, at most 30 days"):
+        changes.leave_out(database, 1, "TI1", seconds, "A", "x")
+    with pytest.raises(RecordsError, match="expected more than none, at most 30 days"):
+        changes.rest_tests(database, 1, "shutdown", seconds, "A", "x")
+    with pytest.raises(RecordsError, match="there is no unit 7"):
+        changes.end_rest(database, 7, "A", "x")
+    with pytest.raises(RecordsError, match="the occasion cannot be 'tea'"):
+        changes.rest_tests(database, 1, "tea", 60.0, "A", "x")
+    with pytest.raises(RecordsError, match="a reason is missing"):
+        changes.leave_out(database, 1, "TI1", 60.0, "A", " ")
+    assert reader.audit_entries(database) == []
