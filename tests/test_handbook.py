@@ -24,9 +24,11 @@ from softsensor import cycle, unit_design
 from softsensor.detection import diagnosis, fault_tests, follow_up
 from softsensor.errors import SiteFileError
 from softsensor.estimation import lab_results
+from softsensor.records import changes, tables
 from softsensor.service import live, replay, result_tables
 from softsensor.service.model_report import model_report
 from softsensor.service.site_file import read_site_file
+from softsensor.web import flag_sheet
 
 HANDBOOK = resources.files("softsensor.handbook")
 CHAPTERS = {
@@ -35,6 +37,7 @@ CHAPTERS = {
     if file.name.endswith(".md")
 }
 README = (Path(__file__).parents[1] / "README.md").read_text(encoding="utf-8")
+AFTER = CHAPTERS["08-after-a-flag.md"]
 REFERENCE, METHOD = CHAPTERS["03-model-file.md"], CHAPTERS["04-method.md"]
 FILES, FIRST_HOUR = CHAPTERS["05-files-and-results.md"], CHAPTERS["02-first-hour.md"]
 ENVIRONMENT = {"PLANT_PASSWORD": "secret"}
@@ -125,8 +128,10 @@ def with_line_in(text: str, heading: str, line: str) -> str:
     return text.replace(heading, f"{heading}\n{line}", 1)
 
 
-def test_there_are_six_chapters_that_name_each_other_rightly() -> None:
-    assert [name[:2] for name in CHAPTERS] == ["01", "02", "03", "04", "05", "06"]
+def test_chapters_have_numbers_of_their_own_and_name_each_other_rightly() -> None:
+    numbers = [int(name[:2]) for name in CHAPTERS]
+    assert numbers == sorted(set(numbers))
+    assert {1, 2, 3, 4, 5, 6, 8} <= set(numbers)
     for name, text in CHAPTERS.items():
         assert text.startswith(f"# {int(name[:2])}. ")
         for target in re.findall(r"\]\(([^)#]+)\)", text):
@@ -314,6 +319,12 @@ LIMITS = [
     (METHOD, f"beyond {unit_design.SPIKE:g} standard deviations"),
     (METHOD, f"within the last {unit_design.WINDOW} cycles"),
     (METHOD, f"after {follow_up.PATIENCE} cycles"),
+    (AFTER, f"such as 90 min or 2 d, at most {changes.LONGEST_S / 86400.0:g} days"),
+    (AFTER, f"for how long (at most {changes.LONGEST_S / 86400.0:g} days)"),
+    (AFTER, f"say what the plant does ({', '.join(changes.OCCASIONS)})"),
+    (AFTER, f"looks for decisions every {live.DECISIONS_EVERY:g} s"),
+    (AFTER, f"{flag_sheet.NEAR:.0%} of the range below and above it".replace("%", " %")),
+    (AFTER, f"*{'*, *'.join(tables.FINDINGS[:3])}* or *{tables.FINDINGS[3]}*"),
 ]
 
 
