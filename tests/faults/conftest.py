@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import asyncio
 import socket
-import sys
 import time
 from collections.abc import AsyncIterator, Callable
 from contextlib import asynccontextmanager
@@ -13,6 +12,7 @@ from pathlib import Path
 
 import numpy as np
 import pytest
+from independent.small_unit import MODEL, command_line
 
 from connectors.opcua.analog_item import EngineeringUnit
 from connectors.opcua.tag_server import ServedTag, TagServer
@@ -23,58 +23,6 @@ STEP = 10_000_000
 SPEED = 240.0
 DEADLINE = 300.0
 """Seconds; the first start on a machine compiles."""
-
-MODEL = """
-[unit]
-name = "R-1"
-title = "A reactor"
-sample_time = "10 s"
-
-[[input]]
-tag = "FI1"
-unit = "m3/h"
-operating_point = 11.5
-range = [0.0, 20.0]
-
-[[sensor]]
-tag = "TI1"
-unit = "degC"
-operating_point = 92.4
-range = [0.0, 200.0]
-noise_sd = 0.15
-tolerance = 1.0
-
-[[estimate]]
-tag = "AY1"
-unit = "mol/L"
-operating_point = 1.32
-range = [0.0, 4.0]
-lab = { tag = "AL1", sd = 0.02 }
-
-[[disturbance]]
-name = "feed concentration"
-sd = 0.08
-time_constant = "1.5 h"
-
-[[transfer_function]]
-from = "FI1"
-to = "TI1"
-gain = -1.9
-time_constants = ["4.2 min"]
-dead_time = "0.55 min"
-
-[[transfer_function]]
-from = "feed concentration"
-to = "TI1"
-gain = 14.0
-time_constants = ["8 min"]
-
-[[transfer_function]]
-from = "feed concentration"
-to = "AY1"
-gain = 0.9
-time_constants = ["10 min"]
-"""
 
 
 def free_port() -> int:
@@ -116,10 +64,7 @@ class Plant:
     async def start(self, *arguments: str | Path) -> asyncio.subprocess.Process:
         """A softsensor command in a process of its own."""
         process = await asyncio.create_subprocess_exec(
-            sys.executable,
-            "-m",
-            "softsensor",
-            *map(str, arguments),
+            *command_line(*arguments),
             stdout=asyncio.subprocess.PIPE,
             stderr=asyncio.subprocess.PIPE,
         )
