@@ -9,7 +9,7 @@ from numba import njit
 
 from softsensor.detection.fault_tests import TestDesign, TestState, test_cycle
 from softsensor.estimation.input_driven import accept_inputs, advance_input_driven, input_driven_outputs
-from softsensor.estimation.kalman import correct, output_variance, predict, row_covariance, row_mean
+from softsensor.estimation.kalman import correct, predict_into, row_mean, row_variance, unless_rounding
 from softsensor.estimation.kernel import EstimatorState, Floats, Ints, Kernel
 
 UNSOUND = -1
@@ -78,11 +78,11 @@ def empty_outputs(cycles: int, kernel: Kernel, labs: int) -> BlockOutputs:
 
 @njit(cache=True)
 def _innovate(
-    kernel: Kernel, est: EstimatorState, base: Floats, k: int, data: BlockInputs, out: BlockOutputs, v: Floats
+    kernel: Kernel, x: Floats, P: Floats, base: Floats, k: int, data: BlockInputs, out: BlockOutputs
 ) -> None:
     for i in range(kernel.n_sensors):
-        variance = row_covariance(kernel, est.P, i, v) + kernel.r[i] * data.scale[k, i]
-        out.predicted[k, i] = base[i] + row_mean(kernel, est.x, i)
+        variance = row_variance(kernel, P, i) + kernel.r[i] * data.scale[k, i]
+        out.predicted[k, i] = base[i] + row_mean(kernel, x, i)
         out.innovation_sd[k, i] = np.sqrt(variance)
         if data.y[k, i] == data.y[k, i]:
             out.innovation[k, i] = data.y[k, i] - out.predicted[k, i]
@@ -91,7 +91,8 @@ def _innovate(
 @njit(cache=True)
 def _correct_all(
     kernel: Kernel,
-    est: EstimatorState,
+    x: Floats,
+    P: Floats,
     base: Floats,
     k: int,
     data: BlockInputs,
@@ -104,28 +105,28 @@ def _correct_all(
     first = lab
     while lab < len(data.lab_at) and data.lab_at[lab] == k:
         row = data.lab_row[lab]
-        variance = row_covariance(kernel, est.P, row, v) + data.lab_variance[lab]
-        out.lab_predicted[lab] = base[row] + row_mean(kernel, est.x, row)
+        variance = row_variance(kernel, P, row) + data.lab_variance[lab]
+        out.lab_predicted[lab] = base[row] + row_mean(kernel, x, row)
         out.lab_sd[lab] = np.sqrt(variance)
         lab += 1
     for i in range(kernel.n_sensors):
         if data.use[k, i] != 0 and data.y[k, i] == data.y[k, i]:
             deviation, r = data.y[k, i] - base[i], kernel.r[i] * data.scale[k, i]
-            if not correct(kernel, est.x, est.P, i, deviation, r, v, K):
+            if not correct(kernel, x, P, i, deviation, r, v, K):
                 return UNSOUND
     for e in range(first, lab):
         row = data.lab_row[e]
-        if not correct(kernel, est.x, est.P, row, data.lab_value[e] - base[row], data.lab_variance[e], v, K):
+        if not correct(kernel, x, P, row, data.lab_value[e] - base[row], data.lab_variance[e], v, K):
             return UNSOUND
     return lab
 
 
 @njit(cache=True)
-def _report(kernel: Kernel, est: EstimatorState, base: Floats, k: int, out: BlockOutputs, v: Floats) -> bool:
+def _report(kernel: Kernel, x: Floats, P: Floats, base: Floats, k: int, out: BlockOutputs) -> bool:
     for e in range(kernel.n_estimates):
         row = kernel.n_sensors + e
-        out.estimate[k, e] = base[row] + row_mean(kernel, est.x, row)
-        variance = output_variance(kernel, est.P, row, v)
+        out.estimate[k, e] = base[row] + row_mean(kernel, x, row)
+        variance = unless_rounding(kernel, P, row, row_variance(kernel, P, row))
         if not variance >= 0.0:
             return False
         out.estimate_sd[k, e] = np.sqrt(variance)
@@ -147,21 +148,23 @@ def run_block(
     ``est`` and ``tests`` are work arrays: they hold the state after the last cycle run.
     """
     n = len(kernel.q)
-    v, K, M = np.zeros(n), np.zeros(n), np.zeros((n, n))
+    v, K, x = np.zeros(n), np.zeros(n), est.x
+    P, other = est.P.copy(), np.zeros((n, n))
     base = np.zeros(kernel.n_sensors + kernel.n_estimates)
     work = np.zeros(len(kernel.steady) + 1)
-    lab = 0
-    for k in range(data.u.shape[0]):
+    lab, cycles = 0, len(data.u)
+    for k in range(len(data.u)):
         accept_inputs(kernel, est, data.u[k])
         input_driven_outputs(kernel, est, base)
-        _innovate(kernel, est, base, k, data, out, v)
-        lab = _correct_all(kernel, est, base, k, data, out, lab, v, K)
+        _innovate(kernel, x, P, base, k, data, out)
+        lab = _correct_all(kernel, x, P, base, k, data, out, lab, v, K)
         if lab < 0:
             return UNSOUND
-        if not _report(kernel, est, base, k, out, v):
+        if not _report(kernel, x, P, base, k, out):
             return UNSOUND
         advance_input_driven(kernel, est, work)
-        predict(kernel, est.x, est.P, v, M)
+        predict_into(kernel, x, P, v, other)
+        P, other = other, P
         if testing:
             news = test_cycle(
                 design,
@@ -180,6 +183,7 @@ def run_block(
                 out.high[k, i] = tests.high[i]
                 out.low[k, i] = tests.low[i]
             if news != 0:
-                return k + 1
-    cycles: int = data.u.shape[0]
+                cycles = k + 1
+                break
+    est.P[:] = P
     return cycles

@@ -28,39 +28,42 @@ def accept_inputs(kernel: Kernel, state: EstimatorState, u: Floats) -> None:
 
 
 @njit(cache=True)
-def past_input(kernel: Kernel, state: EstimatorState, source: int, delay: int) -> float:
-    """u(k - delay) of one input, as a deviation."""
-    value: float = state.u_past[source, (state.head[0] - delay) % kernel.ring]
-    return value
+def past_column(head: int, delay: int, ring: int) -> int:
+    """Column of u(k - delay) in the ring of past inputs; 0 <= delay < ring."""
+    column = head - delay
+    return column if column >= 0 else column + ring
 
 
 @njit(cache=True)
 def input_driven_outputs(kernel: Kernel, state: EstimatorState, out: Floats) -> None:
     """Operating point plus input-driven part of every output at this cycle, into ``out``."""
+    head, ring, u_past, x_in = state.head[0], kernel.ring, state.u_past, state.x_in
     for i in range(kernel.n_sensors + kernel.n_estimates):
         out[i] = kernel.operating_y[i]
     for b in range(len(kernel.block_source)):
         total = 0.0
         start = kernel.block_state[b]
         for i in range(start, start + kernel.block_size[b]):
-            total += kernel.c_in[i] * state.x_in[i]
+            total += kernel.c_in[i] * x_in[i]
         if kernel.block_d[b] != 0.0:
-            delay = kernel.block_whole[b] + kernel.block_older[b]
-            total += kernel.block_d[b] * past_input(kernel, state, kernel.block_source[b], delay)
+            column = past_column(head, kernel.block_whole[b] + kernel.block_older[b], ring)
+            total += kernel.block_d[b] * u_past[kernel.block_source[b], column]
         out[kernel.block_row[b]] += total
 
 
 @njit(cache=True)
 def advance_input_driven(kernel: Kernel, state: EstimatorState, work: Floats) -> None:
     """x(k+1) = phi x(k) + gamma_recent u(k-m) + gamma_older u(k-m-1), path by path."""
+    head, ring, u_past, x_in = state.head[0], kernel.ring, state.u_past, state.x_in
     for b in range(len(kernel.block_source)):
         size, start, at = kernel.block_size[b], kernel.block_state[b], kernel.block_phi[b]
-        recent = past_input(kernel, state, kernel.block_source[b], kernel.block_whole[b])
-        older = past_input(kernel, state, kernel.block_source[b], kernel.block_whole[b] + 1)
+        source, whole = kernel.block_source[b], kernel.block_whole[b]
+        recent = u_past[source, past_column(head, whole, ring)]
+        older = u_past[source, past_column(head, whole + 1, ring)]
         for i in range(size):
             total = kernel.gamma_recent[start + i] * recent + kernel.gamma_older[start + i] * older
             for j in range(size):
-                total += kernel.phi[at + i * size + j] * state.x_in[start + j]
+                total += kernel.phi[at + i * size + j] * x_in[start + j]
             work[i] = total
         for i in range(size):
-            state.x_in[start + i] = work[i]
+            x_in[start + i] = work[i]

@@ -1,12 +1,15 @@
 """The Kalman recursion of the stochastic part, compiled, one scalar reading at a time, in a fixed order.
 
-Covariances are updated in Joseph's form and kept exactly symmetric by writing one triangle and mirroring it. No BLAS
-and no fastmath: the same bits on every machine. Source of the recursion: Anderson & Moore, Optimal Filtering (1979),
-ch. 3 and 6 (sequential processing of readings with uncorrelated noise); checked against a dense filter in the tests.
+Covariances are kept whole and exactly symmetric: whole rows, one after another in memory, are quicker than a triangle. A
+scalar correction with its own gain needs no Joseph form: (I - K c) P (I - K c)' + K r K' and P - w w', w = P c' / sqrt(s),
+are one and the same there, and round alike. No BLAS and no fastmath: the same bits on every machine. Source of the
+recursion: Anderson & Moore, Optimal Filtering (1979), ch. 3 and 6 (sequential processing of readings with uncorrelated
+noise); checked against a dense filter in the tests.
 """
 
 from __future__ import annotations
 
+import numpy as np
 from numba import njit
 
 from softsensor.estimation.kernel import Floats, Kernel
@@ -27,27 +30,37 @@ def row_mean(kernel: Kernel, x: Floats, row: int) -> float:
 @njit(cache=True)
 def row_covariance(kernel: Kernel, P: Floats, row: int, v: Floats) -> float:
     """v = P C_row' into ``v``; returns C_row P C_row'."""
-    n = len(kernel.q)
-    for i in range(n):
+    first, stop, total = kernel.c_ptr[row], kernel.c_ptr[row + 1], 0.0
+    for i in range(len(v)):
         v[i] = 0.0
-    for e in range(kernel.c_ptr[row], kernel.c_ptr[row + 1]):
-        j, value = kernel.c_idx[e], kernel.c_val[e]
-        for i in range(n):
-            v[i] += P[j, i] * value
-    total = 0.0
-    for e in range(kernel.c_ptr[row], kernel.c_ptr[row + 1]):
+    for e in range(first, stop):
+        of_entry, value = P[kernel.c_idx[e]], kernel.c_val[e]
+        for i in range(len(v)):
+            v[i] += value * of_entry[i]
+    for e in range(first, stop):
         total += kernel.c_val[e] * v[kernel.c_idx[e]]
     return total
 
 
 @njit(cache=True)
-def output_variance(kernel: Kernel, P: Floats, row: int, v: Floats) -> float:
-    """C_row P C_row' of an output without noise; 0 where a true zero has come out below zero by rounding alone.
+def row_variance(kernel: Kernel, P: Floats, row: int) -> float:
+    """C_row P C_row' alone, the same bits as from :func:`row_covariance`."""
+    first, stop, total = kernel.c_ptr[row], kernel.c_ptr[row + 1], 0.0
+    for e in range(first, stop):
+        covariance, of_entry = 0.0, P[kernel.c_idx[e]]
+        for f in range(first, stop):
+            covariance += kernel.c_val[f] * of_entry[kernel.c_idx[f]]
+        total += kernel.c_val[e] * covariance
+    return total
+
+
+@njit(cache=True)
+def unless_rounding(kernel: Kernel, P: Floats, row: int, variance: float) -> float:
+    """The variance of an output without noise; 0 where a true zero has come out below zero by rounding alone.
 
     Behind a washout the terms cancel exactly in theory and to a few bits in floating point. What lies further below
     zero than rounding explains is returned as it is, for the caller to refuse.
     """
-    variance = row_covariance(kernel, P, row, v)
     if variance >= 0.0:
         return variance
     weight, largest = 0.0, 0.0
@@ -59,50 +72,98 @@ def output_variance(kernel: Kernel, P: Floats, row: int, v: Floats) -> float:
 
 
 @njit(cache=True)
+def output_variance(kernel: Kernel, P: Floats, row: int, v: Floats) -> float:
+    """C_row P C_row' of an output without noise, and P C_row' into ``v``; a zero that rounding made negative is 0."""
+    return unless_rounding(kernel, P, row, row_covariance(kernel, P, row, v))
+
+
+@njit(cache=True)
 def correct(
     kernel: Kernel, x: Floats, P: Floats, row: int, deviation: float, r: float, v: Floats, K: Floats
 ) -> bool:
     """One scalar correction with the reading ``deviation`` (from the input-driven part) of variance ``r``.
 
-    K = v / s, v = P c', s = c P c' + r;  P+ = (I - K c) P (I - K c)' + K r K'.  False where s is not positive.
+    s = c P c' + r, K = P c' / s;  P+ = P - w w' with w = P c' / sqrt(s).  ``v`` is left with P c', ``K`` with the
+    gain. False where s is not positive.
     """
-    n = len(kernel.q)
-    without_noise = row_covariance(kernel, P, row, v)
-    s = without_noise + r
+    n = len(v)
+    s = row_covariance(kernel, P, row, v) + r
     if not s > 0.0:
         return False
-    innovation = deviation - row_mean(kernel, x, row)
+    innovation, root = deviation - row_mean(kernel, x, row), np.sqrt(s)
+    for i in range(n):
+        K[i] = v[i] / root
+    for i in range(n):
+        w, entries = K[i], P[i]
+        for j in range(n):
+            entries[j] -= w * K[j]
     for i in range(n):
         K[i] = v[i] / s
-    for i in range(n):
         x[i] += K[i] * innovation
-        rest = r * K[i] - (v[i] - K[i] * without_noise)
-        for j in range(i, n):
-            P[i, j] = P[i, j] - K[i] * v[j] + rest * K[j]
-            P[j, i] = P[i, j]
     return True
 
 
 @njit(cache=True)
-def predict(kernel: Kernel, x: Floats, P: Floats, v: Floats, M: Floats) -> None:
-    """x = A x, P = A P A' + diag(q), with A in compressed rows."""
-    n = len(kernel.q)
-    for i in range(n):
-        total = 0.0
-        for k in range(n):
-            M[i, k] = 0.0
+def predict_into(kernel: Kernel, x: Floats, P: Floats, v: Floats, M: Floats) -> None:
+    """x = A x;  M = A P A' + diag(q), exactly symmetric, with ``v`` (n,) as work space.
+
+    States that A only moves (shift registers, offsets) are moved: their entries of P are copied. Only the other rows
+    are multiplied.
+    """
+    _predict_mean(kernel, x, v)
+    _move(kernel, P, M)
+    mixed = kernel.mixed
+    for a in range(len(mixed)):
+        i = mixed[a]
+        for k in range(len(v)):
+            v[k] = 0.0
         for e in range(kernel.a_ptr[i], kernel.a_ptr[i + 1]):
-            j, value = kernel.a_idx[e], kernel.a_val[e]
-            total += value * x[j]
-            for k in range(n):
-                M[i, k] += value * P[j, k]
-        v[i] = total
-    for i in range(n):
-        x[i] = v[i]
-        for k in range(i, n):
-            total = 0.0
+            of_entry, value = P[kernel.a_idx[e]], kernel.a_val[e]
+            for k in range(len(v)):
+                v[k] += value * of_entry[k]
+        for b in range(len(kernel.moved_start)):
+            start, stop = kernel.moved_start[b], kernel.moved_stop[b]
+            before, row, column = v[start + kernel.moved_from[b] :], M[i, start:stop], M[start:stop, i]
+            for k in range(len(row)):
+                row[k] = before[k]
+            for k in range(len(row)):
+                column[k] = before[k]
+        for b in range(a, len(mixed)):
+            k, total = mixed[b], 0.0
             for e in range(kernel.a_ptr[k], kernel.a_ptr[k + 1]):
-                total += M[i, kernel.a_idx[e]] * kernel.a_val[e]
-            P[i, k] = total
-            P[k, i] = total
-        P[i, i] += kernel.q[i]
+                total += v[kernel.a_idx[e]] * kernel.a_val[e]
+            M[i, k] = total
+            M[k, i] = total
+    for i in range(len(v)):
+        M[i, i] += kernel.q[i]
+
+
+@njit(cache=True)
+def _move(kernel: Kernel, P: Floats, M: Floats) -> None:
+    """Copy what is only moved; columns in between are written over afterwards."""
+    for a in range(len(kernel.moved_start)):
+        offset = kernel.moved_from[a]
+        for b in range(len(kernel.span_start)):
+            start, stop = kernel.span_start[b], kernel.span_stop[b]
+            for i in range(kernel.moved_start[a], kernel.moved_stop[a]):
+                before, after = P[i + offset, start + kernel.span_from[b] :], M[i, start:stop]
+                for k in range(len(after)):
+                    after[k] = before[k]
+
+
+@njit(cache=True)
+def _predict_mean(kernel: Kernel, x: Floats, v: Floats) -> None:
+    for i in range(len(v)):
+        total = 0.0
+        for e in range(kernel.a_ptr[i], kernel.a_ptr[i + 1]):
+            total += kernel.a_val[e] * x[kernel.a_idx[e]]
+        v[i] = total
+    for i in range(len(v)):
+        x[i] = v[i]
+
+
+@njit(cache=True)
+def predict(kernel: Kernel, x: Floats, P: Floats, v: Floats, M: Floats) -> None:
+    """As :func:`predict_into`, in place, with ``v`` (n,) and ``M`` (n, n) as work space."""
+    predict_into(kernel, x, P, v, M)
+    P[:] = M

@@ -53,6 +53,17 @@ class Kernel(NamedTuple):
     q: Floats
     r: Floats
     """Variance of each sensor's noise (n_sensors,)."""
+    moved_start: Ints
+    moved_stop: Ints
+    moved_from: Ints
+    """Runs of rows of A that only move states: state i becomes state i + moved_from (-1 in a shift register, 0 in an
+    offset) for moved_start <= i < moved_stop."""
+    span_start: Ints
+    span_stop: Ints
+    span_from: Ints
+    """The same runs as spans of columns, joined across mixed ones where they move alike: longer copies."""
+    mixed: Ints
+    """The other rows of A, ascending."""
 
 
 class EstimatorState(NamedTuple):
@@ -84,6 +95,39 @@ def compressed_rows(matrix: Matrix) -> tuple[Ints, Ints, Floats]:
     rows, columns = np.nonzero(matrix)
     pointers = np.searchsorted(rows, np.arange(matrix.shape[0] + 1)).astype(np.int64)
     return pointers, columns.astype(np.int64), np.ascontiguousarray(matrix[rows, columns])
+
+
+def moved_rows(A: Matrix) -> tuple[Ints, Ints, Ints, Ints, Ints, Ints, Ints]:
+    """Runs of consecutive rows with a single entry of exactly 1 on one diagonal (start, stop, diagonal); neighbouring
+    runs of one diagonal joined to spans, likewise; the other rows.
+
+    >>> [part.tolist() for part in moved_rows(np.array([[0.9, 0.0, 0.0], [1.0, 0.0, 0.0], [0.0, 1.0, 0.0]]))]
+    [[1], [3], [-1], [1], [3], [-1], [0]]
+    """
+    runs: list[list[int]] = []
+    mixed: list[int] = []
+    for i, row in enumerate(A):
+        entries = np.flatnonzero(row)
+        if entries.size != 1 or row[entries[0]] != 1.0:
+            mixed.append(i)
+            continue
+        offset = int(entries[0]) - i
+        if runs and runs[-1][1:] == [i, offset]:
+            runs[-1][1] = i + 1
+        else:
+            runs.append([i, i + 1, offset])
+    spans: list[list[int]] = []
+    for start, stop, offset in runs:
+        if spans and spans[-1][2] == offset:
+            spans[-1][1] = stop
+        else:
+            spans.append([start, stop, offset])
+    return (*_columns(runs), *_columns(spans), np.array(mixed, dtype=np.int64))
+
+
+def _columns(rows: list[list[int]]) -> tuple[Ints, Ints, Ints]:
+    first, second, third = np.array(rows, dtype=np.int64).reshape(-1, 3).T.copy()
+    return first, second, third
 
 
 def _flat(parts: list[Floats]) -> Floats:
@@ -132,6 +176,7 @@ def build_kernel(model: PlantModel) -> Kernel:
         *compressed_rows(part.C),
         np.array(part.q, dtype=np.float64),
         np.array([item.noise_sd**2 for item in spec.sensors], dtype=np.float64),
+        *moved_rows(part.A),
     )
 
 
