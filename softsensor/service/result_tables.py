@@ -40,6 +40,8 @@ INPUT_REASONS = {
 
 def moments(times: np.ndarray | Sequence[int | None]) -> pd.DatetimeIndex:
     """UTC times of integer microseconds; None becomes not-a-time."""
+    if isinstance(times, np.ndarray):
+        return pd.DatetimeIndex(times.astype(np.int64).view("datetime64[us]")).tz_localize("UTC")
     return pd.DatetimeIndex(pd.to_datetime(pd.array(list(times), dtype="Int64"), unit="us", utc=True))
 
 
@@ -49,19 +51,38 @@ def _words(codes: np.ndarray, words: Sequence[str]) -> pd.Categorical:
 
 
 def reasons(design: UnitDesign, readings: CycleReadings, results: CycleResults) -> np.ndarray:
-    """(N, n_estimates) texts: why an estimate is not Good; empty where it is."""
+    """(N, n_estimates) texts: why an estimate is not Good; empty where it is. Put into words once for each pattern."""
     spec, n = design.model.spec, len(results)
     out = np.full((n, len(spec.estimates)), "", dtype=object)
-    for k in np.flatnonzero(np.any(results.status != 0, axis=1)):
-        shared = _shared_reasons(design, readings, results, int(k))
+    doubtful = np.flatnonzero(np.any(results.status != 0, axis=1))
+    if not doubtful.size:
+        return out
+    own = _outside_each(results.estimate[doubtful], [item.validated_range for item in spec.estimates])
+    pattern = np.column_stack(
+        [
+            readings.u_quality[doubtful],
+            _outside_each(readings.u[doubtful], [item.validated_range for item in spec.inputs]),
+            results.settling[doubtful],
+            results.left_out[doubtful],
+            own,
+        ]
+    )
+    _, at, of_row = np.unique(pattern, axis=0, return_index=True, return_inverse=True)
+    texts = np.full((len(at), len(spec.estimates)), "", dtype=object)
+    for place, first in enumerate(at):
+        shared = _shared_reasons(design, readings, results, int(doubtful[first]))
         for e, item in enumerate(spec.estimates):
-            own = []
-            if (
-                item.validated_range is not None
-                and outside(results.estimate[k : k + 1, e], item.validated_range)[0]
-            ):
-                own = [f"{item.tag} is outside its validated range"]
-            out[k, e] = "; ".join(shared + own)
+            beyond = [f"{item.tag} is outside its validated range"] if own[first, e] else []
+            texts[place, e] = "; ".join(shared + beyond)
+    out[doubtful] = texts[of_row.reshape(-1)]
+    return out
+
+
+def _outside_each(values: np.ndarray, limits: Sequence[tuple[float, float] | None]) -> np.ndarray:
+    """(N, n) 1 where a value lies outside its own limits."""
+    out = np.zeros(values.shape, dtype=np.int8)
+    for place, pair in enumerate(limits):
+        out[:, place] = outside(values[:, place], pair)
     return out
 
 
