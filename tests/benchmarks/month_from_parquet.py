@@ -20,7 +20,7 @@ from pathlib import Path
 
 if __name__ == "__main__":
     os.environ["OPENBLAS_NUM_THREADS"] = "1"
-    sys.path[0:0] = [str(Path(__file__).resolve().parents[1])]
+    sys.path[0:1] = [str(Path(__file__).resolve().parents[up]) for up in (2, 1)]
 
 import numpy as np
 import pandas as pd
@@ -91,27 +91,29 @@ def compare(days: float, repeats: int, folder: Path) -> dict[str, float]:
 
 
 _PEAK = """
-import resource, sys
-sys.path[0:0] = [sys.argv[1]]
+import sys
+sys.path[0:1] = sys.argv[1:3]
 from pathlib import Path
 from benchmarks.month_from_parquet import model_of_the_benchmark, replay_to_files, write_history
-folder, cycles = Path(sys.argv[2]), int(sys.argv[3])
+folder = Path(sys.argv[3])
+def most():
+    lines = Path("/proc/self/status").read_text().splitlines()
+    return next(line.split()[1] for line in lines if line.startswith("VmHWM"))
 model = model_of_the_benchmark()
 write_history(model, folder / "short.parquet", 2000)
 replay_to_files(model, folder / "short.parquet", folder / "out")
-before = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss
+before = most()
 replay_to_files(model, folder / "history.parquet", folder / "out")
-print(before, resource.getrusage(resource.RUSAGE_SELF).ru_maxrss)
+print(before, most())
 """
 
 
 def peak(days: float, folder: Path) -> tuple[float, float]:
     """MiB held at most after a short replay and after one of ``days``, in one process of its own (Linux)."""
-    model, cycles = model_of_the_benchmark(), int(days * CYCLES_A_DAY)
-    write_history(model, folder / "history.parquet", cycles)
-    tests = str(Path(__file__).resolve().parents[1])
+    write_history(model_of_the_benchmark(), folder / "history.parquet", int(days * CYCLES_A_DAY))
+    paths = [str(Path(__file__).resolve().parents[up]) for up in (2, 1)]
     ended = subprocess.run(
-        [sys.executable, "-c", _PEAK, tests, str(folder), str(cycles)],
+        [sys.executable, "-c", _PEAK, *paths, str(folder)],
         capture_output=True, text=True, check=True, timeout=3600,
     )  # fmt: skip
     before, after = ended.stdout.split()

@@ -18,7 +18,7 @@ from pathlib import Path
 
 if __name__ == "__main__":
     os.environ["OPENBLAS_NUM_THREADS"] = "1"
-    sys.path[0:0] = [str(Path(__file__).resolve().parents[1])]
+    sys.path[0:1] = [str(Path(__file__).resolve().parents[up]) for up in (2, 1)]
 
 import numpy as np
 from benchmarks.measuring import small_unit
