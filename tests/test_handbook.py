@@ -24,8 +24,9 @@ from softsensor import cycle, unit_design
 from softsensor.detection import diagnosis, fault_tests, follow_up
 from softsensor.errors import SiteFileError
 from softsensor.estimation import lab_results
+from softsensor.estimation.noise_tuning import archive_checks, interval_scale, separability
 from softsensor.records import changes, tables
-from softsensor.service import live, replay, result_tables
+from softsensor.service import live, replay, result_tables, tuning
 from softsensor.service.model_report import model_report
 from softsensor.service.site_file import read_site_file
 from softsensor.web import flag_sheet
@@ -39,6 +40,7 @@ CHAPTERS = {
 README = (Path(__file__).parents[1] / "README.md").read_text(encoding="utf-8")
 AFTER = CHAPTERS["08-after-a-flag.md"]
 REFERENCE, METHOD = CHAPTERS["03-model-file.md"], CHAPTERS["04-method.md"]
+TUNING = CHAPTERS["07-tuning.md"]
 FILES, FIRST_HOUR = CHAPTERS["05-files-and-results.md"], CHAPTERS["02-first-hour.md"]
 ENVIRONMENT = {"PLANT_PASSWORD": "secret"}
 
@@ -319,6 +321,19 @@ LIMITS = [
     (METHOD, f"beyond {unit_design.SPIKE:g} standard deviations"),
     (METHOD, f"within the last {unit_design.WINDOW} cycles"),
     (METHOD, f"after {follow_up.PATIENCE} cycles"),
+    (TUNING, f"Fits on the first {tuning.FIT_SHARE:.0%} of the history".replace("%", " %")),
+    (TUNING, f"at least {tuning.LEAST_CYCLES} cycles in either part"),
+    (TUNING, f"(a ratio below {archive_checks.FLAT:g}, beyond chance)"),
+    (
+        TUNING,
+        f"wider than a factor of {separability.interval(1.0, separability.LARGEST_SD)[1]:.1f} either way",
+    ),
+    (TUNING, f"correlated beyond {separability.LARGEST_CORRELATION:g}"),
+    (
+        TUNING,
+        f"With {interval_scale.LEAST_RESULTS} results or more that contradict the promise, or with "
+        f"{interval_scale.SURE_RESULTS} in any case",
+    ),
     (AFTER, f"such as 90 min or 2 d, at most {changes.LONGEST_S / 86400.0:g} days"),
     (AFTER, f"for how long (at most {changes.LONGEST_S / 86400.0:g} days)"),
     (AFTER, f"say what the plant does ({', '.join(changes.OCCASIONS)})"),

@@ -28,6 +28,7 @@ CHAPTERS = (
     "04-method.md",
     "05-files-and-results.md",
     "06-records.md",
+    "07-tuning.md",
 )
 
 ELSEWHERE = """

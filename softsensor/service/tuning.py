@@ -260,32 +260,39 @@ def _intervals(tuned: UnitDesign, data: _Data, labs: Sequence[LabArrival]) -> tu
     """For each estimate what the laboratory results after the fit say about its interval."""
     outcomes: list[LabOutcome] = []
     variances: dict[tuple[int, int, float], float] = {}
+    spec = tuned.model.spec
+    published = np.full((2, len(data.readings), len(spec.estimates)), np.nan)
     if labs:
-        horizon = len(data.readings) * tuned.model.spec.sample_time
-        running = Replay(tuned, parts_of([data.readings], labs), horizon)
+        running = Replay(tuned, parts_of([data.readings], labs), len(data.readings) * spec.sample_time)
         for stretch in running.stretches():
             outcomes += stretch.labs
+            here = slice(stretch.results.first, stretch.results.first + len(stretch.results))
+            published[0, here], published[1, here] = stretch.results.estimate, stretch.results.sd
         variances = {(item.cycle, item.estimate, item.value): item.variance for item in running.run.labs}
+    published[1] /= [item.interval_scale for item in spec.estimates]
     split = int(data.readings.times[data.split])
     out = []
-    for e, estimate in enumerate(tuned.model.spec.estimates):
+    for e, estimate in enumerate(spec.estimates):
+        own = estimate.lab.sd**2 if estimate.lab is not None else math.nan
         results = [
-            item
+            _score(item, variances.get((item.counted_cycle, e, item.arrival.value), own), published[:, :, e])
             for item in outcomes
             if item.arrival.estimate == e and item.arrival.sampled > split and math.isfinite(item.innovation)
         ]
-        own = estimate.lab.sd**2 if estimate.lab is not None else math.nan
-        noise = [variances.get((item.counted_cycle, e, item.arrival.value), own) for item in results]
-        out.append(_proposal(estimate, _scores(results, noise)))
+        out.append(_proposal(estimate, Scores(*np.array(results, dtype=np.float64).reshape(-1, 3).T)))
     return tuple(out)
 
 
-def _scores(results: Sequence[LabOutcome], noise: Sequence[float]) -> Scores:
-    variance = np.array(noise, dtype=np.float64)
-    total = np.array([item.sd for item in results], dtype=np.float64) ** 2
-    return Scores(
-        np.array([item.innovation for item in results], dtype=np.float64), total - variance, variance
-    )
+def _score(item: LabOutcome, variance: float, published: Floats) -> tuple[float, float, float]:
+    """Error of a result against the estimate, the estimate's variance, its own variance.
+
+    Where it arrived after the cycle it counts at, the estimate is the one published there (2, N: value, sd), without
+    it; else the prediction.
+    """
+    if item.arrived_cycle > item.counted_cycle:
+        value, sd = (float(part) for part in published[:, item.counted_cycle])
+        return item.arrival.value - value, sd**2, variance
+    return item.innovation, item.sd**2 - variance, variance
 
 
 def _proposal(estimate: EstimateSpec, scores: Scores) -> IntervalProposal:

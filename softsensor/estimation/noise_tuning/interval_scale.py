@@ -1,8 +1,8 @@
 """The factor on an estimate's published sd with which its 95 % interval keeps its promise, from laboratory results.
 
 Split conformal prediction (Papadopoulos et al. 2002; Lei et al., J. Am. Stat. Assoc. 113 (2018) 1094-1111): each result
-that the fit has not seen, predicted before it was used, has a score, here the smallest factor k with which its
-interval would have held it::
+that the fit has not seen, against the estimate as published before it was used, has a score: the smallest factor k
+with which its interval would have held it::
 
     |error| <= 1.96 sqrt(k^2 P + R)
 

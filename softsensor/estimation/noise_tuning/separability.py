@@ -22,6 +22,8 @@ RESPONSE = 300
 """Samples over which responses are compared."""
 ALIKE = 1.0 - 1e-9
 """Cosine between two responses from which on they are the same."""
+INVOLVED = 0.01
+"""Share of a parameter's direction in what is unknown from which on its own standard error is unknown too."""
 SHARE = 0.3
 """Smallest component by which a parameter belongs to such a combination."""
 
@@ -59,7 +61,10 @@ def certainty(fit: Maximum) -> Certainty:
     if unknown.any():
         for vector in vectors.T[unknown]:
             found.append(_cannot_tell([names[j] for j in np.flatnonzero(np.abs(vector) >= SHARE)]))
-        return Certainty(np.full(len(names), np.nan), tuple(dict.fromkeys(found)))
+        known = vectors[:, ~unknown]
+        spread = np.sqrt(np.sum(known**2 / values[~unknown], axis=1))
+        involved = np.sum(vectors[:, unknown] ** 2, axis=1) > INVOLVED
+        return Certainty(np.where(involved, np.nan, spread), tuple(dict.fromkeys(found)))
     covariance = (vectors / values) @ vectors.T
     log_sd = np.sqrt(np.diag(covariance))
     correlation = covariance / np.outer(log_sd, log_sd)
