@@ -29,6 +29,8 @@ UNCERTAIN_VARIANCE = 9.0
 BEYOND_BELOW, BEYOND_ABOVE = 0.025, 0.0625
 """Share of the span below and above a sensor's range beyond which a reading is a failed instrument's, not a reading:
 the failure limits 3.6 mA and 21 mA of a 4-20 mA signal (NAMUR NE 43; from memory)."""
+REJECTED = 2
+"""After so many laboratory results in a row that do not fit, the estimate is in doubt, not the laboratory."""
 DIGEST_CHUNK = 64
 """Cycles per link of the digest's chain."""
 
@@ -95,6 +97,8 @@ class CycleState:
     tests: TestState
     book: FlagBook
     digest: Digest
+    rejected: tuple[int, ...]
+    """Per estimate, how many laboratory results in a row did not fit."""
 
     @property
     def next_cycle(self) -> int:
@@ -124,6 +128,8 @@ class CycleResults:
     used: NDArray[np.int8]
     left_out: NDArray[np.int8]
     """1 where a sensor is kept from the estimate, whether or not it has a reading."""
+    doubts: NDArray[np.object_]
+    """(N, n_estimates) What speaks against an estimate besides its inputs, in words: flags, laboratory results."""
     settling: NDArray[np.int8]
     """(N,) 1 while inputs are missing, and for a while after: the tests rest and the estimates are Uncertain."""
     high: Floats
@@ -141,7 +147,7 @@ class CycleResults:
 
 ROW_FIELDS = (
     "times", "reading", "estimate", "sd", "status", "predicted", "innovation", "innovation_sd", "used", "left_out",
-    "settling", "high", "low",
+    "doubts", "settling", "high", "low",
 )  # fmt: skip
 
 
@@ -165,7 +171,8 @@ def start(design: UnitDesign, first_cycle: int = 0) -> CycleState:
     tests = initial_tests(design.kernel.n_sensors, design.detection.window)
     tests.cycle[0] = first_cycle
     tests.valid_from[0] = first_cycle
-    return CycleState(initial_state(design.model, design.kernel), tests, FlagBook(), Digest())
+    none = (0,) * design.kernel.n_estimates
+    return CycleState(initial_state(design.model, design.kernel), tests, FlagBook(), Digest(), none)
 
 
 def usable(design: UnitDesign, readings: CycleReadings) -> tuple[Floats, Floats]:
@@ -234,15 +241,31 @@ def run_cycles(
         time, news = int(readings.times[done - 1]), int(out.news[done - 1])
         moment = Moment(first + done - 1, time, out.events[done - 1], news)
         outcome = follow_up(design.detection, begun.book, tests, moment)
-    results = _results(design, begun.book, first, done, readings, data, out)
+    results = _results(design, first, done, readings, data, out)
+    doubts = doubts_of(design, begun.book, first, state.rejected)
     results = replace(
         results,
+        doubts=np.tile(np.array(doubts, dtype=object), (done, 1)),
+        status=results.status | np.array([bool(text) for text in doubts], dtype=np.int8),
         flags=outcome.changes,
         notes=begun.notes + outcome.notes,
         rewind=outcome if outcome.exclusion is not None else None,
     )
     digest = state.digest.add(result_rows(results))
-    return CycleState(estimator, tests, outcome.book, digest), results
+    return CycleState(estimator, tests, outcome.book, digest, state.rejected), results
+
+
+def doubts_of(design: UnitDesign, book: FlagBook, cycle: int, rejected: tuple[int, ...]) -> list[str]:
+    """Per estimate, what speaks against it besides its inputs: flagged instruments in use, results that do not fit."""
+    flagged = [
+        f"{flag.tag} is flagged ({flag.kind})" for flag in book.doubted(cycle, design.model.sensor_tags)
+    ]
+    return [
+        "; ".join(
+            [*flagged, *([f"the last {count} laboratory results do not fit"] if count >= REJECTED else [])]
+        )
+        for count in rejected
+    ]
 
 
 def decide(
@@ -284,7 +307,6 @@ def rerun(
 
 def _results(
     design: UnitDesign,
-    book: FlagBook,
     first: int,
     done: int,
     readings: CycleReadings,
@@ -307,6 +329,7 @@ def _results(
         out.innovation_sd[:done],
         used,
         (data.use[:done] == 0).astype(np.int8),
+        np.full((done, design.kernel.n_estimates), "", dtype=object),
         out.settling[:done].astype(np.int8),
         out.high[:done],
         out.low[:done],

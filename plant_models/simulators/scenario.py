@@ -133,6 +133,8 @@ class DemoScenario:
     drift_rate: float = 0.7
     drift_limit: float = 1.9
     """The largest error that the drift grows to, K."""
+    drift_end: float = 9.0 * HOUR
+    """The thermometer is exchanged; the story has been told by then."""
     mistaken_sample: int | None = 2
     """The sample after 2 h 30 min, near the swing's peak ..."""
     mistake: float = -2.25 * HOUR
@@ -154,7 +156,16 @@ class DemoScenario:
                     self.swing_plateau,
                 ),
             ),
-            faults=(FaultSpec(self.drift_tag, "drift", self.drift_start, self.drift_limit, self.drift_rate),)
+            faults=(
+                FaultSpec(
+                    self.drift_tag,
+                    "drift",
+                    self.drift_start,
+                    self.drift_limit,
+                    self.drift_rate,
+                    self.drift_end,
+                ),
+            )
             if self.drift_rate != 0.0
             else (),
             fouling_per_hour=self.fouling_per_hour,

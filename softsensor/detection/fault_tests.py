@@ -34,6 +34,7 @@ SETTLING_SHARE = 3
 the inputs did meanwhile is not in the prediction."""
 
 SQRT_TWO = 1.4142135623730951
+SQRT_THREE_HALVES = 1.224744871391589
 
 WARM_UP = 200
 """Readings before the share of equal neighbours says anything about a sensor's resolution."""
@@ -200,15 +201,17 @@ def _test_lost(design: TestDesign, state: TestState, i: int, missing: bool) -> i
 
 @njit(cache=True)
 def _test_spike(design: TestDesign, state: TestState, i: int, z: float) -> int:
-    """One reading far out with its neighbours in place, seen one cycle later; the diagnosis does not get to see it.
+    """One reading far out between neighbours that agree, seen one cycle later; the diagnosis does not get to see it.
 
-    In place: the one before within half the limit, the one after within half the limit or a third of the spike, which
-    the filter has half followed.
+    It is compared with its neighbours' mean (sd of the contrast sqrt(3/2)), so that an offset makes no spikes. The
+    neighbours agree within half the limit, or within a third of the spike, which the filter has half followed.
     """
     older, before = state.older_z[i], state.last_z[i]
     state.older_z[i], state.last_z[i] = before, z
-    back = max(0.5 * design.spike, abs(before) / 3.0)
-    if abs(before) > design.spike and abs(older) < 0.5 * design.spike and abs(z) < back:
+    contrast = abs(before - 0.5 * (older + z))
+    if contrast > SQRT_THREE_HALVES * design.spike and abs(z - older) < max(
+        0.5 * design.spike, contrast / 3.0
+    ):
         state.ring[(state.cycle[0] - 1) % state.ring.shape[0], i] = np.nan
         return SPIKE
     return 0
@@ -232,6 +235,7 @@ def _rest(state: TestState, i: int) -> None:
     state.high[i] = 0.0
     state.low[i] = 0.0
     state.up[i] = 0
+    state.down_since[i] = state.cycle[0]
     state.last_z[i] = 0.0
     state.older_z[i] = 0.0
 

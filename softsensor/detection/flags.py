@@ -93,6 +93,15 @@ class FlagBook:
         """The open flag of a tag, of one of these kinds."""
         return next((flag for flag in self.open if flag.tag == tag and flag.kind in kinds), None)
 
+    def doubted(self, cycle: int, sensors: tuple[str, ...]) -> tuple[Flag, ...]:
+        """Open flags that speak against an instrument the estimate rests on at a cycle."""
+        return tuple(
+            flag
+            for flag in self.open
+            if flag.kind in ("bias", "drift", "stuck", "model")
+            and not (flag.tag in sensors and self.excluded(sensors.index(flag.tag), cycle))
+        )
+
     def excluded(self, sensor: int, cycle: int) -> bool:
         """Is a sensor kept from the estimate at a cycle?"""
         return any(item.sensor == sensor and item.covers(cycle) for item in self.exclusions)

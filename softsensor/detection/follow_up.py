@@ -22,6 +22,8 @@ from softsensor.detection.signatures import Hypothesis, SteadyFilter, signatures
 from softsensor.estimation.kernel import Floats, Ints, Kernel
 
 SHIFT_KINDS: tuple[Kind, ...] = ("bias", "drift")
+EXPLAINING: tuple[Kind, ...] = (*SHIFT_KINDS, "stuck")
+"""While such a fault is open on an instrument in use, it explains what other tests say."""
 PATIENCE = 60
 """Cycles for which a name is waited for before a group is flagged."""
 QUIET = 360
@@ -137,6 +139,7 @@ def _simple_faults(
             continue
         if bits & bit and outcome.book.find(tag, (kind,)) is None:
             onset = moment.time - ago * design.sample_us
+            outcome = _superseded(outcome, tag, kind, (onset, moment.time))
             outcome = _opened(outcome, _certain(design, tag, kind, onset, moment))
     ends: tuple[tuple[int, Kind], ...] = (
         (fault_tests.LOST_ENDED, "lost"),
@@ -152,6 +155,15 @@ def _simple_faults(
     if spike is not None and moment.time - spike.detected > QUIET * design.sample_us:
         outcome = _cleared(outcome, spike, moment.time)
     return outcome
+
+
+def _superseded(outcome: FollowUp, tag: str, kind: Kind, times: tuple[int, int]) -> FollowUp:
+    """A sensor that has stuck was flagged as shifted first: one fault, the shift's flag closes."""
+    shift = outcome.book.find(tag, SHIFT_KINDS)
+    onset, now = times
+    if kind != "stuck" or shift is None or shift.onset < onset:
+        return outcome
+    return _cleared(outcome, shift, now)
 
 
 def _clear_shifts(design: DetectionDesign, outcome: FollowUp, tests: TestState, moment: Moment) -> FollowUp:
@@ -187,7 +199,7 @@ def _diagnose(design: DetectionDesign, outcome: FollowUp, tests: TestState, mome
     if not up:
         return replace(outcome, book=replace(book, episode=None))
     explained = any(
-        flag.kind in SHIFT_KINDS and not _is_left_out(design, book, flag.tag, moment.cycle)
+        flag.kind in EXPLAINING and not _is_left_out(design, book, flag.tag, moment.cycle)
         for flag in book.open
     )
     if explained:
@@ -230,7 +242,7 @@ def _act(design: DetectionDesign, outcome: FollowUp, tests: TestState, moment: M
 
 
 def _note(outcome: FollowUp, moment: Moment, verdict: Verdict) -> FollowUp:
-    text = "test up; most probable: " + ", ".join(
+    text = "most probable: " + ", ".join(
         f"{name} {probability:.2f}"
         for name, probability in zip(verdict.names[:3], verdict.probabilities[:3], strict=True)
     )

@@ -14,7 +14,8 @@ IMPOSSIBLE = 5.0
 """A result this many standard deviations from its prediction cannot be right: once in 1.7 million when the model is."""
 FITS = 2.0
 """A result within this many standard deviations of the estimate at another time may belong to that time."""
-SEARCH_HOURS = 12.0
+SEARCH_HOURS = 4.0
+"""Sampling times that are wrong by more are not looked for: a wandering estimate fits any value at some time."""
 HOUR_US = 3_600_000_000
 
 LabStatus = Literal["used", "waiting for a person", "left out"]

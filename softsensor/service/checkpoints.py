@@ -74,7 +74,7 @@ def unpack_state(blob: bytes, version: int) -> tuple[CycleState, Context]:
             for cycle, estimate, value, variance in rest["labs"]
         )
         context = Context(rest["model"], rest["first_time"], rest["first_remembered"], labs)
-        return CycleState(_estimator(arrays), tests, book, digest), context
+        return CycleState(_estimator(arrays), tests, book, digest, tuple(rest["rejected"])), context
     except (KeyError, TypeError, ValueError) as error:
         raise RecordsError(f"a checkpoint is damaged: {error!r}") from None
 
@@ -96,6 +96,7 @@ def _rest(state: CycleState, context: Context) -> bytes:
         "chain": state.digest.chain.hex(),
         "pending": state.digest.pending.hex(),
         "rows": state.digest.rows,
+        "rejected": list(state.rejected),
     }
     return json.dumps(content).encode()
 

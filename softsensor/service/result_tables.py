@@ -64,6 +64,7 @@ def reasons(design: UnitDesign, readings: CycleReadings, results: CycleResults) 
             _outside_each(readings.u[doubtful], [item.validated_range for item in spec.inputs]),
             results.settling[doubtful],
             results.left_out[doubtful],
+            _codes(results.doubts[doubtful]),
             own,
         ]
     )
@@ -72,10 +73,17 @@ def reasons(design: UnitDesign, readings: CycleReadings, results: CycleResults) 
     for place, first in enumerate(at):
         shared = _shared_reasons(design, readings, results, int(doubtful[first]))
         for e, item in enumerate(spec.estimates):
-            beyond = [f"{item.tag} is outside its validated range"] if own[first, e] else []
-            texts[place, e] = "; ".join(shared + beyond)
+            beyond = f"{item.tag} is outside its validated range" if own[first, e] else ""
+            words = [*shared, results.doubts[doubtful[first], e], beyond]
+            texts[place, e] = "; ".join(text for text in words if text)
     out[doubtful] = texts[of_row.reshape(-1)]
     return out
+
+
+def _codes(texts: np.ndarray) -> np.ndarray:
+    """(N, n) numbers that are equal where the texts are."""
+    codes, _ = pd.factorize(texts.ravel())
+    return codes.reshape(texts.shape)
 
 
 def _outside_each(values: np.ndarray, limits: Sequence[tuple[float, float] | None]) -> np.ndarray:

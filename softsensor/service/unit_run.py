@@ -11,6 +11,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from softsensor.cycle import (
+    REJECTED,
     CycleResults,
     CycleState,
     LabAtCycle,
@@ -169,10 +170,12 @@ class UnitRun:
         predicted, sd = self._predict(lab, now)
         innovation = arrival.value - predicted
         possible = abs(innovation) <= IMPOSSIBLE * sd or arrival.decided_at is not None
-        reason = "" if possible else self._reason(arrival, lab.variance)
+        rejected = self._rejected(arrival.estimate, possible)
+        reason = "" if possible else self._reason(arrival, lab.variance, rejected[arrival.estimate])
         status: LabStatus = "used" if possible else "waiting for a person"
         outcome = LabOutcome(arrival, here, cycle, predicted, innovation, sd, status, reason)
-        self.state = replace(self.state, digest=self.state.digest.mix(_lab_bytes(outcome)))
+        digest = self.state.digest.mix(_lab_bytes(outcome))
+        self.state = replace(self.state, digest=digest, rejected=rejected)
         if not possible:
             return outcome, None
         self._labs = sorted([*self._labs, lab], key=_order)
@@ -201,10 +204,20 @@ class UnitRun:
         at = sorted(labs, key=_order).index(lab)
         return float(out.lab_predicted[at]), float(out.lab_sd[at])
 
-    def _reason(self, arrival: LabArrival, variance: float) -> str:
+    def _rejected(self, estimate: int, possible: bool) -> tuple[int, ...]:
+        """How many results in a row have not fitted, per estimate, with this one."""
+        return tuple(
+            count if e != estimate else (0 if possible else count + 1)
+            for e, count in enumerate(self.state.rejected)
+        )
+
+    def _reason(self, arrival: LabArrival, variance: float, in_a_row: int) -> str:
         _, times, estimate, sd = self.past.estimates()
         e = arrival.estimate
-        return likely_reason(arrival.value, variance**0.5, arrival.sampled, times, estimate[:, e], sd[:, e])
+        reason = likely_reason(arrival.value, variance**0.5, arrival.sampled, times, estimate[:, e], sd[:, e])
+        if in_a_row < REJECTED:
+            return reason
+        return f"{reason}; {in_a_row} results in a row do not fit: the estimate may be wrong"
 
 
 def _order(lab: LabAtCycle) -> tuple[int, int, float]:
@@ -238,6 +251,7 @@ def _waiting_results(design: UnitDesign, readings: CycleReadings) -> CycleResult
         sensors,
         none,
         none,
+        np.full((n, kernel.n_estimates), "", dtype=object),
         np.zeros(n, dtype=np.int8),
         zeros,
         zeros,
