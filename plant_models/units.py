@@ -118,6 +118,26 @@ def convert_difference(value: float, from_unit: str, to_unit: str) -> float:
 
 
 @lru_cache(maxsize=1024)
+def difference_unit(text: str) -> str:
+    """The unit of a difference between two values: 1.5 with unit degC is 1.5 K, and with bar(g) 1.5 bar.
+
+    >>> difference_unit("degC"), difference_unit("bar(g)"), difference_unit("m3/h"), difference_unit("mK")
+    ('K', 'bar', 'm3/h', 'mK')
+
+    A text that is no unit comes back as it is.
+    """
+    try:
+        unit = parse_unit(text)
+    except UnitError:
+        return text
+    if unit.expression == parse_unit("degC").expression:
+        return "K"
+    if unit.text in ("degF", "°F"):
+        return "degF of difference"
+    return re.sub(r" ?\(?g\)?$", "", unit.text) if unit.text in GAUGE else unit.text
+
+
+@lru_cache(maxsize=1024)
 def _ratio(from_unit: str, to_unit: str) -> float:
     source, target = parse_unit(from_unit), parse_unit(to_unit)
     if source.expression == target.expression:

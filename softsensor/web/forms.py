@@ -8,10 +8,11 @@ from typing import Annotated
 from urllib.parse import quote
 
 from fastapi import APIRouter, Form, Request
-from fastapi.responses import RedirectResponse
+from fastapi.responses import RedirectResponse, Response
 
 from softsensor.records import changes
 from softsensor.records.tables import FINDINGS
+from softsensor.web.pages import Pages, Refused, flag_answer
 from softsensor.web.site import BadForm, ForeignForm, Site, choices_for
 
 LONGEST_NAME, LONGEST_TEXT = 100, 2000
@@ -70,7 +71,20 @@ def calibration(text: str, what: str) -> float | None:
     return value
 
 
-def form_routes(site: Site) -> APIRouter:
+def checked_finding(finding: str, as_found: str, as_left: str) -> tuple[float | None, float | None]:
+    """As found and as left of a finding.
+
+    :raises BadForm: no such finding, no number, or a calibration that does not belong to the finding.
+    """
+    if finding not in FINDINGS:
+        raise BadForm(f"the finding is {finding[:40]!r}; expected one of: {', '.join(FINDINGS)}")
+    found, left = calibration(as_found, "as found"), calibration(as_left, "as left")
+    if finding != "confirmed" and (found is not None or left is not None):
+        raise BadForm("as found and as left belong to a confirmed finding; expected them empty otherwise")
+    return found, left
+
+
+def form_routes(site: Site, pages: Pages) -> APIRouter:
     """The addresses that take forms."""
     router = APIRouter(default_response_class=RedirectResponse)
 
@@ -113,15 +127,21 @@ def form_routes(site: Site) -> APIRouter:
         reason: Field = "",
         as_found: Field = "",
         as_left: Field = "",
-    ) -> RedirectResponse:
+    ) -> Response:
         ours(request, token)
         site.flag(name, id)
-        if finding not in FINDINGS:
-            raise BadForm(f"the finding is {finding[:40]!r}; expected one of: {', '.join(FINDINGS)}")
-        who = person(actor, reason)
-        found, left = calibration(as_found, "as found"), calibration(as_left, "as left")
-        if finding != "confirmed" and (found is not None or left is not None):
-            raise BadForm("as found and as left belong to a confirmed finding; expected them empty otherwise")
+        try:
+            who = person(actor, reason)
+            found, left = checked_finding(finding, as_found, as_left)
+        except BadForm as problem:
+            typed = {
+                "finding": finding,
+                "actor": actor,
+                "reason": reason,
+                "as_found": as_found,
+                "as_left": as_left,
+            }
+            return flag_answer(site, pages, request, (name, id), Refused(str(problem), typed))
         changes.set_finding(site.database, id, finding, who.name, who.reason, as_found=found, as_left=left)
         return back_to_flag(name, id)
 

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import asyncio
 from collections.abc import AsyncIterator
+from dataclasses import dataclass
 from importlib import resources
 from typing import Annotated, Any
 from urllib.parse import quote
@@ -58,6 +59,14 @@ def environment() -> Environment:
     return found
 
 
+@dataclass(frozen=True)
+class Refused:
+    """A form that was not taken: why, and what was typed, by field."""
+
+    complaint: str
+    typed: dict[str, str]
+
+
 class Pages:
     """Turns templates into answers."""
 
@@ -80,6 +89,22 @@ class Pages:
         return HTMLResponse(self._templates.get_template(template).render(values))
 
 
+def flag_answer(
+    site: Site, pages: Pages, request: Request, place: tuple[str, str], refused: Refused | None = None
+) -> Response:
+    """A flag's page; ``place``: the unit's name and the flag's id."""
+    unit, flag, comments = site.flag(*place)
+    spec = site.models.spec(site.models.revision_of(unit))
+    shown: dict[str, Any] = {
+        "units": tag_units(spec),
+        "decimals": tag_decimals(spec),
+        "typed": {} if refused is None else refused.typed,
+        "complaint": "" if refused is None else refused.complaint,
+    }
+    status = 200 if refused is None else 400
+    return pages.page(request, "flag.html", status, unit=unit, flag=flag, comments=comments, **shown)
+
+
 def page_routes(site: Site, pages: Pages) -> APIRouter:
     """The addresses that people open."""
     router = APIRouter(default_response_class=HTMLResponse)
@@ -100,10 +125,7 @@ def page_routes(site: Site, pages: Pages) -> APIRouter:
 
     @router.get("/units/{name:path}/flag")
     def flag_page(request: Request, name: str, id: str) -> Response:
-        unit, flag, comments = site.flag(name, id)
-        spec = site.models.spec(site.models.revision_of(unit))
-        shown: dict[str, Any] = {"units": tag_units(spec), "decimals": tag_decimals(spec)}
-        return pages.page(request, "flag.html", unit=unit, flag=flag, comments=comments, **shown)
+        return flag_answer(site, pages, request, (name, id))
 
     @router.get("/units/{name:path}/lab")
     def lab_page(request: Request, name: str, id: int) -> Response:

@@ -6,18 +6,12 @@ import math
 from datetime import UTC, datetime, timedelta
 from urllib.parse import quote
 
+from plant_models.units import difference_unit as difference_unit
+
 EPOCH = datetime(1970, 1, 1, tzinfo=UTC)
 STATUS_WORDS = ("Good", "Uncertain", "Bad")
 QUALITY_WORDS = ("Good", "Uncertain", "Bad", "no value yet", "too old")
 """Words for the codes of :class:`softsensor.readings_of_cycle.CycleQuality`, of an input's value."""
-DIFFERENCES = {
-    "degC": "K",
-    "°C": "K",
-    "degF": "degF of difference",
-    "°F": "degF of difference",
-    "barg": "bar",
-}
-"""Units whose differences go by another name: 1.5 with unit degC is 1.5 K (the model file's rule)."""
 MOST_DECIMALS = 6
 
 
@@ -84,11 +78,6 @@ def percent(probability: float | None) -> str:
     if probability > 0.99:
         return "over 99 %"
     return "under 1 %" if probability < 0.01 else f"{100.0 * probability:.0f} %"
-
-
-def difference_unit(unit: str) -> str:
-    """The unit of a difference between two values in ``unit``."""
-    return DIFFERENCES.get(unit, unit)
 
 
 def duration(seconds: float) -> str:

@@ -46,7 +46,7 @@ def test_it_says_what_is_believed_with_units_and_how_sure(drift: str) -> None:
     page = words_of(drift)
     assert "TI2101B: drift unit R-210" in page
     assert "measures temperature, range 0 to 200 degC" in page
-    assert "Size +1.21 ± 0.07 K (sd)" in page
+    assert "Size at detection +1.21 ± 0.07 K (sd)" in page
     assert "Tolerance ± 1 K" in page
     assert "Probability over 99 % Group isolated" in page
     assert "Since 2026-12-01 14:00:00 UTC Detected 2026-12-01 14:20:00 UTC" in page
@@ -114,7 +114,7 @@ def test_a_flag_of_an_input_and_one_without_size_have_a_sheet_too(recorded: Data
     assert "wrong density or pressure compensation" in page
     spike = words_of(asker.get(SHEET + quote(OLD_FLAG_ID)).text)
     assert "TI2105: spike" in spike
-    assert "Size no size" in spike
+    assert "Size at detection no size" in spike
     assert "First look at terminals" in spike
 
 

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import re
 from typing import Any
 from urllib.parse import quote
 
@@ -68,6 +69,45 @@ def test_a_confirmed_finding_keeps_as_found_and_as_left(recorded: Database, aske
     page = asker.get(FLAG).text
     assert "-1.25 K" in page
     assert "0.02 K" in page
+
+
+def test_a_bad_number_comes_back_with_what_was_typed(recorded: Database, asker: Any) -> None:
+    typed = {
+        "finding": "confirmed",
+        "as_found": "1,4<",
+        "as_left": "0.02",
+        "actor": 'A "B"',
+        "reason": "well <dry>",
+    }
+    answer = asker.post(FINDING, {"token": asker.token(FLAG), **typed})
+    assert answer.status_code == 400
+    page = answer.text
+    assert "Nothing is on record yet: as found is &#39;1,4&lt;&#39;; expected a number" in page
+    for field in (
+        'value="confirmed" required checked',
+        'value="1,4&lt;"',
+        'value="0.02"',
+        'value="A &#34;B&#34;"',
+    ):
+        assert field in page
+    assert ">well &lt;dry&gt;</textarea>" in page
+    found = re.search(r'name="token" value="([0-9a-f]+)"', page)
+    assert found is not None
+    assert asker.post(FINDING, {"token": found[1], **typed, "as_found": "1.4"}).status_code == 303
+    flag, _ = reader.flag_with_comments(recorded, FLAG_ID)
+    assert (flag.as_found, flag.as_left, flag.finding_by) == (1.4, 0.02, 'A "B"')
+
+
+def test_a_finding_shows_its_calibration_on_the_units_page_too(asker: Any) -> None:
+    assert "Size at detection" in asker.get(FLAG).text
+    fields = {"token": asker.token(FLAG), "finding": "confirmed", "as_found": "-1.25", **PERSON}
+    assert asker.post(FINDING, fields).status_code == 303
+    page = asker.get(FLAG).text
+    assert "<dt>As found</dt><dd>-1.25 K</dd>" in page
+    assert "<dt>As left</dt><dd>not entered</dd>" in page
+    listed = asker.get(f"/units/{UNIT}/part/flags").text
+    assert "confirmed, A. Müller; error as found -1.25 K, as left not entered" in listed
+    assert "Size at detection" in listed
 
 
 def test_a_waiting_result_is_decided_once(recorded: Database, asker: Any) -> None:
