@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -120,7 +121,8 @@ def report_lines(report: Report, story: DemoScenario, began: int) -> list[str]:
         f"  the estimate's error is {score.estimate / best:.0%} of the better of the two",
         f"  true value inside the 95 % interval in {score.coverage:.1%} of cycles",
     ]
-    lines += [_flag_line(flag, story, began) for flag in report.flags] or ["No flag."]
+    in_order = sorted(report.flags, key=lambda flag: (flag.detected_us, flag.id))
+    lines += [_flag_line(flag, story, began) for flag in in_order] or ["No flag."]
     used = sum(lab.status == "used" for lab in report.labs)
     lines.append(f"Laboratory results: {used} used of {len(report.labs)}.")
     lines += [
@@ -139,17 +141,33 @@ def report_lines(report: Report, story: DemoScenario, began: int) -> list[str]:
 
 
 def _flag_line(flag: StoredFlag, story: DemoScenario, began: int) -> str:
-    text = f"Flag: {flag.tag} {flag.kind}, probability {flag.probability:.3f}, group: {'; '.join(flag.group)}"
+    minutes = (flag.detected_us - began) / 60e6
+    text = (
+        f"Flag after {minutes:.0f} min: {flag.tag} {flag.kind}, probability {flag.probability:.3f}, "
+        f"group: {'; '.join(flag.group)}"
+    )
+    return f"{text}; {_judged(flag, story, began)}"
+
+
+def _judged(flag: StoredFlag, story: DemoScenario, began: int) -> str:
+    """The flag against what the simulator knows: its one fault is the story's drift."""
+    if flag.kind == "lost":
+        return "readings that did not arrive, no fault of the instrument"
     drift_start = began + round(story.drift_start * 1e6)
-    if flag.tag == story.drift_tag and flag.kind in ("bias", "drift") and flag.detected_us > drift_start:
-        error = story.drift_rate * (flag.detected_us - drift_start) * 1e-6 / 3600.0
-        onset = (flag.onset_us - drift_start) / 60e6
-        after = (flag.detected_us - drift_start) / 60e6
-        text += (
-            f"; the drift's onset is {abs(onset):.0f} min {'late' if onset > 0 else 'early'}; "
-            f"found {after:.0f} min after it began, at an error of {error:.2f} K"
-        )
-    return text
+    under_way = story.drift_rate != 0.0 and flag.detected_us > drift_start
+    if not under_way or flag.kind not in ("bias", "drift"):
+        return "a FALSE flag: the simulator knows of no such fault at that time"
+    if flag.tag != story.drift_tag:
+        place = "in its group" if story.drift_tag in flag.group else "not in its group"
+        return f"a FALSE name: the simulator's fault is a drift of {story.drift_tag}, {place}"
+    after = (flag.detected_us - drift_start) / 60e6
+    grown = story.drift_rate * after / 60.0
+    error = math.copysign(min(abs(grown), story.drift_limit), grown)
+    onset = (flag.onset_us - drift_start) / 60e6
+    return (
+        f"true: the simulator's drift; its onset is {abs(onset):.0f} min {'late' if onset > 0 else 'early'}; "
+        f"found {after:.0f} min after it began, at an error of {error:.2f} K"
+    )
 
 
 def warm_up(model: PlantModel) -> None:
