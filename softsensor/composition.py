@@ -5,7 +5,7 @@ from __future__ import annotations
 import asyncio
 import contextlib
 import socket
-from collections.abc import AsyncIterator, Iterator, Mapping
+from collections.abc import AsyncIterator, Callable, Iterator
 from contextlib import AsyncExitStack, asynccontextmanager
 from dataclasses import dataclass
 
@@ -40,11 +40,12 @@ WRITER_PATIENCE = 1.0
 
 @dataclass(frozen=True)
 class Site:
-    """A site that is up: its service, and the page's address where there is one."""
+    """A site that is up: its service, the page's address where there is one, its units' models."""
 
     service: LiveService
     page: str | None
     database: Database
+    models: tuple[PlantModel, ...]
 
 
 def site_clock(settings: SiteSettings) -> Clock:
@@ -135,58 +136,76 @@ class _PageServer(uvicorn.Server):
         yield
 
 
-def _listening(address: tuple[str, int]) -> socket.socket:
-    family = socket.AF_INET6 if ":" in address[0] else socket.AF_INET
-    listener = socket.socket(family, socket.SOCK_STREAM)
+@contextlib.contextmanager
+def _had(address: tuple[str, int]) -> Iterator[None]:
     try:
-        listener.setsockopt(socket.SOL_SOCKET, socket.SO_REUSEADDR, 1)
-        listener.bind(address)
+        yield
     except OSError as error:
-        listener.close()
         raise SiteFileError(
             f"web: address {address[0]}:{address[1]} cannot be had: {error.strerror or error}"
         ) from None
-    return listener
+
+
+@contextlib.contextmanager
+def _page_socket(address: tuple[str, int] | None) -> Iterator[socket.socket | None]:
+    """The page's address, ours but not answering yet.
+
+    :raises SiteFileError: somebody else has it, or this machine has no such address.
+    """
+    if address is None:
+        yield None
+        return
+    family = socket.AF_INET6 if ":" in address[0] else socket.AF_INET
+    with socket.socket(family, socket.SOCK_STREAM) as bound:
+        # on Windows SO_REUSEADDR would let two programs have one port
+        option = getattr(socket, "SO_EXCLUSIVEADDRUSE", socket.SO_REUSEADDR)
+        bound.setsockopt(socket.SOL_SOCKET, option, 1)
+        with _had(address):
+            bound.bind(address)
+        yield bound
 
 
 @asynccontextmanager
 async def _page(
-    database: Database, service: LiveService, address: tuple[str, int] | None, speed: float
+    database: Database, service: LiveService, listener: socket.socket | None, speed: float
 ) -> AsyncIterator[str | None]:
-    if address is None:
+    if listener is None:
         yield None
         return
-    listener = _listening(address)
+    host, port = listener.getsockname()[:2]
+    with _had((host, port)):
+        listener.listen()
     app = create_app(database, service.feed, speed)
     config = uvicorn.Config(
         app, log_level="warning", access_log=False, lifespan="off", timeout_graceful_shutdown=1
     )
     server = _PageServer(config)
     task = asyncio.create_task(server.serve(sockets=[listener]), name="web page")
-    host, port = listener.getsockname()[:2]
     try:
         yield f"http://{f'[{host}]' if ':' in host else host}:{port}"
     finally:
         app.state.streams.close()
         server.should_exit = True
         await task
-        listener.close()
 
 
 @asynccontextmanager
-async def running_site(
-    settings: SiteSettings, environment: Mapping[str, str] | None = None
-) -> AsyncIterator[Site]:
+async def running_site(settings: SiteSettings, tell: Callable[[str], None]) -> AsyncIterator[Site]:
     """Everything of a site up and checked; the caller then awaits ``site.service.serve()``.
 
+    What can be refused at once is looked at before anything is compiled.
+
+    :param tell: takes a line about what takes long.
     :raises Problem: whatever keeps the site from starting, in lines.
     """
     models = read_models(settings)
     clock = site_clock(settings)
     async with AsyncExitStack() as stack:
+        listener = stack.enter_context(_page_socket(settings.web))
         database = stack.enter_context(open_database(settings.database, clock.now))
         source, routes = _source(settings, models)
         await source.probe()
+        tell("preparing (the first time on a machine this compiles for about half a minute)")
         designs = [await asyncio.to_thread(design_unit, model) for model in models]
         identities = [register(database, model, clock) for model in models]
         writer = stack.enter_context(RecordsWriter(database, patience=WRITER_PATIENCE))
@@ -205,5 +224,5 @@ async def running_site(
         grace = GRACE if settings.clock is None else SIMULATED_GRACE
         service = LiveService(units, source, routes, clock, writer, sinks, grace)
         speed = 1.0 if settings.clock is None else settings.clock.speed
-        page = await stack.enter_async_context(_page(database, service, settings.web, speed))
-        yield Site(service, page, database)
+        page = await stack.enter_async_context(_page(database, service, listener, speed))
+        yield Site(service, page, database, tuple(models))

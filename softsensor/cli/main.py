@@ -3,6 +3,8 @@
 from __future__ import annotations
 
 import sys
+from importlib.metadata import version
+from typing import Annotated
 
 import typer
 
@@ -17,13 +19,30 @@ CAUTION = (
 
 app = typer.Typer(
     name="softsensor",
-    help="Transfer functions and plant readings in; estimates with honest intervals and instrument fault flags out.",
     epilog=CAUTION,
     no_args_is_help=True,
     pretty_exceptions_enable=False,
     add_completion=False,
     rich_markup_mode=None,
 )
+
+
+def _tell_version(wanted: bool) -> None:
+    if wanted:
+        typer.echo(f"softsensor {version('softsensor')}")
+        raise typer.Exit
+
+
+@app.callback()
+def options(
+    version: Annotated[
+        bool,
+        typer.Option("--version", is_eager=True, callback=_tell_version, help="Say which release this is."),
+    ] = False,
+) -> None:
+    """Transfer functions and plant readings in; estimates with honest intervals and instrument fault flags out."""
+
+
 for command in (demo.demo, check.check, replay.replay, run.run, tune.tune):
     app.command(epilog=CAUTION)(command)
 app.add_typer(db.app, name="db")

@@ -76,12 +76,15 @@ class ServiceProcess:
             )
 
     async def _start(self) -> asyncio.subprocess.Process:
-        command = [sys.executable, "-m", "softsensor", "run", str(self._site_file)]
+        """The child, which ends with us however we end: nothing is written to its input, which stays open till then."""
+        command = [sys.executable, "-m", "softsensor", "run", str(self._site_file), "--until-input-ends"]
         if sys.platform == "win32":
             return await asyncio.create_subprocess_exec(
-                *command, creationflags=subprocess.CREATE_NEW_PROCESS_GROUP
+                *command,
+                stdin=asyncio.subprocess.PIPE,
+                creationflags=subprocess.CREATE_NEW_PROCESS_GROUP,
             )
-        return await asyncio.create_subprocess_exec(*command)
+        return await asyncio.create_subprocess_exec(*command, stdin=asyncio.subprocess.PIPE)
 
     async def ready(self, port: int) -> None:
         """Wait until the page answers: models are compiled, the plant is connected, the records are open."""

@@ -11,11 +11,12 @@ from softsensor.records.engine import open_database
 from softsensor.records.series import latest_cycle
 
 
-def refused(ended: tuple[int, str, str], *expected: str) -> None:
+def refused(ended: tuple[int, str, str], *expected: str, before: str = "") -> None:
     status, out, err = ended
     assert "Traceback" not in err
     assert "Exception" not in err
-    assert (status, out) == (2, "")
+    assert status == 2
+    assert out.startswith(before) if before else out == ""
     for piece in expected:
         assert piece in err, err
 
@@ -44,8 +45,9 @@ def test_nodes_and_ports_that_cannot_be_had(tmp_path: Path, new_plant: Any) -> N
                 ]
                 started = [await plant.start("run", path) for path, _ in cases]
                 ended = await asyncio.gather(*(plant.finished(process) for process in started))
-                for (_, expected), outcome in zip(cases, ended, strict=True):
-                    refused(outcome, *expected)
+                # the page's port is looked at before anything is compiled, the publisher's when it begins
+                for (_, expected), outcome, before in zip(cases, ended, ("", "", "preparing ("), strict=True):
+                    refused(outcome, *expected, before=before)
 
     asyncio.run(story())
 
