@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import itertools
+from collections.abc import Iterator
 from dataclasses import dataclass
 from typing import Any
 
@@ -74,13 +75,20 @@ def lab_tags(model: PlantModel) -> list[str]:
     return [item.lab.tag for item in model.spec.estimates if item.lab is not None]
 
 
+def _ignored(lab: LabResults) -> Iterator[str]:
+    """What the laboratory's file holds and no estimate of the model takes."""
+    for what, names in (("tags", lab.ignored_tags), ("columns", lab.ignored_columns)):
+        if names:
+            yield f"{lab.name}: {what} that the model does not know: {', '.join(names)}"
+
+
 def prepare(model: PlantModel, history: History, lab: LabResults | None) -> tuple[Replay, list[Note]]:
     """A replay of a history, with the laboratory results that it can see; the others are named in notes."""
     notes: list[Note] = []
     arrivals: list[LabArrival] = []
     if lab is not None:
         usable, remarks = place_lab(lab, history.first_time, history.last_time)
-        notes = [Note(history.first_time, "laboratory", text) for text in remarks]
+        notes = [Note(history.first_time, "laboratory", text) for text in (*_ignored(lab), *remarks)]
         arrivals = lab_arrivals(model, usable)
     if history.ignored_columns:
         names = ", ".join(history.ignored_columns)

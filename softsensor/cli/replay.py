@@ -62,6 +62,7 @@ def replay(
                 "--lab: the records hold the laboratory results already; expected none with a database"
             )
     else:
+        _only_with_a_database({"--unit": unit, "--from": start, "--to": end})
         running, notes, cycles = _from_files(plant_model, Path(history), lab, timezone)
     running.totals.notes += notes
     with ResultFiles(out, format, running.design) as files, SmoothedRun(running.design, out) as smoothing:
@@ -74,6 +75,15 @@ def replay(
         typer.echo(json_text.dumps(summary, ensure_ascii=False))
     else:
         _tell(summary, out)
+
+
+def _only_with_a_database(options: dict[str, str | None]) -> None:
+    given = [name for name, value in options.items() if value is not None]
+    if given:
+        raise ReplayError(
+            f"{', '.join(given)}: expected only with a database's address (such as sqlite:///records.db) in place of "
+            "the history file; of a file all rows are replayed"
+        )
 
 
 def _from_files(

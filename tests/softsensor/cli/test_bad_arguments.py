@@ -6,6 +6,7 @@ import os
 import sqlite3
 import subprocess
 import sys
+from importlib.metadata import version
 from pathlib import Path
 from typing import Any
 
@@ -100,6 +101,22 @@ def test_a_unit_and_a_period_that_are_not_on_record(command: Any, files: Any) ->
     url = f"sqlite:///{(files.folder / 'records.db').as_posix()}"
     upgrade_database(url)
     refused(command("replay", files.model, url, "--out", files.out), "holds no unit R-1", "none")
+
+
+@pytest.mark.parametrize(
+    ("option", "value"),
+    [("--from", "2026-12-01T00:01:00Z"), ("--to", "2026-12-01T00:01:00Z"), ("--unit", "R-1")],
+)
+def test_a_period_and_a_unit_go_with_a_database_only(
+    command: Any, files: Any, option: str, value: str
+) -> None:
+    outcome = command("replay", files.model, files.history, "--out", files.out, option, value)
+    refused(outcome, f"{option}: expected only with a database's address")
+    assert not files.out.exists()
+
+
+def test_the_release_is_told(command: Any) -> None:
+    assert command("--version").out == f"softsensor {version('softsensor')}\n"
 
 
 def test_results_where_a_file_stands(command: Any, files: Any) -> None:

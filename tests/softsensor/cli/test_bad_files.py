@@ -38,6 +38,29 @@ def test_files_in_order_replay(command: Any, files: Any) -> None:
     }
 
 
+def test_laboratory_results_of_other_tags_are_named(command: Any, files: Any) -> None:
+    text = (
+        "sampled_at,reported_at,tag,value,analyst\n"
+        "2026-12-01T00:01:00Z,2026-12-01T00:03:00Z,AL1,1.33,B\n"
+        "2026-12-01T00:01:00Z,2026-12-01T00:03:00Z,AL7,1.33,B\n"
+        "2026-12-01T00:02:00Z,2026-12-01T00:03:00Z,AL8,1.33,B\n"
+    )
+    arguments = (
+        "replay",
+        files.model,
+        files.history,
+        "--lab",
+        files.put("more.csv", text),
+        "--out",
+        files.out,
+    )
+    said = command(*arguments)
+    assert said.status == 0
+    for notes in (said.out, "\n".join(json.loads(command(*arguments, "--json").out)["notes"])):
+        assert "more.csv: tags that the model does not know: AL7, AL8" in notes
+        assert "more.csv: columns that the model does not know: analyst" in notes
+
+
 MODEL_FAULTS = [
     ("range = [0.0, 20.0]", "", "12", "range: missing; expected"),
     ('unit = "degC"', 'unit = "degX"', "18", "unit:"),
