@@ -14,6 +14,7 @@ if TYPE_CHECKING:
     from rich.console import Console
     from rich.table import Table
 
+    from softsensor.detection.absorption import SensorShift
     from softsensor.estimation.observability import EstimateKnowledge
     from softsensor.service.model_report import ModelReport
 
@@ -38,16 +39,22 @@ def check(
 
 
 def as_document(report: ModelReport) -> dict[str, Any]:
-    """The report as JSON takes it: an infinite number (without limit) becomes null; times are seconds."""
+    """The report as JSON takes it: an infinite number (without limit) becomes null; every duration is in seconds
+    (sample_time, false_flag_interval, time_constants, dead_time, half_faded, delay, lasting), every sd in the unit beside
+    it, as a difference.
+    """
     from softsensor.service.model_report import CAUTION
 
     document: dict[str, Any] = _finite(asdict(report))
     for item, estimate in zip(document["estimates"], report.estimates, strict=True):
         item["sensors_help"] = estimate.sensors_help
+        item["sd_total"] = None if estimate.own_offset else _finite(estimate.sd_with_sensors)
         item["sd_without"] = {tag: _finite(sd) for tag, sd in estimate.sd_without}
         item["sd_from"] = {name: _finite(sd) for name, sd in estimate.sd_from}
     for item, disturbance in zip(document["disturbances"], report.disturbances, strict=True):
         item["observable"] = disturbance.observable
+    for item in document["sensors"]:
+        item["shift"]["absorbed"] = item["absorbed"]
     document["sound"] = report.sound
     document["caution"] = CAUTION
     return document
@@ -89,17 +96,22 @@ def _tell_rest(console: Console, report: ModelReport) -> None:
         f"Settled filter: {solution.states} states, spectral radius "
         f"{solution.spectral_radius:.6f}, Riccati residual "
         f"{solution.residual:.1e}, {'stabilising' if solution.stabilising else 'NOT stabilising'}"
-        + (f"; {solution.unbounded} directions without a steady variance" if solution.unbounded else ""),
+        + (f"; {_directions(solution.unbounded)} without a steady variance" if solution.unbounded else ""),
         markup=False,
     )
     if any(item.own_offset for item in report.estimates):
         console.print(
-            "* without the estimate's own offset (bias_walk_sd), which only laboratory results bound."
+            "An estimate's own offset (bias_walk_sd) is seen by no sensor: only laboratory results bound it. The columns "
+            '"no sensors" and "one lost" leave it out too.'
         )
     for warning in report.warnings:
         console.print(f"Warning: {warning}.", markup=False)
     verdict = "the sensors add to every estimate" if report.sound else "NOT a soft sensor for every estimate"
     console.print(f"Verdict: {verdict}.", markup=False)
+
+
+def _directions(count: int) -> str:
+    return f"{count} direction{'' if count == 1 else 's'}"
 
 
 def _table(title: str, *columns: str) -> Table:
@@ -143,7 +155,7 @@ def _paths(report: ModelReport) -> Table:
         _row(
             table,
             f"{path.source} -> {path.target}",
-            f"{path.gain:.4g}{' per s' if path.integrating else ''}",
+            f"{path.gain:.4g} {path.gain_unit}",
             ", ".join(duration_text(lag) for lag in path.time_constants) or "none",
             duration_text(path.dead_time),
             f"{path.dead_time_samples:.4g}",
@@ -168,6 +180,8 @@ def _disturbances(report: ModelReport) -> Table:
 
 
 def _estimates(report: ModelReport) -> Table:
+    from plant_models.units import difference_unit
+
     table = _table(
         "Standard deviation of each estimate",
         "estimate",
@@ -185,9 +199,9 @@ def _estimates(report: ModelReport) -> Table:
         _row(
             table,
             item.tag,
-            item.unit,
+            difference_unit(item.unit),
             _sd(item.sd_without_sensors),
-            _sd(item.sd_with_sensors) + ("*" if item.own_offset else ""),
+            _all_sensors(item),
             lost,
             lab,
         )
@@ -216,13 +230,29 @@ def _sensors(report: ModelReport) -> Table:
             shift.tag,
             f"{shift.bias:.4g} {shift.unit}",
             f"{shift.at_once:.2f} sd",
-            "later" if shift.half_faded is None else duration_text(shift.half_faded),
+            _half_faded(shift),
             f"{shift.settled:.2g} sd",
             shift.absorbed_by or "",
             f"{item.reference:.3f} / {item.interval:.3f}",
             "absorbed" if item.delay is None else duration_text(item.delay),
         )
     return table
+
+
+def _half_faded(shift: SensorShift) -> str:
+    from softsensor.service.model_report import duration_text
+
+    if shift.absorbed_by is None:
+        return "never"
+    return "later" if shift.half_faded is None else duration_text(shift.half_faded)
+
+
+def _all_sensors(item: EstimateKnowledge) -> str:
+    """The sd with all sensors; where the estimate has an offset of its own that is not all of it."""
+    if not item.own_offset:
+        return _sd(item.sd_with_sensors)
+    bound = "unbounded without laboratory results"
+    return f"{bound}\n{_sd(item.sd_with_sensors)} without its own offset"
 
 
 def _helps(item: EstimateKnowledge) -> str:

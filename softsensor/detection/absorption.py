@@ -22,16 +22,20 @@ from scipy.linalg import solve
 
 from plant_models.errors import RealisationError
 from plant_models.plant_model import PlantModel
-from softsensor.detection.run_length import average_run_length, decision_interval
+from plant_models.units import difference_unit
 from softsensor.estimation.observability import owners
 from softsensor.estimation.steady_state import SteadyState, steady_state
 
 Matrix = NDArray[np.float64]
 
-LEAST_SHIFT = 0.02
-"""Innovation shifts below this many standard deviations count as absorbed, whatever the test."""
+LATEST_FLAG = 0.1
+"""Share of the false-flag interval: where a test needs longer on average for a shift, a flag is hardly better than a
+false one.
+"""
 
 LONGEST_FADING = 20_000
+LEAST_FADING = 0.05
+"""A bias that loses no more than this share of itself is said never to fade."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -39,8 +43,9 @@ class SensorShift:
     """What a bias the size of a sensor's tolerance leaves in that sensor's own innovation.
 
     ``at_once`` and ``settled``: the innovation's mean in its standard deviations, at the onset and in the
-    end; ``absorbed``: no test that keeps the promise finds it; ``absorbed_by``: what takes up most of the
-    difference, a disturbance's name or an offset's, None where next to nothing is taken up.
+    end; ``half_faded``: seconds until half of the difference is gone, None where it takes very long or next to
+    nothing fades (then ``absorbed_by`` is None too); ``absorbed_by``: what takes up most of the difference, a
+    disturbance's name or an offset's. ``unit``: of the bias and of ``innovation_sd``, both differences.
     """
 
     tag: str
@@ -50,7 +55,6 @@ class SensorShift:
     at_once: float
     settled: float
     half_faded: float | None
-    absorbed: bool
     absorbed_by: str | None
 
 
@@ -108,43 +112,35 @@ def sensor_shifts(model: PlantModel) -> tuple[SensorShift, ...]:
     error = settled_error(state, part.A)
     remaining = settled_innovation(state, part.A)
     faded = fading(state, part.A)
-    cycles = spec.false_flag_interval / spec.sample_time
     found = []
     for i, sensor in enumerate(spec.sensors):
         sd = math.sqrt(state.S[i, i])
         settled = float(abs(remaining[i, i])) * sensor.tolerance / sd
+        fades = abs(1.0 - remaining[i, i]) > LEAST_FADING
+        half = faded[i]
         found.append(
             SensorShift(
                 sensor.tag,
-                sensor.unit,
+                difference_unit(sensor.unit),
                 sensor.tolerance,
                 sd,
                 sensor.tolerance / sd,
                 settled,
-                None if (half := faded[i]) is None else half * spec.sample_time,
-                is_absorbed(settled, cycles),
-                _absorber(owners(part), part.C[i] * error[:, i])
-                if abs(1.0 - remaining[i, i]) > 0.05
-                else None,
+                half * spec.sample_time if fades and half is not None else None,
+                _absorber(owners(part), part.C[i] * error[:, i]) if fades else None,
             )
         )
     return tuple(found)
 
 
-def is_absorbed(shift: float, promised: float) -> bool:
-    """Is a lasting innovation shift (in sd) beyond finding at a run length of ``promised`` cycles without
-    a fault?
+def is_absorbed(delay: float, promised: float) -> bool:
+    """Is a lasting shift beyond finding: does the test need, on average, more than LATEST_FLAG of the run length that
+    it keeps without a fault?
 
-    It is when smaller than LEAST_SHIFT, or when the cumulative sum made for it (reference value half of it)
-    would on average take longer than the promised run length itself.
-
-    :raises RunLengthError: a promise that no test can keep.
+    :param delay: the test's average run length under the shift, sums at zero at first.
+    :param promised: its run length without a shift, in the same unit.
     """
-    if shift < LEAST_SHIFT:
-        return True
-    reference = min(0.5 * shift, 1.0)
-    interval = decision_interval(reference, promised)
-    return average_run_length(reference, interval, shift, two_sided=False) >= promised
+    return delay > LATEST_FLAG * promised
 
 
 def _absorber(names: tuple[str, ...], taken: NDArray[np.float64]) -> str | None:

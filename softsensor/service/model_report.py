@@ -10,9 +10,10 @@ from dataclasses import dataclass
 import numpy as np
 
 from plant_models.plant_model import PlantModel
-from plant_models.specification import PathSpec
+from plant_models.specification import PathSpec, UnitSpec
 from plant_models.transfer_function import dc_gain, is_integrating, poles, ramp_gain, zeros
-from softsensor.detection.absorption import SensorShift, sensor_shifts
+from plant_models.units import difference_unit
+from softsensor.detection.absorption import LATEST_FLAG, SensorShift, is_absorbed, sensor_shifts
 from softsensor.detection.run_length import average_run_length
 from softsensor.estimation.kernel import build_kernel
 from softsensor.estimation.observability import (
@@ -41,13 +42,14 @@ FASTEST_SAMPLING = 0.001
 
 @dataclass(frozen=True, slots=True)
 class PathReport:
-    """One transfer function: steady gain (per second where integrating), lags, dead time in seconds and
-    samples.
+    """One transfer function: steady gain (per second where integrating) and its unit, lags, dead time in seconds
+    and samples.
     """
 
     source: str
     target: str
     gain: float
+    gain_unit: str
     integrating: bool
     time_constants: tuple[float, ...]
     """-1 / Re(pole) in seconds, longest first; an oscillating pair appears twice."""
@@ -73,13 +75,15 @@ class SensorReport:
     """What a bias the size of the tolerance leaves in a sensor's innovation, and the test that watches for
     it.
 
-    ``delay``: mean time in seconds to a flag under the settled shift, sums at zero; None where it is
-    absorbed.
+    ``delay``: mean time in seconds to a flag under the settled shift, sums at zero; None where the shift is
+    ``absorbed``: where that time is more than a tenth of the false-flag interval, so that a flag is hardly better
+    than a false one.
     """
 
     shift: SensorShift
     reference: float
     interval: float
+    absorbed: bool
     delay: float | None
 
 
@@ -122,7 +126,7 @@ def model_report(model: PlantModel) -> ModelReport:
     :raises RunLengthError: a false-flag interval that no test can keep.
     """
     spec = model.spec
-    paths = tuple(_path(path, spec.sample_time) for path in spec.paths)
+    paths = tuple(_path(path, spec) for path in spec.paths)
     sampling = _sampling(paths, spec.sample_time)
     disturbances, estimates = disturbance_knowledge(model), estimate_knowledge(model)
     sensors = _sensors(model)
@@ -146,7 +150,7 @@ def model_report(model: PlantModel) -> ModelReport:
     )
 
 
-def _path(path: PathSpec, sample_time: float) -> PathReport:
+def _path(path: PathSpec, spec: UnitSpec) -> PathReport:
     roots = poles(path)
     integrating = is_integrating(path)
     lags = sorted((-1.0 / float(pole.real) for pole in roots if pole.real < 0.0), reverse=True)
@@ -154,13 +158,22 @@ def _path(path: PathSpec, sample_time: float) -> PathReport:
         path.source,
         path.target,
         ramp_gain(path) if integrating else dc_gain(path),
+        _gain_unit(path, spec) + (" per s" if integrating else ""),
         integrating,
         tuple(lags),
         bool(np.any(np.abs(roots.imag) > 1e-6 * np.abs(roots))),
         bool(np.any(zeros(path).real > 0.0)),
         path.dead_time,
-        path.dead_time / sample_time,
+        path.dead_time / spec.sample_time,
     )
+
+
+def _gain_unit(path: PathSpec, spec: UnitSpec) -> str:
+    """Output unit per input unit, both of differences. A disturbance has no unit but its own."""
+    units = {item.tag: item.unit for item in spec.inputs} | {item.tag: item.unit for item in spec.sensors}
+    units |= {item.tag: item.unit for item in spec.estimates}
+    source = difference_unit(units[path.source]) if path.source in units else "unit of the disturbance"
+    return f"{difference_unit(units[path.target])} per {source}"
 
 
 def _sampling(paths: tuple[PathReport, ...], sample_time: float) -> SamplingReport:
@@ -203,14 +216,14 @@ def _solution(state: SteadyState) -> SolutionReport:
 
 def _sensors(model: PlantModel) -> tuple[SensorReport, ...]:
     design = fault_test_design(model, build_kernel(model))
+    promised = model.spec.false_flag_interval / model.spec.sample_time
     found = []
     for i, shift in enumerate(sensor_shifts(model)):
         reference, interval = float(design.reference[i]), float(design.interval[i])
-        delay = None
-        if not shift.absorbed:
-            cycles = average_run_length(reference, interval, shift.settled, clip=design.clip)
-            delay = cycles * model.spec.sample_time
-        found.append(SensorReport(shift, reference, interval, delay))
+        cycles = average_run_length(reference, interval, shift.settled, clip=design.clip)
+        absorbed = is_absorbed(cycles, promised)
+        delay = None if absorbed else cycles * model.spec.sample_time
+        found.append(SensorReport(shift, reference, interval, absorbed, delay))
     return tuple(found)
 
 
@@ -260,16 +273,12 @@ def _about_sensors(model: PlantModel, sensors: tuple[SensorReport, ...]) -> list
                 "estimate's bias and to "
                 "laboratory results"
             )
-        elif item.shift.absorbed:
+        elif item.absorbed:
+            shift = item.shift
+            by = f"is absorbed by {shift.absorbed_by}" if shift.absorbed_by else "is too small for its noise"
             lines.append(
-                f"{spec.tag}: a lasting bias of its tolerance is absorbed by "
-                f"{item.shift.absorbed_by}: only its onset "
-                "shows, and the estimates go wrong with it"
-            )
-        elif item.delay is not None and item.delay > 0.1 * model.spec.false_flag_interval:
-            lines.append(
-                f"{spec.tag}: a lasting bias of its tolerance leaves "
-                f"{item.shift.settled:.2g} sd; a flag takes "
-                f"{duration_text(item.delay)} on average once the filter has settled with it"
+                f"{spec.tag}: a lasting bias of its tolerance {by}: it leaves {shift.settled:.2g} sd, for which the "
+                f"test needs more than {LATEST_FLAG:.0%} of the false-flag interval on average"
+                + (": only its onset shows, and the estimates go wrong with it" if shift.absorbed_by else "")
             )
     return lines

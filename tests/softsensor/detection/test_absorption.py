@@ -7,6 +7,7 @@ import pytest
 
 from plant_models.plant_model import StochasticPart
 from softsensor.detection.absorption import fading, is_absorbed, settled_innovation
+from softsensor.detection.run_length import average_run_length, decision_interval
 from softsensor.estimation.steady_state import Rows, SteadyState, settle
 
 
@@ -84,7 +85,11 @@ def test_two_sensors_on_one_walk_share_the_bias() -> None:
 
 
 def test_what_counts_as_absorbed() -> None:
-    assert is_absorbed(0.0, 259_200.0)
-    assert is_absorbed(0.0199, 259_200.0)
-    assert not is_absorbed(0.05, 259_200.0)
-    assert not is_absorbed(3.0, 259_200.0)
+    """By the test as it ships for gross steps: reference value 0.5, one false flag per 30 d of 10-s cycles."""
+    promised = 259_200.0
+    interval = decision_interval(0.5, promised, clip=4.0)
+    absorbed = [
+        is_absorbed(average_run_length(0.5, interval, shift, clip=4.0), promised)
+        for shift in (0.0, 0.02, 0.05, 0.1, 0.3, 1.0, 3.0)
+    ]
+    assert absorbed == [True, True, True, True, False, False, False]
