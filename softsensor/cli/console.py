@@ -49,7 +49,7 @@ def line_of(news: News, units: Units) -> str | None:
         said = body["text"] if body["text"].startswith(body["kind"]) else f"{body['kind']}: {body['text']}"
         return f"{clock_text(body['time'])} {said}"
     if news.topic == "connection":
-        return f"plant {body['state']}: {body['reason']}"
+        return f"{clock_text(body['time'])} plant {body['state']}: {body['reason']}"
     return None
 
 

@@ -111,7 +111,7 @@ class LiveService:
                 self.connected = event.state == "connected"
                 self._tell_all("connection", f"{event.state}: {event.reason}")
                 for each in self._units:
-                    body = {"state": event.state, "reason": event.reason}
+                    body = {"time": self._clock.now(), "state": event.state, "reason": event.reason}
                     self.feed.publish(News(each.name, "connection", body))
             elif isinstance(event, ReadingsLost):
                 self._tell_all("lost readings", f"{event.count} readings came faster than they were taken")

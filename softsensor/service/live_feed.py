@@ -18,7 +18,7 @@ class News:
     - ``cycle``: ``{"time": us, "cycle": n, "estimates": {tag: {"value", "sd", "lower", "upper", "status", "reason"}},
       "sensors": {tag: {"reading", "predicted", "health"}}}``, nan as None;
     - ``flag``: the flag's columns; ``lab``: the outcome's columns; ``event``: ``{"time": us, "kind": text, "text": text}``;
-    - ``connection``: ``{"state": "connected" | "disconnected", "reason": text}``.
+    - ``connection``: ``{"time": us, "state": "connected" | "disconnected", "reason": text}``.
     """
 
     unit: str

@@ -86,5 +86,10 @@ def test_an_event_says_its_kind_once(units: Any, text: str, said: str) -> None:
     assert line_of(news, units) == f"2026-12-01 12:06:30Z {said}"
 
 
+def test_the_connection_has_a_time(units: Any) -> None:
+    news = News("R-1", "connection", {"time": DETECTED, "state": "connected", "reason": "subscribed"})
+    assert line_of(news, units) == "2026-12-01 12:06:30Z plant connected: subscribed"
+
+
 def test_cycles_are_left_out(units: Any) -> None:
     assert line_of(News("R-1", "cycle", {}), units) is None
