@@ -47,7 +47,7 @@ def create_app(database: Database, feed: LiveFeed, clock_speed: float = 1.0) -> 
     app.add_middleware(ProtectiveHeaders)
     app.include_router(data_routes(site))
     app.include_router(people_pages(site, pages))
-    app.include_router(people_forms(site))
+    app.include_router(people_forms(site, pages))
     app.include_router(page_routes(site, pages))
     app.include_router(form_routes(site, pages))
     app.mount("/static/bokeh", StaticFiles(directory=bokeh_scripts()))

@@ -17,7 +17,7 @@ from softsensor.records.reader import Unit, flags_of
 from softsensor.records.tables import FINDINGS
 from softsensor.web.flag_sheet import flag_sheet
 from softsensor.web.forms import Field, calibration, person
-from softsensor.web.pages import Pages
+from softsensor.web.pages import Pages, Refused
 from softsensor.web.rows import latest_cycle
 from softsensor.web.site import BadForm, ForeignForm, NotHere, Site
 
@@ -68,6 +68,23 @@ def how_long(text: str) -> float:
     return seconds
 
 
+def put_back_answer(
+    site: Site, pages: Pages, request: Request, place: tuple[str, str], refused: Refused | None = None
+) -> Response:
+    """The page that puts a flag's sensor back; ``place``: the unit's name and the flag's id."""
+    unit, flag, _ = site.flag(*place)
+    units = {item.tag: item.unit for item in site.models.spec(site.models.revision_of(unit)).sensors}
+    shown: dict[str, Any] = {
+        "out": any(not item.by_person for item in left_out_now(site, unit, flag.tag)),
+        "waiting": [item for item in waiting_for(site, unit, flag.tag) if item.act == "put back"],
+        "units": units,
+        "typed": {} if refused is None else refused.typed,
+        "complaint": "" if refused is None else refused.complaint,
+    }
+    status = 200 if refused is None else 400
+    return pages.page(request, "put_back.html", status, unit=unit, flag=flag, **shown)
+
+
 def people_pages(site: Site, pages: Pages) -> APIRouter:
     """The addresses that people open about sensors and tests."""
     router = APIRouter(default_response_class=HTMLResponse)
@@ -80,12 +97,7 @@ def people_pages(site: Site, pages: Pages) -> APIRouter:
 
     @router.get("/units/{name:path}/flag/put-back")
     def put_back_page(request: Request, name: str, id: str) -> Response:
-        unit, flag, _ = site.flag(name, id)
-        out = any(not item.by_person for item in left_out_now(site, unit, flag.tag))
-        waiting = [item for item in waiting_for(site, unit, flag.tag) if item.act == "put back"]
-        units = {item.tag: item.unit for item in site.models.spec(site.models.revision_of(unit)).sensors}
-        shown: dict[str, Any] = {"out": out, "waiting": waiting, "units": units}
-        return pages.page(request, "put_back.html", unit=unit, flag=flag, **shown)
+        return put_back_answer(site, pages, request, (name, id))
 
     @router.get("/units/{name:path}/sensor")
     def sensor_page(request: Request, name: str, tag: str) -> Response:
@@ -112,7 +124,7 @@ def people_pages(site: Site, pages: Pages) -> APIRouter:
     return router
 
 
-def people_forms(site: Site) -> APIRouter:
+def people_forms(site: Site, pages: Pages) -> APIRouter:
     """The addresses that take the forms of these pages."""
     router = APIRouter(default_response_class=RedirectResponse)
 
@@ -135,15 +147,22 @@ def people_forms(site: Site) -> APIRouter:
         reason: Field = "",
         as_found: Field = "",
         as_left: Field = "",
-    ) -> RedirectResponse:
+    ) -> Response:
         ours(request, token)
         unit, flag, _ = site.flag(name, id)
-        if finding not in FINDINGS:
-            raise BadForm(f"the finding is {finding[:40]!r}; expected one of: {', '.join(FINDINGS)}")
-        who = person(actor, reason)
-        found, left = calibration(as_found, "as found"), calibration(as_left, "as left")
-        if finding == "confirmed" and (found is None or left is None):
-            raise BadForm("a confirmed finding needs the errors as found and as left; expected two numbers")
+        try:
+            if finding not in FINDINGS:
+                raise BadForm(f"the finding is {finding[:40]!r}; expected one of: {', '.join(FINDINGS)}")
+            who = person(actor, reason)
+            found, left = calibration(as_found, "as found"), calibration(as_left, "as left")
+            if finding == "confirmed" and (found is None or left is None):
+                raise BadForm(
+                    "a confirmed finding needs the errors as found and as left; expected two numbers"
+                )
+        except BadForm as problem:
+            typed = {"finding": finding, "actor": actor, "reason": reason}
+            typed |= {"as_found": as_found, "as_left": as_left}
+            return put_back_answer(site, pages, request, (name, id), Refused(str(problem), typed))
         if not any(not item.by_person for item in left_out_now(site, unit, flag.tag)):
             raise BadForm(f"{flag.tag} is in use; expected a sensor that is left out after a flag")
         if any(item.act == "put back" for item in waiting_for(site, unit, flag.tag)):

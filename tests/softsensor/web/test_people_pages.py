@@ -70,6 +70,17 @@ def test_a_left_out_sensor_is_put_back_with_what_was_found(recorded: Database, a
     assert "being put back already" in again.text
 
 
+def test_a_bad_number_comes_back_with_what_was_typed(recorded: Database, asker: Any) -> None:
+    put_left_out(recorded)
+    answer = asker.post(PUT_BACK, {"token": asker.token(PUT_BACK), **CALIBRATED, "as_found": "1,2"})
+    assert answer.status_code == 400
+    assert "Nothing is on record yet: as found is &#39;1,2&#39;; expected a number" in answer.text
+    for field in ('value="confirmed" required checked', 'value="1,2"', 'value="-0.03"', 'value="A. Müller"'):
+        assert field in answer.text
+    assert ">new element</textarea>" in answer.text
+    assert decisions.waiting_decisions(recorded, 1) == []
+
+
 def test_a_sensor_in_use_cannot_be_put_back(recorded: Database, asker: Any) -> None:
     assert "nothing to put back" in asker.get(PUT_BACK).text
     answer = asker.post(PUT_BACK, {"token": asker.token(FLAG), **CALIBRATED})
