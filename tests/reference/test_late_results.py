@@ -1,4 +1,7 @@
-"""A laboratory result counts at its cycle, however late it arrives: the last bit of what in-order processing gives."""
+"""A laboratory result counts at its cycle, however late it arrives: the last bit of what in-order processing gives.
+
+Source: none published; the second computation is the dense filter in tests/independent, run in order.
+"""
 
 from __future__ import annotations
 

@@ -2,6 +2,7 @@
 
 The formulas are inverse Laplace transforms of G(s)/s, as any control text has them (for instance Seborg,
 Edgar, Mellichamp, Process Dynamics and Control, on first- and second-order processes): MEMORY, derived here.
+Source of the second computation: python-control (COMPUTED in the same run).
 """
 
 from __future__ import annotations
