@@ -27,6 +27,7 @@ from softsensor.records.writer import RecordsWriter
 from softsensor.service.clock import Clock, FollowingClock, SystemClock
 from softsensor.service.live import GRACE, LiveService
 from softsensor.service.site_file import SiteSettings, UnitSettings
+from softsensor.service.state_tables import fitted_states
 from softsensor.service.unit_service import UnitIdentity, UnitService
 from softsensor.unit_design import design_unit
 from softsensor.web.app import create_app
@@ -69,6 +70,10 @@ def read_models(settings: SiteSettings) -> list[PlantModel]:
             lines += problem.lines
             continue
         lines += _node_faults(settings, unit, model)
+        try:
+            fitted_states(unit.states, model.spec, unit.nodes, str(settings.path))
+        except SiteFileError as problem:
+            lines += problem.lines
         models.append(model)
     names = [model.spec.name for model in models]
     lines += [
@@ -84,8 +89,10 @@ def _node_faults(settings: SiteSettings, unit: UnitSettings, model: PlantModel) 
     labs = {item.lab.tag for item in model.spec.estimates if item.lab is not None}
     for tag in sorted(needed - set(unit.nodes)):
         yield f"{settings.path}: nodes: {tag} of {unit.model.name} has none; expected a node id for it"
-    for tag in sorted(set(unit.nodes) - needed - labs):
-        yield f"{settings.path}: nodes: {tag} is no input, sensor or laboratory tag of {unit.model.name}"
+    asked = {rule.tag for rule in unit.states}
+    for tag in sorted(set(unit.nodes) - needed - labs - asked):
+        what = f"no input, sensor or laboratory tag of {unit.model.name}, and no state asks for it"
+        yield f"{settings.path}: nodes: {tag} is {what}"
 
 
 def _source(
@@ -210,8 +217,14 @@ async def running_site(settings: SiteSettings, tell: Callable[[str], None]) -> A
         identities = [register(database, model, clock) for model in models]
         writer = stack.enter_context(RecordsWriter(database, patience=WRITER_PATIENCE))
         units = [
-            UnitService(design, identity, database, writer)
-            for design, identity in zip(designs, identities, strict=True)
+            UnitService(
+                design,
+                identity,
+                database,
+                writer,
+                fitted_states(unit.states, design.model.spec, unit.nodes, str(settings.path)),
+            )
+            for design, identity, unit in zip(designs, identities, settings.units, strict=True)
         ]
         sinks = []
         if settings.publish is not None:

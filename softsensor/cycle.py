@@ -18,9 +18,10 @@ from plant_models.errors import Problem
 from plant_models.plant_model import PlantModel
 from softsensor.compiled_cycle import BlockInputs, BlockOutputs, empty_outputs, run_block
 from softsensor.detection.fault_tests import TestState, initial_tests
-from softsensor.detection.flags import Flag, FlagBook, Note
+from softsensor.detection.flags import Flag, FlagBook, Note, RestSpell
 from softsensor.detection.follow_up import DetectionDesign, FollowUp, Moment, follow_up
 from softsensor.detection.people import Decision, Taken, ended, next_end, take
+from softsensor.detection.plant_states import StateChange, change_state
 from softsensor.estimation.kernel import EstimatorState, Floats, Ints, Kernel, initial_state
 from softsensor.readings_of_cycle import CycleQuality, CycleReadings
 
@@ -138,6 +139,7 @@ class CycleResults:
     lab_sd: Floats
     flags: tuple[Flag, ...] = ()
     notes: tuple[Note, ...] = ()
+    rests: tuple[RestSpell, ...] = ()
     rewind: FollowUp | None = None
     """Set where a sensor is to be left out from an earlier cycle on: the caller goes back and forward again."""
 
@@ -163,6 +165,7 @@ def join_results(parts: Sequence[CycleResults]) -> CycleResults:
         lab_sd=np.concatenate([part.lab_sd for part in parts]),
         flags=tuple(flag for part in parts for flag in part.flags),
         notes=tuple(note for part in parts for note in part.notes),
+        rests=tuple(spell for part in parts for spell in part.rests),
     )
 
 
@@ -249,6 +252,7 @@ def run_cycles(
         status=results.status | np.array([bool(text) for text in doubts], dtype=np.int8),
         flags=outcome.changes,
         notes=begun.notes + outcome.notes,
+        rests=begun.rests + outcome.rests,
         rewind=outcome if outcome.exclusion is not None else None,
     )
     digest = state.digest.add(result_rows(results))
@@ -256,10 +260,13 @@ def run_cycles(
 
 
 def doubts_of(design: UnitDesign, book: FlagBook, cycle: int, rejected: tuple[int, ...]) -> list[str]:
-    """Per estimate, what speaks against it besides its inputs: flagged instruments in use, results that do not fit."""
+    """Per estimate, what speaks against it besides its inputs: flagged instruments in use, a state of the plant, results
+    that do not fit.
+    """
     flagged = [
         f"{flag.tag} is flagged ({flag.kind})" for flag in book.doubted(cycle, design.model.sensor_tags)
     ]
+    flagged += [state.key for state in book.states if state.uncertain and state.covers(cycle)]
     return [
         "; ".join(
             [*flagged, *([f"the last {count} laboratory results do not fit"] if count >= REJECTED else [])]
@@ -269,14 +276,23 @@ def doubts_of(design: UnitDesign, book: FlagBook, cycle: int, rejected: tuple[in
 
 
 def decide(
-    design: UnitDesign, state: CycleState, decisions: Sequence[Decision], time: int
+    design: UnitDesign,
+    state: CycleState,
+    decisions: Sequence[Decision],
+    time: int,
+    changes: Sequence[StateChange] = (),
 ) -> tuple[CycleState, FollowUp, tuple[Taken, ...]]:
-    """What people have decided takes effect at the coming cycle, at ``time``: the state, what to tell, what became of it."""
+    """What people have decided, and then what the plant's state has become, takes effect at the coming cycle, at ``time``:
+    the state, what to tell, what became of the decisions.
+    """
     outcome, taken, digest = FollowUp(state.book), [], state.digest
     for decision in decisions:
         outcome, one = take(design.detection, outcome, state.next_cycle, time, decision)
         digest = digest.mix(one.as_bytes())
         taken.append(one)
+    for change in changes:
+        outcome = change_state(design.detection, outcome, state.next_cycle, time, change)
+        digest = digest.mix(change.as_bytes(state.next_cycle))
     digest = digest.mix(b"".join(_flag_bytes(flag) for flag in outcome.changes))
     return replace(state, book=outcome.book, digest=digest), outcome, tuple(taken)
 

@@ -3,8 +3,9 @@
 from __future__ import annotations
 
 import itertools
-from collections.abc import Iterator
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
+from pathlib import Path
 from typing import Any
 
 import pandas as pd
@@ -22,7 +23,8 @@ from softsensor.readings_of_cycle import CycleReadings
 from softsensor.records import series
 from softsensor.records.engine import Database, open_database
 from softsensor.records.reader import find_unit, revisions_of
-from softsensor.service.assembly import assemble_blocks, rules_of
+from softsensor.service.assembly import assemble_blocks, history_cycles, rules_of
+from softsensor.service.plant_state import StateRule, recorded_changes
 from softsensor.service.replay import Replay, gathered, horizon_of, parts_of
 from softsensor.service.result_tables import (
     ESTIMATE_COLUMNS,
@@ -36,6 +38,7 @@ from softsensor.service.result_tables import (
 )
 from softsensor.service.resuming import recorded_cycles
 from softsensor.service.smoothed_run import SmoothedRun
+from softsensor.service.state_tables import fitted_states, read_states_file
 from softsensor.unit_design import design_unit
 
 BLOCK = 8192
@@ -75,6 +78,11 @@ def lab_tags(model: PlantModel) -> list[str]:
     return [item.lab.tag for item in model.spec.estimates if item.lab is not None]
 
 
+def replay_tags(model: PlantModel, states: Sequence[StateRule] = ()) -> tuple[str, ...]:
+    """The tags that a replay needs of a history: the model's, and those of the states."""
+    return tuple(dict.fromkeys((*rules_of(model.spec).tags, *(rule.tag for rule in states))))
+
+
 def _ignored(lab: LabResults) -> Iterator[str]:
     """What the laboratory's file holds and no estimate of the model takes."""
     for what, names in (("tags", lab.ignored_tags), ("columns", lab.ignored_columns)):
@@ -82,8 +90,13 @@ def _ignored(lab: LabResults) -> Iterator[str]:
             yield f"{lab.name}: {what} that the model does not know: {', '.join(names)}"
 
 
-def prepare(model: PlantModel, history: History, lab: LabResults | None) -> tuple[Replay, list[Note]]:
-    """A replay of a history, with the laboratory results that it can see; the others are named in notes."""
+def prepare(
+    model: PlantModel, history: History, lab: LabResults | None, states: Sequence[StateRule] = ()
+) -> tuple[Replay, list[Note]]:
+    """A replay of a history, with the laboratory results that it can see; the others are named in notes.
+
+    :param states: states of the plant in which the tests rest; their tags are in the history.
+    """
     notes: list[Note] = []
     arrivals: list[LabArrival] = []
     if lab is not None:
@@ -93,7 +106,8 @@ def prepare(model: PlantModel, history: History, lab: LabResults | None) -> tupl
     if history.ignored_columns:
         names = ", ".join(history.ignored_columns)
         notes.append(Note(history.first_time, "history", f"columns that the model does not know: {names}"))
-    parts = parts_of(assemble_blocks(model.spec, history, BLOCK), arrivals)
+    changes = recorded_changes(states, history.series, history_cycles(model.spec, history)) if states else ()
+    parts = parts_of(assemble_blocks(model.spec, history, BLOCK), arrivals, changes)
     return Replay(design_unit(model), parts, horizon_of(arrivals)), notes
 
 
@@ -103,18 +117,22 @@ def replay(
     lab: pd.DataFrame | None = None,
     timezone: str | None = None,
     smooth: bool = False,
+    states: str | Path | None = None,
 ) -> ReplayResult:
     """Run a model over a recorded history held in data frames.
 
     :param history: a ``time`` column and one column per tag; optional ``<tag>.quality`` columns.
     :param lab: columns sampled_at, reported_at, tag, value and, where known, time_uncertainty.
     :param smooth: smoothed estimates as well.
+    :param states: a file with ``[[state]]`` tables: states of the plant in which the tests rest.
     :raises ReplayError: no cycle lies within the history.
     :raises HistoryFileError, LabFileError: a frame that cannot be used.
     """
-    recorded = history_from_frame(history, rules_of(model.spec).tags, timezone)
+    rules = () if states is None else read_states_file(states)
+    recorded = history_from_frame(history, replay_tags(model, rules), timezone)
+    fitted = fitted_states(rules, model.spec, recorded.tags, str(states))
     results = lab_from_frame(lab, lab_tags(model), timezone) if lab is not None else None
-    running, notes = prepare(model, recorded, results)
+    running, notes = prepare(model, recorded, results, fitted)
     running.totals.notes += notes
     estimates, innovations = [], []
     with SmoothedRun(running.design) as smoothing:

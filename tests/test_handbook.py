@@ -151,8 +151,10 @@ def test_the_readme_leads_to_every_chapter_and_has_the_two_commands() -> None:
 
 @pytest.mark.parametrize("text", all_blocks("toml"))
 def test_every_toml_block_is_a_sound_file(text: str, tmp_path: Path) -> None:
-    if "database" in tomllib.loads(text):
-        (tmp_path / "site.toml").write_text(text, encoding="utf-8")
+    found = tomllib.loads(text)
+    if "database" in found or "state" in found.get("unit", {}):
+        whole = text if "database" in found else f"{SITE_EXAMPLE}\n{text}"
+        (tmp_path / "site.toml").write_text(whole, encoding="utf-8")
         assert read_site_file(tmp_path / "site.toml", ENVIRONMENT).units
     else:
         assert parse_model_text(text, "m.toml").paths

@@ -47,6 +47,8 @@ class Exclusion:
     until: int | None = None
     by_person: bool = False
     """Left out for work on it: its readings mean nothing, and no flag is opened on it."""
+    state: str = ""
+    """The plant state for which it is left out, where it is one and no person's word."""
 
     def covers(self, cycle: int) -> bool:
         """Is the sensor kept out at this cycle?"""
@@ -69,6 +71,45 @@ class Rest:
 
     until: int
     occasion: str
+    since: int = 0
+    """Time at which it began, UTC microseconds."""
+    why: str = ""
+
+
+@dataclass(frozen=True, slots=True)
+class HeldState:
+    """A state of the plant in which its model does not hold: no tests of innovations while it lasts."""
+
+    name: str
+    condition: str
+    why: str
+    """The condition, the value that met it, and since when."""
+    since: int
+    """Time of the cycle at which it began to count, UTC microseconds."""
+    until: int | None = None
+    """First cycle at which the tests go on; None while the condition holds."""
+    uncertain: bool = True
+    """The estimates are Uncertain meanwhile."""
+
+    @property
+    def key(self) -> str:
+        """What tells this state from the others of its unit."""
+        return f"{self.name}: {self.condition}"
+
+    def covers(self, cycle: int) -> bool:
+        """Do the tests rest at this cycle because of it?"""
+        return self.until is None or cycle < self.until
+
+
+@dataclass(frozen=True, slots=True)
+class RestSpell:
+    """A time in which tests rest, for the records: of one sensor, or of all where ``tag`` is empty."""
+
+    cause: str
+    tag: str
+    since: int
+    until: int | None
+    why: str
 
 
 @dataclass(frozen=True, slots=True)
@@ -88,6 +129,7 @@ class FlagBook:
     episode: Episode | None = None
     exclusions: tuple[Exclusion, ...] = ()
     rest: Rest | None = None
+    states: tuple[HeldState, ...] = ()
 
     def find(self, tag: str, kinds: tuple[Kind, ...]) -> Flag | None:
         """The open flag of a tag, of one of these kinds."""
@@ -113,8 +155,30 @@ class FlagBook:
         )
 
     def resting(self, cycle: int) -> bool:
+        """Do the unit's tests rest at a cycle because a person said so, or because of the plant's state?"""
+        return self.rested(cycle) or any(state.covers(cycle) for state in self.states)
+
+    def held(self, sensors: tuple[str, ...]) -> list[tuple[str, str]]:
+        """The states of the plant that hold, each with the sensor that it concerns, empty for all."""
+        whole = [(state.key, "") for state in self.states if state.until is None]
+        return whole + [
+            (item.state, sensors[item.sensor])
+            for item in self.exclusions
+            if item.state and item.until is None
+        ]
+
+    def rested(self, cycle: int) -> bool:
         """Do the unit's tests rest at a cycle because a person said so?"""
         return self.rest is not None and cycle < self.rest.until
+
+
+def time_words(time: int) -> str:
+    """A time for a line on record.
+
+    >>> time_words(1_700_000_000_000_000)
+    '2023-11-14 22:13:20 UTC'
+    """
+    return f"{EPOCH + timedelta(microseconds=time):%Y-%m-%d %H:%M:%S} UTC"
 
 
 def flag_name(unit: str, tag: str, kind: Kind, detected: int) -> str:

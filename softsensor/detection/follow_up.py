@@ -17,7 +17,7 @@ from softsensor.detection.diagnosis import (
     onset_ages,
 )
 from softsensor.detection.fault_tests import TestDesign, TestState
-from softsensor.detection.flags import Episode, Exclusion, Flag, FlagBook, Kind, Note, flag_name
+from softsensor.detection.flags import Episode, Exclusion, Flag, FlagBook, Kind, Note, RestSpell, flag_name
 from softsensor.detection.signatures import Hypothesis, SteadyFilter, signatures, steady_filter
 from softsensor.estimation.kernel import Floats, Ints, Kernel
 
@@ -65,6 +65,8 @@ class FollowUp:
     changes: tuple[Flag, ...] = ()
     """Flags opened or cleared at this cycle."""
     notes: tuple[Note, ...] = ()
+    rests: tuple[RestSpell, ...] = ()
+    """Times in which tests rest, begun or given an end at this cycle."""
     exclusion: Exclusion | None = None
     """A sensor to be left out, from its onset on."""
 

@@ -8,13 +8,12 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass, replace
-from datetime import timedelta
 from typing import Literal
 
 import numpy as np
 
 from softsensor.detection.fault_tests import TestState
-from softsensor.detection.flags import EPOCH, Exclusion, FlagBook, Note, Rest
+from softsensor.detection.flags import Exclusion, FlagBook, Note, Rest, RestSpell, time_words
 from softsensor.detection.follow_up import SHIFT_KINDS, DetectionDesign, FollowUp
 
 Act = Literal["put back", "leave out", "rest", "go on"]
@@ -83,16 +82,19 @@ def _about_the_tests(
     if decision.act == "rest":
         length = _cycles(design, decision.seconds)
         until = time + length * design.sample_us
-        text = (
-            f"{decision.occasion}: the tests rest until {_when(until)}, the estimates go on; {_who(decision)}"
-        )
-        book = replace(book, rest=Rest(cycle + length, decision.occasion))
-        return _noted(outcome, book, time, "suppression", text), Taken(decision, cycle, time, until)
-    if book.rest is None or not book.resting(cycle):
+        text = f"{decision.occasion}: the tests rest until {time_words(until)}, the estimates go on; {_who(decision)}"
+        rest = Rest(cycle + length, decision.occasion, time, _who(decision))
+        outcome = _noted(outcome, replace(book, rest=rest), time, "suppression", text)
+        return _with_spell(outcome, rest, until), Taken(decision, cycle, time, until)
+    if book.rest is None or not book.rested(cycle):
         return outcome, Taken(decision, cycle, time, None, "the tests were not at rest")
     text = f"{book.rest.occasion}: the rest of the tests is ended; {_who(decision)}"
-    book = replace(book, rest=replace(book.rest, until=cycle))
-    return _noted(outcome, book, time, "suppression", text), Taken(decision, cycle, time, None)
+    outcome = _noted(outcome, replace(book, rest=replace(book.rest, until=cycle)), time, "suppression", text)
+    return _with_spell(outcome, book.rest, time), Taken(decision, cycle, time, None)
+
+
+def _with_spell(outcome: FollowUp, rest: Rest, until: int) -> FollowUp:
+    return replace(outcome, rests=(*outcome.rests, RestSpell(rest.occasion, "", rest.since, until, rest.why)))
 
 
 def _leave_out(
@@ -103,7 +105,7 @@ def _leave_out(
     until = time + length * design.sample_us
     kept = tuple(_cut(item, sensor, cycle, people_only=True) for item in outcome.book.exclusions)
     book = replace(outcome.book, exclusions=(*kept, Exclusion(sensor, cycle, cycle + length, by_person=True)))
-    text = f"{decision.tag} is left out until {_when(until)}; {_who(decision)}"
+    text = f"{decision.tag} is left out until {time_words(until)}; {_who(decision)}"
     return _noted(outcome, book, time, "left out by a person", text), Taken(decision, cycle, time, until)
 
 
@@ -135,9 +137,10 @@ def _cut(item: Exclusion, sensor: int, cycle: int, people_only: bool) -> Exclusi
 
 
 def next_end(book: FlagBook, cycle: int) -> int:
-    """Cycles from ``cycle`` to the next one at which something that a person decided ends; large where nothing does."""
+    """Cycles from ``cycle`` to the next one at which a rest or a leaving out ends; large where none does."""
     ends = [item.until for item in book.exclusions if item.until is not None]
     ends += [] if book.rest is None else [book.rest.until]
+    ends += [state.until for state in book.states if state.until is not None]
     return min((end - cycle for end in ends if end > cycle), default=2**62)
 
 
@@ -153,12 +156,10 @@ def ended(design: DetectionDesign, book: FlagBook, tests: TestState, cycle: int,
             _forget_readings(design, book, tests, sensor)
             tag = design.model.spec.sensors[sensor].tag
             outcome = _noted(outcome, outcome.book, time, "put back", f"{tag} counts again")
-    rest_over = book.rest is not None and book.rest.until == cycle
-    if rest_over and book.rest is not None:
+    outcome, over = _rests_over(outcome, cycle, time)
+    if over:
         for sensor in range(design.kernel.n_sensors):
             tests.repeats[sensor], tests.run_probability[sensor] = 0, 1.0
-        text = f"{book.rest.occasion}: the tests go on"
-        outcome = _noted(outcome, replace(outcome.book, rest=None), time, "suppression", text)
     if outcome.notes:
         tests.high[:] = tests.low[:] = tests.last_z[:] = tests.older_z[:] = 0.0
         tests.up[:] = 0
@@ -166,6 +167,22 @@ def ended(design: DetectionDesign, book: FlagBook, tests: TestState, cycle: int,
         tests.valid_from[0] = cycle
         outcome = replace(outcome, book=replace(outcome.book, episode=None))
     return outcome
+
+
+def _rests_over(outcome: FollowUp, cycle: int, time: int) -> tuple[FollowUp, bool]:
+    """Forget rests and states that end at this cycle; whether the unit's tests go on with it."""
+    book = outcome.book
+    ending = [book.rest.occasion] if book.rest is not None and book.rest.until == cycle else []
+    ending += [state.name for state in book.states if state.until == cycle]
+    if not ending:
+        return outcome, False
+    kept = tuple(state for state in book.states if state.until != cycle)
+    rest = book.rest if book.rested(cycle) else None
+    after = replace(book, rest=rest, states=kept)
+    still = [state.name for state in kept] + ([] if rest is None else [rest.occasion])
+    what = f"they still rest: {', '.join(still)}" if still else "the tests go on"
+    text = f"{', '.join(ending)}: {what}"
+    return _noted(outcome, after, time, "suppression", text), not still
 
 
 def _forget_readings(design: DetectionDesign, book: FlagBook, tests: TestState, sensor: int) -> None:
@@ -188,7 +205,3 @@ def _cycles(design: DetectionDesign, seconds: float) -> int:
 
 def _who(decision: Decision) -> str:
     return f"{decision.actor}: {decision.reason}"
-
-
-def _when(time: int) -> str:
-    return f"{EPOCH + timedelta(microseconds=time):%Y-%m-%d %H:%M:%S} UTC"

@@ -12,6 +12,7 @@ from softsensor.errors import RecordsError
 from softsensor.records.engine import Database
 from softsensor.records.happenings import Event, record_event
 from softsensor.records.inserting import insert_or_replace
+from softsensor.records.rests import end_rests
 from softsensor.records.tables import decisions, left_out
 
 
@@ -86,6 +87,7 @@ def begin_anew(connection: Connection, unit_id: int, time_us: int) -> None:
     rest = update(decisions).where(decisions.c.unit_id == unit_id, decisions.c.until_us > time_us)
     changed = connection.execute(out.values(until_us=time_us)).rowcount
     changed += connection.execute(rest.values(until_us=time_us)).rowcount
+    changed += end_rests(connection, unit_id, time_us)
     if changed:
         text = "the run begins anew: what was left out before counts again, and tests that rested run"
         record_event(connection, Event(unit_id, time_us, "put back", text, key=f"{unit_id} {time_us} anew"))

@@ -255,6 +255,18 @@ left_out = Table(
     comment="when each sensor was kept from the estimate",
 )
 
+rests = Table(
+    "rests",
+    metadata,
+    Column("unit_id", BigInteger, ForeignKey("units.id"), primary_key=True),
+    Column("cause", Text, primary_key=True),
+    Column("tag", Text, primary_key=True),
+    Column("since_us", BigInteger, primary_key=True, autoincrement=False),
+    Column("until_us", BigInteger),
+    Column("why", Text, nullable=False),
+    comment="when tests of innovations rested and why; an empty tag means all sensors",
+)
+
 audit_trail = Table(
     "audit_trail",
     metadata,

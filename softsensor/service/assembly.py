@@ -118,6 +118,14 @@ def assemble_blocks(spec: UnitSpec, history: History, block: int = 8192) -> Iter
         yield readings
 
 
+def history_cycles(spec: UnitSpec, history: History) -> NDArray[np.int64]:
+    """The times of the cycles within a history, UTC microseconds.
+
+    :raises ReplayError: the sample time is not a whole number of microseconds.
+    """
+    return _times_of(rules_of(spec), history)
+
+
 class LiveAssembly:
     """Collects readings in any order of arrival and gives each cycle what it sees.
 

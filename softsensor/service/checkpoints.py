@@ -11,7 +11,7 @@ from numpy.typing import NDArray
 
 from softsensor.cycle import CycleState, Digest, LabAtCycle
 from softsensor.detection.fault_tests import TestState
-from softsensor.detection.flags import Episode, Exclusion, Flag, FlagBook, Rest
+from softsensor.detection.flags import Episode, Exclusion, Flag, FlagBook, HeldState, Rest
 from softsensor.errors import RecordsError
 from softsensor.estimation.kernel import EstimatorState
 from softsensor.records.named_arrays import pack_arrays, unpack_arrays
@@ -67,6 +67,7 @@ def unpack_state(blob: bytes, version: int) -> tuple[CycleState, Context]:
             Episode(**rest["episode"]) if rest["episode"] else None,
             tuple(Exclusion(**item) for item in rest["exclusions"]),
             Rest(**rest["rest"]) if rest.get("rest") else None,
+            tuple(HeldState(**item) for item in rest.get("states", ())),
         )
         digest = Digest(bytes.fromhex(rest["chain"]), bytes.fromhex(rest["pending"]), rest["rows"])
         labs = tuple(
@@ -92,6 +93,7 @@ def _rest(state: CycleState, context: Context) -> bytes:
         "open": [asdict(flag) for flag in book.open],
         "episode": asdict(book.episode) if book.episode else None,
         "rest": asdict(book.rest) if book.rest else None,
+        "states": [asdict(state) for state in book.states],
         "exclusions": [asdict(item) for item in book.exclusions],
         "chain": state.digest.chain.hex(),
         "pending": state.digest.pending.hex(),

@@ -13,10 +13,11 @@ from plant_models.plant_model import PlantModel
 from softsensor.cycle import CycleResults, UnitDesign
 from softsensor.detection.flags import Exclusion, Flag, Note
 from softsensor.detection.people import Decision, Taken
+from softsensor.detection.plant_states import StateChange
 from softsensor.estimation.lab_results import LabArrival, LabOutcome
 from softsensor.estimation.past import Revision
 from softsensor.readings_of_cycle import CycleReadings
-from softsensor.records import blocks, decisions, happenings, storing
+from softsensor.records import blocks, decisions, happenings, rests, storing
 from softsensor.service.checkpoints import FORMAT, pack_estimator
 from softsensor.service.result_tables import reasons
 from softsensor.service.unit_run import Came
@@ -39,7 +40,9 @@ class Step:
 
 
 def pack_decisions(came: Sequence[Came]) -> bytes:
-    """What came before a cycle besides its readings: laboratory results, what people decided; empty for none."""
+    """What came before a cycle besides its readings: laboratory results, what people decided, states of the plant; empty
+    for none.
+    """
     labs = [
         [a.estimate, a.tag, a.sampled, a.reported, a.value.hex(), a.time_uncertainty, a.decided_at]
         for a in came
@@ -50,7 +53,13 @@ def pack_decisions(came: Sequence[Came]) -> bytes:
         for d in came
         if isinstance(d, Decision)
     ]
-    content = ({"laboratory": labs} if labs else {}) | ({"people": people} if people else {})
+    states = [
+        [s.name, s.condition, s.sensor, s.begins, s.value.hex(), s.unit, s.since, float(s.settle).hex()]
+        for s in came
+        if isinstance(s, StateChange)
+    ]
+    kinds = {"laboratory": labs, "people": people, "plant": states}
+    content = {kind: items for kind, items in kinds.items() if items}
     return json.dumps(content, separators=(",", ":")).encode() if content else b""
 
 
@@ -65,6 +74,9 @@ def unpack_decisions(blob: bytes) -> list[Came]:
     ]
     for number, act, tag, flag, occasion, seconds, actor, reason in content.get("people", ()):
         found.append(Decision(number, act, tag, flag, occasion, float.fromhex(seconds), actor, reason))
+    for name, condition, sensor, begins, value, unit, since, settle in content.get("plant", ()):
+        seen = float.fromhex(value)
+        found.append(StateChange(name, condition, sensor, begins, seen, unit, since, float.fromhex(settle)))
     return found
 
 
@@ -101,6 +113,7 @@ def write_step(connection: Connection, unit_id: int, design: UnitDesign, step: S
         _write_flag(connection, unit_id, flag, answers.get(flag.tag))
     for number, note in enumerate(step.results.notes):
         _write_note(connection, unit_id, note, f"{unit_id} {cycle} {number} {note.kind}")
+    rests.store_rests(connection, unit_id, step.results.rests)
     for outcome in step.labs:
         _write_lab(connection, unit_id, outcome)
     for revision in step.revisions:

@@ -8,6 +8,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from softsensor.cycle import CycleResults, LabAtCycle, UnitDesign, join_results, start
+from softsensor.detection.plant_states import StateChange
 from softsensor.estimation.lab_results import LabArrival, LabOutcome
 from softsensor.estimation.past import Past
 from softsensor.readings_of_cycle import CycleReadings, join_readings
@@ -76,19 +77,28 @@ class Replay:
         return self.run.state.digest.hexdigest()
 
 
-def parts_of(blocks: Iterable[CycleReadings], labs: Iterable[LabArrival]) -> Iterator[Part]:
-    """Cut blocks of cycles so that each part begins where laboratory results have arrived."""
-    waiting = sorted(labs, key=lambda item: item.arrived)
+def parts_of(
+    blocks: Iterable[CycleReadings],
+    labs: Iterable[LabArrival],
+    changes: Iterable[tuple[int, StateChange]] = (),
+) -> Iterator[Part]:
+    """Cut blocks of cycles so that each part begins where laboratory results have arrived or the plant's state changes.
+
+    :param changes: each with the time of the cycle that learns of it, in order.
+    """
+    waiting: list[tuple[int, Came]] = [(lab.arrived, lab) for lab in labs]
+    waiting = sorted([*waiting, *changes], key=lambda item: item[0])
     for block in blocks:
         row = 0
         while row < len(block):
-            now, arrivals = int(block.times[row]), []
-            while waiting and waiting[0].arrived <= now:
-                arrivals.append(waiting.pop(0))
+            now: int = int(block.times[row])
+            came: list[Came] = []
+            while waiting and waiting[0][0] <= now:
+                came.append(waiting.pop(0)[1])
             stop = len(block)
             if waiting:
-                stop = max(row + 1, int(np.searchsorted(block.times, waiting[0].arrived, side="left")))
-            yield slice_readings(block, row, min(stop, len(block))), arrivals
+                stop = max(row + 1, int(np.searchsorted(block.times, waiting[0][0], side="left")))
+            yield slice_readings(block, row, min(stop, len(block))), came
             row = min(stop, len(block))
 
 

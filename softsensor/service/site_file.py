@@ -15,6 +15,8 @@ from plant_models.model_kinds import Kind, RefusalError
 from plant_models.model_tables import FaultList, Table, rows, single, unknown_sections
 from plant_models.toml_lines import scan_toml_lines
 from softsensor.errors import SiteFileError
+from softsensor.service.plant_state import StateRule
+from softsensor.service.state_tables import states_of
 
 SECTIONS = ("database", "plant", "publish", "web", "unit", "clock")
 VARIABLE = re.compile(r"\$\{([A-Za-z_][A-Za-z0-9_]*)\}")
@@ -35,10 +37,11 @@ class PlantSettings:
 
 @dataclass(frozen=True, slots=True)
 class UnitSettings:
-    """One unit: its model file and, by tag, the plant's node ids."""
+    """One unit: its model file, by tag the plant's node ids, and the states of the plant in which its tests rest."""
 
     model: Path
     nodes: Mapping[str, str]
+    states: tuple[StateRule, ...] = ()
 
 
 @dataclass(frozen=True, slots=True)
@@ -219,8 +222,8 @@ def _plant(table: Table, path: Path) -> PlantSettings:
 
 
 def _unit(table: Table, path: Path) -> UnitSettings:
-    table.only("model", "nodes")
-    return UnitSettings(path.parent / table.read("model", TEXT), table.read("nodes", NODES))
+    table.only("model", "nodes", "state")
+    return UnitSettings(path.parent / table.read("model", TEXT), table.read("nodes", NODES), states_of(table))
 
 
 def _clock(table: Table) -> ClockSettings:

@@ -21,6 +21,7 @@ from softsensor.cycle import (
     run_cycles,
 )
 from softsensor.detection.people import Decision, Taken
+from softsensor.detection.plant_states import StateChange
 from softsensor.estimation.kernel import EstimatorState, Floats
 from softsensor.estimation.lab_results import (
     IMPOSSIBLE,
@@ -47,7 +48,7 @@ class Advance:
     taken: tuple[Taken, ...] = ()
 
 
-Came = LabArrival | Decision
+Came = LabArrival | Decision | StateChange
 """What may come before a cycle besides its readings."""
 
 
@@ -83,6 +84,7 @@ class UnitRun:
         self.first_time = first_time
         self._labs = sorted(labs, key=_order)
         self._sample_us = design.detection.sample_us
+        self._early: list[StateChange] = []
 
     @property
     def started(self) -> bool:
@@ -90,10 +92,13 @@ class UnitRun:
         return self.first_time is not None
 
     def advance(self, readings: CycleReadings, came: Iterable[Came] = ()) -> Advance:
-        """Run these cycles; laboratory results and people's decisions came before the first of them."""
+        """Run these cycles; laboratory results, people's decisions and changes of the plant's state came before
+        the first of them.
+        """
         all_came = list(came)
         arrivals = [item for item in all_came if isinstance(item, LabArrival)]
         decisions = [item for item in all_came if isinstance(item, Decision)]
+        self._early += [item for item in all_came if isinstance(item, StateChange)]
         waiting = 0 if self.started else self._rows_to_wait(readings)
         results = [_waiting_results(self.design, slice_readings(readings, 0, waiting))] if waiting else []
         if waiting == len(readings):
@@ -102,7 +107,8 @@ class UnitRun:
         if self.first_time is None:
             self.first_time = int(readings.times[waiting]) - self.state.next_cycle * self._sample_us
         now = int(readings.times[waiting])
-        self.state, told, taken = decide(self.design, self.state, decisions, now)
+        self.state, told, taken = decide(self.design, self.state, decisions, now, self._early)
+        self._early = []
         outcomes: list[LabOutcome] = []
         revisions: list[Revision] = []
         for arrival in sorted(arrivals, key=lambda item: (item.sampled, item.reported, item.tag, item.value)):
@@ -115,7 +121,7 @@ class UnitRun:
             result, revision = self._run(part)
             if row == waiting:
                 flags, notes = told.changes + result.flags, told.notes + result.notes
-                result = replace(result, flags=flags, notes=notes)
+                result = replace(result, flags=flags, notes=notes, rests=told.rests + result.rests)
             results.append(result)
             revisions += [revision] if revision is not None else []
             row += len(result)

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import asyncio
+from collections.abc import Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -22,6 +23,7 @@ from softsensor.records.reader import lab_results_of
 from softsensor.records.writer import RecordsWriter, WriterState
 from softsensor.service.assembly import NO_LIMIT, AssemblyState, LiveAssembly, TagRule, rules_of
 from softsensor.service.checkpoints import FORMAT, Context, pack_state
+from softsensor.service.plant_state import PlantStates, StateRule
 from softsensor.service.reading_rules import TagState
 from softsensor.service.recording import Step, pack_decisions, write_step
 from softsensor.service.replay import LEAST_HORIZON_S
@@ -45,7 +47,12 @@ class UnitService:
     """A unit under way. Feed it readings with :meth:`accept`; run each cycle, in order, with :meth:`run_cycle`."""
 
     def __init__(
-        self, design: UnitDesign, identity: UnitIdentity, database: Database, writer: RecordsWriter
+        self,
+        design: UnitDesign,
+        identity: UnitIdentity,
+        database: Database,
+        writer: RecordsWriter,
+        states: Sequence[StateRule] = (),
     ) -> None:
         self.design = design
         self.identity = identity
@@ -62,6 +69,7 @@ class UnitService:
         self._seen_decisions: set[int] = set()
         self._horizon = int(np.ceil(LEAST_HORIZON_S / design.model.spec.sample_time)) + 2
         self._assembly = LiveAssembly(design.model.spec)
+        self._states = PlantStates(states)
         self.run = fresh_run(design, self._horizon)
         self.next_time: int | None = None
         self._not_before = 0
@@ -79,6 +87,7 @@ class UnitService:
 
     def accept(self, reading: Reading, now: int) -> None:
         """Take a reading, or a laboratory result: its source timestamp is its sampling time."""
+        self._states.accept(reading)
         index = self._lab_index.get(reading.tag)
         if index is None:
             self._assembly.accept(reading)
@@ -161,7 +170,7 @@ class UnitService:
             self._keep_first_state(time)
         arrivals = [lab for lab in self._pending_labs if lab.arrived <= time]
         self._pending_labs = [lab for lab in self._pending_labs if lab.arrived > time]
-        came: list[Came] = [*arrivals, *self._pending_decisions]
+        came: list[Came] = [*arrivals, *self._pending_decisions, *self._states.changes_at(time)]
         self._pending_decisions = []
         await self._store_readings(readings, came)
         step = self._advance(readings, came)
@@ -262,6 +271,7 @@ class UnitService:
             return
         self.next_time = last + self._sample_us
         self._assembly = LiveAssembly(self.model.spec, held_values(self.model.spec, seen.readings))
+        self._states.resume(self.run.state.book.held(self.model.sensor_tags), last)
 
 
 def _take_note(written: asyncio.Future[None]) -> None:

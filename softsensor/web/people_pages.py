@@ -14,6 +14,7 @@ from plant_models.specification import SensorSpec
 from softsensor.records import changes, decisions
 from softsensor.records.decisions import LeftOut, StoredDecision
 from softsensor.records.reader import Unit, flags_of
+from softsensor.records.rests import rests_at
 from softsensor.records.tables import FINDINGS
 from softsensor.web.flag_sheet import flag_sheet
 from softsensor.web.forms import Field, calibration, person
@@ -118,7 +119,10 @@ def people_pages(site: Site, pages: Pages) -> APIRouter:
         unit = site.unit(name)
         now = newest_us(site, unit)
         rest = None if now is None else decisions.rest_at(site.database, unit.id, now)
-        shown: dict[str, Any] = {"rest": rest, "waiting": waiting_for(site, unit, None)}
+        others = [] if now is None else rests_at(site.database, unit.id, now)
+        if rest is not None:
+            others = [item for item in others if item.tag or item.cause != rest.occasion]
+        shown: dict[str, Any] = {"rest": rest, "others": others, "waiting": waiting_for(site, unit, None)}
         return pages.page(request, "tests.html", unit=unit, OCCASIONS=changes.OCCASIONS, **shown)
 
     return router

@@ -11,6 +11,7 @@ from softsensor.records.audit import StoredEntry
 from softsensor.records.decisions import LeftOut
 from softsensor.records.engine import Database
 from softsensor.records.reader import StoredEvent, StoredFlag, StoredLab, Unit
+from softsensor.records.rests import StoredRest, rests_at
 from softsensor.web.models_in_service import ModelsInService
 from softsensor.web.rows import (
     EstimateRow,
@@ -32,6 +33,12 @@ from softsensor.web.wording import utc
 
 EVENTS_SHOWN, ENTRIES_SHOWN, CLEARED_SHOWN = 12, 8, 10
 EVENTS_SEARCHED = 500
+
+
+def rest_words(rest: StoredRest) -> str:
+    """Why tests rest, and until when where that is known."""
+    end = f"since {utc(rest.since_us)}" if rest.until_us is None else f"until {utc(rest.until_us)}"
+    return f"{rest.cause}, {end}"
 
 
 class UnitView:
@@ -106,13 +113,13 @@ class UnitView:
 
     @cached_property
     def tests(self) -> State:
-        """Whether a person lets the tests rest."""
-        rest = (
-            None if self.cycle_us is None else decisions.rest_at(self._database, self.unit.id, self.cycle_us)
-        )
-        if rest is None or rest.until_us is None:
+        """Whether the tests of all sensors rest, and why."""
+        now = self.cycle_us
+        found = [] if now is None else rests_at(self._database, self.unit.id, now)
+        whole = [rest for rest in found if not rest.tag]
+        if not whole:
             return State("running", True)
-        return State(f"at rest until {utc(rest.until_us)} ({rest.occasion}, {rest.actor})", False)
+        return State(f"at rest: {'; '.join(rest_words(rest) for rest in whole)}", False)
 
     @cached_property
     def inputs(self) -> tuple[InputRow, ...]:

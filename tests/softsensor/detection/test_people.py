@@ -132,7 +132,7 @@ def test_a_time_is_whole_cycles_and_never_shorter_than_asked_for(
     assert outcome.book.exclusions == (Exclusion(2, 100, 100 + cycles, by_person=True),)
     assert one.until == NOW + cycles * STEP
     outcome, one = taken(design, FlagBook(), decision("rest", seconds=seconds))
-    assert outcome.book.rest == Rest(100 + cycles, "start-up")
+    assert outcome.book.rest == Rest(100 + cycles, "start-up", NOW, "A: because")
     assert one.until == NOW + cycles * STEP
 
 

@@ -19,6 +19,7 @@ from softsensor.records.engine import Database, open_database
 from softsensor.records.plant import Deed, Revision, register_revision, register_unit
 from softsensor.records.upgrade import upgrade_database
 from softsensor.records.writer import RecordsWriter
+from softsensor.service.plant_state import StateRule
 from softsensor.service.recording import Step
 from softsensor.service.unit_service import UnitIdentity, UnitService
 from softsensor.unit_design import design_unit
@@ -216,6 +217,7 @@ class Bench:
     url: str
     steps: list[Step] = field(default_factory=list)
     cycles_again: int = 0
+    states: tuple[StateRule, ...] = ()
 
     def service(self, database: Database, writer: RecordsWriter) -> UnitService:
         model = self.design.model
@@ -223,7 +225,7 @@ class Bench:
             unit = register_unit(connection, model.spec.name, model.spec.title, START)
             revision = Revision(model.digest, model.spec.source_text, b"")
             number = register_revision(connection, unit, revision, Deed("someone", "first", START))
-        return UnitService(self.design, UnitIdentity(unit, number), database, writer)
+        return UnitService(self.design, UnitIdentity(unit, number), database, writer, self.states)
 
     async def run(self, story: Story, first: int, stop: int, cut: bool = True) -> None:
         """Resume and run cycles first to stop; with ``cut`` it ends in cycle ``stop``, its readings handed over."""

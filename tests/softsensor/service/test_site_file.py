@@ -5,9 +5,13 @@ from __future__ import annotations
 from pathlib import Path
 
 import pytest
+from independent.small_unit import MODEL
 
+from plant_models.model_file import parse_model_text
 from softsensor.errors import SiteFileError
+from softsensor.service.plant_state import StateRule
 from softsensor.service.site_file import SiteSettings, read_site_file
+from softsensor.service.state_tables import fitted_states
 
 SITE = """# A site
 [database]
@@ -203,3 +207,62 @@ def test_no_units(tmp_path: Path) -> None:
     assert faults(tmp_path, LEAST.partition("[[unit]]")[0], {}) == [
         "1: unit: missing; expected at least one [[unit]]"
     ]
+
+
+STATE = """
+[[unit.state]]
+name = "off"
+tag = "FI1"
+below = 2.0
+for = "1 min"
+settle = "30 min"
+
+[[unit.state]]
+name = "TI1 is calibrated"
+tag = "HS1"
+equals = 1
+sensor = "TI1"
+"""
+
+
+def test_states_of_the_plant(tmp_path: Path) -> None:
+    (unit,) = read(tmp_path, LEAST + STATE, {}).units
+    assert unit.states == (
+        StateRule("off", "FI1", below=2.0, lasting=60_000_000, settle=1_800_000_000),
+        StateRule("TI1 is calibrated", "HS1", equals=1.0, sensor="TI1"),
+    )
+
+
+@pytest.mark.parametrize(
+    ("before", "after", "fault"),
+    [
+        ("below = 2.0\n", "", "9: below: expected below, above or both, or equals alone"),
+        (
+            "below = 2.0",
+            "below = 2.0\nequals = 0",
+            "12: below: expected below, above or both, or equals alone",
+        ),
+        ("below = 2.0", "below = 2.0\nabove = 2", "12: below: expected another value than that of above"),
+        ("below = 2.0", "below = '2'", "12: below: expected a finite number; got '2', which is no number"),
+        ('"1 min"', "60", "13: for: expected a time"),
+        ("below", "beneath", "12: beneath: unknown key, expected one of name, tag, below"),
+        ('tag = "FI1"\n', "", "9: tag: missing; expected a tag such as 'TI2101A'"),
+        ('"HS1"\nequals = 1', '"FI1"\nbelow = 2', "17: name: "),
+    ],
+)
+def test_a_bad_state(tmp_path: Path, before: str, after: str, fault: str) -> None:
+    text = STATE.replace("TI1 is calibrated", "off").replace('sensor = "TI1"\n', "").replace(before, after)
+    assert any(line.startswith(fault) for line in faults(tmp_path, LEAST + text, {}))
+
+
+def test_a_state_asks_for_a_tag_that_has_a_node_and_a_sensor_that_the_model_has(tmp_path: Path) -> None:
+    spec = parse_model_text(MODEL, "r1.toml")
+    rules = (StateRule("off", "XS9", equals=0.0), StateRule("work", "FI1", below=1.0, sensor="TI9"))
+    with pytest.raises(SiteFileError) as refused:
+        fitted_states(rules, spec, ("FI1", "TI1"), "site.toml")
+    assert list(refused.value.lines) == [
+        "site.toml: state off: tag XS9 has no readings; expected one that has",
+        f"site.toml: state work: TI9 is no sensor of {spec.name}",
+    ]
+    (fitted,) = fitted_states((StateRule("off", "FI1", below=2.0),), spec, ("FI1", "TI1"), "site.toml")
+    assert fitted.condition == "FI1 below 2 m3/h"

@@ -3,15 +3,18 @@
 from __future__ import annotations
 
 import json
+from dataclasses import replace
 from typing import Any
 from urllib.parse import quote
 
 import pytest
 from browser.recorded_unit import FLAG_ID, HOUR, MINUTE, NOW, OLD_FLAG_ID, UNIT
 
+from softsensor.detection.flags import RestSpell
 from softsensor.records import decisions, reader
 from softsensor.records.decisions import LeftOut, Outcome
 from softsensor.records.engine import Database
+from softsensor.records.rests import store_rests
 
 FLAG = f"/units/{UNIT}/flag?id={quote(FLAG_ID)}"
 PUT_BACK = f"/units/{UNIT}/flag/put-back?id={quote(FLAG_ID)}"
@@ -101,7 +104,7 @@ def test_a_sensor_is_left_out_for_a_time_and_back_sooner(recorded: Database, ask
     settle(recorded, NOW + 2 * HOUR)
     put_left_out(recorded, NOW + 2 * HOUR, by_person=True)
     page = asker.get(SENSOR).text
-    assert "left out by a person" in page
+    assert "left out for work on it" in page
     assert "function check" in page
     row = asker.get(f"/units/{UNIT}/part/sensors").text
     assert '<b class="letter" aria-hidden="true">C</b> function check' in row
@@ -115,15 +118,20 @@ def test_the_tests_rest_with_who_why_and_until_when(recorded: Database, asker: A
     assert asker.post(REST, fields).status_code == 303
     assert entries(recorded)[-1].action == "tests put to rest"
     settle(recorded, NOW + 90 * MINUTE)
+    with recorded.write() as connection:
+        spell = RestSpell("start-up", "", NOW, NOW + 90 * MINUTE, "A. Müller: new element")
+        store_rests(connection, 1, [spell])
     page = asker.get(TESTS).text
     assert "At rest until" in page
     assert "start-up, A. Müller" in page
     assert "new element" in page
     state = asker.get(f"/units/{UNIT}/part/state").text
-    assert "at rest until 2026-12-01 16:30:00 UTC (start-up, A. Müller)" in state
+    assert "at rest: start-up, until 2026-12-01 16:30:00 UTC" in state
     assert asker.post(GO_ON, {"token": asker.token(TESTS), **PERSON}).status_code == 303
     assert entries(recorded)[-1].action == "tests go on"
     settle(recorded, None)
+    with recorded.write() as connection:
+        store_rests(connection, 1, [replace(spell, until=NOW)])
     assert "The tests are running" in asker.get(TESTS).text
     assert "running" in asker.get(f"/units/{UNIT}/part/state").text
 
