@@ -160,7 +160,7 @@ def lab_help(
 
     The result counts in the same cycle as the sensors' readings; afterwards the sensors alone go on.
     """
-    basis, P, left_over = _after_result(seeing, row, sd)
+    basis, P, left_over = after_result(seeing, row, sd)
     seen = basis.T @ row
     after = float(seen @ P @ seen)
     steady = seeing.variance(row)
@@ -177,7 +177,7 @@ def lab_help(
     return LabHelp(math.sqrt(after), cycles * sample_time, growing)
 
 
-def _after_result(seeing: SteadyState, row: Vector, sd: float) -> tuple[Matrix, Matrix, Matrix]:
+def after_result(seeing: SteadyState, row: Vector, sd: float) -> tuple[Matrix, Matrix, Matrix]:
     """Basis (n, s), posterior covariance in it after the result, and the directions still unbounded.
 
     Along an unbounded direction the result decides: with prior variance without limit, the row's value is the

@@ -1,0 +1,173 @@
+"""What would make an estimate better or worse: a sensor lost, a second instrument, laboratory results more often.
+
+All are compared by one figure: the estimate's standard deviation where it is largest, just before the next laboratory
+result comes in, with results at a regular interval; for an estimate without laboratory results the settled standard
+deviation. In the estimate's unit, times its interval_scale, its own walking offset included; inf where it grows without
+limit.
+"""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy.linalg import solve
+
+from plant_models.plant_model import PlantModel, StochasticPart
+from softsensor.estimation.observability import after_result
+from softsensor.estimation.steady_state import Rows, SteadyState, Stretch, measured_rows, settle
+
+Vector = NDArray[np.float64]
+Matrix = NDArray[np.float64]
+
+LAB_INTERVAL = 86400.0
+"""Seconds between laboratory results where nothing else is said."""
+GROWTH_TIMES = (3600.0, 8 * 3600.0, 86400.0)
+"""Seconds after a laboratory result."""
+_MOST_RESULTS = 20_000
+_SAME = 1e-9
+
+
+@dataclass(frozen=True, slots=True)
+class Change:
+    """One change of what is measured, in words, and the standard deviation that the estimate then has."""
+
+    what: str
+    sd: float
+
+
+@dataclass(frozen=True, slots=True)
+class Prospects:
+    """Of one estimate. ``lab_interval``: seconds between its laboratory results, None where it has none; ``sd``: as it is;
+    ``changes``: the best first. ``after_result``: for each of GROWTH_TIMES (seconds) after one laboratory result on the
+    settled filter, the standard deviation then; empty where it has none.
+    """
+
+    tag: str
+    unit: str
+    lab_interval: float | None
+    sd: float
+    changes: tuple[Change, ...]
+    after_result: tuple[tuple[float, float], ...]
+
+
+def prospects(model: PlantModel, lab_interval: float = LAB_INTERVAL) -> tuple[Prospects, ...]:
+    """Of every estimate.
+
+    :param lab_interval: seconds between two laboratory results of one estimate.
+    :raises RealisationError: the filter does not settle.
+    """
+    spec, part, sensors = model.spec, model.stochastic, range(len(model.spec.sensors))
+    everything = settle(part, measured_rows(model))
+    variants = [
+        (f"{spec.sensors[i].tag} lost", settle(part, measured_rows(model, [j for j in sensors if j != i])))
+        for i in sensors
+    ]
+    variants += [
+        (f"a second {spec.sensors[i].tag}", settle(part, measured_rows(model, [*sensors, i])))
+        for i in sensors
+    ]
+    found = []
+    for index, estimate in enumerate(spec.estimates):
+        row, scale = part.C[len(spec.sensors) + index], estimate.interval_scale
+        if estimate.lab is None:
+            changes = [Change(what, scale * math.sqrt(state.variance(row))) for what, state in variants]
+            sd = scale * math.sqrt(everything.variance(row))
+            found.append(Prospects(estimate.tag, estimate.unit, None, sd, _sorted(changes), ()))
+            continue
+        result = _Result(part, row, estimate.lab.sd, scale)
+        cycles = max(1, round(lab_interval / spec.sample_time))
+        changes = [Change(what, result.sd_before_next(state, cycles)) for what, state in variants]
+        changes.append(
+            Change("laboratory twice as often", result.sd_before_next(everything, max(1, cycles // 2)))
+        )
+        later = [max(1, round(time / spec.sample_time)) for time in GROWTH_TIMES]
+        growth = tuple(zip(GROWTH_TIMES, result.sd_after(everything, later), strict=True))
+        sd = result.sd_before_next(everything, cycles)
+        found.append(Prospects(estimate.tag, estimate.unit, lab_interval, sd, _sorted(changes), growth))
+    return tuple(found)
+
+
+def _sorted(changes: list[Change]) -> tuple[Change, ...]:
+    return tuple(sorted(changes, key=lambda change: change.sd))
+
+
+@dataclass(frozen=True, eq=False)
+class _Reduced:
+    """The filter of some rows after a laboratory result, in the directions that then have a finite variance."""
+
+    powers: list[Stretch]
+    rows: Rows
+    seen: Vector
+
+    def later(self, prior: Matrix, cycles: int) -> Matrix:
+        """The prior covariance so many cycles later."""
+        place = 0
+        while cycles:
+            while len(self.powers) <= place:
+                self.powers.append(self.powers[-1].doubled())
+            if cycles & 1:
+                prior = self.powers[place].after(prior)
+            cycles >>= 1
+            place += 1
+        return prior
+
+    def corrected(self, prior: Matrix) -> Matrix:
+        """After the cycle's readings."""
+        if not self.rows.r.size:
+            return prior
+        C = self.rows.C
+        S = C @ prior @ C.T + np.diag(self.rows.r)
+        return np.asarray(prior - prior @ C.T @ solve(S, C @ prior, assume_a="pos"), dtype=np.float64)
+
+
+@dataclass(frozen=True, eq=False)
+class _Result:
+    """Laboratory results of one estimate: its row, their sd, the estimate's interval_scale."""
+
+    part: StochasticPart
+    row: Vector
+    sd: float
+    scale: float
+
+    def sd_after(self, seeing: SteadyState, cycles: list[int]) -> list[float]:
+        """The estimate's sd so many cycles after one result on the settled filter."""
+        reduced, posterior = self._reduced(seeing)
+        if reduced is None:
+            return [math.inf for _ in cycles]
+        one = reduced.powers[0]
+        first = one.A @ posterior @ one.A.T + one.H
+        return [self._sd(reduced, reduced.corrected(reduced.later(first, count - 1))) for count in cycles]
+
+    def sd_before_next(self, seeing: SteadyState, cycles: int) -> float:
+        """... just before the next result, with a result every so many cycles for ever."""
+        reduced, posterior = self._reduced(seeing)
+        if reduced is None:
+            return math.inf
+        one, before = reduced.powers[0], math.inf
+        for _ in range(_MOST_RESULTS):
+            prior = reduced.later(one.A @ posterior @ one.A.T + one.H, cycles - 1)
+            posterior = reduced.corrected(prior)
+            sd = self._sd(reduced, posterior)
+            if abs(sd - before) <= _SAME * sd:
+                break
+            before = sd
+            gained = posterior @ reduced.seen
+            posterior = posterior - np.outer(gained, gained) / (float(reduced.seen @ gained) + self.sd**2)
+        return sd
+
+    def _sd(self, reduced: _Reduced, P: Matrix) -> float:
+        return self.scale * math.sqrt(max(0.0, float(reduced.seen @ P @ reduced.seen)))
+
+    def _reduced(self, seeing: SteadyState) -> tuple[_Reduced | None, Matrix]:
+        """None where the estimate still grows without limit."""
+        basis, posterior, left_over = after_result(seeing, self.row, self.sd)
+        A = basis.T @ self.part.A @ basis
+        if left_over.size and np.abs(basis.T @ self.part.A @ left_over).max() > 1e-10:
+            return None, posterior
+        rows = Rows(seeing.rows.C @ basis, seeing.rows.r)
+        Q = basis.T @ (self.part.q[:, None] * basis)
+        one = Stretch(A, rows.C.T @ (rows.C / rows.r[:, None]), Q)
+        return _Reduced([one], rows, basis.T @ self.row), posterior
