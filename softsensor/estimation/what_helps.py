@@ -32,10 +32,14 @@ _SAME = 1e-9
 
 @dataclass(frozen=True, slots=True)
 class Change:
-    """One change of what is measured, in words, and the standard deviation that the estimate then has."""
+    """One change of what is measured, in words, and the standard deviation that the estimate then has.
+
+    ``loses``: it takes something away.
+    """
 
     what: str
     sd: float
+    loses: bool
 
 
 @dataclass(frozen=True, slots=True)
@@ -62,27 +66,34 @@ def prospects(model: PlantModel, lab_interval: float = LAB_INTERVAL) -> tuple[Pr
     spec, part, sensors = model.spec, model.stochastic, range(len(model.spec.sensors))
     everything = settle(part, measured_rows(model))
     variants = [
-        (f"{spec.sensors[i].tag} lost", settle(part, measured_rows(model, [j for j in sensors if j != i])))
+        (
+            f"{spec.sensors[i].tag} lost",
+            settle(part, measured_rows(model, [j for j in sensors if j != i])),
+            True,
+        )
         for i in sensors
     ]
     variants += [
-        (f"a second {spec.sensors[i].tag}", settle(part, measured_rows(model, [*sensors, i])))
+        (f"a second {spec.sensors[i].tag}", settle(part, measured_rows(model, [*sensors, i])), False)
         for i in sensors
     ]
     found = []
     for index, estimate in enumerate(spec.estimates):
         row, scale = part.C[len(spec.sensors) + index], estimate.interval_scale
         if estimate.lab is None:
-            changes = [Change(what, scale * math.sqrt(state.variance(row))) for what, state in variants]
+            changes = [
+                Change(what, scale * math.sqrt(state.variance(row)), loses) for what, state, loses in variants
+            ]
             sd = scale * math.sqrt(everything.variance(row))
             found.append(Prospects(estimate.tag, estimate.unit, None, sd, _sorted(changes), ()))
             continue
         result = _Result(part, row, estimate.lab.sd, scale)
         cycles = max(1, round(lab_interval / spec.sample_time))
-        changes = [Change(what, result.sd_before_next(state, cycles)) for what, state in variants]
-        changes.append(
-            Change("laboratory twice as often", result.sd_before_next(everything, max(1, cycles // 2)))
-        )
+        changes = [
+            Change(what, result.sd_before_next(state, cycles), loses) for what, state, loses in variants
+        ]
+        oftener = result.sd_before_next(everything, max(1, cycles // 2))
+        changes.append(Change("laboratory results twice as often", oftener, False))
         later = [max(1, round(time / spec.sample_time)) for time in GROWTH_TIMES]
         growth = tuple(zip(GROWTH_TIMES, result.sd_after(everything, later), strict=True))
         sd = result.sd_before_next(everything, cycles)

@@ -13,9 +13,8 @@ from plant_models.plant_model import PlantModel
 from plant_models.specification import PathSpec, UnitSpec
 from plant_models.transfer_function import dc_gain, is_integrating, poles, ramp_gain, zeros
 from plant_models.units import difference_unit
-from softsensor.detection.absorption import LATEST_FLAG, SensorShift, is_absorbed, sensor_shifts
-from softsensor.detection.run_length import average_run_length
-from softsensor.estimation.kernel import build_kernel
+from softsensor.detection.absorption import LATEST_FLAG
+from softsensor.detection.sheet import SheetLine, detectability_sheet
 from softsensor.estimation.observability import (
     LEAST_GAIN,
     DisturbanceKnowledge,
@@ -24,7 +23,9 @@ from softsensor.estimation.observability import (
     estimate_knowledge,
 )
 from softsensor.estimation.steady_state import SteadyState, steady_state
-from softsensor.unit_design import fault_test_design
+from softsensor.estimation.what_helps import LAB_INTERVAL, Prospects, prospects
+from softsensor.service.second_instrument import Mend, mends
+from softsensor.unit_design import design_unit
 
 CAUTION = (
     "Advisory only: estimates and flags are no safety function, no part of one "
@@ -71,23 +72,6 @@ class SamplingReport:
 
 
 @dataclass(frozen=True, slots=True)
-class SensorReport:
-    """What a bias the size of the tolerance leaves in a sensor's innovation, and the test that watches for
-    it.
-
-    ``delay``: mean time in seconds to a flag under the settled shift, sums at zero; None where the shift is
-    ``absorbed``: where that time is more than a tenth of the false-flag interval, so that a flag is hardly better
-    than a false one.
-    """
-
-    shift: SensorShift
-    reference: float
-    interval: float
-    absorbed: bool
-    delay: float | None
-
-
-@dataclass(frozen=True, slots=True)
 class SolutionReport:
     """The proof that the settled filter is the right solution."""
 
@@ -100,7 +84,9 @@ class SolutionReport:
 
 @dataclass(frozen=True, slots=True)
 class ModelReport:
-    """All of it. ``sound``: the sensors add something to every estimate."""
+    """All of it. ``sound``: the sensors add something to every estimate. ``mends``: for the sensors whose faults are
+    absorbed or taken for others. ``prospects``: what would make each estimate better or worse.
+    """
 
     unit: str
     title: str
@@ -111,7 +97,9 @@ class ModelReport:
     solution: SolutionReport
     disturbances: tuple[DisturbanceKnowledge, ...]
     estimates: tuple[EstimateKnowledge, ...]
-    sensors: tuple[SensorReport, ...]
+    prospects: tuple[Prospects, ...]
+    sensors: tuple[SheetLine, ...]
+    mends: tuple[Mend, ...]
     warnings: tuple[str, ...]
 
     @property
@@ -119,9 +107,10 @@ class ModelReport:
         return all(estimate.sensors_help for estimate in self.estimates)
 
 
-def model_report(model: PlantModel) -> ModelReport:
+def model_report(model: PlantModel, lab_interval: float = LAB_INTERVAL) -> ModelReport:
     """Work out the report.
 
+    :param lab_interval: seconds between two laboratory results of one estimate, for ``prospects``.
     :raises RealisationError: the filter does not settle.
     :raises RunLengthError: a false-flag interval that no test can keep.
     """
@@ -129,7 +118,7 @@ def model_report(model: PlantModel) -> ModelReport:
     paths = tuple(_path(path, spec) for path in spec.paths)
     sampling = _sampling(paths, spec.sample_time)
     disturbances, estimates = disturbance_knowledge(model), estimate_knowledge(model)
-    sensors = _sensors(model)
+    sensors = detectability_sheet(design_unit(model).detection)
     return ModelReport(
         spec.name,
         spec.title,
@@ -140,7 +129,9 @@ def model_report(model: PlantModel) -> ModelReport:
         _solution(steady_state(model)),
         disturbances,
         estimates,
+        prospects(model, lab_interval),
         sensors,
+        mends(model, sensors),
         (
             *_about_sampling(sampling),
             *_about_disturbances(disturbances),
@@ -214,19 +205,6 @@ def _solution(state: SteadyState) -> SolutionReport:
     )
 
 
-def _sensors(model: PlantModel) -> tuple[SensorReport, ...]:
-    design = fault_test_design(model, build_kernel(model))
-    promised = model.spec.false_flag_interval / model.spec.sample_time
-    found = []
-    for i, shift in enumerate(sensor_shifts(model)):
-        reference, interval = float(design.reference[i]), float(design.interval[i])
-        cycles = average_run_length(reference, interval, shift.settled, clip=design.clip)
-        absorbed = is_absorbed(cycles, promised)
-        delay = None if absorbed else cycles * model.spec.sample_time
-        found.append(SensorReport(shift, reference, interval, absorbed, delay))
-    return tuple(found)
-
-
 def _about_sampling(sampling: SamplingReport) -> list[str]:
     return [] if sampling.adequate else [f"the sample time is {sampling.advice}"]
 
@@ -262,7 +240,7 @@ def _about_estimates(estimates: tuple[EstimateKnowledge, ...]) -> list[str]:
     return lines
 
 
-def _about_sensors(model: PlantModel, sensors: tuple[SensorReport, ...]) -> list[str]:
+def _about_sensors(model: PlantModel, sensors: tuple[SheetLine, ...]) -> list[str]:
     lines = []
     for spec, item in zip(model.spec.sensors, sensors, strict=True):
         if spec.bias_walk_sd > 0.0:

@@ -81,6 +81,11 @@ def test_the_text_says_it_all(tmp_path: Path) -> None:
         "feed concentration",
         "AY1",
         "reference",
+        "Smallest step and slowest drift found within",
+        "drift, in",
+        "What a fault is taken for",
+        "What would change each estimate most",
+        "laboratory results twice as often",
         "Riccati residual",
         "Sample time 10 s: follows every path.",
         "Verdict: the sensors add to every estimate.",
@@ -180,6 +185,46 @@ def test_absorbed_where_the_flag_is_hardly_better_than_a_false_one(tmp_path: Pat
     (quick,) = json.loads(check(quieter, "--json").out)["sensors"]
     assert quick["absorbed"] is False
     assert 0.0 < quick["delay"] < 0.1 * document["false_flag_interval"]
+
+
+def test_the_sheet_in_json(tmp_path: Path) -> None:
+    document = json.loads(check(LIBRARY / "wood_berry.toml", "--json").out)
+    assert document["horizons"] == [3600.0, 28_800.0, 86_400.0, 604_800.0]
+    (line,) = document["sensors"]
+    assert len(line["references"]) == len(line["intervals"])
+    for sizes in (line["found"]["steps"], line["found"]["ramps"]):
+        assert len(sizes) == 4
+        assert sizes == sorted(sizes, reverse=True)
+    step = next(fault for fault in line["told"] if fault["shape"] == "step")
+    assert step["size"] == line["shift"]["bias"]
+    assert step["within"] == line["found"]["tolerance_within"]
+    assert "feed flow" in step["alike"]
+    assert step["named"] < 0.1
+    (mend,) = document["mends"]
+    assert (mend["tag"], mend["beside"], mend["whole"]) == ("AI4101", "AI4101", False)
+    assert mend["then"]["found"]["steps"][2] < line["found"]["steps"][2]
+    (prospects,) = document["prospects"]
+    assert prospects["lab_interval"] == 86_400.0
+    assert {change["what"]: change["loses"] for change in prospects["changes"]} == {
+        "AI4101 lost": True,
+        "a second AI4101": False,
+        "laboratory results twice as often": False,
+    }
+
+
+def test_the_laboratory_interval_is_an_option_and_must_be_a_time(tmp_path: Path) -> None:
+    path = write(tmp_path, estimate="bias_walk_sd = 0.01\nbias_initial_sd = 0.05")
+    seldom, often = (
+        json.loads(check(path, "--json", "--lab-interval", time).out)["prospects"][0]
+        for time in ("24 h", "6 h")
+    )
+    assert (seldom["lab_interval"], often["lab_interval"]) == (86_400.0, 21_600.0)
+    assert often["sd"] < 0.8 * seldom["sd"]
+    for bad in ("6", "0 s", "now"):
+        done = check(path, "--lab-interval", bad)
+        assert done.status == 2
+        assert done.out == ""
+        assert "--lab-interval: expected a time" in done.err
 
 
 def test_bad_input_is_status_2_with_lines(tmp_path: Path) -> None:

@@ -59,9 +59,9 @@ def test_just_before_the_next_result_it_is_what_the_recursion_settles_at() -> No
     settled = by_recursion(model, [0], 24, 24 * 60)
     assert item.sd == pytest.approx(settled[-1], rel=1e-6)
     changes = {change.what: change.sd for change in item.changes}
-    assert set(changes) == {"AI4101 lost", "a second AI4101", "laboratory twice as often"}
+    assert set(changes) == {"AI4101 lost", "a second AI4101", "laboratory results twice as often"}
     more = by_recursion(model, [0], 12, 24 * 60)
-    assert changes["laboratory twice as often"] == pytest.approx(more[-1], rel=1e-6)
+    assert changes["laboratory results twice as often"] == pytest.approx(more[-1], rel=1e-6)
     assert changes["a second AI4101"] == pytest.approx(by_recursion(model, [0, 0], 24, 1440)[-1], rel=1e-6)
     assert changes["AI4101 lost"] == pytest.approx(by_recursion(model, [], 24, 1440)[-1], rel=1e-6)
     assert [change.sd for change in item.changes] == sorted(changes.values())
@@ -93,6 +93,6 @@ def test_without_laboratory_results_the_settled_sd_is_compared() -> None:
 
 def test_an_offset_that_only_the_laboratory_sees_is_helped_by_the_laboratory_alone() -> None:
     (item,) = prospects(load_model(reactor_model_path()))
-    assert item.changes[0].what == "laboratory twice as often"
+    assert item.changes[0].what == "laboratory results twice as often"
     assert item.changes[0].sd < 0.8 * item.sd
     assert item.changes[1].sd > 0.99 * item.sd
