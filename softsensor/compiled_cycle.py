@@ -7,13 +7,17 @@ from typing import NamedTuple
 import numpy as np
 from numba import njit
 
-from softsensor.detection.fault_tests import TestDesign, TestState, test_cycle
+from softsensor.detection.fault_tests import test_cycle
+from softsensor.detection.shift_tests import highest_share
+from softsensor.detection.state_of_tests import TestDesign, TestState
 from softsensor.estimation.input_driven import accept_inputs, advance_input_driven, input_driven_outputs
 from softsensor.estimation.kalman import correct, predict_into, row_mean, row_variance, unless_rounding
 from softsensor.estimation.kernel import EstimatorState, Floats, Ints, Kernel
 
 UNSOUND = -1
 """Returned where an innovation variance is not positive and finite."""
+MOST_SQUARE = 16.0
+"""A whitened innovation's square counts up to this in the joint test: one spike is no misfit of the model."""
 
 
 class BlockInputs(NamedTuple):
@@ -53,6 +57,8 @@ class BlockOutputs(NamedTuple):
     """(N,) 1 while the tests rest because inputs are or were missing."""
     news: Ints
     """(N,) Union of all news of a cycle."""
+    squares: Floats
+    """(N,) Sum of squares of the whitened innovations; a sensor without a reading in use counts as its expectation, 1."""
     lab_predicted: Floats
     lab_sd: Floats
 
@@ -71,6 +77,7 @@ def empty_outputs(cycles: int, kernel: Kernel, labs: int) -> BlockOutputs:
         np.zeros(sensors, dtype=np.int64),
         np.zeros(cycles, dtype=np.int64),
         np.zeros(cycles, dtype=np.int64),
+        np.zeros(cycles),
         np.full(labs, np.nan),
         np.full(labs, np.nan),
     )
@@ -109,11 +116,18 @@ def _correct_all(
         out.lab_predicted[lab] = base[row] + row_mean(kernel, x, row)
         out.lab_sd[lab] = np.sqrt(variance)
         lab += 1
+    squares = 0.0
     for i in range(kernel.n_sensors):
         if data.use[k, i] != 0 and data.y[k, i] == data.y[k, i]:
             deviation, r = data.y[k, i] - base[i], kernel.r[i] * data.scale[k, i]
-            if not correct(kernel, x, P, i, deviation, r, v, K):
+            innovation = deviation - row_mean(kernel, x, i)
+            s = correct(kernel, x, P, i, deviation, r, v, K)
+            if s == 0.0:
                 return UNSOUND
+            squares += min(innovation * innovation / s, MOST_SQUARE)
+        else:
+            squares += 1.0
+    out.squares[k] = squares
     for e in range(first, lab):
         row = data.lab_row[e]
         if not correct(kernel, x, P, row, data.lab_value[e] - base[row], data.lab_variance[e], v, K):
@@ -151,7 +165,7 @@ def run_block(
     v, K, x = np.zeros(n), np.zeros(n), est.x
     P, other = est.P.copy(), np.zeros((n, n))
     base = np.zeros(kernel.n_sensors + kernel.n_estimates)
-    work = np.zeros(len(kernel.steady) + 1)
+    work, moves = np.zeros(len(kernel.steady) + 1), np.zeros(kernel.n_inputs)
     lab, cycles = 0, len(data.u)
     for k in range(len(data.u)):
         accept_inputs(kernel, est, data.u[k])
@@ -166,22 +180,26 @@ def run_block(
         predict_into(kernel, x, P, v, other)
         P, other = other, P
         if testing:
+            for j in range(kernel.n_inputs):
+                moves[j] = data.u[k, j] - kernel.operating_u[j]
             news = test_cycle(
                 design,
                 tests,
                 data.y[k],
+                moves,
                 data.fresh,
                 data.doubtful[k],
                 data.quiet[k],
                 out.innovation[k],
                 out.innovation_sd[k],
+                out.squares[k],
                 out.events[k],
             )
             out.news[k] = news
             out.settling[k] = 1 if tests.cycle[0] <= tests.settling_until[0] else 0
             for i in range(kernel.n_sensors):
-                out.high[k, i] = tests.high[i]
-                out.low[k, i] = tests.low[i]
+                out.high[k, i] = highest_share(tests.high[i], design.interval[i])
+                out.low[k, i] = highest_share(tests.low[i], design.interval[i])
             if news != 0:
                 cycles = k + 1
                 break

@@ -17,11 +17,11 @@ from numpy.typing import NDArray
 from plant_models.errors import Problem
 from plant_models.plant_model import PlantModel
 from softsensor.compiled_cycle import BlockInputs, BlockOutputs, empty_outputs, run_block
-from softsensor.detection.fault_tests import TestState, initial_tests
 from softsensor.detection.flags import Flag, FlagBook, Note, RestSpell
 from softsensor.detection.follow_up import DetectionDesign, FollowUp, Moment, follow_up
 from softsensor.detection.people import Decision, Taken, ended, next_end, take
 from softsensor.detection.plant_states import StateChange, change_state
+from softsensor.detection.state_of_tests import TestState, initial_tests
 from softsensor.estimation.kernel import EstimatorState, Floats, Ints, Kernel, initial_state
 from softsensor.readings_of_cycle import CycleQuality, CycleReadings
 
@@ -169,11 +169,17 @@ def join_results(parts: Sequence[CycleResults]) -> CycleResults:
     )
 
 
+def unit_tests(design: UnitDesign, window: int) -> TestState:
+    """The tests of a unit before its first cycle."""
+    kernel, bank = design.kernel, design.detection.tests.reference
+    return initial_tests(kernel.n_sensors, bank.shape[1], kernel.n_inputs, window)
+
+
 def start(design: UnitDesign, first_cycle: int = 0) -> CycleState:
     """The state before the first cycle."""
-    tests = initial_tests(design.kernel.n_sensors, design.detection.window)
+    tests = unit_tests(design, design.detection.window)
     tests.cycle[0] = first_cycle
-    tests.valid_from[0] = first_cycle
+    tests.valid_from[0] = first_cycle + design.detection.settled_after
     none = (0,) * design.kernel.n_estimates
     return CycleState(initial_state(design.model, design.kernel), tests, FlagBook(), Digest(), none)
 
@@ -312,7 +318,7 @@ def rerun(
     estimator = estimator.copy()
     data = block_inputs(design, book, first, readings, labs)
     out = empty_outputs(len(readings), design.kernel, len(labs))
-    unused = initial_tests(design.kernel.n_sensors, 1)
+    unused = unit_tests(design, 1)
     done = run_block(design.kernel, estimator, design.detection.tests, unused, data, out, False)
     if done < 0:
         raise UnsoundArithmetic(

@@ -10,10 +10,12 @@ from plant_models.building import build_plant_model
 from plant_models.model_file import read_model_file
 from plant_models.plant_model import PlantModel
 from softsensor.cycle import BEYOND_ABOVE, BEYOND_BELOW, UnitDesign
-from softsensor.detection.fault_tests import TestDesign
 from softsensor.detection.follow_up import DetectionDesign
+from softsensor.detection.gain_changes import path_hypotheses
 from softsensor.detection.run_length import decision_interval
-from softsensor.detection.signatures import filter_response, hypotheses, steady_filter
+from softsensor.detection.signatures import cycles_to_settle, filter_response, hypotheses, steady_filter
+from softsensor.detection.spread import gain_and_drift, spread_interval
+from softsensor.detection.state_of_tests import TestDesign
 from softsensor.estimation.kernel import Floats, Kernel, build_kernel
 
 CLIP = 4.0
@@ -27,6 +29,15 @@ LEAST_REFERENCE, LARGEST_REFERENCE = 0.125, 1.0
 GROSS_REFERENCE = 0.5
 """For a sensor whose tolerance-sized bias the filter absorbs (half the shift below LEAST_REFERENCE): its sums then watch
 for gross steps only, because a more sensitive test would answer to every small misfit of the model."""
+FAST_REFERENCE = 1.5
+"""Of the fast pair: half of a shift of three standard deviations, which shows in a few cycles and may fade in a few more."""
+SPREAD_RATIO, JOINT_RATIO = 1.5, 1.25
+"""Noise so many times what it should be is what the noise test and the joint test are made for."""
+SPREAD_CLIP = 2.5
+"""Differences count up to this size in the noise test: the few large ones of a sudden move are no noise."""
+SPREAD_SHARE = 0.02
+"""Of a sensor's false flags that its noise test may raise: it finds what it is for nearly as soon, and no diagnosis looks
+at its flags."""
 INTERVAL_STEP = 2.0**-12
 """Decision intervals are rounded up to this: linear algebra may differ in its last bits between machines, results not."""
 LOOK_EVERY = 6
@@ -56,18 +67,43 @@ def steady_shifts(model: PlantModel, kernel: Kernel, window: int = SETTLED) -> F
     return shifts
 
 
+def bank_references(shifts: Floats) -> Floats:
+    """Reference values of each sensor's pairs (n_sensors, 3): slow, middle, fast.
+
+    The slow one is half of the settled shift; the middle one the geometric mean of slow and fast.
+
+    >>> bank_references(np.array([0.75, 0.1])).round(3).tolist()
+    [[0.375, 0.75, 1.5], [0.5, 0.866, 1.5]]
+    """
+    half = 0.5 * shifts
+    slow = np.where(half < LEAST_REFERENCE, GROSS_REFERENCE, np.minimum(half, LARGEST_REFERENCE))
+    middle = np.sqrt(slow * FAST_REFERENCE)
+    return np.ascontiguousarray(np.column_stack((slow, middle, np.full(len(slow), FAST_REFERENCE))))
+
+
 def fault_test_design(model: PlantModel, kernel: Kernel) -> TestDesign:
-    """Reference values from the shifts that tolerance-sized biases leave; intervals solved for the promised run length."""
+    """Reference values from the shifts that tolerance-sized biases leave; intervals solved for the promised run length.
+
+    The promise holds for all tests of a sensor together: the noise test has SPREAD_SHARE of the false flags, each pair an
+    equal part of the rest. The joint test has the promise to itself.
+    """
     cycles = model.spec.false_flag_interval / model.spec.sample_time
-    half = 0.5 * steady_shifts(model, kernel)
-    reference = np.where(half < LEAST_REFERENCE, GROSS_REFERENCE, np.minimum(half, LARGEST_REFERENCE))
-    exact = [decision_interval(float(value), cycles, clip=CLIP) for value in reference]
+    reference = bank_references(steady_shifts(model, kernel))
+    each = cycles * reference.shape[1] / (1.0 - SPREAD_SHARE)
+    exact = [[decision_interval(float(k), each, clip=CLIP) for k in row] for row in reference]
     interval = np.ceil(np.array(exact) / INTERVAL_STEP) * INTERVAL_STEP
     lost = max(LOST_CYCLES, int(np.ceil(LOST_SECONDS / model.spec.sample_time)))
+    joint_gain, joint_drift = gain_and_drift(JOINT_RATIO)
     return TestDesign(
         reference,
         interval,
         CLIP,
+        SPREAD_CLIP,
+        *gain_and_drift(SPREAD_RATIO),
+        _rounded_up(spread_interval(SPREAD_RATIO, 1, 0.5 * cycles / SPREAD_SHARE, SPREAD_CLIP)),
+        joint_gain,
+        joint_drift * kernel.n_sensors,
+        _rounded_up(spread_interval(JOINT_RATIO, kernel.n_sensors, cycles)),
         SPIKE,
         np.full(kernel.n_sensors, lost, dtype=np.int64),
         0.01 / cycles,
@@ -76,19 +112,26 @@ def fault_test_design(model: PlantModel, kernel: Kernel) -> TestDesign:
     )
 
 
+def _rounded_up(interval: float) -> float:
+    return float(np.ceil(interval / INTERVAL_STEP) * INTERVAL_STEP)
+
+
 def design_unit(model: PlantModel) -> UnitDesign:
     """Everything that a unit runs on, made once."""
     kernel = build_kernel(model)
     spec = model.spec
+    steady = steady_filter(model, kernel, np.ones(kernel.n_sensors, dtype=np.int64))
     detection = DetectionDesign(
         model,
         kernel,
         fault_test_design(model, kernel),
         hypotheses(model, WINDOW),
+        path_hypotheses(model, kernel),
         WINDOW,
         round(spec.sample_time * 1e6),
         spec.leave_out_isolated,
         True,
+        cycles_to_settle(model, kernel, steady, WINDOW),
     )
     low = np.array([item.range[0] - BEYOND_BELOW * (item.range[1] - item.range[0]) for item in spec.sensors])
     high = np.array([item.range[1] + BEYOND_ABOVE * (item.range[1] - item.range[0]) for item in spec.sensors])

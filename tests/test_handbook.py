@@ -21,7 +21,7 @@ from plant_models.model_sections import FALSE_FLAG_INTERVAL
 from plant_models.specification import UnitSpec
 from plant_models.unit_spellings import PREFIXED, WHOLE
 from softsensor import cycle, unit_design
-from softsensor.detection import diagnosis, fault_tests, follow_up
+from softsensor.detection import diagnosis, follow_up, reading_tests
 from softsensor.errors import SiteFileError
 from softsensor.estimation import lab_results
 from softsensor.estimation.noise_tuning import archive_checks, interval_scale, separability
@@ -316,10 +316,13 @@ LIMITS = [
     (METHOD, f"in the end, at most {unit_design.LARGEST_REFERENCE:g}."),
     (METHOD, f"Where that half is below {unit_design.LEAST_REFERENCE:g} the filter absorbs"),
     (METHOD, f"k is then {unit_design.GROSS_REFERENCE:g},"),
+    (METHOD, f"The fast pair has k = {unit_design.FAST_REFERENCE:g},"),
+    (METHOD, f"a noise {unit_design.SPREAD_RATIO:g} times as large"),
+    (METHOD, f"a noise {unit_design.JOINT_RATIO:g} times as"),
     (METHOD, f"stayed down for more than {follow_up.QUIET} cycles"),
     (METHOD, f"more than {unit_design.LOST_SECONDS:g} s and more than {unit_design.LOST_CYCLES} cycles"),
-    (METHOD, f"at least {fault_tests.MIN_REPEATS} equal readings in a row"),
-    (METHOD, f"once {fault_tests.WARM_UP} readings have been seen"),
+    (METHOD, f"at least {reading_tests.MIN_REPEATS} equal readings in a row"),
+    (METHOD, f"once {reading_tests.WARM_UP} readings have been seen"),
     (METHOD, f"beyond {unit_design.SPIKE:g} standard deviations"),
     (METHOD, f"within the last {unit_design.WINDOW} cycles"),
     (METHOD, f"after {follow_up.PATIENCE} cycles"),

@@ -21,9 +21,9 @@ from dataclasses import dataclass
 import numpy as np
 from scipy.special import ndtri
 
-from softsensor.detection.fault_tests import TestDesign
 from softsensor.detection.first_passage import Course, OneSum, Passage, passage, stretched
 from softsensor.detection.signatures import Shape, SteadyFilter, filter_response
+from softsensor.detection.state_of_tests import TestDesign
 from softsensor.estimation.kernel import Floats, Ints, Kernel
 
 FOUND = 0.9

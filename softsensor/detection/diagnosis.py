@@ -49,7 +49,7 @@ class Verdict(NamedTuple):
 
 
 @njit(cache=True)
-def _recent(
+def recent(
     ring: Floats, newest: int, whitening: Floats, use: Ints, count: int, out: Floats, whole: Ints
 ) -> None:
     """The last ``count`` innovations, newest last, whitened; whole[k] = 0 where a reading in use was missing."""
@@ -70,7 +70,8 @@ def _recent(
 
 
 @njit(cache=True)
-def _score(signature: Floats, eps: Floats, whole: Ints, age: int) -> tuple[float, float]:
+def score_of(signature: Floats, eps: Floats, whole: Ints, age: int) -> tuple[float, float]:
+    """N and D over the last ``age`` cycles that are whole."""
     start = eps.shape[0] - age
     numerator, denominator = 0.0, 0.0
     for lag in range(age):
@@ -90,14 +91,14 @@ def likelihoods(
     """Score every hypothesis over the onsets in ``ages`` (cycles back, ascending; the largest sets the window)."""
     n, count = table.shape[0], ages[-1]
     eps, whole = np.zeros((count, ring.shape[1])), np.ones(count, dtype=np.int64)
-    _recent(ring, newest, whitening, use, count, eps, whole)
+    recent(ring, newest, whitening, use, count, eps, whole)
     evidence, best_age = np.full(n, -1e300), np.zeros(n, dtype=np.int64)
     size, size_sd = np.zeros(n), np.zeros(n)
     for h in range(n):
         precision = 1.0 / (prior_sd[h] * prior_sd[h])
         scores = np.zeros(len(ages))
         for a in range(len(ages)):
-            numerator, denominator = _score(table[h], eps, whole, ages[a])
+            numerator, denominator = score_of(table[h], eps, whole, ages[a])
             scores[a] = 0.5 * numerator * numerator / (denominator + precision) - 0.5 * logarithm(
                 1.0 + denominator / precision
             )
@@ -132,7 +133,8 @@ def judge(suspects: tuple[Hypothesis, ...], found: Likelihoods, temper: float = 
     best: dict[str, int] = {"nothing": -1}
     instrument = 0.0
     for h, suspect in enumerate(suspects):
-        weight = 0.5 * exponential((float(found.evidence[h]) - top) * temper)
+        share = 1.0 if suspect.source == "gain" else 0.5  # one shape for a gain, two for the others
+        weight = share * exponential((float(found.evidence[h]) - top) * temper)
         weights[suspect.name] = weights.get(suspect.name, 0.0) + weight
         if suspect.source != "disturbance":
             instrument += weight

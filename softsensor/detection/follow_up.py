@@ -7,7 +7,7 @@ from dataclasses import dataclass, field, replace
 import numpy as np
 
 from plant_models.plant_model import PlantModel
-from softsensor.detection import fault_tests
+from softsensor.detection import state_of_tests as told
 from softsensor.detection.diagnosis import (
     NAMING_RATIO,
     Likelihoods,
@@ -16,13 +16,17 @@ from softsensor.detection.diagnosis import (
     likelihoods,
     onset_ages,
 )
-from softsensor.detection.fault_tests import TestDesign, TestState
+from softsensor.detection.elementary import exponential
 from softsensor.detection.flags import Episode, Exclusion, Flag, FlagBook, Kind, Note, RestSpell, flag_name
+from softsensor.detection.gain_changes import gain_likelihoods
 from softsensor.detection.signatures import Hypothesis, SteadyFilter, signatures, steady_filter
+from softsensor.detection.state_of_tests import TestDesign, TestState
 from softsensor.estimation.kernel import Floats, Ints, Kernel
 
 SHIFT_KINDS: tuple[Kind, ...] = ("bias", "drift")
-EXPLAINING: tuple[Kind, ...] = (*SHIFT_KINDS, "stuck")
+LASTING: tuple[Kind, ...] = (*SHIFT_KINDS, "model")
+"""Kinds that come from a diagnosis and clear when all has been quiet."""
+EXPLAINING: tuple[Kind, ...] = (*LASTING, "stuck", "noisy")
 """While such a fault is open on an instrument in use, it explains what other tests say."""
 PATIENCE = 60
 """Cycles for which a name is waited for before a group is flagged."""
@@ -39,10 +43,14 @@ class DetectionDesign:
     kernel: Kernel
     tests: TestDesign
     suspects: tuple[Hypothesis, ...]
+    paths: tuple[Hypothesis, ...]
+    """Transfer functions whose gain may have changed."""
     window: int
     sample_us: int
     leave_out: bool
     armed: bool
+    settled_after: int = 0
+    """Cycles from the start before the filter is the settled one that signatures suppose."""
     tables: dict[tuple[int, ...], tuple[SteadyFilter, Floats]] = field(default_factory=dict, repr=False)
 
     def table(self, use: Ints) -> tuple[SteadyFilter, Floats]:
@@ -96,10 +104,10 @@ def follow_up(design: DetectionDesign, book: FlagBook, tests: TestState, moment:
 
 def _say_settling(outcome: FollowUp, moment: Moment) -> FollowUp:
     """Every rest of the tests is on record, with its beginning and its end."""
-    if moment.news & fault_tests.SETTLING:
+    if moment.news & told.SETTLING:
         text = "an input is missing or too old: the tests of innovations rest, the estimates are Uncertain"
         return replace(outcome, notes=(Note(moment.time, "suppression", text),))
-    if moment.news & fault_tests.SETTLED:
+    if moment.news & told.SETTLED:
         text = "inputs have been there long enough again: the tests of innovations go on"
         return replace(outcome, notes=(Note(moment.time, "suppression", text),))
     return outcome
@@ -130,9 +138,9 @@ def _simple_faults(
     """Stuck, lost and spike: each shows in the sensor's own readings and needs no comparison."""
     bits, tag = int(moment.events[sensor]), design.model.spec.sensors[sensor].tag
     starts: tuple[tuple[int, Kind, int], ...] = (
-        (fault_tests.LOST, "lost", int(tests.missing[sensor]) - 1),
-        (fault_tests.STUCK, "stuck", int(tests.repeats[sensor])),
-        (fault_tests.SPIKE, "spike", 1),
+        (told.LOST, "lost", int(tests.missing[sensor]) - 1),
+        (told.STUCK, "stuck", int(tests.repeats[sensor])),
+        (told.SPIKE, "spike", 1),
     )
     shifted = outcome.book.find(tag, SHIFT_KINDS) is not None
     worked_on = outcome.book.worked_on(sensor, moment.cycle)
@@ -143,20 +151,40 @@ def _simple_faults(
             onset = moment.time - ago * design.sample_us
             outcome = _superseded(outcome, tag, kind, (onset, moment.time))
             outcome = _opened(outcome, _certain(design, tag, kind, onset, moment))
+    if bits & told.NOISY and not worked_on:
+        outcome = _noisy(design, outcome, tests, moment, sensor)
     ends: tuple[tuple[int, Kind], ...] = (
-        (fault_tests.LOST_ENDED, "lost"),
-        (fault_tests.STUCK_ENDED, "stuck"),
+        (told.LOST_ENDED, "lost"),
+        (told.STUCK_ENDED, "stuck"),
+        (told.NOISY_ENDED, "noisy"),
     )
     for bit, kind in ends:
         flag = outcome.book.find(tag, (kind,))
         if bits & bit and flag is not None:
             outcome = _cleared(outcome, flag, moment.time)
-    if bits & (fault_tests.LOST | fault_tests.LOST_ENDED):
+    if bits & (told.LOST | told.LOST_ENDED):
         tests.valid_from[0] = moment.cycle + 1
     spike = outcome.book.find(tag, ("spike",))
     if spike is not None and moment.time - spike.detected > QUIET * design.sample_us:
         outcome = _cleared(outcome, spike, moment.time)
     return outcome
+
+
+def _noisy(
+    design: DetectionDesign, outcome: FollowUp, tests: TestState, moment: Moment, sensor: int
+) -> FollowUp:
+    """More noise than the model file says. It reaches the other sensors' innovations through the estimate: where two
+    tests are up, the sensor whose sum went further is the one."""
+    use = _in_use(design, outcome.book, tests, moment.cycle)
+    further = [
+        i for i in np.flatnonzero((tests.noisy != 0) & (use != 0)) if tests.spread[i] > tests.spread[sensor]
+    ]
+    tag = design.model.spec.sensors[sensor].tag
+    if further or outcome.book.find(tag, ("noisy",)) is not None:
+        return outcome
+    flag = _certain(design, tag, "noisy", moment.time, moment)
+    probability = 1.0 / (1.0 + exponential(-float(tests.spread[sensor])))
+    return _opened(outcome, replace(flag, probability=probability))
 
 
 def _superseded(outcome: FollowUp, tag: str, kind: Kind, times: tuple[int, int]) -> FollowUp:
@@ -172,7 +200,7 @@ def _clear_shifts(design: DetectionDesign, outcome: FollowUp, tests: TestState, 
     """A shift's flag clears once its sensor's own sums have stayed down (an input's: once all sums have)."""
     tags = [item.tag for item in design.model.spec.sensors]
     for flag in outcome.book.open:
-        if flag.kind not in SHIFT_KINDS or flag.detected == moment.time:
+        if flag.kind not in LASTING or flag.detected == moment.time:
             continue
         if flag.tag in tags and outcome.book.worked_on(tags.index(flag.tag), moment.cycle):
             continue
@@ -197,9 +225,11 @@ def _diagnose(design: DetectionDesign, outcome: FollowUp, tests: TestState, mome
     """While a test of a sensor in use is up and no flag explains it: weigh the explanations and act on the verdict."""
     book = outcome.book
     use = _in_use(design, book, tests, moment.cycle)
-    up = bool(np.any((tests.up != 0) & (use != 0)))
+    up = bool(np.any((tests.up != 0) & (use != 0))) or tests.misfit[0] != 0
     if not up:
         return replace(outcome, book=replace(book, episode=None))
+    if moment.cycle < tests.valid_from[0]:
+        return outcome
     explained = any(
         flag.kind in EXPLAINING and not _is_left_out(design, book, flag.tag, moment.cycle)
         for flag in book.open
@@ -216,31 +246,58 @@ def _is_left_out(design: DetectionDesign, book: FlagBook, tag: str, cycle: int) 
     return tag in tags and book.excluded(tags.index(tag), cycle)
 
 
-def look(design: DetectionDesign, tests: TestState, use: Ints) -> tuple[Verdict, Likelihoods]:
-    """Weigh all explanations of the innovations since the tests were last restarted."""
+def explanations(design: DetectionDesign) -> tuple[Hypothesis, ...]:
+    """All that a verdict may name: instruments and disturbances, then transfer functions."""
+    return design.suspects + design.paths
+
+
+def look(
+    design: DetectionDesign, tests: TestState, use: Ints, gains: bool = True
+) -> tuple[Verdict, Likelihoods]:
+    """Weigh all explanations of the innovations since the tests were last restarted.
+
+    ``gains``: changed gains of transfer functions too, which costs several times as much.
+    """
     steady, table = design.table(use)
     newest = int(tests.cycle[0]) - 1
-    available = min(newest + 1 - int(tests.valid_from[0]), design.window)
+    available = max(min(newest + 1 - int(tests.valid_from[0]), design.window), 1)
     prior_sd = np.array([suspect.prior_sd for suspect in design.suspects])
     found = likelihoods(table, prior_sd, tests.ring, newest, steady.whitening, use, onset_ages(available))
-    return judge(design.suspects, found), found
+    if not (gains and design.paths):
+        return judge(design.suspects, found), found
+    rings = (tests.ring, tests.moves)
+    more = gain_likelihoods(design.kernel, design.paths, steady, use, rings, newest, available)
+    together = Likelihoods(*(np.concatenate(parts) for parts in zip(found, more, strict=True)))
+    return judge(explanations(design), together), together
 
 
 def _act(design: DetectionDesign, outcome: FollowUp, tests: TestState, moment: Moment, use: Ints) -> FollowUp:
-    verdict, found = look(design, tests, use)
     episode = outcome.book.episode
     waited = moment.cycle - episode.since if episode is not None else 0
-    suspect = design.suspects[verdict.best] if verdict.best >= 0 else None
-    if suspect is not None and suspect.source != "disturbance":
-        named = verdict.probabilities[0] * (NAMING_RATIO + 1.0) >= NAMING_RATIO
-        size = abs(_present_size(suspect, found, verdict.best)[0])
-        worth = suspect.source != "sensor" or size > design.model.spec.sensors[suspect.index].tolerance
-        certain = verdict.instrument * (NAMING_RATIO + 1.0) > NAMING_RATIO
-        if named or (certain and worth and waited >= PATIENCE):
-            return _open_shift(design, outcome, tests, moment, (verdict, found, use))
+    verdict, found = look(design, tests, use, gains=False)
+    due = waited >= PATIENCE and waited % PATIENCE < design.tests.look_every
+    if not (due or _worth_a_flag(design, verdict, found, waited)):
+        return outcome
+    verdict, found = look(design, tests, use)
+    if _worth_a_flag(design, verdict, found, waited):
+        return _open_shift(design, outcome, tests, moment, (verdict, found, use))
     if waited >= PATIENCE and episode is not None and not episode.noted:
         return _note(outcome, moment, verdict)
     return outcome
+
+
+def _worth_a_flag(design: DetectionDesign, verdict: Verdict, found: Likelihoods, waited: int) -> bool:
+    """One name at ten to one; or, after some patience, a group of which some instrument or transfer function is certain."""
+    if verdict.best < 0:
+        return False
+    suspect = explanations(design)[verdict.best]
+    if suspect.source == "disturbance":
+        return False
+    named = verdict.probabilities[0] * (NAMING_RATIO + 1.0) >= NAMING_RATIO
+    size = abs(_present_size(suspect, found, verdict.best)[0])
+    worth = suspect.source != "sensor" or size > design.model.spec.sensors[suspect.index].tolerance
+    certain = verdict.instrument * (NAMING_RATIO + 1.0) > NAMING_RATIO
+    return named or (certain and worth and waited >= PATIENCE)
 
 
 def _note(outcome: FollowUp, moment: Moment, verdict: Verdict) -> FollowUp:
@@ -271,8 +328,9 @@ def _open_shift(
     seen: tuple[Verdict, Likelihoods, Ints],
 ) -> FollowUp:
     verdict, found, use = seen
-    suspect = design.suspects[verdict.best]
-    kind: Kind = "bias" if suspect.shape == "step" else "drift"
+    suspect = explanations(design)[verdict.best]
+    kind: Kind = "drift" if suspect.shape == "ramp" else "bias"
+    kind = "model" if suspect.source == "gain" else kind
     size, size_sd = _present_size(suspect, found, verdict.best)
     back = int(found.age[verdict.best]) - 1
     flag = Flag(
@@ -299,7 +357,6 @@ def _open_shift(
 
 def _restart(tests: TestState, cycle: int) -> None:
     """After a sensor has been left out the sums start anew: what they had added up is explained."""
-    tests.high[:] = 0.0
-    tests.low[:] = 0.0
-    tests.up[:] = 0
-    tests.valid_from[0] = cycle
+    down_since = tests.down_since.copy()
+    tests.restart_sums(cycle)
+    tests.down_since[:] = down_since

@@ -12,9 +12,9 @@ from typing import Literal
 
 import numpy as np
 
-from softsensor.detection.fault_tests import TestState
 from softsensor.detection.flags import Exclusion, FlagBook, Note, Rest, RestSpell, time_words
 from softsensor.detection.follow_up import SHIFT_KINDS, DetectionDesign, FollowUp
+from softsensor.detection.state_of_tests import TestState
 
 Act = Literal["put back", "leave out", "rest", "go on"]
 ACTS: tuple[Act, ...] = ("put back", "leave out", "rest", "go on")
@@ -161,10 +161,7 @@ def ended(design: DetectionDesign, book: FlagBook, tests: TestState, cycle: int,
         for sensor in range(design.kernel.n_sensors):
             tests.repeats[sensor], tests.run_probability[sensor] = 0, 1.0
     if outcome.notes:
-        tests.high[:] = tests.low[:] = tests.last_z[:] = tests.older_z[:] = 0.0
-        tests.up[:] = 0
-        tests.down_since[:] = cycle
-        tests.valid_from[0] = cycle
+        tests.restart_sums(cycle)
         outcome = replace(outcome, book=replace(outcome.book, episode=None))
     return outcome
 

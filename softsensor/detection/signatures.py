@@ -23,13 +23,15 @@ from softsensor.estimation.input_driven import accept_inputs, advance_input_driv
 from softsensor.estimation.kalman import correct, predict, row_covariance, row_mean
 from softsensor.estimation.kernel import EstimatorState, Floats, Ints, Kernel, initial_state
 
-Source = Literal["sensor", "input", "disturbance"]
+Source = Literal["sensor", "input", "disturbance", "gain"]
 Shape = Literal["step", "ramp"]
 
 SETTLE_CYCLES = 50_000
 SETTLE_TOLERANCE = 1e-9
 """The filter has settled once no innovation's variance changes by more than this share from one cycle to the next, or
 after so many cycles: offsets of estimates that no sensor sees never settle, and do not matter here."""
+SETTLED_SHARE = 0.02
+"""Signatures are those of the settled filter: innovations count in the diagnosis once their variance is so near to it."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -134,6 +136,30 @@ def steady_filter(model: PlantModel, kernel: Kernel, use: Ints) -> SteadyFilter:
     S = _innovation_covariance(kernel, P, use)
     sd = np.sqrt(np.where(use != 0, np.diag(S), 1.0))
     return SteadyFilter(_gains(kernel, P.copy(), use), inverse_cholesky(S, use), sd, settled)
+
+
+@njit(cache=True)
+def _cycles_until(kernel: Kernel, P: Floats, sd: Floats, share: float, most: int) -> int:
+    n = len(kernel.q)
+    v, K, x, M = np.zeros(n), np.zeros(n), np.zeros(n), np.zeros((n, n))
+    for k in range(most):
+        settled = True
+        for i in range(kernel.n_sensors):
+            variance = row_covariance(kernel, P, i, v) + kernel.r[i]
+            if abs(variance / (sd[i] * sd[i]) - 1.0) > share:
+                settled = False
+        if settled:
+            return k
+        for i in range(kernel.n_sensors):
+            correct(kernel, x, P, i, 0.0, kernel.r[i], v, K)
+        predict(kernel, x, P, v, M)
+    return most
+
+
+def cycles_to_settle(model: PlantModel, kernel: Kernel, steady: SteadyFilter, most: int) -> int:
+    """Cycles from the start until every innovation's variance is within SETTLED_SHARE of the settled filter's."""
+    start = initial_state(model, kernel).P
+    return int(_cycles_until(kernel, start, steady.sd, SETTLED_SHARE, most))
 
 
 @njit(cache=True)
@@ -255,12 +281,13 @@ def signatures(
         if suspect.source == "sensor" and use[suspect.index] == 0:
             continue
         left = filter_response(kernel, steady.gains, use, _signal(model, kernel, suspect, window))
-        _whiten(steady.whitening, left, out[h])
+        whiten(steady.whitening, left, out[h])
     return out
 
 
 @njit(cache=True)
-def _whiten(whitening: Floats, rows: Floats, out: Floats) -> None:
+def whiten(whitening: Floats, rows: Floats, out: Floats) -> None:
+    """Every row times the whitening matrix, into ``out``."""
     for k in range(rows.shape[0]):
         for i in range(rows.shape[1]):
             total = 0.0

@@ -80,16 +80,16 @@ def output_variance(kernel: Kernel, P: Floats, row: int, v: Floats) -> float:
 @njit(cache=True)
 def correct(
     kernel: Kernel, x: Floats, P: Floats, row: int, deviation: float, r: float, v: Floats, K: Floats
-) -> bool:
+) -> float:
     """One scalar correction with the reading ``deviation`` (from the input-driven part) of variance ``r``.
 
     s = c P c' + r, K = P c' / s;  P+ = P - w w' with w = P c' / sqrt(s).  ``v`` is left with P c', ``K`` with the
-    gain. False where s is not positive.
+    gain. Returns s; 0 where it is not positive.
     """
     n = len(v)
     s = row_covariance(kernel, P, row, v) + r
     if not s > 0.0:
-        return False
+        return 0.0
     innovation, root = deviation - row_mean(kernel, x, row), np.sqrt(s)
     for i in range(n):
         K[i] = v[i] / root
@@ -100,7 +100,7 @@ def correct(
     for i in range(n):
         K[i] = v[i] / s
         x[i] += K[i] * innovation
-    return True
+    return float(s)
 
 
 @njit(cache=True)

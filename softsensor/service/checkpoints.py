@@ -10,13 +10,13 @@ import numpy as np
 from numpy.typing import NDArray
 
 from softsensor.cycle import CycleState, Digest, LabAtCycle
-from softsensor.detection.fault_tests import TestState
 from softsensor.detection.flags import Episode, Exclusion, Flag, FlagBook, HeldState, Rest
+from softsensor.detection.state_of_tests import TestState
 from softsensor.errors import RecordsError
 from softsensor.estimation.kernel import EstimatorState
 from softsensor.records.named_arrays import pack_arrays, unpack_arrays
 
-FORMAT = 1
+FORMAT = 2
 
 
 @dataclass(frozen=True)

@@ -8,6 +8,7 @@ import numpy as np
 
 from softsensor.cycle import CycleResults, UnitDesign
 from softsensor.detection.flags import Flag, Note
+from softsensor.detection.shift_tests import DOWN
 from softsensor.estimation.lab_results import LabOutcome
 from softsensor.service.result_tables import NORMAL_95
 
@@ -48,13 +49,12 @@ class RunSummary:
         self.notes += results.notes
 
     def _count_tests(self, results: CycleResults) -> None:
-        interval = self._design.detection.tests.interval
         top = np.maximum(results.high, results.low)
-        for row in top[np.any(top > 0.5 * interval, axis=1)]:
-            rising = (row > interval) & ~self._up
+        for row in top[np.any(top > DOWN, axis=1)]:
+            rising = (row > 1.0) & ~self._up
             self._ups += rising
-            self._up = (self._up | rising) & (row >= 0.5 * interval)
-        if len(top) and np.all(top[-1] < 0.5 * interval):
+            self._up = (self._up | rising) & (row >= DOWN)
+        if len(top) and np.all(top[-1] < DOWN):
             self._up[:] = False
 
     def as_dict(self, digest: str) -> dict[str, Any]:

@@ -201,10 +201,8 @@ def _braceless(text: str) -> str:
     return text.replace("@", "").replace("$", "").replace("{", "(").replace("}", ")")
 
 
-def sensor_chart(
-    item: SensorSpec, window: Window, columns: dict[str, Columns], interval: float
-) -> dict[str, Any]:
-    """A sensor's reading against its prediction, and below both cumulative sums with the decision interval."""
+def sensor_chart(item: SensorSpec, window: Window, columns: dict[str, Columns]) -> dict[str, Any]:
+    """A sensor's reading against its prediction, and below the furthest sums as shares of their decision intervals."""
     top = _plot(window, f"{item.tag}, {item.unit}", 240)
     top.y_range.min_interval = 6.0 * item.noise_sd
     _flagged(top, _source("flags", columns))
@@ -218,13 +216,13 @@ def sensor_chart(
         tips = [("time", "@x{%F %T}"), (name, f"@value{{{pattern}}} {_braceless(item.unit)}")]
         top.add_tools(HoverTool(renderers=[renderer], tooltips=tips, **hover))
     top.xaxis.axis_label = None
-    bottom = _plot(window, "sums, sd", 170, top.x_range)
-    bottom.y_range = DataRange1d(start=0.0, range_padding=0.08, min_interval=1.15 * interval)
+    bottom = _plot(window, "sums, of interval", 170, top.x_range)
+    bottom.y_range = DataRange1d(start=0.0, range_padding=0.08, min_interval=1.15)
     high = bottom.line("x", "value", source=_source("high", columns), line_color=INK, line_width=2)
     low = bottom.line("x", "value", source=_source("low", columns), line_color=REVISED, line_width=1.5)
     low.glyph.line_dash = [5, 3]
     bottom.y_range.renderers = [high, low]
     bottom.add_layout(
-        Span(location=interval, dimension="width", line_color=WAITING, line_width=1.5, line_dash=[2, 3])
+        Span(location=1.0, dimension="width", line_color=WAITING, line_width=1.5, line_dash=[2, 3])
     )
     return dict(json_item(column(top, bottom, sizing_mode="stretch_width")))

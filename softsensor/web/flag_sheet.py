@@ -49,7 +49,6 @@ class Sheet:
     causes: tuple[str, ...]
     check: str
     left_out: tuple[decisions.LeftOut, ...]
-    interval: float | None
 
 
 def flag_sheet(site: Site, unit: Unit, flag: StoredFlag) -> Sheet:
@@ -60,13 +59,12 @@ def flag_sheet(site: Site, unit: Unit, flag: StoredFlag) -> Sheet:
     sensors = [sensor.tag for sensor in spec.sensors]
     out = tuple(decisions.left_out_of(site.database, unit.id, flag.tag))
     pictures: tuple[tuple[str, Markup], ...] = ()
-    seen, interval = float("nan"), None
+    seen = float("nan")
     if flag.tag in sensors:
         window = _window(flag, _newest(site, unit))
         columns = sensor_columns(site.database, site.models, unit, flag.tag, window)
-        interval = float(site.models.intervals(revision)[sensors.index(flag.tag)])
         units = item.unit if item is not None else ""
-        pictures = _pictures(flag, window, columns, (units, interval), out)
+        pictures = _pictures(flag, window, columns, units, out)
         seen = _before(flag, columns)
     value = seen if np.isfinite(seen) else item.operating_point if item is not None else float("nan")
     return Sheet(
@@ -81,7 +79,6 @@ def flag_sheet(site: Site, unit: Unit, flag: StoredFlag) -> Sheet:
         causes_of(flag.tag, flag.kind),
         check_of(flag.tag, flag.kind),
         out,
-        interval,
     )
 
 
@@ -127,10 +124,9 @@ def _pictures(
     flag: StoredFlag,
     window: Window,
     columns: dict[str, Columns],
-    scale: tuple[str, float],
+    unit: str,
     out: tuple[decisions.LeftOut, ...],
 ) -> tuple[tuple[str, Markup], ...]:
-    unit, interval = scale
     start, end = window.from_us / 1000.0, window.to_us / 1000.0
     flagged = (
         flag.onset_us / 1000.0,
@@ -151,13 +147,13 @@ def _pictures(
         tuple(bands),
     )
     sums = Picture(
-        f"{flag.tag}: cumulative sums and decision interval",
-        "sd",
+        f"{flag.tag}: furthest cumulative sums",
+        "of its decision interval",
         start,
         end,
         (course_of("high", columns["high"]), course_of("low", columns["low"])),
         tuple(bands),
-        (interval,),
+        (1.0,),
     )
     return (("seen", svg_of(reading)), ("sums", svg_of(sums)))
 

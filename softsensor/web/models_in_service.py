@@ -4,20 +4,16 @@ from __future__ import annotations
 
 import threading
 
-import numpy as np
-from numpy.typing import NDArray
 from sqlalchemy import select
 
 from plant_models.building import build_plant_model
 from plant_models.model_file import parse_model_text
 from plant_models.specification import UnitSpec
 from softsensor.errors import RecordsError
-from softsensor.estimation.kernel import build_kernel
 from softsensor.estimation.observability import EstimateKnowledge, estimate_knowledge
 from softsensor.records.engine import Database
 from softsensor.records.reader import Unit
 from softsensor.records.tables import model_revisions
-from softsensor.unit_design import fault_test_design
 
 
 class ModelsInService:
@@ -26,7 +22,6 @@ class ModelsInService:
     def __init__(self, database: Database) -> None:
         self._database = database
         self._specs: dict[int, UnitSpec] = {}
-        self._intervals: dict[int, NDArray[np.float64]] = {}
         self._knowledge: dict[int, tuple[EstimateKnowledge, ...]] = {}
         self._solving = threading.Lock()
 
@@ -57,16 +52,6 @@ class ModelsInService:
                 text = connection.execute(query).scalar_one()
             known = parse_model_text(text, f"revision {revision_id}")
             self._specs[revision_id] = known
-        return known
-
-    def intervals(self, revision_id: int) -> NDArray[np.float64]:
-        """The decision interval of each sensor's sums (n_sensors,), solved as the service solves it."""
-        with self._solving:
-            known = self._intervals.get(revision_id)
-            if known is None:
-                model = build_plant_model(self.spec(revision_id))
-                known = fault_test_design(model, build_kernel(model)).interval
-                self._intervals[revision_id] = known
         return known
 
     def knowledge(self, revision_id: int) -> tuple[EstimateKnowledge, ...]:

@@ -223,8 +223,7 @@ def data_routes(site: Site) -> APIRouter:
             height = TALL if len(spec.estimates) == 1 else LOW
             return {"window": window.ends(), "item": estimate_chart(item, window, columns, height)}
         i = [sensor.tag for sensor in spec.sensors].index(tag)
-        interval = float(site.models.intervals(revision)[i])
-        return {"window": window.ends(), "item": sensor_chart(spec.sensors[i], window, columns, interval)}
+        return {"window": window.ends(), "item": sensor_chart(spec.sensors[i], window, columns)}
 
     @router.get("/units/{name:path}/chart-data.json")
     def chart_data(

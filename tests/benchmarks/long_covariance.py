@@ -20,8 +20,7 @@ from plant_models.model_file import read_model_file
 from plant_models.simulators import reactor_model_path
 from plant_models.specification import UnitSpec
 from softsensor.compiled_cycle import empty_outputs, run_block
-from softsensor.cycle import block_inputs
-from softsensor.detection.fault_tests import initial_tests
+from softsensor.cycle import block_inputs, unit_tests
 from softsensor.detection.flags import FlagBook
 from softsensor.estimation.kernel import EstimatorState, initial_state
 from softsensor.readings_of_cycle import CycleReadings
@@ -50,7 +49,7 @@ def after(spec: UnitSpec, cycles: int, missing: float, state: EstimatorState | N
         times = (start + np.arange(BLOCK, dtype=np.int64)) * design.detection.sample_us
         data = block_inputs(design, FlagBook(), start, CycleReadings(times, u, good, y, quality), ())
         out = empty_outputs(BLOCK, kernel, 0)
-        tests = initial_tests(kernel.n_sensors, 1)
+        tests = unit_tests(design, 1)
         assert run_block(kernel, state, design.detection.tests, tests, data, out, False) == BLOCK
     return state
 

@@ -11,30 +11,38 @@ import softsensor
 from plant_models.errors import ModelFileError
 from plant_models.library import published_model_path
 from softsensor.detection.run_length import average_run_length
+from softsensor.detection.spread import spread_run_length
 from softsensor.unit_design import CLIP, design_unit, load_model, steady_shifts
 
 MODELS = ("wood_berry", "quadruple_tank")
 
 
 @pytest.mark.parametrize("name", MODELS)
-def test_decision_intervals_keep_the_promised_run_length(name: str) -> None:
-    """At least the promise, and within a thousandth of it: intervals are rounded up a little."""
+def test_all_tests_of_a_sensor_together_keep_the_promised_run_length(name: str) -> None:
+    """Each of a sensor's four tests has a quarter of the false flags: at least that run length, and within two thousandths
+    of it (intervals are rounded up a little)."""
     model = load_model(published_model_path(name))
-    design = design_unit(model)
-    promised = model.spec.false_flag_interval / model.spec.sample_time
-    for k, h in zip(design.detection.tests.reference, design.detection.tests.interval, strict=True):
+    tests = design_unit(model).detection.tests
+    each = 4.0 * model.spec.false_flag_interval / model.spec.sample_time
+    for k, h in zip(tests.reference.ravel(), tests.interval.ravel(), strict=True):
         achieved = average_run_length(float(k), float(h), 0.0, clip=CLIP)
-        assert promised * (1.0 - 1e-9) <= achieved <= promised * 1.002
+        assert each * (1.0 - 1e-9) <= achieved <= each * 1.002
+    noise = spread_run_length(1.5, 1, tests.spread_interval, CLIP)
+    assert each * (1.0 - 1e-4) <= 2.0 * noise <= each * 1.002
 
 
 @pytest.mark.parametrize("name", MODELS)
-def test_reference_values_are_half_the_shift_that_really_remains(name: str) -> None:
+def test_the_slow_reference_value_is_half_the_shift_that_really_remains(name: str) -> None:
+    """The fast one looks for three standard deviations, the middle one lies between the two by the same factor."""
     model = load_model(published_model_path(name))
     design = design_unit(model)
     shifts = steady_shifts(model, design.kernel)
-    for shift, k in zip(shifts, design.detection.tests.reference, strict=True):
+    for shift, bank in zip(shifts, design.detection.tests.reference, strict=True):
         half = 0.5 * shift
-        assert k == (0.5 if half < 0.125 else min(half, 1.0))
+        slow, middle, fast = bank
+        assert slow == (0.5 if half < 0.125 else min(half, 1.0))
+        assert fast == 1.5
+        assert np.isclose(middle / slow, fast / middle, rtol=1e-12)
 
 
 def test_readings_beyond_the_failure_limits_are_none() -> None:

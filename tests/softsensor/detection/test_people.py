@@ -10,11 +10,11 @@ import pytest
 
 from plant_models.building import build_plant_model
 from plant_models.model_file import parse_model_text
-from softsensor.detection import fault_tests
-from softsensor.detection.fault_tests import initial_tests
+from softsensor.detection import state_of_tests
 from softsensor.detection.flags import Episode, Exclusion, Flag, FlagBook, Kind, Rest
 from softsensor.detection.follow_up import DetectionDesign, FollowUp
 from softsensor.detection.people import Act, Decision, Taken, ended, next_end, take
+from softsensor.detection.state_of_tests import initial_tests
 from softsensor.unit_design import design_unit
 
 NOW, STEP = 1_796_083_200_000_000, 10_000_000
@@ -145,7 +145,7 @@ def test_a_second_leaving_out_takes_the_place_of_the_first(design: DetectionDesi
 
 
 def ended_notes(design: DetectionDesign, book: FlagBook, cycle: int) -> list[str]:
-    return [note.text for note in ended(design, book, initial_tests(3, 4), cycle, NOW).notes]
+    return [note.text for note in ended(design, book, initial_tests(3, 3, 1, 4), cycle, NOW).notes]
 
 
 def test_the_next_end_is_the_nearest_one_still_to_come() -> None:
@@ -155,9 +155,9 @@ def test_the_next_end_is_the_nearest_one_still_to_come() -> None:
     assert next_end(book, 130) == next_end(FlagBook(), 0) > 10**15
 
 
-def busy_tests() -> fault_tests.TestState:
+def busy_tests() -> state_of_tests.TestState:
     """Sums up, runs of equal readings, readings missing: something in every place."""
-    tests = initial_tests(3, 4)
+    tests = initial_tests(3, 3, 1, 4)
     filled: dict[str, Any] = {"high": 7.0, "low": 1.0, "last_z": 9.0, "up": 1, "repeats": 6, "missing": 4}
     for name, value in filled.items():
         getattr(tests, name)[:] = value

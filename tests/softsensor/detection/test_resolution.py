@@ -4,28 +4,19 @@ from __future__ import annotations
 
 import numpy as np
 import pytest
+from independent.quiet_tests import new_state, quiet_design, step
 
-from softsensor.detection import fault_tests
+from softsensor.detection.state_of_tests import STUCK
 
-DESIGN = fault_tests.TestDesign(
-    reference=np.full(1, 0.5),
-    interval=np.full(1, 1e6),
-    clip=4.0,
-    spike=1e6,
-    lost_after=np.full(1, 10, dtype=np.int64),
-    stuck_probability=1e-7,
-    noise_sd=np.full(1, 0.15),
-    look_every=6,
-)
+DESIGN = quiet_design(1, stuck_probability=1e-7, noise_sd=np.full(1, 0.15))
 
 
 def stuck_at(readings: np.ndarray) -> int | None:
     """The first reading at which the sensor is called stuck."""
-    state, events = fault_tests.initial_tests(1, 16), np.zeros(1, dtype=np.int64)
-    fresh, one = np.ones(1, dtype=np.int64), np.ones(1)
+    state = new_state(1)
     for k, value in enumerate(readings):
         y = np.array([value])
-        if fault_tests.test_cycle(DESIGN, state, y, fresh, 0, 0, y * 0.0, one, events) & fault_tests.STUCK:
+        if step(DESIGN, state, y, y * 0.0) & STUCK:
             return k
     return None
 

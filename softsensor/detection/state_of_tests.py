@@ -1,0 +1,148 @@
+"""What the fault tests of a unit are set to, what they carry from cycle to cycle, and the bits in which they report."""
+
+from __future__ import annotations
+
+from typing import NamedTuple
+
+import numpy as np
+
+from softsensor.estimation.kernel import Floats, Ints
+
+SHIFT_UP = 1
+SHIFT_CLEARED = 2
+STUCK = 4
+STUCK_ENDED = 8
+LOST = 16
+LOST_ENDED = 32
+SPIKE = 64
+LOOK = 128
+SETTLING = 256
+SETTLED = 512
+NOISY = 1024
+NOISY_ENDED = 2048
+MISFIT = 4096
+"""The joint test over all sensors went up; no sensor's bit."""
+
+
+class TestDesign(NamedTuple):
+    """Settings of the tests, one entry per sensor where an array.
+
+    reference, interval (n_sensors, n_pairs): the bank of cumulative-sum pairs, from the slowest to the fastest.
+    """
+
+    reference: Floats
+    interval: Floats
+    clip: float
+    spread_clip: float
+    spread_gain: float
+    spread_drift: float
+    """The noise test adds gain * difference^2 - drift (:mod:`softsensor.detection.spread`)."""
+    spread_interval: float
+    joint_gain: float
+    joint_drift: float
+    """The joint test adds gain * (sum of squares + sensors not in use) - drift."""
+    joint_interval: float
+    spike: float
+    """|standardised innovation| beyond which a single reading is a spike."""
+    lost_after: Ints
+    """Cycles without a usable reading after which a sensor is lost."""
+    stuck_probability: float
+    """A run of equal readings less probable than this is a stuck sensor."""
+    noise_sd: Floats
+    look_every: int
+    """While a test is up, the diagnosis looks again every so many cycles."""
+
+
+class TestState(NamedTuple):
+    """What the tests carry from cycle to cycle; (n_sensors,) each unless said.
+
+    high, low (n_sensors, n_pairs): the sums of the bank. spread: the noise test's sum; held: the standardised innovation
+    that waits for its neighbour, nan for none. joint (1,): the joint test's sum. ring (window, n_sensors): the latest
+    innovations, nan where a reading was missing; moves (window, n_inputs): the inputs' deviations beside them; cycle
+    (1,): the next cycle.
+    """
+
+    high: Floats
+    low: Floats
+    up: Ints
+    down_since: Ints
+    """Cycle at which each sensor's sums last came down."""
+    spread: Floats
+    held: Floats
+    noisy: Ints
+    joint: Floats
+    misfit: Ints
+    """(1,) 1 while the joint test is up."""
+    last_value: Floats
+    repeats: Ints
+    run_probability: Floats
+    changes: Ints
+    equal: Ints
+    stuck: Ints
+    missing: Ints
+    lost: Ints
+    last_z: Floats
+    older_z: Floats
+    resolution: Floats
+    """Smallest change between two readings seen so far; infinite before the first."""
+    ring: Floats
+    moves: Floats
+    valid_from: Ints
+    """(1,) First cycle whose innovations the diagnosis may use."""
+    cycle: Ints
+    watch: Ints
+    """(1,) 1 while a flag or an undecided test needs looking after every ``look_every`` cycles."""
+    settling_until: Ints
+    """(1,) First cycle at which the tests go on after inputs were missing."""
+
+    def copy(self) -> TestState:
+        """A copy that shares nothing with this state."""
+        return TestState(**{name: part.copy() for name, part in self._asdict().items()})
+
+    def restart_sums(self, cycle: int) -> None:
+        """All sums at zero and nothing up, in place: what comes counts from ``cycle`` on."""
+        for part in (self.high, self.low, self.spread, self.joint, self.last_z, self.older_z):
+            part[:] = 0.0
+        self.held[:] = np.nan
+        self.up[:] = self.misfit[:] = 0
+        self.down_since[:] = cycle
+        self.valid_from[0] = cycle
+
+
+def initial_tests(n_sensors: int, n_pairs: int, n_inputs: int, window: int) -> TestState:
+    """All sums at zero, nothing seen."""
+
+    def floats(value: float = 0.0) -> Floats:
+        return np.full(n_sensors, value)
+
+    def ints(value: int = 0, count: int = n_sensors) -> Ints:
+        return np.full(count, value, dtype=np.int64)
+
+    return TestState(
+        high=np.zeros((n_sensors, n_pairs)),
+        low=np.zeros((n_sensors, n_pairs)),
+        up=ints(),
+        down_since=ints(),
+        spread=floats(),
+        held=floats(np.nan),
+        noisy=ints(),
+        joint=np.zeros(1),
+        misfit=ints(0, 1),
+        last_value=floats(np.nan),
+        repeats=ints(),
+        run_probability=floats(1.0),
+        changes=ints(9),
+        equal=ints(1),
+        stuck=ints(),
+        missing=ints(),
+        lost=ints(),
+        last_z=floats(),
+        older_z=floats(),
+        resolution=floats(np.inf),
+        ring=np.full((window, n_sensors), np.nan),
+        moves=np.zeros((window, n_inputs)),
+        valid_from=ints(0, 1),
+        cycle=ints(0, 1),
+        watch=ints(0, 1),
+        settling_until=ints(0, 1),
+    )
