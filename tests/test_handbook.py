@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import io
 import re
 import shlex
 import tomllib
@@ -10,6 +11,7 @@ from pathlib import Path
 from typing import Any
 
 import pytest
+from rich.console import Console
 from typer.main import get_command
 
 from connectors.files import read_history, read_lab
@@ -18,16 +20,20 @@ from plant_models.durations import SECONDS, format_duration, parse_duration
 from plant_models.errors import ModelFileError
 from plant_models.model_file import parse_model_text
 from plant_models.model_sections import FALSE_FLAG_INTERVAL
+from plant_models.simulators import reactor_model_path
 from plant_models.specification import UnitSpec
 from plant_models.unit_spellings import PREFIXED, WHOLE
 from softsensor import cycle, unit_design
-from softsensor.detection import diagnosis, follow_up, reading_tests
+from softsensor.cli.check import as_document, print_table
+from softsensor.detection import diagnosis, follow_up, reading_tests, sheet
 from softsensor.errors import SiteFileError
-from softsensor.estimation import lab_results
+from softsensor.estimation import lab_results, what_helps
 from softsensor.estimation.noise_tuning import archive_checks, interval_scale, separability
 from softsensor.records import changes, tables
 from softsensor.service import live, replay, result_tables, tuning
 from softsensor.service.model_report import model_report
+from softsensor.service.report_tables import ReportTable, knowledge_tables
+from softsensor.service.sheet_tables import sheet_tables
 from softsensor.service.site_file import read_site_file
 from softsensor.web import flag_sheet
 
@@ -41,6 +47,7 @@ README = (Path(__file__).parents[1] / "README.md").read_text(encoding="utf-8")
 AFTER = CHAPTERS["08-after-a-flag.md"]
 REFERENCE, METHOD = CHAPTERS["03-model-file.md"], CHAPTERS["04-method.md"]
 TUNING = CHAPTERS["07-tuning.md"]
+SHEET = CHAPTERS["09-detectability.md"]
 FILES, FIRST_HOUR = CHAPTERS["05-files-and-results.md"], CHAPTERS["02-first-hour.md"]
 ENVIRONMENT = {"PLANT_PASSWORD": "secret"}
 
@@ -339,6 +346,9 @@ LIMITS = [
         f"With {interval_scale.LEAST_RESULTS} results or more that contradict the promise, or with "
         f"{interval_scale.SURE_RESULTS} in any case",
     ),
+    (SHEET, f"looks at each case {follow_up.PATIENCE} cycles after"),
+    (SHEET, f"named alone in fewer than {sheet.NAMED:.0%} of cases".replace("%", " %")),
+    (SHEET, f"one result every {format_duration(what_helps.LAB_INTERVAL).replace('1 d', '24 h')}"),
     (AFTER, f"such as 90 min or 2 d, at most {changes.LONGEST_S / 86400.0:g} days"),
     (AFTER, f"for how long (at most {changes.LONGEST_S / 86400.0:g} days)"),
     (AFTER, f"say what the plant does ({', '.join(changes.OCCASIONS)})"),
@@ -444,3 +454,48 @@ def test_every_command_is_one_that_the_program_understands(
         assert words[0] in found.commands
         found, words = found.commands[words[0]], words[1:]
     assert found.make_context(program, words).params
+
+
+def as_printed(tables: tuple[ReportTable, ...]) -> str:
+    """As the command prints them where there is no terminal."""
+    out = io.StringIO()
+    for table in tables:
+        print_table(Console(file=out, highlight=False, width=120), table)
+    return out.getvalue()
+
+
+def same_word(there: str, here: str) -> bool:
+    """Words are equal; figures to 2 %, whole numbers (shares in percent) to one."""
+    try:
+        shown, found = (float(word.strip("(),;%")) for word in (there, here))
+    except ValueError:
+        return there == here
+    return abs(shown - found) <= max(0.02 * abs(found), float(found >= 1.0 and shown == int(shown)))
+
+
+def test_the_sheet_in_the_handbook_is_what_the_command_prints() -> None:
+    """If it is not any more: run the command that stands above it and paste."""
+    report = model_report(unit_design.load_model(reactor_model_path()))
+    printed = as_printed((knowledge_tables(report)[-1], *sheet_tables(report))).split()
+    (shown,) = blocks("text", SHEET)
+    rule = "\u2500"
+    there, here = ([word for word in text if rule not in word] for text in (shown.split(), printed))
+    assert [pair for pair in zip(there, here, strict=True) if not same_word(*pair)] == []
+
+
+def test_the_keys_of_the_sheet_in_json_are_described() -> None:
+    document = as_document(model_report(unit_design.load_model(reactor_model_path())))
+    described = set(table_rows(section(SHEET, "## The JSON document")))
+    line, told = document["sensors"][0], document["sensors"][0]["told"][0]
+    assert {"horizons", "mends[]", "prospects[]", "sensors[].told[]"} <= described
+    wanted = {f"sensors[].{key}" for key in line if key not in ("shift", "found", "told")}
+    wanted |= {f"sensors[].found.{key}" for key in line["found"]}
+    assert wanted <= described
+    text = section(SHEET, "## The JSON document")
+    for item in (
+        told,
+        document["mends"][0],
+        document["prospects"][0],
+        document["prospects"][0]["changes"][0],
+    ):
+        assert all(f"`{key}`" in text for key in item if key not in ("tag", "unit"))

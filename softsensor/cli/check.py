@@ -103,13 +103,14 @@ def _tell(report: ModelReport) -> None:
     console.print(f"{report.unit}: {report.title}", markup=False)
     for table in (paths_table(report), *knowledge_tables(report), *sheet_tables(report)):
         console.print()
-        _print(console, table)
+        print_table(console, table)
     console.print()
     _tell_rest(console, report)
     console.print(CAUTION, markup=False)
 
 
-def _print(console: Console, table: ReportTable) -> None:
+def print_table(console: Console, table: ReportTable) -> None:
+    """A table with its notes, in the width of the console."""
     from rich import box
     from rich.table import Table
     from rich.text import Text

@@ -141,7 +141,7 @@ def _prospects(report: ModelReport) -> ReportTable:
     notes = (
         (
             f"Where an estimate has laboratory results: one every {duration_text(regular[0])}, the sd just before the "
-            "next, its own offset included. --lab-interval takes another interval.",
+            "next, its own offset included. softsensor check --lab-interval takes another interval.",
         )
         if regular
         else ()

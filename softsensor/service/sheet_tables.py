@@ -81,8 +81,8 @@ def _found(report: ModelReport) -> ReportTable:
     if any(None in (*line.found.steps, *line.found.ramps) for line in report.sensors):
         notes.append('"none": not even one as large as the whole range of the sensor.')
     notes += [
-        f"{line.shift.tag}: {line.shift.absorbed_by} absorbs what lasts. A step is found by its onset or not at all, and "
-        "a drift slower than the one printed is followed, by the estimates too."
+        f"{line.shift.tag}: {line.shift.absorbed_by} absorbs what lasts: a step is found by its onset or hardly at all, "
+        "and a drift slower than the one printed is followed, by the estimates too."
         for line in report.sensors
         if line.absorbed and line.shift.absorbed_by
     ]

@@ -17,6 +17,7 @@ from softsensor.records.engine import Database
 from softsensor.service.live_feed import LiveFeed
 from softsensor.web.forms import form_routes
 from softsensor.web.live import LiveStreams
+from softsensor.web.model_pages import model_pages
 from softsensor.web.models_in_service import ModelsInService
 from softsensor.web.pages import Pages, data_routes, page_routes
 from softsensor.web.people_pages import people_forms, people_pages
@@ -46,6 +47,7 @@ def create_app(database: Database, feed: LiveFeed, clock_speed: float = 1.0) -> 
     app.state.streams = streams
     app.add_middleware(ProtectiveHeaders)
     app.include_router(data_routes(site))
+    app.include_router(model_pages(site, pages))
     app.include_router(people_pages(site, pages))
     app.include_router(people_forms(site, pages))
     app.include_router(page_routes(site, pages))

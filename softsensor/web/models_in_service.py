@@ -14,6 +14,7 @@ from softsensor.estimation.observability import EstimateKnowledge, estimate_know
 from softsensor.records.engine import Database
 from softsensor.records.reader import Unit
 from softsensor.records.tables import model_revisions
+from softsensor.service.model_report import ModelReport, model_report
 
 
 class ModelsInService:
@@ -23,7 +24,9 @@ class ModelsInService:
         self._database = database
         self._specs: dict[int, UnitSpec] = {}
         self._knowledge: dict[int, tuple[EstimateKnowledge, ...]] = {}
+        self._reports: dict[str, ModelReport] = {}
         self._solving = threading.Lock()
+        self._reporting = threading.Lock()
 
     def revision_of(self, unit: Unit) -> int:
         """The id of the revision in service, or of the newest one where none is.
@@ -61,4 +64,14 @@ class ModelsInService:
             if known is None:
                 known = estimate_knowledge(build_plant_model(self.spec(revision_id)))
                 self._knowledge[revision_id] = known
+        return known
+
+    def report(self, revision_id: int) -> ModelReport:
+        """All that the model of a revision promises; worked out once for each digest, which takes some seconds."""
+        model = build_plant_model(self.spec(revision_id))
+        with self._reporting:
+            known = self._reports.get(model.digest)
+            if known is None:
+                known = model_report(model)
+                self._reports[model.digest] = known
         return known

@@ -239,3 +239,16 @@ def test_on_a_small_screen_the_estimate_flag_and_sensors_are_in_sight(
         box = browser_page.page.locator(shown).first.bounding_box()
         assert box is not None
         assert box["y"] + box["height"] <= 800, shown
+
+
+def test_the_models_page_opens_from_the_units_page_and_fits_a_narrow_screen(
+    site: Served, browser_page: Watched
+) -> None:
+    page = browser_page.page
+    opened(site, page)
+    page.get_by_role("link", name="Model").click(timeout=60_000)
+    expect(page.get_by_role("heading", name=re.compile("^Model of"))).to_be_visible(timeout=60_000)
+    expect(page.get_by_role("heading", name="Smallest step and slowest drift found within")).to_be_visible()
+    page.set_viewport_size({"width": 400, "height": 800})
+    assert page.evaluate("document.documentElement.scrollWidth") <= 400
+    browser_page.assert_quiet()
