@@ -25,7 +25,7 @@ from plant_models.specification import UnitSpec
 from plant_models.unit_spellings import PREFIXED, WHOLE
 from softsensor import cycle, unit_design
 from softsensor.cli.check import as_document, print_table
-from softsensor.detection import diagnosis, follow_up, reading_tests, sheet
+from softsensor.detection import diagnosis, follow_up, isolability, reading_tests, sheet
 from softsensor.errors import SiteFileError
 from softsensor.estimation import lab_results, what_helps
 from softsensor.estimation.noise_tuning import archive_checks, interval_scale, separability
@@ -346,7 +346,8 @@ LIMITS = [
         f"With {interval_scale.LEAST_RESULTS} results or more that contradict the promise, or with "
         f"{interval_scale.SURE_RESULTS} in any case",
     ),
-    (SHEET, f"looks at each case {follow_up.PATIENCE} cycles after"),
+    (SHEET, f"a few times more until {follow_up.PATIENCE} cycles later"),
+    (SHEET, f"The noise is drawn {isolability.DRAWS} times"),
     (SHEET, f"named alone in fewer than {sheet.NAMED:.0%} of cases".replace("%", " %")),
     (SHEET, f"one result every {format_duration(what_helps.LAB_INTERVAL).replace('1 d', '24 h')}"),
     (AFTER, f"such as 90 min or 2 d, at most {changes.LONGEST_S / 86400.0:g} days"),

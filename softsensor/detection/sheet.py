@@ -19,7 +19,7 @@ from softsensor.detection.detectability import (
     step_signature,
     watched,
 )
-from softsensor.detection.follow_up import PATIENCE, DetectionDesign
+from softsensor.detection.follow_up import DetectionDesign
 from softsensor.detection.isolability import Diagnostician, Isolation, SensorFault
 from softsensor.detection.run_length import average_run_length
 from softsensor.detection.signatures import Shape
@@ -33,8 +33,8 @@ _DAY_PLACE = 2
 @dataclass(frozen=True, slots=True)
 class FaultTold:
     """A fault of a sensor as the diagnosis sees it: ``size`` in the sensor's unit, a ramp's per day; ``within``: seconds in
-    which 90 % of them are found. ``named``: probability that the diagnosis names the sensor, and alone, when it is asked
-    PATIENCE cycles after the time in which half of them are found; ``alike``: what it cannot be told apart from then.
+    which 90 % of them are found. ``named``: probability that the diagnosis names the sensor, and alone, where the test
+    goes up after the time in which half of them are found; ``alike``: what it cannot be told apart from then.
     """
 
     shape: Shape
@@ -134,7 +134,7 @@ def _told(
         usual = tests.seconds_until_found(shape, of_cycle, 0.5)
         if within is None or usual is None:
             continue
-        age = round(usual / tests.sample_time) + PATIENCE
+        age = round(usual / tests.sample_time)
         answer: Isolation = asked.ask(SensorFault(index, shape, of_cycle, age))
         told.append(FaultTold(shape, size, within, answer.named, answer.alike))
     return tuple(told)

@@ -108,8 +108,8 @@ def _told(report: ModelReport) -> ReportTable:
         for fault in line.told
     )
     notes = (
-        "Asked a while after a test went up, with the noise drawn many times: how often does the diagnosis name the sensor, "
-        "and it alone? Otherwise these stand beside it or in its place (share of cases; nothing: no fault at all).",
+        "After a test went up, with the noise drawn many times: how often does the diagnosis name the sensor, and it alone? "
+        "Otherwise these stand beside it or in its place (share of cases; nothing: no fault at all).",
     )
     columns = ("sensor", "fault", "found within", "named alone", "cannot be told apart from")
     return ReportTable("What a fault is taken for", columns, rows, notes)

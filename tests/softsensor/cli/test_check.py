@@ -198,8 +198,10 @@ def test_the_sheet_in_json(tmp_path: Path) -> None:
     step = next(fault for fault in line["told"] if fault["shape"] == "step")
     assert step["size"] == line["shift"]["bias"]
     assert step["within"] == line["found"]["tolerance_within"]
-    assert "feed flow" in step["alike"]
-    assert step["named"] < 0.1
+    drift = next(fault for fault in line["told"] if fault["shape"] == "ramp")
+    assert drift["size"] == pytest.approx(line["found"]["ramps"][2])
+    assert drift["named"] < 0.1
+    assert drift["alike"]["FI4101"] > 0.5
     (mend,) = document["mends"]
     assert (mend["tag"], mend["beside"], mend["whole"]) == ("AI4101", "AI4101", False)
     assert mend["then"]["found"]["steps"][2] < line["found"]["steps"][2]
