@@ -22,6 +22,7 @@ from plant_models.model_kinds import (
 from plant_models.model_tables import Table
 from plant_models.quoting import quoted
 from plant_models.specification import (
+    GATE,
     DisturbanceSpec,
     EstimateSpec,
     InputSpec,
@@ -70,7 +71,7 @@ def read_input(table: Table) -> InputSpec:
 
 def read_sensor(table: Table) -> SensorSpec:
     """A sensor; its tolerance is four times noise_sd unless it has one of its own."""
-    table.only(*_VARIABLE, "noise_sd", "tolerance", *_OFFSET, "on_change", "max_age")
+    table.only(*_VARIABLE, "noise_sd", "tolerance", *_OFFSET, "on_change", "max_age", "gate")
     operating_point, limits, validated = _limits(table)
     noise_sd = table.read("noise_sd", ABOVE_ZERO)
     if not math.isfinite(4.0 * noise_sd):
@@ -87,6 +88,7 @@ def read_sensor(table: Table) -> SensorSpec:
         bias_initial_sd=table.read_or("bias_initial_sd", NOT_BELOW_ZERO, 0.0),
         on_change=table.read_or("on_change", FLAG, False),
         max_age=table.read_or("max_age", DURATION_ABOVE_ZERO, None),
+        gate=table.read_or("gate", ABOVE_ZERO, GATE),
     )
 
 

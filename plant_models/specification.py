@@ -9,6 +9,8 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 Range = tuple[float, float]
+GATE = 8.0
+"""Standard deviations of the innovation beyond which a single reading is not used, where the file says nothing."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -42,6 +44,8 @@ class SensorSpec:
     on_change: bool = False
     """Reported on change only: no news means the same value again."""
     max_age: float | None = None
+    gate: float = GATE
+    """Standard deviations of the innovation beyond which a single reading is not used."""
 
 
 @dataclass(frozen=True, slots=True)

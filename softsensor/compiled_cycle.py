@@ -10,6 +10,7 @@ from numba import njit
 from softsensor.detection.fault_tests import test_cycle
 from softsensor.detection.shift_tests import highest_share
 from softsensor.detection.state_of_tests import TestDesign, TestState
+from softsensor.estimation.gate import gates_open, passes
 from softsensor.estimation.input_driven import accept_inputs, advance_input_driven, input_driven_outputs
 from softsensor.estimation.kalman import correct, predict_into, row_mean, row_variance, unless_rounding
 from softsensor.estimation.kernel import EstimatorState, Floats, Ints, Kernel
@@ -52,6 +53,8 @@ class BlockOutputs(NamedTuple):
     low: Floats
     estimate: Floats
     estimate_sd: Floats
+    used: Ints
+    """(N, n_sensors) 1 where a reading has corrected the estimate: there, in use, and let through by the gate."""
     events: Ints
     settling: Ints
     """(N,) 1 while the tests rest because inputs are or were missing."""
@@ -75,6 +78,7 @@ def empty_outputs(cycles: int, kernel: Kernel, labs: int) -> BlockOutputs:
         np.full(estimates, np.nan),
         np.full(estimates, np.nan),
         np.zeros(sensors, dtype=np.int64),
+        np.zeros(sensors, dtype=np.int64),
         np.zeros(cycles, dtype=np.int64),
         np.zeros(cycles, dtype=np.int64),
         np.zeros(cycles),
@@ -93,6 +97,22 @@ def _innovate(
         out.innovation_sd[k, i] = np.sqrt(variance)
         if data.y[k, i] == data.y[k, i]:
             out.innovation[k, i] = data.y[k, i] - out.predicted[k, i]
+
+
+@njit(cache=True)
+def _admit(
+    kernel: Kernel, streak: Ints, k: int, data: BlockInputs, out: BlockOutputs, kept_out: Ints
+) -> None:
+    """Which readings of the cycle correct the estimate, into ``out.used``, and which the gate has ``kept_out``
+    (n_sensors,); its ``streak`` goes on.
+    """
+    every = gates_open(streak)
+    for i in range(kernel.n_sensors):
+        kept_out[i] = 0
+        if data.use[k, i] != 0 and data.y[k, i] == data.y[k, i]:
+            innovation, sd = out.innovation[k, i], out.innovation_sd[k, i]
+            out.used[k, i] = 1 if passes(kernel.gate, streak, i, innovation, sd) or every else 0
+            kept_out[i] = 1 - out.used[k, i]
 
 
 @njit(cache=True)
@@ -118,7 +138,7 @@ def _correct_all(
         lab += 1
     squares = 0.0
     for i in range(kernel.n_sensors):
-        if data.use[k, i] != 0 and data.y[k, i] == data.y[k, i]:
+        if out.used[k, i] != 0:
             deviation, r = data.y[k, i] - base[i], kernel.r[i] * data.scale[k, i]
             innovation = deviation - row_mean(kernel, x, i)
             s = correct(kernel, x, P, i, deviation, r, v, K)
@@ -166,11 +186,13 @@ def run_block(
     P, other = est.P.copy(), np.zeros((n, n))
     base = np.zeros(kernel.n_sensors + kernel.n_estimates)
     work, moves = np.zeros(len(kernel.steady) + 1), np.zeros(kernel.n_inputs)
+    kept_out = np.zeros(kernel.n_sensors, dtype=np.int64)
     lab, cycles = 0, len(data.u)
     for k in range(len(data.u)):
         accept_inputs(kernel, est, data.u[k])
         input_driven_outputs(kernel, est, base)
         _innovate(kernel, x, P, base, k, data, out)
+        _admit(kernel, est.streak, k, data, out, kept_out)
         lab = _correct_all(kernel, x, P, base, k, data, out, lab, v, K)
         if lab < 0:
             return UNSOUND
@@ -192,6 +214,7 @@ def run_block(
                 data.quiet[k],
                 out.innovation[k],
                 out.innovation_sd[k],
+                kept_out,
                 out.squares[k],
                 out.events[k],
             )

@@ -336,7 +336,6 @@ def _results(
     out: BlockOutputs,
 ) -> CycleResults:
     scale = np.array([item.interval_scale for item in design.model.spec.estimates])
-    used = ((data.use[:done] != 0) & np.isfinite(data.y[:done])).astype(np.int8)
     estimate = out.estimate[:done]
     in_block = data.lab_at < done
     return CycleResults(
@@ -349,7 +348,7 @@ def _results(
         out.predicted[:done],
         out.innovation[:done],
         out.innovation_sd[:done],
-        used,
+        out.used[:done].astype(np.int8),
         (data.use[:done] == 0).astype(np.int8),
         np.full((done, design.kernel.n_estimates), "", dtype=object),
         out.settling[:done].astype(np.int8),

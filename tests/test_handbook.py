@@ -21,13 +21,13 @@ from plant_models.errors import ModelFileError
 from plant_models.model_file import parse_model_text
 from plant_models.model_sections import FALSE_FLAG_INTERVAL
 from plant_models.simulators import reactor_model_path
-from plant_models.specification import UnitSpec
+from plant_models.specification import GATE, UnitSpec
 from plant_models.unit_spellings import PREFIXED, WHOLE
 from softsensor import cycle, unit_design
 from softsensor.cli.check import as_document, print_table
 from softsensor.detection import diagnosis, follow_up, isolability, reading_tests, sheet
 from softsensor.errors import SiteFileError
-from softsensor.estimation import lab_results, what_helps
+from softsensor.estimation import gate, lab_results, what_helps
 from softsensor.estimation.noise_tuning import archive_checks, interval_scale, separability
 from softsensor.records import changes, tables
 from softsensor.service import live, replay, result_tables, tuning
@@ -263,6 +263,7 @@ def test_a_key_is_needed_where_the_table_says_so(name: str, key: str, needed: st
 
 DEFAULTS = {
     ("sensor", "on_change"): False,
+    ("sensor", "gate"): GATE,
     ("sensor", "bias_walk_sd"): 0.0,
     ("sensor", "bias_initial_sd"): 0.0,
     ("sensor", "max_age"): None,
@@ -275,7 +276,7 @@ DEFAULTS = {
     ("estimate", "lab"): None,
     ("estimate", "validated_range"): None,
 }
-WORDS = {"False": "false", "0.0": "0", "1.0": "1", "None": "none"}
+WORDS = {"False": "false", "0.0": "0", "1.0": "1", "8.0": "8", "None": "none"}
 
 
 @pytest.mark.parametrize(("name", "key"), DEFAULTS)
@@ -319,6 +320,8 @@ LIMITS = [
     (METHOD, f"may be {replay.LEAST_HORIZON_S / 86400.0:g} days late at least"),
     (METHOD, f"{cycle.UNCERTAIN_VARIANCE:g} noise_sd^2 where the reading is Uncertain"),
     (METHOD, f"the interval of {result_tables.NORMAL_95:.2f} sd to either side"),
+    (METHOD, f"is beyond `gate` standard deviations ({GATE:g},"),
+    (METHOD, f"In the {gate.FOLLOWED} cycles after a sensor began to be followed"),
     (METHOD, f"clipped to {unit_design.CLIP:g} in size"),
     (METHOD, f"in the end, at most {unit_design.LARGEST_REFERENCE:g}."),
     (METHOD, f"Where that half is below {unit_design.LEAST_REFERENCE:g} the filter absorbs"),

@@ -66,6 +66,7 @@ def test_cycle(
     quiet: int,
     innovation: Floats,
     sd: Floats,
+    kept_out: Ints,
     squares: float,
     events: Ints,
 ) -> int:
@@ -73,8 +74,9 @@ def test_cycle(
 
     ``moves``: the inputs, as deviations. ``fresh`` is 0 for a value that the assembly repeated (reported on change): it
     is no evidence of being stuck. ``doubtful`` is 1 where an input is missing or too old. ``quiet`` is 1 where a person
-    has let the tests rest: only lost sensors are looked for. ``squares``: sum of squares of the whitened innovations, a
-    reading at a time, over the sensors in use; nan where one of them is missing.
+    has let the tests rest: only lost sensors are looked for. ``kept_out`` (n_sensors,) is 1 where the gate has kept a
+    reading from the estimate: a single impossible one is a spike, or noise, and no shift. ``squares``: sum of squares of
+    the whitened innovations, a reading at a time, over the sensors in use; nan where one of them is missing.
     """
     union = _settle(state, doubtful)
     resting = quiet != 0 or state.cycle[0] < state.settling_until[0]
@@ -85,12 +87,13 @@ def test_cycle(
     for i in range(len(y)):
         missing = y[i] != y[i]
         code = 0 if cut_off else test_lost(design, state, i, missing)
-        state.ring[slot, i] = innovation[i]
+        state.ring[slot, i] = innovation[i] if kept_out[i] == 0 else np.nan
         if resting:
             _rest(state, i)
         elif not missing:
             z = innovation[i] / sd[i]
-            code |= test_shift(design, state, i, z)
+            if kept_out[i] == 0:
+                code |= test_shift(design, state, i, z)
             code |= test_spread(design, state, i, z)
             code |= test_spike(design, state, i, z)
         if quiet == 0 and not missing and fresh[i] != 0:

@@ -53,6 +53,8 @@ class Kernel(NamedTuple):
     q: Floats
     r: Floats
     """Variance of each sensor's noise (n_sensors,)."""
+    gate: Floats
+    """Standard deviations of each sensor's innovation beyond which a single reading is not used (n_sensors,)."""
     moved_start: Ints
     moved_stop: Ints
     moved_from: Ints
@@ -70,7 +72,8 @@ class EstimatorState(NamedTuple):
     """What the estimator carries from cycle to cycle: the prediction for the coming cycle.
 
     x (n,), P (n, n): mean and covariance of the stochastic part; x_in: input-driven states; u_past (n_inputs, ring):
-    past inputs as deviations; head (1,): column of the newest of them, -1 before the first cycle.
+    past inputs as deviations; head (1,): column of the newest of them, -1 before the first cycle; streak (n_sensors,):
+    readings in a row far to one side, negative where they lie below (:mod:`softsensor.estimation.gate`).
     """
 
     x: Floats
@@ -78,11 +81,17 @@ class EstimatorState(NamedTuple):
     x_in: Floats
     u_past: Floats
     head: Ints
+    streak: Ints
 
     def copy(self) -> EstimatorState:
         """A copy that shares nothing with this state."""
         return EstimatorState(
-            self.x.copy(), self.P.copy(), self.x_in.copy(), self.u_past.copy(), self.head.copy()
+            self.x.copy(),
+            self.P.copy(),
+            self.x_in.copy(),
+            self.u_past.copy(),
+            self.head.copy(),
+            self.streak.copy(),
         )
 
 
@@ -176,6 +185,7 @@ def build_kernel(model: PlantModel) -> Kernel:
         *compressed_rows(part.C),
         np.array(part.q, dtype=np.float64),
         np.array([item.noise_sd**2 for item in spec.sensors], dtype=np.float64),
+        np.array([item.gate for item in spec.sensors], dtype=np.float64),
         *moved_rows(part.A),
     )
 
@@ -189,4 +199,5 @@ def initial_state(model: PlantModel, kernel: Kernel) -> EstimatorState:
         np.zeros(len(kernel.steady)),
         np.zeros((kernel.n_inputs, kernel.ring)),
         np.array([-1], dtype=np.int64),
+        np.zeros(kernel.n_sensors, dtype=np.int64),
     )

@@ -26,8 +26,16 @@ import numpy as np
 from numba import njit
 from numpy.typing import NDArray
 
+from softsensor.estimation.gate import gates_open, passes
 from softsensor.estimation.input_driven import accept_inputs, advance_input_driven, input_driven_outputs
-from softsensor.estimation.kalman import ROUNDING, correct, output_variance, predict, row_mean
+from softsensor.estimation.kalman import (
+    ROUNDING,
+    correct,
+    output_variance,
+    predict,
+    row_mean,
+    row_variance,
+)
 from softsensor.estimation.kernel import EstimatorState, Floats, Ints, Kernel
 
 
@@ -58,7 +66,8 @@ class ScalarReadings(NamedTuple):
 
 
 class Trace(NamedTuple):
-    """What the filter did in N cycles: gain (M, n), innovation (M,) and s (M,) of each scalar correction; of each
+    """What the filter did in N cycles: gain (M, n), innovation (M,) and s (M,) of each scalar correction (gain 0 and s
+    infinite where the gate let the reading not through: one that says nothing); of each
     estimate after its cycle's corrections the mean and variance (N, n_estimates), cross = P c' (N, n_estimates, n) and
     what rounding alone may make of a variance that is zero (N, n_estimates).
     """
@@ -123,6 +132,30 @@ def _note_estimates(
 
 
 @njit(cache=True)
+def _admit(
+    kernel: Kernel, est: EstimatorState, base: Floats, at: tuple[int, int], data: ScalarReadings, used: Ints
+) -> None:
+    """Which of the readings ``at`` (first, stop) of one cycle are used: the live cycle's gate, before any correction."""
+    every = gates_open(est.streak)
+    for m in range(at[0], at[1]):
+        row = data.row[m]
+        used[m] = 1
+        if row < kernel.n_sensors:
+            innovation = data.value[m] - (base[row] + row_mean(kernel, est.x, row))
+            sd = np.sqrt(row_variance(kernel, est.P, row) + data.variance[m])
+            used[m] = 1 if passes(kernel.gate, est.streak, row, innovation, sd) or every else 0
+
+
+@njit(cache=True)
+def _end_of_cycle(at: Ints, first: int, k: int) -> int:
+    """The first entry from ``first`` on that lies after cycle k."""
+    stop = first
+    while stop < len(at) and at[stop] == k:
+        stop += 1
+    return stop
+
+
+@njit(cache=True)
 def run_forward(kernel: Kernel, est: EstimatorState, data: ScalarReadings, trace: Trace) -> bool:
     """The filter over a block of cycles, bit for bit that of the live cycle; False where a variance is not positive.
 
@@ -132,11 +165,17 @@ def run_forward(kernel: Kernel, est: EstimatorState, data: ScalarReadings, trace
     v, K, M = np.zeros(n), np.zeros(n), np.zeros((n, n))
     base = np.zeros(kernel.n_sensors + kernel.n_estimates)
     work = np.zeros(len(kernel.steady) + 1)
-    m = 0
+    used = np.zeros(len(data.at), dtype=np.int64)
+    stop = 0
     for k in range(data.u.shape[0]):
         accept_inputs(kernel, est, data.u[k])
         input_driven_outputs(kernel, est, base)
-        while m < len(data.at) and data.at[m] == k:
+        first, stop = stop, _end_of_cycle(data.at, stop, k)
+        _admit(kernel, est, base, (first, stop), data, used)
+        for m in range(first, stop):
+            if used[m] == 0:
+                trace.s[m] = np.inf
+                continue
             row, r = data.row[m], data.variance[m]
             deviation = data.value[m] - base[row]
             trace.innovation[m] = deviation - row_mean(kernel, est.x, row)
@@ -145,7 +184,6 @@ def run_forward(kernel: Kernel, est: EstimatorState, data: ScalarReadings, trace
             trace.s[m] = row_mean(kernel, v, row) + r
             for i in range(n):
                 trace.gain[m, i] = K[i]
-            m += 1
         if not _note_estimates(kernel, est, base, k, trace, v):
             return False
         advance_input_driven(kernel, est, work)

@@ -137,6 +137,7 @@ def model_report(model: PlantModel, lab_interval: float = LAB_INTERVAL) -> Model
             *_about_disturbances(disturbances),
             *_about_estimates(estimates),
             *_about_sensors(model, sensors),
+            *_about_gates(spec, sensors),
         ),
     )
 
@@ -258,5 +259,19 @@ def _about_sensors(model: PlantModel, sensors: tuple[SheetLine, ...]) -> list[st
                 f"{spec.tag}: a lasting bias of its tolerance {by}: it leaves {shift.settled:.2g} sd, for which the "
                 f"test needs more than {LATEST_FLAG:.0%} of the false-flag interval on average"
                 + (": only its onset shows, and the estimates go wrong with it" if shift.absorbed_by else "")
+            )
+    return lines
+
+
+def _about_gates(spec: UnitSpec, sensors: tuple[SensorReport, ...]) -> list[str]:
+    """A gate wider than the range lets every reading in range through, wherever in it the prediction lies."""
+    lines = []
+    for sensor, item in zip(spec.sensors, sensors, strict=True):
+        width, span = sensor.gate * item.shift.innovation_sd, sensor.range[1] - sensor.range[0]
+        if width > span:
+            lines.append(
+                f"{sensor.tag}: its gate can never fire: {sensor.gate:g} sd of its innovation are {width:.3g} "
+                f"{item.shift.unit}, more than its whole range of {span:.3g}: one impossible reading within the range "
+                "moves the estimates"
             )
     return lines

@@ -12,7 +12,7 @@ from softsensor.estimation.past import CHUNK, Past
 from softsensor.readings_of_cycle import CycleReadings
 from softsensor.records import series
 from softsensor.records.engine import Database
-from softsensor.service.checkpoints import unpack_estimator, unpack_state
+from softsensor.service.checkpoints import FORMAT, unpack_estimator, unpack_state
 from softsensor.service.recording import unpack_decisions
 from softsensor.service.unit_run import Came, UnitRun, slice_readings
 
@@ -42,10 +42,16 @@ def last_seen(database: Database, unit_id: int) -> LastSeen | None:
 
 
 def resumed_run(design: UnitDesign, database: Database, unit_id: int, horizon: int) -> UnitRun:
-    """The run at its newest checkpoint, or a fresh one where this revision has none."""
+    """The run at its newest checkpoint, or a fresh one where this revision has none.
+
+    A checkpoint of an earlier release's format is one of another revision too: what a revision's digest stands for has
+    changed with the format.
+
+    :raises RecordsError: a checkpoint of a later release, or a damaged one.
+    """
     seen = last_seen(database, unit_id)
     checkpoint = series.last_checkpoint(database, unit_id)
-    if checkpoint is None:
+    if checkpoint is None or checkpoint.format_version < FORMAT:
         return fresh_run(design, horizon, 0 if seen is None else _next_chunk(seen.cycle))
     state, context = unpack_state(checkpoint.state, checkpoint.format_version)
     if context.model_digest != design.model.digest:

@@ -11,6 +11,7 @@ from collections.abc import Collection, Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
+from numpy.typing import NDArray
 
 from connectors.history import History
 from plant_models.building import build_plant_model
@@ -50,6 +51,8 @@ LEAD_IN = 0.05
 """At most this share of the fit only leads in: the inputs before the history are not known."""
 SETTLED = 3.0
 """Slowest time constants of the inputs' paths after which the lead-in ends."""
+GATE_TURNS = 5
+"""Fits after which gate and fit must agree on the readings that are kept out."""
 DIGITS = 4
 """Written; the fit knows no more."""
 LEAST_SCALE = 0.05
@@ -86,8 +89,7 @@ def tune(
     )
     if refusals:
         return replace(report, refusals=refusals)
-    fit = NoiseFit(model, parameters, data.seen.between(0, data.split), data.lead_in)
-    best = maximise(fit)
+    data, fitted, best, disagreement = _fitted(data, parameters)
     known = certainty(best)
     report = replace(
         report,
@@ -95,11 +97,39 @@ def tune(
         numbers=_numbers(best, known.log_sd),
         log_likelihood=(best.log_likelihood_before, best.log_likelihood),
     )
-    fitted = design_unit(build_plant_model(fit.spec_at(np.log(best.values))))
-    refusals = known.objections + too_fast(best, model.spec.sample_time) + _filtered(fitted, data)
+    refusals = known.objections + disagreement + too_fast(best, model.spec.sample_time)
+    refusals += _filtered(fitted, data)
     if refusals:
         return replace(report, refusals=refusals)
     return _judged(data, report, labs)
+
+
+def _fitted(
+    data: _Data, parameters: tuple[NoiseParameter, ...]
+) -> tuple[_Data, UnitDesign, Maximum, tuple[str, ...]]:
+    """The fit without the readings that the gate keeps out: data without them, fitted unit, fit, what speaks against it.
+
+    Which readings those are depends on the noise, so gate and fit take turns until they agree.
+    """
+    kept_out = _kept_out(data.design, data)
+    for _ in range(GATE_TURNS):
+        z = np.where(kept_out, np.nan, data.seen.z)
+        seen = replace(data, seen=data.seen._replace(z=z))
+        fit = NoiseFit(data.design.model, parameters, seen.seen.between(0, data.split), data.lead_in)
+        best = maximise(fit)
+        fitted = design_unit(build_plant_model(fit.spec_at(np.log(best.values))))
+        before, kept_out = kept_out, _kept_out(fitted, data)
+        if np.array_equal(before, kept_out):
+            return seen, fitted, best, ()
+    text = f"after {GATE_TURNS} fits it is not settled which readings lie beyond the sensors' gates"
+    return seen, fitted, best, (text,)
+
+
+def _kept_out(design: UnitDesign, data: _Data) -> NDArray[np.bool_]:
+    """(N, m) true where a reading lies beyond its sensor's gate and is not used."""
+    state = initial_state(design.model, design.kernel)
+    _, out = rerun(design, state, FlagBook(), 0, data.readings, ())
+    return np.asarray(np.isfinite(out.innovation) & (out.used == 0), dtype=np.bool_)
 
 
 def _judged(data: _Data, report: TuningReport, labs: Sequence[LabArrival]) -> TuningReport:

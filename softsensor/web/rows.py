@@ -152,7 +152,10 @@ def _sensor_row(
     results = latest.results
     reading = finite(seen.y[-1, i])
     deviation = results.innovation[-1, i] / results.innovation_sd[-1, i]
-    unused = f"no reading: {NO_READING[seen.y_quality[-1, i]]}" if reading is None else "left out"
+    left_out = f"{item.tag} is left out" in results.reasons[-1]
+    unused = "left out" if left_out else "not used: it cannot be right"
+    if reading is None:
+        unused = f"no reading: {NO_READING[seen.y_quality[-1, i]]}"
     return SensorRow(
         item.tag,
         item.unit,

@@ -57,6 +57,8 @@ class DenseResult:
     lab_predicted: Array
     lab_sd: Array
     minus_log_l: float
+    used: Mask
+    """(N, n_sensors): there, and let through by the gate where there is one."""
 
 
 def output_names(spec: UnitSpec) -> list[str]:
@@ -174,12 +176,32 @@ def stochastic(spec: UnitSpec) -> StateSpace:
     return StateSpace(A, Q, np.hstack([part.C for part in parts]), P0)
 
 
+def through_the_gate(gate: Array, score: Array, row: list[int]) -> Mask:
+    """Which of one cycle's standardised innovations (nan: no reading) are used.
+
+    ``row`` counts, per sensor, readings in a row beyond half the gate, with the sign of their side; brought up to date.
+    """
+    used = np.isfinite(score)
+    just_followed = any(3 <= abs(length) < 6 for length in row)
+    for i in np.flatnonzero(used):
+        side = int(np.sign(score[i])) if abs(score[i]) > 0.5 * gate[i] else 0
+        row[i] = int(np.clip(row[i] + side, -6, 6)) if row[i] * side > 0 else side
+        used[i] = abs(score[i]) <= gate[i] or abs(row[i]) >= 3 or just_followed
+    return used
+
+
 def filter_in_order(
-    spec: UnitSpec, u: Array, y: Array, uncertain: Mask | None = None, labs: Sequence[LabRow] = ()
+    spec: UnitSpec,
+    u: Array,
+    y: Array,
+    uncertain: Mask | None = None,
+    labs: Sequence[LabRow] = (),
+    gate: Array | None = None,
 ) -> DenseResult:
     """Run over N cycles: ``u`` (N, n_inputs) and ``y`` (N, n_sensors), nan where there is no reading.
 
     :param uncertain: (N, n_sensors), true where a reading is Uncertain.
+    :param gate: (n_sensors,) in standard deviations of the innovation; None for no gate.
     """
     model, mean = stochastic(spec), input_driven(spec, u)
     count, n_sensors = y.shape
@@ -190,25 +212,29 @@ def filter_in_order(
     out = {name: np.full(y.shape, np.nan) for name in ("predicted", "innovation", "innovation_sd")}
     estimate, sd = np.zeros((count, len(scale))), np.zeros((count, len(scale)))
     lab_predicted, lab_sd = np.full(len(labs), np.nan), np.full(len(labs), np.nan)
-    minus_log_l = 0.0
+    minus_log_l, row, use = 0.0, [0] * n_sensors, np.isfinite(y)
+    H = model.C[:n_sensors]
     for k in range(count):
-        seen = np.flatnonzero(np.isfinite(y[k]))
+        out["predicted"][k] = mean[k, :n_sensors] + H @ x
+        out["innovation"][k] = y[k] - out["predicted"][k]
+        variance = np.diag(H @ P @ H.T) + np.square(noise * np.where(doubt[k], UNCERTAIN_FACTOR, 1.0))
+        out["innovation_sd"][k] = np.where(np.isfinite(y[k]), np.sqrt(variance), np.nan)
+        if gate is not None:
+            use[k] = through_the_gate(gate, out["innovation"][k] / np.sqrt(variance), row)
+        seen = np.flatnonzero(use[k])
         here = [at for at, lab in enumerate(labs) if lab.cycle == k]
         rows = [*seen, *(n_sensors + labs[at].estimate for at in here)]
         readings = np.array([*y[k, seen], *(labs[at].value for at in here)])
         sds = [*noise[seen] * np.where(doubt[k, seen], UNCERTAIN_FACTOR, 1.0), *(labs[at].sd for at in here)]
-        out["predicted"][k] = mean[k, :n_sensors] + model.C[:n_sensors] @ x
         if rows:
-            H = model.C[rows]
-            S = H @ P @ H.T + np.diag(np.square(sds))
+            C = model.C[rows]
+            S = C @ P @ C.T + np.diag(np.square(sds))
             inverse = np.linalg.inv(S)
-            innovation = readings - mean[k, rows] - H @ x
-            K = P @ H.T @ inverse
-            x, P = x + K @ innovation, P - K @ H @ P
+            innovation = readings - mean[k, rows] - C @ x
+            K = P @ C.T @ inverse
+            x, P = x + K @ innovation, P - K @ C @ P
             P = (P + P.T) / 2.0
             minus_log_l += 0.5 * (np.linalg.slogdet(2.0 * np.pi * S)[1] + innovation @ inverse @ innovation)
-            out["innovation"][k, seen] = innovation[: seen.size]
-            out["innovation_sd"][k, seen] = np.sqrt(np.diag(S))[: seen.size]
             lab_predicted[here] = (readings - innovation)[seen.size :]
             lab_sd[here] = np.sqrt(np.diag(S))[seen.size :]
         E = model.C[n_sensors:]
@@ -217,12 +243,17 @@ def filter_in_order(
         x, P = model.A @ x, model.A @ P @ model.A.T + model.Q
     return DenseResult(
         estimate, sd, out["predicted"], out["innovation"], out["innovation_sd"],
-        lab_predicted, lab_sd, minus_log_l,
+        lab_predicted, lab_sd, minus_log_l, use,
     )  # fmt: skip
 
 
 def known_at_each_cycle(
-    spec: UnitSpec, u: Array, y: Array, uncertain: Mask | None, labs: Sequence[LabRow]
+    spec: UnitSpec,
+    u: Array,
+    y: Array,
+    uncertain: Mask | None,
+    labs: Sequence[LabRow],
+    gate: Array | None = None,
 ) -> DenseResult:
     """What was known at every cycle: for each stretch between arrivals, in-order processing of what had arrived.
 
@@ -230,11 +261,11 @@ def known_at_each_cycle(
     """
     cuts = sorted({0, len(y), *(lab.known_from for lab in labs)})
     last = None
-    joined: dict[str, list[Array]] = {name: [] for name in ("estimate", "sd", *_SENSOR_FIELDS)}
+    joined: dict[str, list[Array]] = {name: [] for name in ("estimate", "sd", "used", *_SENSOR_FIELDS)}
     lab_predicted, lab_sd = np.full(len(labs), np.nan), np.full(len(labs), np.nan)
     for start, stop in pairwise(cuts):
         known = [at for at, lab in enumerate(labs) if lab.known_from <= start]
-        last = filter_in_order(spec, u, y, uncertain, [labs[at] for at in known])
+        last = filter_in_order(spec, u, y, uncertain, [labs[at] for at in known], gate)
         for name, pieces in joined.items():
             pieces.append(getattr(last, name)[start:stop])
         for place, at in enumerate(known):

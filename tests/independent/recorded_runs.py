@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 import pandas as pd
@@ -72,6 +72,21 @@ def record(spec: UnitSpec, cycles: int, seed: int, gaps: float = 0.0, move: floa
     y = truth[:, :n] + noise * rng.standard_normal((cycles, n))
     y[rng.random((cycles, n)) < gaps] = np.nan
     return Run(spec, u, y, doubt, truth)
+
+
+def spoilt(run: Run, seed: int) -> Run:
+    """The run with single impossible readings, short rows of them and, on some sensors, a step that stays."""
+    rng = np.random.default_rng([31, seed])
+    y, cycles = run.y.copy(), len(run.y)
+    for i, sensor in enumerate(run.spec.sensors):
+        size = 100.0 * sensor.noise_sd
+        for at in rng.integers(5, cycles, 4):
+            y[at, i] += size * float(rng.choice([-1.0, 1.0, 4.0]))
+        begin = int(rng.integers(5, cycles - 10))
+        y[begin : begin + int(rng.integers(2, 6)), i] -= size
+        if rng.random() < 0.6:
+            y[int(rng.integers(cycles // 2, cycles)) :, i] += size
+    return replace(run, y=y)
 
 
 def late_labs(run: Run, count: int, seed: int, latest: int) -> tuple[pd.DataFrame, list[LabRow]]:

@@ -123,6 +123,8 @@ FAULTS = [
     ("noise_sd = 0.15", "noise_sd = 0.15\non_change = 1 #!", "on_change", "expected true or false; got 1"),
     ("noise_sd = 0.15", "noise_sd = 0.15\nbias_walk_sd = -1 #!", "bias_walk_sd", "not below zero; got -1"),
     ("noise_sd = 0.15", "noise_sd = 0.15\nbias_initial_sd = -1 #!", "bias_initial_sd", "not below zero; got -1"),
+    ("noise_sd = 0.15", "noise_sd = 0.15\ngate = 0 #!", "gate", "expected a finite number above zero; got 0"),
+    ("noise_sd = 0.15", "noise_sd = 0.15\ngate = 'off' #!", "gate", "above zero; got 'off', which is no number"),
     ("noise_sd = 0.15", "noise_sd = 0.15\nmax_age = 60 #!", "max_age", "in quotation marks; got 60"),
     ("range = [0.0, 2.0]", 'range = [0.0, 2.0]\nmax_age = "0 s" #!', "max_age", "above zero; got '0 s'"),
     ("sd = 0.02 }", "sd = 0 } #!", "lab.sd", "expected a finite number above zero"),

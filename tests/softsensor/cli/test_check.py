@@ -126,6 +126,26 @@ def test_offset_on_a_sensor_conflicts_with_finding_its_drift(tmp_path: Path) -> 
     assert any("conflict" in line for line in document["warnings"])
 
 
+@pytest.mark.parametrize(("span", "told"), [(1.0, True), (200.0, False)])
+def test_a_gate_that_can_never_fire_is_told(tmp_path: Path, span: float, told: bool) -> None:
+    """Eight times the sd of the innovation, more than 0.1 degC, against the whole range."""
+    path = write(tmp_path)
+    text = path.read_text(encoding="utf-8")
+    assert text.count("range = [0.0, 200.0]") == 1
+    path.write_text(text.replace("[0.0, 200.0]", f"[92.0, {92.0 + span}]"), encoding="utf-8")
+    document = json.loads(check(path, "--json").out)
+    (sensor,) = document["sensors"]
+    assert (8.0 * sensor["shift"]["innovation_sd"] > span) is told
+    assert any("TI1: its gate can never fire" in line for line in document["warnings"]) is told
+
+
+def test_a_narrower_gate_can_fire(tmp_path: Path) -> None:
+    path = write(tmp_path, sensor="gate = 2.0")
+    text = path.read_text(encoding="utf-8").replace("[0.0, 200.0]", "[92.0, 93.0]")
+    path.write_text(text, encoding="utf-8")
+    assert "never fire" not in check(path).out
+
+
 def test_an_estimates_own_offset_leaves_it_a_soft_sensor(tmp_path: Path) -> None:
     done = check(write(tmp_path, estimate="bias_walk_sd = 0.01\nbias_initial_sd = 0.05"), "--json")
     assert done.status == 0

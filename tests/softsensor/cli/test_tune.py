@@ -143,6 +143,26 @@ def test_known_noise_is_found_and_written_with_the_comments_kept(
     assert spec.sensors[0].tolerance == 1.0
 
 
+@pytest.mark.parametrize("guess", ["0.1 ", "0.02"])
+def test_impossible_readings_are_not_fitted_also_from_noise_that_is_far_too_small(
+    command: Any, plant: Path, out: Path, guess: str
+) -> None:
+    """With the file's noise ten times too small the gate cuts off many true readings, until the fit has grown."""
+    model, history = out.parent / "model.toml", out.parent / "history.csv"
+    assert FILE.count("noise_sd = 0.1 ") == 1
+    model.write_text(FILE.replace("noise_sd = 0.1 ", f"noise_sd = {guess}"), encoding="utf-8")
+    frame = pd.read_csv(plant / "history.csv")
+    frame.loc[np.random.default_rng(3).choice(len(frame), 40, replace=False), "TI1"] += 30.0
+    frame.to_csv(history, index=False)
+    said = command("tune", model, history, "--out", out, "--json")
+    document = json.loads(said.out)
+
+    assert (said.status, document["refusals"]) == (0, [])
+    true = {"TI1.noise_sd": 0.2, "feed.sd": 0.5, "feed.time_constant": 3000.0}
+    for number in document["numbers"]:
+        assert number["low"] <= true[number["name"]] <= number["high"]
+
+
 def test_an_interval_that_laboratory_results_contradict_is_scaled(
     command: Any, plant: Path, out: Path
 ) -> None:

@@ -3,20 +3,23 @@
 from __future__ import annotations
 
 import asyncio
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
 import pytest
+from sqlalchemy import text
 
 from plant_models.building import build_plant_model
 from plant_models.model_file import parse_model_text
 from plant_models.plant_model import PlantModel
 from softsensor.cycle import UnitDesign
-from softsensor.errors import ReplayError
+from softsensor.errors import RecordsError, ReplayError
 from softsensor.recorded_data import prepare_from_records
 from softsensor.records import reader, series
 from softsensor.records.engine import open_database
 from softsensor.records.upgrade import upgrade_database
+from softsensor.service.checkpoints import FORMAT
 
 SPARE_SENSOR = """
 [[sensor]]
@@ -98,9 +101,9 @@ def assert_same(one: dict[str, Any], other: dict[str, Any]) -> None:
         assert one[name] == other[name], name
 
 
-async def interrupted(bench: Any, story: Any, stops: tuple[int, ...]) -> None:
+async def interrupted(bench: Any, story: Any, stops: tuple[int, ...], end: int = END) -> None:
     first = 0
-    for stop in (*stops, END):
+    for stop in (*stops, end):
         await bench.run(story, first, stop)
         first = stop
 
@@ -134,6 +137,43 @@ def test_stops_change_nothing_on_record_and_a_replay_of_the_records_gives_the_di
     assert sum(len(stretch.results) for stretch in running.stretches()) == cycles == END
     assert running.digest == undisturbed["digests"][-1]
     assert [lab.status for lab in running.totals.labs] == ["used", "used", "waiting for a person", "used"]
+
+
+def test_stops_within_a_row_of_impossible_readings_change_nothing(
+    design: UnitDesign, new_bench: Any, story: Any, sqlite_url: str, database_url: str
+) -> None:
+    """The gate's count goes on after a restart: single readings, rows of two, a step; each stopped within."""
+    spoilt = replace(story, arrivals=dict(story.arrivals))
+    for cycle, size in ((50, 40.0), (129, 40.0), (130, 40.0), (161, -30.0), (162, -30.0), (163, -30.0)):
+        spoilt.arrivals[cycle] = [
+            replace(item, value=item.value + size) if item.tag == "TI2" else item
+            for item in spoilt.arrivals[cycle]
+        ]
+    asyncio.run(new_bench(design, sqlite_url).run(spoilt, 0, 200))
+    asyncio.run(interrupted(new_bench(design, database_url), spoilt, (50, 51, 130, 131, 162, 163, 164), 200))
+    undisturbed = on_record(sqlite_url, 0, 199)
+    assert_same(on_record(database_url, 0, 199), undisturbed)
+    used = np.frombuffer(undisturbed["used"], dtype=np.int8).reshape(200, 3)
+    assert np.flatnonzero(used[:, 2] == 0).tolist()[:6] == [50, 90, 129, 130, 161, 162]
+    assert used[[131, 163], 2].all()
+
+
+def test_a_checkpoint_of_an_earlier_release_starts_the_unit_afresh_and_one_of_a_later_one_is_refused(
+    design: UnitDesign, new_bench: Any, story: Any, sqlite_url: str
+) -> None:
+    asyncio.run(new_bench(design, sqlite_url).run(story, 0, 100, cut=False))
+    for version in (FORMAT - 1, FORMAT + 1):
+        with open_database(sqlite_url) as database, database.write() as connection:
+            connection.execute(text(f"UPDATE checkpoints SET format_version = {version}"))
+        if version < FORMAT:
+            bench = new_bench(design, sqlite_url)
+            asyncio.run(bench.run(story, 100, 140, cut=False))
+            assert bench.steps[0].results.first == 128
+        else:
+            with pytest.raises(
+                RecordsError, match=f"has format {version}; this release reads format {FORMAT}"
+            ):
+                asyncio.run(new_bench(design, sqlite_url).run(story, 140, 150, cut=False))
 
 
 async def two_revisions(one: Any, other: Any, story: Any, stops: tuple[int, ...] = ()) -> None:
