@@ -263,7 +263,7 @@ def _about_sensors(model: PlantModel, sensors: tuple[SheetLine, ...]) -> list[st
     return lines
 
 
-def _about_gates(spec: UnitSpec, sensors: tuple[SensorReport, ...]) -> list[str]:
+def _about_gates(spec: UnitSpec, sensors: tuple[SheetLine, ...]) -> list[str]:
     """A gate wider than the range lets every reading in range through, wherever in it the prediction lies."""
     lines = []
     for sensor, item in zip(spec.sensors, sensors, strict=True):

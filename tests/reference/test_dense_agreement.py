@@ -211,7 +211,9 @@ def test_the_sd_settles_at_the_stabilising_riccati_solution(name: str) -> None:
     """The steady filter by another algorithm: scipy's ordered QZ solution of the algebraic Riccati equation."""
     spec = published(name)
     sensors = tuple(replace(sensor, gate=100.0) for sensor in spec.sensors)
-    spec = replace(spec, sensors=sensors)  # a tenth of the readings has three times the noise that is supposed here
+    spec = replace(
+        spec, sensors=sensors
+    )  # a tenth of the readings has three times the noise that is supposed here
     model, n = stochastic(spec), len(spec.sensors)
     C, R = model.C[:n], np.diag([item.noise_sd**2 for item in spec.sensors])
     predicted = solve_discrete_are(model.A.T, C.T, model.Q, R)
