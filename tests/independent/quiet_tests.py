@@ -36,7 +36,5 @@ def step(
     """One cycle with readings ``y`` and standardised innovations ``z``; the union of the news."""
     n = len(y)
     fresh, none, events = np.ones(n, dtype=np.int64), np.zeros(n, dtype=np.int64), np.zeros(n, dtype=np.int64)
-    news = one_cycle(
-        design, state, y, np.zeros(1), fresh, doubtful, 0, z, np.ones(n), none, squares, events
-    )
+    news = one_cycle(design, state, y, np.zeros(1), fresh, doubtful, 0, z, np.ones(n), none, squares, events)
     return int(news)

@@ -106,7 +106,7 @@ def test_a_spike_is_one_spike_flag_and_moves_the_estimate_by_nothing(design: Uni
         for name in ("estimate", "sd", "predicted", "innovation_sd", "used"):
             assert getattr(with_spike, name).tobytes() == getattr(without, name).tobytes(), name
         assert with_spike.innovation[AT, i] > 40.0 * with_spike.innovation_sd[AT, i]
-        assert told(with_spike) == [(tag, "spike")]
+        assert [name for name in told(with_spike) if name not in told(quiet)] == [(tag, "spike")]
 
 
 @pytest.mark.parametrize("size", [15.0, 30.0, -30.0, 100.0])
