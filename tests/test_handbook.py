@@ -491,7 +491,7 @@ def test_the_keys_of_the_sheet_in_json_are_described() -> None:
     document = as_document(model_report(unit_design.load_model(reactor_model_path())))
     described = set(table_rows(section(SHEET, "## The JSON document")))
     line, told = document["sensors"][0], document["sensors"][0]["told"][0]
-    assert {"horizons", "mends[]", "prospects[]", "sensors[].told[]"} <= described
+    assert {"horizons", "inputs[]", "mends[]", "prospects[]", "sensors[].told[]"} <= described
     wanted = {f"sensors[].{key}" for key in line if key not in ("shift", "found", "told")}
     wanted |= {f"sensors[].found.{key}" for key in line["found"]}
     assert wanted <= described

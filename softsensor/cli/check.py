@@ -72,6 +72,7 @@ def as_document(report: ModelReport) -> dict[str, Any]:
     for line in lines:
         line["delay"] = None if line["absorbed"] else line["delay"]
         line["shift"]["absorbed"] = line["absorbed"]
+    for line in [*lines, *document["inputs"]]:
         for fault in line["told"]:
             fault["alike"] = dict(fault["alike"])
     document["horizons"] = list(HORIZONS)

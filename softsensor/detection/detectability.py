@@ -17,14 +17,15 @@ from __future__ import annotations
 import math
 from collections.abc import Sequence
 from dataclasses import dataclass
+from typing import NamedTuple
 
 import numpy as np
 from scipy.special import ndtri
 
 from softsensor.detection.first_passage import Course, OneSum, Passage, passage, stretched
-from softsensor.detection.signatures import Shape, SteadyFilter, filter_response
+from softsensor.detection.signatures import Shape
 from softsensor.detection.state_of_tests import TestDesign
-from softsensor.estimation.kernel import Floats, Ints, Kernel
+from softsensor.estimation.kernel import Floats
 
 FOUND = 0.9
 """Probability with which a fault of the printed size is found."""
@@ -32,9 +33,6 @@ HORIZONS = (3600.0, 8 * 3600.0, 24 * 3600.0, 7 * 86400.0)
 """Seconds after the onset."""
 DAY = 86400.0
 
-_FIRST_WINDOW, _LONGEST_WINDOW = 4096, 262_144
-_SETTLED = 1e-4
-"""A signature has settled where its last half changes by no more than this share of its largest value."""
 _EITHER_WAY = 0.02
 """The sum against the fault's direction is looked at where the signature turns round by this share of its largest value."""
 _WIDTH = 2e-3
@@ -47,9 +45,9 @@ _FURTHEST = 6.0
 
 @dataclass(frozen=True, slots=True)
 class Findable:
-    """What a sensor's tests find, per time of HORIZONS: the smallest step (unit) and the slowest ramp (unit per day), None
-    where none that stays within the width of the sensor's range; ``tolerance_within``: seconds within which a step of the
-    sensor's tolerance is found, None where the last of HORIZONS is not enough.
+    """What of an instrument's faults is found, per time of HORIZONS: the smallest step (unit) and the slowest ramp (unit per
+    day), None where none that stays within the width of its range; ``tolerance_within``: seconds within which a step of
+    its tolerance is found, None where the last of HORIZONS is not enough.
     """
 
     steps: tuple[float | None, ...]
@@ -59,7 +57,7 @@ class Findable:
 
 @dataclass(frozen=True, slots=True)
 class Sizes:
-    """Of one sensor, in its unit: its tolerance, and the width of its range, beyond which no fault is looked at."""
+    """Of one instrument, in its unit: its tolerance, and the width of its range, beyond which no fault is looked at."""
 
     tolerance: float
     span: float
@@ -89,34 +87,23 @@ def bank_of(design: TestDesign, sensor: int) -> Bank:
     )
 
 
-def step_signature(kernel: Kernel, steady: SteadyFilter, use: Ints, index: int, cycles: int) -> Floats:
-    """(cycles,) the mean of a sensor's own innovation, in its sd, after a unit step of its bias.
+class Watch(NamedTuple):
+    """One sum, and the courses that a unit step and a ramp of one unit per cycle leave in the innovation it watches."""
 
-    Computed until it has settled, and continued from there at its last value.
-    """
-    window = min(_FIRST_WINDOW, cycles)
-    while True:
-        signal = np.zeros((window, kernel.n_sensors))
-        signal[:, index] = 1.0
-        left: Floats = filter_response(kernel, steady.gains, use, signal)[:, index] / steady.sd[index]
-        tail = left[window // 2 :]
-        if window >= min(cycles, _LONGEST_WINDOW) or np.ptp(tail) <= _SETTLED * np.abs(left).max():
-            break
-        window = min(2 * window, cycles)
-    return np.concatenate((left, np.full(cycles - window, left[-1])))
+    one: Passage
+    step: Course
+    ramp: Course
 
 
 @dataclass(frozen=True, eq=False)
 class Watched:
-    """One sensor's sums, and the courses that a unit step and a ramp of one unit per cycle leave in its innovation.
+    """An instrument and all sums that its fault is to set off.
 
     ``marks``: cycles in each of HORIZONS, though no more than in the false-flag interval: later than that a false flag is
     no rarer than a true one.
     """
 
-    sums: tuple[Passage, ...]
-    step: Course
-    ramp: Course
+    sums: tuple[Watch, ...]
     marks: tuple[int, ...]
     sample_time: float
 
@@ -125,40 +112,44 @@ class Watched:
 
         None where the last of HORIZONS is too short for it.
         """
-        course = self.step if shape == "step" else self.ramp
-        cycles = cycles_until_found(self.sums, course, size, share)
+        cycles = cycles_until_found(self.of(shape), size, share)
         return None if cycles is None else cycles * self.sample_time
 
+    def of(self, shape: Shape) -> list[tuple[Passage, Course]]:
+        """Each sum with the course that a fault of this shape leaves."""
+        return [(watch.one, watch.step if shape == "step" else watch.ramp) for watch in self.sums]
 
-def watched(bank: Bank, signature: Floats, sample_time: float, false_flag_interval: float) -> Watched:
-    """One sensor, ready to be asked.
 
-    :param signature: of a unit step, one value per cycle, up to the last of HORIZONS at least.
+def watched(
+    looking: Sequence[tuple[Bank, Floats]], sample_time: float, false_flag_interval: float
+) -> Watched:
+    """An instrument, ready to be asked.
+
+    :param looking: a sensor's bank, and what a unit step of the instrument's error leaves in that sensor's innovation, in
+        its sd: one value per cycle, up to the last of HORIZONS at least.
     :param sample_time, false_flag_interval: in seconds.
     """
     promised = int(false_flag_interval / sample_time)
     marks = tuple(min(mark, promised) for mark in horizon_cycles(sample_time))
     real = tuple(mark for mark in marks if mark > 0)
-    return Watched(
-        bank.passages(),
-        stretched(signature, real),
-        stretched(np.cumsum(signature), real),
-        marks,
-        sample_time,
-    )
+    sums: list[Watch] = []
+    for bank, signature in looking:
+        step, ramp = stretched(signature, real), stretched(np.cumsum(signature), real)
+        sums += [Watch(one, step, ramp) for one in bank.passages()]
+    return Watched(tuple(sums), marks, sample_time)
 
 
-def findable(sensor: Watched, sizes: Sizes) -> Findable:
-    """The sheet's line of one sensor."""
-    real = tuple(mark for mark in sensor.marks if mark > 0)
-    missing = (None,) * (len(sensor.marks) - len(real))
-    steps = _smallest(sensor.sums, sensor.step, real, [sizes.span for _ in real])
-    ramps = _smallest(sensor.sums, sensor.ramp, real, [sizes.span / mark for mark in real])
-    per_day = DAY / sensor.sample_time
+def findable(instrument: Watched, sizes: Sizes) -> Findable:
+    """The sheet's line of one instrument."""
+    real = tuple(mark for mark in instrument.marks if mark > 0)
+    missing = (None,) * (len(instrument.marks) - len(real))
+    steps = _smallest(instrument.of("step"), real, [sizes.span for _ in real])
+    ramps = _smallest(instrument.of("ramp"), real, [sizes.span / mark for mark in real])
+    per_day = DAY / instrument.sample_time
     return Findable(
         (*missing, *steps),
         (*missing, *(None if size is None else size * per_day for size in ramps)),
-        sensor.seconds_until_found("step", sizes.tolerance),
+        instrument.seconds_until_found("step", sizes.tolerance),
     )
 
 
@@ -172,12 +163,12 @@ def horizon_cycles(sample_time: float) -> tuple[int, ...]:
 
 
 def cycles_until_found(
-    sums: Sequence[Passage], course: Course, size: float, share: float = FOUND
+    sums: Sequence[tuple[Passage, Course]], size: float, share: float = FOUND
 ) -> int | None:
-    """Cycles within which a share of all faults of ``size`` is found; None where the course is not long enough."""
-    last = int(course.ends[-1]) if course.ends.size else 0
+    """Cycles within which a share of all faults of ``size`` is found; None where the courses are not long enough."""
     found = None
-    for one in sums:
+    for one, course in sums:
+        last = int(course.ends[-1]) if course.ends.size else 0
         for side in _sides(course):
             missed = _Search(one, course, last, side).missed(size)
             late = np.flatnonzero(missed <= 1.0 - share + _CLOSE)
@@ -196,14 +187,14 @@ def _sides(course: Course) -> tuple[float, ...]:
 
 
 def _smallest(
-    sums: Sequence[Passage], course: Course, marks: Sequence[int], largest: Sequence[float]
+    sums: Sequence[tuple[Passage, Course]], marks: Sequence[int], largest: Sequence[float]
 ) -> tuple[float | None, ...]:
     """The smallest size found by each of ``marks``; a longer time never needs a larger one."""
     found: list[float | None] = []
     best: float | None = None
     for mark, limit in zip(marks, largest, strict=True):
         best = None if best is None else min(best, limit)
-        for one in sums:
+        for one, course in sums:
             for side in _sides(course):
                 best = _better(_Search(one, course, mark, side), best, limit)
         found.append(best)

@@ -1,4 +1,4 @@
-"""Which explanations cannot be told apart from a fault of a sensor: the diagnosis asked about that fault, many times over.
+"""Which explanations cannot be told apart from an instrument's fault: the diagnosis asked about that fault, many times over.
 
 A fault leaves the whitened means x in the innovations that the diagnosis looks at; noise eps ~ N(0, I) is added to them. Of
 each explanation, with signature v begun a cycles ago, the diagnosis takes N = v'(x + eps) and D = v'v, from these its
@@ -28,6 +28,7 @@ from scipy.special import logsumexp
 from softsensor.detection.diagnosis import NAMING_RATIO, onset_ages
 from softsensor.detection.follow_up import PATIENCE, DetectionDesign
 from softsensor.detection.signatures import Hypothesis, Shape, signatures
+from softsensor.detection.step_signatures import Instrument
 from softsensor.estimation.kernel import Floats, Ints
 
 DRAWS = 200
@@ -40,12 +41,12 @@ NOTHING = "nothing"
 
 
 @dataclass(frozen=True, slots=True)
-class SensorFault:
-    """A fault to be told apart: ``size`` in the sensor's unit, for a ramp per cycle; ``age``: cycles since its onset when a
-    test goes up.
+class InstrumentFault:
+    """A fault to be told apart: ``size`` in the instrument's unit, for a ramp per cycle; ``age``: cycles since its onset
+    when a test goes up.
     """
 
-    index: int
+    instrument: tuple[Instrument, int]
     shape: Shape
     size: float
     age: int
@@ -53,8 +54,8 @@ class SensorFault:
 
 @dataclass(frozen=True, slots=True)
 class Isolation:
-    """``named``: probability that the sensor is named, and alone; ``alike``: what it cannot be told apart from
-    (instruments, disturbances, nothing at all), with the share of draws in which it stands beside the sensor or in its
+    """``named``: probability that the instrument is named, and alone; ``alike``: what it cannot be told apart from
+    (instruments, disturbances, nothing at all), with the share of draws in which it stands beside it or in its
     place, the largest first.
     """
 
@@ -70,12 +71,14 @@ class Diagnostician:
         self._use = np.ones(design.kernel.n_sensors, dtype=np.int64)
         self._steady, self._table = design.table(self._use)
         self._ages = onset_ages(design.window)
-        self._known: dict[tuple[int, Shape, int], Floats] = {}
+        self._known: dict[tuple[tuple[Instrument, int], Shape, int], Floats] = {}
         self.names = (*dict.fromkeys(suspect.name for suspect in design.suspects), NOTHING)
 
-    def ask(self, fault: SensorFault) -> Isolation:
-        """How often is the fault's sensor named alone, and what stands beside it otherwise?"""
-        tag = self._design.model.spec.sensors[fault.index].tag
+    def ask(self, fault: InstrumentFault) -> Isolation:
+        """How often is the fault's instrument named alone, and what stands beside it otherwise?"""
+        source, index = fault.instrument
+        spec = self._design.model.spec
+        tag = spec.sensors[index].tag if source == "sensor" else spec.inputs[index].tag
         told = np.zeros((DRAWS, len(self.names)), dtype=bool)
         waiting = np.ones(DRAWS, dtype=bool)
         for look in range(len(LOOKS)):
@@ -100,7 +103,7 @@ class Diagnostician:
         ]
         return Isolation(float(np.mean(told[:, own] & (told.sum(axis=1) == 1))), tuple(alike))
 
-    def log_weights(self, fault: SensorFault, look: int) -> Floats:
+    def log_weights(self, fault: InstrumentFault, look: int) -> Floats:
         """(draws, names) at one of LOOKS the log of what each name's probability is in proportion to."""
         energy, noise = self._noise
         scored = noise[look] + projections(self._table, self._means(fault, LOOKS[look]), self._ages)
@@ -133,7 +136,7 @@ class Diagnostician:
         energies = np.cumsum(np.sum(self._table**2, axis=2), axis=1)[:, self._ages - 1]
         return energies, drawn
 
-    def _means(self, fault: SensorFault, look: int) -> Floats:
+    def _means(self, fault: InstrumentFault, look: int) -> Floats:
         """(window, n_sensors) what the fault leaves in the whitened innovations, newest last; zero before its onset."""
         left = self._courses(fault)[: fault.age + look]
         rows = np.zeros((self._design.window, left.shape[1]))
@@ -141,11 +144,11 @@ class Diagnostician:
         rows[self._design.window - len(seen) :] = fault.size * seen
         return rows
 
-    def _courses(self, fault: SensorFault) -> Floats:
+    def _courses(self, fault: InstrumentFault) -> Floats:
         """(cycles, n_sensors) whitened signature of a unit fault, up to the last look."""
-        key = (fault.index, fault.shape, fault.age)
+        key = (fault.instrument, fault.shape, fault.age)
         if key not in self._known:
-            design, truth = self._design, Hypothesis("sensor", fault.index, "", fault.shape, 1.0)
+            design, truth = self._design, Hypothesis(*fault.instrument, "", fault.shape, 1.0)
             cycles = fault.age + LOOKS[-1]
             found = signatures(design.model, design.kernel, (truth,), self._steady, self._use, cycles)
             self._known[key] = found[0]

@@ -1,4 +1,4 @@
-"""The detectability sheet of a unit: per sensor what its own tests find, and what a fault so found is taken for."""
+"""The detectability sheet of a unit: which faults of which instrument are found, and what they are taken for."""
 
 from __future__ import annotations
 
@@ -6,6 +6,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from plant_models.units import difference_unit
 from softsensor.detection.absorption import SensorShift, is_absorbed, sensor_shifts
 from softsensor.detection.detectability import (
     DAY,
@@ -16,13 +17,14 @@ from softsensor.detection.detectability import (
     bank_of,
     findable,
     horizon_cycles,
-    step_signature,
     watched,
 )
 from softsensor.detection.follow_up import DetectionDesign
-from softsensor.detection.isolability import Diagnostician, Isolation, SensorFault
+from softsensor.detection.isolability import Diagnostician, InstrumentFault, Isolation
 from softsensor.detection.run_length import average_run_length
 from softsensor.detection.signatures import Shape
+from softsensor.detection.step_signatures import Instrument, step_signatures
+from softsensor.estimation.kernel import Floats
 
 NAMED = 0.9
 """A fault whose sensor is named alone less often than this has something that it cannot be told apart from."""
@@ -32,8 +34,8 @@ _DAY_PLACE = 2
 
 @dataclass(frozen=True, slots=True)
 class FaultTold:
-    """A fault of a sensor as the diagnosis sees it: ``size`` in the sensor's unit, a ramp's per day; ``within``: seconds in
-    which 90 % of them are found. ``named``: probability that the diagnosis names the sensor, and alone, where the test
+    """An instrument's fault as the diagnosis sees it: ``size`` in the instrument's unit, a ramp's per day; ``within``:
+    seconds in which 90 % of them are found. ``named``: probability that the diagnosis names it, and alone, where the test
     goes up after the time in which half of them are found; ``alike``: what it cannot be told apart from then.
     """
 
@@ -68,24 +70,46 @@ class SheetLine:
         return 2 - sum(fault.named >= NAMED for fault in self.told)
 
 
-def detectability_sheet(design: DetectionDesign) -> tuple[SheetLine, ...]:
-    """Every sensor of a unit, all of them in use.
+@dataclass(frozen=True, slots=True)
+class InputLine:
+    """The instrument of one input, whose error shows in the sensors alone: any sensor's sums may find it.
+
+    ``plausible``: an error that the diagnosis thinks likely, a tenth of the working range; it stands for the tolerance.
+    """
+
+    tag: str
+    unit: str
+    plausible: float
+    found: Findable
+    told: tuple[FaultTold, ...]
+
+
+@dataclass(frozen=True, slots=True)
+class Sheet:
+    """Of a whole unit."""
+
+    sensors: tuple[SheetLine, ...]
+    inputs: tuple[InputLine, ...]
+
+
+def detectability_sheet(design: DetectionDesign) -> Sheet:
+    """Every sensor and every input's instrument of a unit, all sensors in use.
 
     :raises RealisationError: the filter does not settle.
     """
     asked = Diagnostician(design)
-    return tuple(sheet_line(design, asked, i, shift) for i, shift in enumerate(sensor_shifts(design.model)))
+    return Sheet(
+        tuple(sheet_line(design, asked, i, shift) for i, shift in enumerate(sensor_shifts(design.model))),
+        tuple(_input_line(design, asked, i) for i in range(len(design.model.spec.inputs))),
+    )
 
 
 def sheet_line(design: DetectionDesign, asked: Diagnostician, index: int, shift: SensorShift) -> SheetLine:
-    """One sensor of a unit."""
+    """One sensor of a unit, found by its own sums."""
     spec = design.model.spec
     sensor, bank = spec.sensors[index], bank_of(design.tests, index)
-    use = np.ones(design.kernel.n_sensors, dtype=np.int64)
-    steady, _ = design.table(use)
-    cycles = max(1, *horizon_cycles(spec.sample_time))
-    signature = step_signature(design.kernel, steady, use, index, cycles)
-    tests = watched(bank, signature, spec.sample_time, spec.false_flag_interval)
+    signature = _signatures(design, ("sensor", index))[:, index]
+    tests = watched([(bank, signature)], spec.sample_time, spec.false_flag_interval)
     found = findable(tests, Sizes(sensor.tolerance, sensor.range[1] - sensor.range[0]))
     delay = _delay(bank, shift.settled) * spec.sample_time
     return SheetLine(
@@ -95,8 +119,34 @@ def sheet_line(design: DetectionDesign, asked: Diagnostician, index: int, shift:
         found,
         delay,
         is_absorbed(delay, spec.false_flag_interval),
-        _told(asked, index, tests, _worth_asking(found, sensor.tolerance)),
+        _told(asked, ("sensor", index), tests, _worth_asking(found, sensor.tolerance)),
     )
+
+
+def _input_line(design: DetectionDesign, asked: Diagnostician, index: int) -> InputLine:
+    spec = design.model.spec
+    item, signatures = spec.inputs[index], _signatures(design, ("input", index))
+    looking = [
+        (bank_of(design.tests, j), signatures[:, j])
+        for j in range(len(spec.sensors))
+        if np.any(signatures[:, j] != 0.0)
+    ]
+    tests = watched(looking, spec.sample_time, spec.false_flag_interval)
+    plausible = next(
+        suspect.prior_sd
+        for suspect in design.suspects
+        if (suspect.source, suspect.index, suspect.shape) == ("input", index, "step")
+    )
+    found = findable(tests, Sizes(plausible, item.range[1] - item.range[0]))
+    told = _told(asked, ("input", index), tests, _worth_asking(found, plausible))
+    return InputLine(item.tag, difference_unit(item.unit), plausible, found, told)
+
+
+def _signatures(design: DetectionDesign, instrument: tuple[Instrument, int]) -> Floats:
+    use = np.ones(design.kernel.n_sensors, dtype=np.int64)
+    steady, _ = design.table(use)
+    cycles = max(1, *horizon_cycles(design.model.spec.sample_time))
+    return step_signatures(design.model, design.kernel, steady, use, instrument, cycles)
 
 
 def _delay(bank: Bank, shift: float) -> float:
@@ -125,7 +175,10 @@ def _of_a_day(sizes: tuple[float | None, ...]) -> float | None:
 
 
 def _told(
-    asked: Diagnostician, index: int, tests: Watched, faults: list[tuple[Shape, float]]
+    asked: Diagnostician,
+    instrument: tuple[Instrument, int],
+    tests: Watched,
+    faults: list[tuple[Shape, float]],
 ) -> tuple[FaultTold, ...]:
     told = []
     for shape, size in faults:
@@ -135,6 +188,6 @@ def _told(
         if within is None or usual is None:
             continue
         age = round(usual / tests.sample_time)
-        answer: Isolation = asked.ask(SensorFault(index, shape, of_cycle, age))
+        answer: Isolation = asked.ask(InstrumentFault(instrument, shape, of_cycle, age))
         told.append(FaultTold(shape, size, within, answer.named, answer.alike))
     return tuple(told)

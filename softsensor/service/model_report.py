@@ -14,7 +14,7 @@ from plant_models.specification import PathSpec, UnitSpec
 from plant_models.transfer_function import dc_gain, is_integrating, poles, ramp_gain, zeros
 from plant_models.units import difference_unit
 from softsensor.detection.absorption import LATEST_FLAG
-from softsensor.detection.sheet import SheetLine, detectability_sheet
+from softsensor.detection.sheet import InputLine, SheetLine, detectability_sheet
 from softsensor.estimation.observability import (
     LEAST_GAIN,
     DisturbanceKnowledge,
@@ -99,6 +99,7 @@ class ModelReport:
     estimates: tuple[EstimateKnowledge, ...]
     prospects: tuple[Prospects, ...]
     sensors: tuple[SheetLine, ...]
+    inputs: tuple[InputLine, ...]
     mends: tuple[Mend, ...]
     warnings: tuple[str, ...]
 
@@ -118,7 +119,8 @@ def model_report(model: PlantModel, lab_interval: float = LAB_INTERVAL) -> Model
     paths = tuple(_path(path, spec) for path in spec.paths)
     sampling = _sampling(paths, spec.sample_time)
     disturbances, estimates = disturbance_knowledge(model), estimate_knowledge(model)
-    sensors = detectability_sheet(design_unit(model).detection)
+    sheet = detectability_sheet(design_unit(model).detection)
+    sensors = sheet.sensors
     return ModelReport(
         spec.name,
         spec.title,
@@ -131,6 +133,7 @@ def model_report(model: PlantModel, lab_interval: float = LAB_INTERVAL) -> Model
         estimates,
         prospects(model, lab_interval),
         sensors,
+        sheet.inputs,
         mends(model, sensors),
         (
             *_about_sampling(sampling),

@@ -15,7 +15,7 @@ SPOKEN = tuple(duration_text(horizon).replace("1 d", "24 h") for horizon in HORI
 
 def sheet_tables(report: ModelReport) -> tuple[ReportTable, ...]:
     """What is left of a bias, what is found, what it is taken for, and what would mend that."""
-    tables = [_shifts(report), _found(report), _told(report)]
+    tables = [_shifts(report), _found(report), _inputs(report), _told(report)]
     if report.mends:
         tables.append(_mends(report))
     return tuple(tables)
@@ -89,6 +89,24 @@ def _found(report: ModelReport) -> ReportTable:
     return ReportTable("Smallest step and slowest drift found within", columns, rows, tuple(notes))
 
 
+def _inputs(report: ModelReport) -> ReportTable:
+    rows = tuple(
+        (
+            line.tag,
+            line.unit,
+            *("none" if size is None else f"{size:.3g}" for size in line.found.steps),
+            f"{line.unit}/d",
+            *("none" if size is None else f"{size:.3g}" for size in line.found.ramps),
+        )
+        for line in report.inputs
+    )
+    notes = (
+        "An input's own instrument shows in the sensors that the input moves: any sum of any sensor finds it.",
+    )
+    columns = ("input", "step, in", *SPOKEN, "drift, in", *SPOKEN)
+    return ReportTable("The same for the instrument of each input", columns, rows, notes)
+
+
 def _size(size: float | None, line: SheetLine) -> str:
     if size is not None:
         return f"{size:.3g}"
@@ -96,29 +114,25 @@ def _size(size: float | None, line: SheetLine) -> str:
 
 
 def _told(report: ModelReport) -> ReportTable:
+    of_each = [(line.shift.tag, line.shift.unit, line.told) for line in report.sensors]
+    of_each += [(line.tag, line.unit, line.told) for line in report.inputs]
     rows = tuple(
-        (
-            line.shift.tag,
-            _fault(fault, line),
-            duration_text(fault.within),
-            _percent(fault.named),
-            _alike(fault),
-        )
-        for line in report.sensors
-        for fault in line.told
+        (tag, _fault(fault, unit), duration_text(fault.within), _percent(fault.named), _alike(fault))
+        for tag, unit, told in of_each
+        for fault in told
     )
     notes = (
-        "After a test went up, with the noise drawn many times: how often does the diagnosis name the sensor, and it alone? "
-        "Otherwise these stand beside it or in its place (share of cases; nothing: no fault at all).",
+        "After a test went up, with the noise drawn many times: how often does the diagnosis name the instrument, and no "
+        "other? Else these stand beside it or in its place (share of cases; nothing: no fault at all).",
     )
-    columns = ("sensor", "fault", "found within", "named alone", "cannot be told apart from")
+    columns = ("instrument", "fault", "found within", "named alone", "cannot be told apart from")
     return ReportTable("What a fault is taken for", columns, rows, notes)
 
 
-def _fault(fault: FaultTold, line: SheetLine) -> str:
+def _fault(fault: FaultTold, unit: str) -> str:
     if fault.shape == "step":
-        return f"step of {fault.size:.3g} {line.shift.unit}"
-    return f"drift of {fault.size:.3g} {line.shift.unit}/d"
+        return f"step of {fault.size:.3g} {unit}"
+    return f"drift of {fault.size:.3g} {unit}/d"
 
 
 def _alike(fault: FaultTold) -> str:
@@ -140,7 +154,7 @@ def _mend(mend: Mend) -> tuple[str, ...]:
     if mend.beside is None or line is None:
         return (mend.tag, "none of them", "", "", "no second instrument makes it better")
     left = "; ".join(
-        f"{_fault(fault, line)}: named alone {_percent(fault.named)}, else {_alike(fault)}"
+        f"{_fault(fault, line.shift.unit)}: named alone {_percent(fault.named)}, else {_alike(fault)}"
         for fault in line.told
         if fault.named < NAMED
     )

@@ -19,11 +19,11 @@ from softsensor.detection.detectability import (
     Sizes,
     findable,
     horizon_cycles,
-    step_signature,
     watched,
 )
 from softsensor.detection.run_length import decision_interval
 from softsensor.detection.signatures import filter_response, steady_filter
+from softsensor.detection.step_signatures import step_signatures
 from softsensor.estimation.kernel import build_kernel
 from softsensor.unit_design import load_model
 
@@ -48,7 +48,7 @@ def line(
     sample_time: float = MINUTE,
     promised: float = 30 * DAY,
 ) -> Findable:
-    return findable(watched(watching, signature, sample_time, promised), Sizes(0.4, span))
+    return findable(watched([(watching, signature)], sample_time, promised), Sizes(0.4, span))
 
 
 @pytest.mark.parametrize("settled", [0.5, 0.02], ids=["stays", "absorbed"])
@@ -128,4 +128,13 @@ def test_the_signature_is_continued_where_it_has_settled() -> None:
     signal = np.zeros((20_000, kernel.n_sensors))
     signal[:, 0] = 1.0
     whole = filter_response(kernel, steady.gains, use, signal)[:, 0] / steady.sd[0]
-    np.testing.assert_allclose(step_signature(kernel, steady, use, 0, 20_000), whole, rtol=2e-3)
+    found = step_signatures(model, kernel, steady, use, ("sensor", 0), 20_000)
+    np.testing.assert_allclose(found[:, 0], whole, rtol=2e-3)
+
+
+def test_what_two_sensors_watch_is_found_by_the_better_one() -> None:
+    weak, strong = 0.2 * fading(10_080, 0.3), fading(10_080, 0.3)
+    both = findable(watched([(bank(), -weak), (bank(), -strong)], MINUTE, 30 * DAY), Sizes(0.4, 1e6))
+    alone = line(strong, bank())
+    assert both.steps == pytest.approx(alone.steps, rel=0.01)
+    assert both.ramps == pytest.approx(alone.ramps, rel=0.01)

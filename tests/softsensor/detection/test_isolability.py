@@ -10,7 +10,7 @@ import pytest
 
 from softsensor.detection.diagnosis import judge, likelihoods, onset_ages
 from softsensor.detection.follow_up import PATIENCE
-from softsensor.detection.isolability import DRAWS, LOOKS, SEED, Diagnostician, SensorFault
+from softsensor.detection.isolability import DRAWS, LOOKS, SEED, Diagnostician, InstrumentFault
 from softsensor.unit_design import design_unit, load_model
 
 LIBRARY = Path(str(files("plant_models.library")))
@@ -19,7 +19,7 @@ LIBRARY = Path(str(files("plant_models.library")))
 def test_it_is_the_diagnosis_that_is_asked() -> None:
     """Probabilities of the first draws, from the diagnosis's own functions on innovations made from the same noise."""
     design = design_unit(load_model(LIBRARY / "heavy_oil_fractionator.toml")).detection
-    fault = SensorFault(0, "step", 0.03, 125)
+    fault = InstrumentFault(("sensor", 0), "step", 0.03, 125)
     look = 3
     logs = Diagnostician(design).log_weights(fault, look)
     assert logs.shape[0] == DRAWS
@@ -51,21 +51,21 @@ def test_it_is_the_diagnosis_that_is_asked() -> None:
 
 def test_a_large_fault_among_five_thermometers_is_named() -> None:
     asking = Diagnostician(design_unit(load_model(LIBRARY / "heavy_oil_fractionator.toml")).detection)
-    answer = asking.ask(SensorFault(2, "step", 0.1, 100))
+    answer = asking.ask(InstrumentFault(("sensor", 2), "step", 0.1, 100))
     assert answer.named > 0.99
     assert answer.alike == ()
-    assert asking.ask(SensorFault(2, "step", 0.1, 100)) == answer
+    assert asking.ask(InstrumentFault(("sensor", 2), "step", 0.1, 100)) == answer
 
 
 def test_a_drift_of_the_only_sensor_cannot_be_told_from_what_else_drives_it() -> None:
     asking = Diagnostician(design_unit(load_model(LIBRARY / "wood_berry.toml")).detection)
-    answer = asking.ask(SensorFault(0, "ramp", 1.4 / 1440.0, 1300))
+    answer = asking.ask(InstrumentFault(("sensor", 0), "ramp", 1.4 / 1440.0, 1300))
     assert answer.named < 0.05
     assert {"FI4101", "FI4102"} <= {name for name, _ in answer.alike}
 
 
 def test_a_fault_of_nothing_is_taken_for_nothing() -> None:
     asking = Diagnostician(design_unit(load_model(LIBRARY / "wood_berry.toml")).detection)
-    answer = asking.ask(SensorFault(0, "ramp", 0.0, 3000))
+    answer = asking.ask(InstrumentFault(("sensor", 0), "ramp", 0.0, 3000))
     assert answer.named == 0.0
     assert dict(answer.alike)["nothing"] > 0.5

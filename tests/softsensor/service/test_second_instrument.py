@@ -33,7 +33,7 @@ def test_the_second_instrument_reads_what_the_first_reads() -> None:
 
 def test_beside_the_only_sensor_the_fault_is_found_but_not_which_of_the_two() -> None:
     model = load_model(LIBRARY / "wood_berry.toml")
-    lines = detectability_sheet(design_unit(model).detection)
+    lines = detectability_sheet(design_unit(model).detection).sensors
     assert lines[0].absorbed
     (mend,) = mends(model, lines)
     assert (mend.tag, mend.beside, mend.whole) == ("AI4101", "AI4101", False)
@@ -45,7 +45,7 @@ def test_beside_the_only_sensor_the_fault_is_found_but_not_which_of_the_two() ->
 
 def test_a_second_jacket_thermometer_mends_the_reactor() -> None:
     model = load_model(reactor_model_path())
-    lines = detectability_sheet(design_unit(model).detection)
+    lines = detectability_sheet(design_unit(model).detection).sensors
     assert [line.absorbed for line in lines] == [False, False, True]
     (mend,) = mends(model, lines)
     assert (mend.tag, mend.beside) == ("TI2102", "TI2102")
@@ -55,4 +55,4 @@ def test_a_second_jacket_thermometer_mends_the_reactor() -> None:
 
 def test_where_nothing_ails_nothing_is_added() -> None:
     model = load_model(LIBRARY / "heavy_oil_fractionator.toml")
-    assert mends(model, detectability_sheet(design_unit(model).detection)) == ()
+    assert mends(model, detectability_sheet(design_unit(model).detection).sensors) == ()
