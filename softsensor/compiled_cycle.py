@@ -7,6 +7,7 @@ from typing import NamedTuple
 import numpy as np
 from numba import njit
 
+from softsensor.detection.conformance import Evidence, Standing, follow_conformance
 from softsensor.detection.fault_tests import test_cycle
 from softsensor.detection.shift_tests import highest_share
 from softsensor.detection.state_of_tests import TestDesign, TestState
@@ -60,6 +61,8 @@ class BlockOutputs(NamedTuple):
     """(N,) 1 while the tests rest because inputs are or were missing."""
     news: Ints
     """(N,) Union of all news of a cycle."""
+    beyond: Floats
+    """(N, n_sensors) Probability of a bias beyond the tolerance."""
     squares: Floats
     """(N,) Sum of squares of the whitened innovations; a sensor without a reading in use counts as its expectation, 1."""
     lab_predicted: Floats
@@ -81,6 +84,7 @@ def empty_outputs(cycles: int, kernel: Kernel, labs: int) -> BlockOutputs:
         np.zeros(sensors, dtype=np.int64),
         np.zeros(cycles, dtype=np.int64),
         np.zeros(cycles, dtype=np.int64),
+        np.zeros(sensors),
         np.zeros(cycles),
         np.full(labs, np.nan),
         np.full(labs, np.nan),
@@ -173,6 +177,7 @@ def run_block(
     est: EstimatorState,
     design: TestDesign,
     tests: TestState,
+    known: Standing,
     data: BlockInputs,
     out: BlockOutputs,
     testing: bool,
@@ -188,6 +193,7 @@ def run_block(
     work, moves = np.zeros(len(kernel.steady) + 1), np.zeros(kernel.n_inputs)
     kept_out = np.zeros(kernel.n_sensors, dtype=np.int64)
     lab, cycles = 0, len(data.u)
+    evidence = Evidence(tests.block, tests.onset, tests.onset_n, tests.onset_d, tests.beyond)
     for k in range(len(data.u)):
         accept_inputs(kernel, est, data.u[k])
         input_driven_outputs(kernel, est, base)
@@ -220,7 +226,12 @@ def run_block(
             )
             out.news[k] = news
             out.settling[k] = 1 if tests.cycle[0] <= tests.settling_until[0] else 0
+            resting = data.quiet[k] != 0 or out.settling[k] != 0
+            follow_conformance(
+                known, evidence, out.innovation[k], tests.cycle[0] - 1, tests.valid_from[0], resting
+            )
             for i in range(kernel.n_sensors):
+                out.beyond[k, i] = tests.beyond[i]
                 out.high[k, i] = highest_share(tests.high[i], design.interval[i])
                 out.low[k, i] = highest_share(tests.low[i], design.interval[i])
             if news != 0:

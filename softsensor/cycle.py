@@ -18,7 +18,7 @@ from plant_models.errors import Problem
 from plant_models.plant_model import PlantModel
 from softsensor.compiled_cycle import BlockInputs, BlockOutputs, empty_outputs, run_block
 from softsensor.detection.flags import Flag, FlagBook, Note, RestSpell
-from softsensor.detection.follow_up import DetectionDesign, FollowUp, Moment, follow_up
+from softsensor.detection.follow_up import DetectionDesign, FollowUp, Moment, follow_up, sensors_in_use
 from softsensor.detection.people import Decision, Taken, ended, next_end, take
 from softsensor.detection.plant_states import StateChange, change_state
 from softsensor.detection.state_of_tests import TestState, initial_tests
@@ -135,6 +135,8 @@ class CycleResults:
     """(N,) 1 while inputs are missing, and for a while after: the tests rest and the estimates are Uncertain."""
     high: Floats
     low: Floats
+    beyond: Floats
+    """(N, n_sensors) Probability that a sensor's bias lies beyond its tolerance."""
     lab_predicted: Floats
     lab_sd: Floats
     flags: tuple[Flag, ...] = ()
@@ -149,7 +151,7 @@ class CycleResults:
 
 ROW_FIELDS = (
     "times", "reading", "estimate", "sd", "status", "predicted", "innovation", "innovation_sd", "used", "left_out",
-    "doubts", "settling", "high", "low",
+    "doubts", "settling", "high", "low", "beyond",
 )  # fmt: skip
 
 
@@ -172,7 +174,9 @@ def join_results(parts: Sequence[CycleResults]) -> CycleResults:
 def unit_tests(design: UnitDesign, window: int) -> TestState:
     """The tests of a unit before its first cycle."""
     kernel, bank = design.kernel, design.detection.tests.reference
-    return initial_tests(kernel.n_sensors, bank.shape[1], kernel.n_inputs, window)
+    return initial_tests(
+        kernel.n_sensors, bank.shape[1], kernel.n_inputs, window, len(design.detection.suspects)
+    )
 
 
 def start(design: UnitDesign, first_cycle: int = 0) -> CycleState:
@@ -240,7 +244,8 @@ def run_cycles(
     data = block_inputs(design, begun.book, first, readings, labs)
     data = data._replace(u=data.u[:n])
     out = empty_outputs(n, design.kernel, len(labs))
-    done = run_block(design.kernel, estimator, design.detection.tests, tests, data, out, True)
+    known = design.detection.standing(sensors_in_use(design.detection, begun.book, tests, first))
+    done = run_block(design.kernel, estimator, design.detection.tests, tests, known, data, out, True)
     if done < 0:
         raise UnsoundArithmetic(
             f"{design.model.spec.name}: an innovation's variance is not positive near cycle {first}"
@@ -319,7 +324,8 @@ def rerun(
     data = block_inputs(design, book, first, readings, labs)
     out = empty_outputs(len(readings), design.kernel, len(labs))
     unused = unit_tests(design, 1)
-    done = run_block(design.kernel, estimator, design.detection.tests, unused, data, out, False)
+    known = design.detection.standing(np.ones(design.kernel.n_sensors, dtype=np.int64))
+    done = run_block(design.kernel, estimator, design.detection.tests, unused, known, data, out, False)
     if done < 0:
         raise UnsoundArithmetic(
             f"{design.model.spec.name}: an innovation's variance is not positive near cycle {first}"
@@ -354,6 +360,7 @@ def _results(
         out.settling[:done].astype(np.int8),
         out.high[:done],
         out.low[:done],
+        out.beyond[:done],
         out.lab_predicted[in_block],
         out.lab_sd[in_block],
     )
@@ -403,6 +410,7 @@ def result_rows(results: CycleResults) -> list[bytes]:
         results.used,
         results.high,
         results.low,
+        results.beyond,
     ]
     table = np.concatenate(
         [np.ascontiguousarray(part).view(np.uint8).reshape(len(results), -1) for part in parts], axis=1

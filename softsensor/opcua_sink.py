@@ -51,7 +51,9 @@ class OpcUaSink:
         book = unit.run.state.book
         for i, tag in enumerate(unit.model.sensor_tags):
             health = DeviceHealth(sensor_health(book, tag, book.worked_on(i, results.first)).code)
-            await self._publisher.publish_sensor_health(unit.name, tag, health, now)
+            await self._publisher.publish_sensor_health(
+                unit.name, tag, health, now, float(results.beyond[0, i])
+            )
         for flag in results.flags:
             if flag.cleared is None:
                 await self._raise(unit.name, flag)

@@ -27,9 +27,11 @@ from softsensor.service.assembly import assemble_blocks, history_cycles, rules_o
 from softsensor.service.plant_state import StateRule, recorded_changes
 from softsensor.service.replay import Replay, gathered, horizon_of, parts_of
 from softsensor.service.result_tables import (
+    CONFORMANCE_COLUMNS,
     ESTIMATE_COLUMNS,
     INNOVATION_COLUMNS,
     SMOOTHED_COLUMNS,
+    conformance_table,
     estimate_table,
     flag_table,
     innovation_table,
@@ -53,6 +55,8 @@ class ReplayResult:
     flags: pd.DataFrame
     lab_results: pd.DataFrame
     summary: dict[str, Any]
+    conformance: pd.DataFrame
+    """The probability that each sensor's bias lies beyond its tolerance, from time to time."""
     smoothed: pd.DataFrame | None = None
     """The estimates once more, each given all readings of the period; None where they were not asked for."""
 
@@ -134,12 +138,13 @@ def replay(
     results = lab_from_frame(lab, lab_tags(model), timezone) if lab is not None else None
     running, notes = prepare(model, recorded, results, fitted)
     running.totals.notes += notes
-    estimates, innovations = [], []
+    estimates, innovations, conformance = [], [], []
     with SmoothedRun(running.design) as smoothing:
         stretches = smoothing.keeping(running.stretches()) if smooth else running.stretches()
         for stretch in gathered(stretches):
             estimates.append(estimate_table(running.design, stretch.readings, stretch.results))
             innovations.append(innovation_table(running.design, stretch.results))
+            conformance.append(conformance_table(running.design, stretch.results))
         if not estimates:
             raise ReplayError(
                 "history: no cycle lies within it; expected at least one row at or after a cycle"
@@ -152,6 +157,7 @@ def replay(
         flag_table(list(running.totals.flags.values())),
         lab_table(running.totals.labs),
         running.totals.as_dict(running.digest),
+        _joined(conformance, CONFORMANCE_COLUMNS),
         _joined(smoothed, SMOOTHED_COLUMNS) if smooth else None,
     )
 

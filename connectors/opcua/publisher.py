@@ -36,6 +36,7 @@ from connectors.opcua.conversion import to_datetime
 from connectors.opcua.hosting import OPEN, ServerAccess, make_server, start_server, stop_server
 
 NAMESPACE_URI = "urn:softsensor"
+BEYOND = "ProbabilityBeyondTolerance"
 _INTERVAL_PROPERTIES = ("StandardDeviation", "Lower95", "Upper95")
 
 
@@ -139,11 +140,15 @@ class Publisher:
             await self._write(self._nodes[unit, tag, name], _number(number), time, status)
         await self._write(self._nodes[unit, tag, ""], _number(value), time, status)
 
-    async def publish_sensor_health(self, unit: str, tag: str, health: int, time: int) -> None:
+    async def publish_sensor_health(
+        self, unit: str, tag: str, health: int, time: int, beyond: float = math.nan
+    ) -> None:
         """Put out one sensor's health.
 
         :param health: a :class:`DeviceHealth`, or its number.
+        :param beyond: the probability that its bias lies beyond its tolerance.
         """
+        await self._write(self._nodes[unit, tag, "beyond"], _number(beyond), time, 0)
         content = ua.Variant(int(DeviceHealth(health)), ua.VariantType.Int32)
         await self._write(self._nodes[unit, tag, "health"], content, time, 0)
 
@@ -182,8 +187,13 @@ class Publisher:
         self._nodes[unit.name, "", "flags"] = flags
         sensors = await add_folder(server, top, index, f"{unit.name}.Sensors", "Sensors")
         for tag in unit.sensors:
-            self._nodes[unit.name, tag, "health"] = await add_enumerated_variable(
-                server, sensors, ua.NodeId(f"{unit.name}.Sensors.{tag}", index), tag, health_type
+            identifier = f"{unit.name}.Sensors.{tag}"
+            node = await add_enumerated_variable(
+                server, sensors, ua.NodeId(identifier, index), tag, health_type
+            )
+            self._nodes[unit.name, tag, "health"] = node
+            self._nodes[unit.name, tag, "beyond"] = await add_number_property(
+                server, node, index, f"{identifier}.{BEYOND}", BEYOND
             )
 
     async def _write(self, node: ua.NodeId, content: ua.Variant, time: int, status: int) -> None:

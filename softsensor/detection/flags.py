@@ -63,6 +63,8 @@ class Episode:
     """Cycle at which the first test went up."""
     noted: bool = False
     """The cause is on record as no fault of an instrument."""
+    weighed: int = -1
+    """Cycle at which gains of transfer functions were last weighed; -1: not yet."""
 
 
 @dataclass(frozen=True, slots=True)

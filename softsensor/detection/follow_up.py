@@ -3,11 +3,13 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, field, replace
+from zlib import crc32
 
 import numpy as np
 
 from plant_models.plant_model import PlantModel
 from softsensor.detection import state_of_tests as told
+from softsensor.detection.conformance import Standing, standing
 from softsensor.detection.diagnosis import (
     NAMING_RATIO,
     Likelihoods,
@@ -29,7 +31,8 @@ LASTING: tuple[Kind, ...] = (*SHIFT_KINDS, "model")
 EXPLAINING: tuple[Kind, ...] = (*LASTING, "stuck", "noisy")
 """While such a fault is open on an instrument in use, it explains what other tests say."""
 PATIENCE = 60
-"""Cycles for which a name is waited for before a group is flagged."""
+"""Cycles for which a name is waited for before a group is flagged, and between two times that gains are weighed; units take
+their turns within it, so that a hundred of them do not all weigh in the same second."""
 QUIET = 360
 """Cycles without another spike, or with the sums down, after which a spike's or a shift's flag clears: a fault that comes
 and goes, or that the filter half follows, stays one flag."""
@@ -52,6 +55,7 @@ class DetectionDesign:
     settled_after: int = 0
     """Cycles from the start before the filter is the settled one that signatures suppose."""
     tables: dict[tuple[int, ...], tuple[SteadyFilter, Floats]] = field(default_factory=dict, repr=False)
+    standings: dict[tuple[int, ...], Standing] = field(default_factory=dict, repr=False)
 
     def table(self, use: Ints) -> tuple[SteadyFilter, Floats]:
         """Settled filter and whitened signatures with these sensors in use."""
@@ -63,6 +67,18 @@ class DetectionDesign:
                 signatures(self.model, self.kernel, self.suspects, steady, use, self.window),
             )
         return self.tables[key]
+
+    def standing(self, use: Ints) -> Standing:
+        """What the conformance probability needs with these sensors in use."""
+        key = tuple(int(value) for value in use)
+        if key not in self.standings:
+            steady, table = self.table(use)
+            tolerance = np.array([item.tolerance for item in self.model.spec.sensors])
+            sample_time = self.model.spec.sample_time
+            self.standings[key] = standing(
+                self.suspects, table, steady.whitening, use, sample_time, tolerance
+            )
+        return self.standings[key]
 
 
 @dataclass(frozen=True)
@@ -164,6 +180,7 @@ def _simple_faults(
             outcome = _cleared(outcome, flag, moment.time)
     if bits & (told.LOST | told.LOST_ENDED):
         tests.valid_from[0] = moment.cycle + 1
+        tests.forget_evidence()
     spike = outcome.book.find(tag, ("spike",))
     if spike is not None and moment.time - spike.detected > QUIET * design.sample_us:
         outcome = _cleared(outcome, spike, moment.time)
@@ -175,7 +192,7 @@ def _noisy(
 ) -> FollowUp:
     """More noise than the model file says. It reaches the other sensors' innovations through the estimate: where two
     tests are up, the sensor whose sum went further is the one."""
-    use = _in_use(design, outcome.book, tests, moment.cycle)
+    use = sensors_in_use(design, outcome.book, tests, moment.cycle)
     further = [
         i for i in np.flatnonzero((tests.noisy != 0) & (use != 0)) if tests.spread[i] > tests.spread[sensor]
     ]
@@ -214,7 +231,8 @@ def _clear_shifts(design: DetectionDesign, outcome: FollowUp, tests: TestState, 
     return outcome
 
 
-def _in_use(design: DetectionDesign, book: FlagBook, tests: TestState, cycle: int) -> Ints:
+def sensors_in_use(design: DetectionDesign, book: FlagBook, tests: TestState, cycle: int) -> Ints:
+    """(n_sensors,) 0 for a sensor that is left out or lost."""
     return np.array(
         [int(not book.excluded(i, cycle) and tests.lost[i] == 0) for i in range(design.kernel.n_sensors)],
         dtype=np.int64,
@@ -224,7 +242,7 @@ def _in_use(design: DetectionDesign, book: FlagBook, tests: TestState, cycle: in
 def _diagnose(design: DetectionDesign, outcome: FollowUp, tests: TestState, moment: Moment) -> FollowUp:
     """While a test of a sensor in use is up and no flag explains it: weigh the explanations and act on the verdict."""
     book = outcome.book
-    use = _in_use(design, book, tests, moment.cycle)
+    use = sensors_in_use(design, book, tests, moment.cycle)
     up = bool(np.any((tests.up != 0) & (use != 0))) or tests.misfit[0] != 0
     if not up:
         return replace(outcome, book=replace(book, episode=None))
@@ -252,11 +270,12 @@ def explanations(design: DetectionDesign) -> tuple[Hypothesis, ...]:
 
 
 def look(
-    design: DetectionDesign, tests: TestState, use: Ints, gains: bool = True
+    design: DetectionDesign, tests: TestState, use: Ints, gains: bool = True, only: Hypothesis | None = None
 ) -> tuple[Verdict, Likelihoods]:
     """Weigh all explanations of the innovations since the tests were last restarted.
 
-    ``gains``: changed gains of transfer functions too, which costs several times as much.
+    ``gains``: wrong gains of transfer functions too, which costs several times as much; ``only`` those of the paths that
+    concern one sensor or input.
     """
     steady, table = design.table(use)
     newest = int(tests.cycle[0]) - 1
@@ -266,7 +285,7 @@ def look(
     if not (gains and design.paths):
         return judge(design.suspects, found), found
     rings = (tests.ring, tests.moves)
-    more = gain_likelihoods(design.kernel, design.paths, steady, use, rings, newest, available)
+    more = gain_likelihoods(design.kernel, design.paths, steady, use, rings, newest, available, only)
     together = Likelihoods(*(np.concatenate(parts) for parts in zip(found, more, strict=True)))
     return judge(explanations(design), together), together
 
@@ -275,10 +294,17 @@ def _act(design: DetectionDesign, outcome: FollowUp, tests: TestState, moment: M
     episode = outcome.book.episode
     waited = moment.cycle - episode.since if episode is not None else 0
     verdict, found = look(design, tests, use, gains=False)
-    due = waited >= PATIENCE and waited % PATIENCE < design.tests.look_every
-    if not (due or _worth_a_flag(design, verdict, found, waited)):
+    turn = waited - crc32(design.model.spec.name.encode()) % PATIENCE
+    due = turn >= PATIENCE and turn % PATIENCE < design.tests.look_every
+    worth = _worth_a_flag(design, verdict, found, waited)
+    recently = episode is not None and 0 <= episode.weighed > moment.cycle - PATIENCE
+    if not due and (recently or not worth):
         return outcome
-    verdict, found = look(design, tests, use)
+    only = explanations(design)[verdict.best] if worth and not due else None
+    verdict, found = look(design, tests, use, only=only)
+    if episode is not None:
+        episode = replace(episode, weighed=moment.cycle)
+        outcome = replace(outcome, book=replace(outcome.book, episode=episode))
     if _worth_a_flag(design, verdict, found, waited):
         return _open_shift(design, outcome, tests, moment, (verdict, found, use))
     if waited >= PATIENCE and episode is not None and not episode.noted:

@@ -29,8 +29,8 @@ WRONG_BEFORE, WRONG_SINCE = 1.0, 0.05
 """Weight beforehand, where a sensor's own instrument has 1: of gains that were wrong before the oldest cycle looked at,
 and of gains that changed later. A model may well be wrong from the first day; a process seldom changes from one hour
 to the next. Half of it is for one path into a sensor, half for all paths together."""
-HALVINGS = 4
-"""Onsets looked at: before everything, the start of what counts, its later half, its latest quarter ..."""
+LATER_HALVINGS = (0, 1, 3)
+"""Onsets looked at: before everything, and the start of what counts, of its later half, of its latest eighth."""
 LEAST_SHARE = 1e-3
 """Of the effect of all errors together: a path with less takes no part in it."""
 RUN_UP = 300
@@ -223,17 +223,49 @@ def gain_likelihoods(
     rings: tuple[Floats, Floats],
     newest: int,
     available: int,
+    suspect: Hypothesis | None = None,
 ) -> Likelihoods:
     """Score every path over a few onsets. The evidence of all together goes to the paths by their effect, mean^2 D.
 
     :param rings: innovations (window, n_sensors) and inputs as deviations (window, n_inputs).
     :param available: cycles up to ``newest`` that count.
+    :param suspect: weigh only the paths into this sensor, or from this input; the others get no evidence.
     """
     blocks = np.array([path.index for path in paths], dtype=np.int64)
+    chosen = np.flatnonzero(concerned(kernel, blocks, suspect))
     remembered = min(newest + 1, rings[0].shape[0])
-    halved = [available >> halving for halving in range(HALVINGS) if available >> halving > 0]
+    halved = [available >> halving for halving in LATER_HALVINGS if available >> halving > 0]
     ages = np.array([remembered + RUN_UP, *halved], dtype=np.int64)
     into = np.bincount(kernel.block_row[blocks], minlength=kernel.n_sensors)[kernel.block_row[blocks]]
-    return _weigh(
-        kernel, blocks, 1.0 / into, steady.gains, steady.whitening, use, rings, newest, remembered, ages
+    found = Likelihoods(
+        np.full(len(paths), -1e300),
+        np.zeros(len(paths), dtype=np.int64),
+        np.zeros(len(paths)),
+        np.zeros(len(paths)),
     )
+    if not chosen.size:
+        return found
+    weighed = _weigh(
+        kernel,
+        blocks[chosen],
+        1.0 / into[chosen],
+        steady.gains,
+        steady.whitening,
+        use,
+        rings,
+        newest,
+        remembered,
+        ages,
+    )
+    for part, whole in zip(weighed, found, strict=True):
+        whole[chosen] = part
+    return found
+
+
+def concerned(kernel: Kernel, blocks: Ints, suspect: Hypothesis | None) -> Ints:
+    """(P,) 1 for a path into the suspected sensor or from the suspected input; all where neither is suspected."""
+    if suspect is not None and suspect.source == "sensor":
+        return np.asarray(kernel.block_row[blocks] == suspect.index, dtype=np.int64)
+    if suspect is not None and suspect.source == "input":
+        return np.asarray(kernel.block_source[blocks] == suspect.index, dtype=np.int64)
+    return np.ones(len(blocks), dtype=np.int64)

@@ -20,6 +20,8 @@ SETTLING = 256
 SETTLED = 512
 NOISY = 1024
 NOISY_ENDED = 2048
+ONSETS = 24
+"""Possible onsets of a fault that the conformance probability keeps."""
 MISFIT = 4096
 """The joint test over all sensors went up; no sensor's bit."""
 
@@ -94,6 +96,12 @@ class TestState(NamedTuple):
     """(1,) 1 while a flag or an undecided test needs looking after every ``look_every`` cycles."""
     settling_until: Ints
     """(1,) First cycle at which the tests go on after inputs were missing."""
+    block: Floats
+    onset: Ints
+    onset_n: Floats
+    onset_d: Floats
+    beyond: Floats
+    """The evidence of :mod:`softsensor.detection.conformance`; beyond: probability of a bias beyond the tolerance."""
 
     def copy(self) -> TestState:
         """A copy that shares nothing with this state."""
@@ -107,9 +115,16 @@ class TestState(NamedTuple):
         self.up[:] = self.misfit[:] = 0
         self.down_since[:] = cycle
         self.valid_from[0] = cycle
+        self.forget_evidence()
+
+    def forget_evidence(self) -> None:
+        """The conformance probability begins anew, in place."""
+        for part in (self.block, self.onset_n, self.onset_d, self.beyond):
+            part[:] = 0.0
+        self.onset[:] = -1
 
 
-def initial_tests(n_sensors: int, n_pairs: int, n_inputs: int, window: int) -> TestState:
+def initial_tests(n_sensors: int, n_pairs: int, n_inputs: int, window: int, hypotheses: int = 1) -> TestState:
     """All sums at zero, nothing seen."""
 
     def floats(value: float = 0.0) -> Floats:
@@ -145,4 +160,9 @@ def initial_tests(n_sensors: int, n_pairs: int, n_inputs: int, window: int) -> T
         cycle=ints(0, 1),
         watch=ints(0, 1),
         settling_until=ints(0, 1),
+        block=np.zeros(n_sensors + 1),
+        onset=ints(-1, ONSETS),
+        onset_n=np.zeros((ONSETS, hypotheses)),
+        onset_d=np.zeros((ONSETS, hypotheses)),
+        beyond=floats(),
     )

@@ -93,7 +93,7 @@ def results_block(design: UnitDesign, step: Step) -> blocks.ResultsBlock:
         results.innovation,
         results.innovation_sd,
         results.used,
-        np.concatenate([results.high, results.low], axis=1),
+        np.concatenate([results.high, results.low, results.beyond], axis=1),
         tuple(_joined(design.model, row) for row in texts),
         (step.digest,),
     )

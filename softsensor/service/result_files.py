@@ -19,6 +19,7 @@ from softsensor.errors import ReplayError
 from softsensor.estimation.smoothing import SmoothedCycles
 from softsensor.service.replay import Replay, Stretch
 from softsensor.service.result_tables import (
+    conformance_table,
     estimate_table,
     flag_table,
     innovation_table,
@@ -149,6 +150,7 @@ class ResultFiles:
         """Write a stretch of cycles."""
         self._add("estimates", estimate_table(self._design, stretch.readings, stretch.results))
         self._add("innovations", innovation_table(self._design, stretch.results))
+        self._add("conformance", conformance_table(self._design, stretch.results))
 
     def add_smoothed(self, cycles: SmoothedCycles) -> None:
         """Write smoothed estimates; they come once all stretches are written."""

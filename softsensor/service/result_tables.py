@@ -8,6 +8,7 @@ import numpy as np
 import pandas as pd
 
 from softsensor.cycle import CycleResults, UnitDesign, outside
+from softsensor.detection.conformance import BLOCK, LOOK_EVERY_BLOCKS
 from softsensor.detection.flags import Flag
 from softsensor.estimation.lab_results import LabOutcome
 from softsensor.estimation.smoothing import SmoothedCycles
@@ -22,6 +23,7 @@ SMOOTHED_COLUMNS = ("time", "tag", "value", "sd", "lower", "upper")
 INNOVATION_COLUMNS = (
     "time", "tag", "reading", "predicted", "innovation", "sd", "used", "cusum_high", "cusum_low",
 )  # fmt: skip
+CONFORMANCE_COLUMNS = ("time", "tag", "beyond_tolerance")
 FLAG_COLUMNS = (
     "flag", "tag", "kind", "onset", "detected", "cleared", "size", "size_sd", "probability", "group",
 )  # fmt: skip
@@ -156,6 +158,20 @@ def innovation_table(design: UnitDesign, results: CycleResults) -> pd.DataFrame:
             "used": results.used.ravel(),
             "cusum_high": results.high.ravel(),
             "cusum_low": results.low.ravel(),
+        }
+    )
+
+
+def conformance_table(design: UnitDesign, results: CycleResults) -> pd.DataFrame:
+    """The probability that each sensor's bias lies beyond its tolerance, at the cycles that weighed it anew."""
+    tags, numbers = list(design.model.sensor_tags), results.first + np.arange(len(results))
+    every = BLOCK * LOOK_EVERY_BLOCKS
+    rows = np.flatnonzero(numbers % every == every - 1) if results.first >= 0 else np.zeros(0, dtype=np.int64)
+    return pd.DataFrame(
+        {
+            "time": moments(results.times[rows]).repeat(len(tags)),
+            "tag": _words(np.tile(np.arange(len(tags)), len(rows)), tags),
+            "beyond_tolerance": results.beyond[rows].ravel(),
         }
     )
 

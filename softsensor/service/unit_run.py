@@ -261,6 +261,7 @@ def _waiting_results(design: UnitDesign, readings: CycleReadings) -> CycleResult
         np.zeros(n, dtype=np.int8),
         zeros,
         zeros,
+        zeros,
         np.zeros(0),
         np.zeros(0),
     )

@@ -11,6 +11,7 @@ from sqlalchemy import select
 
 from plant_models.specification import EstimateSpec, SensorSpec, UnitSpec
 from softsensor.alarms.sensor_status import SEVERITY, SensorStatus, status_of
+from softsensor.estimation.kernel import Floats
 from softsensor.readings_of_cycle import CycleReadings
 from softsensor.records import series
 from softsensor.records.engine import Database
@@ -55,6 +56,8 @@ class SensorRow:
     reading: float | None
     predicted: float | None
     deviations: float | None
+    beyond: float | None
+    """Probability that the bias lies beyond the tolerance."""
     health: SensorStatus
     use: str
 
@@ -164,9 +167,16 @@ def _sensor_row(
         reading,
         finite(results.predicted[-1, i]),
         finite(deviation),
+        _beyond(results.sums[-1], i),
         health,
         "in use" if results.used[-1, i] else unused,
     )
+
+
+def _beyond(sums: Floats, i: int) -> float | None:
+    """The third part of what is kept of the sums; records of older releases have none."""
+    n = len(sums) // 3
+    return finite(sums[2 * n + i]) if len(sums) % 3 == 0 and 2 * n + i < len(sums) else None
 
 
 def sensor_rows(
@@ -184,7 +194,7 @@ def sensor_rows(
     for i, item in enumerate(spec.sensors):
         health = health_of(item.tag, flags, item.tag in worked_on)
         if latest is None or seen is None:
-            places = (difference_unit(item.unit), decimals_for(item.noise_sd), None, None, None)
+            places = (difference_unit(item.unit), decimals_for(item.noise_sd), None, None, None, None)
             rows.append(SensorRow(item.tag, item.unit, *places, health, "no reading"))
         else:
             rows.append(_sensor_row(item, i, seen, latest, health))

@@ -69,9 +69,12 @@ def compare(model: PlantModel, run: Run, system: StateSpace, repeats: int) -> di
         estimator, tests, row = state.estimator.copy(), state.tests.copy(), 0
         data = block_inputs(design, state.book, 0, readings, ())
         out = empty_outputs(n, design.kernel, 0)
+        known = design.detection.standing(np.ones(design.kernel.n_sensors, dtype=np.int64))
         while row < n:
             part = data._replace(**{name: getattr(data, name)[row:] for name in CUT})
-            row += run_block(design.kernel, estimator, design.detection.tests, tests, part, out, testing)
+            row += run_block(
+                design.kernel, estimator, design.detection.tests, tests, known, part, out, testing
+            )
 
     spent = in_turn(
         {

@@ -50,7 +50,8 @@ def after(spec: UnitSpec, cycles: int, missing: float, state: EstimatorState | N
         data = block_inputs(design, FlagBook(), start, CycleReadings(times, u, good, y, quality), ())
         out = empty_outputs(BLOCK, kernel, 0)
         tests = unit_tests(design, 1)
-        assert run_block(kernel, state, design.detection.tests, tests, data, out, False) == BLOCK
+        known = design.detection.standing(np.ones(kernel.n_sensors, dtype=np.int64))
+        assert run_block(kernel, state, design.detection.tests, tests, known, data, out, False) == BLOCK
     return state
 
 
