@@ -72,9 +72,13 @@ def _chain(ratio: float, count: int, interval: float, clip: float, cells: int) -
     width = interval / (cells + 0.5)
 
     def below(change: Vector) -> Vector:
-        """Probability that a step adds no more than ``change``."""
-        squares = np.maximum((change + count * drift) / gain, 0.0)
-        share = np.where(squares >= clip * clip, 1.0, gammainc(0.5 * count, 0.5 * squares))
+        """Probability that a step adds no more than ``change``; what the clip heaps up is spread over one cell."""
+        squares = np.clip((change + count * drift) / gain, 0.0, clip * clip)
+        heap = 1.0 - float(gammainc(0.5 * count, 0.5 * clip * clip))
+        share = gammainc(0.5 * count, 0.5 * squares)
+        if heap > 0.0:
+            largest = gain * clip * clip - count * drift
+            share = share + heap * np.clip((change - largest) / width + 0.5, 0.0, 1.0)
         return np.asarray(share, dtype=np.float64)
 
     steps: Vector = np.arange(-cells, cells + 1, dtype=np.float64) * width
