@@ -17,7 +17,7 @@ from numpy.typing import NDArray
 from plant_models.errors import Problem
 from plant_models.plant_model import PlantModel
 from softsensor.compiled_cycle import BlockInputs, BlockOutputs, empty_outputs, run_block
-from softsensor.detection.flags import Flag, FlagBook, Note, RestSpell
+from softsensor.detection.flags import Beginning, Flag, FlagBook, Note, RestSpell
 from softsensor.detection.follow_up import DetectionDesign, FollowUp, Moment, follow_up, sensors_in_use
 from softsensor.detection.people import Decision, Taken, ended, next_end, take
 from softsensor.detection.plant_states import StateChange, change_state
@@ -132,7 +132,8 @@ class CycleResults:
     doubts: NDArray[np.object_]
     """(N, n_estimates) What speaks against an estimate besides its inputs, in words: flags, laboratory results."""
     settling: NDArray[np.int8]
-    """(N,) 1 while inputs are missing, and for a while after: the tests rest and the estimates are Uncertain."""
+    """(N,) The tests rest and the estimates are Uncertain: 1 while inputs are missing and for a while after, 2 where the
+    plant was moving when the run began."""
     high: Floats
     low: Floats
     beyond: Floats
@@ -185,7 +186,9 @@ def start(design: UnitDesign, first_cycle: int = 0) -> CycleState:
     tests.cycle[0] = first_cycle
     tests.valid_from[0] = first_cycle + design.detection.settled_after
     none = (0,) * design.kernel.n_estimates
-    return CycleState(initial_state(design.model, design.kernel), tests, FlagBook(), Digest(), none)
+    past = design.detection.forgetting
+    book = FlagBook(beginning=Beginning(first_cycle + past.onset_by, first_cycle + past.until))
+    return CycleState(initial_state(design.model, design.kernel), tests, book, Digest(), none)
 
 
 def usable(design: UnitDesign, readings: CycleReadings) -> tuple[Floats, Floats]:
@@ -259,6 +262,7 @@ def run_cycles(
     doubts = doubts_of(design, begun.book, first, state.rejected)
     results = replace(
         results,
+        settling=results.settling * np.int8(2 if begun.book.unsteady(first) else 1),
         doubts=np.tile(np.array(doubts, dtype=object), (done, 1)),
         status=results.status | np.array([bool(text) for text in doubts], dtype=np.int8),
         flags=outcome.changes,
@@ -277,6 +281,7 @@ def doubts_of(design: UnitDesign, book: FlagBook, cycle: int, rejected: tuple[in
     flagged = [
         f"{flag.tag} is flagged ({flag.kind})" for flag in book.doubted(cycle, design.model.sensor_tags)
     ]
+    flagged += ["the plant was moving when the run began"] if book.unsteady(cycle) else []
     flagged += [state.key for state in book.states if state.uncertain and state.covers(cycle)]
     return [
         "; ".join(

@@ -10,6 +10,7 @@ from plant_models.building import build_plant_model
 from plant_models.model_file import read_model_file
 from plant_models.plant_model import PlantModel
 from softsensor.cycle import BEYOND_ABOVE, BEYOND_BELOW, UnitDesign
+from softsensor.detection.beginning import forgetting
 from softsensor.detection.follow_up import DetectionDesign
 from softsensor.detection.gain_changes import path_hypotheses
 from softsensor.detection.run_length import decision_interval
@@ -121,16 +122,18 @@ def design_unit(model: PlantModel) -> UnitDesign:
     kernel = build_kernel(model)
     spec = model.spec
     steady = steady_filter(model, kernel, np.ones(kernel.n_sensors, dtype=np.int64))
+    tests = fault_test_design(model, kernel)
     detection = DetectionDesign(
         model,
         kernel,
-        fault_test_design(model, kernel),
+        tests,
         hypotheses(model, WINDOW),
         path_hypotheses(model, kernel),
         WINDOW,
         round(spec.sample_time * 1e6),
         spec.leave_out_isolated,
         True,
+        forgetting(model, kernel, steady, tests.reference[:, 0]),
         cycles_to_settle(model, kernel, steady, WINDOW),
     )
     low = np.array([item.range[0] - BEYOND_BELOW * (item.range[1] - item.range[0]) for item in spec.sensors])

@@ -25,7 +25,7 @@ from plant_models.specification import GATE, UnitSpec
 from plant_models.unit_spellings import PREFIXED, WHOLE
 from softsensor import cycle, unit_design
 from softsensor.cli.check import as_document, print_table
-from softsensor.detection import diagnosis, follow_up, isolability, reading_tests, sheet
+from softsensor.detection import beginning, diagnosis, follow_up, isolability, reading_tests, sheet
 from softsensor.errors import SiteFileError
 from softsensor.estimation import gate, lab_results, what_helps
 from softsensor.estimation.noise_tuning import archive_checks, interval_scale, separability
@@ -331,6 +331,8 @@ LIMITS = [
     (METHOD, f"a noise {unit_design.JOINT_RATIO:g} times as"),
     (METHOD, f"stayed down for more than {follow_up.QUIET} cycles"),
     (METHOD, f"more than {unit_design.LOST_SECONDS:g} s and more than {unit_design.LOST_CYCLES} cycles"),
+    (METHOD, f"a move of {beginning.MOVE:.0%} of each input's".replace("%", " %")),
+    (METHOD, f"any more, at most {beginning.LONGEST_S / 3600.0:g} h."),
     (METHOD, f"at least {reading_tests.MIN_REPEATS} equal readings in a row"),
     (METHOD, f"once {reading_tests.WARM_UP} readings have been seen"),
     (METHOD, f"beyond {unit_design.SPIKE:g} standard deviations"),

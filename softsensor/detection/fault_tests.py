@@ -40,8 +40,8 @@ def _rest(state: TestState, i: int) -> None:
     state.down_since[i] = state.cycle[0]
     state.spread[i] = 0.0
     state.held[i] = np.nan
-    state.last_z[i] = 0.0
-    state.older_z[i] = 0.0
+    state.last_z[i] = np.nan
+    state.older_z[i] = np.nan
 
 
 @njit(cache=True)

@@ -115,6 +115,19 @@ class RestSpell:
 
 
 @dataclass(frozen=True, slots=True)
+class Beginning:
+    """A run began with inputs whose past is not known; cycles.
+
+    A test that goes up before ``until`` on a sum that began to climb by ``onset_by`` says that the plant was moving.
+    """
+
+    onset_by: int
+    until: int
+    unsteady: bool = False
+    """A test has said so: the tests of innovations rest until then."""
+
+
+@dataclass(frozen=True, slots=True)
 class Note:
     """An event worth a line on record that is not a flag."""
 
@@ -132,6 +145,9 @@ class FlagBook:
     exclusions: tuple[Exclusion, ...] = ()
     rest: Rest | None = None
     states: tuple[HeldState, ...] = ()
+    beginning: Beginning | None = None
+    settling: RestSpell | None = None
+    """The rest of the tests that missing inputs or an unsteady beginning have caused, while it lasts."""
 
     def find(self, tag: str, kinds: tuple[Kind, ...]) -> Flag | None:
         """The open flag of a tag, of one of these kinds."""
@@ -168,6 +184,10 @@ class FlagBook:
             for item in self.exclusions
             if item.state and item.until is None
         ]
+
+    def unsteady(self, cycle: int) -> bool:
+        """Do the tests rest at a cycle because the plant was moving when the run began?"""
+        return self.beginning is not None and self.beginning.unsteady and cycle < self.beginning.until
 
     def rested(self, cycle: int) -> bool:
         """Do the unit's tests rest at a cycle because a person said so?"""

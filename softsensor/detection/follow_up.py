@@ -9,6 +9,7 @@ import numpy as np
 
 from plant_models.plant_model import PlantModel
 from softsensor.detection import state_of_tests as told
+from softsensor.detection.beginning import Forgetting
 from softsensor.detection.conformance import Standing, standing
 from softsensor.detection.diagnosis import (
     NAMING_RATIO,
@@ -19,7 +20,17 @@ from softsensor.detection.diagnosis import (
     onset_ages,
 )
 from softsensor.detection.elementary import exponential
-from softsensor.detection.flags import Episode, Exclusion, Flag, FlagBook, Kind, Note, RestSpell, flag_name
+from softsensor.detection.flags import (
+    Episode,
+    Exclusion,
+    Flag,
+    FlagBook,
+    Kind,
+    Note,
+    RestSpell,
+    flag_name,
+    time_words,
+)
 from softsensor.detection.gain_changes import gain_likelihoods
 from softsensor.detection.signatures import Hypothesis, SteadyFilter, signatures, steady_filter
 from softsensor.detection.state_of_tests import TestDesign, TestState
@@ -33,6 +44,7 @@ EXPLAINING: tuple[Kind, ...] = (*LASTING, "stuck", "noisy")
 PATIENCE = 60
 """Cycles for which a name is waited for before a group is flagged, and between two times that gains are weighed; units take
 their turns within it, so that a hundred of them do not all weigh in the same second."""
+UNSTEADY = "start in a moving plant"
 QUIET = 360
 """Cycles without another spike, or with the sums down, after which a spike's or a shift's flag clears: a fault that comes
 and goes, or that the filter half follows, stays one flag."""
@@ -52,6 +64,7 @@ class DetectionDesign:
     sample_us: int
     leave_out: bool
     armed: bool
+    forgetting: Forgetting
     settled_after: int = 0
     """Cycles from the start before the filter is the settled one that signatures suppose."""
     tables: dict[tuple[int, ...], tuple[SteadyFilter, Floats]] = field(default_factory=dict, repr=False)
@@ -107,7 +120,7 @@ class Moment:
 
 def follow_up(design: DetectionDesign, book: FlagBook, tests: TestState, moment: Moment) -> FollowUp:
     """Deal with all news of one cycle; ``tests`` is a work array and may be restarted here."""
-    outcome = _say_settling(FollowUp(book), moment)
+    outcome = _say_settling(_begin(design, FollowUp(book), tests, moment), moment)
     for sensor in range(design.kernel.n_sensors):
         outcome = _simple_faults(design, outcome, tests, moment, sensor)
     if not book.resting(moment.cycle):
@@ -120,13 +133,84 @@ def follow_up(design: DetectionDesign, book: FlagBook, tests: TestState, moment:
 
 def _say_settling(outcome: FollowUp, moment: Moment) -> FollowUp:
     """Every rest of the tests is on record, with its beginning and its end."""
+    settling = outcome.book.settling
     if moment.news & told.SETTLING:
         text = "an input is missing or too old: the tests of innovations rest, the estimates are Uncertain"
-        return replace(outcome, notes=(Note(moment.time, "suppression", text),))
-    if moment.news & told.SETTLED:
+        return _rested(outcome, RestSpell("inputs missing", "", moment.time, None, ""), text, moment.time)
+    if moment.news & told.SETTLED and settling is not None:
         text = "inputs have been there long enough again: the tests of innovations go on"
-        return replace(outcome, notes=(Note(moment.time, "suppression", text),))
+        if settling.cause == UNSTEADY:
+            text = "what the inputs did before the run began is forgotten: the tests of innovations begin"
+        return _rested(outcome, replace(settling, until=moment.time), text, moment.time)
     return outcome
+
+
+def _rested(outcome: FollowUp, spell: RestSpell, text: str, time: int) -> FollowUp:
+    book = replace(outcome.book, settling=spell if spell.until is None or spell.until > time else None)
+    note = Note(time, "suppression", text)
+    return replace(outcome, book=book, notes=(*outcome.notes, note), rests=(*outcome.rests, spell))
+
+
+def _begin(design: DetectionDesign, outcome: FollowUp, tests: TestState, moment: Moment) -> FollowUp:
+    """A test that goes up early on a sum that climbed from the beginning: the plant was moving when the run began.
+
+    The tests of innovations then rest until the past of the inputs is forgotten; until then no instrument can be told
+    from the error of the start.
+    """
+    start = outcome.book.beginning
+    if start is None or start.unsteady:
+        return outcome
+    if moment.cycle >= start.until:
+        return replace(outcome, book=replace(outcome.book, beginning=None))
+    early = _early(design, tests, moment, start.onset_by)
+    if not early:
+        return outcome
+    until = moment.time + (start.until - moment.cycle) * design.sample_us
+    names = ", ".join(early)
+    text = (
+        f"the plant was moving when the run began ({names} does not fit a start in steady state): the tests of "
+        f"innovations begin at {time_words(until)}, the estimates are Uncertain until then"
+    )
+    tests.settling_until[0] = max(int(tests.settling_until[0]), start.until)
+    tests.restart_sums(moment.cycle + 1)
+    tests.noisy[:] = 0
+    moment.events[:] &= ~(told.NOISY | told.NOISY_ENDED)
+    book = replace(outcome.book, beginning=replace(start, unsteady=True), episode=None)
+    return _rested(
+        replace(outcome, book=book), RestSpell(UNSTEADY, "", moment.time, until, names), text, moment.time
+    )
+
+
+def _early(design: DetectionDesign, tests: TestState, moment: Moment, onset_by: int) -> list[str]:
+    """What has gone up on a sum that began to climb by a cycle: tags, or the model as a whole."""
+    sensors = design.model.spec.sensors
+    found = [
+        item.tag
+        for i, item in enumerate(sensors)
+        if (moment.events[i] & told.SHIFT_UP and climbed_since(design, tests, i) <= onset_by)
+        or (moment.events[i] & told.NOISY and moment.cycle <= onset_by)
+    ]
+    if not found and moment.news & told.MISFIT and moment.cycle <= onset_by:
+        return ["the readings together"]
+    return found
+
+
+def climbed_since(design: DetectionDesign, tests: TestState, sensor: int) -> int:
+    """Cycle at which the furthest of a sensor's sums last left zero: the sum taken back, innovation by innovation."""
+    sums = np.maximum(tests.high[sensor], tests.low[sensor]) / design.tests.interval[sensor]
+    pair = int(np.argmax(sums))
+    side = 1.0 if tests.high[sensor, pair] >= tests.low[sensor, pair] else -1.0
+    left = float(max(tests.high[sensor, pair], tests.low[sensor, pair]))
+    sd = float(design.table(np.ones(design.kernel.n_sensors, dtype=np.int64))[0].sd[sensor])
+    cycle, window = int(tests.cycle[0]), len(tests.ring)
+    oldest = max(cycle - window, 0)
+    while cycle > oldest and left > 0.0:
+        cycle -= 1
+        innovation = float(tests.ring[cycle % window, sensor])
+        if innovation == innovation:
+            z = min(max(side * innovation / sd, -design.tests.clip), design.tests.clip)
+            left -= z - float(design.tests.reference[sensor, pair])
+    return cycle
 
 
 def _opened(outcome: FollowUp, flag: Flag) -> FollowUp:

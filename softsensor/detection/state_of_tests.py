@@ -109,9 +109,9 @@ class TestState(NamedTuple):
 
     def restart_sums(self, cycle: int) -> None:
         """All sums at zero and nothing up, in place: what comes counts from ``cycle`` on."""
-        for part in (self.high, self.low, self.spread, self.joint, self.last_z, self.older_z):
+        for part in (self.high, self.low, self.spread, self.joint):
             part[:] = 0.0
-        self.held[:] = np.nan
+        self.held[:] = self.last_z[:] = self.older_z[:] = np.nan
         self.up[:] = self.misfit[:] = 0
         self.down_since[:] = cycle
         self.valid_from[0] = cycle
@@ -151,8 +151,8 @@ def initial_tests(n_sensors: int, n_pairs: int, n_inputs: int, window: int, hypo
         stuck=ints(),
         missing=ints(),
         lost=ints(),
-        last_z=floats(),
-        older_z=floats(),
+        last_z=floats(np.nan),
+        older_z=floats(np.nan),
         resolution=floats(np.inf),
         ring=np.full((window, n_sensors), np.nan),
         moves=np.zeros((window, n_inputs)),

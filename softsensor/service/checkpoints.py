@@ -10,7 +10,16 @@ import numpy as np
 from numpy.typing import NDArray
 
 from softsensor.cycle import CycleState, Digest, LabAtCycle
-from softsensor.detection.flags import Episode, Exclusion, Flag, FlagBook, HeldState, Rest
+from softsensor.detection.flags import (
+    Beginning,
+    Episode,
+    Exclusion,
+    Flag,
+    FlagBook,
+    HeldState,
+    Rest,
+    RestSpell,
+)
 from softsensor.detection.state_of_tests import TestState
 from softsensor.errors import RecordsError
 from softsensor.estimation.kernel import EstimatorState
@@ -69,6 +78,8 @@ def unpack_state(blob: bytes, version: int) -> tuple[CycleState, Context]:
             tuple(Exclusion(**item) for item in rest["exclusions"]),
             Rest(**rest["rest"]) if rest.get("rest") else None,
             tuple(HeldState(**item) for item in rest.get("states", ())),
+            Beginning(**rest["beginning"]) if rest.get("beginning") else None,
+            RestSpell(**rest["settling"]) if rest.get("settling") else None,
         )
         digest = Digest(bytes.fromhex(rest["chain"]), bytes.fromhex(rest["pending"]), rest["rows"])
         labs = tuple(
@@ -95,6 +106,8 @@ def _rest(state: CycleState, context: Context) -> bytes:
         "episode": asdict(book.episode) if book.episode else None,
         "rest": asdict(book.rest) if book.rest else None,
         "states": [asdict(state) for state in book.states],
+        "beginning": asdict(book.beginning) if book.beginning else None,
+        "settling": asdict(book.settling) if book.settling else None,
         "exclusions": [asdict(item) for item in book.exclusions],
         "chain": state.digest.chain.hex(),
         "pending": state.digest.pending.hex(),

@@ -104,7 +104,7 @@ def _shared_reasons(design: UnitDesign, readings: CycleReadings, results: CycleR
             found.append(INPUT_REASONS[quality].format(item.tag))
         if outside(readings.u[k : k + 1, j], item.validated_range)[0]:
             found.append(f"{item.tag} is outside its validated range")
-    if results.settling[k] and not found:
+    if results.settling[k] == 1 and not found:
         found.append("inputs were missing; what they did meanwhile is not in the estimate")
     found += [f"{item.tag} is left out" for i, item in enumerate(spec.sensors) if results.left_out[k, i]]
     return found
