@@ -13,7 +13,7 @@ from softsensor.cycle import BEYOND_ABOVE, BEYOND_BELOW, UnitDesign
 from softsensor.detection.beginning import forgetting
 from softsensor.detection.follow_up import DetectionDesign
 from softsensor.detection.gain_changes import path_hypotheses
-from softsensor.detection.run_length import decision_interval
+from softsensor.detection.run_length import interval_with_head_start
 from softsensor.detection.signatures import cycles_to_settle, filter_response, hypotheses, steady_filter
 from softsensor.detection.spread import gain_and_drift, spread_interval
 from softsensor.detection.state_of_tests import TestDesign
@@ -91,7 +91,7 @@ def fault_test_design(model: PlantModel, kernel: Kernel) -> TestDesign:
     cycles = model.spec.false_flag_interval / model.spec.sample_time
     reference = bank_references(steady_shifts(model, kernel))
     each = cycles * reference.shape[1] / (1.0 - SPREAD_SHARE)
-    exact = [[decision_interval(float(k), each, clip=CLIP) for k in row] for row in reference]
+    exact = [[interval_with_head_start(float(k), each, CLIP) for k in row] for row in reference]
     interval = np.ceil(np.array(exact) / INTERVAL_STEP) * INTERVAL_STEP
     lost = max(LOST_CYCLES, int(np.ceil(LOST_SECONDS / model.spec.sample_time)))
     joint_gain, joint_drift = gain_and_drift(JOINT_RATIO)

@@ -11,7 +11,7 @@ from numba import njit
 
 from softsensor.detection.reading_tests import test_lost, test_spike, test_stuck
 from softsensor.detection.shift_tests import test_joint, test_shift, test_spread
-from softsensor.detection.state_of_tests import LOOK, SETTLED, SETTLING, TestDesign, TestState
+from softsensor.detection.state_of_tests import HEAD_START, LOOK, SETTLED, SETTLING, TestDesign, TestState
 from softsensor.estimation.kernel import Floats, Ints
 
 SETTLING_SHARE = 3
@@ -20,7 +20,7 @@ the inputs did meanwhile is not in the prediction."""
 
 
 @njit(cache=True)
-def _settle(state: TestState, doubtful: int) -> int:
+def _settle(state: TestState, interval: Floats, doubtful: int) -> int:
     """Rest the tests of innovations while inputs are missing and for a while after; returns the news."""
     now, until = state.cycle[0], state.settling_until[0]
     if doubtful != 0:
@@ -28,6 +28,8 @@ def _settle(state: TestState, doubtful: int) -> int:
         return SETTLING if until <= now else 0
     if now == until and now > 0:
         state.valid_from[0] = now
+        state.high[:] = HEAD_START * interval
+        state.low[:] = HEAD_START * interval
         return SETTLED
     return 0
 
@@ -78,7 +80,7 @@ def test_cycle(
     reading from the estimate: a single impossible one is a spike, or noise, and no shift. ``squares``: sum of squares of
     the whitened innovations, a reading at a time, over the sensors in use; nan where one of them is missing.
     """
-    union = _settle(state, doubtful)
+    union = _settle(state, design.interval, doubtful)
     resting = quiet != 0 or state.cycle[0] < state.settling_until[0]
     slot = state.cycle[0] % state.ring.shape[0]
     cut_off = _cut_off(y, doubtful)

@@ -162,6 +162,8 @@ def ended(design: DetectionDesign, book: FlagBook, tests: TestState, cycle: int,
             tests.repeats[sensor], tests.run_probability[sensor] = 0, 1.0
     if outcome.notes:
         tests.restart_sums(cycle)
+        if over and not book.unsteady(cycle) and cycle >= tests.settling_until[0]:
+            tests.give_head_start(design.tests.interval)
         outcome = replace(outcome, book=replace(outcome.book, episode=None))
     return outcome
 

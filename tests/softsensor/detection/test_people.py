@@ -173,8 +173,9 @@ def test_a_sensor_that_counts_again_starts_all_sums_anew_and_is_judged_by_what_i
     tests = busy_tests()
     book = FlagBook(exclusions=(Exclusion(1, 50, 100),), episode=Episode(95))
     outcome = ended(design, book, tests, 100, NOW)
-    for part in (tests.high, tests.low, tests.up, tests.last_z):
+    for part in (tests.high, tests.low, tests.up):
         assert not part.any()
+    assert np.all(np.isnan(tests.last_z))
     assert int(tests.valid_from[0]) == 100
     assert tests.down_since.tolist() == [100, 100, 100]
     for name, other in (("lost", 1), ("stuck", 1), ("missing", 4), ("repeats", 6)):
