@@ -5,15 +5,22 @@ from __future__ import annotations
 from typing import NamedTuple
 
 import numpy as np
-from numba import njit
 
 from softsensor.detection.conformance import Evidence, Standing, follow_conformance
 from softsensor.detection.fault_tests import test_cycle
 from softsensor.detection.shift_tests import highest_share
 from softsensor.detection.state_of_tests import TestDesign, TestState
+from softsensor.estimation.compiling import uncounted
 from softsensor.estimation.gate import gates_open, passes
 from softsensor.estimation.input_driven import accept_inputs, advance_input_driven, input_driven_outputs
-from softsensor.estimation.kalman import correct, predict_into, row_mean, row_variance, unless_rounding
+from softsensor.estimation.kalman import (
+    copy_into,
+    correct,
+    predict_into,
+    row_mean,
+    row_variance,
+    unless_rounding,
+)
 from softsensor.estimation.kernel import EstimatorState, Floats, Ints, Kernel
 
 UNSOUND = -1
@@ -91,7 +98,7 @@ def empty_outputs(cycles: int, kernel: Kernel, labs: int) -> BlockOutputs:
     )
 
 
-@njit(cache=True)
+@uncounted
 def _innovate(
     kernel: Kernel, x: Floats, P: Floats, base: Floats, k: int, data: BlockInputs, out: BlockOutputs
 ) -> None:
@@ -103,7 +110,7 @@ def _innovate(
             out.innovation[k, i] = data.y[k, i] - out.predicted[k, i]
 
 
-@njit(cache=True)
+@uncounted
 def _admit(
     kernel: Kernel, streak: Ints, k: int, data: BlockInputs, out: BlockOutputs, kept_out: Ints
 ) -> None:
@@ -119,7 +126,7 @@ def _admit(
             kept_out[i] = 1 - out.used[k, i]
 
 
-@njit(cache=True)
+@uncounted
 def _correct_all(
     kernel: Kernel,
     x: Floats,
@@ -159,7 +166,7 @@ def _correct_all(
     return lab
 
 
-@njit(cache=True)
+@uncounted
 def _report(kernel: Kernel, x: Floats, P: Floats, base: Floats, k: int, out: BlockOutputs) -> bool:
     for e in range(kernel.n_estimates):
         row = kernel.n_sensors + e
@@ -171,7 +178,33 @@ def _report(kernel: Kernel, x: Floats, P: Floats, base: Floats, k: int, out: Blo
     return True
 
 
-@njit(cache=True)
+class WorkSpace(NamedTuple):
+    """Arrays that the loop works in: P of the cycle, P of the next one, and vectors."""
+
+    P: Floats
+    other: Floats
+    v: Floats
+    K: Floats
+    base: Floats
+    paths: Floats
+    moves: Floats
+    kept_out: Ints
+
+
+def _work_space(kernel: Kernel) -> WorkSpace:
+    n = len(kernel.q)
+    return WorkSpace(
+        np.zeros((n, n)),
+        np.zeros((n, n)),
+        np.zeros(n),
+        np.zeros(n),
+        np.zeros(kernel.n_sensors + kernel.n_estimates),
+        np.zeros(len(kernel.steady) + 1),
+        np.zeros(kernel.n_inputs),
+        np.zeros(kernel.n_sensors, dtype=np.int64),
+    )
+
+
 def run_block(
     kernel: Kernel,
     est: EstimatorState,
@@ -186,12 +219,23 @@ def run_block(
 
     ``est`` and ``tests`` are work arrays: they hold the state after the last cycle run.
     """
-    n = len(kernel.q)
-    v, K, x = np.zeros(n), np.zeros(n), est.x
-    P, other = est.P.copy(), np.zeros((n, n))
-    base = np.zeros(kernel.n_sensors + kernel.n_estimates)
-    work, moves = np.zeros(len(kernel.steady) + 1), np.zeros(kernel.n_inputs)
-    kept_out = np.zeros(kernel.n_sensors, dtype=np.int64)
+    return int(_loop(kernel, est, design, tests, data, out, testing, _work_space(kernel)))
+
+
+@uncounted
+def _loop(
+    kernel: Kernel,
+    est: EstimatorState,
+    design: TestDesign,
+    tests: TestState,
+    data: BlockInputs,
+    out: BlockOutputs,
+    testing: bool,
+    space: WorkSpace,
+) -> int:
+    v, K, base, kept_out, x = space.v, space.K, space.base, space.kept_out, est.x
+    P, other = space.P, space.other
+    copy_into(est.P, P)
     lab, cycles = 0, len(data.u)
     evidence = Evidence(tests.block, tests.onset, tests.onset_n, tests.onset_d, tests.beyond)
     for k in range(len(data.u)):
@@ -204,17 +248,17 @@ def run_block(
             return UNSOUND
         if not _report(kernel, x, P, base, k, out):
             return UNSOUND
-        advance_input_driven(kernel, est, work)
+        advance_input_driven(kernel, est, space.paths)
         predict_into(kernel, x, P, v, other)
         P, other = other, P
         if testing:
             for j in range(kernel.n_inputs):
-                moves[j] = data.u[k, j] - kernel.operating_u[j]
+                space.moves[j] = data.u[k, j] - kernel.operating_u[j]
             news = test_cycle(
                 design,
                 tests,
                 data.y[k],
-                moves,
+                space.moves,
                 data.fresh,
                 data.doubtful[k],
                 data.quiet[k],
@@ -237,5 +281,5 @@ def run_block(
             if news != 0:
                 cycles = k + 1
                 break
-    est.P[:] = P
+    copy_into(P, est.P)
     return cycles

@@ -18,13 +18,13 @@ import math
 from dataclasses import dataclass
 
 import numpy as np
-from numba import njit
 from numpy.typing import ArrayLike, NDArray
 
 from plant_models.errors import Problem
+from softsensor.estimation.compiling import uncounted
 
 
-@njit(cache=True)
+@uncounted
 def cusum_step(
     high: float, low: float, z: float, reference: float, clip: float, cap: float
 ) -> tuple[float, float]:

@@ -8,7 +8,7 @@ from __future__ import annotations
 
 import math
 
-from numba import njit
+from softsensor.estimation.compiling import uncounted
 
 LN2_HIGH = 0.6931471803691238  # ln 2 to 32 bits, so that k * LN2_HIGH is exact
 LN2_LOW = 1.9082149292705877e-10
@@ -17,7 +17,7 @@ EXP_TERMS = 18
 LOG_TERMS = 12
 
 
-@njit(cache=True)
+@uncounted
 def exponential(x: float) -> float:
     """e^x; 0 below -700.
 
@@ -34,7 +34,7 @@ def exponential(x: float) -> float:
     return math.ldexp(total, int(k))
 
 
-@njit(cache=True)
+@uncounted
 def error_function(x: float) -> float:
     """erf x for x >= 0, to 1.5e-7 (Abramowitz & Stegun, Handbook of Mathematical Functions, 7.1.26; from memory,
     checked against math.erf in the tests).
@@ -47,7 +47,7 @@ def error_function(x: float) -> float:
     return 1.0 - tail * exponential(-x * x)
 
 
-@njit(cache=True)
+@uncounted
 def logarithm(x: float) -> float:
     """ln x for x > 0, by 2 artanh((m - 1)/(m + 1)) on the mantissa.
 

@@ -7,11 +7,11 @@ diagnosis's business.
 from __future__ import annotations
 
 import numpy as np
-from numba import njit
 
 from softsensor.detection.reading_tests import test_lost, test_spike, test_stuck
 from softsensor.detection.shift_tests import test_joint, test_shift, test_spread
 from softsensor.detection.state_of_tests import HEAD_START, LOOK, SETTLED, SETTLING, TestDesign, TestState
+from softsensor.estimation.compiling import uncounted
 from softsensor.estimation.kernel import Floats, Ints
 
 SETTLING_SHARE = 3
@@ -19,7 +19,7 @@ SETTLING_SHARE = 3
 the inputs did meanwhile is not in the prediction."""
 
 
-@njit(cache=True)
+@uncounted
 def _settle(state: TestState, interval: Floats, doubtful: int) -> int:
     """Rest the tests of innovations while inputs are missing and for a while after; returns the news."""
     now, until = state.cycle[0], state.settling_until[0]
@@ -28,13 +28,15 @@ def _settle(state: TestState, interval: Floats, doubtful: int) -> int:
         return SETTLING if until <= now else 0
     if now == until and now > 0:
         state.valid_from[0] = now
-        state.high[:] = HEAD_START * interval
-        state.low[:] = HEAD_START * interval
+        for i in range(interval.shape[0]):
+            for p in range(interval.shape[1]):
+                state.high[i, p] = HEAD_START * interval[i, p]
+                state.low[i, p] = HEAD_START * interval[i, p]
         return SETTLED
     return 0
 
 
-@njit(cache=True)
+@uncounted
 def _rest(state: TestState, i: int) -> None:
     state.high[i] = 0.0
     state.low[i] = 0.0
@@ -46,7 +48,7 @@ def _rest(state: TestState, i: int) -> None:
     state.older_z[i] = np.nan
 
 
-@njit(cache=True)
+@uncounted
 def _cut_off(y: Floats, doubtful: int) -> bool:
     """Inputs and all sensors missing together: the connection or the service was away, no sensor is lost."""
     if doubtful == 0:
@@ -57,7 +59,7 @@ def _cut_off(y: Floats, doubtful: int) -> bool:
     return True
 
 
-@njit(cache=True)
+@uncounted
 def test_cycle(
     design: TestDesign,
     state: TestState,

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import numpy as np
-from numba import njit
 
 from softsensor.detection.elementary import error_function
 from softsensor.detection.state_of_tests import (
@@ -15,6 +14,7 @@ from softsensor.detection.state_of_tests import (
     TestDesign,
     TestState,
 )
+from softsensor.estimation.compiling import uncounted
 
 MIN_REPEATS = 10
 """Fewer equal readings than this are never called stuck."""
@@ -26,7 +26,7 @@ WARM_UP = 200
 """Readings before the share of equal neighbours says anything about a sensor's resolution."""
 
 
-@njit(cache=True)
+@uncounted
 def test_stuck(design: TestDesign, state: TestState, i: int, value: float) -> int:
     """A run of equal readings is judged by how often this very sensor repeats itself, and by its resolution.
 
@@ -59,7 +59,7 @@ def test_stuck(design: TestDesign, state: TestState, i: int, value: float) -> in
     return event
 
 
-@njit(cache=True)
+@uncounted
 def test_lost(design: TestDesign, state: TestState, i: int, missing: bool) -> int:
     state.missing[i] = state.missing[i] + 1 if missing else 0
     if state.lost[i] == 0 and state.missing[i] > design.lost_after[i]:
@@ -71,7 +71,7 @@ def test_lost(design: TestDesign, state: TestState, i: int, missing: bool) -> in
     return 0
 
 
-@njit(cache=True)
+@uncounted
 def test_spike(design: TestDesign, state: TestState, i: int, z: float) -> int:
     """One reading far out between neighbours that agree, seen one cycle later; the diagnosis does not get to see it.
 

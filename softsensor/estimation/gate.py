@@ -15,8 +15,7 @@ fractionator, 30 sd on one of two temperatures).
 
 from __future__ import annotations
 
-from numba import njit
-
+from softsensor.estimation.compiling import uncounted
 from softsensor.estimation.kernel import Floats, Ints
 
 FOLLOWED = 3
@@ -25,7 +24,7 @@ COUNTED = 0.5
 """Share of the gate beyond which a reading counts in a row."""
 
 
-@njit(cache=True)
+@uncounted
 def gates_open(streak: Ints) -> bool:
     """Has a sensor begun to be followed in the last FOLLOWED cycles? To be asked before a cycle's first reading."""
     for i in range(len(streak)):  # noqa: SIM110 (compiled)
@@ -34,7 +33,7 @@ def gates_open(streak: Ints) -> bool:
     return False
 
 
-@njit(cache=True)
+@uncounted
 def passes(gate: Floats, streak: Ints, i: int, innovation: float, sd: float) -> bool:
     """Is the reading of sensor i used, where the gates are not open? ``streak`` (n_sensors,) is brought up to date: the
     length of the row, twice FOLLOWED at most, with the sign of its side.

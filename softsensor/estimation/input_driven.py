@@ -2,12 +2,11 @@
 
 from __future__ import annotations
 
-from numba import njit
-
+from softsensor.estimation.compiling import uncounted
 from softsensor.estimation.kernel import EstimatorState, Floats, Kernel
 
 
-@njit(cache=True)
+@uncounted
 def accept_inputs(kernel: Kernel, state: EstimatorState, u: Floats) -> None:
     """Put this cycle's inputs (engineering units) at the head of the ring; the first ones are taken as steady."""
     first = state.head[0] < 0
@@ -27,14 +26,14 @@ def accept_inputs(kernel: Kernel, state: EstimatorState, u: Floats) -> None:
     state.head[0] = head
 
 
-@njit(cache=True)
+@uncounted
 def past_column(head: int, delay: int, ring: int) -> int:
     """Column of u(k - delay) in the ring of past inputs; 0 <= delay < ring."""
     column = head - delay
     return column if column >= 0 else column + ring
 
 
-@njit(cache=True)
+@uncounted
 def input_driven_outputs(kernel: Kernel, state: EstimatorState, out: Floats) -> None:
     """Operating point plus input-driven part of every output at this cycle, into ``out``."""
     head, ring, u_past, x_in = state.head[0], kernel.ring, state.u_past, state.x_in
@@ -51,7 +50,7 @@ def input_driven_outputs(kernel: Kernel, state: EstimatorState, out: Floats) -> 
         out[kernel.block_row[b]] += total
 
 
-@njit(cache=True)
+@uncounted
 def advance_input_driven(kernel: Kernel, state: EstimatorState, work: Floats) -> None:
     """x(k+1) = phi x(k) + gamma_recent u(k-m) + gamma_older u(k-m-1), path by path."""
     head, ring, u_past, x_in = state.head[0], kernel.ring, state.u_past, state.x_in

@@ -10,15 +10,15 @@ noise); checked against a dense filter in the tests.
 from __future__ import annotations
 
 import numpy as np
-from numba import njit
 
+from softsensor.estimation.compiling import uncounted
 from softsensor.estimation.kernel import Floats, Kernel
 
 ROUNDING = 1e-12
 """What rounding alone may leave of a variance that is zero, as a share of the largest state's variance."""
 
 
-@njit(cache=True)
+@uncounted
 def row_mean(kernel: Kernel, x: Floats, row: int) -> float:
     """C_row x."""
     total = 0.0
@@ -27,7 +27,7 @@ def row_mean(kernel: Kernel, x: Floats, row: int) -> float:
     return total
 
 
-@njit(cache=True)
+@uncounted
 def row_covariance(kernel: Kernel, P: Floats, row: int, v: Floats) -> float:
     """v = P C_row' into ``v``; returns C_row P C_row'."""
     first, stop, total = kernel.c_ptr[row], kernel.c_ptr[row + 1], 0.0
@@ -42,7 +42,7 @@ def row_covariance(kernel: Kernel, P: Floats, row: int, v: Floats) -> float:
     return total
 
 
-@njit(cache=True)
+@uncounted
 def row_variance(kernel: Kernel, P: Floats, row: int) -> float:
     """C_row P C_row' alone, the same bits as from :func:`row_covariance`."""
     first, stop, total = kernel.c_ptr[row], kernel.c_ptr[row + 1], 0.0
@@ -54,7 +54,7 @@ def row_variance(kernel: Kernel, P: Floats, row: int) -> float:
     return total
 
 
-@njit(cache=True)
+@uncounted
 def unless_rounding(kernel: Kernel, P: Floats, row: int, variance: float) -> float:
     """The variance of an output without noise; 0 where a true zero has come out below zero by rounding alone.
 
@@ -71,13 +71,13 @@ def unless_rounding(kernel: Kernel, P: Floats, row: int, variance: float) -> flo
     return 0.0 if variance >= -ROUNDING * weight * weight * largest else variance
 
 
-@njit(cache=True)
+@uncounted
 def output_variance(kernel: Kernel, P: Floats, row: int, v: Floats) -> float:
     """C_row P C_row' of an output without noise, and P C_row' into ``v``; a zero that rounding made negative is 0."""
     return unless_rounding(kernel, P, row, row_covariance(kernel, P, row, v))
 
 
-@njit(cache=True)
+@uncounted
 def correct(
     kernel: Kernel, x: Floats, P: Floats, row: int, deviation: float, r: float, v: Floats, K: Floats
 ) -> float:
@@ -103,7 +103,7 @@ def correct(
     return float(s)
 
 
-@njit(cache=True)
+@uncounted
 def predict_into(kernel: Kernel, x: Floats, P: Floats, v: Floats, M: Floats) -> None:
     """x = A x;  M = A P A' + diag(q), exactly symmetric, with ``v`` (n,) as work space.
 
@@ -138,7 +138,7 @@ def predict_into(kernel: Kernel, x: Floats, P: Floats, v: Floats, M: Floats) -> 
         M[i, i] += kernel.q[i]
 
 
-@njit(cache=True)
+@uncounted
 def _move(kernel: Kernel, P: Floats, M: Floats) -> None:
     """Copy what is only moved; columns in between are written over afterwards."""
     for a in range(len(kernel.moved_start)):
@@ -151,7 +151,7 @@ def _move(kernel: Kernel, P: Floats, M: Floats) -> None:
                     after[k] = before[k]
 
 
-@njit(cache=True)
+@uncounted
 def _predict_mean(kernel: Kernel, x: Floats, v: Floats) -> None:
     for i in range(len(v)):
         total = 0.0
@@ -162,8 +162,16 @@ def _predict_mean(kernel: Kernel, x: Floats, v: Floats) -> None:
         x[i] = v[i]
 
 
-@njit(cache=True)
+@uncounted
+def copy_into(M: Floats, P: Floats) -> None:
+    """P = M, entry by entry."""
+    for i in range(M.shape[0]):
+        for j in range(M.shape[1]):
+            P[i, j] = M[i, j]
+
+
+@uncounted
 def predict(kernel: Kernel, x: Floats, P: Floats, v: Floats, M: Floats) -> None:
     """As :func:`predict_into`, in place, with ``v`` (n,) and ``M`` (n, n) as work space."""
     predict_into(kernel, x, P, v, M)
-    P[:] = M
+    copy_into(M, P)
