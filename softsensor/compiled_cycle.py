@@ -219,7 +219,7 @@ def run_block(
 
     ``est`` and ``tests`` are work arrays: they hold the state after the last cycle run.
     """
-    return int(_loop(kernel, est, design, tests, data, out, testing, _work_space(kernel)))
+    return int(_loop(kernel, est, design, tests, known, data, out, testing, _work_space(kernel)))
 
 
 @uncounted
@@ -228,6 +228,7 @@ def _loop(
     est: EstimatorState,
     design: TestDesign,
     tests: TestState,
+    known: Standing,
     data: BlockInputs,
     out: BlockOutputs,
     testing: bool,

@@ -21,10 +21,10 @@ from __future__ import annotations
 from typing import NamedTuple
 
 import numpy as np
-from numba import njit
 
 from softsensor.detection.elementary import error_function, exponential, logarithm
 from softsensor.detection.signatures import Hypothesis
+from softsensor.estimation.compiling import allocating, uncounted
 from softsensor.estimation.kernel import Floats, Ints
 
 BLOCK = 16
@@ -107,7 +107,7 @@ def standing(
     )
 
 
-@njit(cache=True)
+@uncounted
 def _signature(table: Floats, ramp: Ints, j: int, i: int, h: int) -> float:
     """Of block j for sensor i; beyond the table a step stays as it was, a ramp goes on."""
     last = table.shape[0] - 1
@@ -118,7 +118,7 @@ def _signature(table: Floats, ramp: Ints, j: int, i: int, h: int) -> float:
     return float(table[last, i, h] + (j - last) * (table[last, i, h] - table[last - 1, i, h]))
 
 
-@njit(cache=True)
+@uncounted
 def _add_block(known: Standing, evidence: Evidence, first: int) -> None:
     """The block that began at cycle ``first`` into the sums of every onset."""
     m, last = len(known.tolerance), known.table.shape[0] - 1
@@ -142,7 +142,7 @@ def _add_block(known: Standing, evidence: Evidence, first: int) -> None:
                     D[h] += whole * value * value
 
 
-@njit(cache=True)
+@allocating
 def _make_room(evidence: Evidence) -> int:
     """The first free place; gives up the onset that its neighbours can best stand for. The first one stays."""
     size = len(evidence.onset)
@@ -162,7 +162,7 @@ def _make_room(evidence: Evidence) -> int:
     return size - 1
 
 
-@njit(cache=True)
+@allocating
 def _begin_onset(evidence: Evidence, cycle: int) -> None:
     place = _make_room(evidence)
     evidence.onset[place] = cycle
@@ -170,14 +170,14 @@ def _begin_onset(evidence: Evidence, cycle: int) -> None:
     evidence.D[place] = 0.0
 
 
-@njit(cache=True)
+@uncounted
 def _upper(x: float) -> float:
     """P(Z > x) of a standard normal variable."""
     half = 0.5 * (1.0 - error_function(abs(x) * 0.7071067811865476))
     return half if x >= 0.0 else 1.0 - half
 
 
-@njit(cache=True)
+@uncounted
 def _span(evidence: Evidence, c: int, now: int) -> float:
     """Cycles that an onset stands for: half-way to its neighbours."""
     onset = evidence.onset
@@ -186,7 +186,7 @@ def _span(evidence: Evidence, c: int, now: int) -> float:
     return float(max(0.5 * (later - earlier), 1.0))
 
 
-@njit(cache=True)
+@allocating
 def weigh_onsets(known: Standing, evidence: Evidence, now: int) -> None:
     """Bring ``beyond`` up to date at cycle ``now``."""
     size, hypotheses, m = len(evidence.onset), known.table.shape[2], len(known.tolerance)
@@ -228,7 +228,7 @@ def weigh_onsets(known: Standing, evidence: Evidence, now: int) -> None:
         evidence.beyond[i] = beyond[i] / total
 
 
-@njit(cache=True)
+@uncounted
 def _whiten_into(known: Standing, innovation: Floats, block: Floats) -> None:
     m = len(known.tolerance)
     for i in range(m):
@@ -244,18 +244,23 @@ def _whiten_into(known: Standing, innovation: Floats, block: Floats) -> None:
     block[m] += 1.0
 
 
-@njit(cache=True)
+@allocating
+def _forget(evidence: Evidence) -> None:
+    evidence.onset[:] = -1
+    evidence.N[:] = 0.0
+    evidence.D[:] = 0.0
+    evidence.block[:] = 0.0
+    evidence.beyond[:] = 0.0
+
+
+@uncounted
 def follow_conformance(
     known: Standing, evidence: Evidence, innovation: Floats, cycle: int, valid_from: int, resting: bool
 ) -> None:
     """One cycle. What comes before ``valid_from`` and while the tests rest does not count; a rest forgets everything."""
     if resting or cycle < valid_from:
         if evidence.onset[0] >= 0:
-            evidence.onset[:] = -1
-            evidence.N[:] = 0.0
-            evidence.D[:] = 0.0
-            evidence.block[:] = 0.0
-            evidence.beyond[:] = 0.0
+            _forget(evidence)
         return
     place = cycle % BLOCK
     if place == 0:
@@ -265,6 +270,7 @@ def follow_conformance(
     _whiten_into(known, innovation, evidence.block)
     if place == BLOCK - 1:
         _add_block(known, evidence, cycle - (BLOCK - 1))
-        evidence.block[:] = 0.0
+        for i in range(len(evidence.block)):
+            evidence.block[i] = 0.0
         if (cycle // BLOCK) % LOOK_EVERY_BLOCKS == LOOK_EVERY_BLOCKS - 1:
             weigh_onsets(known, evidence, cycle + 1)
