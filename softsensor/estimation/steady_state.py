@@ -59,14 +59,18 @@ class Stretch(NamedTuple):
 
     def doubled(self) -> Stretch:
         """A stretch of twice the length."""
-        identity = np.eye(self.A.shape[0])
-        carry = solve(identity + self.H @ self.G, np.hstack((self.A, self.H)), check_finite=False)
+        return self.then(self)
+
+    def then(self, later: Stretch) -> Stretch:
+        """This stretch and ``later`` after it, as one."""
         n = self.A.shape[0]
-        inner = solve(identity + self.G @ self.H, self.G, check_finite=False)
+        identity = np.eye(n)
+        carry = solve(identity + self.H @ later.G, np.hstack((self.A, self.H)), check_finite=False)
+        inner = solve(identity + later.G @ self.H, later.G, check_finite=False)
         return Stretch(
-            self.A @ carry[:, :n],
+            later.A @ carry[:, :n],
             _symmetric(self.G + self.A.T @ inner @ self.A),
-            _symmetric(self.H + self.A @ carry[:, n:] @ self.A.T),
+            _symmetric(later.H + later.A @ carry[:, n:] @ later.A.T),
         )
 
 
@@ -190,7 +194,7 @@ def _settled(first: Stretch, initial: Matrix | None) -> Matrix:
         following = stretch.doubled()
         if not np.isfinite(following.H).all():
             raise RealisationError("the estimator's covariance does not settle: it grows without limit")
-        scale = np.sqrt(np.diag(following.H))
+        scale = np.sqrt(np.abs(np.diag(following.H)))
         small = np.abs(following.H - stretch.H) <= 1e-14 * np.outer(scale, scale)
         quiet = quiet + 1 if small.all() else 0
         stretch = following

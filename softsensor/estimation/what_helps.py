@@ -26,8 +26,8 @@ LAB_INTERVAL = 86400.0
 """Seconds between laboratory results where nothing else is said."""
 GROWTH_TIMES = (3600.0, 8 * 3600.0, 86400.0)
 """Seconds after a laboratory result."""
-_MOST_RESULTS = 20_000
-_SAME = 1e-9
+_MOST_DOUBLINGS = 40
+_SAME, _LEAST_SHARE = 1e-9, 1e-9
 
 
 @dataclass(frozen=True, slots=True)
@@ -115,15 +115,18 @@ class _Reduced:
 
     def later(self, prior: Matrix, cycles: int) -> Matrix:
         """The prior covariance so many cycles later."""
-        place = 0
-        while cycles:
+        whole = self.stretch(cycles)
+        return prior if whole is None else whole.after(prior)
+
+    def stretch(self, cycles: int) -> Stretch | None:
+        """So many cycles as one; None for none."""
+        whole: Stretch | None = None
+        for place in range(cycles.bit_length()):
             while len(self.powers) <= place:
                 self.powers.append(self.powers[-1].doubled())
-            if cycles & 1:
-                prior = self.powers[place].after(prior)
-            cycles >>= 1
-            place += 1
-        return prior
+            if cycles >> place & 1:
+                whole = self.powers[place] if whole is None else whole.then(self.powers[place])
+        return whole
 
     def corrected(self, prior: Matrix) -> Matrix:
         """After the cycle's readings."""
@@ -157,16 +160,16 @@ class _Result:
         reduced, posterior = self._reduced(seeing)
         if reduced is None:
             return math.inf
-        one, before = reduced.powers[0], math.inf
-        for _ in range(_MOST_RESULTS):
-            prior = reduced.later(one.A @ posterior @ one.A.T + one.H, cycles - 1)
-            posterior = reduced.corrected(prior)
-            sd = self._sd(reduced, posterior)
-            if abs(sd - before) <= _SAME * sd:
+        one = reduced.powers[0]
+        prior = reduced.later(one.A @ posterior @ one.A.T + one.H, cycles - 1)
+        with_result = Stretch(one.A, one.G + np.outer(reduced.seen, reduced.seen) / self.sd**2, one.H)
+        between, sd = reduced.stretch(cycles - 1), self._sd(reduced, reduced.corrected(prior))
+        periods = with_result if between is None else with_result.then(between)
+        for _ in range(_MOST_DOUBLINGS):
+            before, sd = sd, self._sd(reduced, reduced.corrected(periods.after(prior)))
+            if abs(sd - before) <= _SAME * max(sd, _LEAST_SHARE * before):
                 break
-            before = sd
-            gained = posterior @ reduced.seen
-            posterior = posterior - np.outer(gained, gained) / (float(reduced.seen @ gained) + self.sd**2)
+            periods = periods.doubled()
         return sd
 
     def _sd(self, reduced: _Reduced, P: Matrix) -> float:

@@ -96,3 +96,17 @@ def test_an_offset_that_only_the_laboratory_sees_is_helped_by_the_laboratory_alo
     assert item.changes[0].what == "laboratory results twice as often"
     assert item.changes[0].sd < 0.8 * item.sd
     assert item.changes[1].sd > 0.99 * item.sd
+
+
+def test_a_constant_offset_is_learnt_from_the_laboratory_in_the_end() -> None:
+    """It never settles within any number of results: stretches of results are doubled until nothing changes."""
+    model = with_offset()
+    (estimate,) = model.spec.estimates
+    constant = build_plant_model(
+        replace(model.spec, estimates=(replace(estimate, bias_walk_sd=0.0, bias_initial_sd=0.3),))
+    )
+    without = build_plant_model(
+        replace(model.spec, estimates=(replace(estimate, bias_walk_sd=0.0, bias_initial_sd=0.0),))
+    )
+    (learnt,), (never_there,) = prospects(constant), prospects(without)
+    assert learnt.sd == pytest.approx(never_there.sd, rel=1e-5)
