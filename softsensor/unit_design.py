@@ -26,7 +26,7 @@ WINDOW = 2048
 """Innovations kept for the diagnosis."""
 SETTLED = 20_000
 """Cycles after a bias began at which what it leaves is taken as settled."""
-LEAST_REFERENCE, LARGEST_REFERENCE = 0.125, 1.0
+LEAST_REFERENCE, LARGEST_REFERENCE = 0.125, 0.75
 GROSS_REFERENCE = 0.5
 """For a sensor whose tolerance-sized bias the filter absorbs (half the shift below LEAST_REFERENCE): its sums then watch
 for gross steps only, because a more sensitive test would answer to every small misfit of the model."""

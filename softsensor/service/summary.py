@@ -49,7 +49,7 @@ class RunSummary:
         self.notes += results.notes
 
     def _count_tests(self, results: CycleResults) -> None:
-        top = np.maximum(results.high, results.low)
+        top = np.where(results.left_out != 0, 0.0, np.maximum(results.high, results.low))
         for row in top[np.any(top > DOWN, axis=1)]:
             rising = (row > 1.0) & ~self._up
             self._ups += rising

@@ -6,13 +6,14 @@ inputs and readings, through its own cycle.
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from collections.abc import Iterable, Iterator
 from dataclasses import dataclass, field
+from functools import lru_cache
 from itertools import pairwise
 
 import numpy as np
-from independent.dense_filter import input_driven, stochastic
-from independent.transfer_paths import Array
+from independent.dense_filter import operating_points, output_names, stochastic
+from independent.transfer_paths import Array, continuous, step_response
 from numba import njit
 
 from plant_models.specification import UnitSpec
@@ -21,7 +22,9 @@ from softsensor.detection.flags import Flag, Note
 from softsensor.readings_of_cycle import CycleReadings
 from softsensor.service.replay import Replay
 
-BLOCK = 4096
+BLOCK = 8192
+MOVES = 0.005
+"""Share of cycles in which an input changes."""
 
 
 @dataclass(frozen=True)
@@ -29,7 +32,8 @@ class Case:
     """One stretch of plant life: N cycles of true inputs u (N, n_inputs), and what is wrong.
 
     bias (N, n_sensors) is added to the readings, input_bias (N, n_inputs) to the inputs' readings, jump (N,
-    n_disturbances) to the disturbances; ``truth`` is the plant's own specification where it is not the model's.
+    n_disturbances) to the disturbances; noise (N, n_sensors) is a factor on the sensors' noise; ``truth`` is the plant's
+    own specification of its paths where it is not the model's.
     """
 
     u: Array
@@ -37,7 +41,6 @@ class Case:
     input_bias: Array | None = None
     jump: Array | None = None
     noise: Array | None = None
-    """(N, n_sensors) factor on the sensors' noise."""
     truth: UnitSpec | None = None
 
 
@@ -65,6 +68,28 @@ def _course(
     return out
 
 
+@lru_cache(maxsize=256)
+def _unit_step(spec: UnitSpec, path: int, count: int) -> Array:
+    return step_response(continuous(spec.paths[path], spec.sample_time), count)
+
+
+def driven_by(spec: UnitSpec, u: Array) -> Array:
+    """What the inputs (N, n_inputs) make of every output (N, n_outputs), from steady state; stable paths only."""
+    names, out = output_names(spec), np.tile(operating_points(spec), (len(u), 1))
+    for j, item in enumerate(spec.inputs):
+        deviation = u[:, j] - item.operating_point
+        changes = np.flatnonzero(np.diff(deviation, prepend=deviation[0]))
+        for p, path in enumerate(spec.paths):
+            if path.source != item.tag:
+                continue
+            rise, row = _unit_step(spec, p, len(u)), names.index(path.target)
+            at_start = continuous(path, spec.sample_time)
+            out[:, row] += deviation[0] * float(at_start.c @ at_start.steady + at_start.d)
+            for k in changes:
+                out[k:, row] += (deviation[k] - deviation[k - 1]) * rise[: len(u) - k]
+    return out
+
+
 @dataclass
 class Plant:
     """Draws readings of a unit; one generator for everything, so that a seed gives the same plant life anywhere."""
@@ -78,10 +103,9 @@ class Plant:
         values, vectors = np.linalg.eigh(dense.P0)
         start = vectors * np.sqrt(np.maximum(values, 0.0))
         noise = np.array([item.noise_sd for item in self.spec.sensors])
-        at = np.flatnonzero(np.diag(dense.Q) > 0.0)
         self.random = np.random.default_rng(self.seed)
         self.system = (dense.A, dense.C, np.sqrt(np.diag(dense.Q)), start, noise)
-        self.driven = at
+        self.driven = np.flatnonzero(np.diag(dense.Q) > 0.0)
 
     def readings(self, case: Case) -> tuple[Array, Array]:
         """True outputs (N, n_sensors + n_estimates) and readings (N, n_sensors), from a stationary start."""
@@ -90,10 +114,20 @@ class Plant:
         x = start @ self.random.standard_normal(len(A))
         jump = case.jump if case.jump is not None else np.zeros((n, len(self.driven)))
         truth = _course(A, C, root, x, jump, self.driven, self.random)
-        truth += input_driven(case.truth or self.spec, case.u)
+        truth += driven_by(case.truth or self.spec, case.u)
         spread = noise if case.noise is None else noise * case.noise
         y = truth[:, :m] + spread * self.random.standard_normal((n, m))
         return truth, y if case.bias is None else y + case.bias
+
+    def life(self, cycles: int) -> Iterator[Array]:
+        """Readings (up to BLOCK, n_sensors) of a plant without fault whose inputs stay where they are, block by block."""
+        A, C, root, start, noise = self.system
+        x, m = start @ self.random.standard_normal(len(A)), len(noise)
+        still = operating_points(self.spec)[:m]
+        for first in range(0, cycles, BLOCK):
+            n = min(BLOCK, cycles - first)
+            truth = _course(A, C, root, x, np.zeros((n, 0)), self.driven[:0], self.random)[:, :m] + still
+            yield truth + noise * self.random.standard_normal((n, m))
 
 
 @dataclass(frozen=True)
@@ -104,6 +138,10 @@ class Seen:
     notes: list[Note]
     parts: list[CycleResults]
 
+    def first(self, *kinds: str) -> Flag | None:
+        """The first flag that was opened, of these kinds."""
+        return next((flag for flag in self.flags if flag.cleared is None and flag.kind in kinds), None)
+
 
 def moving_inputs(spec: UnitSpec, cycles: int, random: np.random.Generator, share: float = 0.5) -> Array:
     """(cycles, n_inputs) Steps within ``share`` of each input's working range, on average every 200 cycles."""
@@ -111,7 +149,7 @@ def moving_inputs(spec: UnitSpec, cycles: int, random: np.random.Generator, shar
     for j, item in enumerate(spec.inputs):
         low, high = item.validated_range or item.range
         half = 0.5 * share * (high - low)
-        changes = np.flatnonzero(random.random(cycles) < 0.005)
+        changes = np.flatnonzero(random.random(cycles) < MOVES)
         edges = [0, *changes.tolist(), cycles]
         for first, stop in pairwise(edges):
             u[first:stop, j] = item.operating_point + random.uniform(-half, half)
@@ -123,21 +161,26 @@ def still_inputs(spec: UnitSpec, cycles: int) -> Array:
     return np.tile([item.operating_point for item in spec.inputs], (cycles, 1))
 
 
+def replay_of(design: UnitDesign, blocks: Iterable[tuple[Array, Array]]) -> Replay:
+    """The program's replay of blocks of inputs and readings."""
+
+    def parts() -> Iterator[tuple[CycleReadings, tuple[()]]]:
+        first, sample = 0, design.detection.sample_us
+        for u, y in blocks:
+            times = sample * (first + np.arange(len(y), dtype=np.int64))
+            quality = np.where(np.isfinite(y), 0, 3).astype(np.int8)
+            yield CycleReadings(times, u, np.zeros(u.shape, dtype=np.int8), y, quality), ()
+            first += len(y)
+
+    return Replay(design, parts())
+
+
 def seen_by(design: UnitDesign, case: Case, y: Array, keep: bool = False) -> Seen:
     """Run the program's cycle over the readings of a case."""
-    n, sample = len(y), design.detection.sample_us
     u = case.u if case.input_bias is None else case.u + case.input_bias
-    quality = np.where(np.isfinite(y), 0, 3).astype(np.int8)
-    good = np.zeros(u.shape, dtype=np.int8)
-    times = sample * np.arange(n, dtype=np.int64)
-
-    def parts() -> Iterator[tuple[CycleReadings, list[object]]]:
-        for first in range(0, n, BLOCK):
-            row = slice(first, first + BLOCK)
-            yield CycleReadings(times[row], u[row], good[row], y[row], quality[row]), []
-
+    rows = [slice(first, first + BLOCK) for first in range(0, len(y), BLOCK)]
     found = Seen([], [], [])
-    for stretch in Replay(design, parts()).stretches():  # type: ignore[arg-type]
+    for stretch in replay_of(design, ((u[row], y[row]) for row in rows)).stretches():
         found.flags.extend(stretch.results.flags)
         found.notes.extend(stretch.results.notes)
         if keep:

@@ -41,7 +41,7 @@ def test_the_slow_reference_value_is_half_the_shift_that_really_remains(name: st
     for shift, bank in zip(shifts, design.detection.tests.reference, strict=True):
         half = 0.5 * shift
         slow, middle, fast = bank
-        assert slow == (0.5 if half < 0.125 else min(half, 1.0))
+        assert slow == (0.5 if half < 0.125 else min(half, 0.75))
         assert fast == 1.5
         assert np.isclose(middle / slow, fast / middle, rtol=1e-12)
 
