@@ -386,6 +386,8 @@ def _act(design: DetectionDesign, outcome: FollowUp, tests: TestState, moment: M
         return outcome
     only = explanations(design)[verdict.best] if worth and not due else None
     verdict, found = look(design, tests, use, only=only)
+    if only is not None and _worth_a_flag(design, verdict, found, waited):
+        verdict, found = look(design, tests, use)
     if episode is not None:
         episode = replace(episode, weighed=moment.cycle)
         outcome = replace(outcome, book=replace(outcome.book, episode=episode))
