@@ -39,6 +39,8 @@ _WIDTH = 2e-3
 """Relative width to which a size is solved."""
 _CLOSE = 1e-3
 """A probability within this of the wanted one is the wanted one."""
+_NEARLY = 5e-3
+"""... so near to it that a time is given: where a fault is absorbed the last half percent may take hours."""
 _FURTHEST = 6.0
 """Probits beyond this are taken as this."""
 
@@ -171,7 +173,7 @@ def cycles_until_found(
         last = int(course.ends[-1]) if course.ends.size else 0
         for side in _sides(course):
             missed = _Search(one, course, last, side).missed(size)
-            late = np.flatnonzero(missed <= 1.0 - share + _CLOSE)
+            late = np.flatnonzero(missed <= 1.0 - share + _NEARLY)
             if late.size:
                 found = min(int(course.ends[late[0]]), last if found is None else found)
     return found

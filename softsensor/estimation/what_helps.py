@@ -9,13 +9,15 @@ limit.
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
 from scipy.linalg import solve
 
+from plant_models.building import build_plant_model
 from plant_models.plant_model import PlantModel, StochasticPart
+from plant_models.second_instrument import SECOND, with_second
 from softsensor.estimation.observability import after_result
 from softsensor.estimation.steady_state import Rows, SteadyState, Stretch, measured_rows, settle
 
@@ -63,26 +65,17 @@ def prospects(model: PlantModel, lab_interval: float = LAB_INTERVAL) -> tuple[Pr
     :param lab_interval: seconds between two laboratory results of one estimate.
     :raises RealisationError: the filter does not settle.
     """
-    spec, part, sensors = model.spec, model.stochastic, range(len(model.spec.sensors))
+    spec, part = model.spec, model.stochastic
     everything = settle(part, measured_rows(model))
-    variants = [
-        (
-            f"{spec.sensors[i].tag} lost",
-            settle(part, measured_rows(model, [j for j in sensors if j != i])),
-            True,
-        )
-        for i in sensors
-    ]
-    variants += [
-        (f"a second {spec.sensors[i].tag}", settle(part, measured_rows(model, [*sensors, i])), False)
-        for i in sensors
-    ]
+    variants = _variants(model)
     found = []
     for index, estimate in enumerate(spec.estimates):
-        row, scale = part.C[len(spec.sensors) + index], estimate.interval_scale
+        place, scale = len(spec.sensors) + index, estimate.interval_scale
+        row = part.C[place]
         if estimate.lab is None:
             changes = [
-                Change(what, scale * math.sqrt(state.variance(row)), loses) for what, state, loses in variants
+                Change(item.what, scale * math.sqrt(item.state.variance(item.row_of(place))), item.loses)
+                for item in variants
             ]
             sd = scale * math.sqrt(everything.variance(row))
             found.append(Prospects(estimate.tag, estimate.unit, None, sd, _sorted(changes), ()))
@@ -90,7 +83,12 @@ def prospects(model: PlantModel, lab_interval: float = LAB_INTERVAL) -> tuple[Pr
         result = _Result(part, row, estimate.lab.sd, scale)
         cycles = max(1, round(lab_interval / spec.sample_time))
         changes = [
-            Change(what, result.sd_before_next(state, cycles), loses) for what, state, loses in variants
+            Change(
+                item.what,
+                replace(result, part=item.part, row=item.row_of(place)).sd_before_next(item.state, cycles),
+                item.loses,
+            )
+            for item in variants
         ]
         oftener = result.sd_before_next(everything, max(1, cycles // 2))
         changes.append(Change("laboratory results twice as often", oftener, False))
@@ -99,6 +97,41 @@ def prospects(model: PlantModel, lab_interval: float = LAB_INTERVAL) -> tuple[Pr
         sd = result.sd_before_next(everything, cycles)
         found.append(Prospects(estimate.tag, estimate.unit, lab_interval, sd, _sorted(changes), growth))
     return tuple(found)
+
+
+@dataclass(frozen=True, eq=False)
+class _Variant:
+    """What is measured otherwise: the stochastic part, its settled filter, and by how many rows the estimates move on."""
+
+    what: str
+    part: StochasticPart
+    state: SteadyState
+    loses: bool
+    moved: int
+
+    def row_of(self, place: int) -> Vector:
+        """The row of an estimate that was at ``place`` among the outputs."""
+        row: Vector = self.part.C[place + self.moved]
+        return row
+
+
+def _variants(model: PlantModel) -> list[_Variant]:
+    """Each sensor lost; a second instrument beside each, with an offset of its own where the first one has one."""
+    spec, part, sensors = model.spec, model.stochastic, range(len(model.spec.sensors))
+    found = []
+    for i, sensor in enumerate(spec.sensors):
+        state = settle(part, measured_rows(model, [j for j in sensors if j != i]))
+        found.append(_Variant(f"{sensor.tag} lost", part, state, True, 0))
+    for i, sensor in enumerate(spec.sensors):
+        what = SECOND.format(sensor.tag)
+        if sensor.bias_walk_sd > 0.0 or sensor.bias_initial_sd > 0.0:
+            larger = build_plant_model(with_second(spec, i))
+            found.append(
+                _Variant(what, larger.stochastic, settle(larger.stochastic, measured_rows(larger)), False, 1)
+            )
+        else:
+            found.append(_Variant(what, part, settle(part, measured_rows(model, [*sensors, i])), False, 0))
+    return found
 
 
 def _sorted(changes: list[Change]) -> tuple[Change, ...]:

@@ -6,17 +6,15 @@ are designed as for any other sensor.
 
 from __future__ import annotations
 
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 
 from plant_models.building import build_plant_model
 from plant_models.plant_model import PlantModel
-from plant_models.specification import UnitSpec
+from plant_models.second_instrument import with_second
 from softsensor.detection.absorption import sensor_shifts
 from softsensor.detection.isolability import Diagnostician
 from softsensor.detection.sheet import SheetLine, sheet_line
 from softsensor.unit_design import design_unit
-
-SECOND = "a second {}"
 
 
 @dataclass(frozen=True, slots=True)
@@ -30,14 +28,6 @@ class Mend:
     beside: str | None
     then: SheetLine | None
     whole: bool
-
-
-def with_second(spec: UnitSpec, index: int) -> UnitSpec:
-    """The unit with a second instrument beside one sensor, last among the sensors."""
-    first = spec.sensors[index]
-    tag = SECOND.format(first.tag)
-    paths = tuple(replace(path, target=tag) for path in spec.paths if path.target == first.tag)
-    return replace(spec, sensors=(*spec.sensors, replace(first, tag=tag)), paths=(*spec.paths, *paths))
 
 
 def mends(model: PlantModel, lines: tuple[SheetLine, ...]) -> tuple[Mend, ...]:

@@ -12,6 +12,7 @@ import pytest
 
 from plant_models.building import build_plant_model
 from plant_models.plant_model import PlantModel
+from plant_models.second_instrument import with_second
 from plant_models.simulators import reactor_model_path
 from softsensor.estimation.observability import estimate_knowledge
 from softsensor.estimation.what_helps import GROWTH_TIMES, prospects
@@ -110,3 +111,26 @@ def test_a_constant_offset_is_learnt_from_the_laboratory_in_the_end() -> None:
     )
     (learnt,), (never_there,) = prospects(constant), prospects(without)
     assert learnt.sd == pytest.approx(never_there.sd, rel=1e-5)
+
+
+def test_a_second_instrument_has_an_offset_of_its_own() -> None:
+    """Two that drift apart are worth more than one read twice."""
+    spec = with_offset().spec
+    drifting = replace(spec.sensors[0], bias_walk_sd=0.05, bias_initial_sd=0.1)
+    model = build_plant_model(replace(spec, sensors=(drifting,)))
+    (item,) = prospects(model, lab_interval=4 * 3600.0)
+    changes = {change.what: change.sd for change in item.changes}
+    larger = build_plant_model(with_second(model.spec, 0))
+    (estimate,) = larger.spec.estimates
+    row = larger.stochastic.C[2]
+    assert estimate.lab is not None
+    R, lab = np.diag([drifting.noise_sd**2] * 2), np.array([[estimate.lab.sd**2]])
+    P = larger.stochastic.P0.copy()
+    for k in range(24 * 60):
+        P = corrected(P, larger.stochastic.C[:2], R)
+        sd = estimate.interval_scale * math.sqrt(float(row @ P @ row))
+        if k % 24 == 23:
+            P = corrected(P, row[None, :], lab)
+        P = larger.stochastic.A @ P @ larger.stochastic.A.T + np.diag(larger.stochastic.q)
+    assert changes["a second AI4101"] == pytest.approx(sd, rel=1e-6)
+    assert changes["a second AI4101"] < 0.99 * item.sd

@@ -9,9 +9,10 @@ import numpy as np
 import pytest
 
 from plant_models.building import build_plant_model
+from plant_models.second_instrument import with_second
 from plant_models.simulators import reactor_model_path
 from softsensor.detection.sheet import detectability_sheet
-from softsensor.service.second_instrument import mends, with_second
+from softsensor.service.second_instrument import mends
 from softsensor.unit_design import design_unit, load_model
 
 LIBRARY = Path(str(files("plant_models.library")))
