@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import os
 import sys
 from importlib.metadata import version
 from typing import Annotated
@@ -49,8 +50,15 @@ app.add_typer(db.app, name="db")
 app.add_typer(audit.app, name="audit")
 
 
+ONE_THREAD = ("OPENBLAS_NUM_THREADS", "MKL_NUM_THREADS")
+"""The program's matrices are small: threads of the linear algebra wait for each other, and on a busy machine take three
+times the processor's time. Read when numpy is first imported, which is after this module."""
+
+
 def main() -> None:
     """Run a command; exit status 0 done, 1 the answer is no, 2 bad input."""
+    for name in ONE_THREAD:
+        os.environ.setdefault(name, "1")
     try:
         app()
     except Problem as problem:
