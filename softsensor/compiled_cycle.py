@@ -21,7 +21,7 @@ from softsensor.estimation.kalman import (
     row_variance,
     unless_rounding,
 )
-from softsensor.estimation.kernel import EstimatorState, Floats, Ints, Kernel
+from softsensor.estimation.kernel import CHUNK, EstimatorState, Floats, Ints, Kernel, empty_states
 
 UNSOUND = -1
 """Returned where an innovation variance is not positive and finite."""
@@ -214,12 +214,29 @@ def run_block(
     data: BlockInputs,
     out: BlockOutputs,
     testing: bool,
+    kept: EstimatorState | None = None,
 ) -> int:
     """Run cycles until the block ends or, while ``testing``, a test has news; returns the number run, or UNSOUND.
 
-    ``est`` and ``tests`` are work arrays: they hold the state after the last cycle run.
+    ``est`` and ``tests`` are work arrays: they hold the state after the last cycle run. ``kept``: stacked states, filled
+    with the estimator's before each cycle whose number is a multiple of CHUNK.
     """
-    return int(_loop(kernel, est, design, tests, known, data, out, testing, _work_space(kernel)))
+    kept = empty_states(est, 0) if kept is None else kept
+    return int(_loop(kernel, est, design, tests, known, data, out, testing, kept, _work_space(kernel)))
+
+
+@uncounted
+def _keep(est: EstimatorState, P: Floats, kept: EstimatorState, place: int) -> None:
+    """The present state among the stacked ones; its covariance is ``P``."""
+    for i in range(len(est.x)):
+        kept.x[place, i] = est.x[i]
+    copy_into(P, kept.P[place])
+    for i in range(len(est.x_in)):
+        kept.x_in[place, i] = est.x_in[i]
+    copy_into(est.u_past, kept.u_past[place])
+    kept.head[place, 0] = est.head[0]
+    for i in range(len(est.streak)):
+        kept.streak[place, i] = est.streak[i]
 
 
 @uncounted
@@ -232,6 +249,7 @@ def _loop(
     data: BlockInputs,
     out: BlockOutputs,
     testing: bool,
+    kept: EstimatorState,
     space: WorkSpace,
 ) -> int:
     v, K, base, kept_out, x = space.v, space.K, space.base, space.kept_out, est.x
@@ -239,7 +257,11 @@ def _loop(
     copy_into(est.P, P)
     lab, cycles = 0, len(data.u)
     evidence = Evidence(tests.block, tests.onset, tests.onset_n, tests.onset_d, tests.beyond)
+    keep_at, place = (CHUNK - tests.cycle[0] % CHUNK) % CHUNK, 0
     for k in range(len(data.u)):
+        if k == keep_at and place < len(kept.head):
+            _keep(est, P, kept, place)
+            keep_at, place = keep_at + CHUNK, place + 1
         accept_inputs(kernel, est, data.u[k])
         input_driven_outputs(kernel, est, base)
         _innovate(kernel, x, P, base, k, data, out)

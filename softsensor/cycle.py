@@ -22,7 +22,16 @@ from softsensor.detection.follow_up import DetectionDesign, FollowUp, Moment, fo
 from softsensor.detection.people import Decision, Taken, ended, next_end, take
 from softsensor.detection.plant_states import StateChange, change_state
 from softsensor.detection.state_of_tests import TestState, initial_tests
-from softsensor.estimation.kernel import EstimatorState, Floats, Ints, Kernel, initial_state
+from softsensor.estimation.kernel import (
+    CHUNK,
+    EstimatorState,
+    Floats,
+    Ints,
+    Kernel,
+    empty_states,
+    initial_state,
+    state_of,
+)
 from softsensor.readings_of_cycle import CycleQuality, CycleReadings
 
 UNCERTAIN_VARIANCE = 9.0
@@ -70,16 +79,16 @@ class Digest:
     pending: bytes = b""
     rows: int = 0
 
-    def add(self, rows: list[bytes]) -> Digest:
-        """The digest after more rows."""
-        chain, pending, count = self.chain, [self.pending], self.rows
-        for row in rows:
-            pending.append(row)
-            count += 1
-            if count % DIGEST_CHUNK == 0:
-                chain = hashlib.sha256(chain + b"".join(pending)).digest()
-                pending = []
-        return Digest(chain, b"".join(pending), count)
+    def add(self, rows: NDArray[np.uint8], tail: bytes = b"") -> Digest:
+        """The digest after more rows (N, bytes); ``tail`` belongs to the last of them."""
+        chain, pending, row = self.chain, self.pending, 0
+        while row < len(rows):
+            stop = min(row + DIGEST_CHUNK - (self.rows + row) % DIGEST_CHUNK, len(rows))
+            pending += rows[row:stop].tobytes() + (tail if stop == len(rows) else b"")
+            if (self.rows + stop) % DIGEST_CHUNK == 0:
+                chain, pending = hashlib.sha256(chain + pending).digest(), b""
+            row = stop
+        return Digest(chain, pending, self.rows + len(rows))
 
     def mix(self, data: bytes) -> Digest:
         """The digest after bytes that belong to the coming row: what a laboratory result did."""
@@ -223,7 +232,7 @@ def block_inputs(
         in_use(book, first, len(readings), design.kernel.n_sensors),
         design.fresh,
         np.any(readings.u_quality > CycleQuality.UNCERTAIN, axis=1).astype(np.int64),
-        np.array([book.resting(first + k) for k in range(len(readings))], dtype=np.int64),
+        _resting(book, first, len(readings)),
         np.array([lab.cycle - first for lab in labs], dtype=np.int64),
         np.array([design.kernel.n_sensors + lab.estimate for lab in labs], dtype=np.int64),
         np.array([lab.value for lab in labs], dtype=np.float64),
@@ -231,14 +240,22 @@ def block_inputs(
     )
 
 
+def _resting(book: FlagBook, first: int, cycles: int) -> Ints:
+    """(cycles,) 1 where the unit's tests rest."""
+    if book.rest is None and not book.states:
+        return np.zeros(cycles, dtype=np.int64)
+    return np.array([book.resting(first + k) for k in range(cycles)], dtype=np.int64)
+
+
 def run_cycles(
     design: UnitDesign, state: CycleState, readings: CycleReadings, labs: tuple[LabAtCycle, ...] = ()
-) -> tuple[CycleState, CycleResults]:
+) -> tuple[CycleState, CycleResults, tuple[tuple[int, EstimatorState], ...]]:
     """Run cycles up to the end of ``readings``, to the first one at which a test has news, that one included, or to
     the last one before something that a person decided ends.
 
     :param readings: every input finite; row 0 is cycle ``state.next_cycle``.
     :param labs: results that count within these cycles, in order of cycle.
+    :return: state and results, and the estimator's state before each of these cycles that begins a chunk, with its number.
     :raises UnsoundArithmetic: a variance is not positive.
     """
     first, n = state.next_cycle, min(len(readings), next_end(state.book, state.next_cycle))
@@ -248,7 +265,9 @@ def run_cycles(
     data = data._replace(u=data.u[:n])
     out = empty_outputs(n, design.kernel, len(labs))
     known = design.detection.standing(sensors_in_use(design.detection, begun.book, tests, first))
-    done = run_block(design.kernel, estimator, design.detection.tests, tests, known, data, out, True)
+    starts = range(first + -first % CHUNK, first + n, CHUNK)
+    kept = empty_states(estimator, len(starts))
+    done = run_block(design.kernel, estimator, design.detection.tests, tests, known, data, out, True, kept)
     if done < 0:
         raise UnsoundArithmetic(
             f"{design.model.spec.name}: an innovation's variance is not positive near cycle {first}"
@@ -270,8 +289,9 @@ def run_cycles(
         rests=begun.rests + outcome.rests,
         rewind=outcome if outcome.exclusion is not None else None,
     )
-    digest = state.digest.add(result_rows(results))
-    return CycleState(estimator, tests, outcome.book, digest, state.rejected), results
+    digest = state.digest.add(result_rows(results), b"".join(_flag_bytes(flag) for flag in results.flags))
+    states = tuple((at, state_of(kept, m)) for m, at in enumerate(starts) if at < first + done)
+    return CycleState(estimator, tests, outcome.book, digest, state.rejected), results, states
 
 
 def doubts_of(design: UnitDesign, book: FlagBook, cycle: int, rejected: tuple[int, ...]) -> list[str]:
@@ -402,8 +422,8 @@ def outside(values: Floats, limits: tuple[float, float] | None) -> NDArray[np.bo
     return (values < limits[0]) | (values > limits[1])
 
 
-def result_rows(results: CycleResults) -> list[bytes]:
-    """Every result of each cycle as bytes, for the digest; flags belong to the last row's cycle."""
+def result_rows(results: CycleResults) -> NDArray[np.uint8]:
+    """Every result of each cycle as bytes (N, bytes), for the digest."""
     parts = [
         results.times.reshape(-1, 1),
         results.estimate,
@@ -417,13 +437,9 @@ def result_rows(results: CycleResults) -> list[bytes]:
         results.low,
         results.beyond,
     ]
-    table = np.concatenate(
+    return np.concatenate(
         [np.ascontiguousarray(part).view(np.uint8).reshape(len(results), -1) for part in parts], axis=1
     )
-    rows = [row.tobytes() for row in table]
-    if rows:
-        rows[-1] += b"".join(_flag_bytes(flag) for flag in results.flags)
-    return rows
 
 
 def _flag_bytes(flag: Flag) -> bytes:

@@ -50,6 +50,17 @@ class CycleReadings:
         return int(self.times.shape[0])
 
 
+def slice_readings(readings: CycleReadings, start: int, stop: int) -> CycleReadings:
+    """Rows start to stop of some cycles' readings."""
+    return CycleReadings(
+        readings.times[start:stop],
+        readings.u[start:stop],
+        readings.u_quality[start:stop],
+        readings.y[start:stop],
+        readings.y_quality[start:stop],
+    )
+
+
 def join_readings(parts: Sequence[CycleReadings]) -> CycleReadings:
     """The readings of consecutive stretches as one."""
     return CycleReadings(

@@ -17,8 +17,8 @@ from connectors.time_column import time_text
 from plant_models.plant_model import PlantModel
 from softsensor.detection.flags import Note
 from softsensor.errors import ReplayError
+from softsensor.estimation.kernel import CHUNK
 from softsensor.estimation.lab_results import LabArrival
-from softsensor.estimation.past import CHUNK
 from softsensor.readings_of_cycle import CycleReadings
 from softsensor.records import series
 from softsensor.records.engine import Database, open_database
@@ -41,7 +41,7 @@ from softsensor.service.result_tables import (
 from softsensor.service.resuming import recorded_cycles
 from softsensor.service.smoothed_run import SmoothedRun
 from softsensor.service.state_tables import fitted_states, read_states_file
-from softsensor.unit_design import design_unit
+from softsensor.unit_design import designed
 
 BLOCK = 8192
 
@@ -112,7 +112,7 @@ def prepare(
         notes.append(Note(history.first_time, "history", f"columns that the model does not know: {names}"))
     changes = recorded_changes(states, history.series, history_cycles(model.spec, history)) if states else ()
     parts = parts_of(assemble_blocks(model.spec, history, BLOCK), arrivals, changes)
-    return Replay(design_unit(model), parts, horizon_of(arrivals)), notes
+    return Replay(designed(model), parts, horizon_of(arrivals)), notes
 
 
 def replay(
@@ -192,7 +192,7 @@ def prepare_from_records(
         parts = list(recorded_cycles(database, unit_id, chosen.start, chosen.stop - 1))
     _check_tags(model, parts[0][0], unit)
     first = chosen.start if chosen.start % CHUNK == 0 else 0
-    running = Replay(design_unit(model), parts, first_cycle=first)
+    running = Replay(designed(model), parts, first_cycle=first)
     return running, notes, sum(len(readings) for readings, _ in parts)
 
 

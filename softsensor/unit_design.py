@@ -42,6 +42,8 @@ at its flags."""
 INTERVAL_STEP = 2.0**-12
 """Decision intervals are rounded up to this: linear algebra may differ in its last bits between machines, results not."""
 LOOK_EVERY = 6
+KEPT_DESIGNS = 4
+_DESIGNS: list[UnitDesign] = []
 LOST_SECONDS, LOST_CYCLES = 300.0, 10
 
 
@@ -115,6 +117,16 @@ def fault_test_design(model: PlantModel, kernel: Kernel) -> TestDesign:
 
 def _rounded_up(interval: float) -> float:
     return float(np.ceil(interval / INTERVAL_STEP) * INTERVAL_STEP)
+
+
+def designed(model: PlantModel) -> UnitDesign:
+    """The design of this very model, made once while it is among the KEPT_DESIGNS asked for last: models do not change."""
+    for design in _DESIGNS:
+        if design.model is model:
+            return design
+    _DESIGNS.insert(0, design_unit(model))
+    del _DESIGNS[KEPT_DESIGNS:]
+    return _DESIGNS[0]
 
 
 def design_unit(model: PlantModel) -> UnitDesign:

@@ -17,6 +17,10 @@ Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 
 
+CHUNK = 64
+"""Cycles between two states that the loop keeps."""
+
+
 class Kernel(NamedTuple):
     """Everything that the compiled cycle reads; rows are sensors first, then estimates."""
 
@@ -93,6 +97,16 @@ class EstimatorState(NamedTuple):
             self.head.copy(),
             self.streak.copy(),
         )
+
+
+def empty_states(like: EstimatorState, count: int) -> EstimatorState:
+    """Room for ``count`` states, stacked: each array with one axis more, the first."""
+    return EstimatorState(*(np.empty((count, *part.shape), dtype=part.dtype) for part in like))
+
+
+def state_of(stacked: EstimatorState, place: int) -> EstimatorState:
+    """One of some stacked states; it shares their memory."""
+    return EstimatorState(*(part[place] for part in stacked))
 
 
 def compressed_rows(matrix: Matrix) -> tuple[Ints, Ints, Floats]:

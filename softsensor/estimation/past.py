@@ -2,40 +2,18 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterable, Iterator
 from dataclasses import dataclass
-from typing import Protocol
+from typing import Any, Protocol
 
 import numpy as np
 from numpy.typing import NDArray
 
-from softsensor.estimation.kernel import EstimatorState, Floats
-from softsensor.readings_of_cycle import CycleReadings
+from softsensor.estimation.kernel import CHUNK, EstimatorState, Floats
+from softsensor.readings_of_cycle import CycleReadings, slice_readings
 
-CHUNK = 64
-"""Cycles between two remembered states."""
-
-
-@dataclass
-class Chunk:
-    """Up to CHUNK consecutive cycles: the state before the first, their readings and what was estimated."""
-
-    before: EstimatorState
-    readings: CycleReadings
-    estimate: Floats
-    """(CHUNK, n_estimates) as now known."""
-    sd: Floats
-    filled: int = 0
-
-    def rows(self, start: int, stop: int) -> CycleReadings:
-        """Readings of rows start to stop."""
-        part = self.readings
-        return CycleReadings(
-            part.times[start:stop],
-            part.u[start:stop],
-            part.u_quality[start:stop],
-            part.y[start:stop],
-            part.y_quality[start:stop],
-        )
+LONGEST = 128 * CHUNK
+"""Cycles that are remembered at once at most."""
 
 
 class Rerun(Protocol):
@@ -57,110 +35,146 @@ class Revision:
 
 
 class Past:
-    """A bounded memory of cycles; ``horizon`` cycles at least are kept."""
+    """A bounded memory of cycles; ``horizon`` cycles at least are kept, and the state before every CHUNK-th."""
 
     def __init__(self, horizon: int, n_estimates: int) -> None:
-        self._horizon = horizon
+        self._chunks = -(-horizon // CHUNK)
         self._n_estimates = n_estimates
-        self._chunks: dict[int, Chunk] = {}
+        self._states: dict[int, EstimatorState] = {}
+        self._rows: _Rows | None = None
         self.next_cycle = 0
 
     @property
     def first_cycle(self) -> int:
         """The earliest cycle that can be gone back to."""
-        return min(self._chunks) * CHUNK if self._chunks else self.next_cycle
+        return min(self._states) * CHUNK if self._states else self.next_cycle
 
-    def room(self) -> int:
-        """Cycles that fit before the next state has to be remembered."""
-        return CHUNK - self.next_cycle % CHUNK
+    def room(self, most: int) -> int:
+        """Cycles that may be run before they have to be remembered, ``most`` or fewer, to the end of a chunk."""
+        return max(min(most, LONGEST) // CHUNK, 1) * CHUNK - self.next_cycle % CHUNK
 
-    def remember(self, before: EstimatorState, readings: CycleReadings, estimate: Floats, sd: Floats) -> None:
-        """Add cycles that have been run; they must fit in :meth:`room`."""
-        number, row = divmod(self.next_cycle, CHUNK)
-        count = len(readings)
-        if row == 0:
-            self._chunks[number] = _empty_chunk(before, readings, self._n_estimates)
-            self._forget(number)
-        chunk = self._chunks.get(number)
-        if chunk is not None:
-            part = chunk.readings
-            part.times[row : row + count] = readings.times
-            part.u[row : row + count] = readings.u
-            part.u_quality[row : row + count] = readings.u_quality
-            part.y[row : row + count] = readings.y
-            part.y_quality[row : row + count] = readings.y_quality
-            chunk.estimate[row : row + count] = estimate
-            chunk.sd[row : row + count] = sd
-            chunk.filled = row + count
-        self.next_cycle += count
+    def remember(
+        self,
+        states: Iterable[tuple[int, EstimatorState]],
+        readings: CycleReadings,
+        estimate: Floats,
+        sd: Floats,
+    ) -> None:
+        """Add cycles that have been run, LONGEST at most, with the state before each that begins a chunk."""
+        if not len(readings):
+            return
+        if self._rows is None:
+            capacity = self._chunks * CHUNK + LONGEST + CHUNK
+            self._rows = _empty_rows(capacity, readings, self._n_estimates)
+        self._states.update((cycle // CHUNK, state) for cycle, state in states)
+        new = _Rows(readings, estimate, sd)
+        for part, place in self._rows.places(self.next_cycle, len(readings)):
+            for kept, added in zip(self._rows.arrays(), new.arrays(), strict=True):
+                kept[place] = added[part]
+        self.next_cycle += len(readings)
+        newest = (self.next_cycle - 1) // CHUNK
+        for old in [key for key in self._states if key < newest - self._chunks]:
+            del self._states[old]
 
     def restore(
         self, cycle: int, state: EstimatorState, readings: CycleReadings, estimate: Floats, sd: Floats
     ) -> None:
         """Put back a chunk from the records: the state before ``cycle`` (a multiple of CHUNK) and what followed."""
         self.next_cycle = cycle
-        self.remember(state, readings, estimate, sd)
-
-    def _forget(self, number: int) -> None:
-        oldest = number - (self._horizon + CHUNK - 1) // CHUNK
-        for old in [key for key in self._chunks if key < oldest]:
-            del self._chunks[old]
+        self.remember([(cycle, state)], readings, estimate, sd)
 
     def state_before(self, cycle: int) -> tuple[int, EstimatorState] | None:
         """The nearest remembered state at or before a cycle, with its cycle; None where that is forgotten."""
         number = cycle // CHUNK
-        chunk = self._chunks.get(number)
-        return (number * CHUNK, chunk.before) if chunk is not None else None
+        state = self._states.get(number)
+        return (number * CHUNK, state) if state is not None else None
 
     def readings_between(self, first: int, stop: int) -> CycleReadings:
-        """Readings of cycles first to stop (exclusive), all within one chunk."""
-        number, row = divmod(first, CHUNK)
-        return self._chunks[number].rows(row, row + stop - first)
+        """Readings of remembered cycles first to stop (exclusive), all within one chunk."""
+        place = self._place(first, stop)
+        return slice_readings(self._kept.readings, place.start, place.stop)
 
     def estimates(self) -> tuple[int, NDArray[np.int64], Floats, Floats]:
         """First remembered cycle, then times, estimates and sd of all remembered cycles as now known."""
-        keys = sorted(self._chunks)
-        if not keys:
+        first = self.first_cycle
+        if first == self.next_cycle:
             empty = np.zeros((0, self._n_estimates))
-            return self.next_cycle, np.zeros(0, dtype=np.int64), empty, empty
-        chunks = [self._chunks[key] for key in keys]
+            return first, np.zeros(0, dtype=np.int64), empty, empty
+        kept = self._kept
+        places = [place for _, place in kept.places(first, self.next_cycle - first)]
         return (
-            keys[0] * CHUNK,
-            np.concatenate([chunk.readings.times[: chunk.filled] for chunk in chunks]),
-            np.concatenate([chunk.estimate[: chunk.filled] for chunk in chunks]),
-            np.concatenate([chunk.sd[: chunk.filled] for chunk in chunks]),
+            first,
+            np.concatenate([kept.readings.times[place] for place in places]),
+            np.concatenate([kept.estimate[place] for place in places]),
+            np.concatenate([kept.sd[place] for place in places]),
         )
 
     def run_again(self, cycle: int, rerun: Rerun) -> tuple[EstimatorState, Revision]:
         """Go back to the state before ``cycle`` and forward to the present; what is remembered is revised on the way."""
         number = cycle // CHUNK
-        state = self._chunks[number].before
+        state = self._states[number]
         revised: list[Floats] = []
         spreads: list[Floats] = []
         states: list[tuple[int, EstimatorState]] = []
         while number * CHUNK < self.next_cycle:
-            chunk = self._chunks[number]
-            if number * CHUNK > cycle:
-                chunk.before = state
-                states.append((number * CHUNK, state))
             first = number * CHUNK
-            state, estimate, sd = rerun(state, first, chunk.rows(0, chunk.filled))
-            chunk.estimate[: chunk.filled] = estimate
-            chunk.sd[: chunk.filled] = sd
+            if first > cycle:
+                self._states[number] = state
+                states.append((first, state))
+            stop = min(first + CHUNK, self.next_cycle)
+            state, estimate, sd = rerun(state, first, self.readings_between(first, stop))
+            place = self._place(first, stop)
+            self._kept.estimate[place] = estimate
+            self._kept.sd[place] = sd
             skip = max(cycle - first, 0)
             revised.append(estimate[skip:])
             spreads.append(sd[skip:])
             number += 1
         return state, Revision(cycle, np.concatenate(revised), np.concatenate(spreads), tuple(states))
 
+    @property
+    def _kept(self) -> _Rows:
+        assert self._rows is not None
+        return self._rows
 
-def _empty_chunk(before: EstimatorState, like: CycleReadings, n_estimates: int) -> Chunk:
+    def _place(self, first: int, stop: int) -> slice:
+        """Rows of consecutive cycles of one chunk: the ring holds whole chunks."""
+        begin = first % len(self._kept)
+        return slice(begin, begin + stop - first)
+
+
+@dataclass(frozen=True)
+class _Rows:
+    """A ring of cycles, cycle k in row k modulo its length: readings, estimates as now known and their sd."""
+
+    readings: CycleReadings
+    estimate: Floats
+    sd: Floats
+
+    def __len__(self) -> int:
+        return len(self.readings)
+
+    def arrays(self) -> tuple[NDArray[Any], ...]:
+        part = self.readings
+        return part.times, part.u, part.u_quality, part.y, part.y_quality, self.estimate, self.sd
+
+    def places(self, first: int, count: int) -> Iterator[tuple[slice, slice]]:
+        """Where ``count`` cycles from ``first`` on lie: rows among themselves, and rows of the ring."""
+        done = 0
+        while done < count:
+            begin = (first + done) % len(self)
+            length = min(count - done, len(self) - begin)
+            yield slice(done, done + length), slice(begin, begin + length)
+            done += length
+
+
+def _empty_rows(capacity: int, like: CycleReadings, n_estimates: int) -> _Rows:
     inputs, sensors = like.u.shape[1], like.y.shape[1]
     readings = CycleReadings(
-        np.zeros(CHUNK, dtype=np.int64),
-        np.zeros((CHUNK, inputs)),
-        np.zeros((CHUNK, inputs), dtype=np.int8),
-        np.zeros((CHUNK, sensors)),
-        np.zeros((CHUNK, sensors), dtype=np.int8),
+        np.zeros(capacity, dtype=np.int64),
+        np.zeros((capacity, inputs)),
+        np.zeros((capacity, inputs), dtype=np.int8),
+        np.zeros((capacity, sensors)),
+        np.zeros((capacity, sensors), dtype=np.int8),
     )
-    return Chunk(before, readings, np.zeros((CHUNK, n_estimates)), np.zeros((CHUNK, n_estimates)))
+    return _Rows(readings, np.zeros((capacity, n_estimates)), np.zeros((capacity, n_estimates)))

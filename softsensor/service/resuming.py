@@ -8,7 +8,8 @@ from dataclasses import dataclass
 
 from softsensor.cycle import UnitDesign, start
 from softsensor.errors import RecordsError
-from softsensor.estimation.past import CHUNK, Past
+from softsensor.estimation.kernel import CHUNK
+from softsensor.estimation.past import Past
 from softsensor.readings_of_cycle import CycleReadings
 from softsensor.records import series
 from softsensor.records.engine import Database

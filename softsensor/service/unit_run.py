@@ -22,7 +22,7 @@ from softsensor.cycle import (
 )
 from softsensor.detection.people import Decision, Taken
 from softsensor.detection.plant_states import StateChange
-from softsensor.estimation.kernel import EstimatorState, Floats
+from softsensor.estimation.kernel import CHUNK, EstimatorState, Floats
 from softsensor.estimation.lab_results import (
     IMPOSSIBLE,
     LabArrival,
@@ -32,8 +32,8 @@ from softsensor.estimation.lab_results import (
     likely_reason,
     slope_variance,
 )
-from softsensor.estimation.past import CHUNK, Past, Revision
-from softsensor.readings_of_cycle import CycleReadings
+from softsensor.estimation.past import Past, Revision
+from softsensor.readings_of_cycle import CycleReadings, slice_readings
 
 
 @dataclass(frozen=True)
@@ -48,19 +48,11 @@ class Advance:
     taken: tuple[Taken, ...] = ()
 
 
+IN_MEMORY = 2**25
+"""Bytes of remembered states that one call of the loop may add: the length of its stretches grows up to that."""
+
 Came = LabArrival | Decision | StateChange
 """What may come before a cycle besides its readings."""
-
-
-def slice_readings(readings: CycleReadings, start: int, stop: int) -> CycleReadings:
-    """Rows start to stop of some cycles' readings."""
-    return CycleReadings(
-        readings.times[start:stop],
-        readings.u[start:stop],
-        readings.u_quality[start:stop],
-        readings.y[start:stop],
-        readings.y_quality[start:stop],
-    )
 
 
 class UnitRun:
@@ -85,6 +77,8 @@ class UnitRun:
         self._labs = sorted(labs, key=_order)
         self._sample_us = design.detection.sample_us
         self._early: list[StateChange] = []
+        held = sum(part.nbytes for part in state.estimator)
+        self._longest = max(IN_MEMORY // held, 1) * CHUNK
 
     @property
     def started(self) -> bool:
@@ -115,10 +109,11 @@ class UnitRun:
             outcome, revision = self._take(arrival, slice_readings(readings, waiting, waiting + 1))
             outcomes.append(outcome)
             revisions += [revision] if revision is not None else []
-        row = waiting
+        row, most = waiting, CHUNK
         while row < len(readings):
-            part = slice_readings(readings, row, min(row + self.past.room(), len(readings)))
+            part = slice_readings(readings, row, min(row + self.past.room(most), len(readings)))
             result, revision = self._run(part)
+            most = min(2 * most, self._longest) if len(result) == len(part) else CHUNK
             if row == waiting:
                 flags, notes = told.changes + result.flags, told.notes + result.notes
                 result = replace(result, flags=flags, notes=notes, rests=told.rests + result.rests)
@@ -142,10 +137,9 @@ class UnitRun:
     def _run(self, readings: CycleReadings) -> tuple[CycleResults, Revision | None]:
         first = self.state.next_cycle
         labs = self._labs_between(first, first + len(readings))
-        before = self.state.estimator
-        self.state, results = run_cycles(self.design, self.state, readings, labs)
+        self.state, results, states = run_cycles(self.design, self.state, readings, labs)
         done = slice_readings(readings, 0, len(results))
-        self.past.remember(before, done, results.estimate, results.sd)
+        self.past.remember(states, done, results.estimate, results.sd)
         if results.rewind is None or results.rewind.exclusion is None:
             return results, None
         return results, self._go_back(max(results.rewind.exclusion.since, self.past.first_cycle))

@@ -13,8 +13,8 @@ from plant_models.plant_model import PlantModel
 from plant_models.specification import UnitSpec
 from softsensor.cycle import UnitDesign
 from softsensor.detection.people import ACTS, Decision
+from softsensor.estimation.kernel import CHUNK
 from softsensor.estimation.lab_results import LabArrival
-from softsensor.estimation.past import CHUNK
 from softsensor.readings_of_cycle import CycleQuality, CycleReadings
 from softsensor.records import blocks, storing
 from softsensor.records.decisions import begin_anew, waiting_decisions
