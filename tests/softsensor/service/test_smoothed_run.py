@@ -146,6 +146,7 @@ def test_recorded_cycles_are_smoothed_as_they_were_run(
         stretches = list(smoothing.keeping(running.stretches()))
         parts = list(smoothing.cycles(running))
     y = np.concatenate([stretch.results.reading for stretch in stretches])
+    y[np.concatenate([stretch.results.used for stretch in stretches]) == 0] = np.nan  # beyond the gate
     (exclusion,) = running.run.state.book.exclusions
     y[exclusion.since : exclusion.until, exclusion.sensor] = np.nan
     u = np.concatenate([stretch.readings.u for stretch in stretches])
