@@ -480,13 +480,19 @@ def same_word(there: str, here: str) -> bool:
 
 
 def test_the_sheet_in_the_handbook_is_what_the_command_prints() -> None:
-    """If it is not any more: run the command that stands above it and paste."""
+    """If it is not any more: run the command that stands above it and paste. Shares of drawn cases are not compared."""
     report = model_report(unit_design.load_model(reactor_model_path()))
-    printed = as_printed((knowledge_tables(report)[-1], *sheet_tables(report))).split()
+    tables = (knowledge_tables(report)[-1], *sheet_tables(report))
     (shown,) = blocks("text", SHEET)
     rule = "\u2500"
-    there, here = ([word for word in text if rule not in word] for text in (shown.split(), printed))
-    assert [pair for pair in zip(there, here, strict=True) if not same_word(*pair)] == []
+    ends = [shown.index(table.title) for table in tables[1:]] + [len(shown)]
+    for table, begin, end in zip(tables, [0, *ends[:-1]], ends, strict=True):
+        texts = (shown[begin:end].split(), as_printed((table,)).split())
+        there, here = ([word for word in text if rule not in word] for text in texts)
+        if table.title in ("What a fault is taken for", "Which instrument would mend it"):
+            count = len(" ".join((table.title, *table.columns)).split())
+            there, here = there[:count], here[:count]
+        assert [pair for pair in zip(there, here, strict=True) if not same_word(*pair)] == []
 
 
 def test_the_keys_of_the_sheet_in_json_are_described() -> None:
