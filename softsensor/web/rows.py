@@ -167,16 +167,15 @@ def _sensor_row(
         reading,
         finite(results.predicted[-1, i]),
         finite(deviation),
-        _beyond(results.sums[-1], i),
+        _beyond(results.sums[-1], i, len(results.used[-1])),
         health,
         "in use" if results.used[-1, i] else unused,
     )
 
 
-def _beyond(sums: Floats, i: int) -> float | None:
+def _beyond(sums: Floats, i: int, n: int) -> float | None:
     """The third part of what is kept of the sums; records of older releases have none."""
-    n = len(sums) // 3
-    return finite(sums[2 * n + i]) if len(sums) % 3 == 0 and 2 * n + i < len(sums) else None
+    return finite(sums[2 * n + i]) if len(sums) == 3 * n else None
 
 
 def sensor_rows(

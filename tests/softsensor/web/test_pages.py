@@ -55,7 +55,7 @@ def test_the_unit_page_shows_the_newest_cycle_with_units(asker: Any) -> None:
     assert f"95 % interval {value - half:.3f} to {value + half:.3f} mol/L Good" in page
     reading, predicted = float(made.readings.y[-1, 0]), float(made.predicted[-1, 0])
     deviations = float(made.innovation[-1, 0]) / 0.16
-    row = f"TI2101A {reading:.2f} degC {predicted:.2f} degC {deviations:+.1f} sd normal in use"
+    row = f"TI2101A {reading:.2f} degC {predicted:.2f} degC {deviations:+.1f} sd not known normal in use"
     assert row in page
     assert f"TI2105 none {made.predicted[-1, 2]:.2f} degC none normal no reading: Bad" in page
     assert "S out of specification in use" in page
