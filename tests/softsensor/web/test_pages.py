@@ -57,7 +57,7 @@ def test_the_unit_page_shows_the_newest_cycle_with_units(asker: Any) -> None:
     deviations = float(made.innovation[-1, 0]) / 0.16
     row = f"TI2101A {reading:.2f} degC {predicted:.2f} degC {deviations:+.1f} sd not known normal in use"
     assert row in page
-    assert f"TI2105 none {made.predicted[-1, 2]:.2f} degC none normal no reading: Bad" in page
+    assert f"TI2105 none {made.predicted[-1, 2]:.2f} degC none not known normal no reading: Bad" in page
     assert "S out of specification in use" in page
     assert "9 to 14 m3/h Good normal" in page
     assert "Advisory only." in page
