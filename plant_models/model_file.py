@@ -83,18 +83,21 @@ def _unit_spec(document: dict[str, Any], faults: FaultList, source: str) -> Unit
             brackets = f"[{section}]" if section == "unit" else f"at least one [[{section}]]"
             faults.add((section,), section, f"missing; expected {brackets}")
     name, title, sample_time = read_unit(unit if unit is not None else _empty_unit())
-    interval, leave_out = read_fault_tests(single(document, "fault_tests", faults))
+    sensors = tuple(read_sensor(table) for table in named["sensor"])
+    tests = read_fault_tests(single(document, "fault_tests", faults), [item.tag for item in sensors])
     spec = UnitSpec(
         name=name,
         title=title,
         sample_time=sample_time,
         inputs=tuple(read_input(table) for table in named["input"]),
-        sensors=tuple(read_sensor(table) for table in named["sensor"]),
+        sensors=sensors,
         estimates=tuple(read_estimate(table) for table in named["estimate"]),
         disturbances=tuple(read_disturbance(table) for table in named["disturbance"]),
         paths=tuple(read_path(table) for table in paths),
-        false_flag_interval=interval,
-        leave_out_isolated=leave_out,
+        false_flag_interval=tests.false_flag_interval,
+        leave_out_isolated=tests.leave_out_isolated,
+        widening=tests.widening,
+        disarmed=tests.disarmed,
         source_text=source,
     )
     check_whole(named, paths, faults)

@@ -65,6 +65,13 @@ def _above_zero(value: object) -> float:
     return number
 
 
+def _factor(value: object) -> float:
+    number = _number(value)
+    if number < 1.0:
+        raise RefusalError("")
+    return number
+
+
 def _not_below_zero(value: object) -> float:
     number = _number(value)
     if number < 0.0:
@@ -184,6 +191,7 @@ TARGET = Kind("a sensor's or an estimate's tag", _name, "-")
 UNIT = Kind(A_UNIT, _unit, "-")
 NUMBER = Kind("a finite number", _number, 1.0)
 ABOVE_ZERO = Kind("a finite number above zero", _above_zero, 1.0)
+FACTOR = Kind("a factor from 1 up", _factor, 1.0)
 NOT_BELOW_ZERO = Kind("a finite number not below zero", _not_below_zero, 1.0)
 NOT_ZERO = Kind("a finite number other than zero", _not_zero, 1.0)
 RANGE = Kind("two finite numbers, the lower first, such as [0.0, 20.0]", _range, (0.0, 1.0))

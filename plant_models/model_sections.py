@@ -3,10 +3,14 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Collection
+from dataclasses import dataclass
+from typing import TypeVar
 
 from plant_models.model_kinds import (
     ABOVE_ZERO,
     DURATION_ABOVE_ZERO,
+    FACTOR,
     FLAG,
     INPUT_TAG,
     NAME,
@@ -20,7 +24,7 @@ from plant_models.model_kinds import (
     Kind,
 )
 from plant_models.model_tables import Table
-from plant_models.quoting import quoted
+from plant_models.quoting import quoted, suggestion
 from plant_models.specification import (
     GATE,
     DisturbanceSpec,
@@ -30,6 +34,8 @@ from plant_models.specification import (
     Range,
     SensorSpec,
 )
+
+T = TypeVar("T")
 
 FALSE_FLAG_INTERVAL = 30 * 86400.0
 """Wanted mean time between false flags where the file names none, in seconds."""
@@ -47,13 +53,44 @@ def read_unit(table: Table) -> tuple[str, str, float]:
     return name, title, table.read("sample_time", SAMPLE_TIME)
 
 
-def read_fault_tests(table: Table | None) -> tuple[float, bool]:
-    """Seconds between false flags, and whether a sensor named alone as faulty is left out of the estimate."""
+@dataclass(frozen=True, slots=True)
+class FaultTests:
+    """The section on fault tests; the fields are those of UnitSpec."""
+
+    false_flag_interval: float = FALSE_FLAG_INTERVAL
+    leave_out_isolated: bool = False
+    widening: tuple[tuple[str, float], ...] = ()
+    disarmed: tuple[tuple[str, str], ...] = ()
+
+
+def read_fault_tests(table: Table | None, sensors: Collection[str]) -> FaultTests:
+    """How often false flags may be, what follows from a flag, and what commissioning found.
+
+    :param sensors: the tags that factors and reasons may name.
+    """
     if table is None:
-        return FALSE_FLAG_INTERVAL, False
-    table.only("false_flag_interval", "leave_out_isolated")
-    interval = table.read_or("false_flag_interval", DURATION_ABOVE_ZERO, FALSE_FLAG_INTERVAL)
-    return interval, table.read_or("leave_out_isolated", FLAG, False)
+        return FaultTests()
+    table.only("false_flag_interval", "leave_out_isolated", "widening", "disarmed")
+    return FaultTests(
+        table.read_or("false_flag_interval", DURATION_ABOVE_ZERO, FALSE_FLAG_INTERVAL),
+        table.read_or("leave_out_isolated", FLAG, False),
+        _by_sensor(table, "widening", FACTOR, sensors, "a table such as { TI2101A = 1.42 }"),
+        _by_sensor(table, "disarmed", TEXT, sensors, "a table of reasons such as { TI2101A = 'correlated' }"),
+    )
+
+
+def _by_sensor(
+    table: Table, key: str, kind: Kind[T], sensors: Collection[str], expected: str
+) -> tuple[tuple[str, T], ...]:
+    inner = table.subtable(key, expected)
+    if inner is None:
+        return ()
+    for tag in inner.values:
+        if tag not in sensors:
+            inner.fault(
+                tag, f"expected a sensor's tag, one of {', '.join(sensors)}{suggestion(tag, tuple(sensors))}"
+            )
+    return tuple((tag, inner.read(tag, kind)) for tag in inner.values)
 
 
 def read_input(table: Table) -> InputSpec:

@@ -125,5 +125,9 @@ class UnitSpec:
     """Wanted mean time between false flags, per sensor, in seconds."""
     leave_out_isolated: bool = False
     """A sensor that the data name alone as faulty is kept from the estimate until a person puts it back."""
+    widening: tuple[tuple[str, float], ...] = ()
+    """By sensor, the factor on its decision intervals that commissioning found; 1 where a sensor is not listed."""
+    disarmed: tuple[tuple[str, str], ...] = ()
+    """Sensors whose tests of innovations are not run, with the reason."""
     source_text: str = ""
     """The file's text, kept with the revision."""

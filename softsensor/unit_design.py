@@ -88,13 +88,16 @@ def fault_test_design(model: PlantModel, kernel: Kernel) -> TestDesign:
     """Reference values from the shifts that tolerance-sized biases leave; intervals solved for the promised run length.
 
     The promise holds for all tests of a sensor together: the noise test has SPREAD_SHARE of the false flags, each pair an
-    equal part of the rest. The joint test has the promise to itself.
+    equal part of the rest. The joint test has the promise to itself. A sensor's intervals are as much wider as
+    commissioning found that its innovations need.
     """
     cycles = model.spec.false_flag_interval / model.spec.sample_time
     reference = bank_references(steady_shifts(model, kernel))
     each = cycles * reference.shape[1] / (1.0 - SPREAD_SHARE)
     exact = [[interval_with_head_start(float(k), each, CLIP) for k in row] for row in reference]
-    interval = np.ceil(np.array(exact) / INTERVAL_STEP) * INTERVAL_STEP
+    factors, disarmed = dict(model.spec.widening), dict(model.spec.disarmed)
+    wider = np.array([[factors.get(tag, 1.0)] for tag in model.sensor_tags])
+    interval = np.ceil(np.array(exact) * wider / INTERVAL_STEP) * INTERVAL_STEP
     lost = max(LOST_CYCLES, int(np.ceil(LOST_SECONDS / model.spec.sample_time)))
     joint_gain, joint_drift = gain_and_drift(JOINT_RATIO)
     return TestDesign(
@@ -112,6 +115,8 @@ def fault_test_design(model: PlantModel, kernel: Kernel) -> TestDesign:
         0.01 / cycles,
         np.array([item.noise_sd for item in model.spec.sensors]),
         LOOK_EVERY,
+        np.array([int(tag not in disarmed) for tag in model.sensor_tags], dtype=np.int64),
+        0,
     )
 
 
@@ -135,6 +140,8 @@ def design_unit(model: PlantModel) -> UnitDesign:
     spec = model.spec
     steady = steady_filter(model, kernel, np.ones(kernel.n_sensors, dtype=np.int64))
     tests = fault_test_design(model, kernel)
+    past = forgetting(model, kernel, steady, tests.reference[:, 0])
+    tests = tests._replace(forgotten_after=past.until)
     detection = DetectionDesign(
         model,
         kernel,
@@ -145,7 +152,7 @@ def design_unit(model: PlantModel) -> UnitDesign:
         round(spec.sample_time * 1e6),
         spec.leave_out_isolated,
         True,
-        forgetting(model, kernel, steady, tests.reference[:, 0]),
+        past,
         cycles_to_settle(model, kernel, steady, WINDOW),
     )
     low = np.array([item.range[0] - BEYOND_BELOW * (item.range[1] - item.range[0]) for item in spec.sensors])

@@ -10,7 +10,7 @@ from typing import Annotated
 import typer
 
 from plant_models.errors import Problem
-from softsensor.cli import audit, check, db, demo, replay, run, tune
+from softsensor.cli import audit, check, commission, db, demo, replay, run, tune
 
 CAUTION = (
     "Advisory only: estimates and flags are no safety function, no part of one and no basis for defeating one. "
@@ -44,7 +44,7 @@ def options(
     """Transfer functions and plant readings in; estimates with honest intervals and instrument fault flags out."""
 
 
-for command in (demo.demo, check.check, replay.replay, run.run, tune.tune):
+for command in (demo.demo, check.check, replay.replay, run.run, tune.tune, commission.commission):
     app.command(epilog=CAUTION)(command)
 app.add_typer(db.app, name="db")
 app.add_typer(audit.app, name="audit")

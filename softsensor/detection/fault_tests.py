@@ -16,22 +16,24 @@ from softsensor.estimation.kernel import Floats, Ints
 
 SETTLING_SHARE = 3
 """After inputs have been missing the tests rest until this many times that long has passed since they went missing: what
-the inputs did meanwhile is not in the prediction."""
+the inputs did meanwhile is not in the prediction. No longer, though, than until it shows no more in the innovations."""
 
 
 @uncounted
-def _settle(state: TestState, interval: Floats, doubtful: int) -> int:
+def _settle(design: TestDesign, state: TestState, doubtful: int) -> int:
     """Rest the tests of innovations while inputs are missing and for a while after; returns the news."""
     now, until = state.cycle[0], state.settling_until[0]
     if doubtful != 0:
-        state.settling_until[0] = max(until, now) + SETTLING_SHARE
+        state.settling_until[0] = min(
+            max(until, now) + SETTLING_SHARE, max(until, now + 1 + design.forgotten_after)
+        )
         return SETTLING if until <= now else 0
     if now == until and now > 0:
         state.valid_from[0] = now
-        for i in range(interval.shape[0]):
-            for p in range(interval.shape[1]):
-                state.high[i, p] = HEAD_START * interval[i, p]
-                state.low[i, p] = HEAD_START * interval[i, p]
+        for i in range(design.interval.shape[0]):
+            for p in range(design.interval.shape[1]):
+                state.high[i, p] = HEAD_START * design.armed[i] * design.interval[i, p]
+                state.low[i, p] = HEAD_START * design.armed[i] * design.interval[i, p]
         return SETTLED
     return 0
 
@@ -82,7 +84,7 @@ def test_cycle(
     reading from the estimate: a single impossible one is a spike, or noise, and no shift. ``squares``: sum of squares of
     the whitened innovations, a reading at a time, over the sensors in use; nan where one of them is missing.
     """
-    union = _settle(state, design.interval, doubtful)
+    union = _settle(design, state, doubtful)
     resting = quiet != 0 or state.cycle[0] < state.settling_until[0]
     slot = state.cycle[0] % state.ring.shape[0]
     cut_off = _cut_off(y, doubtful)
@@ -96,9 +98,10 @@ def test_cycle(
             _rest(state, i)
         elif not missing:
             z = innovation[i] / sd[i]
-            if kept_out[i] == 0:
-                code |= test_shift(design, state, i, z)
-            code |= test_spread(design, state, i, z)
+            if design.armed[i] != 0:
+                if kept_out[i] == 0:
+                    code |= test_shift(design, state, i, z)
+                code |= test_spread(design, state, i, z)
             code |= test_spike(design, state, i, z)
         if quiet == 0 and not missing and fresh[i] != 0:
             code |= test_stuck(design, state, i, y[i])

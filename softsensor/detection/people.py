@@ -163,7 +163,7 @@ def ended(design: DetectionDesign, book: FlagBook, tests: TestState, cycle: int,
     if outcome.notes:
         tests.restart_sums(cycle)
         if over and not book.unsteady(cycle) and cycle >= tests.settling_until[0]:
-            tests.give_head_start(design.tests.interval)
+            tests.give_head_start(design.tests.interval * design.tests.armed[:, None])
         outcome = replace(outcome, book=replace(outcome.book, episode=None))
     return outcome
 

@@ -57,6 +57,10 @@ class TestDesign(NamedTuple):
     noise_sd: Floats
     look_every: int
     """While a test is up, the diagnosis looks again every so many cycles."""
+    armed: Ints
+    """0 for a sensor whose innovations are not what its tests suppose: only stuck, lost and spike are looked for."""
+    forgotten_after: int
+    """Cycles after which what the inputs did unseen no longer shows in the innovations."""
 
 
 class TestState(NamedTuple):
@@ -128,7 +132,7 @@ class TestState(NamedTuple):
         self.onset[:] = -1
 
     def give_head_start(self, interval: Floats) -> None:
-        """Half of each decision interval (n_sensors, n_pairs) on every sum, in place: after a rest a fault may have come."""
+        """Half of each decision interval (n_sensors, n_pairs) on every sum, in place: a fault may have come in the rest."""
         self.high[:] = HEAD_START * interval
         self.low[:] = HEAD_START * interval
 

@@ -5,6 +5,7 @@ it can find.
 from __future__ import annotations
 
 import math
+from collections.abc import Iterator
 from dataclasses import dataclass
 
 import numpy as np
@@ -141,8 +142,17 @@ def model_report(model: PlantModel, lab_interval: float = LAB_INTERVAL) -> Model
             *_about_estimates(estimates),
             *_about_sensors(model, sensors),
             *_about_gates(spec, sensors),
+            *_about_commissioning(spec),
         ),
     )
+
+
+def _about_commissioning(spec: UnitSpec) -> Iterator[str]:
+    """What commissioning found, where it changed the tests."""
+    for tag, reason in spec.disarmed:
+        yield f"{tag}: its tests of innovations are disarmed: {reason}"
+    for tag, factor in spec.widening:
+        yield f"{tag}: its decision intervals are {factor:g} times as wide as independent innovations would need"
 
 
 def _path(path: PathSpec, spec: UnitSpec) -> PathReport:

@@ -83,6 +83,7 @@ class RunSummary:
             "promised_run_length": self._design.model.spec.false_flag_interval
             / self._design.model.spec.sample_time,
             "achieved_run_length": self._cycles / int(self._ups[i]) if self._ups[i] else None,
+            "disarmed": dict(self._design.model.spec.disarmed).get(tag),
         }
 
     def _estimate(self, e: int) -> dict[str, Any]:

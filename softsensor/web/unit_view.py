@@ -117,6 +117,9 @@ class UnitView:
         now = self.cycle_us
         found = [] if now is None else rests_at(self._database, self.unit.id, now)
         whole = [rest for rest in found if not rest.tag]
+        if not whole and self.spec.disarmed:
+            words = "; ".join(f"{tag}: {reason}" for tag, reason in self.spec.disarmed)
+            return State(f"running, but not of {words}", False)
         if not whole:
             return State("running", True)
         return State(f"at rest: {'; '.join(rest_words(rest) for rest in whole)}", False)

@@ -17,6 +17,7 @@ def quiet_design(sensors: int, **settings: Any) -> TestDesign:
     return TestDesign(
         np.full((sensors, 1), 0.5), np.full((sensors, 1), FAR), 4.0, 2.5, 0.2778, 0.4055, FAR,
         0.18, 0.22 * sensors, FAR, FAR, np.full(sensors, 10, dtype=np.int64), 1e-8, np.ones(sensors), 6,
+        np.ones(sensors, dtype=np.int64), 10**6,
     )._replace(**settings)  # fmt: skip
 
 
