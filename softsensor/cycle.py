@@ -204,8 +204,7 @@ def usable(design: UnitDesign, readings: CycleReadings) -> tuple[Floats, Floats]
     """Sensor values with what is no reading taken out, and the factor on each one's noise variance."""
     low, high = design.limits
     bad = readings.y_quality > CycleQuality.UNCERTAIN
-    with np.errstate(invalid="ignore"):
-        y = np.where(bad | (readings.y < low) | (readings.y > high), np.nan, readings.y)
+    y = np.where(bad | (readings.y < low) | (readings.y > high), np.nan, readings.y)
     scale = np.where(readings.y_quality == CycleQuality.UNCERTAIN, UNCERTAIN_VARIANCE, 1.0)
     return np.ascontiguousarray(y), np.ascontiguousarray(scale)
 

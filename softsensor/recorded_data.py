@@ -44,6 +44,8 @@ from softsensor.service.state_tables import fitted_states, read_states_file
 from softsensor.unit_design import designed
 
 BLOCK = 8192
+WHOLE = 2**62
+"""Cycles of one table where everything stays in memory anyway: tables cost by the piece."""
 
 
 @dataclass(frozen=True)
@@ -141,7 +143,7 @@ def replay(
     estimates, innovations, conformance = [], [], []
     with SmoothedRun(running.design) as smoothing:
         stretches = smoothing.keeping(running.stretches()) if smooth else running.stretches()
-        for stretch in gathered(stretches):
+        for stretch in gathered(stretches, WHOLE):
             estimates.append(estimate_table(running.design, stretch.readings, stretch.results))
             innovations.append(innovation_table(running.design, stretch.results))
             conformance.append(conformance_table(running.design, stretch.results))
@@ -163,7 +165,8 @@ def replay(
 
 
 def _joined(tables: list[pd.DataFrame], columns: tuple[str, ...]) -> pd.DataFrame:
-    joined = pd.concat(tables, ignore_index=True)[list(columns)]
+    joined = tables[0] if len(tables) == 1 else pd.concat(tables, ignore_index=True)
+    joined = joined[list(columns)]
     for name in ("tag", "status"):
         if name in joined:
             joined[name] = joined[name].astype(str)
