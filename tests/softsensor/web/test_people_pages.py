@@ -205,3 +205,16 @@ def test_a_form_from_elsewhere_changes_nothing(
 )
 def test_what_is_not_there_is_said(asker: Any, address: str) -> None:
     assert asker.get(address).status_code == 404
+
+
+def test_false_flags_stand_promised_beside_achieved(recorded: Database, asker: Any) -> None:
+    page = asker.get(f"/units/{UNIT}/promise").text
+    assert "Promised: one false flag per 30 d and sensor" in page
+    row = page.split('<th scope="row">TI2101B</th>')[1].split("</tr>")[0]
+    assert '<td class="right">7.83 h</td>' in row  # eight hours less ten minutes that are not on record
+    assert "none false" in row
+    assert f'href="/units/{UNIT}/promise"' in asker.get(f"/units/{UNIT}").text
+    with recorded.write() as connection:
+        store_rests(connection, 1, [RestSpell("off: FI2103 below 2", "", NOW - 4 * HOUR, None, "0.1 m3/h")])
+    row = asker.get(f"/units/{UNIT}/promise").text.split('<th scope="row">TI2101B</th>')[1].split("</tr>")[0]
+    assert '<td class="right">4 h</td>' in row
