@@ -407,10 +407,12 @@ def estimate_status(
         np.any(readings.u_quality[:n] != CycleQuality.GOOD, axis=1) | np.any(left_out, axis=1) | settling
     )
     for j, item in enumerate(spec.inputs):
-        doubtful |= outside(readings.u[:n, j], item.validated_range)
+        if item.validated_range is not None:
+            doubtful |= outside(readings.u[:n, j], item.validated_range)
     status = np.repeat(doubtful[:, None], len(spec.estimates), axis=1)
     for e, estimated in enumerate(spec.estimates):
-        status[:, e] |= outside(estimate[:, e], estimated.validated_range)
+        if estimated.validated_range is not None:
+            status[:, e] |= outside(estimate[:, e], estimated.validated_range)
     return status.astype(np.int8)
 
 

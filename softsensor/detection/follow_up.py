@@ -127,7 +127,8 @@ def follow_up(design: DetectionDesign, book: FlagBook, tests: TestState, moment:
         outcome = _clear_shifts(design, outcome, tests, moment)
     if design.armed:
         outcome = _diagnose(design, outcome, tests, moment)
-    tests.watch[0] = int(bool(outcome.book.open) or outcome.book.episode is not None)
+    ends_by_itself = all(flag.kind == "lost" for flag in outcome.book.open)
+    tests.watch[0] = int(not ends_by_itself or outcome.book.episode is not None)
     return outcome
 
 
