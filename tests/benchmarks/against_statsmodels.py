@@ -6,7 +6,8 @@ statsmodels runs at its fastest filter-only setting: univariate, memory conserve
 input-driven part is subtracted for it beforehand, outside the time. Processor time, medians, one thread.
 
 ``filter`` is the compiled loop alone, tests off; ``with tests`` the same with all fault tests armed; ``replay`` is the
-public function: checks of the frame, assembly, filter, gate, tests, digest, summary and result frames.
+public function: checks of the frame, assembly, filter, gate, tests, digest, summary and result frames. A model's design
+(run lengths, settled filter) is made by its first replay and kept; like compilation it is outside the time.
 """
 
 from __future__ import annotations
