@@ -1,0 +1,49 @@
+"""Short versions of the long runs; the long ones have commands of their own, and their results stand in the handbook."""
+
+from __future__ import annotations
+
+import pytest
+from long_runs.calibration import moments
+from long_runs.models import COLUMN, FRACTIONATOR, design_named
+from long_runs.naming import outcomes
+from long_runs.promise import without_fault
+from scipy.stats import binom
+
+
+def test_the_promise_is_kept_without_a_fault() -> None:
+    """Three years of the column: no more alarms than the promise allows, but for chance, and not many fewer."""
+    (row,) = without_fault(design_named(COLUMN), 3.0, seed=3)
+    low, high = row.interval()
+    assert high > row.promised
+    assert low < 2.0 * row.promised
+    assert row.flags + row.others <= row.alarms
+
+
+@pytest.mark.parametrize(("kind", "outcome"), [("step", "named right"), ("ramp", "named right")])
+def test_a_sensor_s_fault_is_named(kind: str, outcome: str) -> None:
+    counted, _ = outcomes(kind, 15)
+    assert counted[outcome] >= binom.ppf(0.01, 15, 0.97)
+    assert counted["a sensor named wrongly"] <= 1
+
+
+def test_a_disturbance_s_step_names_no_sensor() -> None:
+    counted, _ = outcomes("disturbance", 10)
+    assert counted["named right"] + counted["a sensor named wrongly"] == 0
+
+
+def test_a_flow_meter_s_error_is_the_flow_meter_s() -> None:
+    counted, _ = outcomes("flow meter", 15)
+    assert counted["named right"] + counted["group with it"] >= binom.ppf(0.01, 15, 0.9)
+
+
+def test_wrong_gains_are_the_model_s() -> None:
+    counted, _ = outcomes("gain", 10)
+    assert counted["a sensor named wrongly"] <= binom.ppf(0.99, 10, 0.05)
+    assert counted["model"] + counted["group with it"] >= 8
+
+
+def test_what_is_called_probable_is_mostly_so() -> None:
+    """The two ends; how often a probability in between is right needs the long run."""
+    said, true = moments(design_named(FRACTIONATOR), 20)
+    assert true[said > 0.95].mean() > 0.9
+    assert true[said < 0.05].mean() < 0.02
