@@ -79,6 +79,7 @@ class UnitRun:
         self._early: list[StateChange] = []
         held = sum(part.nbytes for part in state.estimator)
         self._longest = max(IN_MEMORY // held, 1) * CHUNK
+        self._most = CHUNK
 
     @property
     def started(self) -> bool:
@@ -109,11 +110,11 @@ class UnitRun:
             outcome, revision = self._take(arrival, slice_readings(readings, waiting, waiting + 1))
             outcomes.append(outcome)
             revisions += [revision] if revision is not None else []
-        row, most = waiting, CHUNK
+        row = waiting
         while row < len(readings):
-            part = slice_readings(readings, row, min(row + self.past.room(most), len(readings)))
+            part = slice_readings(readings, row, min(row + self.past.room(self._most), len(readings)))
             result, revision = self._run(part)
-            most = min(2 * most, self._longest) if len(result) == len(part) else CHUNK
+            self._most = min(2 * self._most, self._longest) if len(result) == len(part) else CHUNK
             if row == waiting:
                 flags, notes = told.changes + result.flags, told.notes + result.notes
                 result = replace(result, flags=flags, notes=notes, rests=told.rests + result.rests)
