@@ -137,10 +137,13 @@ def _cut(item: Exclusion, sensor: int, cycle: int, people_only: bool) -> Exclusi
 
 
 def next_end(book: FlagBook, cycle: int) -> int:
-    """Cycles from ``cycle`` to the next one at which a rest or a leaving out ends; large where none does."""
+    """Cycles from ``cycle`` to the next one at which a rest, a leaving out or an unsteady beginning ends; large where
+    none does.
+    """
     ends = [item.until for item in book.exclusions if item.until is not None]
     ends += [] if book.rest is None else [book.rest.until]
     ends += [state.until for state in book.states if state.until is not None]
+    ends += [book.beginning.until] if book.beginning is not None and book.beginning.unsteady else []
     return min((end - cycle for end in ends if end > cycle), default=2**62)
 
 
