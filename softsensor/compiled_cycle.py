@@ -6,7 +6,7 @@ from typing import NamedTuple
 
 import numpy as np
 
-from softsensor.detection.conformance import Evidence, Standing, follow_conformance
+from softsensor.detection.conformance import Evidence, Seen, Standing, follow_conformance
 from softsensor.detection.fault_tests import test_cycle
 from softsensor.detection.shift_tests import highest_share
 from softsensor.detection.state_of_tests import TestDesign, TestState
@@ -294,9 +294,8 @@ def _loop(
             out.news[k] = news
             out.settling[k] = 1 if tests.cycle[0] <= tests.settling_until[0] else 0
             resting = data.quiet[k] != 0 or out.settling[k] != 0
-            follow_conformance(
-                known, evidence, out.innovation[k], tests.cycle[0] - 1, tests.valid_from[0], resting
-            )
+            seen = Seen(out.innovation[k], out.innovation_sd[k], design.noise_sd, tests.ring)
+            follow_conformance(known, evidence, seen, tests.cycle[0] - 1, tests.valid_from[0], resting)
             for i in range(kernel.n_sensors):
                 out.beyond[k, i] = tests.beyond[i]
                 out.high[k, i] = highest_share(tests.high[i], design.interval[i])

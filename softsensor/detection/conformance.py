@@ -12,7 +12,9 @@ given up. With a prior rate of faults, an onset stands for the time between its 
     P(nothing) ~ 1,  P(h, onset) ~ rate * time * (1 + D p^2)^-1/2 exp(N^2 / (2 (D + p^-2)))
 
 The probability is the sum, over a sensor's own hypotheses and their onsets, of the share of each whose size now, normal
-with mean N / (D + p^-2) and variance 1 / (D + p^-2), lies beyond the tolerance. The measure is the conformance
+with mean N / (D + p^-2) and variance 1 / (D + p^-2), lies beyond the tolerance. Of a sensor that is left out,
+the mean difference m from the prediction without it, over n cycles, says it: the bias is normal with mean m and variance
+S - r + r / n, S the innovation's variance, r the noise's. The measure is the conformance
 probability of JCGM 106:2012 (its complement); the recursion is Willsky & Jones (1976).
 """
 
@@ -35,6 +37,8 @@ source."""
 MOVES_PER_YEAR = 12.0
 BEFORE_DAYS = 18.0
 """The first onset stands for so much time besides its own: about one instrument in twenty is wrong when watching begins."""
+LATELY = 64
+"""Cycles over which a sensor that is not in use is compared with the prediction without it."""
 NEGLIGIBLE = -30.0
 YEAR_S = 365.25 * 86400.0
 
@@ -57,6 +61,16 @@ class Standing(NamedTuple):
     log_rate: Floats
     before: float
     tolerance: Floats
+
+
+class Seen(NamedTuple):
+    """A cycle's innovations (n_sensors,) and their sd, the sensors' noise sd, and the ring of the latest innovations
+    (window, n_sensors)."""
+
+    innovation: Floats
+    sd: Floats
+    noise_sd: Floats
+    ring: Floats
 
 
 class Evidence(NamedTuple):
@@ -225,7 +239,7 @@ def weigh_onsets(known: Standing, evidence: Evidence, now: int) -> None:
             limit = known.tolerance[i]
             beyond[i] += weight * (_upper((limit - mean) / sd) + _upper((limit + mean) / sd))
     for i in range(m):
-        evidence.beyond[i] = beyond[i] / total
+        evidence.beyond[i] = beyond[i] / total if known.use[i] != 0 else np.nan
 
 
 @uncounted
@@ -250,12 +264,33 @@ def _forget(evidence: Evidence) -> None:
     evidence.N[:] = 0.0
     evidence.D[:] = 0.0
     evidence.block[:] = 0.0
-    evidence.beyond[:] = 0.0
+    evidence.beyond[:] = np.nan
+
+
+@uncounted
+def _weigh_left_out(known: Standing, evidence: Evidence, seen: Seen, cycle: int) -> None:
+    """A sensor that is not in use: its mean difference from the prediction without it, over the last LATELY cycles."""
+    window = seen.ring.shape[0]
+    for i in range(len(known.tolerance)):
+        if known.use[i] != 0:
+            continue
+        total, count = 0.0, 0
+        for back in range(min(LATELY, window, cycle + 1)):
+            value = seen.ring[(cycle - back) % window, i]
+            if value == value:
+                total += value
+                count += 1
+        if count == 0:
+            continue
+        noise = seen.noise_sd[i] * seen.noise_sd[i]
+        sd = np.sqrt(max(seen.sd[i] * seen.sd[i] - noise, 0.0) + noise / count)
+        mean, limit = total / count, known.tolerance[i]
+        evidence.beyond[i] = _upper((limit - mean) / sd) + _upper((limit + mean) / sd)
 
 
 @uncounted
 def follow_conformance(
-    known: Standing, evidence: Evidence, innovation: Floats, cycle: int, valid_from: int, resting: bool
+    known: Standing, evidence: Evidence, seen: Seen, cycle: int, valid_from: int, resting: bool
 ) -> None:
     """One cycle. What comes before ``valid_from`` and while the tests rest does not count; a rest forgets everything."""
     if resting or cycle < valid_from:
@@ -267,10 +302,11 @@ def follow_conformance(
         _begin_onset(evidence, cycle)
     elif evidence.onset[0] < 0:
         return
-    _whiten_into(known, innovation, evidence.block)
+    _whiten_into(known, seen.innovation, evidence.block)
     if place == BLOCK - 1:
         _add_block(known, evidence, cycle - (BLOCK - 1))
         for i in range(len(evidence.block)):
             evidence.block[i] = 0.0
         if (cycle // BLOCK) % LOOK_EVERY_BLOCKS == LOOK_EVERY_BLOCKS - 1:
             weigh_onsets(known, evidence, cycle + 1)
+            _weigh_left_out(known, evidence, seen, cycle)

@@ -127,8 +127,9 @@ class TestState(NamedTuple):
 
     def forget_evidence(self) -> None:
         """The conformance probability begins anew, in place."""
-        for part in (self.block, self.onset_n, self.onset_d, self.beyond):
+        for part in (self.block, self.onset_n, self.onset_d):
             part[:] = 0.0
+        self.beyond[:] = np.nan
         self.onset[:] = -1
 
     def give_head_start(self, interval: Floats) -> None:
@@ -177,5 +178,5 @@ def initial_tests(n_sensors: int, n_pairs: int, n_inputs: int, window: int, hypo
         onset=ints(-1, ONSETS),
         onset_n=np.zeros((ONSETS, hypotheses)),
         onset_d=np.zeros((ONSETS, hypotheses)),
-        beyond=floats(),
+        beyond=floats(np.nan),
     )

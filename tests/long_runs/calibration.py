@@ -44,7 +44,8 @@ def moments(design: UnitDesign, plants: int) -> tuple[Array, Mask]:
         parts = seen_by(design, case, y, keep=True).parts
         said.append(np.concatenate([part.beyond for part in parts])[EVERY - 1 :: EVERY].ravel())
         true.append((np.abs(bias) > tolerance)[EVERY - 1 :: EVERY].ravel())
-    return np.concatenate(said), np.concatenate(true)
+    told, so = np.concatenate(said), np.concatenate(true)
+    return told[np.isfinite(told)], so[np.isfinite(told)]
 
 
 def table(said: Array, true: Mask) -> str:

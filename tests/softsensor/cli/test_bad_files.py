@@ -32,6 +32,7 @@ def test_files_in_order_replay(command: Any, files: Any) -> None:
     assert {path.name for path in files.out.iterdir()} == {
         "estimates.csv",
         "innovations.csv",
+        "conformance.csv",
         "flags.csv",
         "lab_results.csv",
         "summary.json",

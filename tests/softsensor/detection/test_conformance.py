@@ -8,7 +8,14 @@ from numpy.typing import NDArray
 from scipy.special import logsumexp
 from scipy.stats import norm
 
-from softsensor.detection.conformance import BLOCK, Evidence, Standing, follow_conformance, weigh_onsets
+from softsensor.detection.conformance import (
+    BLOCK,
+    Evidence,
+    Seen,
+    Standing,
+    follow_conformance,
+    weigh_onsets,
+)
 from softsensor.detection.state_of_tests import ONSETS
 
 SENSORS, BLOCKS = 2, 40
@@ -33,14 +40,19 @@ def nothing_seen() -> Evidence:
         np.full(ONSETS, -1, dtype=np.int64),
         np.zeros((ONSETS, 5)),
         np.zeros((ONSETS, 5)),
-        np.zeros(SENSORS),
+        np.full(SENSORS, np.nan),
     )
+
+
+def seen(innovations: Array, k: int) -> Seen:
+    """A cycle whose innovations have an sd of 0.5, of which 0.3 is the sensor's noise; a ring that keeps everything."""
+    return Seen(innovations[k], np.full(SENSORS, 0.5), np.full(SENSORS, 0.3), innovations)
 
 
 def run(what: Standing, innovations: Array, valid_from: int = 0) -> Evidence:
     evidence = nothing_seen()
-    for k, row in enumerate(innovations):
-        follow_conformance(what, evidence, row, k, valid_from, False)
+    for k in range(len(innovations)):
+        follow_conformance(what, evidence, seen(innovations, k), k, valid_from, False)
     return evidence
 
 
@@ -115,13 +127,20 @@ def test_nothing_counts_before_the_filter_has_settled_or_while_the_tests_rest() 
     late = run(what, innovations, valid_from=10 * BLOCK)
     assert int(late.onset[0]) == 10 * BLOCK
     assert np.all(late.beyond < 0.05)
-    follow_conformance(what, late, innovations[0], 20 * BLOCK, 0, True)
+    follow_conformance(what, late, seen(innovations, 0), 20 * BLOCK, 0, True)
     assert np.all(late.onset == -1)
-    assert not late.beyond.any()
+    assert np.isnan(late.beyond).all()
 
 
-def test_a_sensor_left_out_has_no_probability() -> None:
+@pytest.mark.parametrize("bias", [0.0, 0.5, 1.2])
+def test_a_sensor_left_out_is_judged_by_its_mean_difference_from_the_prediction_without_it(
+    bias: float,
+) -> None:
+    """COMPUTED: normal with the mean of the last 64 differences that are there, variance 0.25 - 0.09 + 0.09 / 64 or less."""
     what = known()._replace(use=np.array([1, 0], dtype=np.int64))
-    evidence = run(what, np.full((16 * BLOCK, SENSORS), 3.0))
-    assert evidence.beyond[0] > 0.5
-    assert evidence.beyond[1] == 0.0
+    innovations = np.random.default_rng(5).normal(size=(16 * BLOCK, SENSORS)) * 0.3 + bias
+    innovations[-20:-10, 1] = np.nan
+    evidence = run(what, innovations)
+    lately = innovations[-64:, 1][np.isfinite(innovations[-64:, 1])]
+    belief = norm(lately.mean(), np.sqrt(0.25 - 0.09 + 0.09 / len(lately)))
+    assert np.isclose(evidence.beyond[1], belief.sf(0.7) + belief.cdf(-0.7), atol=1e-6)

@@ -292,7 +292,7 @@ def test_what_people_decide_about_sensors_and_tests_reaches_a_running_unit_once_
             site.writer.flush(DEADLINE)
             assert decisions.waiting_decisions(site.database, unit) == []
             told = [item.body["text"] for item in site.news if item.topic == "event"]
-            assert [text.split(";")[-1].strip() for text in told if "until" in text] == [
+            assert [text.split(";")[-1].strip() for text in told if "until" in text and ";" in text] == [
                 "a fitter: cleaning",
                 "an operator: grade 7",
             ]
