@@ -26,6 +26,12 @@ NAMING_RATIO = 10.0
 """A single name is given only when it is this many times as probable as all other explanations together."""
 
 
+FINEST = 1000.0
+"""Log evidence beyond this tells no more: signatures are good to a few per cent (the filter has not quite settled, the gate
+kept a reading out, a gain is not quite the model's), and of a gross fault's e^14000 a difference of e^10 between two
+explanations says nothing."""
+
+
 class Likelihoods(NamedTuple):
     """Per hypothesis: log of the averaged likelihood ratio, best onset (cycles back), size there, its sd."""
 
@@ -86,12 +92,23 @@ def score_of(signature: Floats, eps: Floats, whole: Ints, age: int) -> tuple[flo
 
 @njit(cache=True)
 def likelihoods(
-    table: Floats, prior_sd: Floats, ring: Floats, newest: int, whitening: Floats, use: Ints, ages: Ints
+    table: Floats,
+    prior_sd: Floats,
+    ring: Floats,
+    newest: int,
+    whitening: Floats,
+    use: Ints,
+    ages: Ints,
+    scored: int,
 ) -> Likelihoods:
-    """Score every hypothesis over the onsets in ``ages`` (cycles back, ascending; the largest sets the window)."""
+    """Score every hypothesis over the onsets in ``ages`` (cycles back, ascending; the largest sets the window).
+
+    Only the latest ``scored`` cycles count; an onset may lie before them, in an outage for example.
+    """
     n, count = table.shape[0], ages[-1]
     eps, whole = np.zeros((count, ring.shape[1])), np.ones(count, dtype=np.int64)
     recent(ring, newest, whitening, use, count, eps, whole)
+    whole[: max(count - scored, 0)] = 0
     evidence, best_age = np.full(n, -1e300), np.zeros(n, dtype=np.int64)
     size, size_sd = np.zeros(n), np.zeros(n)
     for h in range(n):
@@ -126,9 +143,13 @@ def onset_ages(available: int) -> Ints:
     return np.array([*ages, max(available, 1)], dtype=np.int64)
 
 
-def judge(suspects: tuple[Hypothesis, ...], found: Likelihoods, temper: float = 1.0) -> Verdict:
-    """Turn evidence into probabilities per name, "nothing" among them, and the group within ten to one of the first."""
+def judge(suspects: tuple[Hypothesis, ...], found: Likelihoods) -> Verdict:
+    """Turn evidence into probabilities per name, "nothing" among them, and the group within ten to one of the first.
+
+    All evidence is scaled down so that the largest is FINEST at most: see there.
+    """
     top = max(0.0, float(np.max(found.evidence)))
+    temper = min(1.0, FINEST / top) if top > 0.0 else 1.0
     weights: dict[str, float] = {"nothing": exponential(-top * temper)}
     best: dict[str, int] = {"nothing": -1}
     instrument = 0.0

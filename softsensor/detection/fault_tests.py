@@ -30,6 +30,7 @@ def _settle(design: TestDesign, state: TestState, doubtful: int) -> int:
         return SETTLING if until <= now else 0
     if now == until and now > 0:
         state.valid_from[0] = now
+        state.resumed[0] = 0 if state.resumed[0] < 0 else 1
         for i in range(design.interval.shape[0]):
             for p in range(design.interval.shape[1]):
                 state.high[i, p] = HEAD_START * design.armed[i] * design.interval[i, p]

@@ -173,6 +173,7 @@ def _begin(design: DetectionDesign, outcome: FollowUp, tests: TestState, moment:
         f"innovations begin at {time_words(until)}, the estimates are Uncertain until then"
     )
     tests.settling_until[0] = max(int(tests.settling_until[0]), start.until)
+    tests.resumed[0] = -1
     tests.restart_sums(moment.cycle + 1)
     tests.noisy[:] = 0
     moment.events[:] &= ~(told.NOISY | told.NOISY_ENDED)
@@ -357,7 +358,8 @@ def explanations(design: DetectionDesign) -> tuple[Hypothesis, ...]:
 def look(
     design: DetectionDesign, tests: TestState, use: Ints, gains: bool = True, only: Hypothesis | None = None
 ) -> tuple[Verdict, Likelihoods]:
-    """Weigh all explanations of the innovations since the tests were last restarted.
+    """Weigh all explanations of the innovations since the tests were last restarted; after an outage of
+    inputs, what they explain may be older.
 
     ``gains``: wrong gains of transfer functions too, which costs several times as much; ``only`` those of the paths that
     concern one sensor or input.
@@ -365,8 +367,10 @@ def look(
     steady, table = design.table(use)
     newest = int(tests.cycle[0]) - 1
     available = max(min(newest + 1 - int(tests.valid_from[0]), design.window), 1)
+    remembered = max(min(newest + 1, design.window), 1)
+    ages = onset_ages(remembered if tests.resumed[0] != 0 else available)
     prior_sd = np.array([suspect.prior_sd for suspect in design.suspects])
-    found = likelihoods(table, prior_sd, tests.ring, newest, steady.whitening, use, onset_ages(available))
+    found = likelihoods(table, prior_sd, tests.ring, newest, steady.whitening, use, ages, available)
     if not (gains and design.paths):
         return judge(design.suspects, found), found
     rings = (tests.ring, tests.moves)

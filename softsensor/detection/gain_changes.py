@@ -257,6 +257,7 @@ def gain_likelihoods(
         remembered,
         ages,
     )
+    weighed = weighed._replace(age=np.minimum(weighed.age, remembered))
     for part, whole in zip(weighed, found, strict=True):
         whole[chosen] = part
     return found

@@ -102,6 +102,9 @@ class TestState(NamedTuple):
     cycle: Ints
     watch: Ints
     """(1,) 1 while a flag or an undecided test needs looking after every ``look_every`` cycles."""
+    resumed: Ints
+    """(1,) 1 where what counts began after an outage of inputs: a fault may be older than that; -1 while the tests rest
+    because the plant was moving when the run began."""
     settling_until: Ints
     """(1,) First cycle at which the tests go on after inputs were missing."""
     block: Floats
@@ -123,6 +126,7 @@ class TestState(NamedTuple):
         self.up[:] = self.misfit[:] = 0
         self.down_since[:] = cycle
         self.valid_from[0] = cycle
+        self.resumed[0] = min(int(self.resumed[0]), 0)
         self.forget_evidence()
 
     def forget_evidence(self) -> None:
@@ -173,6 +177,7 @@ def initial_tests(n_sensors: int, n_pairs: int, n_inputs: int, window: int, hypo
         valid_from=ints(0, 1),
         cycle=ints(0, 1),
         watch=ints(0, 1),
+        resumed=ints(0, 1),
         settling_until=ints(0, 1),
         block=np.zeros(n_sensors + 1),
         onset=ints(-1, ONSETS),

@@ -41,7 +41,7 @@ class Case:
         for k in range(WINDOW):
             self.ring[(self.newest - (WINDOW - 1 - k)) % WINDOW] = self.innovations[k]
 
-    def found(self, ages: list[int]) -> Likelihoods:
+    def found(self, ages: list[int], scored: int = WINDOW) -> Likelihoods:
         return likelihoods(
             self.table,
             self.prior,
@@ -50,6 +50,7 @@ class Case:
             self.whitening,
             self.use,
             np.array(ages, dtype=np.int64),
+            scored,
         )
 
     def stacked(self, h: int, age: int) -> tuple[Array, Array, Array]:
@@ -86,6 +87,16 @@ def test_every_hypothesis_and_onset_against_batch_least_squares(missing: bool, l
             assert found.age[h] == age
             ratio = log_density(e, S + case.prior[h] ** 2 * np.outer(g, g)) - log_density(e, S)
             assert np.isclose(found.evidence[h], ratio, rtol=TOLERANCE, atol=TOLERANCE)
+
+
+def test_an_onset_before_what_counts_is_scored_over_what_counts() -> None:
+    case = Case(23)
+    g, e, S = (part[15 * SENSORS :] for part in case.stacked(0, 25))
+    weighted = np.linalg.solve(S[:, 15 * SENSORS :], g)
+    precision = case.prior[0] ** -2
+    found = case.found([25], scored=10)
+    assert np.isclose(found.size[0], (weighted @ e) / (weighted @ g + precision), rtol=TOLERANCE)
+    assert found.age[0] == 25
 
 
 def test_onsets_are_averaged_and_the_best_one_reported() -> None:

@@ -40,7 +40,14 @@ def test_it_is_the_diagnosis_that_is_asked() -> None:
         rows[-age:] += fault.size * step[:age]
         ring = np.ascontiguousarray(rows @ np.linalg.inv(steady.whitening).T)
         found = likelihoods(
-            table, prior_sd, ring, design.window - 1, steady.whitening, use, onset_ages(design.window)
+            table,
+            prior_sd,
+            ring,
+            design.window - 1,
+            steady.whitening,
+            use,
+            onset_ages(design.window),
+            design.window,
         )
         verdict = judge(design.suspects, found)
         weights = np.exp(logs[draw] - logs[draw].max())
