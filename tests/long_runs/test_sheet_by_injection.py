@@ -8,41 +8,16 @@ from pathlib import Path
 
 import numpy as np
 import pytest
+from long_runs.found import put_in
 from long_runs.simulated_plant import Case, Plant, seen_by, still_inputs
 
 from plant_models.simulators import reactor_model_path
-from softsensor.cycle import UnitDesign
-from softsensor.detection.detectability import DAY, FOUND, HORIZONS
-from softsensor.detection.flags import Flag
+from softsensor.detection.detectability import FOUND, HORIZONS
 from softsensor.detection.sheet import detectability_sheet
 from softsensor.detection.signatures import Shape
 from softsensor.unit_design import design_unit, load_model
 
 WOOD_BERRY = Path(str(files("plant_models.library"))) / "wood_berry.toml"
-
-
-def put_in(
-    design: UnitDesign, fault: tuple[int, Shape, float], times: tuple[int, int], runs: int
-) -> list[tuple[bool, list[Flag]]]:
-    """Per run whose test is down at the onset: did the sensor's own test go up within the time, and the flags opened.
-
-    ``fault``: sensor, shape, size (a ramp's per day); ``times``: cycles before the onset and after it.
-    """
-    spec, (index, shape, size), (before, after) = design.model.spec, fault, times
-    bias = np.zeros((before + after, len(spec.sensors)))
-    course = size * np.ones(after)
-    if shape == "ramp":
-        course = size * spec.sample_time / DAY * np.arange(1, after + 1)
-    bias[before:, index] = course
-    plant, found = Plant(spec, 41), []
-    for _ in range(runs):
-        case = Case(still_inputs(spec, before + after), bias=bias)
-        seen = seen_by(design, case, plant.readings(case)[1], keep=True)
-        top = np.concatenate([np.maximum(part.high, part.low)[:, index] for part in seen.parts])
-        if top[before - 1] < 1.0:
-            opened = [flag for flag in seen.flags if flag.cleared is None]
-            found.append((bool(np.any(top[before:] > 1.0)), opened))
-    return found
 
 
 @pytest.mark.parametrize("shape", ["step", "ramp"])
