@@ -250,5 +250,6 @@ def test_the_models_page_opens_from_the_units_page_and_fits_a_narrow_screen(
     expect(page.get_by_role("heading", name=re.compile("^Model of"))).to_be_visible(timeout=60_000)
     expect(page.get_by_role("heading", name="Smallest step and slowest drift found within")).to_be_visible()
     page.set_viewport_size({"width": 400, "height": 800})
-    assert page.evaluate("document.documentElement.scrollWidth") <= 400
+    # the browser lays the page out anew some time after it has been told the size
+    page.wait_for_function("document.documentElement.scrollWidth <= 400")
     browser_page.assert_quiet()
