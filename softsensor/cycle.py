@@ -17,8 +17,10 @@ from numpy.typing import NDArray
 from plant_models.errors import Problem
 from plant_models.plant_model import PlantModel
 from softsensor.compiled_cycle import BlockInputs, BlockOutputs, empty_outputs, run_block
+from softsensor.detection.detection_design import DetectionDesign, sensors_in_use
 from softsensor.detection.flags import Beginning, Flag, FlagBook, Note, RestSpell
-from softsensor.detection.follow_up import DetectionDesign, FollowUp, Moment, follow_up, sensors_in_use
+from softsensor.detection.follow_up import follow_up
+from softsensor.detection.outcomes import FollowUp, Moment
 from softsensor.detection.people import Decision, Taken, ended, next_end, take
 from softsensor.detection.plant_states import StateChange, change_state
 from softsensor.detection.state_of_tests import TestState, initial_tests

@@ -11,7 +11,7 @@ from plant_models.model_file import read_model_file
 from plant_models.plant_model import PlantModel
 from softsensor.cycle import BEYOND_ABOVE, BEYOND_BELOW, UnitDesign
 from softsensor.detection.beginning import forgetting
-from softsensor.detection.follow_up import DetectionDesign
+from softsensor.detection.detection_design import DetectionDesign
 from softsensor.detection.gain_changes import path_hypotheses
 from softsensor.detection.run_length import interval_with_head_start
 from softsensor.detection.signatures import cycles_to_settle, filter_response, hypotheses, steady_filter

@@ -11,7 +11,7 @@ from plant_models.plant_model import PlantModel
 from plant_models.simulators.scenario import DemoScenario
 from softsensor.cycle import start
 from softsensor.demonstration.plant_side import Truth
-from softsensor.detection.follow_up import look
+from softsensor.detection.detection_design import look
 from softsensor.estimation.kernel import Floats
 from softsensor.readings_of_cycle import CycleQuality, CycleReadings, join_readings
 from softsensor.records import audit, series

@@ -2,24 +2,18 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field, replace
+from dataclasses import replace
 from zlib import crc32
 
 import numpy as np
 
-from plant_models.plant_model import PlantModel
 from softsensor.detection import state_of_tests as told
-from softsensor.detection.beginning import Forgetting
-from softsensor.detection.conformance import Standing, standing
+from softsensor.detection.detection_design import DetectionDesign, explanations, look, sensors_in_use
 from softsensor.detection.diagnosis import (
     NAMING_RATIO,
     Likelihoods,
     Verdict,
-    judge,
-    likelihoods,
-    onset_ages,
 )
-from softsensor.detection.elementary import exponential
 from softsensor.detection.flags import (
     Episode,
     Exclusion,
@@ -31,12 +25,12 @@ from softsensor.detection.flags import (
     flag_name,
     time_words,
 )
-from softsensor.detection.gain_changes import gain_likelihoods
-from softsensor.detection.signatures import Hypothesis, SteadyFilter, signatures, steady_filter
-from softsensor.detection.state_of_tests import TestDesign, TestState
-from softsensor.estimation.kernel import Floats, Ints, Kernel
+from softsensor.detection.outcomes import SHIFT_KINDS, FollowUp, Moment, cleared, opened
+from softsensor.detection.signatures import Hypothesis
+from softsensor.detection.single_faults import QUIET, single_faults
+from softsensor.detection.state_of_tests import TestState
+from softsensor.estimation.kernel import Ints
 
-SHIFT_KINDS: tuple[Kind, ...] = ("bias", "drift")
 LASTING: tuple[Kind, ...] = (*SHIFT_KINDS, "model")
 """Kinds that come from a diagnosis and clear when all has been quiet."""
 EXPLAINING: tuple[Kind, ...] = (*LASTING, "stuck", "noisy")
@@ -45,84 +39,13 @@ PATIENCE = 60
 """Cycles for which a name is waited for before a group is flagged, and between two times that gains are weighed; units take
 their turns within it, so that a hundred of them do not all weigh in the same second."""
 UNSTEADY = "start in a moving plant"
-QUIET = 360
-"""Cycles without another spike, or with the sums down, after which a spike's or a shift's flag clears: a fault that comes
-and goes, or that the filter half follows, stays one flag."""
-
-
-@dataclass(frozen=True)
-class DetectionDesign:
-    """Everything the tests and the diagnosis of one unit need; tables are computed once per set of sensors in use."""
-
-    model: PlantModel
-    kernel: Kernel
-    tests: TestDesign
-    suspects: tuple[Hypothesis, ...]
-    paths: tuple[Hypothesis, ...]
-    """Transfer functions whose gain may have changed."""
-    window: int
-    sample_us: int
-    leave_out: bool
-    armed: bool
-    forgetting: Forgetting
-    settled_after: int = 0
-    """Cycles from the start before the filter is the settled one that signatures suppose."""
-    tables: dict[tuple[int, ...], tuple[SteadyFilter, Floats]] = field(default_factory=dict, repr=False)
-    standings: dict[tuple[int, ...], Standing] = field(default_factory=dict, repr=False)
-
-    def table(self, use: Ints) -> tuple[SteadyFilter, Floats]:
-        """Settled filter and whitened signatures with these sensors in use."""
-        key = tuple(int(value) for value in use)
-        if key not in self.tables:
-            steady = steady_filter(self.model, self.kernel, use)
-            self.tables[key] = (
-                steady,
-                signatures(self.model, self.kernel, self.suspects, steady, use, self.window),
-            )
-        return self.tables[key]
-
-    def standing(self, use: Ints) -> Standing:
-        """What the conformance probability needs with these sensors in use."""
-        key = tuple(int(value) for value in use)
-        if key not in self.standings:
-            steady, table = self.table(use)
-            tolerance = np.array([item.tolerance for item in self.model.spec.sensors])
-            sample_time = self.model.spec.sample_time
-            self.standings[key] = standing(
-                self.suspects, table, steady.whitening, use, sample_time, tolerance
-            )
-        return self.standings[key]
-
-
-@dataclass(frozen=True)
-class FollowUp:
-    """The outcome of one cycle's news."""
-
-    book: FlagBook
-    changes: tuple[Flag, ...] = ()
-    """Flags opened or cleared at this cycle."""
-    notes: tuple[Note, ...] = ()
-    rests: tuple[RestSpell, ...] = ()
-    """Times in which tests rest, begun or given an end at this cycle."""
-    exclusion: Exclusion | None = None
-    """A sensor to be left out, from its onset on."""
-
-
-@dataclass(frozen=True)
-class Moment:
-    """The cycle that has news: its number, its time, the event bits per sensor and of all together."""
-
-    cycle: int
-    time: int
-    events: Ints
-    news: int
 
 
 def follow_up(design: DetectionDesign, book: FlagBook, tests: TestState, moment: Moment) -> FollowUp:
     """Deal with all news of one cycle; ``tests`` is a work array and may be restarted here."""
     outcome = _say_settling(_begin(design, FollowUp(book), tests, moment), moment)
     for sensor in range(design.kernel.n_sensors):
-        outcome = _simple_faults(design, outcome, tests, moment, sensor)
+        outcome = single_faults(design, outcome, tests, moment, sensor)
     if not book.resting(moment.cycle):
         outcome = _clear_shifts(design, outcome, tests, moment)
     if design.armed:
@@ -215,90 +138,6 @@ def climbed_since(design: DetectionDesign, tests: TestState, sensor: int) -> int
     return cycle
 
 
-def _opened(outcome: FollowUp, flag: Flag) -> FollowUp:
-    book = replace(outcome.book, open=(*outcome.book.open, flag))
-    return replace(outcome, book=book, changes=(*outcome.changes, flag))
-
-
-def _cleared(outcome: FollowUp, flag: Flag, time: int) -> FollowUp:
-    remaining = tuple(item for item in outcome.book.open if item.flag != flag.flag)
-    return replace(
-        outcome,
-        book=replace(outcome.book, open=remaining),
-        changes=(*outcome.changes, flag.closed(time)),
-    )
-
-
-def _certain(design: DetectionDesign, tag: str, kind: Kind, onset: int, moment: Moment) -> Flag:
-    name = flag_name(design.model.spec.name, tag, kind, moment.time)
-    return Flag(name, tag, kind, onset, moment.time, None, np.nan, np.nan, 1.0, (tag,))
-
-
-def _simple_faults(
-    design: DetectionDesign, outcome: FollowUp, tests: TestState, moment: Moment, sensor: int
-) -> FollowUp:
-    """Stuck, lost and spike: each shows in the sensor's own readings and needs no comparison."""
-    bits, tag = int(moment.events[sensor]), design.model.spec.sensors[sensor].tag
-    starts: tuple[tuple[int, Kind, int], ...] = (
-        (told.LOST, "lost", int(tests.missing[sensor]) - 1),
-        (told.STUCK, "stuck", int(tests.repeats[sensor])),
-        (told.SPIKE, "spike", 1),
-    )
-    shifted = outcome.book.find(tag, SHIFT_KINDS) is not None
-    worked_on = outcome.book.worked_on(sensor, moment.cycle)
-    for bit, kind, ago in starts:
-        if worked_on or (kind == "spike" and shifted):
-            continue
-        if bits & bit and outcome.book.find(tag, (kind,)) is None:
-            onset = moment.time - ago * design.sample_us
-            outcome = _superseded(outcome, tag, kind, (onset, moment.time))
-            outcome = _opened(outcome, _certain(design, tag, kind, onset, moment))
-    if bits & told.NOISY and not worked_on:
-        outcome = _noisy(design, outcome, tests, moment, sensor)
-    ends: tuple[tuple[int, Kind], ...] = (
-        (told.LOST_ENDED, "lost"),
-        (told.STUCK_ENDED, "stuck"),
-        (told.NOISY_ENDED, "noisy"),
-    )
-    for bit, kind in ends:
-        flag = outcome.book.find(tag, (kind,))
-        if bits & bit and flag is not None:
-            outcome = _cleared(outcome, flag, moment.time)
-    if bits & (told.LOST | told.LOST_ENDED):
-        tests.valid_from[0] = moment.cycle + 1
-        tests.forget_evidence()
-    spike = outcome.book.find(tag, ("spike",))
-    if spike is not None and moment.time - spike.detected > QUIET * design.sample_us:
-        outcome = _cleared(outcome, spike, moment.time)
-    return outcome
-
-
-def _noisy(
-    design: DetectionDesign, outcome: FollowUp, tests: TestState, moment: Moment, sensor: int
-) -> FollowUp:
-    """More noise than the model file says. It reaches the other sensors' innovations through the estimate: where two
-    tests are up, the sensor whose sum went further is the one."""
-    use = sensors_in_use(design, outcome.book, tests, moment.cycle)
-    further = [
-        i for i in np.flatnonzero((tests.noisy != 0) & (use != 0)) if tests.spread[i] > tests.spread[sensor]
-    ]
-    tag = design.model.spec.sensors[sensor].tag
-    if further or outcome.book.find(tag, ("noisy",)) is not None:
-        return outcome
-    flag = _certain(design, tag, "noisy", moment.time, moment)
-    probability = 1.0 / (1.0 + exponential(-float(tests.spread[sensor])))
-    return _opened(outcome, replace(flag, probability=probability))
-
-
-def _superseded(outcome: FollowUp, tag: str, kind: Kind, times: tuple[int, int]) -> FollowUp:
-    """A sensor that has stuck was flagged as shifted first: one fault, the shift's flag closes."""
-    shift = outcome.book.find(tag, SHIFT_KINDS)
-    onset, now = times
-    if kind != "stuck" or shift is None or shift.onset < onset:
-        return outcome
-    return _cleared(outcome, shift, now)
-
-
 def _clear_shifts(design: DetectionDesign, outcome: FollowUp, tests: TestState, moment: Moment) -> FollowUp:
     """A shift's flag clears once its sensor's own sums have stayed down (an input's: once all sums have)."""
     tags = [item.tag for item in design.model.spec.sensors]
@@ -313,16 +152,8 @@ def _clear_shifts(design: DetectionDesign, outcome: FollowUp, tests: TestState, 
             moment.cycle - (moment.time - flag.detected) // design.sample_us,
         )
         if not np.any(tests.up[own] != 0) and moment.cycle - since > QUIET:
-            outcome = _cleared(outcome, flag, moment.time)
+            outcome = cleared(outcome, flag, moment.time)
     return outcome
-
-
-def sensors_in_use(design: DetectionDesign, book: FlagBook, tests: TestState, cycle: int) -> Ints:
-    """(n_sensors,) 0 for a sensor that is left out or lost."""
-    return np.array(
-        [int(not book.excluded(i, cycle) and tests.lost[i] == 0) for i in range(design.kernel.n_sensors)],
-        dtype=np.int64,
-    )
 
 
 def _diagnose(design: DetectionDesign, outcome: FollowUp, tests: TestState, moment: Moment) -> FollowUp:
@@ -348,35 +179,6 @@ def _diagnose(design: DetectionDesign, outcome: FollowUp, tests: TestState, mome
 def _is_left_out(design: DetectionDesign, book: FlagBook, tag: str, cycle: int) -> bool:
     tags = [item.tag for item in design.model.spec.sensors]
     return tag in tags and book.excluded(tags.index(tag), cycle)
-
-
-def explanations(design: DetectionDesign) -> tuple[Hypothesis, ...]:
-    """All that a verdict may name: instruments and disturbances, then transfer functions."""
-    return design.suspects + design.paths
-
-
-def look(
-    design: DetectionDesign, tests: TestState, use: Ints, gains: bool = True, only: Hypothesis | None = None
-) -> tuple[Verdict, Likelihoods]:
-    """Weigh all explanations of the innovations since the tests were last restarted; after an outage of
-    inputs, what they explain may be older.
-
-    ``gains``: wrong gains of transfer functions too, which costs several times as much; ``only`` those of the paths that
-    concern one sensor or input.
-    """
-    steady, table = design.table(use)
-    newest = int(tests.cycle[0]) - 1
-    available = max(min(newest + 1 - int(tests.valid_from[0]), design.window), 1)
-    remembered = max(min(newest + 1, design.window), 1)
-    ages = onset_ages(remembered if tests.resumed[0] != 0 else available)
-    prior_sd = np.array([suspect.prior_sd for suspect in design.suspects])
-    found = likelihoods(table, prior_sd, tests.ring, newest, steady.whitening, use, ages, available)
-    if not (gains and design.paths):
-        return judge(design.suspects, found), found
-    rings = (tests.ring, tests.moves)
-    more = gain_likelihoods(design.kernel, design.paths, steady, use, rings, newest, available, only)
-    together = Likelihoods(*(np.concatenate(parts) for parts in zip(found, more, strict=True)))
-    return judge(explanations(design), together), together
 
 
 def _act(design: DetectionDesign, outcome: FollowUp, tests: TestState, moment: Moment, use: Ints) -> FollowUp:
@@ -462,7 +264,7 @@ def _open_shift(
         verdict.probabilities[0],
         verdict.group,
     )
-    outcome = _opened(outcome, flag)
+    outcome = opened(outcome, flag)
     isolated = flag.isolated and suspect.source == "sensor"
     if not (design.leave_out and isolated and int(np.sum(use)) > 1):
         return outcome

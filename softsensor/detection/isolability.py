@@ -25,8 +25,9 @@ from numba import njit
 from numpy.typing import NDArray
 from scipy.special import logsumexp
 
+from softsensor.detection.detection_design import DetectionDesign
 from softsensor.detection.diagnosis import NAMING_RATIO, onset_ages
-from softsensor.detection.follow_up import PATIENCE, DetectionDesign
+from softsensor.detection.follow_up import PATIENCE
 from softsensor.detection.signatures import Hypothesis, Shape, signatures
 from softsensor.detection.step_signatures import Instrument
 from softsensor.estimation.kernel import Floats, Ints

@@ -12,8 +12,9 @@ from typing import Literal
 
 import numpy as np
 
+from softsensor.detection.detection_design import DetectionDesign
 from softsensor.detection.flags import Exclusion, FlagBook, Note, Rest, RestSpell, time_words
-from softsensor.detection.follow_up import SHIFT_KINDS, DetectionDesign, FollowUp
+from softsensor.detection.outcomes import SHIFT_KINDS, FollowUp
 from softsensor.detection.state_of_tests import TestState
 
 Act = Literal["put back", "leave out", "rest", "go on"]

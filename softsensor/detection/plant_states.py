@@ -11,8 +11,9 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
+from softsensor.detection.detection_design import DetectionDesign
 from softsensor.detection.flags import Exclusion, HeldState, Note, RestSpell, time_words
-from softsensor.detection.follow_up import DetectionDesign, FollowUp
+from softsensor.detection.outcomes import FollowUp
 
 MODEL_HOLDS = ("grade change", "maintenance")
 """States in which the estimates stay as good as their inputs say; in any other they are Uncertain."""

@@ -19,7 +19,7 @@ from softsensor.detection.detectability import (
     horizon_cycles,
     watched,
 )
-from softsensor.detection.follow_up import DetectionDesign
+from softsensor.detection.detection_design import DetectionDesign
 from softsensor.detection.isolability import Diagnostician, InstrumentFault, Isolation
 from softsensor.detection.run_length import average_run_length
 from softsensor.detection.signatures import Shape

@@ -16,7 +16,7 @@ from plant_models.specification import PathSpec
 from softsensor.cycle import UnitDesign
 from softsensor.detection.beginning import Forgetting, forgetting, free_response
 from softsensor.detection.flags import Flag, Note
-from softsensor.detection.follow_up import SHIFT_KINDS
+from softsensor.detection.outcomes import SHIFT_KINDS
 from softsensor.detection.signatures import steady_filter
 from softsensor.service.checkpoints import FORMAT, Context, pack_state, unpack_state
 from softsensor.service.replay import Replay

@@ -11,8 +11,9 @@ import pytest
 from plant_models.building import build_plant_model
 from plant_models.model_file import parse_model_text
 from softsensor.detection import state_of_tests
+from softsensor.detection.detection_design import DetectionDesign
 from softsensor.detection.flags import Episode, Exclusion, Flag, FlagBook, Kind, Rest
-from softsensor.detection.follow_up import DetectionDesign, FollowUp
+from softsensor.detection.outcomes import FollowUp
 from softsensor.detection.people import Act, Decision, Taken, ended, next_end, take
 from softsensor.detection.state_of_tests import initial_tests
 from softsensor.unit_design import design_unit

@@ -1,0 +1,106 @@
+"""What the tests and the diagnosis of one unit need, and one look at all explanations of the latest innovations."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field
+
+import numpy as np
+
+from plant_models.plant_model import PlantModel
+from softsensor.detection.beginning import Forgetting
+from softsensor.detection.conformance import Standing, standing
+from softsensor.detection.diagnosis import (
+    Likelihoods,
+    Verdict,
+    judge,
+    likelihoods,
+    onset_ages,
+)
+from softsensor.detection.flags import (
+    FlagBook,
+)
+from softsensor.detection.gain_changes import gain_likelihoods
+from softsensor.detection.signatures import Hypothesis, SteadyFilter, signatures, steady_filter
+from softsensor.detection.state_of_tests import TestDesign, TestState
+from softsensor.estimation.kernel import Floats, Ints, Kernel
+
+
+@dataclass(frozen=True)
+class DetectionDesign:
+    """Everything the tests and the diagnosis of one unit need; tables are computed once per set of sensors in use."""
+
+    model: PlantModel
+    kernel: Kernel
+    tests: TestDesign
+    suspects: tuple[Hypothesis, ...]
+    paths: tuple[Hypothesis, ...]
+    """Transfer functions whose gain may have changed."""
+    window: int
+    sample_us: int
+    leave_out: bool
+    armed: bool
+    forgetting: Forgetting
+    settled_after: int = 0
+    """Cycles from the start before the filter is the settled one that signatures suppose."""
+    tables: dict[tuple[int, ...], tuple[SteadyFilter, Floats]] = field(default_factory=dict, repr=False)
+    standings: dict[tuple[int, ...], Standing] = field(default_factory=dict, repr=False)
+
+    def table(self, use: Ints) -> tuple[SteadyFilter, Floats]:
+        """Settled filter and whitened signatures with these sensors in use."""
+        key = tuple(int(value) for value in use)
+        if key not in self.tables:
+            steady = steady_filter(self.model, self.kernel, use)
+            self.tables[key] = (
+                steady,
+                signatures(self.model, self.kernel, self.suspects, steady, use, self.window),
+            )
+        return self.tables[key]
+
+    def standing(self, use: Ints) -> Standing:
+        """What the conformance probability needs with these sensors in use."""
+        key = tuple(int(value) for value in use)
+        if key not in self.standings:
+            steady, table = self.table(use)
+            tolerance = np.array([item.tolerance for item in self.model.spec.sensors])
+            sample_time = self.model.spec.sample_time
+            self.standings[key] = standing(
+                self.suspects, table, steady.whitening, use, sample_time, tolerance
+            )
+        return self.standings[key]
+
+
+def sensors_in_use(design: DetectionDesign, book: FlagBook, tests: TestState, cycle: int) -> Ints:
+    """(n_sensors,) 0 for a sensor that is left out or lost."""
+    return np.array(
+        [int(not book.excluded(i, cycle) and tests.lost[i] == 0) for i in range(design.kernel.n_sensors)],
+        dtype=np.int64,
+    )
+
+
+def explanations(design: DetectionDesign) -> tuple[Hypothesis, ...]:
+    """All that a verdict may name: instruments and disturbances, then transfer functions."""
+    return design.suspects + design.paths
+
+
+def look(
+    design: DetectionDesign, tests: TestState, use: Ints, gains: bool = True, only: Hypothesis | None = None
+) -> tuple[Verdict, Likelihoods]:
+    """Weigh all explanations of the innovations since the tests were last restarted; after an outage of
+    inputs, what they explain may be older.
+
+    ``gains``: wrong gains of transfer functions too, which costs several times as much; ``only`` those of the paths that
+    concern one sensor or input.
+    """
+    steady, table = design.table(use)
+    newest = int(tests.cycle[0]) - 1
+    available = max(min(newest + 1 - int(tests.valid_from[0]), design.window), 1)
+    remembered = max(min(newest + 1, design.window), 1)
+    ages = onset_ages(remembered if tests.resumed[0] != 0 else available)
+    prior_sd = np.array([suspect.prior_sd for suspect in design.suspects])
+    found = likelihoods(table, prior_sd, tests.ring, newest, steady.whitening, use, ages, available)
+    if not (gains and design.paths):
+        return judge(design.suspects, found), found
+    rings = (tests.ring, tests.moves)
+    more = gain_likelihoods(design.kernel, design.paths, steady, use, rings, newest, available, only)
+    together = Likelihoods(*(np.concatenate(parts) for parts in zip(found, more, strict=True)))
+    return judge(explanations(design), together), together
