@@ -1,6 +1,6 @@
 """Is the conformance probability calibrated? Steps and ramps of all sizes, and how often the bias is beyond tolerance.
 
-python tests/long_runs/calibration.py [plants] [picture.svg]
+python tests/long_runs/calibration.py [plants]
 """
 
 from __future__ import annotations

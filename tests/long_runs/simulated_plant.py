@@ -138,10 +138,6 @@ class Seen:
     notes: list[Note]
     parts: list[CycleResults]
 
-    def first(self, *kinds: str) -> Flag | None:
-        """The first flag that was opened, of these kinds."""
-        return next((flag for flag in self.flags if flag.cleared is None and flag.kind in kinds), None)
-
 
 def moving_inputs(spec: UnitSpec, cycles: int, random: np.random.Generator, share: float = 0.5) -> Array:
     """(cycles, n_inputs) Steps within ``share`` of each input's working range, on average every 200 cycles."""
