@@ -20,9 +20,12 @@ from plant_models.model_file import read_model_file
 from plant_models.plant_model import PlantModel
 from softsensor.errors import SiteFileError
 from softsensor.opcua_sink import OpcUaSink, flag_action, published_units
+from softsensor.records.claims import claimed
 from softsensor.records.engine import Database, open_database
+from softsensor.records.errors import DatabaseAwayError
 from softsensor.records.named_arrays import pack_arrays
 from softsensor.records.plant import Deed, Revision, register_revision, register_unit, set_revision_state
+from softsensor.records.presence import Presence
 from softsensor.records.writer import RecordsWriter
 from softsensor.service.clock import Clock, FollowingClock, SystemClock
 from softsensor.service.live import GRACE, LiveService
@@ -35,6 +38,8 @@ from softsensor.web.app import create_app
 PROGRAM = "softsensor"
 SIMULATED_GRACE = 10.0
 """As GRACE, for a simulated plant on a faster clock: what comes late there comes late for want of a processor."""
+RENEW_EVERY = 2.0
+"""Seconds between two looks at whether our lock has outlived the database's server."""
 WRITER_PATIENCE = 1.0
 """Seconds that a full queue of records holds a unit up before the service ends and says why."""
 
@@ -118,8 +123,14 @@ def _source(
     return OpcUaSource(opcua, nodes), routes
 
 
-def register(database: Database, model: PlantModel, clock: Clock) -> UnitIdentity:
-    """The unit and this revision of its model on record and in service, audited."""
+def unit_number(database: Database, model: PlantModel, clock: Clock) -> int:
+    """The unit's place in the records; it is put there if it is new."""
+    with database.write() as connection:
+        return register_unit(connection, model.spec.name, model.spec.title, clock.now())
+
+
+def register(database: Database, unit_id: int, model: PlantModel, clock: Clock, holder: str) -> UnitIdentity:
+    """This revision of the unit's model on record and in service, audited."""
     spec, now = model.spec, clock.now()
     part = model.stochastic
     arrays = {"A": part.A, "q": part.q, "C": part.C, "P0": part.P0}
@@ -128,11 +139,30 @@ def register(database: Database, model: PlantModel, clock: Clock) -> UnitIdentit
         arrays |= {f"path{number}.gamma_older": path.gamma_older, f"path{number}.c": path.c}
     deed = Deed(PROGRAM, "started with this model file", now)
     with database.write() as connection:
-        unit_id = register_unit(connection, spec.name, spec.title, now)
         revision = Revision(model.digest, spec.source_text, pack_arrays(arrays))
         revision_id = register_revision(connection, unit_id, revision, deed)
         set_revision_state(connection, revision_id, "in service", deed)
-    return UnitIdentity(unit_id, revision_id)
+    return UnitIdentity(unit_id, revision_id, holder)
+
+
+@asynccontextmanager
+async def _holder_of(database: Database, unit_ids: list[int]) -> AsyncIterator[str]:
+    """Claim the units, and keep the claim alive until the block ends; gives our name in it."""
+
+    async def keep(presence: Presence) -> None:
+        while True:
+            await asyncio.sleep(RENEW_EVERY)
+            with contextlib.suppress(DatabaseAwayError):  # the service says so, and this asks again
+                await asyncio.to_thread(presence.renew)
+
+    with claimed(database, unit_ids) as presence:
+        keeping = asyncio.create_task(keep(presence), name="claim")
+        try:
+            yield presence.key
+        finally:
+            keeping.cancel()
+            with contextlib.suppress(asyncio.CancelledError):
+                await keeping
 
 
 class _PageServer(uvicorn.Server):
@@ -210,11 +240,16 @@ async def running_site(settings: SiteSettings, tell: Callable[[str], None]) -> A
     async with AsyncExitStack() as stack:
         listener = stack.enter_context(_page_socket(settings.web))
         database = stack.enter_context(open_database(settings.database, clock.now))
+        numbers = [unit_number(database, model, clock) for model in models]
+        holder = await stack.enter_async_context(_holder_of(database, numbers))
         source, routes = _source(settings, models)
         await source.probe()
         tell("preparing (the first time on a machine this compiles for about half a minute)")
         designs = [await asyncio.to_thread(design_unit, model) for model in models]
-        identities = [register(database, model, clock) for model in models]
+        identities = [
+            register(database, number, model, clock, holder)
+            for number, model in zip(numbers, models, strict=True)
+        ]
         writer = stack.enter_context(RecordsWriter(database, patience=WRITER_PATIENCE))
         units = [
             UnitService(

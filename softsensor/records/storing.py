@@ -22,17 +22,24 @@ from softsensor.records.blocks import (
     RevisedEstimates,
     Rollup,
 )
+from softsensor.records.claims import require_claim
 from softsensor.records.happenings import Event, record_event
 from softsensor.records.inserting import insert_new, insert_or_replace
 from softsensor.records.tables import checkpoints, cycles, results, revised_estimates, rollups
 from softsensor.records.vectors import pack
 
 
-def store_readings(connection: Connection, unit_id: int, block: ReadingsBlock) -> None:
+def store_readings(
+    connection: Connection, unit_id: int, block: ReadingsBlock, holder: str | None = None
+) -> None:
     """Put the readings of consecutive cycles on record, before the cycles run.
 
-    :raises RecordsError: one of the cycles, or of their times, is on record with other readings.
+    :param holder: the service that claims the unit (``records.claims``); None where nobody else can write.
+    :raises RecordsError: the unit is another service's by now; one of the cycles, or of their times, is on record with
+        other readings.
     """
+    if holder is not None:
+        require_claim(connection, unit_id, holder)
     rows = [_readings_row(unit_id, block, i) for i in range(len(block))]
     if insert_new(connection, cycles, rows) == len(rows):
         return
@@ -48,8 +55,8 @@ def store_readings(connection: Connection, unit_id: int, block: ReadingsBlock) -
     for row in rows:
         if there.get(row["cycle"]) != row:
             raise RecordsError(
-                f"cycle {row['cycle']} of unit {unit_id} is on record with other readings: "
-                "does another service write this unit?"
+                f"cycle {row['cycle']} of unit {unit_id} is on record with other readings; "
+                "nothing else may write a unit's cycles while its service runs"
             )
 
 

@@ -267,6 +267,17 @@ rests = Table(
     comment="when tests of innovations rested and why; an empty tag means all sensors",
 )
 
+claims = Table(
+    "claims",
+    metadata,
+    Column("unit_id", BigInteger, ForeignKey("units.id"), primary_key=True, autoincrement=False),
+    Column("holder", Text, nullable=False),
+    Column("host", Text, nullable=False),
+    Column("process", BigInteger, nullable=False),
+    Column("since_us", BigInteger, nullable=False),
+    comment="which service serves a unit; whether it is alive tells a lock that ends with its process",
+)
+
 audit_trail = Table(
     "audit_trail",
     metadata,

@@ -41,6 +41,8 @@ class UnitIdentity:
 
     unit_id: int
     revision_id: int
+    holder: str | None = None
+    """Our name in the unit's claim (``records.claims``); None where nobody else can write to the records."""
 
 
 class UnitService:
@@ -191,7 +193,9 @@ class UnitService:
             readings,
             (pack_decisions(came),),
         )
-        future = self._writer.submit(storing.store_readings, self.identity.unit_id, block)
+        future = self._writer.submit(
+            storing.store_readings, self.identity.unit_id, block, self.identity.holder
+        )
         patience = 0.0 if self._writer.state is WriterState.WAITING else COMMIT_PATIENCE
         written = asyncio.wrap_future(future)
         written.add_done_callback(_take_note)

@@ -31,7 +31,7 @@ def test_migrations_make_the_tables_of_the_metadata(database: Database) -> None:
 
 
 def test_an_upgrade_says_what_it_applied_and_can_be_repeated(empty_database_url: str) -> None:
-    assert upgrade_database(empty_database_url) == ["0001", "0002", "0003"]
+    assert upgrade_database(empty_database_url) == ["0001", "0002", "0003", "0004"]
     assert upgrade_database(empty_database_url) == []
 
 
@@ -45,7 +45,7 @@ def test_two_upgrades_at_once_apply_the_revision_once(empty_database_url: str) -
         thread.start()
     for thread in threads:
         thread.join()
-    assert sorted(applied) == [[], [], ["0001", "0002", "0003"]]
+    assert sorted(applied) == [[], [], ["0001", "0002", "0003", "0004"]]
 
 
 def test_a_database_that_was_not_upgraded_names_the_command(empty_database_url: str) -> None:
@@ -57,7 +57,7 @@ def test_a_database_from_a_newer_release_is_refused_by_both_revisions(database_u
     with open_database(database_url) as database, database.write() as connection:
         connection.execute(text("UPDATE alembic_version SET version_num = '9999'"))
     for refuse in (open_database, upgrade_database):
-        with pytest.raises(RecordsError, match=r"at revision 9999.* up to 0003.*install that release"):
+        with pytest.raises(RecordsError, match=r"at revision 9999.* up to 0004.*install that release"):
             refuse(database_url)
 
 
