@@ -6,10 +6,8 @@ and changes nothing that it is given.
 
 from __future__ import annotations
 
-import hashlib
 from collections.abc import Sequence
 from dataclasses import dataclass, replace
-from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -17,8 +15,9 @@ from numpy.typing import NDArray
 from plant_models.errors import Problem
 from plant_models.plant_model import PlantModel
 from softsensor.compiled_cycle import BlockInputs, BlockOutputs, empty_outputs, run_block
+from softsensor.cycle_results import CycleResults, Digest, flag_bytes, outside, result_rows
 from softsensor.detection.detection_design import DetectionDesign, sensors_in_use
-from softsensor.detection.flags import Beginning, Flag, FlagBook, Note, RestSpell
+from softsensor.detection.flags import Beginning, FlagBook
 from softsensor.detection.follow_up import follow_up
 from softsensor.detection.outcomes import FollowUp, Moment
 from softsensor.detection.people import Decision, Taken, ended, next_end, take
@@ -43,8 +42,6 @@ BEYOND_BELOW, BEYOND_ABOVE = 0.025, 0.0625
 the failure limits 3.6 mA and 21 mA of a 4-20 mA signal (NAMUR NE 43; from memory)."""
 REJECTED = 2
 """After so many laboratory results in a row that do not fit, the estimate is in doubt, not the laboratory."""
-DIGEST_CHUNK = 64
-"""Cycles per link of the digest's chain."""
 
 
 class UnsoundArithmetic(Problem):
@@ -74,34 +71,6 @@ class LabAtCycle:
 
 
 @dataclass(frozen=True)
-class Digest:
-    """A chained hash of every result row, the same however the cycles were cut into blocks."""
-
-    chain: bytes = b""
-    pending: bytes = b""
-    rows: int = 0
-
-    def add(self, rows: NDArray[np.uint8], tail: bytes = b"") -> Digest:
-        """The digest after more rows (N, bytes); ``tail`` belongs to the last of them."""
-        chain, pending, row = self.chain, self.pending, 0
-        while row < len(rows):
-            stop = min(row + DIGEST_CHUNK - (self.rows + row) % DIGEST_CHUNK, len(rows))
-            pending += rows[row:stop].tobytes() + (tail if stop == len(rows) else b"")
-            if (self.rows + stop) % DIGEST_CHUNK == 0:
-                chain, pending = hashlib.sha256(chain + pending).digest(), b""
-            row = stop
-        return Digest(chain, pending, self.rows + len(rows))
-
-    def mix(self, data: bytes) -> Digest:
-        """The digest after bytes that belong to the coming row: what a laboratory result did."""
-        return replace(self, pending=self.pending + data)
-
-    def hexdigest(self) -> str:
-        """The digest so far, as text."""
-        return hashlib.sha256(self.chain + self.pending).hexdigest()
-
-
-@dataclass(frozen=True)
 class CycleState:
     """All that goes from one cycle to the next."""
 
@@ -116,71 +85,6 @@ class CycleState:
     def next_cycle(self) -> int:
         """Number of the coming cycle; the first one is 0."""
         return int(self.tests.cycle[0])
-
-
-@dataclass(frozen=True)
-class CycleResults:
-    """Results of N cycles as known at each of them, row k for cycle ``first + k``.
-
-    Shapes: times (N,); estimates, sd, status (N, n_estimates), sd with the interval scale in it, status 0 Good,
-    1 Uncertain, 2 Bad; predicted, innovation, innovation_sd, used, left_out, high, low, reading
-    (N, n_sensors). lab_predicted and lab_sd: one entry per laboratory result that counts within these cycles, the
-    prediction before the cycle's readings and the sd of the result's innovation.
-    """
-
-    first: int
-    times: NDArray[np.int64]
-    reading: Floats
-    estimate: Floats
-    sd: Floats
-    status: NDArray[np.int8]
-    predicted: Floats
-    innovation: Floats
-    innovation_sd: Floats
-    used: NDArray[np.int8]
-    left_out: NDArray[np.int8]
-    """1 where a sensor is kept from the estimate, whether or not it has a reading."""
-    doubts: NDArray[np.object_]
-    """(N, n_estimates) What speaks against an estimate besides its inputs, in words: flags, laboratory results."""
-    settling: NDArray[np.int8]
-    """(N,) The tests rest and the estimates are Uncertain: 1 while inputs are missing and for a while after, 2 where the
-    plant was moving when the run began."""
-    high: Floats
-    low: Floats
-    beyond: Floats
-    """(N, n_sensors) Probability that a sensor's bias lies beyond its tolerance."""
-    lab_predicted: Floats
-    lab_sd: Floats
-    flags: tuple[Flag, ...] = ()
-    notes: tuple[Note, ...] = ()
-    rests: tuple[RestSpell, ...] = ()
-    rewind: FollowUp | None = None
-    """Set where a sensor is to be left out from an earlier cycle on: the caller goes back and forward again."""
-
-    def __len__(self) -> int:
-        return len(self.times)
-
-
-ROW_FIELDS = (
-    "times", "reading", "estimate", "sd", "status", "predicted", "innovation", "innovation_sd", "used", "left_out",
-    "doubts", "settling", "high", "low", "beyond",
-)  # fmt: skip
-
-
-def join_results(parts: Sequence[CycleResults]) -> CycleResults:
-    """The results of consecutive stretches as one; flags and notes in order."""
-    rows: dict[str, Any] = {
-        name: np.concatenate([getattr(part, name) for part in parts]) for name in ROW_FIELDS
-    }
-    return CycleResults(
-        first=parts[0].first,
-        **rows,
-        lab_predicted=np.concatenate([part.lab_predicted for part in parts]),
-        lab_sd=np.concatenate([part.lab_sd for part in parts]),
-        flags=tuple(flag for part in parts for flag in part.flags),
-        notes=tuple(note for part in parts for note in part.notes),
-        rests=tuple(spell for part in parts for spell in part.rests),
-    )
 
 
 def unit_tests(design: UnitDesign, window: int) -> TestState:
@@ -290,7 +194,7 @@ def run_cycles(
         rests=begun.rests + outcome.rests,
         rewind=outcome if outcome.exclusion is not None else None,
     )
-    digest = state.digest.add(result_rows(results), b"".join(_flag_bytes(flag) for flag in results.flags))
+    digest = state.digest.add(result_rows(results), b"".join(flag_bytes(flag) for flag in results.flags))
     states = tuple((at, state_of(kept, m)) for m, at in enumerate(starts) if at < first + done)
     return CycleState(estimator, tests, outcome.book, digest, state.rejected), results, states
 
@@ -330,7 +234,7 @@ def decide(
     for change in changes:
         outcome = change_state(design.detection, outcome, state.next_cycle, time, change)
         digest = digest.mix(change.as_bytes(state.next_cycle))
-    digest = digest.mix(b"".join(_flag_bytes(flag) for flag in outcome.changes))
+    digest = digest.mix(b"".join(flag_bytes(flag) for flag in outcome.changes))
     return replace(state, book=outcome.book, digest=digest), outcome, tuple(taken)
 
 
@@ -416,37 +320,3 @@ def estimate_status(
         if estimated.validated_range is not None:
             status[:, e] |= outside(estimate[:, e], estimated.validated_range)
     return status.astype(np.int8)
-
-
-def outside(values: Floats, limits: tuple[float, float] | None) -> NDArray[np.bool_]:
-    """Which values lie outside the limits; none where there are no limits."""
-    if limits is None:
-        return np.zeros(len(values), dtype=np.bool_)
-    return (values < limits[0]) | (values > limits[1])
-
-
-def result_rows(results: CycleResults) -> NDArray[np.uint8]:
-    """Every result of each cycle as bytes (N, bytes), for the digest."""
-    parts = [
-        results.times.reshape(-1, 1),
-        results.estimate,
-        results.sd,
-        results.status,
-        results.predicted,
-        results.innovation,
-        results.innovation_sd,
-        results.used,
-        results.high,
-        results.low,
-        results.beyond,
-    ]
-    return np.concatenate(
-        [np.ascontiguousarray(part).view(np.uint8).reshape(len(results), -1) for part in parts], axis=1
-    )
-
-
-def _flag_bytes(flag: Flag) -> bytes:
-    times = np.array([flag.onset, flag.detected, -1 if flag.cleared is None else flag.cleared], dtype="<i8")
-    sizes = np.array([flag.size, flag.size_sd, flag.probability], dtype="<f8")
-    text = "\x1f".join((flag.flag, flag.tag, flag.kind, *flag.group))
-    return text.encode() + times.tobytes() + sizes.tobytes()

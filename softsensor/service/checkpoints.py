@@ -9,7 +9,8 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from softsensor.cycle import CycleState, Digest, LabAtCycle
+from softsensor.cycle import CycleState, LabAtCycle
+from softsensor.cycle_results import Digest
 from softsensor.detection.flags import (
     Beginning,
     Episode,

@@ -10,7 +10,8 @@ import numpy as np
 from sqlalchemy import Connection
 
 from plant_models.plant_model import PlantModel
-from softsensor.cycle import CycleResults, UnitDesign
+from softsensor.cycle import UnitDesign
+from softsensor.cycle_results import CycleResults
 from softsensor.detection.flags import Exclusion, Flag, Note
 from softsensor.detection.people import Decision, Taken
 from softsensor.detection.plant_states import StateChange

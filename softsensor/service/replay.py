@@ -7,7 +7,8 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from softsensor.cycle import CycleResults, LabAtCycle, UnitDesign, join_results, start
+from softsensor.cycle import LabAtCycle, UnitDesign, start
+from softsensor.cycle_results import CycleResults, join_results
 from softsensor.detection.plant_states import StateChange
 from softsensor.estimation.lab_results import LabArrival, LabOutcome
 from softsensor.estimation.past import Past

@@ -7,7 +7,8 @@ from collections.abc import Sequence
 import numpy as np
 import pandas as pd
 
-from softsensor.cycle import CycleResults, UnitDesign, outside
+from softsensor.cycle import UnitDesign
+from softsensor.cycle_results import CycleResults, outside
 from softsensor.detection.conformance import BLOCK, LOOK_EVERY_BLOCKS
 from softsensor.detection.flags import Flag
 from softsensor.estimation.lab_results import LabOutcome

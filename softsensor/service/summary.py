@@ -6,7 +6,8 @@ from typing import Any
 
 import numpy as np
 
-from softsensor.cycle import CycleResults, UnitDesign
+from softsensor.cycle import UnitDesign
+from softsensor.cycle_results import CycleResults
 from softsensor.detection.flags import Flag, Note
 from softsensor.detection.shift_tests import DOWN
 from softsensor.estimation.lab_results import LabOutcome

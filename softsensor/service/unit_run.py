@@ -12,7 +12,6 @@ import numpy as np
 
 from softsensor.cycle import (
     REJECTED,
-    CycleResults,
     CycleState,
     LabAtCycle,
     UnitDesign,
@@ -20,6 +19,7 @@ from softsensor.cycle import (
     rerun,
     run_cycles,
 )
+from softsensor.cycle_results import CycleResults
 from softsensor.detection.people import Decision, Taken
 from softsensor.detection.plant_states import StateChange
 from softsensor.estimation.kernel import CHUNK, EstimatorState, Floats

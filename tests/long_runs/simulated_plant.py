@@ -17,7 +17,8 @@ from independent.transfer_paths import Array, continuous, step_response
 from numba import njit
 
 from plant_models.specification import UnitSpec
-from softsensor.cycle import CycleResults, UnitDesign
+from softsensor.cycle import UnitDesign
+from softsensor.cycle_results import CycleResults
 from softsensor.detection.flags import Flag, Note
 from softsensor.readings_of_cycle import CycleReadings
 from softsensor.service.replay import Replay

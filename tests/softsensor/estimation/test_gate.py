@@ -18,7 +18,8 @@ from plant_models.building import build_plant_model
 from plant_models.library import published_model_path
 from plant_models.plant_model import PlantModel
 from plant_models.simulators import reactor_model_path
-from softsensor.cycle import CycleResults, UnitDesign, join_results
+from softsensor.cycle import UnitDesign
+from softsensor.cycle_results import CycleResults, join_results
 from softsensor.detection.flags import Flag
 from softsensor.detection.people import ACTS, Decision
 from softsensor.estimation.gate import gates_open, passes
