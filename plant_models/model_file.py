@@ -98,6 +98,7 @@ def _unit_spec(document: dict[str, Any], faults: FaultList, source: str) -> Unit
         leave_out_isolated=tests.leave_out_isolated,
         widening=tests.widening,
         disarmed=tests.disarmed,
+        patient=tests.patient,
         source_text=source,
     )
     check_whole(named, paths, faults)

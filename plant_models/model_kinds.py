@@ -182,8 +182,18 @@ def _list_of(convert: Callable[[object], float]) -> Callable[[object], tuple[flo
     return converted
 
 
+def _tags(value: object) -> tuple[str, ...]:
+    if not isinstance(value, list):
+        raise RefusalError("which is no list")
+    tags = tuple(_name(item) for item in value)
+    if len(set(tags)) < len(tags):
+        raise RefusalError("which names a tag twice")
+    return tags
+
+
 TEXT = Kind("a text that is not empty", _text, "-")
 TAG = Kind("a tag such as 'TI2101A'", _name, "-")
+TAGS: Kind[tuple[str, ...]] = Kind("a list of tags such as ['TI2101A']", _tags, ())
 NAME = Kind("a name such as 'feed concentration'", _name, "-")
 INPUT_TAG = Kind("an input's tag", _name, "-")
 SOURCE = Kind("an input's tag or a disturbance's name", _name, "-")

@@ -19,6 +19,7 @@ from plant_models.model_kinds import (
     RANGE,
     SAMPLE_TIME,
     TAG,
+    TAGS,
     TEXT,
     UNIT,
     Kind,
@@ -61,6 +62,7 @@ class FaultTests:
     leave_out_isolated: bool = False
     widening: tuple[tuple[str, float], ...] = ()
     disarmed: tuple[tuple[str, str], ...] = ()
+    patient: tuple[str, ...] = ()
 
 
 def read_fault_tests(table: Table | None, sensors: Collection[str]) -> FaultTests:
@@ -70,13 +72,25 @@ def read_fault_tests(table: Table | None, sensors: Collection[str]) -> FaultTest
     """
     if table is None:
         return FaultTests()
-    table.only("false_flag_interval", "leave_out_isolated", "widening", "disarmed")
+    table.only("false_flag_interval", "leave_out_isolated", "widening", "disarmed", "patient")
     return FaultTests(
         table.read_or("false_flag_interval", DURATION_ABOVE_ZERO, FALSE_FLAG_INTERVAL),
         table.read_or("leave_out_isolated", FLAG, False),
         _by_sensor(table, "widening", FACTOR, sensors, "a table such as { TI2101A = 1.42 }"),
         _by_sensor(table, "disarmed", TEXT, sensors, "a table of reasons such as { TI2101A = 'correlated' }"),
+        _patient_sensors(table, sensors),
     )
+
+
+def _patient_sensors(table: Table, sensors: Collection[str]) -> tuple[str, ...]:
+    tags = table.read_or("patient", TAGS, ())
+    for tag in tags:
+        if tag not in sensors:
+            table.fault(
+                "patient",
+                f"expected sensors' tags, of {', '.join(sensors)}; {tag} is none{suggestion(tag, tuple(sensors))}",
+            )
+    return tags
 
 
 def _by_sensor(

@@ -129,5 +129,7 @@ class UnitSpec:
     """By sensor, the factor on its decision intervals that commissioning found; 1 where a sensor is not listed."""
     disarmed: tuple[tuple[str, str], ...] = ()
     """Sensors whose tests of innovations are not run, with the reason."""
+    patient: tuple[str, ...] = ()
+    """Sensors watched by a fourth pair of sums, for shifts so small that they take days to show."""
     source_text: str = ""
     """The file's text, kept with the revision."""

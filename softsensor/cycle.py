@@ -90,9 +90,9 @@ class CycleState:
 def unit_tests(design: UnitDesign, window: int) -> TestState:
     """The tests of a unit before its first cycle."""
     kernel, bank = design.kernel, design.detection.tests.reference
-    return initial_tests(
-        kernel.n_sensors, bank.shape[1], kernel.n_inputs, window, len(design.detection.suspects)
-    )
+    suspects, memory = design.detection.suspects, design.detection.long_memory
+    kept = memory.kept if memory is not None else 0
+    return initial_tests(kernel.n_sensors, bank.shape[1], kernel.n_inputs, window, len(suspects), kept)
 
 
 def start(design: UnitDesign, first_cycle: int = 0) -> CycleState:

@@ -25,7 +25,15 @@ from plant_models.specification import GATE, UnitSpec
 from plant_models.unit_spellings import PREFIXED, WHOLE
 from softsensor import cycle, unit_design
 from softsensor.cli.check import as_document, print_table
-from softsensor.detection import beginning, diagnosis, follow_up, isolability, reading_tests, sheet
+from softsensor.detection import (
+    beginning,
+    design_of_tests,
+    diagnosis,
+    follow_up,
+    isolability,
+    reading_tests,
+    sheet,
+)
 from softsensor.errors import SiteFileError
 from softsensor.estimation import gate, lab_results, what_helps
 from softsensor.estimation.noise_tuning import archive_checks, interval_scale, separability
@@ -322,20 +330,23 @@ LIMITS = [
     (METHOD, f"the interval of {result_tables.NORMAL_95:.2f} sd to either side"),
     (METHOD, f"is beyond `gate` standard deviations ({GATE:g},"),
     (METHOD, f"In the {gate.FOLLOWED} cycles after a sensor began to be followed"),
-    (METHOD, f"clipped to {unit_design.CLIP:g} in size"),
-    (METHOD, f"in the end, at most {unit_design.LARGEST_REFERENCE:g}."),
-    (METHOD, f"Where that half is below {unit_design.LEAST_REFERENCE:g} the filter absorbs"),
-    (METHOD, f"k is then {unit_design.GROSS_REFERENCE:g},"),
-    (METHOD, f"The fast pair has k = {unit_design.FAST_REFERENCE:g},"),
-    (METHOD, f"a noise {unit_design.SPREAD_RATIO:g} times as large"),
-    (METHOD, f"a noise {unit_design.JOINT_RATIO:g} times as"),
+    (METHOD, f"clipped to {design_of_tests.CLIP:g} in size"),
+    (METHOD, f"in the end, at most {design_of_tests.LARGEST_REFERENCE:g}."),
+    (METHOD, f"Where that half is below {design_of_tests.LEAST_REFERENCE:g} the filter absorbs"),
+    (METHOD, f"k is then {design_of_tests.GROSS_REFERENCE:g},"),
+    (METHOD, f"The fast pair has k = {design_of_tests.FAST_REFERENCE:g},"),
+    (METHOD, f"a noise {design_of_tests.SPREAD_RATIO:g} times as large"),
+    (METHOD, f"a noise {design_of_tests.JOINT_RATIO:g} times as"),
     (METHOD, f"stayed down for more than {follow_up.QUIET} cycles"),
-    (METHOD, f"more than {unit_design.LOST_SECONDS:g} s and more than {unit_design.LOST_CYCLES} cycles"),
+    (
+        METHOD,
+        f"more than {design_of_tests.LOST_SECONDS:g} s and more than {design_of_tests.LOST_CYCLES} cycles",
+    ),
     (METHOD, f"a move of {beginning.MOVE:.0%} of each input's".replace("%", " %")),
     (METHOD, f"any more, at most {beginning.LONGEST_S / 3600.0:g} h."),
     (METHOD, f"at least {reading_tests.MIN_REPEATS} equal readings in a row"),
     (METHOD, f"once {reading_tests.WARM_UP} readings have been seen"),
-    (METHOD, f"beyond {unit_design.SPIKE:g} standard deviations"),
+    (METHOD, f"beyond {design_of_tests.SPIKE:g} standard deviations"),
     (METHOD, f"within the last {unit_design.WINDOW} cycles"),
     (METHOD, f"after {follow_up.PATIENCE} cycles"),
     (TUNING, f"Fits on the first {tuning.FIT_SHARE:.0%} of the history".replace("%", " %")),

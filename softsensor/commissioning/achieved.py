@@ -16,14 +16,18 @@ from softsensor.commissioning.bank_run import Bank, BankRun
 from softsensor.commissioning.correlation import Character
 from softsensor.commissioning.widening import WIDEST, Widening, widening
 from softsensor.cycle import UnitDesign
+from softsensor.detection.design_of_tests import SPREAD_SHARE
 from softsensor.detection.flags import Flag, time_words
+from softsensor.detection.state_of_tests import NO_PAIR
 from softsensor.errors import ReplayError
 from softsensor.estimation.kernel import Floats
 from softsensor.estimation.lab_results import LabArrival
 from softsensor.service.assembly import assemble_blocks
 from softsensor.service.replay import Replay, horizon_of, parts_of
-from softsensor.unit_design import SPREAD_SHARE, design_unit
+from softsensor.unit_design import design_unit
 
+STRETCH = 5.0
+"""Times that a patient sum needs from zero to its interval: the shortest stretch that can judge it."""
 LEAST_READINGS = 2000
 """Innovations of a sensor below which nothing is said about its tests."""
 
@@ -59,6 +63,8 @@ class RunLengths:
     promised: float
     sensors: tuple[SensorRun, ...]
     flags: tuple[Flag, ...]
+    unjudged: tuple[str, ...] = ()
+    """Patient sums that the stretch is too short for."""
 
     @property
     def widening(self) -> dict[str, float]:
@@ -75,7 +81,7 @@ class RunLengths:
     @property
     def notes(self) -> tuple[str, ...]:
         """What a person should look at."""
-        return tuple(
+        return self.unjudged + tuple(
             f"{flag.tag} was flagged ({flag.kind}) at {time_words(flag.detected)}: if it was at fault, choose another "
             "stretch, for what its innovations were then counts as usual here"
             for flag in self.flags
@@ -105,10 +111,12 @@ def commission(
         raise ReplayError(*few)
     cycles = spec.false_flag_interval / spec.sample_time
     sensors = tuple(_sensor(design, z, i, cycles, seed) for i in range(len(spec.sensors)))
+    short = (_too_short(design, i, len(z)) for i in range(len(spec.sensors)))
+    unjudged = tuple(text for text in short if text is not None)
     span = len(z) * spec.sample_time
     flags = tuple(replay.totals.flags.values())
     ends = int(times[0]), int(times[-1])
-    return RunLengths(spec.name, *ends, len(z), span, spec.false_flag_interval, sensors, flags)
+    return RunLengths(spec.name, *ends, len(z), span, spec.false_flag_interval, sensors, flags, unjudged)
 
 
 def _innovations(design: UnitDesign, replay: Replay) -> tuple[Floats, NDArray[np.int64]]:
@@ -131,7 +139,10 @@ def _innovations(design: UnitDesign, replay: Replay) -> tuple[Floats, NDArray[np
 
 def _sensor(design: UnitDesign, z: Floats, i: int, cycles: float, seed: int) -> SensorRun:
     tests, spec = design.detection.tests, design.model.spec
-    bank = Bank(tests.reference[i], tests.interval[i], tests.clip)
+    has = tests.interval[i] < NO_PAIR
+    if _too_short(design, i, len(z)) is not None:
+        has[0] = False
+    bank = Bank(tests.reference[i][has], tests.interval[i][has], tests.clip)
     own = np.ascontiguousarray(z[:, i])
     found, wider = widening(own, bank, cycles / (1.0 - SPREAD_SHARE), seed + i)
     seen = BankRun(bank, np.array([1.0, max(wider.factor or WIDEST, 1.0 + 1e-9)]))
@@ -146,6 +157,21 @@ def _sensor(design: UnitDesign, z: Floats, i: int, cycles: float, seed: int) -> 
         reason,
         int(seen.counts[0]),
         int(seen.counts[1]),
+    )
+
+
+def _too_short(design: UnitDesign, i: int, cycles: int) -> str | None:
+    """Why a stretch cannot judge the patient sums of a sensor; None where it can, or where the sensor has none."""
+    tests, spec = design.detection.tests, design.model.spec
+    if spec.sensors[i].tag not in spec.patient:
+        return None
+    needed = STRETCH * float(tests.interval[i, 0] / tests.reference[i, 0])
+    if cycles >= needed:
+        return None
+    days = spec.sample_time / 86400.0
+    return (
+        f"{spec.sensors[i].tag} is watched patiently, and {cycles * days:.2g} d cannot judge sums that remember so long: "
+        f"take a stretch of {needed * days:.2g} d or more, or take it out of `patient`"
     )
 
 

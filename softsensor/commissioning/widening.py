@@ -33,7 +33,7 @@ EXPECTED = 40.0
 """False flags that the promise allows in the time that is simulated."""
 MEMORY = 8.0
 """Lags of the spectrum, in times that a sum needs from zero to its interval under a shift of twice its reference value."""
-LONGEST_MEMORY = 4096
+LONGEST_MEMORY = 65_536
 ENOUGH = 0.7
 """Share of the promise that is let pass as chance where nothing speaks against the innovations."""
 

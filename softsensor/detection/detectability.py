@@ -24,7 +24,7 @@ from scipy.special import ndtri
 
 from softsensor.detection.first_passage import Course, OneSum, Passage, passage, stretched
 from softsensor.detection.signatures import Shape
-from softsensor.detection.state_of_tests import TestDesign
+from softsensor.detection.state_of_tests import NO_PAIR, TestDesign
 from softsensor.estimation.kernel import Floats
 
 FOUND = 0.9
@@ -82,11 +82,9 @@ class Bank:
 
 def bank_of(design: TestDesign, sensor: int) -> Bank:
     """The sums of one sensor as the service runs them."""
-    return Bank(
-        tuple(np.atleast_1d(design.reference[sensor]).tolist()),
-        tuple(np.atleast_1d(design.interval[sensor]).tolist()),
-        design.clip,
-    )
+    has = design.interval[sensor] < NO_PAIR
+    references, intervals = design.reference[sensor][has], design.interval[sensor][has]
+    return Bank(tuple(references.tolist()), tuple(intervals.tolist()), design.clip)
 
 
 class Watch(NamedTuple):

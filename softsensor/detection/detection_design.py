@@ -20,6 +20,7 @@ from softsensor.detection.flags import (
     FlagBook,
 )
 from softsensor.detection.gain_changes import gain_likelihoods
+from softsensor.detection.long_memory import LongMemory, block_table, look_back, with_paths
 from softsensor.detection.signatures import Hypothesis, SteadyFilter, signatures, steady_filter
 from softsensor.detection.state_of_tests import TestDesign, TestState
 from softsensor.estimation.kernel import Floats, Ints, Kernel
@@ -40,6 +41,7 @@ class DetectionDesign:
     leave_out: bool
     armed: bool
     forgetting: Forgetting
+    long_memory: LongMemory | None = None
     settled_after: int = 0
     """Cycles from the start before the filter is the settled one that signatures suppose."""
     tables: dict[tuple[int, ...], tuple[SteadyFilter, Floats]] = field(default_factory=dict, repr=False)
@@ -55,6 +57,20 @@ class DetectionDesign:
                 signatures(self.model, self.kernel, self.suspects, steady, use, self.window),
             )
         return self.tables[key]
+
+    def look_back(self, tests: TestState, use: Ints) -> tuple[Verdict, Likelihoods] | None:
+        """Weigh all explanations in the long memory; None where there is none, or nothing in it yet."""
+        memory, (steady, _) = self.long_memory, self.table(use)
+        if memory is None:
+            return None
+        key = tuple(int(value) for value in use)
+        if key not in memory.tables:
+            memory.tables[key] = block_table(self.model, self.kernel, memory, steady, use)
+        seen = look_back(memory, memory.tables[key], steady, tests, use)
+        if seen is None or seen[0].best < 0:
+            return seen
+        verdict, found = seen
+        return with_paths(self.paths, self.suspects[verdict.best].name, verdict), found
 
     def standing(self, use: Ints) -> Standing:
         """What the conformance probability needs with these sensors in use."""

@@ -8,9 +8,18 @@ from __future__ import annotations
 
 import numpy as np
 
+from softsensor.detection.long_memory import remember
 from softsensor.detection.reading_tests import test_lost, test_spike, test_stuck
 from softsensor.detection.shift_tests import test_joint, test_shift, test_spread
-from softsensor.detection.state_of_tests import HEAD_START, LOOK, SETTLED, SETTLING, TestDesign, TestState
+from softsensor.detection.state_of_tests import (
+    HEAD_START,
+    LOOK,
+    NO_PAIR,
+    SETTLED,
+    SETTLING,
+    TestDesign,
+    TestState,
+)
 from softsensor.estimation.compiling import uncounted
 from softsensor.estimation.kernel import Floats, Ints
 
@@ -33,8 +42,9 @@ def _settle(design: TestDesign, state: TestState, doubtful: int) -> int:
         state.resumed[0] = 0 if state.resumed[0] < 0 else 1
         for i in range(design.interval.shape[0]):
             for p in range(design.interval.shape[1]):
-                state.high[i, p] = HEAD_START * design.armed[i] * design.interval[i, p]
-                state.low[i, p] = HEAD_START * design.armed[i] * design.interval[i, p]
+                has = design.armed[i] != 0 and design.interval[i, p] < NO_PAIR
+                state.high[i, p] = HEAD_START * design.interval[i, p] if has else 0.0
+                state.low[i, p] = state.high[i, p]
         return SETTLED
     return 0
 
@@ -113,6 +123,8 @@ def test_cycle(
         state.misfit[0] = 0
     else:
         union |= test_joint(design, state, squares)
+    if len(state.blocks) > 0:
+        remember(state, slot)
     state.cycle[0] += 1
     if state.watch[0] != 0 and state.cycle[0] % design.look_every == 0:
         union |= LOOK

@@ -200,6 +200,9 @@ def _act(design: DetectionDesign, outcome: FollowUp, tests: TestState, moment: M
         outcome = replace(outcome, book=replace(outcome.book, episode=episode))
     if _worth_a_flag(design, verdict, found, waited):
         return _open_shift(design, outcome, tests, moment, (verdict, found, use))
+    back = design.look_back(tests, use) if due else None
+    if back is not None and _worth_a_flag(design, *back, waited):
+        return _open_shift(design, outcome, tests, moment, (*back, use))
     if waited >= PATIENCE and episode is not None and not episode.noted:
         return _note(outcome, moment, verdict)
     return outcome

@@ -108,9 +108,7 @@ def sheet_line(design: DetectionDesign, asked: Diagnostician, index: int, shift:
     """One sensor of a unit, found by its own sums."""
     spec = design.model.spec
     sensor, bank = spec.sensors[index], bank_of(design.tests, index)
-    signature = _signatures(design, ("sensor", index))[:, index]
-    tests = watched([(bank, signature)], spec.sample_time, spec.false_flag_interval)
-    found = findable(tests, Sizes(sensor.tolerance, sensor.range[1] - sensor.range[0]))
+    tests, found = _own_sums(design, index), findable_by_own_sums(design, index)
     delay = _delay(bank, shift.settled) * spec.sample_time
     return SheetLine(
         shift,
@@ -121,6 +119,19 @@ def sheet_line(design: DetectionDesign, asked: Diagnostician, index: int, shift:
         is_absorbed(delay, spec.false_flag_interval),
         _told(asked, ("sensor", index), tests, _worth_asking(found, sensor.tolerance)),
     )
+
+
+def _own_sums(design: DetectionDesign, index: int) -> Watched:
+    spec = design.model.spec
+    signature = _signatures(design, ("sensor", index))[:, index]
+    return watched([(bank_of(design.tests, index), signature)], spec.sample_time, spec.false_flag_interval)
+
+
+def findable_by_own_sums(design: DetectionDesign, index: int) -> Findable:
+    """What of one sensor's faults its own sums find, without asking what they would be taken for."""
+    sensor = design.model.spec.sensors[index]
+    sizes = Sizes(sensor.tolerance, sensor.range[1] - sensor.range[0])
+    return findable(_own_sums(design, index), sizes)
 
 
 def _input_line(design: DetectionDesign, asked: Diagnostician, index: int) -> InputLine:

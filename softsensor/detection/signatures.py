@@ -256,7 +256,8 @@ def hypotheses(model: PlantModel, window: int) -> tuple[Hypothesis, ...]:
     )
 
 
-def _signal(model: PlantModel, kernel: Kernel, hypothesis: Hypothesis, window: int) -> Floats:
+def signal_of(model: PlantModel, kernel: Kernel, hypothesis: Hypothesis, window: int) -> Floats:
+    """(window, n_sensors) what a unit-sized error adds to each sensor's reading, or takes from its prediction."""
     if hypothesis.source == "sensor":
         step = np.zeros((window, kernel.n_sensors))
         step[:, hypothesis.index] = 1.0
@@ -280,7 +281,7 @@ def signatures(
     for h, suspect in enumerate(suspects):
         if suspect.source == "sensor" and use[suspect.index] == 0:
             continue
-        left = filter_response(kernel, steady.gains, use, _signal(model, kernel, suspect, window))
+        left = filter_response(kernel, steady.gains, use, signal_of(model, kernel, suspect, window))
         whiten(steady.whitening, left, out[h])
     return out
 

@@ -30,10 +30,15 @@ HEAD_START = 0.5
 """Share of the decision interval at which sums go on after a rest (Lucas & Crosier 1982)."""
 
 
+NO_PAIR = 1e12
+"""The decision interval that stands for a pair that a sensor does not have: no sum gets there."""
+
+
 class TestDesign(NamedTuple):
     """Settings of the tests, one entry per sensor where an array.
 
-    reference, interval (n_sensors, n_pairs): the bank of cumulative-sum pairs, from the slowest to the fastest.
+    reference, interval (n_sensors, n_pairs): the bank of cumulative-sum pairs, from the slowest to the fastest; NO_PAIR is
+    the interval of a patient pair that a sensor does not have.
     """
 
     reference: Floats
@@ -69,7 +74,8 @@ class TestState(NamedTuple):
     high, low (n_sensors, n_pairs): the sums of the bank. spread: the noise test's sum; held: the standardised innovation
     that waits for its neighbour, nan for none. joint (1,): the joint test's sum. ring (window, n_sensors): the latest
     innovations, nan where a reading was missing; moves (window, n_inputs): the inputs' deviations beside them; cycle
-    (1,): the next cycle.
+    (1,): the next cycle. blocks (kept, n_sensors), block_sum, block_count (n_sensors,): the long memory
+    (:mod:`softsensor.detection.long_memory`), nothing kept where no sensor is watched patiently.
     """
 
     high: Floats
@@ -111,6 +117,9 @@ class TestState(NamedTuple):
     onset: Ints
     onset_n: Floats
     onset_d: Floats
+    blocks: Floats
+    block_sum: Floats
+    block_count: Floats
     beyond: Floats
     """The evidence of :mod:`softsensor.detection.conformance`; beyond: probability of a bias beyond the tolerance."""
 
@@ -138,12 +147,15 @@ class TestState(NamedTuple):
 
     def give_head_start(self, interval: Floats) -> None:
         """Half of each decision interval (n_sensors, n_pairs) on every sum, in place: a fault may have come in the rest."""
-        self.high[:] = HEAD_START * interval
-        self.low[:] = HEAD_START * interval
+        start = np.where(interval < NO_PAIR, HEAD_START * interval, 0.0)
+        self.high[:] = start
+        self.low[:] = start
 
 
-def initial_tests(n_sensors: int, n_pairs: int, n_inputs: int, window: int, hypotheses: int = 1) -> TestState:
-    """All sums at zero, nothing seen."""
+def initial_tests(
+    n_sensors: int, n_pairs: int, n_inputs: int, window: int, hypotheses: int = 1, kept: int = 0
+) -> TestState:
+    """All sums at zero, nothing seen; ``kept``: blocks of the long memory."""
 
     def floats(value: float = 0.0) -> Floats:
         return np.full(n_sensors, value)
@@ -183,5 +195,8 @@ def initial_tests(n_sensors: int, n_pairs: int, n_inputs: int, window: int, hypo
         onset=ints(-1, ONSETS),
         onset_n=np.zeros((ONSETS, hypotheses)),
         onset_d=np.zeros((ONSETS, hypotheses)),
+        blocks=np.full((kept, n_sensors), np.nan),
+        block_sum=floats(),
+        block_count=floats(),
         beyond=floats(np.nan),
     )

@@ -26,8 +26,8 @@ from softsensor.errors import RecordsError
 from softsensor.estimation.kernel import EstimatorState
 from softsensor.records.named_arrays import pack_arrays, unpack_arrays
 
-FORMAT = 3
-"""2: with the bank of tests; 3: with the gate's streaks in the estimator's state."""
+FORMAT = 4
+"""2: with the bank of tests; 3: with the gate's streaks in the estimator's state; 4: with the long memory."""
 
 
 @dataclass(frozen=True)

@@ -7,6 +7,7 @@ from long_runs.calibration import moments
 from long_runs.models import COLUMN, FRACTIONATOR, design_named
 from long_runs.naming import outcomes
 from long_runs.promise import without_fault
+from long_runs.slow_drift import patient_reactor, run_one
 from scipy.stats import binom
 
 
@@ -44,6 +45,14 @@ def test_wrong_gains_are_the_model_s() -> None:
 
 def test_what_is_called_probable_is_mostly_so() -> None:
     """The two ends; how often a probability in between is right needs the long run."""
-    said, true = moments(design_named(FRACTIONATOR), 20)
-    assert true[said > 0.95].mean() > 0.9
-    assert true[said < 0.05].mean() < 0.02
+    found = moments(design_named(FRACTIONATOR), 20)
+    assert found.true[found.within(0.95, 1.0)].mean() > 0.9
+    assert found.true[found.within(0.0, 0.05)].mean() < 0.02
+
+
+def test_a_drift_that_the_filter_follows_is_found_by_the_patient_pair_alone() -> None:
+    """0.3 K a day for a day, a thirtieth of what the usual pair is likely to find so soon; one seeded plant."""
+    run = run_one(patient_reactor(), 0.3, 1, days=1.0)
+    assert run.counts
+    assert run.found(run.bank) is not None
+    assert run.found(run.usual) is None

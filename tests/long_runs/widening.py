@@ -24,10 +24,11 @@ from plant_models.specification import UnitSpec
 from softsensor.commissioning.bank_run import Bank, BankRun
 from softsensor.commissioning.widening import WIDEST, widening
 from softsensor.cycle import UnitDesign, rerun, start
+from softsensor.detection.design_of_tests import SPREAD_SHARE
 from softsensor.detection.flags import FlagBook
 from softsensor.estimation.kernel import Floats
 from softsensor.readings_of_cycle import CycleReadings
-from softsensor.unit_design import SPREAD_SHARE, design_unit, load_model
+from softsensor.unit_design import design_unit, load_model
 
 MODELS = (("wood_berry", 30.0, 14.0), ("heavy_oil_fractionator", 30.0, 14.0), ("quadruple_tank", 2.0, 1.5))
 """Name, promised interval and length of the stretch in days."""

@@ -10,9 +10,10 @@ import pytest
 import softsensor
 from plant_models.errors import ModelFileError
 from plant_models.library import published_model_path
+from softsensor.detection.design_of_tests import CLIP, steady_shifts
 from softsensor.detection.run_length import average_run_length
 from softsensor.detection.spread import spread_run_length
-from softsensor.unit_design import CLIP, design_unit, load_model, steady_shifts
+from softsensor.unit_design import design_unit, load_model
 
 MODELS = ("wood_berry", "quadruple_tank")
 
