@@ -1,8 +1,9 @@
 """Laboratory results from CSV and Parquet files and data frames: one row per result.
 
 Columns ``sampled_at``, ``reported_at``, ``tag``, ``value`` and, if wanted, ``time_uncertainty``: seconds as a
-number, or a time with its unit such as ``5 min``. Two different values for one tag and sampling time are two
-determinations of one sample and both count; the same value twice is a row that was copied, and is refused.
+number, or a time with its unit such as ``5 min``. Of one tag and sampling time, two different values reported at the
+same time are two determinations of one sample and both count; one that was reported later corrects what was reported
+before. The same value twice in a row is a row that was copied, and is refused.
 """
 
 from __future__ import annotations
@@ -91,12 +92,13 @@ def _results(table: Table, tags: Sequence[str], timezone: str | None) -> LabResu
         ignored_columns=tuple(name for name in table.names if name not in table.columns),
     ).only(wanted)
     _check(results, origin)
-    return results.only(np.argsort(results.reported_at, kind="stable"))
+    results = results.only(np.argsort(results.reported_at, kind="stable"))
+    _refuse_copies(results, origin)
+    return results
 
 
 def _check(results: LabResults, origin: Origin) -> None:
-    """Refuse a value that is not there, a report before its sample, and the same result twice."""
-    seen: dict[tuple[int, int, float], int] = {}
+    """Refuse a value that is not there, and a report before its sample."""
     for result in range(len(results)):
         row = int(results.rows[result]) - 1
         sampled, reported = int(results.sampled_at[result]), int(results.reported_at[result])
@@ -108,13 +110,24 @@ def _check(results: LabResults, origin: Origin) -> None:
                 f"{time_text(reported)} is before the sampling at {time_text(sampled)}; expected it after"
             )
             raise origin.fault(message, row, REPORTED)
-        first = seen.setdefault((int(results.tag_index[result]), sampled, value), row)
-        if first != row:
+
+
+def _refuse_copies(results: LabResults, origin: Origin) -> None:
+    """Refuse the same result twice; ``results`` in the order of their reports."""
+    newest: dict[tuple[int, int], tuple[int, dict[float, int]]] = {}
+    for result in range(len(results)):
+        row, value = int(results.rows[result]) - 1, float(results.values[result])
+        sampled, reported = int(results.sampled_at[result]), int(results.reported_at[result])
+        sample = (int(results.tag_index[result]), sampled)
+        before, values = newest.get(sample, (reported, {}))
+        if value in values:
+            first, second = sorted((row, values[value]))
             message = (
                 f"the same result of {results.tag(result)} sampled at {time_text(sampled)} as in "
                 f"{origin.row(first)}; expected each result once"
             )
-            raise origin.fault(message, row)
+            raise origin.fault(message, second)
+        newest[sample] = (reported, {value: row} if reported > before else values | {value: row})
 
 
 def _uncertainty(table: Table, wanted: NDArray[np.bool_]) -> NDArray[np.float64]:

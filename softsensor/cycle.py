@@ -62,12 +62,16 @@ class UnitDesign:
 
 @dataclass(frozen=True)
 class LabAtCycle:
-    """A laboratory result where it counts: cycle, index of its estimate, value, variance."""
+    """A laboratory result where it counts: cycle, index of its estimate, value, variance; its two times (UTC
+    microseconds) tell whether a later value of the same sample takes its place.
+    """
 
     cycle: int
     estimate: int
     value: float
     variance: float
+    sampled: int
+    reported: int
 
 
 @dataclass(frozen=True)

@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from collections.abc import Iterable
+from dataclasses import dataclass, replace
 from typing import Literal
 
 import numpy as np
@@ -55,6 +56,30 @@ class LabOutcome:
     sd: float
     status: LabStatus
     reason: str = ""
+    replaces: tuple[float, ...] = ()
+    """Earlier values of the same sample that counted until now."""
+
+
+def replaced_by(value: float) -> str:
+    """Why a result no longer counts: the laboratory has corrected it."""
+    return f"replaced by {value:.6g}, which was reported later for the same sample"
+
+
+def with_corrections(outcomes: Iterable[LabOutcome]) -> list[LabOutcome]:
+    """Outcomes in the order of arrival; those whose sample has a value in use that was reported later are left out."""
+    found: list[LabOutcome] = []
+    places: dict[tuple[int, int], list[int]] = {}
+    for outcome in outcomes:
+        arrival = outcome.arrival
+        same = places.setdefault((arrival.estimate, arrival.sampled), [])
+        if outcome.status == "used":
+            for k in same:
+                if found[k].arrival.reported < arrival.reported:
+                    reason = replaced_by(arrival.value)
+                    found[k] = replace(found[k], counted_cycle=-1, status="left out", reason=reason)
+        same.append(len(found))
+        found.append(outcome)
+    return found
 
 
 def counting_cycle(sampled: int, first_time: int, sample_us: int) -> int:

@@ -140,8 +140,8 @@ def record_event(connection: Connection, event: Event) -> None:
 def store_lab(connection: Connection, unit_id: int, result: LabResult) -> int:
     """Put a laboratory result on record, waiting for its cycle; returns its id.
 
-    The same result once more gives the id of the first. Another value for the same tag and sampling time is a
-    revision of the one before it.
+    The same result once more gives the id of the first. Another value for the same tag and sampling time that was
+    reported later is a revision of the one before it.
 
     :raises RecordsError: the value is not finite.
     """
@@ -166,7 +166,7 @@ def store_lab(connection: Connection, unit_id: int, result: LabResult) -> int:
         "time_uncertainty": result.time_uncertainty,
         "status": "waiting for a person",
         "reason": "not yet compared with the estimate",
-        "revises": earlier[-1].id if earlier else None,
+        "revises": max((row.id for row in earlier if row.reported_us < result.reported_us), default=None),
     }
     made = connection.execute(insert(lab_results).values(values).returning(lab_results.c.id))
     return int(made.scalar_one())
@@ -189,9 +189,40 @@ def settle_lab(connection: Connection, lab_id: int, outcome: LabOutcome) -> None
         "innovation": number(outcome.innovation),
         "sd": number(outcome.sd),
     }
-    if row.decided_by is None:
+    if row.decided_by is None and not replaced_lab(connection, lab_id):
         values |= {"status": outcome.status, "reason": outcome.reason}
     connection.execute(update(lab_results).where(lab_results.c.id == lab_id).values(values))
+
+
+def replaced_lab(connection: Connection, lab_id: int) -> bool:
+    """Is a value in use that was reported later for the same sample?"""
+    old, new = lab_results.alias("old"), lab_results.alias("new")
+    same = (
+        (new.c.unit_id == old.c.unit_id) & (new.c.tag == old.c.tag) & (new.c.sampled_us == old.c.sampled_us)
+    )
+    query = select(new.c.id).join_from(old, new, same).where(old.c.id == lab_id, new.c.status == "used")
+    return connection.execute(query.where(new.c.reported_us > old.c.reported_us)).first() is not None
+
+
+def replace_labs(connection: Connection, lab_id: int, reason: str, time_us: int) -> None:
+    """Earlier reports of a sample no longer count now that this one is used: audited, and told as an event."""
+    new = connection.execute(select(lab_results).where(lab_results.c.id == lab_id)).one()
+    query = (
+        select(lab_results)
+        .where(lab_results.c.unit_id == new.unit_id, lab_results.c.tag == new.tag)
+        .where(lab_results.c.sampled_us == new.sampled_us, lab_results.c.reported_us < new.reported_us)
+        .where((lab_results.c.status != "left out") | (lab_results.c.counted_cycle.is_not(None)))
+        .order_by(lab_results.c.id)
+    )
+    after = {"status": "left out", "reason": reason, "counted_cycle": None}
+    for old in connection.execute(query).all():
+        before = {name: old._mapping[name] for name in after}
+        connection.execute(update(lab_results).where(lab_results.c.id == old.id).values(after))
+        name = f"laboratory result {old.id}"
+        append(connection, Entry(time_us, PROGRAM, "laboratory result replaced", name, before, after, reason))
+        text = f"{old.tag}: {old.value:.6g} was {reason}"
+        key = f"laboratory result {old.id} replaced by {lab_id}"
+        record_event(connection, Event(new.unit_id, time_us, "laboratory", text, old.tag, key))
 
 
 def number(value: float) -> float | None:

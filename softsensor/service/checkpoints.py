@@ -26,8 +26,9 @@ from softsensor.errors import RecordsError
 from softsensor.estimation.kernel import EstimatorState
 from softsensor.records.named_arrays import pack_arrays, unpack_arrays
 
-FORMAT = 4
-"""2: with the bank of tests; 3: with the gate's streaks in the estimator's state; 4: with the long memory."""
+FORMAT = 5
+"""2: with the bank of tests; 3: with the gate's streaks in the estimator's state; 4: with the long memory;
+5: with both times of laboratory results."""
 
 
 @dataclass(frozen=True)
@@ -84,8 +85,8 @@ def unpack_state(blob: bytes, version: int) -> tuple[CycleState, Context]:
         )
         digest = Digest(bytes.fromhex(rest["chain"]), bytes.fromhex(rest["pending"]), rest["rows"])
         labs = tuple(
-            LabAtCycle(cycle, estimate, float.fromhex(value), float.fromhex(variance))
-            for cycle, estimate, value, variance in rest["labs"]
+            LabAtCycle(cycle, estimate, float.fromhex(value), float.fromhex(variance), sampled, reported)
+            for cycle, estimate, value, variance, sampled, reported in rest["labs"]
         )
         context = Context(rest["model"], rest["first_time"], rest["first_remembered"], labs)
         return CycleState(_estimator(arrays), tests, book, digest, tuple(rest["rejected"])), context
@@ -100,7 +101,14 @@ def _rest(state: CycleState, context: Context) -> bytes:
         "first_time": context.first_time,
         "first_remembered": context.first_remembered,
         "labs": [
-            [lab.cycle, lab.estimate, float(lab.value).hex(), float(lab.variance).hex()]
+            [
+                lab.cycle,
+                lab.estimate,
+                float(lab.value).hex(),
+                float(lab.variance).hex(),
+                lab.sampled,
+                lab.reported,
+            ]
             for lab in context.labs
         ],
         "open": [asdict(flag) for flag in book.open],

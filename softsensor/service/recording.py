@@ -15,7 +15,7 @@ from softsensor.cycle_results import CycleResults
 from softsensor.detection.flags import Exclusion, Flag, Note
 from softsensor.detection.people import Decision, Taken
 from softsensor.detection.plant_states import StateChange
-from softsensor.estimation.lab_results import LabArrival, LabOutcome
+from softsensor.estimation.lab_results import LabArrival, LabOutcome, replaced_by
 from softsensor.estimation.past import Revision
 from softsensor.readings_of_cycle import CycleReadings
 from softsensor.records import blocks, decisions, happenings, rests, storing
@@ -116,7 +116,7 @@ def write_step(connection: Connection, unit_id: int, design: UnitDesign, step: S
         _write_note(connection, unit_id, note, f"{unit_id} {cycle} {number} {note.kind}")
     rests.store_rests(connection, unit_id, step.results.rests)
     for outcome in step.labs:
-        _write_lab(connection, unit_id, outcome)
+        _write_lab(connection, unit_id, outcome, int(step.results.times[0]))
     for revision in step.revisions:
         _write_revision(connection, unit_id, revision, cycle)
     for taken in step.taken:
@@ -167,7 +167,7 @@ def _write_note(connection: Connection, unit_id: int, note: Note, key: str) -> N
     happenings.record_event(connection, event)
 
 
-def _write_lab(connection: Connection, unit_id: int, outcome: LabOutcome) -> None:
+def _write_lab(connection: Connection, unit_id: int, outcome: LabOutcome, time: int) -> None:
     arrival = outcome.arrival
     result = happenings.LabResult(
         arrival.tag, arrival.sampled, arrival.reported, arrival.value, arrival.time_uncertainty
@@ -187,6 +187,8 @@ def _write_lab(connection: Connection, unit_id: int, outcome: LabOutcome) -> Non
             outcome.sd,
         ),
     )
+    if used:
+        happenings.replace_labs(connection, lab_id, replaced_by(arrival.value), time)
 
 
 def _write_revision(connection: Connection, unit_id: int, revision: Revision, cycle: int) -> None:

@@ -60,7 +60,7 @@ class Replay:
         """Run all cycles, a stretch at a time."""
         for part, came in self._parts:
             advance = self.run.advance(part, came)
-            self.totals.labs += advance.labs
+            self.totals.add_labs(advance.labs)
             row, labs = 0, advance.labs
             for results in advance.results:
                 self.totals.add(results)

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterable
 from typing import Any
 
 import numpy as np
@@ -10,7 +11,7 @@ from softsensor.cycle import UnitDesign
 from softsensor.cycle_results import CycleResults
 from softsensor.detection.flags import Flag, Note
 from softsensor.detection.shift_tests import DOWN
-from softsensor.estimation.lab_results import LabOutcome
+from softsensor.estimation.lab_results import LabOutcome, with_corrections
 from softsensor.service.result_tables import NORMAL_95
 
 
@@ -30,7 +31,16 @@ class RunSummary:
         self._up = np.zeros(n, dtype=bool)
         self.flags: dict[str, Flag] = {}
         self.notes: list[Note] = []
-        self.labs: list[LabOutcome] = []
+        self._arrived: list[LabOutcome] = []
+
+    @property
+    def labs(self) -> list[LabOutcome]:
+        """What became of every laboratory result, corrections made."""
+        return with_corrections(self._arrived)
+
+    def add_labs(self, outcomes: Iterable[LabOutcome]) -> None:
+        """Laboratory results that have arrived."""
+        self._arrived += outcomes
 
     def add(self, results: CycleResults) -> None:
         """Count these cycles' results."""
@@ -88,12 +98,13 @@ class RunSummary:
         }
 
     def _estimate(self, e: int) -> dict[str, Any]:
-        used = [lab for lab in self.labs if lab.arrival.estimate == e and lab.status == "used"]
+        labs = [lab for lab in self.labs if lab.arrival.estimate == e]
+        used = [lab for lab in labs if lab.status == "used"]
         errors = np.array([lab.innovation for lab in used])
         inside = [abs(lab.innovation) <= NORMAL_95 * lab.sd for lab in used]
         return {
             "lab_count": len(used),
-            "lab_left_out": sum(lab.arrival.estimate == e and lab.status != "used" for lab in self.labs),
+            "lab_left_out": len(labs) - len(used),
             "rmsep": float(np.sqrt(np.mean(errors**2))) if used else None,
             "bias": float(np.mean(errors)) if used else None,
             "coverage": float(np.mean(inside)) if used else None,

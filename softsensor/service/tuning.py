@@ -21,7 +21,7 @@ from plant_models.specification import EstimateSpec, UnitSpec
 from softsensor.cycle import UnitDesign, rerun, usable
 from softsensor.detection.flags import FlagBook
 from softsensor.estimation.kernel import Floats, initial_state
-from softsensor.estimation.lab_results import LabArrival, LabOutcome
+from softsensor.estimation.lab_results import LabArrival, LabOutcome, with_corrections
 from softsensor.estimation.noise_tuning.archive_checks import objection_to_archive, objection_to_spectrum
 from softsensor.estimation.noise_tuning.deviations import Deviations, deviations
 from softsensor.estimation.noise_tuning.interval_scale import (
@@ -306,8 +306,11 @@ def _intervals(tuned: UnitDesign, data: _Data, labs: Sequence[LabArrival]) -> tu
         own = estimate.lab.sd**2 if estimate.lab is not None else math.nan
         results = [
             _score(item, variances.get((item.counted_cycle, e, item.arrival.value), own), published[:, :, e])
-            for item in outcomes
-            if item.arrival.estimate == e and item.arrival.sampled > split and math.isfinite(item.innovation)
+            for item in with_corrections(outcomes)
+            if item.arrival.estimate == e
+            and item.arrival.sampled > split
+            and item.counted_cycle >= 0
+            and math.isfinite(item.innovation)
         ]
         out.append(_proposal(estimate, Scores(*np.array(results, dtype=np.float64).reshape(-1, 3).T)))
     return tuple(out)

@@ -5,7 +5,7 @@ Live and replay both drive this. It has no clock: what arrived when is handed in
 
 from __future__ import annotations
 
-from collections.abc import Iterable
+from collections.abc import Iterable, Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -167,19 +167,28 @@ class UnitRun:
             return _too_late(arrival, here, "sampled before the first cycle that is remembered"), None
         if cycle > here:
             return _too_late(arrival, here, "sampled after it was reported"), None
-        lab = LabAtCycle(cycle, arrival.estimate, arrival.value, self._variance(arrival, cycle))
-        predicted, sd = self._predict(lab, now)
+        same = [
+            lab for lab in self._labs if (lab.estimate, lab.sampled) == (arrival.estimate, arrival.sampled)
+        ]
+        if any(lab.reported > arrival.reported for lab in same):
+            return _too_late(arrival, here, "a value reported later for the same sample is in use"), None
+        earlier = [lab for lab in same if lab.reported < arrival.reported]
+        variance = self._variance(arrival, cycle)
+        lab = LabAtCycle(cycle, arrival.estimate, arrival.value, variance, arrival.sampled, arrival.reported)
+        others = [lab for lab in self._labs if lab not in earlier]
+        predicted, sd = self._predict(lab, others, now)
         innovation = arrival.value - predicted
         possible = abs(innovation) <= IMPOSSIBLE * sd or arrival.decided_at is not None
         rejected = self._rejected(arrival.estimate, possible)
         reason = "" if possible else self._reason(arrival, lab.variance, rejected[arrival.estimate])
         status: LabStatus = "used" if possible else "waiting for a person"
-        outcome = LabOutcome(arrival, here, cycle, predicted, innovation, sd, status, reason)
+        replaces = tuple(lab.value for lab in earlier) if possible else ()
+        outcome = LabOutcome(arrival, here, cycle, predicted, innovation, sd, status, reason, replaces)
         digest = self.state.digest.mix(_lab_bytes(outcome))
         self.state = replace(self.state, digest=digest, rejected=rejected)
         if not possible:
             return outcome, None
-        self._labs = sorted([*self._labs, lab], key=_order)
+        self._labs = sorted([*others, lab], key=_order)
         return outcome, self._go_back(cycle) if cycle < here else None
 
     def _variance(self, arrival: LabArrival, cycle: int) -> float:
@@ -192,7 +201,9 @@ class UnitRun:
         )
         return sd**2 + slope
 
-    def _predict(self, lab: LabAtCycle, now: CycleReadings) -> tuple[float, float]:
+    def _predict(
+        self, lab: LabAtCycle, others: Sequence[LabAtCycle], now: CycleReadings
+    ) -> tuple[float, float]:
         """The prediction of a result from everything known before its cycle, and the sd of its innovation."""
         found = self.past.state_before(lab.cycle) if lab.cycle < self.state.next_cycle else None
         if found is None:
@@ -200,9 +211,9 @@ class UnitRun:
         else:
             first, before = found
             readings = self.past.readings_between(first, lab.cycle + 1)
-        labs = (*self._labs_between(first, lab.cycle + 1), lab)
-        _, out = rerun(self.design, before, self.state.book, first, readings, tuple(sorted(labs, key=_order)))
-        at = sorted(labs, key=_order).index(lab)
+        labs = sorted([*(item for item in others if first <= item.cycle <= lab.cycle), lab], key=_order)
+        _, out = rerun(self.design, before, self.state.book, first, readings, tuple(labs))
+        at = labs.index(lab)
         return float(out.lab_predicted[at]), float(out.lab_sd[at])
 
     def _rejected(self, estimate: int, possible: bool) -> tuple[int, ...]:
@@ -221,8 +232,8 @@ class UnitRun:
         return f"{reason}; {in_a_row} results in a row do not fit: the estimate may be wrong"
 
 
-def _order(lab: LabAtCycle) -> tuple[int, int, float]:
-    return lab.cycle, lab.estimate, lab.value
+def _order(lab: LabAtCycle) -> tuple[int, int, float, float]:
+    return lab.cycle, lab.estimate, lab.value, lab.variance
 
 
 def _too_late(arrival: LabArrival, here: int, reason: str) -> LabOutcome:

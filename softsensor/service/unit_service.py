@@ -19,7 +19,7 @@ from softsensor.readings_of_cycle import CycleQuality, CycleReadings
 from softsensor.records import blocks, storing
 from softsensor.records.decisions import begin_anew, waiting_decisions
 from softsensor.records.engine import Database
-from softsensor.records.reader import lab_results_of
+from softsensor.records.reader import StoredLab, lab_results_of
 from softsensor.records.writer import RecordsWriter, WriterState
 from softsensor.service.assembly import NO_LIMIT, AssemblyState, LiveAssembly, TagRule, rules_of
 from softsensor.service.checkpoints import FORMAT, Context, pack_state
@@ -64,9 +64,9 @@ class UnitService:
         self._lab_index = {
             item.lab.tag: e for e, item in enumerate(design.model.spec.estimates) if item.lab is not None
         }
-        self._seen_labs: set[tuple[str, int, float]] = set()
+        self._latest_labs: dict[tuple[str, int], LabArrival] = {}
         self._pending_labs: list[LabArrival] = []
-        self._decided_labs: set[tuple[str, int, float]] = set()
+        self._decided_labs: set[tuple[str, int, int, float]] = set()
         self._pending_decisions: list[Decision] = []
         self._seen_decisions: set[int] = set()
         self._horizon = int(np.ceil(LEAST_HORIZON_S / design.model.spec.sample_time)) + 2
@@ -88,19 +88,32 @@ class UnitService:
         return self.design.model
 
     def accept(self, reading: Reading, now: int) -> None:
-        """Take a reading, or a laboratory result: its source timestamp is its sampling time."""
+        """Take a reading, or a laboratory result: its source timestamp is its sampling time.
+
+        Another value with the same source timestamp is a correction.
+        """
         self._states.accept(reading)
         index = self._lab_index.get(reading.tag)
         if index is None:
             self._assembly.accept(reading)
             return
-        key = (reading.tag, reading.time, reading.value)
-        if reading.quality is Quality.BAD or not np.isfinite(reading.value) or key in self._seen_labs:
+        known = self._latest_labs.get((reading.tag, reading.time))
+        if reading.quality is Quality.BAD or not np.isfinite(reading.value):
             return
-        self._seen_labs.add(key)
-        self._pending_labs.append(
-            LabArrival(index, reading.tag, reading.time, max(now, reading.time), reading.value)
-        )
+        if known is not None and known.value == reading.value:
+            return
+        reported = max(now, reading.time)
+        if known is not None:
+            reported = max(reported, known.reported + 1)
+        arrival = LabArrival(index, reading.tag, reading.time, reported, reading.value)
+        self._know(arrival)
+        self._pending_labs.append(arrival)
+
+    def _know(self, arrival: LabArrival) -> None:
+        """The newest report of a sample tells whether what comes next is news."""
+        before = self._latest_labs.get((arrival.tag, arrival.sampled))
+        if before is None or before.reported <= arrival.reported:
+            self._latest_labs[arrival.tag, arrival.sampled] = arrival
 
     def drives_clock(self, tag: str) -> bool:
         """Is a tag's timestamp the time it was measured at? A laboratory result's lies far back."""
@@ -115,20 +128,14 @@ class UnitService:
     def decided_labs(self) -> list[tuple[int, LabArrival]]:
         """Results that were left out and that a person has since decided to use, with their place in the records."""
         return [
-            (
-                row.id,
-                LabArrival(
-                    self._lab_index[row.tag],
-                    row.tag,
-                    row.sampled_us,
-                    row.reported_us,
-                    row.value,
-                    row.time_uncertainty,
-                ),
-            )
+            (row.id, self._arrival(row))
             for row in lab_results_of(self._database, self.identity.unit_id)
             if row.decided_by is not None and row.status == "used" and row.counted_cycle is None
         ]
+
+    def _arrival(self, row: StoredLab) -> LabArrival:
+        index = self._lab_index[row.tag]
+        return LabArrival(index, row.tag, row.sampled_us, row.reported_us, row.value, row.time_uncertainty)
 
     def decide(self, arrival: LabArrival, now: int) -> None:
         """A result that a person has decided to use arrives once more, and once only."""
@@ -242,9 +249,9 @@ class UnitService:
         self.run = resumed_run(self.design, self._database, unit_id, self._horizon)
         if seen is None:
             return 0
-        self._seen_labs = {
-            (lab.tag, lab.sampled_us, lab.value) for lab in lab_results_of(self._database, unit_id)
-        }
+        for row in lab_results_of(self._database, unit_id):
+            if row.tag in self._lab_index:
+                self._know(self._arrival(row))
         if not self.run.started:
             again_from = int(seen.readings.times[-1]) + self._sample_us
             self._writer.submit(begin_anew, unit_id, again_from)
@@ -264,7 +271,8 @@ class UnitService:
         """
         self._seen_decisions |= {item.number for item in came if isinstance(item, Decision)}
         arrivals = [item for item in came if isinstance(item, LabArrival)]
-        self._seen_labs |= {_key(arrival) for arrival in arrivals}
+        for arrival in arrivals:
+            self._know(arrival)
         self._decided_labs |= {_key(arrival) for arrival in arrivals if arrival.decided_at is not None}
 
     def _hold(self, seen: LastSeen) -> None:
@@ -284,8 +292,8 @@ def _take_note(written: asyncio.Future[None]) -> None:
         written.exception()
 
 
-def _key(arrival: LabArrival) -> tuple[str, int, float]:
-    return arrival.tag, arrival.sampled, arrival.value
+def _key(arrival: LabArrival) -> tuple[str, int, int, float]:
+    return arrival.tag, arrival.sampled, arrival.reported, arrival.value
 
 
 def held_values(spec: UnitSpec, last: CycleReadings) -> AssemblyState:

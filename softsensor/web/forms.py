@@ -157,7 +157,7 @@ def form_routes(site: Site, pages: Pages) -> APIRouter:
     ) -> RedirectResponse:
         ours(request, token)
         _, lab = site.lab(name, id)
-        choices = choices_for(lab)
+        choices = choices_for(lab, site.other_reports(lab))
         if decision not in choices:
             wanted = (
                 f"expected one of: {', '.join(choices)}" if choices else f"the result is {lab.status} already"

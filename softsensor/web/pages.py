@@ -134,7 +134,8 @@ def page_routes(site: Site, pages: Pages) -> APIRouter:
         shown: dict[str, Any] = {
             "units": tag_units(spec),
             "decimals": tag_decimals(spec),
-            "choices": choices_for(lab),
+            "choices": choices_for(lab, others := site.other_reports(lab)),
+            "others": others,
         }
         return pages.page(request, "lab.html", unit=unit, lab=lab, **shown)
 

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass, field
 
 from sqlalchemy import select
@@ -74,9 +75,21 @@ class Site:
                 return unit, lab
         raise NotHere(f"There is no laboratory result {lab_id} of unit {name}.")
 
+    def other_reports(self, lab: StoredLab) -> list[StoredLab]:
+        """What else was reported for the same sample, in the order of the reports."""
+        found = reader.lab_results_of(self.database, lab.unit_id, lab.sampled_us, lab.sampled_us + 1)
+        others = [item for item in found if item.tag == lab.tag and item.id != lab.id]
+        return sorted(others, key=lambda item: (item.reported_us, item.id))
 
-def choices_for(lab: StoredLab) -> tuple[str, ...]:
-    """What a person may still decide about a laboratory result; one that counts already stays."""
+
+def choices_for(lab: StoredLab, others: Sequence[StoredLab] = ()) -> tuple[str, ...]:
+    """What a person may still decide about a laboratory result; one that counts already stays, and so does one that the
+    laboratory has corrected.
+
+    :param others: what else was reported for the same sample.
+    """
+    if any(item.reported_us > lab.reported_us and item.status == "used" for item in others):
+        return ()
     if lab.status == "waiting for a person":
         return ("use", "leave out")
     if lab.status == "left out" and lab.decided_by is not None:

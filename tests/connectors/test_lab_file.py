@@ -226,3 +226,31 @@ def test_results_on_the_edges_are_used_and_those_of_the_future_are_not() -> None
         "lab: row 3, AL1: left out, sampled at 2026-01-01T02:00:00Z, "
         "after the last cycle at 2026-01-01T01:40:00Z",
     )
+
+
+def test_a_value_reported_later_corrects_and_may_return_to_an_earlier_one() -> None:
+    frame = pd.DataFrame(
+        {
+            "sampled_at": ["2026-12-01T08:00:00Z"] * 4,
+            "reported_at": [f"2026-12-01T{hour:02d}:00:00Z" for hour in (12, 9, 9, 11)],
+            "tag": "AL1",
+            "value": [1.33, 1.33, 1.35, 1.34],
+        }
+    )
+    found = lab_from_frame(frame, ["AL1"])
+    assert found.values.tolist() == [1.33, 1.35, 1.34, 1.33]
+    assert found.rows.tolist() == [2, 3, 4, 1]
+
+
+@pytest.mark.parametrize("hour", [9, 10])
+def test_the_same_value_again_is_a_copied_row(hour: int) -> None:
+    frame = pd.DataFrame(
+        {
+            "sampled_at": ["2026-12-01T08:00:00Z"] * 2,
+            "reported_at": [f"2026-12-01T{at:02d}:00:00Z" for at in (hour, 9)],
+            "tag": "AL1",
+            "value": [1.33, 1.33],
+        }
+    )
+    with pytest.raises(LabFileError, match=r"row 2: .*as in .*row 1; expected each result once"):
+        lab_from_frame(frame, ["AL1"])

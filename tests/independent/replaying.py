@@ -42,14 +42,16 @@ def readings_of(run: Run) -> CycleReadings:
     return assemble_history(run.spec, history_from_frame(run.history(), rules_of(run.spec).tags))
 
 
-def arrival(spec: UnitSpec, lab: LabRow, reported: float | None = None) -> LabArrival:
-    """A result sampled at its cycle's time and reported ``reported`` cycles after the start."""
+def arrival(spec: UnitSpec, lab: LabRow, reported: float | None = None, early: float = 0.0) -> LabArrival:
+    """A result sampled at its cycle's time, or ``early`` cycles before it, and reported ``reported`` cycles after the
+    start.
+    """
     begin = START.value // 1000
     sample = round(spec.sample_time * 1e6)
     item = spec.estimates[lab.estimate].lab
     assert item is not None
     at = lab.known_from if reported is None else reported
-    sampled = begin + lab.cycle * sample
+    sampled = begin + round((lab.cycle - early) * sample)
     return LabArrival(lab.estimate, item.tag, sampled, begin + round(at * sample), lab.value)
 
 

@@ -49,9 +49,13 @@ def results_at(run: Run, places: list[tuple[int, int]]) -> list[LabRow]:
 
 
 def processed(design: UnitDesign, run: Run, labs: list[LabRow], reported: Array | None = None) -> Outcome:
-    """Replay with results reported at these cycles; every one of them is used."""
+    """Replay with results reported at these cycles, each of a sample of its own; every one of them is used."""
     at = [lab.known_from for lab in labs] if reported is None else reported
-    arrivals = [arrival(run.spec, lab, float(k)) for lab, k in zip(labs, at, strict=True)]
+    numbers = [sum(other.cycle == lab.cycle and other.value < lab.value for other in labs) for lab in labs]
+    arrivals = [
+        arrival(run.spec, lab, float(k), 0.25 * number if lab.cycle else 0.0)
+        for lab, k, number in zip(labs, at, numbers, strict=True)
+    ]
     outcome = replay_in_parts(design, readings_of(run), arrivals)
     assert [lab.status for lab in outcome.labs] == ["used"] * len(labs)
     return outcome

@@ -10,7 +10,7 @@ from urllib.parse import quote
 import pytest
 from browser.recorded_unit import FLAG_ID, NOW, UNIT
 
-from softsensor.records import reader
+from softsensor.records import happenings, reader
 from softsensor.records.engine import Database
 
 FLAG = f"/units/{UNIT}/flag?id={quote(FLAG_ID)}"
@@ -123,6 +123,28 @@ def test_a_waiting_result_is_decided_once(recorded: Database, asker: Any) -> Non
     assert last_entry(recorded).action == "laboratory result decided"
     assert "Nothing is left to decide" in asker.get(page).text
     assert "None." in asker.get(f"/units/{UNIT}/part/laboratory").text
+
+
+def test_a_result_that_the_laboratory_has_corrected_shows_the_new_value_and_is_not_decided(
+    recorded: Database, asker: Any
+) -> None:
+    page = f"/units/{UNIT}/lab?id={WAITING_LAB}"
+    old = next(lab for lab in reader.lab_results_of(recorded, 1) if lab.id == WAITING_LAB)
+    token = asker.token(page)
+    with recorded.write() as connection:
+        result = happenings.LabResult(old.tag, old.sampled_us, old.reported_us + 60_000_000, 1.3125)
+        new = happenings.store_lab(connection, 1, result)
+        used = happenings.LabOutcome("used", "", 50, 40, 1.31, 0.0025, 0.02)
+        happenings.settle_lab(connection, new, used)
+        happenings.replace_labs(connection, new, "replaced by 1.3125", old.reported_us + 60_000_000)
+    text = asker.get(page).text
+    assert "replaced by 1.3125" in text
+    assert "Same sample, later" in text
+    assert f"lab?id={new}" in text
+    assert "Nothing is left to decide" in text
+    refused = asker.post(DECIDE, {"token": token, "decision": "use", **PERSON})
+    assert (refused.status_code, "the result is left out already" in refused.text) == (400, True)
+    assert "Same sample, earlier" in asker.get(f"/units/{UNIT}/lab?id={new}").text
 
 
 BAD = {
