@@ -13,6 +13,7 @@ from numpy.typing import NDArray
 
 from plant_models.discretisation import discretise
 from plant_models.errors import RealisationError
+from plant_models.model_scale import in_model_scale
 from plant_models.plant_model import DiscretePath, PlantModel, StochasticPart
 from plant_models.specification import PathSpec, UnitSpec
 from plant_models.stochastic import output_rows, stochastic_part
@@ -24,6 +25,8 @@ _AGREEMENT = 1e-9
 """Largest disagreement between a realised gain and the transfer function's, relative to its terms."""
 _COMMENTARY = frozenset({"title", "source_text", "paths"})
 """Fields of the specification that do not enter the digest; the paths enter it discretised."""
+_WHERE_GIVEN = frozenset({"transform", "limits"})
+"""Fields that enter the digest only where they are given: a file without them has the digest it had before they were."""
 
 
 def build_plant_model(spec: UnitSpec) -> PlantModel:
@@ -43,11 +46,16 @@ def build_plant_model(spec: UnitSpec) -> PlantModel:
             discrete = discretise(path, inputs[path.source], rows[path.target], spec.sample_time)
             _check_path(path, discrete)
             paths.append(_frozen(discrete))
-    stochastic = stochastic_part(spec)
+    scaled = in_model_scale(spec)
+    stochastic = stochastic_part(scaled)
     _check_stochastic(stochastic)
     stochastic = _frozen(stochastic)
     return PlantModel(
-        spec=spec, paths=tuple(paths), stochastic=stochastic, digest=_digest(spec, tuple(paths), stochastic)
+        spec=spec,
+        paths=tuple(paths),
+        stochastic=stochastic,
+        digest=_digest(spec, tuple(paths), stochastic),
+        scaled=scaled,
     )
 
 
@@ -144,7 +152,12 @@ def _canonical(value: Any) -> bytes:
     if isinstance(value, tuple):
         return b"l" + struct.pack("<q", len(value)) + b"".join(map(_canonical, value))
     if is_dataclass(value):
-        kept = [field.name for field in fields(value) if field.name not in _COMMENTARY]
+        kept = [field.name for field in fields(value) if _counts(value, field.name)]
         content = b"".join(_canonical(name) + _canonical(getattr(value, name)) for name in kept)
         return b"o" + struct.pack("<q", len(kept)) + content
     raise TypeError(f"no canonical form for {type(value).__name__}")
+
+
+def _counts(value: Any, name: str) -> bool:
+    """Does a field enter the digest?"""
+    return name not in _COMMENTARY and not (name in _WHERE_GIVEN and getattr(value, name) is None)

@@ -25,6 +25,7 @@ from plant_models.model_kinds import (
     Kind,
 )
 from plant_models.model_tables import Table
+from plant_models.model_transforms import read_limits, read_transform
 from plant_models.quoting import quoted, suggestion
 from plant_models.specification import (
     GATE,
@@ -41,7 +42,7 @@ T = TypeVar("T")
 FALSE_FLAG_INTERVAL = 30 * 86400.0
 """Wanted mean time between false flags where the file names none, in seconds."""
 
-_VARIABLE = ("tag", "unit", "operating_point", "range", "validated_range")
+_VARIABLE = ("tag", "unit", "operating_point", "range", "validated_range", "transform")
 _EITHER = "expected sd with time_constant, or walk_sd with initial_sd"
 _OFFSET = ("bias_walk_sd", "bias_initial_sd")
 
@@ -117,6 +118,7 @@ def read_input(table: Table) -> InputSpec:
         range=limits,
         validated_range=validated,
         max_age=table.read_or("max_age", DURATION_ABOVE_ZERO, None),
+        transform=read_transform(table, operating_point),
     )
 
 
@@ -140,12 +142,14 @@ def read_sensor(table: Table) -> SensorSpec:
         on_change=table.read_or("on_change", FLAG, False),
         max_age=table.read_or("max_age", DURATION_ABOVE_ZERO, None),
         gate=table.read_or("gate", ABOVE_ZERO, GATE),
+        transform=read_transform(table, operating_point),
     )
 
 
 def read_estimate(table: Table) -> EstimateSpec:
-    table.only(*_VARIABLE, *_OFFSET, "lab", "interval_scale")
+    table.only(*_VARIABLE, *_OFFSET, "lab", "interval_scale", "limits")
     operating_point, limits, validated = _limits(table)
+    transform = read_transform(table, operating_point)
     return EstimateSpec(
         tag=table.read("tag", TAG),
         unit=table.read("unit", UNIT),
@@ -156,6 +160,8 @@ def read_estimate(table: Table) -> EstimateSpec:
         bias_initial_sd=table.read_or("bias_initial_sd", NOT_BELOW_ZERO, 0.0),
         lab=_lab(table),
         interval_scale=table.read_or("interval_scale", ABOVE_ZERO, 1.0),
+        transform=transform,
+        limits=read_limits(table, operating_point, transform),
     )
 
 

@@ -73,6 +73,10 @@ class PlantModel:
     stochastic: StochasticPart
     digest: str
     """SHA-256 over every discretised array and every limit that the estimator uses."""
+    scaled: UnitSpec
+    """The specification in the scale of the transfer functions, ``spec`` itself where no tag has a transform: what the
+    estimator and the tests compute with. Paths hold between values in that scale.
+    """
 
     @property
     def input_tags(self) -> tuple[str, ...]:

@@ -1,12 +1,15 @@
 """A model file's content as frozen values, checked once at the border and trusted afterwards.
 
 Times are seconds. Every other number is in the engineering unit of its tag; noise, bias, tolerance and walk are
-differences in that unit. Gains of integrating paths are per second.
+differences in that unit, at the operating point where the tag has a transform. Gains, and disturbances that enter at an
+input, are between transformed values. Gains of integrating paths are per second.
 """
 
 from __future__ import annotations
 
 from dataclasses import dataclass
+
+from plant_models.transform import Transform
 
 Range = tuple[float, float]
 GATE = 8.0
@@ -24,6 +27,8 @@ class InputSpec:
     validated_range: Range | None = None
     max_age: float | None = None
     """Seconds after which a held value makes the estimates Uncertain; None: three sample times."""
+    transform: Transform | None = None
+    """Transfer functions hold between transformed values."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -46,6 +51,7 @@ class SensorSpec:
     max_age: float | None = None
     gate: float = GATE
     """Standard deviations of the innovation beyond which a single reading is not used."""
+    transform: Transform | None = None
 
 
 @dataclass(frozen=True, slots=True)
@@ -69,6 +75,9 @@ class EstimateSpec:
     bias_initial_sd: float = 0.0
     lab: LabSpec | None = None
     interval_scale: float = 1.0
+    transform: Transform | None = None
+    limits: Range | None = None
+    """Physical limits, one of them possibly infinite: what lies beyond cannot be."""
 
 
 @dataclass(frozen=True, slots=True)

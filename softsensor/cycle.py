@@ -13,6 +13,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from plant_models.errors import Problem
+from plant_models.model_scale import from_model, one_to_model, to_model
 from plant_models.plant_model import PlantModel
 from softsensor.compiled_cycle import BlockInputs, BlockOutputs, empty_outputs, run_block
 from softsensor.cycle_results import CycleResults, Digest, flag_bytes, outside, result_rows
@@ -33,6 +34,7 @@ from softsensor.estimation.kernel import (
     initial_state,
     state_of,
 )
+from softsensor.published import limits_in_model_scale
 from softsensor.readings_of_cycle import CycleQuality, CycleReadings
 
 UNCERTAIN_VARIANCE = 9.0
@@ -62,8 +64,8 @@ class UnitDesign:
 
 @dataclass(frozen=True)
 class LabAtCycle:
-    """A laboratory result where it counts: cycle, index of its estimate, value, variance; its two times (UTC
-    microseconds) tell whether a later value of the same sample takes its place.
+    """A laboratory result where it counts: cycle, index of its estimate, value in engineering units, variance in
+    model scale; its two times (UTC microseconds) tell whether a later value of the same sample takes its place.
     """
 
     cycle: int
@@ -111,12 +113,18 @@ def start(design: UnitDesign, first_cycle: int = 0) -> CycleState:
 
 
 def usable(design: UnitDesign, readings: CycleReadings) -> tuple[Floats, Floats]:
-    """Sensor values with what is no reading taken out, and the factor on each one's noise variance."""
+    """Sensor values in model scale with what is no reading taken out, and the factor on each one's noise variance."""
     low, high = design.limits
     bad = readings.y_quality > CycleQuality.UNCERTAIN
     y = np.where(bad | (readings.y < low) | (readings.y > high), np.nan, readings.y)
+    y = to_model(design.model.spec.sensors, y)
     scale = np.where(readings.y_quality == CycleQuality.UNCERTAIN, UNCERTAIN_VARIANCE, 1.0)
     return np.ascontiguousarray(y), np.ascontiguousarray(scale)
+
+
+def usable_inputs(design: UnitDesign, readings: CycleReadings) -> Floats:
+    """Input values in model scale."""
+    return np.ascontiguousarray(to_model(design.model.spec.inputs, readings.u), dtype=np.float64)
 
 
 def in_use(book: FlagBook, first: int, cycles: int, n_sensors: int) -> Ints:
@@ -134,8 +142,9 @@ def block_inputs(
 ) -> BlockInputs:
     """Lay readings and laboratory results out for the compiled loop."""
     y, scale = usable(design, readings)
+    estimates = design.model.spec.estimates
     return BlockInputs(
-        np.ascontiguousarray(readings.u, dtype=np.float64),
+        usable_inputs(design, readings),
         y,
         scale,
         in_use(book, first, len(readings), design.kernel.n_sensors),
@@ -144,7 +153,7 @@ def block_inputs(
         _resting(book, first, len(readings)),
         np.array([lab.cycle - first for lab in labs], dtype=np.int64),
         np.array([design.kernel.n_sensors + lab.estimate for lab in labs], dtype=np.int64),
-        np.array([lab.value for lab in labs], dtype=np.float64),
+        np.array([one_to_model(estimates[lab.estimate], lab.value) for lab in labs], dtype=np.float64),
         np.array([lab.variance for lab in labs], dtype=np.float64),
     )
 
@@ -281,7 +290,7 @@ def _results(
     return CycleResults(
         first,
         readings.times[:done],
-        np.where(np.isfinite(out.innovation[:done]), data.y[:done], np.nan),
+        np.where(np.isfinite(out.innovation[:done]), readings.y[:done], np.nan),
         estimate,
         out.estimate_sd[:done] * scale,
         estimate_status(design, readings, estimate, (data.use[:done] == 0, out.settling[:done] != 0)),
@@ -307,7 +316,7 @@ def estimate_status(
     doubts: tuple[NDArray[np.bool_], NDArray[np.bool_]],
 ) -> NDArray[np.int8]:
     """1 (Uncertain) where an input is doubtful or was missing, something is outside its validated range, or a sensor is
-    left out.
+    left out, or an estimate lies beyond its physical limits.
 
     :param doubts: which sensors are left out (N, n_sensors); whether inputs are or were missing (N,).
     """
@@ -322,5 +331,7 @@ def estimate_status(
     status = np.repeat(doubtful[:, None], len(spec.estimates), axis=1)
     for e, estimated in enumerate(spec.estimates):
         if estimated.validated_range is not None:
-            status[:, e] |= outside(estimate[:, e], estimated.validated_range)
+            status[:, e] |= outside(from_model(estimated, estimate[:, e]), estimated.validated_range)
+        if estimated.limits is not None or estimated.transform is not None:
+            status[:, e] |= outside(estimate[:, e], limits_in_model_scale(estimated))
     return status.astype(np.int8)

@@ -50,7 +50,10 @@ class Digest:
 class CycleResults:
     """Results of N cycles as known at each of them, row k for cycle ``first + k``.
 
-    Shapes: times (N,); estimates, sd, status (N, n_estimates), sd with the interval scale in it, status 0 Good,
+    estimate, sd, predicted, innovation and innovation_sd are in model scale (:mod:`plant_models.model_scale`): a reader
+    carries them back (:mod:`softsensor.published`). ``reading`` is in the sensor's engineering unit.
+
+    Shapes: times (N,); estimate, sd, status (N, n_estimates), sd with the interval scale in it, status 0 Good,
     1 Uncertain, 2 Bad; predicted, innovation, innovation_sd, used, left_out, high, low, reading
     (N, n_sensors). lab_predicted and lab_sd: one entry per laboratory result that counts within these cycles, the
     prediction before the cycle's readings and the sd of the result's innovation.

@@ -11,10 +11,10 @@ from plant_models.plant_model import PlantModel
 from plant_models.units import engineering_units
 from softsensor.alarms.sensor_status import sensor_health
 from softsensor.detection.flags import Flag
+from softsensor.published import published_one
 from softsensor.records.changes import acknowledge_flag, comment_flag
 from softsensor.records.engine import Database
 from softsensor.service.recording import Step
-from softsensor.service.result_tables import NORMAL_95
 from softsensor.service.unit_service import UnitService
 
 STATUS_CODES = (0x00000000, 0x40950000, 0x80310000)
@@ -36,15 +36,11 @@ class OpcUaSink:
     async def publish(self, unit: UnitService, step: Step) -> None:
         """One cycle's outcome."""
         results, now = step.results, int(step.results.times[0])
-        for e, tag in enumerate(unit.model.estimate_tags):
-            value, sd = float(results.estimate[0, e]), float(results.sd[0, e])
+        for e, item in enumerate(unit.model.spec.estimates):
             await self._publisher.publish_estimate(
                 unit.name,
-                tag,
-                value,
-                sd,
-                value - NORMAL_95 * sd,
-                value + NORMAL_95 * sd,
+                item.tag,
+                *published_one(item, float(results.estimate[0, e]), float(results.sd[0, e])),
                 now,
                 STATUS_CODES[int(results.status[0, e])],
             )

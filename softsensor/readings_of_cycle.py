@@ -21,6 +21,8 @@ class CycleQuality(IntEnum):
     BAD        the newest is Bad or not finite; y is nan    the newest is Bad; the value before it is held
     MISSING    none yet, or none newer than the one used    it never had a value; u is nan
     STALE      the newest is too old; y is nan              the value is too old and still held
+    UNMAPPED   the tag's transform has no value for the     as BAD
+               newest (log of zero, say); y is nan
     ========== ============================================ ==============================================
     """
 
@@ -29,6 +31,7 @@ class CycleQuality(IntEnum):
     BAD = 2
     MISSING = 3
     STALE = 4
+    UNMAPPED = 5
 
 
 @dataclass(frozen=True)

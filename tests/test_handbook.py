@@ -23,7 +23,7 @@ from plant_models.model_sections import FALSE_FLAG_INTERVAL
 from plant_models.simulators import reactor_model_path
 from plant_models.specification import GATE, UnitSpec
 from plant_models.unit_spellings import PREFIXED, WHOLE
-from softsensor import cycle, unit_design
+from softsensor import cycle, published, unit_design
 from softsensor.cli.check import as_document, print_table
 from softsensor.detection import (
     beginning,
@@ -283,6 +283,10 @@ DEFAULTS = {
     ("estimate", "interval_scale"): 1.0,
     ("estimate", "lab"): None,
     ("estimate", "validated_range"): None,
+    ("input", "transform"): None,
+    ("sensor", "transform"): None,
+    ("estimate", "transform"): None,
+    ("estimate", "limits"): None,
 }
 WORDS = {"False": "false", "0.0": "0", "1.0": "1", "8.0": "8", "None": "none"}
 
@@ -327,7 +331,7 @@ LIMITS = [
     (METHOD, f"at another time within {lab_results.SEARCH_HOURS:g} h"),
     (METHOD, f"may be {replay.LEAST_HORIZON_S / 86400.0:g} days late at least"),
     (METHOD, f"{cycle.UNCERTAIN_VARIANCE:g} noise_sd^2 where the reading is Uncertain"),
-    (METHOD, f"the interval of {result_tables.NORMAL_95:.2f} sd to either side"),
+    (METHOD, f"the interval of {published.NORMAL_95:.2f} sd to either side"),
     (METHOD, f"is beyond `gate` standard deviations ({GATE:g},"),
     (METHOD, f"In the {gate.FOLLOWED} cycles after a sensor began to be followed"),
     (METHOD, f"clipped to {design_of_tests.CLIP:g} in size"),

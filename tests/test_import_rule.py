@@ -19,7 +19,7 @@ LAYERS: tuple[tuple[str, ...], ...] = (
     ("readings_of_cycle", "errors"),
     ("estimation",),
     ("detection",),
-    ("compiled_cycle", "cycle", "cycle_results", "unit_design"),
+    ("compiled_cycle", "cycle", "cycle_results", "published", "unit_design"),
     ("alarms", "records"),
     ("service", "commissioning"),
     ("web",),

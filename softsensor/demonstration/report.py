@@ -13,12 +13,12 @@ from softsensor.cycle import start
 from softsensor.demonstration.plant_side import Truth
 from softsensor.detection.detection_design import look
 from softsensor.estimation.kernel import Floats
+from softsensor.published import NORMAL_95
 from softsensor.readings_of_cycle import CycleQuality, CycleReadings, join_readings
 from softsensor.records import audit, series
 from softsensor.records.engine import Database
 from softsensor.records.reader import StoredFlag, StoredLab, find_unit, flags_of, lab_results_of
 from softsensor.service.replay import Replay
-from softsensor.service.result_tables import NORMAL_95
 from softsensor.unit_design import design_unit
 
 

@@ -21,6 +21,7 @@ from numpy.typing import NDArray
 from scipy.linalg import solve
 
 from plant_models.errors import RealisationError
+from plant_models.model_scale import scale_at_operating_point
 from plant_models.plant_model import PlantModel
 from plant_models.units import difference_unit
 from softsensor.estimation.observability import owners
@@ -107,13 +108,14 @@ def sensor_shifts(model: PlantModel) -> tuple[SensorShift, ...]:
 
     :raises RealisationError: the filter does not settle.
     """
-    spec, part = model.spec, model.stochastic
+    spec, part = model.scaled, model.stochastic
     state = steady_state(model)
     error = settled_error(state, part.A)
     remaining = settled_innovation(state, part.A)
     faded = fading(state, part.A)
     found = []
     for i, sensor in enumerate(spec.sensors):
+        of_file = model.spec.sensors[i]
         sd = math.sqrt(state.S[i, i])
         settled = float(abs(remaining[i, i])) * sensor.tolerance / sd
         fades = abs(1.0 - remaining[i, i]) > LEAST_FADING
@@ -122,8 +124,8 @@ def sensor_shifts(model: PlantModel) -> tuple[SensorShift, ...]:
             SensorShift(
                 sensor.tag,
                 difference_unit(sensor.unit),
-                sensor.tolerance,
-                sd,
+                of_file.tolerance,
+                sd / scale_at_operating_point(of_file),
                 sensor.tolerance / sd,
                 settled,
                 half * spec.sample_time if fades and half is not None else None,

@@ -49,7 +49,7 @@ def forgetting(model: PlantModel, kernel: Kernel, steady: SteadyFilter, referenc
 
     :param reference: reference value of each sensor's most sensitive test, in standard deviations (n_sensors,).
     """
-    spec = model.spec
+    spec = model.scaled
     cycles = max(1, round(LONGEST_S / spec.sample_time))
     use = np.ones(kernel.n_sensors, dtype=np.int64)
     longest = delay = 0

@@ -45,7 +45,7 @@ def steady_shifts(model: PlantModel, kernel: Kernel, window: int = SETTLED) -> F
     use = np.ones(kernel.n_sensors, dtype=np.int64)
     steady = steady_filter(model, kernel, use)
     shifts = np.zeros(kernel.n_sensors)
-    for i, sensor in enumerate(model.spec.sensors):
+    for i, sensor in enumerate(model.scaled.sensors):
         signal = np.zeros((window, kernel.n_sensors))
         signal[:, i] = sensor.tolerance
         shifts[i] = abs(filter_response(kernel, steady.gains, use, signal)[-1, i]) / steady.sd[i]
@@ -122,7 +122,7 @@ def fault_test_design(model: PlantModel, kernel: Kernel) -> TestDesign:
         SPIKE,
         np.full(kernel.n_sensors, lost, dtype=np.int64),
         0.01 / cycles,
-        np.array([item.noise_sd for item in model.spec.sensors]),
+        np.array([item.noise_sd for item in model.scaled.sensors]),
         LOOK_EVERY,
         np.array([int(tag not in disarmed) for tag in model.sensor_tags], dtype=np.int64),
         0,

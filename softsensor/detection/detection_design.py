@@ -77,7 +77,7 @@ class DetectionDesign:
         key = tuple(int(value) for value in use)
         if key not in self.standings:
             steady, table = self.table(use)
-            tolerance = np.array([item.tolerance for item in self.model.spec.sensors])
+            tolerance = np.array([item.tolerance for item in self.model.scaled.sensors])
             sample_time = self.model.spec.sample_time
             self.standings[key] = standing(
                 self.suspects, table, steady.whitening, use, sample_time, tolerance

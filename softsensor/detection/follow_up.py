@@ -7,6 +7,7 @@ from zlib import crc32
 
 import numpy as np
 
+from plant_models.model_scale import bias_in_unit
 from softsensor.detection import state_of_tests as told
 from softsensor.detection.detection_design import DetectionDesign, explanations, look, sensors_in_use
 from softsensor.detection.diagnosis import (
@@ -217,7 +218,7 @@ def _worth_a_flag(design: DetectionDesign, verdict: Verdict, found: Likelihoods,
         return False
     named = verdict.probabilities[0] * (NAMING_RATIO + 1.0) >= NAMING_RATIO
     size = abs(_present_size(suspect, found, verdict.best)[0])
-    worth = suspect.source != "sensor" or size > design.model.spec.sensors[suspect.index].tolerance
+    worth = suspect.source != "sensor" or size > design.model.scaled.sensors[suspect.index].tolerance
     certain = verdict.instrument * (NAMING_RATIO + 1.0) > NAMING_RATIO
     return named or (certain and worth and waited >= PATIENCE)
 
@@ -242,6 +243,20 @@ def _present_size(suspect: Hypothesis, found: Likelihoods, best: int) -> tuple[f
     return float(found.size[best]) * factor, float(found.size_sd[best]) * factor
 
 
+def _in_unit(
+    design: DetectionDesign, suspect: Hypothesis, size: float, size_sd: float
+) -> tuple[float, float]:
+    """An instrument's error, with its sd, in the engineering unit at the operating point."""
+    spec = design.model.spec
+    if suspect.source == "sensor":
+        return bias_in_unit(spec.sensors[suspect.index], size, size_sd)
+    return (
+        bias_in_unit(spec.inputs[suspect.index], size, size_sd)
+        if suspect.source == "input"
+        else (size, size_sd)
+    )
+
+
 def _open_shift(
     design: DetectionDesign,
     outcome: FollowUp,
@@ -254,6 +269,7 @@ def _open_shift(
     kind: Kind = "drift" if suspect.shape == "ramp" else "bias"
     kind = "model" if suspect.source == "gain" else kind
     size, size_sd = _present_size(suspect, found, verdict.best)
+    size, size_sd = _in_unit(design, suspect, size, size_sd)
     back = int(found.age[verdict.best]) - 1
     flag = Flag(
         flag_name(design.model.spec.name, suspect.name, kind, moment.time),

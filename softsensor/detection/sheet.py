@@ -6,6 +6,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from plant_models.model_scale import scale_at_operating_point
 from plant_models.units import difference_unit
 from softsensor.detection.absorption import SensorShift, is_absorbed, sensor_shifts
 from softsensor.detection.detectability import (
@@ -109,6 +110,7 @@ def sheet_line(design: DetectionDesign, asked: Diagnostician, index: int, shift:
     spec = design.model.spec
     sensor, bank = spec.sensors[index], bank_of(design.tests, index)
     tests, found = _own_sums(design, index), findable_by_own_sums(design, index)
+    scale = scale_at_operating_point(sensor)
     delay = _delay(bank, shift.settled) * spec.sample_time
     return SheetLine(
         shift,
@@ -117,13 +119,14 @@ def sheet_line(design: DetectionDesign, asked: Diagnostician, index: int, shift:
         found,
         delay,
         is_absorbed(delay, spec.false_flag_interval),
-        _told(asked, ("sensor", index), tests, _worth_asking(found, sensor.tolerance)),
+        _told(asked, ("sensor", index), tests, _worth_asking(found, sensor.tolerance), scale),
     )
 
 
 def _own_sums(design: DetectionDesign, index: int) -> Watched:
     spec = design.model.spec
-    signature = _signatures(design, ("sensor", index))[:, index]
+    scale = scale_at_operating_point(spec.sensors[index])
+    signature = scale * _signatures(design, ("sensor", index))[:, index]
     return watched([(bank_of(design.tests, index), signature)], spec.sample_time, spec.false_flag_interval)
 
 
@@ -136,7 +139,9 @@ def findable_by_own_sums(design: DetectionDesign, index: int) -> Findable:
 
 def _input_line(design: DetectionDesign, asked: Diagnostician, index: int) -> InputLine:
     spec = design.model.spec
-    item, signatures = spec.inputs[index], _signatures(design, ("input", index))
+    item = spec.inputs[index]
+    scale = scale_at_operating_point(item)
+    signatures = scale * _signatures(design, ("input", index))
     looking = [
         (bank_of(design.tests, j), signatures[:, j])
         for j in range(len(spec.sensors))
@@ -144,12 +149,12 @@ def _input_line(design: DetectionDesign, asked: Diagnostician, index: int) -> In
     ]
     tests = watched(looking, spec.sample_time, spec.false_flag_interval)
     plausible = next(
-        suspect.prior_sd
+        suspect.prior_sd / scale
         for suspect in design.suspects
         if (suspect.source, suspect.index, suspect.shape) == ("input", index, "step")
     )
     found = findable(tests, Sizes(plausible, item.range[1] - item.range[0]))
-    told = _told(asked, ("input", index), tests, _worth_asking(found, plausible))
+    told = _told(asked, ("input", index), tests, _worth_asking(found, plausible), scale)
     return InputLine(item.tag, difference_unit(item.unit), plausible, found, told)
 
 
@@ -190,7 +195,9 @@ def _told(
     instrument: tuple[Instrument, int],
     tests: Watched,
     faults: list[tuple[Shape, float]],
+    scale: float,
 ) -> tuple[FaultTold, ...]:
+    """What the diagnosis makes of faults of these sizes; ``scale``: model units per unit of the instrument."""
     told = []
     for shape, size in faults:
         of_cycle = size if shape == "step" else size * tests.sample_time / DAY
@@ -199,6 +206,6 @@ def _told(
         if within is None or usual is None:
             continue
         age = round(usual / tests.sample_time)
-        answer: Isolation = asked.ask(InstrumentFault(instrument, shape, of_cycle, age))
+        answer: Isolation = asked.ask(InstrumentFault(instrument, shape, scale * of_cycle, age))
         told.append(FaultTold(shape, size, within, answer.named, answer.alike))
     return tuple(told)

@@ -230,7 +230,7 @@ def _sizes(model: PlantModel, window: int) -> list[tuple[Source, int, str, float
     """Every suspect with a plausible size of its error: three tolerances, three sd, a tenth of an input's working range."""
     hours = window * model.spec.sample_time / 3600.0
     suspects: list[tuple[Source, int, str, float]] = [
-        ("sensor", i, item.tag, 3.0 * item.tolerance) for i, item in enumerate(model.spec.sensors)
+        ("sensor", i, item.tag, 3.0 * item.tolerance) for i, item in enumerate(model.scaled.sensors)
     ]
     suspects += [
         (
@@ -239,7 +239,7 @@ def _sizes(model: PlantModel, window: int) -> list[tuple[Source, int, str, float
             item.tag,
             0.1 * _width(item.validated_range) if item.validated_range else 0.03 * _width(item.range),
         )
-        for i, item in enumerate(model.spec.inputs)
+        for i, item in enumerate(model.scaled.inputs)
     ]
     for i, item in enumerate(model.spec.disturbances):
         walk = (item.initial_sd**2 + (item.walk_sd or 0.0) ** 2 * hours) ** 0.5

@@ -167,7 +167,7 @@ def _ring_length(paths: tuple[DiscretePath, ...]) -> int:
 
 def build_kernel(model: PlantModel) -> Kernel:
     """Lay a model out for the compiled loop."""
-    spec, paths, part = model.spec, model.paths, model.stochastic
+    spec, paths, part = model.scaled, model.paths, model.stochastic
     sizes = [len(path.steady) for path in paths]
     operating = [item.operating_point for item in spec.sensors]
     operating += [item.operating_point for item in spec.estimates]

@@ -17,6 +17,7 @@ from numpy.typing import NDArray
 from scipy.linalg import qr, solve
 from scipy.sparse.csgraph import connected_components
 
+from plant_models.model_scale import scale_at_operating_point
 from plant_models.plant_model import PlantModel, StochasticPart
 from softsensor.estimation.steady_state import Rows, SteadyState, Stretch, measured_rows, reaches, settle
 
@@ -92,14 +93,14 @@ def estimate_knowledge(model: PlantModel) -> tuple[EstimateKnowledge, ...]:
 
     :raises RealisationError: the filter does not settle.
     """
-    spec, part = model.spec, model.stochastic
+    spec, part = model.scaled, model.stochastic
     everything = range(len(spec.sensors))
     blind, seeing = settle(part, measured_rows(model, ())), settle(part, measured_rows(model))
     lost = [settle(part, measured_rows(model, [j for j in everything if j != i])) for i in everything]
     found = []
     for index, estimate in enumerate(spec.estimates):
         whole = part.C[len(spec.sensors) + index]
-        row, scale = np.where(_walking_offsets(part), 0.0, whole), estimate.interval_scale
+        row, scale = np.where(_walking_offsets(part), 0.0, whole), shown_scale(model, index)
         without = zip(spec.sensors, lost, strict=True)
         lab = None
         if estimate.lab is not None:
@@ -118,6 +119,14 @@ def estimate_knowledge(model: PlantModel) -> tuple[EstimateKnowledge, ...]:
             )
         )
     return tuple(found)
+
+
+def shown_scale(model: PlantModel, estimate: int) -> float:
+    """From a standard deviation in model scale to the one shown: interval_scale, in the estimate's engineering unit at its
+    operating point.
+    """
+    item = model.spec.estimates[estimate]
+    return item.interval_scale / scale_at_operating_point(item)
 
 
 def _walking_offsets(part: StochasticPart) -> NDArray[np.bool_]:

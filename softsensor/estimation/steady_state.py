@@ -110,7 +110,7 @@ def measured_rows(model: PlantModel, sensors: Sequence[int] | None = None, labs:
     """The rows of some sensors (indices; None: all) and of the laboratory results of some estimates
     (indices).
     """
-    spec, C = model.spec, model.stochastic.C
+    spec, C = model.scaled, model.stochastic.C
     chosen = range(len(spec.sensors)) if sensors is None else sensors
     variances = [spec.sensors[i].noise_sd ** 2 for i in chosen]
     places = list(chosen)

@@ -18,7 +18,7 @@ from scipy.linalg import solve
 from plant_models.building import build_plant_model
 from plant_models.plant_model import PlantModel, StochasticPart
 from plant_models.second_instrument import SECOND, with_second
-from softsensor.estimation.observability import after_result
+from softsensor.estimation.observability import after_result, shown_scale
 from softsensor.estimation.steady_state import Rows, SteadyState, Stretch, measured_rows, settle
 
 Vector = NDArray[np.float64]
@@ -65,12 +65,12 @@ def prospects(model: PlantModel, lab_interval: float = LAB_INTERVAL) -> tuple[Pr
     :param lab_interval: seconds between two laboratory results of one estimate.
     :raises RealisationError: the filter does not settle.
     """
-    spec, part = model.spec, model.stochastic
+    spec, part = model.scaled, model.stochastic
     everything = settle(part, measured_rows(model))
     variants = _variants(model)
     found = []
     for index, estimate in enumerate(spec.estimates):
-        place, scale = len(spec.sensors) + index, estimate.interval_scale
+        place, scale = len(spec.sensors) + index, shown_scale(model, index)
         row = part.C[place]
         if estimate.lab is None:
             changes = [
@@ -172,7 +172,7 @@ class _Reduced:
 
 @dataclass(frozen=True, eq=False)
 class _Result:
-    """Laboratory results of one estimate: its row, their sd, the estimate's interval_scale."""
+    """Laboratory results of one estimate: its row, their sd, the factor to the sd that is shown."""
 
     part: StochasticPart
     row: Vector

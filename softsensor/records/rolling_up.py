@@ -60,7 +60,8 @@ def roll_up(
 ) -> int:
     """Put the rollups of a span of time on record, from the cycles on record; returns how many there are.
 
-    Inputs and sensors give the quantity ``reading``, estimates ``value`` and ``sd``. May be repeated.
+    Inputs and sensors give the quantity ``reading`` in their unit, estimates ``value`` and ``sd`` as they are on record, in
+    model scale where they have a transform. May be repeated.
 
     :param tags: by revision; every revision that ran in the span.
     :param span: from and to in UTC microseconds, whole multiples of ``width_us``; the cycles in it are complete.

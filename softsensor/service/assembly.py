@@ -5,9 +5,9 @@ The rules, with t a cycle's time:
 - A sensor's reading is its newest one at or before t. It counts while it is no older than ``max_age`` (three
   sample times unless the tag says otherwise) and in one cycle only; a sensor reported on change gives its
   value again until it changes, limited only by a ``max_age`` of its own. Bad, or not finite: no reading.
-  Uncertain: a reading, marked.
-- An input holds its last value that was finite and not Bad. Older than ``max_age`` it is still held, and
-  marked.
+  Uncertain: a reading, marked. Outside the domain of the tag's transform: no reading, marked so.
+- An input holds its last value that was finite, not Bad, and one that its transform can take. Older than
+  ``max_age`` it is still held, and marked.
 
 Every decision that needs a clock is taken here, against the cycle's own time, and never again.
 """
@@ -23,8 +23,9 @@ from numpy.typing import NDArray
 from connectors.history import History, TagSeries
 from connectors.readings import Reading
 from plant_models.specification import UnitSpec
+from plant_models.transform import Transform
 from softsensor.readings_of_cycle import CycleReadings
-from softsensor.service.reading_rules import NEVER, TagState, input_values, sensor_readings
+from softsensor.service.reading_rules import BAD, NEVER, UNMAPPED, TagState, input_values, sensor_readings
 from softsensor.service.sample_grid import (
     MICROSECONDS,
     cycle_times,
@@ -38,11 +39,14 @@ NO_LIMIT = 2**62
 
 @dataclass(frozen=True, slots=True)
 class TagRule:
-    """How one tag's readings are taken: maximum age in microseconds, and whether a reading counts once."""
+    """How one tag's readings are taken: maximum age in microseconds, whether a reading counts once, and its transform, for
+    which a value outside its domain is no reading.
+    """
 
     tag: str
     max_age: int
     counts_once: bool
+    transform: Transform | None = None
 
 
 @dataclass(frozen=True, slots=True)
@@ -80,12 +84,16 @@ def rules_of(spec: UnitSpec) -> UnitRules:
     sample_time = sample_time_in_microseconds(spec.sample_time)
     return UnitRules(
         sample_time,
-        tuple(TagRule(item.tag, _age(item.max_age, 3 * sample_time), True) for item in spec.inputs),
+        tuple(
+            TagRule(item.tag, _age(item.max_age, 3 * sample_time), True, item.transform)
+            for item in spec.inputs
+        ),
         tuple(
             TagRule(
                 item.tag,
                 _age(item.max_age, NO_LIMIT if item.on_change else 3 * sample_time),
                 not item.on_change,
+                item.transform,
             )
             for item in spec.sensors
         ),
@@ -196,16 +204,24 @@ def _assemble(
     inputs, sensors = [], []
     for j, rule in enumerate(rules.inputs):
         new = events[rule.tag]
-        arguments = (new.times, new.values, new.qualities, times, rule.max_age)
+        arguments = (new.times, new.values, _mapped(rule, new), times, rule.max_age)
         inputs.append(TagState(*input_values(*arguments, state.inputs[j], u[:, j], u_quality[:, j])))
     for j, rule in enumerate(rules.sensors):
         new = events[rule.tag]
-        arguments = (new.times, new.values, new.qualities, times, rule.max_age)
+        arguments = (new.times, new.values, _mapped(rule, new), times, rule.max_age)
         taken = sensor_readings(*arguments, rule.counts_once, state.sensors[j], y[:, j], y_quality[:, j])
         sensors.append(TagState(*taken))
     last = int(times[-1]) if count else state.last_cycle
     readings = CycleReadings(times, u, u_quality, y, y_quality)
     return readings, AssemblyState(last, tuple(inputs), tuple(sensors))
+
+
+def _mapped(rule: TagRule, new: TagSeries) -> NDArray[np.int8]:
+    """The readings' qualities; UNMAPPED where the tag's transform has no value for a reading that is finite and not Bad."""
+    if rule.transform is None:
+        return new.qualities
+    unmapped = np.isfinite(new.values) & (new.qualities < BAD) & ~rule.transform.holds(new.values)
+    return np.where(unmapped, np.int8(UNMAPPED), new.qualities).astype(np.int8)
 
 
 def _blank(cycles: int, tags: int) -> tuple[NDArray[np.float64], NDArray[np.int8]]:

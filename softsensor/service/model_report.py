@@ -10,10 +10,10 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from plant_models.model_scale import variables
 from plant_models.plant_model import PlantModel
 from plant_models.specification import PathSpec, UnitSpec
 from plant_models.transfer_function import dc_gain, is_integrating, poles, ramp_gain, zeros
-from plant_models.units import difference_unit
 from softsensor.detection.absorption import LATEST_FLAG
 from softsensor.detection.sheet import InputLine, SheetLine, detectability_sheet
 from softsensor.estimation.observability import (
@@ -25,6 +25,7 @@ from softsensor.estimation.observability import (
 )
 from softsensor.estimation.steady_state import SteadyState, steady_state
 from softsensor.estimation.what_helps import LAB_INTERVAL, Prospects, prospects
+from softsensor.service.scale_report import ScaleReport, scale_reports, scale_unit
 from softsensor.service.second_instrument import Mend, mends
 from softsensor.unit_design import design_unit
 
@@ -86,7 +87,8 @@ class SolutionReport:
 @dataclass(frozen=True, slots=True)
 class ModelReport:
     """All of it. ``sound``: the sensors add something to every estimate. ``mends``: for the sensors whose faults are
-    absorbed or taken for others. ``prospects``: what would make each estimate better or worse.
+    absorbed or taken for others. ``prospects``: what would make each estimate better or worse. ``scales``: tags with a
+    transform or physical limits.
     """
 
     unit: str
@@ -99,6 +101,7 @@ class ModelReport:
     disturbances: tuple[DisturbanceKnowledge, ...]
     estimates: tuple[EstimateKnowledge, ...]
     prospects: tuple[Prospects, ...]
+    scales: tuple[ScaleReport, ...]
     sensors: tuple[SheetLine, ...]
     inputs: tuple[InputLine, ...]
     mends: tuple[Mend, ...]
@@ -133,6 +136,7 @@ def model_report(model: PlantModel, lab_interval: float = LAB_INTERVAL) -> Model
         disturbances,
         estimates,
         prospects(model, lab_interval),
+        scale_reports(spec),
         sensors,
         sheet.inputs,
         mends(model, sensors),
@@ -175,10 +179,9 @@ def _path(path: PathSpec, spec: UnitSpec) -> PathReport:
 
 def _gain_unit(path: PathSpec, spec: UnitSpec) -> str:
     """Output unit per input unit, both of differences. A disturbance has no unit but its own."""
-    units = {item.tag: item.unit for item in spec.inputs} | {item.tag: item.unit for item in spec.sensors}
-    units |= {item.tag: item.unit for item in spec.estimates}
-    source = difference_unit(units[path.source]) if path.source in units else "unit of the disturbance"
-    return f"{difference_unit(units[path.target])} per {source}"
+    units = {item.tag: scale_unit(item) for item in variables(spec)}
+    source = units.get(path.source, "unit of the disturbance")
+    return f"{units[path.target]} per {source}"
 
 
 def _sampling(paths: tuple[PathReport, ...], sample_time: float) -> SamplingReport:

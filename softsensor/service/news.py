@@ -6,12 +6,14 @@ import math
 from dataclasses import asdict
 from typing import Any
 
+from plant_models.model_scale import one_from_model
 from softsensor.cycle import UnitDesign
 from softsensor.detection.flags import Flag
 from softsensor.estimation.lab_results import LabOutcome
+from softsensor.published import published_one
 from softsensor.service.live_feed import News
 from softsensor.service.recording import Step
-from softsensor.service.result_tables import NORMAL_95, STATUS_NAMES, reasons
+from softsensor.service.result_tables import STATUS_NAMES, reasons
 
 
 def number(value: float) -> float | None:
@@ -23,23 +25,23 @@ def cycle_news(design: UnitDesign, step: Step) -> News:
     """Estimates with their intervals, sensors with their predictions."""
     results, texts = step.results, reasons(design, step.readings, step.results)
     estimates: dict[str, Any] = {}
-    for e, tag in enumerate(design.model.estimate_tags):
-        value, sd = float(results.estimate[0, e]), float(results.sd[0, e])
-        estimates[tag] = {
+    for e, item in enumerate(design.model.spec.estimates):
+        value, sd, lower, upper = published_one(item, float(results.estimate[0, e]), float(results.sd[0, e]))
+        estimates[item.tag] = {
             "value": number(value),
             "sd": number(sd),
-            "lower": number(value - NORMAL_95 * sd),
-            "upper": number(value + NORMAL_95 * sd),
+            "lower": number(lower),
+            "upper": number(upper),
             "status": str(STATUS_NAMES[results.status[0, e]]),
             "reason": str(texts[0, e]),
         }
     sensors = {
-        tag: {
+        item.tag: {
             "reading": number(results.reading[0, i]),
-            "predicted": number(results.predicted[0, i]),
+            "predicted": number(one_from_model(item, float(results.predicted[0, i]))),
             "used": int(results.used[0, i]),
         }
-        for i, tag in enumerate(design.model.sensor_tags)
+        for i, item in enumerate(design.model.spec.sensors)
     }
     body = {"time": int(results.times[0]), "cycle": results.first, "estimates": estimates, "sensors": sensors}
     return News(design.model.spec.name, "cycle", body)

@@ -14,7 +14,7 @@ Function = TypeVar("Function", bound=Callable[..., Any])
 NEVER = -(2**63)
 """A time before every time: nothing has been seen yet."""
 
-GOOD, UNCERTAIN, BAD, MISSING, STALE = 0, 1, 2, 3, 4
+GOOD, UNCERTAIN, BAD, MISSING, STALE, UNMAPPED = 0, 1, 2, 3, 4, 5
 """Codes of softsensor.readings_of_cycle.CycleQuality, as plain integers for the compiler."""
 
 
@@ -44,7 +44,7 @@ def _take(state: TagState, time: int, value: float, quality: int) -> TagState:
     usable = quality < BAD and np.isfinite(value)
     if time > newest_time:
         newest_time, newest_value = time, value
-        newest_quality = quality if usable else BAD
+        newest_quality = quality if usable else max(quality, BAD)
     if usable and time > usable_time:
         usable_time, usable_value, usable_quality = time, value, quality
     return TagState(
@@ -104,7 +104,7 @@ def sensor_readings(
         else:
             state = _use_newest(state)
             y_quality[k] = state.newest_quality
-            if state.newest_quality != BAD:
+            if state.newest_quality < BAD:
                 y[k] = state.newest_value
     return state
 
@@ -136,8 +136,8 @@ def input_values(
             u_quality[k] = MISSING
         elif now - state.usable_time > max_age:
             u_quality[k] = STALE
-        elif state.newest_quality == BAD:
-            u_quality[k] = BAD
+        elif state.newest_quality >= BAD:
+            u_quality[k] = state.newest_quality
         else:
             u_quality[k] = state.usable_quality
     return state

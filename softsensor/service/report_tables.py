@@ -25,8 +25,8 @@ class ReportTable(NamedTuple):
 
 
 def knowledge_tables(report: ModelReport) -> tuple[ReportTable, ...]:
-    """Disturbances, estimates, where their uncertainty comes from, and what would change them."""
-    return _disturbances(report), _estimates(report), _sources(report), _prospects(report)
+    """Transforms if any, disturbances, estimates, where their uncertainty comes from, and what would change them."""
+    return *_scales(report), _disturbances(report), _estimates(report), _sources(report), _prospects(report)
 
 
 def paths_table(report: ModelReport) -> ReportTable:
@@ -53,6 +53,38 @@ def _path(path: PathReport) -> tuple[str, ...]:
         f"{path.dead_time_samples:.4g}",
         ", ".join(shape),
     )
+
+
+def _scales(report: ModelReport) -> Iterator[ReportTable]:
+    """Tags with a transform, or with physical limits."""
+    if not report.scales:
+        return
+    rows = tuple(
+        (
+            item.tag,
+            item.transform or "none",
+            "" if item.slope is None else f"{abs(item.slope):.3g} per {difference_unit(item.unit)}",
+            ""
+            if item.slope_from is None or item.slope_to is None
+            else f"{item.slope_from:.3g} to {item.slope_to:.3g}",
+            "none" if item.limits is None else f"{item.limits[0]:g} to {item.limits[1]:g} {item.unit}",
+        )
+        for item in report.scales
+    )
+    notes = (
+        "Transfer functions hold between transformed values. Noise, tolerance and bias are taken at the operating point; "
+        "their transformed size is the same everywhere. Standard deviations and sizes in this report are those at the "
+        "operating point.",
+    )
+    columns = (
+        "tag",
+        "transform",
+        "slope at operating point",
+        "within validated range or range",
+        "physical limits",
+    )
+    transformed = any(item.transform is not None for item in report.scales)
+    yield ReportTable("Transforms and physical limits", columns, rows, notes if transformed else ())
 
 
 def _disturbances(report: ModelReport) -> ReportTable:

@@ -7,16 +7,17 @@ from collections.abc import Sequence
 import numpy as np
 import pandas as pd
 
+from plant_models.model_scale import columns_from_model
+from plant_models.specification import EstimateSpec
 from softsensor.cycle import UnitDesign
 from softsensor.cycle_results import CycleResults, outside
 from softsensor.detection.conformance import BLOCK, LOOK_EVERY_BLOCKS
 from softsensor.detection.flags import Flag
 from softsensor.estimation.lab_results import LabOutcome
 from softsensor.estimation.smoothing import SmoothedCycles
+from softsensor.published import Published, interval, limits_in_model_scale, published
 from softsensor.readings_of_cycle import CycleQuality, CycleReadings
 
-NORMAL_95 = 1.959963984540054
-"""97.5 % quantile of the standard normal distribution."""
 STATUS_NAMES = ("Good", "Uncertain", "Bad")
 
 ESTIMATE_COLUMNS = ("time", "tag", "value", "sd", "lower", "upper", "status", "reason")
@@ -38,6 +39,7 @@ INPUT_REASONS = {
     CycleQuality.BAD: "{} is Bad, its last value is held",
     CycleQuality.MISSING: "{} has had no value yet",
     CycleQuality.STALE: "{} is too old, its last value is held",
+    CycleQuality.UNMAPPED: "{} is outside what its transform can take, its last value is held",
 }
 
 
@@ -60,7 +62,11 @@ def reasons(design: UnitDesign, readings: CycleReadings, results: CycleResults) 
     doubtful = np.flatnonzero(np.any(results.status != 0, axis=1))
     if not doubtful.size:
         return out
-    own = _outside_each(results.estimate[doubtful], [item.validated_range for item in spec.estimates])
+    known = results.estimate[doubtful]
+    own = _outside_each(
+        columns_from_model(spec.estimates, known), [item.validated_range for item in spec.estimates]
+    )
+    impossible = _outside_each(known, [limits_in_model_scale(item) for item in spec.estimates])
     pattern = np.column_stack(
         [
             readings.u_quality[doubtful],
@@ -69,6 +75,7 @@ def reasons(design: UnitDesign, readings: CycleReadings, results: CycleResults) 
             results.left_out[doubtful],
             _codes(results.doubts[doubtful]),
             own,
+            impossible,
         ]
     )
     _, at, of_row = np.unique(pattern, axis=0, return_index=True, return_inverse=True)
@@ -78,9 +85,18 @@ def reasons(design: UnitDesign, readings: CycleReadings, results: CycleResults) 
         for e, item in enumerate(spec.estimates):
             beyond = f"{item.tag} is outside its validated range" if own[first, e] else ""
             words = [*shared, results.doubts[doubtful[first], e], beyond]
+            words += [_impossible(item)] if impossible[first, e] else []
             texts[place, e] = "; ".join(text for text in words if text)
     out[doubtful] = texts[of_row.reshape(-1)]
     return out
+
+
+def _impossible(item: EstimateSpec) -> str:
+    """Why an estimate that the state puts where it cannot be is Uncertain."""
+    if item.limits is None:
+        assert item.transform is not None
+        return f"{item.tag} is beyond what its {item.transform.text} covers"
+    return f"the model puts {item.tag} beyond its limits, {item.limits[0]:g} to {item.limits[1]:g}"
 
 
 def _codes(texts: np.ndarray) -> np.ndarray:
@@ -114,33 +130,35 @@ def _shared_reasons(design: UnitDesign, readings: CycleReadings, results: CycleR
 def estimate_table(design: UnitDesign, readings: CycleReadings, results: CycleResults) -> pd.DataFrame:
     """One row per cycle and estimate, cycle by cycle."""
     tags, n = list(design.model.estimate_tags), len(results)
-    value, sd = results.estimate.ravel(), results.sd.ravel()
     return pd.DataFrame(
         {
             "time": moments(results.times).repeat(len(tags)),
             "tag": _words(np.tile(np.arange(len(tags)), n), tags),
-            "value": value,
-            "sd": sd,
-            "lower": value - NORMAL_95 * sd,
-            "upper": value + NORMAL_95 * sd,
+            **_published(design, results.estimate, results.sd),
             "status": _words(results.status.ravel(), STATUS_NAMES),
             "reason": reasons(design, readings, results).ravel(),
         }
     )
 
 
+def _published(design: UnitDesign, mean: np.ndarray, sd: np.ndarray) -> dict[str, np.ndarray]:
+    """The columns value, sd, lower and upper of all estimates, cycle by cycle, from (N, n_estimates) in model scale."""
+    spec = design.model.spec
+    if all(item.transform is None and item.limits is None for item in spec.estimates):
+        columns = interval(mean.ravel(), sd.ravel())
+        return columns._asdict()
+    each = [published(item, mean[:, e], sd[:, e]) for e, item in enumerate(spec.estimates)]
+    return {name: np.column_stack([getattr(one, name) for one in each]).ravel() for name in Published._fields}
+
+
 def smoothed_table(design: UnitDesign, cycles: SmoothedCycles) -> pd.DataFrame:
     """One row per cycle and estimate, cycle by cycle: the estimate given all readings of the period."""
     tags, n = list(design.model.estimate_tags), len(cycles.times)
-    value, sd = cycles.estimate.ravel(), cycles.sd.ravel()
     return pd.DataFrame(
         {
             "time": moments(cycles.times).repeat(len(tags)),
             "tag": _words(np.tile(np.arange(len(tags)), n), tags),
-            "value": value,
-            "sd": sd,
-            "lower": value - NORMAL_95 * sd,
-            "upper": value + NORMAL_95 * sd,
+            **_published(design, cycles.estimate, cycles.sd),
         }
     )
 
@@ -153,7 +171,7 @@ def innovation_table(design: UnitDesign, results: CycleResults) -> pd.DataFrame:
             "time": moments(results.times).repeat(len(tags)),
             "tag": _words(np.tile(np.arange(len(tags)), n), tags),
             "reading": results.reading.ravel(),
-            "predicted": results.predicted.ravel(),
+            "predicted": columns_from_model(design.model.spec.sensors, results.predicted).ravel(),
             "innovation": results.innovation.ravel(),
             "sd": results.innovation_sd.ravel(),
             "used": results.used.ravel(),

@@ -12,7 +12,7 @@ from softsensor.cycle_results import CycleResults
 from softsensor.detection.flags import Flag, Note
 from softsensor.detection.shift_tests import DOWN
 from softsensor.estimation.lab_results import LabOutcome, with_corrections
-from softsensor.service.result_tables import NORMAL_95
+from softsensor.published import NORMAL_95
 
 
 class RunSummary:
@@ -100,7 +100,7 @@ class RunSummary:
     def _estimate(self, e: int) -> dict[str, Any]:
         labs = [lab for lab in self.labs if lab.arrival.estimate == e]
         used = [lab for lab in labs if lab.status == "used"]
-        errors = np.array([lab.innovation for lab in used])
+        errors = np.array([lab.arrival.value - lab.predicted for lab in used])
         inside = [abs(lab.innovation) <= NORMAL_95 * lab.sd for lab in used]
         return {
             "lab_count": len(used),

@@ -16,9 +16,10 @@ from numpy.typing import NDArray
 from connectors.history import History
 from plant_models.building import build_plant_model
 from plant_models.durations import parse_duration
+from plant_models.model_scale import one_to_model
 from plant_models.plant_model import PlantModel
 from plant_models.specification import EstimateSpec, UnitSpec
-from softsensor.cycle import UnitDesign, rerun, usable
+from softsensor.cycle import UnitDesign, rerun, usable, usable_inputs
 from softsensor.detection.flags import FlagBook
 from softsensor.estimation.kernel import Floats, initial_state
 from softsensor.estimation.lab_results import LabArrival, LabOutcome, with_corrections
@@ -174,7 +175,7 @@ def _data(design: UnitDesign, history: History) -> _Data:
     readings = slice_readings(readings, first, len(readings))
     y, scale = usable(design, readings)
     doubtful = np.any(readings.u_quality > CycleQuality.UNCERTAIN, axis=1).astype(np.int64)
-    seen = deviations(model, readings.u, y, scale, doubtful)
+    seen = deviations(model, usable_inputs(design, readings), y, scale, doubtful)
     split = int(FIT_SHARE * len(readings))
     return _Data(design, readings, y, split, min(_settling(model), int(LEAD_IN * split)), seen)
 
@@ -303,9 +304,15 @@ def _intervals(tuned: UnitDesign, data: _Data, labs: Sequence[LabArrival]) -> tu
     split = int(data.readings.times[data.split])
     out = []
     for e, estimate in enumerate(spec.estimates):
-        own = estimate.lab.sd**2 if estimate.lab is not None else math.nan
+        lab = tuned.model.scaled.estimates[e].lab
+        own = lab.sd**2 if lab is not None else math.nan
         results = [
-            _score(item, variances.get((item.counted_cycle, e, item.arrival.value), own), published[:, :, e])
+            _score(
+                item,
+                one_to_model(estimate, item.arrival.value),
+                variances.get((item.counted_cycle, e, item.arrival.value), own),
+                published[:, :, e],
+            )
             for item in with_corrections(outcomes)
             if item.arrival.estimate == e
             and item.arrival.sampled > split
@@ -316,15 +323,15 @@ def _intervals(tuned: UnitDesign, data: _Data, labs: Sequence[LabArrival]) -> tu
     return tuple(out)
 
 
-def _score(item: LabOutcome, variance: float, published: Floats) -> tuple[float, float, float]:
-    """Error of a result against the estimate, the estimate's variance, its own variance.
+def _score(item: LabOutcome, result: float, variance: float, published: Floats) -> tuple[float, float, float]:
+    """Error of a ``result`` against the estimate, the estimate's variance, its own variance; all in model scale.
 
     Where it arrived after the cycle it counts at, the estimate is the one published there (2, N: value, sd), without
     it; else the prediction.
     """
     if item.arrived_cycle > item.counted_cycle:
         value, sd = (float(part) for part in published[:, item.counted_cycle])
-        return item.arrival.value - value, sd**2, variance
+        return result - value, sd**2, variance
     return item.innovation, item.sd**2 - variance, variance
 
 

@@ -10,6 +10,8 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
+from plant_models.model_scale import one_from_model, one_to_model
+from plant_models.transform import Transform
 from softsensor.cycle import (
     REJECTED,
     CycleState,
@@ -97,7 +99,7 @@ class UnitRun:
         waiting = 0 if self.started else self._rows_to_wait(readings)
         results = [_waiting_results(self.design, slice_readings(readings, 0, waiting))] if waiting else []
         if waiting == len(readings):
-            early = [_too_late(item, -1, "before the first cycle") for item in arrivals]
+            early = [_left_out(item, -1, "before the first cycle") for item in arrivals]
             return Advance(tuple(results), tuple(early))
         if self.first_time is None:
             self.first_time = int(readings.times[waiting]) - self.state.next_cycle * self._sample_us
@@ -164,26 +166,30 @@ class UnitRun:
         here = self.state.next_cycle
         cycle = counting_cycle(arrival.sampled, self.first_time, self._sample_us)
         if cycle < self.past.first_cycle or cycle < 0:
-            return _too_late(arrival, here, "sampled before the first cycle that is remembered"), None
+            return _left_out(arrival, here, "sampled before the first cycle that is remembered"), None
         if cycle > here:
-            return _too_late(arrival, here, "sampled after it was reported"), None
+            return _left_out(arrival, here, "sampled after it was reported"), None
+        value, transform = self._in_model_scale(arrival)
+        if transform is not None and not np.isfinite(value):
+            return _left_out(arrival, here, f"{transform.text}: expected {transform.expected}"), None
         same = [
             lab for lab in self._labs if (lab.estimate, lab.sampled) == (arrival.estimate, arrival.sampled)
         ]
         if any(lab.reported > arrival.reported for lab in same):
-            return _too_late(arrival, here, "a value reported later for the same sample is in use"), None
+            return _left_out(arrival, here, "a value reported later for the same sample is in use"), None
         earlier = [lab for lab in same if lab.reported < arrival.reported]
         variance = self._variance(arrival, cycle)
         lab = LabAtCycle(cycle, arrival.estimate, arrival.value, variance, arrival.sampled, arrival.reported)
         others = [lab for lab in self._labs if lab not in earlier]
         predicted, sd = self._predict(lab, others, now)
-        innovation = arrival.value - predicted
+        innovation = value - predicted
         possible = abs(innovation) <= IMPOSSIBLE * sd or arrival.decided_at is not None
         rejected = self._rejected(arrival.estimate, possible)
         reason = "" if possible else self._reason(arrival, lab.variance, rejected[arrival.estimate])
         status: LabStatus = "used" if possible else "waiting for a person"
         replaces = tuple(lab.value for lab in earlier) if possible else ()
-        outcome = LabOutcome(arrival, here, cycle, predicted, innovation, sd, status, reason, replaces)
+        in_unit = one_from_model(self.design.model.spec.estimates[arrival.estimate], predicted)
+        outcome = LabOutcome(arrival, here, cycle, in_unit, innovation, sd, status, reason, replaces)
         digest = self.state.digest.mix(_lab_bytes(outcome))
         self.state = replace(self.state, digest=digest, rejected=rejected)
         if not possible:
@@ -191,8 +197,13 @@ class UnitRun:
         self._labs = sorted([*others, lab], key=_order)
         return outcome, self._go_back(cycle) if cycle < here else None
 
+    def _in_model_scale(self, arrival: LabArrival) -> tuple[float, Transform | None]:
+        """A result's value in model scale, nan where its transform has none; and the transform."""
+        item = self.design.model.spec.estimates[arrival.estimate]
+        return one_to_model(item, arrival.value), item.transform
+
     def _variance(self, arrival: LabArrival, cycle: int) -> float:
-        lab = self.design.model.spec.estimates[arrival.estimate].lab
+        lab = self.design.model.scaled.estimates[arrival.estimate].lab
         sd = lab.sd if lab is not None else 0.0
         first, _, estimate, _ = self.past.estimates()
         course = estimate[:, arrival.estimate]
@@ -225,8 +236,8 @@ class UnitRun:
 
     def _reason(self, arrival: LabArrival, variance: float, in_a_row: int) -> str:
         _, times, estimate, sd = self.past.estimates()
-        e = arrival.estimate
-        reason = likely_reason(arrival.value, variance**0.5, arrival.sampled, times, estimate[:, e], sd[:, e])
+        e, (value, _) = arrival.estimate, self._in_model_scale(arrival)
+        reason = likely_reason(value, variance**0.5, arrival.sampled, times, estimate[:, e], sd[:, e])
         if in_a_row < REJECTED:
             return reason
         return f"{reason}; {in_a_row} results in a row do not fit: the estimate may be wrong"
@@ -236,7 +247,7 @@ def _order(lab: LabAtCycle) -> tuple[int, int, float, float]:
     return lab.cycle, lab.estimate, lab.value, lab.variance
 
 
-def _too_late(arrival: LabArrival, here: int, reason: str) -> LabOutcome:
+def _left_out(arrival: LabArrival, here: int, reason: str) -> LabOutcome:
     return LabOutcome(arrival, here, -1, np.nan, np.nan, np.nan, "left out", reason)
 
 

@@ -322,9 +322,8 @@ def _held(time: int, value: float, quality: int, rule: TagRule) -> TagState:
         return TagState(newest_time=time, used_time=time)
     oldest = time if rule.max_age == NO_LIMIT else time - rule.max_age
     since = oldest - 1 if quality == CycleQuality.STALE else oldest
+    newest = quality if quality <= CycleQuality.BAD or quality == CycleQuality.UNMAPPED else None
     usable = (
         min(quality, int(CycleQuality.UNCERTAIN)) if quality <= CycleQuality.BAD else int(CycleQuality.GOOD)
     )
-    return TagState(
-        since, value, quality if quality <= CycleQuality.BAD else usable, since, since, value, usable
-    )
+    return TagState(since, value, usable if newest is None else newest, since, since, value, usable)

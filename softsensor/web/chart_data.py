@@ -8,11 +8,12 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from plant_models.model_scale import from_model
 from plant_models.specification import EstimateSpec, UnitSpec
+from softsensor.published import published, published_one
 from softsensor.records import reader, series
 from softsensor.records.engine import Database
 from softsensor.records.reader import StoredFlag, Unit
-from softsensor.service.result_tables import NORMAL_95
 from softsensor.web.models_in_service import ModelsInService
 
 Floats = NDArray[np.float64]
@@ -98,12 +99,15 @@ def _taken(values: Floats, indices: NDArray[np.intp]) -> list[float | None]:
 
 @dataclass(frozen=True)
 class Track:
-    """One tag's published cycles: an estimate with its sd, or a sensor's prediction with its reading's difference."""
+    """One tag's published cycles, in its engineering unit: an estimate (``first``) with the ends of its interval, or a
+    sensor's prediction (``first``) with its reading, twice.
+    """
 
     times: NDArray[np.int64]
     cycles: NDArray[np.int64]
     first: Floats
     second: Floats
+    third: Floats
     sums: Floats
     """(N, 2), high and low; empty for an estimate."""
 
@@ -118,14 +122,17 @@ def _track(database: Database, models: ModelsInService, unit: Unit, tag: str, wi
         if tag in estimates:
             e = estimates.index(tag)
             sums = np.empty((len(results), 2))
-            parts.append((block.times, numbers, results.estimate[:, e], results.sd[:, e], sums))
+            shown = published(spec.estimates[e], results.estimate[:, e], results.sd[:, e])
+            parts.append((block.times, numbers, shown.value, shown.lower, shown.upper, sums))
         elif tag in sensors:
             i, n = sensors.index(tag), len(sensors)
             sums = results.sums[:, [i, n + i]]
-            parts.append((block.times, numbers, results.predicted[:, i], results.innovation[:, i], sums))
+            item, predicted = spec.sensors[i], results.predicted[:, i]
+            reading = from_model(item, predicted + results.innovation[:, i])
+            parts.append((block.times, numbers, from_model(item, predicted), reading, reading, sums))
     if not parts:
         nothing = np.empty(0, dtype=np.int64)
-        return Track(nothing, nothing, np.empty(0), np.empty(0), np.empty((0, 2)))
+        return Track(nothing, nothing, np.empty(0), np.empty(0), np.empty(0), np.empty((0, 2)))
     return Track(*(np.concatenate(part) for part in zip(*parts, strict=True)))
 
 
@@ -149,13 +156,12 @@ def estimate_band(track: Track, window: Window, sample_us: float) -> Columns:
     times, value = track.times, track.first
     if not len(times):
         return {"x": [], "value": [], "lower": [], "upper": []}
-    half = NORMAL_95 * np.where(np.isfinite(track.second), track.second, np.nan)
     chosen = thinned(times, value)
     indices = with_gaps(times, np.isfinite(value), chosen, sample_us)
     spread = np.full(len(times), np.nan), np.full(len(times), np.nan)
-    band = np.where(np.isfinite(half), half, 0.0)
-    spread[0][chosen] = _extremes(times, value - band, chosen, largest=False)
-    spread[1][chosen] = _extremes(times, value + band, chosen, largest=True)
+    ends = (np.where(np.isfinite(end), end, value) for end in (track.second, track.third))
+    spread[0][chosen] = _extremes(times, next(ends), chosen, largest=False)
+    spread[1][chosen] = _extremes(times, next(ends), chosen, largest=True)
     return {
         "x": _taken(window.drawn(times), indices),
         "value": _taken(value, indices),
@@ -181,7 +187,8 @@ def _revised(
     found = series.revised(database, unit.id, int(track.cycles[0]), int(track.cycles[-1]))
     for cycle, revised in found.items():
         if cycle in place and revised.estimate.shape[1] == len(tags):
-            values[place[cycle]] = revised.estimate[0, e]
+            mean, sd = float(revised.estimate[0, e]), float(revised.sd[0, e])
+            values[place[cycle]] = published_one(item, mean, sd)[0]
     chosen = thinned(track.times, values)
     indices = with_gaps(track.times, np.isfinite(values), chosen, sample_us)
     return {"x": _taken(window.drawn(track.times), indices), "value": _taken(values, indices)}
@@ -228,7 +235,7 @@ def sensor_columns(
     """Columns of a sensor's charts: reading and prediction, both sums, flagged periods of the tag."""
     track = _track(database, models, unit, tag, window)
     sample_us = models.spec(models.revision_of(unit)).sample_time * 1e6
-    times, predicted, reading = track.times, track.first, track.first + track.second
+    times, predicted, reading = track.times, track.first, track.second
     lines = {"predicted": predicted, "reading": reading}
     if len(times):
         lines |= {"high": track.sums[:, 0], "low": track.sums[:, 1]}

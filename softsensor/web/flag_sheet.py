@@ -7,9 +7,11 @@ from dataclasses import dataclass
 import numpy as np
 from markupsafe import Markup
 
-from plant_models.specification import InputSpec, SensorSpec, UnitSpec
+from plant_models.specification import EstimateSpec, InputSpec, SensorSpec, UnitSpec
+from softsensor.published import published_one
 from softsensor.records import decisions
 from softsensor.records.reader import StoredFlag, Unit
+from softsensor.records.series import TimedResults
 from softsensor.web.chart_data import Columns, Window, sensor_columns
 from softsensor.web.likely_causes import FIRST_LETTERS, causes_of, check_of
 from softsensor.web.picture import Picture, course_of, svg_of
@@ -158,6 +160,10 @@ def _pictures(
     return (("seen", svg_of(reading)), ("sums", svg_of(sums)))
 
 
+def _published_sd(item: EstimateSpec, latest: TimedResults, e: int) -> float:
+    return published_one(item, float(latest.results.estimate[-1, e]), float(latest.results.sd[-1, e]))[1]
+
+
 def _effects(site: Site, unit: Unit, tag: str) -> tuple[Effect, ...]:
     revision = site.models.revision_of(unit)
     spec = site.models.spec(revision)
@@ -166,7 +172,7 @@ def _effects(site: Site, unit: Unit, tag: str) -> tuple[Effect, ...]:
     latest, _ = latest_cycle(site.database, unit, revision)
     decimals, found = tag_decimals(spec), []
     for e, known in enumerate(site.models.knowledge(revision)):
-        now = None if latest is None else float(latest.results.sd[-1, e])
+        now = None if latest is None else _published_sd(spec.estimates[e], latest, e)
         found.append(
             Effect(
                 known.tag,

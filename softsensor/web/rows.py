@@ -9,15 +9,16 @@ from dataclasses import dataclass
 
 from sqlalchemy import select
 
+from plant_models.model_scale import one_from_model
 from plant_models.specification import EstimateSpec, SensorSpec, UnitSpec
 from softsensor.alarms.sensor_status import SEVERITY, SensorStatus, status_of
 from softsensor.estimation.kernel import Floats
+from softsensor.published import published_one
 from softsensor.readings_of_cycle import CycleReadings
 from softsensor.records import series
 from softsensor.records.engine import Database
 from softsensor.records.reader import StoredEvent, StoredFlag, StoredLab, Unit
 from softsensor.records.tables import lab_results
-from softsensor.service.result_tables import NORMAL_95
 from softsensor.web.wording import QUALITY_WORDS, STATUS_WORDS, decimals_for, difference_unit, duration
 
 LATE_CYCLES, LATE_SECONDS = 10.0, 120.0
@@ -25,7 +26,7 @@ LATE_CYCLES, LATE_SECONDS = 10.0, 120.0
 
 
 NONE_NEW = "none new"
-NO_READING = ("beyond its range", "beyond its range", "Bad", NONE_NEW, "too old")
+NO_READING = ("beyond its range", "beyond its range", "Bad", NONE_NEW, "too old", "outside its transform")
 """Why a cycle has no reading of a sensor, by its :class:`softsensor.readings_of_cycle.CycleQuality`."""
 
 
@@ -136,13 +137,13 @@ def estimate_rows(spec: UnitSpec, latest: series.TimedResults | None) -> tuple[E
     rows = []
     reasons = json.loads(latest.results.reasons[-1] or "{}") if latest is not None else {}
     for e, item in enumerate(spec.estimates):
-        value = sd = math.nan
+        value = sd = lower = upper = math.nan
         status, reason = "Bad", "no cycle has run yet"
         if latest is not None:
-            value, sd = float(latest.results.estimate[-1, e]), float(latest.results.sd[-1, e])
+            mean, spread = float(latest.results.estimate[-1, e]), float(latest.results.sd[-1, e])
+            value, sd, lower, upper = published_one(item, mean, spread)
             status, reason = STATUS_WORDS[latest.results.status[-1, e]], reasons.get(item.tag, "")
-        half = NORMAL_95 * sd
-        interval = finite(value - half), finite(value + half)
+        interval = finite(lower), finite(upper)
         lab = item.lab.tag if item.lab is not None else None
         row = (finite(value), finite(sd), *interval, status, reason, lab)
         rows.append(EstimateRow(item.tag, item.unit, estimate_decimals(item), *row))
@@ -165,7 +166,7 @@ def _sensor_row(
         difference_unit(item.unit),
         decimals_for(item.noise_sd),
         reading,
-        finite(results.predicted[-1, i]),
+        finite(one_from_model(item, float(results.predicted[-1, i]))),
         finite(deviation),
         _beyond(results.sums[-1], i, len(results.used[-1])),
         health,

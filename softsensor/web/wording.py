@@ -10,7 +10,7 @@ from plant_models.units import difference_unit as difference_unit
 
 EPOCH = datetime(1970, 1, 1, tzinfo=UTC)
 STATUS_WORDS = ("Good", "Uncertain", "Bad")
-QUALITY_WORDS = ("Good", "Uncertain", "Bad", "no value yet", "too old")
+QUALITY_WORDS = ("Good", "Uncertain", "Bad", "no value yet", "too old", "outside its transform")
 """Words for the codes of :class:`softsensor.readings_of_cycle.CycleQuality`, of an input's value."""
 MOST_DECIMALS = 6
 

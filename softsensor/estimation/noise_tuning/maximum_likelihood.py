@@ -13,6 +13,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from plant_models.errors import RealisationError
+from plant_models.model_scale import in_model_scale
 from plant_models.plant_model import PlantModel
 from plant_models.specification import UnitSpec
 from softsensor.estimation.kernel import Floats
@@ -83,7 +84,7 @@ class NoiseFit:
 
     def at(self, theta: Floats) -> Likelihood:
         """log L, gradient and expected information."""
-        spec = self.spec_at(theta)
+        spec = in_model_scale(self.spec_at(theta))
         part = part_with_values(spec, self._model.stochastic, self.parameters)
         noise = noise_model(spec, part, self.parameters)
         return innovations_likelihood(noise, self._data.z, self._data.scale, self._first)
@@ -108,7 +109,7 @@ class NoiseFit:
 
     def _by_autocovariance(self, file: Floats) -> Floats | None:
         """None where the filter of the file's values does not settle, or the autocovariances do not tell."""
-        spec, part = self._model.spec, self._model.stochastic
+        spec, part = self._model.scaled, self._model.stochastic
         states, sensors = seen_states(spec, part), len(spec.sensors)
         driven = [int(state) for state in states if part.q[state] > 0.0]
         try:
@@ -137,11 +138,11 @@ class NoiseFit:
 
     def _change(self, item: NoiseParameter, noise: Floats, driven: dict[int, float]) -> float:
         """By how much a parameter's logarithm moves to give the variance found."""
-        spec, part = self._model.spec, self._model.stochastic
+        spec, part = self._model.scaled, self._model.stochastic
         if item.key == "time_constant":
             return 0.0
         if item.key == "noise_sd":
-            ratio = float(noise[item.index]) / item.value**2
+            ratio = float(noise[item.index]) / spec.sensors[item.index].noise_sd ** 2
         elif item.key == "bias_walk_sd":
             ratio = driven.get(offset_state(spec, part, item.index), 1.0)
         else:

@@ -48,7 +48,7 @@ def model(
         paths=(),
         false_flag_interval=2.592e6,
     )
-    return PlantModel(spec, (), part, "")
+    return PlantModel(spec, (), part, "", spec)
 
 
 def correct(P: Matrix, rows: Rows) -> Matrix:

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import asyncio
-from collections.abc import Iterable, Iterator
+from collections.abc import Callable, Iterable, Iterator
 from dataclasses import dataclass, field
 from pathlib import Path
 
@@ -288,6 +288,24 @@ def other_design(design: UnitDesign) -> UnitDesign:
 def story(design: UnitDesign) -> Story:
     """The story of the unit."""
     return told_story(design.model)
+
+
+@pytest.fixture(scope="session")
+def tell() -> Callable[[PlantModel, int], Story]:
+    """Tells the story to a model of this form, over so many cycles."""
+    return told_story
+
+
+@pytest.fixture(scope="session")
+def new_url(tmp_path_factory: pytest.TempPathFactory) -> Callable[[], str]:
+    """Makes an SQLite database."""
+
+    def make() -> str:
+        url = f"sqlite:///{(tmp_path_factory.mktemp('records') / 'own.db').as_posix()}"
+        upgrade_database(url)
+        return url
+
+    return make
 
 
 @pytest.fixture
