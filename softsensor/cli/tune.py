@@ -29,6 +29,12 @@ def tune(
             "--keep", help="A number that stays as it is, such as TI2101A.noise_sd; may be given again."
         ),
     ] = None,
+    interval_only: Annotated[
+        bool,
+        typer.Option(
+            "--interval-only", help="Leave the noise as it is; only propose interval_scale, from --lab."
+        ),
+    ] = False,
     timezone: Annotated[
         str | None, typer.Option("--timezone", help="Zone of times that name none, such as Europe/Berlin.")
     ] = None,
@@ -41,8 +47,10 @@ def tune(
 
     if out.exists() and model.exists() and out.samefile(model):
         raise Problem(f"--out: {out} is the model file that is read; expected another name")
+    if interval_only and (lab is None or keep):
+        raise Problem("--interval-only: expected --lab with it, and no --keep")
     plant_model = load_model(model)
-    report, notes = _tuned(plant_model, history, lab, keep or [], timezone)
+    report, notes = _tuned(plant_model, history, lab, None if interval_only else keep or [], timezone)
     if report.accepted:
         _write(model, out, report)
     if json:
@@ -54,20 +62,24 @@ def tune(
 
 
 def _tuned(
-    model: PlantModel, history: Path, lab: Path | None, keep: list[str], timezone: str | None
+    model: PlantModel, history: Path, lab: Path | None, keep: list[str] | None, timezone: str | None
 ) -> tuple[TuningReport, tuple[str, ...]]:
     from connectors.files import read_history, read_lab
     from connectors.lab_results import place_lab
     from softsensor.recorded_data import lab_arrivals, lab_tags
     from softsensor.service.assembly import rules_of
     from softsensor.service.tuning import tune as tune_model
+    from softsensor.service.tuning import tune_intervals
 
     recorded = read_history(history, rules_of(model.spec).tags, timezone)
     if lab is None:
-        return tune_model(model, recorded, (), keep), ()
+        return tune_model(model, recorded, (), keep or ()), ()
     results = read_lab(lab, lab_tags(model), timezone)
     usable, notes = place_lab(results, recorded.first_time, recorded.last_time)
-    return tune_model(model, recorded, lab_arrivals(model, usable), keep), notes
+    arrivals = lab_arrivals(model, usable)
+    if keep is None:
+        return tune_intervals(model, recorded, arrivals), notes
+    return tune_model(model, recorded, arrivals, keep), notes
 
 
 def _write(model: Path, out: Path, report: TuningReport) -> None:
@@ -150,7 +162,9 @@ def _tell(report: TuningReport, notes: tuple[str, ...], out: Path) -> None:
     for refusal in report.refusals:
         typer.echo(f"REFUSED: {refusal}")
     if report.refusals:
-        typer.echo("nothing is written; --keep NAME leaves a number as it is and fits the others")
+        typer.echo(
+            "nothing is written; --keep NAME leaves a number as it is and fits the others, --interval-only all of them"
+        )
     typer.echo(CAUTION)
 
 

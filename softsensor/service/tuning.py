@@ -16,31 +16,22 @@ from numpy.typing import NDArray
 from connectors.history import History
 from plant_models.building import build_plant_model
 from plant_models.durations import parse_duration
-from plant_models.model_scale import one_to_model
 from plant_models.plant_model import PlantModel
-from plant_models.specification import EstimateSpec, UnitSpec
+from plant_models.specification import UnitSpec
 from softsensor.cycle import UnitDesign, rerun, usable, usable_inputs
 from softsensor.detection.flags import FlagBook
 from softsensor.estimation.kernel import Floats, initial_state
-from softsensor.estimation.lab_results import LabArrival, LabOutcome, with_corrections
+from softsensor.estimation.lab_results import LabArrival
 from softsensor.estimation.noise_tuning.archive_checks import objection_to_archive, objection_to_spectrum
 from softsensor.estimation.noise_tuning.deviations import Deviations, deviations
-from softsensor.estimation.noise_tuning.interval_scale import (
-    LEAST_RESULTS,
-    LEVEL,
-    SURE_RESULTS,
-    Scores,
-    conformal_scale,
-    share_interval,
-)
 from softsensor.estimation.noise_tuning.maximum_likelihood import Maximum, NoiseFit, maximise
 from softsensor.estimation.noise_tuning.parameters import NoiseParameter, noise_parameters
 from softsensor.estimation.noise_tuning.separability import alike, certainty, interval, too_fast
 from softsensor.readings_of_cycle import CycleQuality, CycleReadings
 from softsensor.service.assembly import assemble_history
-from softsensor.service.replay import Replay, parts_of
+from softsensor.service.interval_proposals import interval_proposals, scale_changes
 from softsensor.service.tuned_file import UNITS_OF_TIME, Change, changed_spec, tolerances_given
-from softsensor.service.tuning_report import FittedNumber, IntervalProposal, TuningReport, Whiteness
+from softsensor.service.tuning_report import FittedNumber, TuningReport, Whiteness
 from softsensor.service.unit_run import slice_readings
 from softsensor.unit_design import design_unit
 
@@ -56,7 +47,6 @@ GATE_TURNS = 5
 """Fits after which gate and fit must agree on the readings that are kept out."""
 DIGITS = 4
 """Written; the fit knows no more."""
-LEAST_SCALE = 0.05
 CHANCE = 3.0
 """By this and one per parameter log L on the rest may fall by chance."""
 
@@ -105,6 +95,23 @@ def tune(
     return _judged(data, report, labs)
 
 
+def tune_intervals(model: PlantModel, history: History, labs: Sequence[LabArrival]) -> TuningReport:
+    """Leave the noise as the file has it, and propose interval scales only, from the same later part of the history.
+
+    For a model whose noise the data cannot give: a factor on the interval asks for no fit.
+    """
+    design = design_unit(model)
+    data = _data(design, history)
+    report = _blank(model.spec, data)
+    refusals = _too_short(report) + _archive(model.spec, data)
+    if refusals:
+        return replace(report, refusals=refusals)
+    intervals = interval_proposals(design, data.readings, data.split, labs)
+    return replace(
+        report, sensors=_whiteness(data, design), intervals=intervals, changes=scale_changes(intervals)
+    )
+
+
 def _fitted(
     data: _Data, parameters: tuple[NoiseParameter, ...]
 ) -> tuple[_Data, UnitDesign, Maximum, tuple[str, ...]]:
@@ -150,19 +157,14 @@ def _judged(data: _Data, report: TuningReport, labs: Sequence[LabArrival]) -> Tu
             f"on the part that was not fitted the fit does worse than the file (log L {after:.1f}, before {before:.1f}): "
             "the two parts of the history differ",
         )
-    intervals = _intervals(tuned, data, labs)
-    scales = tuple(
-        Change(("estimate", e, "interval_scale"), item.scale)
-        for e, item in enumerate(intervals)
-        if item.scale != item.scale_before
-    )
+    intervals = interval_proposals(tuned, data.readings, data.split, labs)
     return replace(
         report,
         check_log_likelihood=(before, after),
         sensors=_whiteness(data, tuned),
         intervals=intervals,
         refusals=refusals,
-        changes=changes + scales,
+        changes=changes + scale_changes(intervals),
     )
 
 
@@ -285,80 +287,3 @@ def _nis_and_whiteness(z: Floats) -> tuple[float, float]:
         return math.nan, math.nan
     nis = float(np.mean(present**2))
     return nis, float(np.mean(pairs)) / nis
-
-
-def _intervals(tuned: UnitDesign, data: _Data, labs: Sequence[LabArrival]) -> tuple[IntervalProposal, ...]:
-    """For each estimate what the laboratory results after the fit say about its interval."""
-    outcomes: list[LabOutcome] = []
-    variances: dict[tuple[int, int, float], float] = {}
-    spec = tuned.model.spec
-    published = np.full((2, len(data.readings), len(spec.estimates)), np.nan)
-    if labs:
-        running = Replay(tuned, parts_of([data.readings], labs), len(data.readings) * spec.sample_time)
-        for stretch in running.stretches():
-            outcomes += stretch.labs
-            here = slice(stretch.results.first, stretch.results.first + len(stretch.results))
-            published[0, here], published[1, here] = stretch.results.estimate, stretch.results.sd
-        variances = {(item.cycle, item.estimate, item.value): item.variance for item in running.run.labs}
-    published[1] /= [item.interval_scale for item in spec.estimates]
-    split = int(data.readings.times[data.split])
-    out = []
-    for e, estimate in enumerate(spec.estimates):
-        lab = tuned.model.scaled.estimates[e].lab
-        own = lab.sd**2 if lab is not None else math.nan
-        results = [
-            _score(
-                item,
-                one_to_model(estimate, item.arrival.value),
-                variances.get((item.counted_cycle, e, item.arrival.value), own),
-                published[:, :, e],
-            )
-            for item in with_corrections(outcomes)
-            if item.arrival.estimate == e
-            and item.arrival.sampled > split
-            and item.counted_cycle >= 0
-            and math.isfinite(item.innovation)
-        ]
-        out.append(_proposal(estimate, Scores(*np.array(results, dtype=np.float64).reshape(-1, 3).T)))
-    return tuple(out)
-
-
-def _score(item: LabOutcome, result: float, variance: float, published: Floats) -> tuple[float, float, float]:
-    """Error of a ``result`` against the estimate, the estimate's variance, its own variance; all in model scale.
-
-    Where it arrived after the cycle it counts at, the estimate is the one published there (2, N: value, sd), without
-    it; else the prediction.
-    """
-    if item.arrived_cycle > item.counted_cycle:
-        value, sd = (float(part) for part in published[:, item.counted_cycle])
-        return result - value, sd**2, variance
-    return item.innovation, item.sd**2 - variance, variance
-
-
-def _proposal(estimate: EstimateSpec, scores: Scores) -> IntervalProposal:
-    count, before = len(scores.error), estimate.interval_scale
-    hits = scores.inside(before)
-    low, high = share_interval(hits, count) if count else (math.nan, math.nan)
-    share = hits / count if count else math.nan
-    scale, reason = _scale(scores, before, low <= LEVEL <= high)
-    scaled = scores.inside(scale) / count if count else math.nan
-    return IntervalProposal(estimate.tag, count, share, low, high, before, scale, scaled, reason)
-
-
-def _scale(scores: Scores, before: float, agrees: bool) -> tuple[float, str]:
-    """The interval scale proposed, and why."""
-    count = len(scores.error)
-    if count < LEAST_RESULTS:
-        return (
-            before,
-            f"unchanged: {count} laboratory results after the fit; expected at least {LEAST_RESULTS}",
-        )
-    if agrees and count < SURE_RESULTS:
-        return before, "unchanged: these results agree with what the interval promises"
-    scale = float(f"{conformal_scale(scores):.3g}")
-    if scale < LEAST_SCALE:
-        return (
-            before,
-            "unchanged: the laboratory's own sd explains all errors, so that the interval is not tested",
-        )
-    return scale, f"split conformal on {count} laboratory results that the fit has not seen"

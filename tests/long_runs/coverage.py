@@ -3,8 +3,9 @@
     python tests/long_runs/coverage.py [seeds] [model ...]
 
 Wrong: every gain and time constant of the model 20 % off, up or down at random; the inputs move within half of their
-validated ranges. ``softsensor tune`` gets a history in whose later part 200 laboratory results lie, one every LAB_HOURS; it
-fits the noise and finds the interval's factor. Judged is a later stretch with new moves and new noise, in cycles.
+validated ranges. ``softsensor tune`` gets a history in whose later part 200 laboratory results lie, one every
+CYCLES_A_RESULT; it fits the noise and finds the interval's factor. Where it refuses the noise, ``--interval-only`` finds
+the factor. Judged is a later stretch with new moves and new noise, in cycles.
 """
 
 from __future__ import annotations
@@ -30,7 +31,7 @@ from plant_models.specification import PathSpec, UnitSpec
 from softsensor.estimation.lab_results import LabArrival
 from softsensor.service.assembly import rules_of
 from softsensor.service.tuned_file import changed_text
-from softsensor.service.tuning import tune
+from softsensor.service.tuning import tune, tune_intervals
 from softsensor.service.tuning_report import TuningReport
 from softsensor.unit_design import design_unit
 
@@ -69,7 +70,7 @@ def off(spec: UnitSpec, random: np.random.Generator) -> UnitSpec:
 
 
 def with_laboratory(text: str) -> str:
-    """A model file in which every estimate has laboratory results, a fifth of the first sensor's noise off where it had none."""
+    """A model file in which every estimate has laboratory results, with a fifth of a sensor's noise at least."""
     spec, lines = parse_model_text(text, "model"), []
     lacking = {item.tag for item in spec.estimates if item.lab is None}
     for line in text.splitlines():
@@ -111,7 +112,7 @@ def tuned(text: str, model: PlantModel, stretch: Stretch, seed: int) -> tuple[Pl
     columns |= {item.tag: stretch.y[:, i] for i, item in enumerate(spec.sensors)}
     history = history_from_frame(pd.DataFrame({"time": times, **columns}), rules_of(spec).tags)
     random, labs = np.random.default_rng([seed, 6]), []
-    first = len(stretch.y) - RESULTS * CYCLES_A_RESULT
+    first = len(stretch.y) - (RESULTS + 1) * CYCLES_A_RESULT + 1
     for e, item in enumerate(spec.estimates):
         for k in range(first + CYCLES_A_RESULT - 1, len(stretch.y), CYCLES_A_RESULT):
             assert item.lab is not None
@@ -120,7 +121,7 @@ def tuned(text: str, model: PlantModel, stretch: Stretch, seed: int) -> tuple[Pl
     labs.sort(key=lambda lab: lab.sampled)
     report = tune(model, history, labs)
     if not report.accepted:
-        return model, report
+        report = replace(tune_intervals(model, history, labs), refusals=report.refusals)
     return build_plant_model(parse_model_text(changed_text(text, "model", report.changes), "model")), report
 
 
@@ -135,7 +136,7 @@ def judged(name: str, seed: int) -> Coverage:
     text = with_laboratory(path_of(name).read_text(encoding="utf-8"))
     model = build_plant_model(parse_model_text(text, name))
     truth = off(model.spec, np.random.default_rng([seed, 7]))
-    cycles = round(RESULTS * CYCLES_A_RESULT / JUDGED_SHARE) + 10
+    cycles = round((RESULTS + 1) * CYCLES_A_RESULT / JUDGED_SHARE)
     later = live(truth, LATER, 900 + seed)
     after, report = tuned(text, model, live(truth, cycles, 500 + seed), seed)
     return Coverage(
@@ -155,13 +156,13 @@ def row(name: str, seed: int, found: Coverage) -> str:
         f"| {name} | {seed} | "
         + " | ".join(f"{100.0 * share:.1f} %" for share in shares)
         + f" | {found.results} |"
-        + (f" refused: {found.refused}" if found.refused else "")
+        + (" noise refused |" if found.refused else " |")
     )
 
 
 if __name__ == "__main__":
-    print("| model | run | right model | wrong model | its noise tuned | and a factor | results |")
-    print("|---|---|---|---|---|---|---|")
+    print("| model | run | right model | wrong model | its noise tuned | and a factor | results | |")
+    print("|---|---|---|---|---|---|---|---|")
     for chosen in sys.argv[2:] or MODELS:
         for number in range(1, 1 + (int(sys.argv[1]) if len(sys.argv) > 1 else 10)):
             print(row(chosen, number, judged(chosen, number)), flush=True)

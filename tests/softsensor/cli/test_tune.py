@@ -190,6 +190,23 @@ def test_an_interval_that_laboratory_results_contradict_is_scaled(
     )
 
 
+def test_only_the_interval_is_changed_where_that_is_asked_for(command: Any, plant: Path, out: Path) -> None:
+    """The readings cannot tell two disturbances apart, which a factor on the interval does not need."""
+    model = out.parent / "two.toml"
+    model.write_text(FILE + SECOND, encoding="utf-8")
+    arguments = ("tune", model, plant / "history.csv", "--lab", plant / "lab.csv", "--out", out, "--json")
+    assert command(*arguments).status == 1
+
+    said = command(*arguments, "--interval-only")
+
+    (interval,) = json.loads(said.out)["intervals"]
+    before, after = (parse_model_text(path.read_text(encoding="utf-8"), "t") for path in (model, out))
+    assert (said.status, json.loads(said.out)["numbers"]) == (0, [])
+    assert interval["scale"] != 1.0
+    estimate = replace(before.estimates[0], interval_scale=interval["scale"])
+    assert replace(after, source_text="") == replace(before, estimates=(estimate,), source_text="")
+
+
 def test_the_report_in_words(command: Any, plant: Path, out: Path) -> None:
     said = command("tune", plant / "model.toml", plant / "history.csv", "--out", out)
 
@@ -286,7 +303,9 @@ def test_a_short_history_is_refused(command: Any, plant: Path, out: Path) -> Non
     refused(command("tune", plant / "model.toml", history, "--out", out), out, "at least 500 in either part")
 
 
-@pytest.mark.parametrize("case", ["own file", "unknown name", "no folder", "no history"])
+@pytest.mark.parametrize(
+    "case", ["own file", "unknown name", "no folder", "no history", "nothing to look at"]
+)
 def test_bad_arguments_end_with_2(command: Any, plant: Path, out: Path, case: str) -> None:
     model, history = plant / "model.toml", plant / "history.csv"
     arguments, expected = {
@@ -294,6 +313,7 @@ def test_bad_arguments_end_with_2(command: Any, plant: Path, out: Path, case: st
         "unknown name": ((model, history, "--out", out, "--keep", "feed.walk_sd"), "feed.time_constant"),
         "no folder": ((model, history, "--out", out.parent / "none" / "t.toml"), "--out"),
         "no history": ((model, plant / "none.csv", "--out", out), "none.csv"),
+        "nothing to look at": ((model, history, "--out", out, "--interval-only"), "expected --lab with it"),
     }[case]
     said = command("tune", *arguments)
 
