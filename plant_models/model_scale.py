@@ -64,6 +64,20 @@ def to_model(items: Sequence[Variable], values: Floats) -> Floats:
     return out
 
 
+def slopes(items: Sequence[Variable], values: Floats) -> Floats:
+    """How fast values in model scale (N, len(items)) move with those in engineering units, as sizes; one row of ones where
+    there is no transform.
+    """
+    if all(item.transform is None for item in items):
+        return np.ones((1, len(items)))
+    out = np.ones(values.shape)
+    with np.errstate(divide="ignore"):
+        for column, item in enumerate(items):
+            if item.transform is not None:
+                out[:, column] = 1.0 / np.abs(item.transform.back_slope(values[:, column]))
+    return out
+
+
 def from_model(item: Variable, values: Floats) -> Floats:
     """Model scale to the tag's engineering unit; the same array where it has no transform."""
     return values if item.transform is None else item.transform.back(values)

@@ -32,7 +32,8 @@ MOST_SQUARE = 16.0
 class BlockInputs(NamedTuple):
     """N cycles as the loop takes them.
 
-    u (N, n_inputs) finite; y (N, n_sensors), nan where missing; scale (N, n_sensors): factor on the noise variance;
+    u (N, n_inputs) finite; y (N, n_sensors), nan where missing; raw (N, n_sensors): the same as read, and slope (N or 1,
+    n_sensors): how fast y moves with it, for the test of stuck readings; scale (N, n_sensors): factor on the noise variance;
     use (N, n_sensors): 0 keeps a reading from the estimate; fresh (n_sensors,), doubtful and quiet (N,): see
     :func:`test_cycle`;
     lab_at: cycle within the block, ascending; lab_row: output row; lab_value in engineering units; lab_variance.
@@ -40,6 +41,8 @@ class BlockInputs(NamedTuple):
 
     u: Floats
     y: Floats
+    raw: Floats
+    slope: Floats
     scale: Floats
     use: Ints
     fresh: Ints
@@ -280,7 +283,8 @@ def _loop(
             news = test_cycle(
                 design,
                 tests,
-                data.y[k],
+                data.raw[k],
+                data.slope[k if len(data.slope) > 1 else 0],
                 space.moves,
                 data.fresh,
                 data.doubtful[k],

@@ -13,7 +13,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from plant_models.errors import Problem
-from plant_models.model_scale import from_model, one_to_model, to_model
+from plant_models.model_scale import from_model, one_to_model, slopes, to_model
 from plant_models.plant_model import PlantModel
 from softsensor.compiled_cycle import BlockInputs, BlockOutputs, empty_outputs, run_block
 from softsensor.cycle_results import CycleResults, Digest, flag_bytes, outside, result_rows
@@ -113,11 +113,10 @@ def start(design: UnitDesign, first_cycle: int = 0) -> CycleState:
 
 
 def usable(design: UnitDesign, readings: CycleReadings) -> tuple[Floats, Floats]:
-    """Sensor values in model scale with what is no reading taken out, and the factor on each one's noise variance."""
+    """Sensor values with what is no reading taken out, and the factor on each one's noise variance."""
     low, high = design.limits
     bad = readings.y_quality > CycleQuality.UNCERTAIN
     y = np.where(bad | (readings.y < low) | (readings.y > high), np.nan, readings.y)
-    y = to_model(design.model.spec.sensors, y)
     scale = np.where(readings.y_quality == CycleQuality.UNCERTAIN, UNCERTAIN_VARIANCE, 1.0)
     return np.ascontiguousarray(y), np.ascontiguousarray(scale)
 
@@ -141,11 +140,14 @@ def block_inputs(
     design: UnitDesign, book: FlagBook, first: int, readings: CycleReadings, labs: tuple[LabAtCycle, ...]
 ) -> BlockInputs:
     """Lay readings and laboratory results out for the compiled loop."""
-    y, scale = usable(design, readings)
-    estimates = design.model.spec.estimates
+    raw, scale = usable(design, readings)
+    sensors, estimates = design.model.spec.sensors, design.model.spec.estimates
+    y = np.ascontiguousarray(to_model(sensors, raw))
     return BlockInputs(
         usable_inputs(design, readings),
         y,
+        raw,
+        slopes(sensors, y),
         scale,
         in_use(book, first, len(readings), design.kernel.n_sensors),
         design.fresh,

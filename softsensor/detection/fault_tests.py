@@ -77,6 +77,7 @@ def test_cycle(
     design: TestDesign,
     state: TestState,
     y: Floats,
+    slope: Floats,
     moves: Floats,
     fresh: Ints,
     doubtful: int,
@@ -89,11 +90,12 @@ def test_cycle(
 ) -> int:
     """Run all tests on one cycle's innovations; events (n_sensors,) gets the bits, the return value their union.
 
-    ``moves``: the inputs, as deviations. ``fresh`` is 0 for a value that the assembly repeated (reported on change): it
-    is no evidence of being stuck. ``doubtful`` is 1 where an input is missing or too old. ``quiet`` is 1 where a person
-    has let the tests rest: only lost sensors are looked for. ``kept_out`` (n_sensors,) is 1 where the gate has kept a
-    reading from the estimate: a single impossible one is a spike, or noise, and no shift. ``squares``: sum of squares of
-    the whitened innovations, a reading at a time, over the sensors in use; nan where one of them is missing.
+    ``y`` (n_sensors,): readings as shown, nan where there is none; ``slope``: how fast their values in model scale move
+    with them. ``moves``: the inputs, as deviations. ``fresh`` is 0 for a value that the assembly repeated (reported on
+    change): it is no evidence of being stuck. ``doubtful`` is 1 where an input is missing or too old. ``quiet`` is 1 where
+    a person has let the tests rest: only lost sensors are looked for. ``kept_out`` (n_sensors,) is 1 where the gate has
+    kept a reading from the estimate: a single impossible one is a spike, or noise, and no shift. ``squares``: sum of
+    squares of the whitened innovations, a reading at a time, over the sensors in use; nan where one of them is missing.
     """
     union = _settle(design, state, doubtful)
     resting = quiet != 0 or state.cycle[0] < state.settling_until[0]
@@ -115,7 +117,7 @@ def test_cycle(
                 code |= test_spread(design, state, i, z)
             code |= test_spike(design, state, i, z)
         if quiet == 0 and not missing and fresh[i] != 0:
-            code |= test_stuck(design, state, i, y[i])
+            code |= test_stuck(design, state, i, y[i], slope[i])
         events[i] = code
         union |= code
     if resting:

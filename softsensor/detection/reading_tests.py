@@ -27,16 +27,17 @@ WARM_UP = 200
 
 
 @uncounted
-def test_stuck(design: TestDesign, state: TestState, i: int, value: float) -> int:
+def test_stuck(design: TestDesign, state: TestState, i: int, value: float, slope: float) -> int:
     """A run of equal readings is judged by how often this very sensor repeats itself, and by its resolution.
 
     However slowly the process moves, noise of sd s leaves a reading in a cell of width q with probability erf(q / (2
-    sqrt2 s)) at most. The cell is taken twice as wide, for noise that is less than the model file says.
+    sqrt2 s)) at most. The cell is taken twice as wide, for noise that is less than the model file says. Resolution belongs
+    to the reading as it is shown, noise to the scale of the model: ``slope`` carries the one over, at this value.
     """
     event = 0
     if value == state.last_value[i]:
         state.repeats[i] += 1
-        cell = error_function(state.resolution[i] / (SQRT_TWO * design.noise_sd[i]))
+        cell = error_function(state.resolution[i] * slope / (SQRT_TWO * design.noise_sd[i]))
         share = max(state.equal[i] / (state.equal[i] + state.changes[i]), cell)
         state.run_probability[i] *= share
         improbable = state.run_probability[i] < design.stuck_probability

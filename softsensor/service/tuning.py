@@ -16,6 +16,7 @@ from numpy.typing import NDArray
 from connectors.history import History
 from plant_models.building import build_plant_model
 from plant_models.durations import parse_duration
+from plant_models.model_scale import to_model
 from plant_models.plant_model import PlantModel
 from plant_models.specification import UnitSpec
 from softsensor.cycle import UnitDesign, rerun, usable, usable_inputs
@@ -53,7 +54,7 @@ CHANCE = 3.0
 
 @dataclass(frozen=True)
 class _Data:
-    """A history as it is tuned on: cycles, which of them are fitted, and what the likelihood sees."""
+    """A history as it is tuned on: cycles, readings as shown (``y``), which cycles are fitted, what the likelihood sees."""
 
     design: UnitDesign
     readings: CycleReadings
@@ -177,7 +178,8 @@ def _data(design: UnitDesign, history: History) -> _Data:
     readings = slice_readings(readings, first, len(readings))
     y, scale = usable(design, readings)
     doubtful = np.any(readings.u_quality > CycleQuality.UNCERTAIN, axis=1).astype(np.int64)
-    seen = deviations(model, usable_inputs(design, readings), y, scale, doubtful)
+    in_scale = to_model(model.spec.sensors, y)
+    seen = deviations(model, usable_inputs(design, readings), in_scale, scale, doubtful)
     split = int(FIT_SHARE * len(readings))
     return _Data(design, readings, y, split, min(_settling(model), int(LEAD_IN * split)), seen)
 
