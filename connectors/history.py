@@ -1,4 +1,4 @@
-"""A recorded history as frozen arrays: per tag its readings, in the order of their source times."""
+"""A recorded history as frozen arrays: per tag its readings, in the order of their source times; and what came late."""
 
 from __future__ import annotations
 
@@ -48,3 +48,29 @@ class History:
     @property
     def tags(self) -> tuple[str, ...]:
         return tuple(self.series)
+
+
+@dataclass(frozen=True)
+class LateRows:
+    """Late readings in the order of their arrival; equal arrivals keep the order of the file.
+
+    Shapes, all (n,): times and arrived int64 UTC microseconds; tag_index int64 into ``tags``; values float64 in the tag's
+    unit, nan where Bad; qualities int8 codes of Quality. ``ignored_tags`` are those that no wanted tag accounts for.
+    """
+
+    name: str
+    tags: tuple[str, ...]
+    times: NDArray[np.int64]
+    arrived: NDArray[np.int64]
+    tag_index: NDArray[np.int64]
+    values: NDArray[np.float64]
+    qualities: NDArray[np.int8]
+    ignored_tags: tuple[str, ...] = ()
+
+    def __len__(self) -> int:
+        return int(self.times.shape[0])
+
+    @property
+    def longest(self) -> float:
+        """The longest way back, in seconds."""
+        return float((self.arrived - self.times).max(initial=0)) * 1e-6

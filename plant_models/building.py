@@ -25,7 +25,7 @@ _AGREEMENT = 1e-9
 """Largest disagreement between a realised gain and the transfer function's, relative to its terms."""
 _COMMENTARY = frozenset({"title", "source_text", "paths"})
 """Fields of the specification that do not enter the digest; the paths enter it discretised."""
-_WHERE_GIVEN = frozenset({"transform", "limits"})
+_WHERE_GIVEN = frozenset({"transform", "limits", "late_horizon"})
 """Fields that enter the digest only where they are given: a file without them has the digest it had before they were."""
 
 

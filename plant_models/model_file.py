@@ -82,7 +82,7 @@ def _unit_spec(document: dict[str, Any], faults: FaultList, source: str) -> Unit
         if not document.get(section):
             brackets = f"[{section}]" if section == "unit" else f"at least one [[{section}]]"
             faults.add((section,), section, f"missing; expected {brackets}")
-    name, title, sample_time = read_unit(unit if unit is not None else _empty_unit())
+    name, title, sample_time, late_horizon = read_unit(unit if unit is not None else _empty_unit())
     sensors = tuple(read_sensor(table) for table in named["sensor"])
     tests = read_fault_tests(single(document, "fault_tests", faults), [item.tag for item in sensors])
     spec = UnitSpec(
@@ -99,6 +99,7 @@ def _unit_spec(document: dict[str, Any], faults: FaultList, source: str) -> Unit
         widening=tests.widening,
         disarmed=tests.disarmed,
         patient=tests.patient,
+        late_horizon=late_horizon,
         source_text=source,
     )
     check_whole(named, paths, faults)

@@ -212,6 +212,7 @@ FLAG = Kind("true or false", _flag, False)
 DURATION = Kind(durations.EXPECTED, _duration, 1.0)
 SAMPLE_TIME = Kind(f"{durations.EXPECTED}, above zero", _sample_time, 1.0)
 DURATION_ABOVE_ZERO = Kind(f"{durations.EXPECTED}, above zero", _positive_duration, 1.0)
+LATE_HORIZON: Kind[float | None] = Kind(f"{durations.EXPECTED}, above zero", _positive_duration, 1.0)
 TIME_UNIT = Kind("a unit of time such as 'min'", durations.parse_time_unit, 1.0)
 TIME_CONSTANTS: Kind[tuple[float, ...]] = Kind(
     "a list of times above zero, such as ['4.2 min', '0.6 min']", _list_of(_positive_duration), (1.0,)

@@ -13,6 +13,7 @@ from plant_models.model_kinds import (
     FACTOR,
     FLAG,
     INPUT_TAG,
+    LATE_HORIZON,
     NAME,
     NOT_BELOW_ZERO,
     NUMBER,
@@ -47,12 +48,17 @@ _EITHER = "expected sd with time_constant, or walk_sd with initial_sd"
 _OFFSET = ("bias_walk_sd", "bias_initial_sd")
 
 
-def read_unit(table: Table) -> tuple[str, str, float]:
-    """Name, title (the name where there is none) and sample time in seconds."""
-    table.only("name", "title", "sample_time")
+def read_unit(table: Table) -> tuple[str, str, float, float | None]:
+    """Name, title (the name where there is none), sample time and, where it is said, the late horizon, in seconds."""
+    table.only("name", "title", "sample_time", "late_horizon")
     name = table.read("name", NAME)
     title = table.read_or("title", TEXT, name)
-    return name, title, table.read("sample_time", SAMPLE_TIME)
+    return (
+        name,
+        title,
+        table.read("sample_time", SAMPLE_TIME),
+        table.read_or("late_horizon", LATE_HORIZON, None),
+    )
 
 
 @dataclass(frozen=True, slots=True)

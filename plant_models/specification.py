@@ -140,5 +140,7 @@ class UnitSpec:
     """Sensors whose tests of innovations are not run, with the reason."""
     patient: tuple[str, ...] = ()
     """Sensors watched by a fourth pair of sums, for shifts so small that they take days to show."""
+    late_horizon: float | None = None
+    """How late laboratory results and readings may come and still be used, in seconds; None where the file does not say."""
     source_text: str = ""
     """The file's text, kept with the revision."""

@@ -12,7 +12,8 @@ from numpy.typing import NDArray
 
 from softsensor.detection.flags import Flag, Note, RestSpell
 from softsensor.detection.outcomes import FollowUp
-from softsensor.estimation.kernel import Floats
+from softsensor.estimation.kernel import Floats, Kernel
+from softsensor.readings_of_cycle import CycleReadings
 
 DIGEST_CHUNK = 64
 """Cycles per link of the digest's chain."""
@@ -147,3 +148,30 @@ def flag_bytes(flag: Flag) -> bytes:
     sizes = np.array([flag.size, flag.size_sd, flag.probability], dtype="<f8")
     text = "\x1f".join((flag.flag, flag.tag, flag.kind, *flag.group))
     return text.encode() + times.tobytes() + sizes.tobytes()
+
+
+def waiting_results(kernel: Kernel, readings: CycleReadings) -> CycleResults:
+    """Cycles before every input has had a value: Bad, and nothing estimated."""
+    n = len(readings)
+    sensors, estimates = np.full((n, kernel.n_sensors), np.nan), np.full((n, kernel.n_estimates), np.nan)
+    zeros, none = np.zeros((n, kernel.n_sensors)), np.zeros((n, kernel.n_sensors), dtype=np.int8)
+    return CycleResults(
+        -1,
+        readings.times,
+        readings.y,
+        estimates,
+        estimates,
+        np.full((n, kernel.n_estimates), 2, dtype=np.int8),
+        sensors,
+        sensors,
+        sensors,
+        none,
+        none,
+        np.full((n, kernel.n_estimates), "", dtype=object),
+        np.zeros(n, dtype=np.int8),
+        zeros,
+        zeros,
+        zeros,
+        np.zeros(0),
+        np.zeros(0),
+    )

@@ -10,8 +10,8 @@ from typing import Any
 
 import pandas as pd
 
-from connectors.files import history_from_frame, lab_from_frame
-from connectors.history import History
+from connectors.files import history_from_frame, lab_from_frame, late_from_frame
+from connectors.history import History, LateRows
 from connectors.lab_results import LabResults, place_lab
 from connectors.time_column import time_text
 from plant_models.plant_model import PlantModel
@@ -23,9 +23,9 @@ from softsensor.readings_of_cycle import CycleReadings
 from softsensor.records import series
 from softsensor.records.engine import Database, open_database
 from softsensor.records.reader import find_unit, revisions_of
-from softsensor.service.assembly import assemble_blocks, history_cycles, rules_of
+from softsensor.service.assembly import assemble_blocks, assemble_with_late, history_cycles, rules_of
 from softsensor.service.plant_state import StateRule, recorded_changes
-from softsensor.service.replay import Replay, gathered, horizon_of, parts_of
+from softsensor.service.replay import Replay, cut_parts, gathered, horizon_of, parts_of
 from softsensor.service.result_tables import (
     CONFORMANCE_COLUMNS,
     ESTIMATE_COLUMNS,
@@ -97,11 +97,16 @@ def _ignored(lab: LabResults) -> Iterator[str]:
 
 
 def prepare(
-    model: PlantModel, history: History, lab: LabResults | None, states: Sequence[StateRule] = ()
+    model: PlantModel,
+    history: History,
+    lab: LabResults | None,
+    states: Sequence[StateRule] = (),
+    late: LateRows | None = None,
 ) -> tuple[Replay, list[Note]]:
     """A replay of a history, with the laboratory results that it can see; the others are named in notes.
 
     :param states: states of the plant in which the tests rest; their tags are in the history.
+    :param late: readings that came after their cycles.
     """
     notes: list[Note] = []
     arrivals: list[LabArrival] = []
@@ -113,8 +118,24 @@ def prepare(
         names = ", ".join(history.ignored_columns)
         notes.append(Note(history.first_time, "history", f"columns that the model does not know: {names}"))
     changes = recorded_changes(states, history.series, history_cycles(model.spec, history)) if states else ()
-    parts = parts_of(assemble_blocks(model.spec, history, BLOCK), arrivals, changes)
-    return Replay(designed(model), parts, horizon_of(arrivals)), notes
+    if late is None:
+        parts = parts_of(assemble_blocks(model.spec, history, BLOCK), arrivals, changes)
+        return Replay(designed(model), parts, horizon_of(arrivals)), notes
+    notes += [
+        Note(history.first_time, "late readings", text) for text in _left_alone(late, history.last_time)
+    ]
+    parts = cut_parts(assemble_with_late(model.spec, history, late, BLOCK), arrivals, changes)
+    needed = max(horizon_of(arrivals), late.longest + model.spec.sample_time)
+    return Replay(designed(model), parts, needed), notes
+
+
+def _left_alone(late: LateRows, last_time: int) -> Iterator[str]:
+    if late.ignored_tags:
+        yield f"{late.name}: tags that the model does not know: {', '.join(late.ignored_tags)}"
+    after = int((late.arrived > last_time).sum())
+    if after:
+        count = f"{after} reading{'s' if after > 1 else ''}"
+        yield f"{late.name}: left out, because they arrived after the last row of the history: {count}"
 
 
 def replay(
@@ -124,6 +145,7 @@ def replay(
     timezone: str | None = None,
     smooth: bool = False,
     states: str | Path | None = None,
+    late: pd.DataFrame | None = None,
 ) -> ReplayResult:
     """Run a model over a recorded history held in data frames.
 
@@ -131,6 +153,7 @@ def replay(
     :param lab: columns sampled_at, reported_at, tag, value and, where known, time_uncertainty.
     :param smooth: smoothed estimates as well.
     :param states: a file with ``[[state]]`` tables: states of the plant in which the tests rest.
+    :param late: readings that came after their cycles: columns time, arrived_at, tag, value and, where known, quality.
     :raises ReplayError: no cycle lies within the history.
     :raises HistoryFileError, LabFileError: a frame that cannot be used.
     """
@@ -138,7 +161,8 @@ def replay(
     recorded = history_from_frame(history, replay_tags(model, rules), timezone)
     fitted = fitted_states(rules, model.spec, recorded.tags, str(states))
     results = lab_from_frame(lab, lab_tags(model), timezone) if lab is not None else None
-    running, notes = prepare(model, recorded, results, fitted)
+    rows = None if late is None else late_from_frame(late, recorded.tags, timezone)
+    running, notes = prepare(model, recorded, results, fitted, rows)
     running.totals.notes += notes
     estimates, innovations, conformance = [], [], []
     with SmoothedRun(running.design) as smoothing:

@@ -38,7 +38,7 @@ from softsensor.errors import SiteFileError
 from softsensor.estimation import gate, lab_results, what_helps
 from softsensor.estimation.noise_tuning import archive_checks, interval_scale, separability
 from softsensor.records import changes, tables
-from softsensor.service import live, replay, result_tables, tuning
+from softsensor.service import assembly, live, result_tables, tuning
 from softsensor.service.model_report import model_report
 from softsensor.service.report_tables import ReportTable, knowledge_tables
 from softsensor.service.sheet_tables import sheet_tables
@@ -329,7 +329,7 @@ LIMITS = [
     (METHOD, f"More than {lab_results.IMPOSSIBLE:g} standard deviations from its prediction it is not used"),
     (METHOD, f"(within {lab_results.FITS:g} standard deviations)"),
     (METHOD, f"at another time within {lab_results.SEARCH_HOURS:g} h"),
-    (METHOD, f"may be {replay.LEAST_HORIZON_S / 86400.0:g} days late at least"),
+    (METHOD, f"may be {assembly.DEFAULT_HORIZON_S / 86400.0:g} days late at least"),
     (METHOD, f"{cycle.UNCERTAIN_VARIANCE:g} noise_sd^2 where the reading is Uncertain"),
     (METHOD, f"the interval of {published.NORMAL_95:.2f} sd to either side"),
     (METHOD, f"is beyond `gate` standard deviations ({GATE:g},"),

@@ -30,6 +30,9 @@ def replay(
     lab: Annotated[
         Path | None, typer.Option("--lab", help="Late laboratory results (CSV or Parquet).")
     ] = None,
+    late: Annotated[
+        Path | None, typer.Option("--late", help="Readings that came after their cycles (CSV or Parquet).")
+    ] = None,
     format: Annotated[
         Literal["csv", "parquet"], typer.Option("--format", help="Of the result files.")
     ] = "csv",
@@ -67,13 +70,17 @@ def replay(
             raise ReplayError(
                 "--lab: the records hold the laboratory results already; expected none with a database"
             )
+        if late is not None:
+            raise ReplayError(
+                "--late: the records hold what came late already; expected none with a database"
+            )
         if states is not None:
             raise ReplayError(
                 "--states: the records hold the plant's states already; expected none with a database"
             )
     else:
         _only_with_a_database({"--unit": unit, "--from": start, "--to": end})
-        running, notes, cycles = _from_files(plant_model, Path(history), (lab, states), timezone)
+        running, notes, cycles = _from_files(plant_model, Path(history), (lab, states, late), timezone)
     running.totals.notes += notes
     with ResultFiles(out, format, running.design) as files, SmoothedRun(running.design, out) as smoothing:
         for stretch in _with_progress(running, cycles, json, smoothing if smooth else None):
@@ -97,18 +104,22 @@ def _only_with_a_database(options: dict[str, str | None]) -> None:
 
 
 def _from_files(
-    model: PlantModel, history: Path, beside: tuple[Path | None, Path | None], timezone: str | None
+    model: PlantModel,
+    history: Path,
+    beside: tuple[Path | None, Path | None, Path | None],
+    timezone: str | None,
 ) -> tuple[Replay, list[Note], int]:
-    from connectors.files import read_history, read_lab
+    from connectors.files import read_history, read_lab, read_late
     from softsensor.recorded_data import lab_tags, prepare, replay_tags
     from softsensor.service.state_tables import fitted_states, read_states_file
 
-    lab, states = beside
+    lab, states, late = beside
     rules = () if states is None else read_states_file(states)
     recorded = read_history(history, replay_tags(model, rules), timezone)
     fitted = fitted_states(rules, model.spec, recorded.tags, str(states))
     results = read_lab(lab, lab_tags(model), timezone) if lab is not None else None
-    running, notes = prepare(model, recorded, results, fitted)
+    rows = read_late(late, recorded.tags, timezone) if late is not None else None
+    running, notes = prepare(model, recorded, results, fitted, rows)
     span = (recorded.last_time - recorded.first_time) * 1e-6
     return running, notes, int(span / model.spec.sample_time) + 1
 

@@ -10,6 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from softsensor.estimation.kernel import CHUNK, EstimatorState, Floats
+from softsensor.estimation.late_readings import LateReadings
 from softsensor.readings_of_cycle import CycleReadings, slice_readings
 
 LONGEST = 128 * CHUNK
@@ -93,6 +94,29 @@ class Past:
         """Readings of remembered cycles first to stop (exclusive), all within one chunk."""
         place = self._place(first, stop)
         return slice_readings(self._kept.readings, place.start, place.stop)
+
+    def differing(self, late: LateReadings, cycles: NDArray[np.int64]) -> NDArray[np.bool_]:
+        """(N,) Which of these cycles are remembered and saw something else of the tag."""
+        found = (cycles >= self.first_cycle) & (cycles < self.next_cycle)
+        if not found.any():
+            return found
+        values, qualities = self._column(late)
+        rows = cycles[found] % len(self._kept)
+        same = (values[rows] == late.values[found]) | (np.isnan(values[rows]) & np.isnan(late.values[found]))
+        found[found] = ~(same & (qualities[rows] == late.qualities[found]))
+        return found
+
+    def amend(self, late: LateReadings, cycles: NDArray[np.int64]) -> None:
+        """Remember that these cycles, all of them remembered, see a tag so; :meth:`run_again` then has it counted."""
+        values, qualities = self._column(late)
+        rows = cycles % len(self._kept)
+        values[rows], qualities[rows] = late.values, late.qualities
+
+    def _column(self, late: LateReadings) -> tuple[Floats, NDArray[np.int8]]:
+        kept = self._kept.readings
+        if late.kind == "input":
+            return kept.u[:, late.column], kept.u_quality[:, late.column]
+        return kept.y[:, late.column], kept.y_quality[:, late.column]
 
     def estimates(self) -> tuple[int, NDArray[np.int64], Floats, Floats]:
         """First remembered cycle, then times, estimates and sd of all remembered cycles as now known."""

@@ -120,8 +120,8 @@ def drop_checkpoints(connection: Connection, unit_id: int, before_cycle: int) ->
 
 
 def store_revised(connection: Connection, unit_id: int, revised: RevisedEstimates) -> None:
-    """Put revised estimates on record beside what was published."""
-    insert_new(
+    """Put revised estimates on record beside what was published; of several revisions in one cycle the last one stays."""
+    insert_or_replace(
         connection,
         revised_estimates,
         [

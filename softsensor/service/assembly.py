@@ -15,89 +15,36 @@ Every decision that needs a clock is taken here, against the cycle's own time, a
 from __future__ import annotations
 
 from collections.abc import Iterator, Mapping
-from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
 
-from connectors.history import History, TagSeries
+from connectors.history import History, LateRows, TagSeries
 from connectors.readings import Reading
 from plant_models.specification import UnitSpec
-from plant_models.transform import Transform
 from softsensor.readings_of_cycle import CycleReadings
-from softsensor.service.reading_rules import BAD, NEVER, UNMAPPED, TagState, input_values, sensor_readings
-from softsensor.service.sample_grid import (
-    MICROSECONDS,
-    cycle_times,
-    first_cycle_time,
-    sample_time_in_microseconds,
-)
+from softsensor.service.in_order import InOrder, Late
+from softsensor.service.reading_rules import NEVER, TagState, input_values, sensor_readings
+from softsensor.service.rules import NO_LIMIT, AssemblyState, TagRule, UnitRules, mapped, rules_of
+from softsensor.service.sample_grid import MICROSECONDS, cycle_times, first_cycle_time
+from softsensor.service.series_memory import joined
 
-NO_LIMIT = 2**62
-"""A maximum age that nothing reaches, in microseconds."""
-
-
-@dataclass(frozen=True, slots=True)
-class TagRule:
-    """How one tag's readings are taken: maximum age in microseconds, whether a reading counts once, and its transform, for
-    which a value outside its domain is no reading.
-    """
-
-    tag: str
-    max_age: int
-    counts_once: bool
-    transform: Transform | None = None
-
-
-@dataclass(frozen=True, slots=True)
-class AssemblyState:
-    """What is carried on: the last cycle's time (NEVER before the first), a state per input and sensor."""
-
-    last_cycle: int
-    inputs: tuple[TagState, ...]
-    sensors: tuple[TagState, ...]
-
-
-@dataclass(frozen=True, slots=True)
-class UnitRules:
-    """The rules of a unit's tags, in the order of its model file; ``sample_time`` in microseconds."""
-
-    sample_time: int
-    inputs: tuple[TagRule, ...]
-    sensors: tuple[TagRule, ...]
-
-    @property
-    def tags(self) -> tuple[str, ...]:
-        return tuple(dict.fromkeys(rule.tag for rule in self.inputs + self.sensors))
-
-    def start(self) -> AssemblyState:
-        """The state before any reading."""
-        new = TagState()
-        return AssemblyState(NEVER, (new,) * len(self.inputs), (new,) * len(self.sensors))
-
-
-def rules_of(spec: UnitSpec) -> UnitRules:
-    """The reading rules of a unit.
-
-    :raises ReplayError: the sample time is not a whole number of microseconds.
-    """
-    sample_time = sample_time_in_microseconds(spec.sample_time)
-    return UnitRules(
-        sample_time,
-        tuple(
-            TagRule(item.tag, _age(item.max_age, 3 * sample_time), True, item.transform)
-            for item in spec.inputs
-        ),
-        tuple(
-            TagRule(
-                item.tag,
-                _age(item.max_age, NO_LIMIT if item.on_change else 3 * sample_time),
-                not item.on_change,
-                item.transform,
-            )
-            for item in spec.sensors
-        ),
-    )
+DEFAULT_HORIZON_S = 7 * 86400.0
+"""How late results and readings may come where the model file does not say."""
+__all__ = [
+    "DEFAULT_HORIZON_S",
+    "NO_LIMIT",
+    "AssemblyState",
+    "LiveAssembly",
+    "TagRule",
+    "UnitRules",
+    "assemble_blocks",
+    "assemble_history",
+    "assemble_with_late",
+    "history_cycles",
+    "late_horizon",
+    "rules_of",
+]
 
 
 def assemble_history(spec: UnitSpec, history: History) -> CycleReadings:
@@ -126,6 +73,45 @@ def assemble_blocks(spec: UnitSpec, history: History, block: int = 8192) -> Iter
         yield readings
 
 
+def assemble_with_late(
+    spec: UnitSpec, history: History, late: LateRows, block: int = 8192
+) -> Iterator[tuple[CycleReadings, tuple[Late, ...]]]:
+    """As :func:`assemble_blocks`, with readings that came late; blocks end before the cycles that learn of them.
+
+    :return: cycles, and before the first of them what had come late and where it belongs.
+    :raises ReplayError: the sample time is not a whole number of microseconds.
+    """
+    rules = rules_of(spec)
+    times, state = _times_of(rules, history), rules.start()
+    horizon = spec.late_horizon or max(DEFAULT_HORIZON_S, late.longest + spec.sample_time)
+    in_order = InOrder(rules, state, round(horizon * MICROSECONDS))
+    learns = np.searchsorted(times, late.arrived, side="left")
+    row = 0
+    while row < len(times):
+        begin, end = np.searchsorted(learns, [row, row + 1], side="left")
+        coming = int(learns[begin]) if begin < len(learns) else len(times)
+        stop = row + 1 if end > begin else min(row + block, coming, len(times))
+        upto = int(times[stop - 1])
+        events = {tag: _between(history.series[tag], state.last_cycle, upto) for tag in rules.tags}
+        found: tuple[Late, ...] = ()
+        if end > begin:
+            events = {tag: joined(series, _rows_of(late, tag, begin, end)) for tag, series in events.items()}
+            found = in_order.take(events, upto, state.last_cycle)
+        else:
+            in_order.remember(events)
+        readings, state = _assemble(rules, times[row:stop], state, events)
+        yield readings, found
+        row = stop
+
+
+def _rows_of(late: LateRows, tag: str, begin: int, end: int) -> TagSeries:
+    """Late readings of one tag in the order of their times; of one time the last that arrived."""
+    newest_first = begin + np.flatnonzero(late.tag_index[begin:end] == late.tags.index(tag))[::-1]
+    times, first = np.unique(late.times[newest_first], return_index=True)
+    chosen = newest_first[first]
+    return TagSeries(times, late.values[chosen], late.qualities[chosen])
+
+
 def history_cycles(spec: UnitSpec, history: History) -> NDArray[np.int64]:
     """The times of the cycles within a history, UTC microseconds.
 
@@ -138,9 +124,9 @@ class LiveAssembly:
     """Collects readings in any order of arrival and gives each cycle what it sees.
 
     Readings that arrive before their cycle is asked for give the same bits as :func:`assemble_history`. One
-    that arrives after it counts in the next cycle, if it is newer than what the cycles have taken and not too
-    old by then. Two readings of one tag with the same source time are one: the later arrival replaces the
-    earlier while it waits.
+    that arrives after it counts in the next cycle, if it is the newest and not too old by then; every other one
+    belongs to its own cycle, and :attr:`late` says what the past cycles would have seen. Two readings of one tag
+    with the same source time are one: the later arrival replaces the earlier.
 
     :param state: an earlier run's :attr:`state`, to go on from after a restart.
     """
@@ -148,6 +134,9 @@ class LiveAssembly:
     def __init__(self, spec: UnitSpec, state: AssemblyState | None = None) -> None:
         self._rules = rules_of(spec)
         self._state = self._rules.start() if state is None else state
+        self._in_order = InOrder(self._rules, self._state, round(late_horizon(spec) * MICROSECONDS))
+        self.late: tuple[Late, ...] = ()
+        """What has come too late for its own cycle, as of the last cycle asked for."""
         self._waiting: dict[str, dict[int, tuple[float, int]]] = {tag: {} for tag in self._rules.tags}
         self._watched = tuple(
             rule.tag for rule in self._rules.inputs + self._rules.sensors if rule.counts_once
@@ -189,9 +178,15 @@ class LiveAssembly:
         if cycle_time <= self._state.last_cycle:
             raise ValueError(f"cycle {cycle_time} is not later than {self._state.last_cycle}")
         events = {tag: _take_until(waiting, cycle_time) for tag, waiting in self._waiting.items()}
+        self.late = self._in_order.take(events, cycle_time, self._state.last_cycle)
         times = np.array([cycle_time], dtype=np.int64)
         readings, self._state = _assemble(self._rules, times, self._state, events)
         return readings
+
+
+def late_horizon(spec: UnitSpec) -> float:
+    """How late results and readings may come, in seconds."""
+    return DEFAULT_HORIZON_S if spec.late_horizon is None else spec.late_horizon
 
 
 def _assemble(
@@ -204,11 +199,11 @@ def _assemble(
     inputs, sensors = [], []
     for j, rule in enumerate(rules.inputs):
         new = events[rule.tag]
-        arguments = (new.times, new.values, _mapped(rule, new), times, rule.max_age)
+        arguments = (new.times, new.values, mapped(rule, new), times, rule.max_age)
         inputs.append(TagState(*input_values(*arguments, state.inputs[j], u[:, j], u_quality[:, j])))
     for j, rule in enumerate(rules.sensors):
         new = events[rule.tag]
-        arguments = (new.times, new.values, _mapped(rule, new), times, rule.max_age)
+        arguments = (new.times, new.values, mapped(rule, new), times, rule.max_age)
         taken = sensor_readings(*arguments, rule.counts_once, state.sensors[j], y[:, j], y_quality[:, j])
         sensors.append(TagState(*taken))
     last = int(times[-1]) if count else state.last_cycle
@@ -216,23 +211,8 @@ def _assemble(
     return readings, AssemblyState(last, tuple(inputs), tuple(sensors))
 
 
-def _mapped(rule: TagRule, new: TagSeries) -> NDArray[np.int8]:
-    """The readings' qualities; UNMAPPED where the tag's transform has no value for a reading that is finite and not Bad."""
-    if rule.transform is None:
-        return new.qualities
-    unmapped = np.isfinite(new.values) & (new.qualities < BAD) & ~rule.transform.holds(new.values)
-    return np.where(unmapped, np.int8(UNMAPPED), new.qualities).astype(np.int8)
-
-
 def _blank(cycles: int, tags: int) -> tuple[NDArray[np.float64], NDArray[np.int8]]:
     return np.empty((cycles, tags), dtype=np.float64), np.empty((cycles, tags), dtype=np.int8)
-
-
-def _age(seconds: float | None, default: int) -> int:
-    """A maximum age in microseconds; an age beyond all times is no limit."""
-    if seconds is None:
-        return default
-    return NO_LIMIT if seconds * MICROSECONDS >= NO_LIMIT else round(seconds * MICROSECONDS)
 
 
 def _times_of(rules: UnitRules, history: History) -> NDArray[np.int64]:

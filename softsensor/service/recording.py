@@ -7,6 +7,7 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
+from numpy.typing import NDArray
 from sqlalchemy import Connection
 
 from plant_models.plant_model import PlantModel
@@ -16,6 +17,7 @@ from softsensor.detection.flags import Exclusion, Flag, Note
 from softsensor.detection.people import Decision, Taken
 from softsensor.detection.plant_states import StateChange
 from softsensor.estimation.lab_results import LabArrival, LabOutcome, replaced_by
+from softsensor.estimation.late_readings import LateReadings, UnusedReadings
 from softsensor.estimation.past import Revision
 from softsensor.readings_of_cycle import CycleReadings
 from softsensor.records import blocks, decisions, happenings, rests, storing
@@ -59,7 +61,9 @@ def pack_decisions(came: Sequence[Came]) -> bytes:
         for s in came
         if isinstance(s, StateChange)
     ]
-    kinds = {"laboratory": labs, "people": people, "plant": states}
+    late = [_packed_late(item) for item in came if isinstance(item, LateReadings)]
+    unused = [_packed_unused(item) for item in came if isinstance(item, UnusedReadings)]
+    kinds = {"laboratory": labs, "people": people, "plant": states, "late": late, "unused": unused}
     content = {kind: items for kind, items in kinds.items() if items}
     return json.dumps(content, separators=(",", ":")).encode() if content else b""
 
@@ -78,7 +82,33 @@ def unpack_decisions(blob: bytes) -> list[Came]:
     for name, condition, sensor, begins, value, unit, since, settle in content.get("plant", ()):
         seen = float.fromhex(value)
         found.append(StateChange(name, condition, sensor, begins, seen, unit, since, float.fromhex(settle)))
+    for tag, kind, column, *arrays in content.get("late", ()):
+        found.append(LateReadings(tag, kind, column, *_unpacked_arrays(*arrays)))
+    for tag, reason, *arrays in content.get("unused", ()):
+        found.append(UnusedReadings(tag, *_unpacked_arrays(*arrays), reason))
     return found
+
+
+def _packed_late(item: LateReadings) -> list[object]:
+    return [item.tag, item.kind, item.column, *_packed_arrays(item)]
+
+
+def _packed_unused(item: UnusedReadings) -> list[object]:
+    return [item.tag, item.reason, *_packed_arrays(item)]
+
+
+def _packed_arrays(item: LateReadings | UnusedReadings) -> list[list[object]]:
+    return [item.times.tolist(), [value.hex() for value in item.values.tolist()], item.qualities.tolist()]
+
+
+def _unpacked_arrays(
+    times: list[int], values: list[str], qualities: list[int]
+) -> tuple[NDArray[np.int64], NDArray[np.float64], NDArray[np.int8]]:
+    return (
+        np.array(times, dtype=np.int64),
+        np.array([float.fromhex(value) for value in values], dtype=np.float64),
+        np.array(qualities, dtype=np.int8),
+    )
 
 
 def results_block(design: UnitDesign, step: Step) -> blocks.ResultsBlock:

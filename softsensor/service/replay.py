@@ -7,18 +7,17 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from plant_models.specification import UnitSpec
 from softsensor.cycle import LabAtCycle, UnitDesign, start
 from softsensor.cycle_results import CycleResults, join_results
 from softsensor.detection.plant_states import StateChange
 from softsensor.estimation.lab_results import LabArrival, LabOutcome
+from softsensor.estimation.late_readings import LateReadings
 from softsensor.estimation.past import Past
 from softsensor.readings_of_cycle import CycleReadings, join_readings
+from softsensor.service.assembly import DEFAULT_HORIZON_S, late_horizon
 from softsensor.service.summary import RunSummary
 from softsensor.service.unit_run import Came, UnitRun, slice_readings
-
-LEAST_HORIZON_S = 7 * 86400.0
-"""Late results are taken up to this age at least; a replay looks as far back as its latest result needs."""
-
 
 Part = tuple[CycleReadings, Sequence[Came]]
 
@@ -36,7 +35,7 @@ class Replay:
     """A replay under way: iterate over :meth:`stretches`, then ask for the summary.
 
     :param parts: consecutive cycles, each part with what comes before its first cycle: laboratory results, decisions.
-    :param horizon_s: how far back, in seconds, a late result may reach.
+    :param horizon_s: how far back, in seconds, a late result or reading reaches; what the model file says goes before it.
     :param first_cycle: the number of the first cycle, a multiple of the checkpoint interval.
     """
 
@@ -44,21 +43,23 @@ class Replay:
         self,
         design: UnitDesign,
         parts: Iterable[Part],
-        horizon_s: float = LEAST_HORIZON_S,
+        horizon_s: float = 0.0,
         first_cycle: int = 0,
     ) -> None:
         self.design = design
         self.first_cycle = first_cycle
         self._parts = parts
-        cycles = int(np.ceil(max(horizon_s, LEAST_HORIZON_S) / design.model.spec.sample_time)) + 2
-        past = Past(cycles, design.kernel.n_estimates)
+        past = Past(horizon_cycles(design.model.spec, horizon_s), design.kernel.n_estimates)
         past.next_cycle = first_cycle
         self.run = UnitRun(design, start(design, first_cycle), past)
         self.totals = RunSummary(design)
+        self.late: list[LateReadings] = []
+        """What past cycles came to see, in the order in which it was learnt."""
 
     def stretches(self) -> Iterator[Stretch]:
         """Run all cycles, a stretch at a time."""
         for part, came in self._parts:
+            self.late += [item for item in came if isinstance(item, LateReadings)]
             advance = self.run.advance(part, came)
             self.totals.add_labs(advance.labs)
             row, labs = 0, advance.labs
@@ -78,6 +79,12 @@ class Replay:
         return self.run.state.digest.hexdigest()
 
 
+def horizon_cycles(spec: UnitSpec, needed_s: float = 0.0) -> int:
+    """How many cycles a run remembers: as the model file says, else for seven days, or longer where a replay needs it."""
+    seconds = late_horizon(spec) if spec.late_horizon is not None else max(needed_s, DEFAULT_HORIZON_S)
+    return int(np.ceil(seconds / spec.sample_time)) + 2
+
+
 def parts_of(
     blocks: Iterable[CycleReadings],
     labs: Iterable[LabArrival],
@@ -87,13 +94,22 @@ def parts_of(
 
     :param changes: each with the time of the cycle that learns of it, in order.
     """
+    return cut_parts(((block, ()) for block in blocks), labs, changes)
+
+
+def cut_parts(
+    blocks: Iterable[Part],
+    labs: Iterable[LabArrival],
+    changes: Iterable[tuple[int, StateChange]] = (),
+) -> Iterator[Part]:
+    """As :func:`parts_of`, for blocks with something that comes before the first cycle of each."""
     waiting: list[tuple[int, Came]] = [(lab.arrived, lab) for lab in labs]
     waiting = sorted([*waiting, *changes], key=lambda item: item[0])
-    for block in blocks:
+    for block, before in blocks:
         row = 0
         while row < len(block):
             now: int = int(block.times[row])
-            came: list[Came] = []
+            came: list[Came] = [] if row else list(before)
             while waiting and waiting[0][0] <= now:
                 came.append(waiting.pop(0)[1])
             stop = len(block)

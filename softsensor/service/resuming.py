@@ -9,6 +9,7 @@ from dataclasses import dataclass
 from softsensor.cycle import UnitDesign, start
 from softsensor.errors import RecordsError
 from softsensor.estimation.kernel import CHUNK
+from softsensor.estimation.late_readings import LateReadings
 from softsensor.estimation.past import Past
 from softsensor.readings_of_cycle import CycleReadings
 from softsensor.records import series
@@ -59,7 +60,10 @@ def resumed_run(design: UnitDesign, database: Database, unit_id: int, horizon: i
         return fresh_run(design, horizon, 0 if seen is None else _next_chunk(seen.cycle))
     past = Past(horizon, design.kernel.n_estimates)
     refill(past, database, unit_id, range(context.first_remembered, state.next_cycle))
-    return UnitRun(design, state, past, context.labs, context.first_time)
+    run = UnitRun(design, state, past, context.labs, context.first_time)
+    for _, came in recorded_cycles(database, unit_id, past.first_cycle, state.next_cycle - 1):
+        run.remember_late([item for item in came if isinstance(item, LateReadings)])
+    return run
 
 
 def _next_chunk(cycle: int) -> int:

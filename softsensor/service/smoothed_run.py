@@ -23,6 +23,7 @@ from softsensor.cycle import LabAtCycle, UnitDesign, UnsoundArithmetic, block_in
 from softsensor.detection.flags import FlagBook
 from softsensor.errors import ReplayError
 from softsensor.estimation.kernel import EstimatorState
+from softsensor.estimation.late_readings import LateReadings
 from softsensor.estimation.smoothing import (
     ScalarReadings,
     SmoothedCycles,
@@ -95,6 +96,7 @@ class SmoothedRun:
         self._chunk = chunk
         self._waited: list[NDArray[np.int64]] = []
         self._loose: list[CycleReadings] = []
+        self._late: list[LateReadings] = []
         self._readings, self._states, self._smoothed = Shelf(folder), Shelf(folder), Shelf(folder)
 
     def __enter__(self) -> SmoothedRun:
@@ -143,6 +145,7 @@ class SmoothedRun:
             nothing = np.full((len(times), estimates), np.nan)
             yield SmoothedCycles(times, nothing, nothing)
         if not len(self._smoothed):
+            self._late = running.late
             book, labs = running.run.state.book, running.counted_labs
             interval = _Interval(self._design, book, labs, running.first_cycle)
             self._forward(interval)
@@ -176,7 +179,16 @@ class SmoothedRun:
             self._smoothed.put((part.times, mean, np.sqrt(variance) * scale))
 
     def _chunk_of(self, number: int) -> CycleReadings:
-        return CycleReadings(*self._readings.get(number))
+        """What the cycles of a chunk saw, and what came late for them."""
+        part = CycleReadings(*self._readings.get(number))
+        for late in self._late:
+            inside = (late.times >= part.times[0]) & (late.times <= part.times[-1])
+            if inside.any():
+                rows = np.searchsorted(part.times, late.times[inside])
+                of_inputs = late.kind == "input"
+                (part.u if of_inputs else part.y)[rows, late.column] = late.values[inside]
+                (part.u_quality if of_inputs else part.y_quality)[rows, late.column] = late.qualities[inside]
+        return part
 
 
 def _cycle_of(lab: LabAtCycle) -> int:

@@ -9,6 +9,7 @@ from collections.abc import Iterable, Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
+from numpy.typing import NDArray
 
 from plant_models.model_scale import one_from_model, one_to_model
 from plant_models.transform import Transform
@@ -21,7 +22,8 @@ from softsensor.cycle import (
     rerun,
     run_cycles,
 )
-from softsensor.cycle_results import CycleResults
+from softsensor.cycle_results import CycleResults, waiting_results
+from softsensor.detection.flags import Note
 from softsensor.detection.people import Decision, Taken
 from softsensor.detection.plant_states import StateChange
 from softsensor.estimation.kernel import CHUNK, EstimatorState, Floats
@@ -34,6 +36,7 @@ from softsensor.estimation.lab_results import (
     likely_reason,
     slope_variance,
 )
+from softsensor.estimation.late_readings import LateReadings, UnusedReadings, late_words
 from softsensor.estimation.past import Past, Revision
 from softsensor.readings_of_cycle import CycleReadings, slice_readings
 
@@ -53,7 +56,7 @@ class Advance:
 IN_MEMORY = 2**25
 """Bytes of remembered states that one call of the loop may add: the length of its stretches grows up to that."""
 
-Came = LabArrival | Decision | StateChange
+Came = LabArrival | Decision | StateChange | LateReadings | UnusedReadings
 """What may come before a cycle besides its readings."""
 
 
@@ -95,9 +98,12 @@ class UnitRun:
         all_came = list(came)
         arrivals = [item for item in all_came if isinstance(item, LabArrival)]
         decisions = [item for item in all_came if isinstance(item, Decision)]
+        late = [item for item in all_came if isinstance(item, LateReadings | UnusedReadings)]
         self._early += [item for item in all_came if isinstance(item, StateChange)]
         waiting = 0 if self.started else self._rows_to_wait(readings)
-        results = [_waiting_results(self.design, slice_readings(readings, 0, waiting))] if waiting else []
+        results = (
+            [waiting_results(self.design.kernel, slice_readings(readings, 0, waiting))] if waiting else []
+        )
         if waiting == len(readings):
             early = [_left_out(item, -1, "before the first cycle") for item in arrivals]
             return Advance(tuple(results), tuple(early))
@@ -107,7 +113,8 @@ class UnitRun:
         self.state, told, taken = decide(self.design, self.state, decisions, now, self._early)
         self._early = []
         outcomes: list[LabOutcome] = []
-        revisions: list[Revision] = []
+        news, revisions = self._amend(late)
+        noted = tuple(Note(now, "late readings", text) for text in late_words(news, now))
         for arrival in sorted(arrivals, key=lambda item: (item.sampled, item.reported, item.tag, item.value)):
             outcome, revision = self._take(arrival, slice_readings(readings, waiting, waiting + 1))
             outcomes.append(outcome)
@@ -118,7 +125,7 @@ class UnitRun:
             result, revision = self._run(part)
             self._most = min(2 * self._most, self._longest) if len(result) == len(part) else CHUNK
             if row == waiting:
-                flags, notes = told.changes + result.flags, told.notes + result.notes
+                flags, notes = told.changes + result.flags, told.notes + noted + result.notes
                 result = replace(result, flags=flags, notes=notes, rests=told.rests + result.rests)
             results.append(result)
             revisions += [revision] if revision is not None else []
@@ -146,6 +153,36 @@ class UnitRun:
         if results.rewind is None or results.rewind.exclusion is None:
             return results, None
         return results, self._go_back(max(results.rewind.exclusion.since, self.past.first_cycle))
+
+    def news_in(self, late: LateReadings) -> LateReadings:
+        """Of what past cycles should see of a tag, what they have not seen so, as far back as is remembered."""
+        return late.only(self.past.differing(late, self._cycles_of(late)))
+
+    def _cycles_of(self, late: LateReadings) -> NDArray[np.int64]:
+        if self.first_time is None:
+            return np.full(len(late.times), -1, dtype=np.int64)
+        return (late.times - self.first_time) // self._sample_us
+
+    def remember_late(self, late: Sequence[LateReadings]) -> None:
+        """Late readings that were counted before a restart are in the state already, but not among what is remembered."""
+        for item in late:
+            news = self.news_in(item)
+            self.past.amend(news, self._cycles_of(news))
+
+    def _amend(
+        self, late: Sequence[LateReadings | UnusedReadings]
+    ) -> tuple[list[LateReadings | UnusedReadings], list[Revision]]:
+        """Count late readings where they belong; what of them is news, and what that has revised."""
+        first, told = self.state.next_cycle, []
+        for item in late:
+            news = self.news_in(item) if isinstance(item, LateReadings) else item
+            if isinstance(news, LateReadings) and len(news.times):
+                cycles = self._cycles_of(news)
+                self.past.amend(news, cycles)
+                first = min(first, int(cycles[0]))
+                self.state = replace(self.state, digest=self.state.digest.mix(news.as_bytes()))
+            told.append(news)
+        return told, [self._go_back(first)] if first < self.state.next_cycle else []
 
     def _go_back(self, cycle: int) -> Revision:
         estimator, revision = self.past.run_again(cycle, self._rerun)
@@ -255,33 +292,6 @@ def _lab_bytes(outcome: LabOutcome) -> bytes:
     whole = np.array([outcome.arrived_cycle, outcome.counted_cycle, outcome.arrival.estimate], dtype="<i8")
     real = np.array([outcome.arrival.value, outcome.predicted, outcome.innovation, outcome.sd], dtype="<f8")
     return outcome.status.encode() + whole.tobytes() + real.tobytes()
-
-
-def _waiting_results(design: UnitDesign, readings: CycleReadings) -> CycleResults:
-    """Cycles before every input has had a value: Bad, and nothing estimated."""
-    n, kernel = len(readings), design.kernel
-    sensors, estimates = np.full((n, kernel.n_sensors), np.nan), np.full((n, kernel.n_estimates), np.nan)
-    zeros, none = np.zeros((n, kernel.n_sensors)), np.zeros((n, kernel.n_sensors), dtype=np.int8)
-    return CycleResults(
-        -1,
-        readings.times,
-        readings.y,
-        estimates,
-        estimates,
-        np.full((n, kernel.n_estimates), 2, dtype=np.int8),
-        sensors,
-        sensors,
-        sensors,
-        none,
-        none,
-        np.full((n, kernel.n_estimates), "", dtype=object),
-        np.zeros(n, dtype=np.int8),
-        zeros,
-        zeros,
-        zeros,
-        np.zeros(0),
-        np.zeros(0),
-    )
 
 
 __all__ = ["CHUNK", "Advance", "Came", "UnitRun", "slice_readings"]

@@ -3,30 +3,30 @@
 from __future__ import annotations
 
 import asyncio
-from collections.abc import Sequence
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
 
 from connectors.readings import Quality, Reading
 from plant_models.plant_model import PlantModel
-from plant_models.specification import UnitSpec
 from softsensor.cycle import UnitDesign
 from softsensor.detection.people import ACTS, Decision
 from softsensor.estimation.kernel import CHUNK
 from softsensor.estimation.lab_results import LabArrival
-from softsensor.readings_of_cycle import CycleQuality, CycleReadings
+from softsensor.estimation.late_readings import LateReadings
+from softsensor.readings_of_cycle import CycleReadings
 from softsensor.records import blocks, storing
 from softsensor.records.decisions import begin_anew, waiting_decisions
 from softsensor.records.engine import Database
 from softsensor.records.reader import StoredLab, lab_results_of
 from softsensor.records.writer import RecordsWriter, WriterState
-from softsensor.service.assembly import NO_LIMIT, AssemblyState, LiveAssembly, TagRule, rules_of
+from softsensor.service.assembly import LiveAssembly
 from softsensor.service.checkpoints import FORMAT, Context, pack_state
+from softsensor.service.held_values import held_values
 from softsensor.service.plant_state import PlantStates, StateRule
-from softsensor.service.reading_rules import TagState
 from softsensor.service.recording import Step, pack_decisions, write_step
-from softsensor.service.replay import LEAST_HORIZON_S
+from softsensor.service.replay import horizon_cycles
 from softsensor.service.resuming import LastSeen, fresh_run, last_seen, recorded_cycles, resumed_run
 from softsensor.service.sample_grid import first_cycle_time
 from softsensor.service.unit_run import Came, slice_readings
@@ -69,7 +69,7 @@ class UnitService:
         self._decided_labs: set[tuple[str, int, int, float]] = set()
         self._pending_decisions: list[Decision] = []
         self._seen_decisions: set[int] = set()
-        self._horizon = int(np.ceil(LEAST_HORIZON_S / design.model.spec.sample_time)) + 2
+        self._horizon = horizon_cycles(design.model.spec)
         self._assembly = LiveAssembly(design.model.spec)
         self._states = PlantStates(states)
         self.run = fresh_run(design, self._horizon)
@@ -179,12 +179,24 @@ class UnitService:
             self._keep_first_state(time)
         arrivals = [lab for lab in self._pending_labs if lab.arrived <= time]
         self._pending_labs = [lab for lab in self._pending_labs if lab.arrived > time]
-        came: list[Came] = [*arrivals, *self._pending_decisions, *self._states.changes_at(time)]
+        came: list[Came] = [
+            *arrivals,
+            *self._pending_decisions,
+            *self._states.changes_at(time),
+            *self._late_readings(),
+        ]
         self._pending_decisions = []
         await self._store_readings(readings, came)
         step = self._advance(readings, came)
         self._submit(step)
         return step
+
+    def _late_readings(self) -> Iterator[Came]:
+        """What has come too late for its own cycle, as far as it changes what the past has seen."""
+        for item in self._assembly.late:
+            news = self.run.news_in(item) if isinstance(item, LateReadings) else item
+            if len(news.times):
+                yield news
 
     def _keep_first_state(self, time: int) -> None:
         cycle = self.run.state.next_cycle
@@ -294,36 +306,3 @@ def _take_note(written: asyncio.Future[None]) -> None:
 
 def _key(arrival: LabArrival) -> tuple[str, int, int, float]:
     return arrival.tag, arrival.sampled, arrival.reported, arrival.value
-
-
-def held_values(spec: UnitSpec, last: CycleReadings) -> AssemblyState:
-    """What the assembly knew after the last recorded cycle, as far as the record tells.
-
-    The record keeps no source times. Inputs hold their values, as old as the record allows: one that was too old stays
-    so, any other becomes too old unless it is heard again; the plant's server shows it again with its own time as soon
-    as it is connected. A sensor reported on change holds its value too; any other has been used.
-    """
-    rules, time = rules_of(spec), int(last.times[-1])
-    inputs = tuple(
-        _held(time, float(value), int(quality), rule)
-        for value, quality, rule in zip(last.u[-1], last.u_quality[-1], rules.inputs, strict=True)
-    )
-    sensors = tuple(
-        TagState(newest_time=time, used_time=time)
-        if rule.counts_once
-        else _held(time, float(value), int(quality), rule)
-        for value, quality, rule in zip(last.y[-1], last.y_quality[-1], rules.sensors, strict=True)
-    )
-    return AssemblyState(time, inputs, sensors)
-
-
-def _held(time: int, value: float, quality: int, rule: TagRule) -> TagState:
-    if not np.isfinite(value):
-        return TagState(newest_time=time, used_time=time)
-    oldest = time if rule.max_age == NO_LIMIT else time - rule.max_age
-    since = oldest - 1 if quality == CycleQuality.STALE else oldest
-    newest = quality if quality <= CycleQuality.BAD or quality == CycleQuality.UNMAPPED else None
-    usable = (
-        min(quality, int(CycleQuality.UNCERTAIN)) if quality <= CycleQuality.BAD else int(CycleQuality.GOOD)
-    )
-    return TagState(since, value, usable if newest is None else newest, since, since, value, usable)

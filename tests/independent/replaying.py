@@ -62,7 +62,11 @@ def replay_in_parts(
     labs = list(labs)
     edges = sorted({0, len(readings), *cuts})
     blocks = [slice_readings(readings, a, b) for a, b in pairwise(edges)]
-    replay = Replay(design, parts_of(blocks, labs), horizon_of(labs))
+    return outcome_of_replay(Replay(design, parts_of(blocks, labs), horizon_of(labs)))
+
+
+def outcome_of_replay(replay: Replay) -> Outcome:
+    """Run a replay to its end."""
     stretches = list(replay.stretches())
     return Outcome(
         np.concatenate([stretch.results.estimate for stretch in stretches]),

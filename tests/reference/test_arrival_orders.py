@@ -8,11 +8,12 @@ from __future__ import annotations
 import numpy as np
 import pytest
 from independent.arrival_orders import (
-    CYCLES,
+    SAMPLES,
     Report,
     assert_same_from_the_last_report_on,
     in_order,
     outcome_of,
+    random_reports,
     small_run,
     small_spec,
     true_value,
@@ -22,18 +23,6 @@ from independent.dense_filter import LabRow, filter_in_order
 from softsensor.estimation.lab_results import with_corrections
 
 ORDERS = 1000
-SAMPLES = (0.0, 10.5, 11.0, 48.0, 63.0, 64.0)
-
-
-def random_reports(rng: np.random.Generator) -> list[Report]:
-    """Each sample once, or corrected once or twice, at random times after its sampling."""
-    reports = []
-    for sampled in SAMPLES:
-        count = int(rng.choice([1, 1, 2, 3]))
-        times = np.sort(sampled + rng.random(count) * (CYCLES - 2 - sampled))
-        values = true_value(sampled) + 0.02 * rng.standard_normal(count)
-        reports += [Report(sampled, float(at), float(value)) for at, value in zip(times, values, strict=True)]
-    return [reports[k] for k in rng.permutation(len(reports))]
 
 
 def test_a_thousand_random_orders_end_where_in_order_processing_ends() -> None:
