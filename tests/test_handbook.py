@@ -14,7 +14,7 @@ import pytest
 from rich.console import Console
 from typer.main import get_command
 
-from connectors.files import read_history, read_lab
+from connectors.files import read_history, read_lab, read_late
 from plant_models import model_checks, model_kinds, model_paths, stochastic
 from plant_models.durations import SECONDS, format_duration, parse_duration
 from plant_models.errors import ModelFileError
@@ -180,7 +180,10 @@ def test_every_csv_block_is_a_sound_file_of_the_first_hours_unit(text: str, tmp_
     spec = parse_model_text(MODEL_EXAMPLE, "m.toml")
     file = tmp_path / "file.csv"
     file.write_text(text, encoding="utf-8")
-    if text.startswith("time,"):
+    if text.startswith("time,arrived_at,"):
+        rows = read_late(file, measured_tags(spec))
+        assert (len(rows), rows.ignored_tags) == (text.count("\n") - 1, ())
+    elif text.startswith("time,"):
         tags = measured_tags(spec)
         history = read_history(file, tags)
         assert (set(history.series), history.ignored_columns) == (set(tags), ())

@@ -27,6 +27,11 @@ class EventQueue:
         self._closed = False
         self._failure: Exception | None = None
 
+    @property
+    def size(self) -> int:
+        """How many events are kept at most."""
+        return self._size
+
     def __len__(self) -> int:
         return len(self._events)
 

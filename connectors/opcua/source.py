@@ -34,6 +34,22 @@ _CHECK_INTERVAL = 1.0
 _NODE_RETRY = 2.0
 _STABLE = 2.0
 """A connection that held for so many seconds starts the waiting times anew."""
+_LONGEST_GAP = 31 * 86_400_000_000
+"""Microseconds of history that are asked for at most after a loss."""
+_KEEPS_NONE = frozenset(
+    {
+        ua.StatusCodes.BadHistoryOperationUnsupported,
+        ua.StatusCodes.BadHistoryOperationInvalid,
+        ua.StatusCodes.BadServiceUnsupported,
+        ua.StatusCodes.BadNotReadable,
+        ua.StatusCodes.BadUserAccessDenied,
+        ua.StatusCodes.BadNodeIdUnknown,
+        ua.StatusCodes.BadNoData,
+    }
+)
+"""What a server answers that keeps no history of a node, or not for us."""
+_ROOM_WAIT = 0.02
+"""Seconds between two looks at whether the reader has made room for readings that a server had kept."""
 DEFAULT_QUEUE_SIZE = 20_000
 
 
@@ -71,6 +87,8 @@ class OpcUaSource:
         self._resolved: dict[str, ua.NodeId] = {}
         self._problems: dict[str, str] = {}
         self._connected_once = False
+        self._newest: dict[str, int] = {}
+        self._no_history: set[str] = set()
         self._told = ""
 
     @property
@@ -146,9 +164,12 @@ class OpcUaSource:
         if tag not in self._resolved:
             raise NodeError(f"{tag}: {self._problems.get(tag, 'not one of the tags that are read')}")
         try:
-            values = await session.read_history(self._resolved[tag], to_datetime(start), to_datetime(end))
+            return await self._kept_values(session, tag, start, end)
         except LIBRARY_ERRORS as error:
             raise connection_error(self._settings, error) from error
+
+    async def _kept_values(self, session: PlantSession, tag: str, start: int, end: int) -> list[Reading]:
+        values = await session.read_history(self._resolved[tag], to_datetime(start), to_datetime(end))
         converter = ReadingConverter()
         by_time = {
             reading.time: reading
@@ -183,8 +204,10 @@ class OpcUaSource:
         """
         session = await PlantSession.open(self._settings, self._deliver)
         try:
+            since = dict(self._newest)
             await self._start_delivery(session)
             self._session = session
+            await self._fill_gap(session, since)
             return f"{self._settings.endpoint}: {await self._watch(session)}"
         except LIBRARY_ERRORS as error:
             raise connection_error(self._settings, error) from error
@@ -207,6 +230,31 @@ class OpcUaSource:
         self._problems = problems | refused
         if refused:
             self._tell_connected(self._problems)
+
+    async def _fill_gap(self, session: PlantSession, since: Mapping[str, int]) -> None:
+        """After a loss of the connection: what the server kept meanwhile, for tags of which it keeps a history.
+
+        :param since: by tag, the newest source time that was delivered before.
+        """
+        kept = {}
+        for tag in [tag for tag in self._resolved if tag in since and tag not in self._no_history]:
+            begin = since[tag] + 1
+            try:
+                found = await self._kept_values(session, tag, begin, begin + _LONGEST_GAP)
+            except ua.UaStatusCodeError as error:
+                if error.code not in _KEEPS_NONE:
+                    raise
+                self._no_history.add(tag)
+                continue
+            for reading in found:
+                while len(self._queue) > self._queue.size // 2:
+                    await asyncio.sleep(_ROOM_WAIT)
+                self._queue.put(reading)
+            if found:
+                kept[tag] = len(found)
+        if kept:
+            text = f"taken what the server had kept: {sum(kept.values())} readings, of {len(kept)} of {len(since)} tags"
+            self._queue.put(ConnectionChange("connected", f"{self._settings.endpoint}: {text}"))
 
     async def _watch(self, session: PlantSession) -> str:
         """Wait for the end of a connection; meanwhile ask for what has not come."""
@@ -237,6 +285,7 @@ class OpcUaSource:
             self._queue.count_lost(1)
         reading = self._converter.convert(tag, data)
         if reading is not None:
+            self._newest[tag] = max(reading.time, self._newest.get(tag, reading.time))
             self._queue.put(reading)
 
     def _tell_connected(self, problems: Mapping[str, str]) -> None:

@@ -282,6 +282,54 @@ def test_history_that_the_server_kept_is_read_once_each_in_order(
     assert [reading.quality for reading in readings].count(Quality.UNCERTAIN) == 1
 
 
+def test_after_a_loss_what_the_server_kept_meanwhile_comes_too(
+    endpoint: str, plant_tags: list[ServedTag]
+) -> None:
+    """Of a node with history; of one without it only the present value comes."""
+
+    async def scenario() -> tuple[list[Reading], list[str]]:
+        plant, told, heard = TagServer(endpoint, URI, plant_tags[:2]), [], []
+        source = OpcUaSource(settings(endpoint), plant.node_ids())
+        async with plant, source, asyncio.timeout(PATIENCE):
+            assert plant.library_server is not None
+            node = plant.library_server.get_node(
+                parse_node_id(plant.node_id(plant_tags[0].tag)).resolve(["", "", URI])
+            )
+            for tag in plant_tags[:2]:
+                await plant.write(tag.tag, -1.0, START - 1)
+            await plant.library_server.iserver.enable_history_data_change(node, period=None)
+            events = source.events()
+            await until_connected(events)
+            heard_of: set[str] = set()
+            while len(heard_of) < 2:
+                heard_of.add((await next_reading(events, START - 1)).tag)
+            server = plant.library_server.bserver
+            assert server is not None
+            for client in list(server.clients):
+                assert client.transport is not None
+                client.transport.close()
+            for step in range(6):
+                for tag in plant_tags[:2]:
+                    await plant.write(tag.tag, float(step), START + step)
+            async for event in events:
+                if isinstance(event, Reading):
+                    heard.append(event)
+                elif isinstance(event, ConnectionChange):
+                    told.append(event.reason)
+                    if "had kept" in event.reason:
+                        break
+        return heard, told
+
+    heard, told = asyncio.run(scenario())
+    with_history = {
+        reading.time - START: reading.value for reading in heard if reading.tag == plant_tags[0].tag
+    }
+    assert with_history == {step: float(step) for step in range(6)}
+    without = {reading.time - START for reading in heard if reading.tag == plant_tags[1].tag}
+    assert without <= {5}
+    assert told[-1] == f"{endpoint}: taken what the server had kept: 6 readings, of 1 of 2 tags"
+
+
 def test_a_port_that_is_taken_is_named(endpoint: str, plant_tags: list[ServedTag]) -> None:
     async def scenario() -> None:
         async with TagServer(endpoint, URI, plant_tags[:1]):
