@@ -15,6 +15,7 @@ from plant_models.discretisation import discretise
 from plant_models.errors import RealisationError
 from plant_models.model_scale import in_model_scale
 from plant_models.plant_model import DiscretePath, PlantModel, StochasticPart
+from plant_models.schedules import operating_points, path_in_operation, schedule_faults
 from plant_models.specification import PathSpec, UnitSpec
 from plant_models.stochastic import output_rows, stochastic_part
 from plant_models.transfer_function import dc_gain, faults, label
@@ -40,23 +41,23 @@ def build_plant_model(spec: UnitSpec) -> PlantModel:
     _refuse_unsound(spec)
     inputs = {item.tag: index for index, item in enumerate(spec.inputs)}
     rows = output_rows(spec)
-    paths = []
-    for path in spec.paths:
+    scaled = in_model_scale(spec)
+    points = operating_points(scaled)
+    paths: list[DiscretePath] = []
+    scheduled: list[tuple[int, PathSpec]] = []
+    for path in scaled.paths:
         if path.source in inputs:
+            if path.schedule is not None:
+                scheduled.append((len(paths), path))
+            path = path_in_operation(path, points)
             discrete = discretise(path, inputs[path.source], rows[path.target], spec.sample_time)
             _check_path(path, discrete)
             paths.append(_frozen(discrete))
-    scaled = in_model_scale(spec)
     stochastic = stochastic_part(scaled)
     _check_stochastic(stochastic)
     stochastic = _frozen(stochastic)
-    return PlantModel(
-        spec=spec,
-        paths=tuple(paths),
-        stochastic=stochastic,
-        digest=_digest(spec, tuple(paths), stochastic),
-        scaled=scaled,
-    )
+    digest = _digest(spec, tuple(paths), stochastic, tuple(scheduled))
+    return PlantModel(spec, tuple(paths), stochastic, digest, scaled, tuple(scheduled))
 
 
 def _refuse_unsound(spec: UnitSpec) -> None:
@@ -72,6 +73,7 @@ def _refuse_unsound(spec: UnitSpec) -> None:
         if path.target not in targets:
             found.append(f"{label(path)}: {path.target} is neither a sensor nor an estimate")
         found.extend(faults(path))
+        found.extend(schedule_faults(path, spec))
     tags = {item.tag for item in spec.inputs}
     for item in spec.disturbances:
         if item.at_input is not None and item.at_input not in tags:
@@ -125,9 +127,15 @@ def _frozen(part: Part) -> Part:
     return replace(part, **arrays)  # type: ignore[arg-type]
 
 
-def _digest(spec: UnitSpec, paths: tuple[DiscretePath, ...], stochastic: StochasticPart) -> str:
-    """SHA-256 over the specification without its commentary, then the paths, then the stochastic part."""
-    return hashlib.sha256(b"".join(map(_canonical, (spec, paths, stochastic)))).hexdigest()
+def _digest(
+    spec: UnitSpec,
+    paths: tuple[DiscretePath, ...],
+    stochastic: StochasticPart,
+    scheduled: tuple[tuple[int, PathSpec], ...],
+) -> str:
+    """SHA-256 over the specification without its commentary, the paths, the stochastic part, and schedules if any."""
+    parts = (spec, paths, stochastic, scheduled) if scheduled else (spec, paths, stochastic)
+    return hashlib.sha256(b"".join(map(_canonical, parts))).hexdigest()
 
 
 def _canonical(value: Any) -> bytes:

@@ -6,6 +6,7 @@ from collections.abc import Iterable
 from dataclasses import dataclass
 
 from plant_models.durations import format_duration
+from plant_models.model_schedules import scheduling_tags
 from plant_models.model_tables import FaultList, Table
 from plant_models.quoting import nearest, printable, quoted, suggestion
 from plant_models.specification import UnitSpec
@@ -63,7 +64,7 @@ def check_whole(sections: dict[str, list[Table]], paths: list[Table], faults: Fa
     ends = _check_ends(entries, paths, faults)
     ends += _entering_at_inputs(entries, ends)
     _check_one_path_each(ends, faults)
-    _check_driven(entries, ends, faults)
+    _check_driven(entries, ends, scheduling_tags(paths), faults)
 
 
 def check_dead_times(spec: UnitSpec, paths: list[Table], faults: FaultList) -> None:
@@ -186,8 +187,8 @@ def _check_one_path_each(paths: list[Path], faults: FaultList) -> None:
             faults.add((*known.place, "to"), "to", f"{message}; another follows from {at}")
 
 
-def _check_driven(entries: list[Entry], paths: list[Path], faults: FaultList) -> None:
-    sources = {path.source for path in paths}
+def _check_driven(entries: list[Entry], paths: list[Path], scheduling: set[str], faults: FaultList) -> None:
+    sources = {path.source for path in paths} | scheduling
     targets = {path.target for path in paths}
     for entry in entries:
         place, name = (*entry.place, entry.key), printable(entry.name)

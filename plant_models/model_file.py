@@ -8,12 +8,15 @@ from __future__ import annotations
 
 import re
 import tomllib
+from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
 from plant_models.errors import Fault, ModelFileError
 from plant_models.model_checks import check_dead_times, check_whole
 from plant_models.model_paths import read_path
+from plant_models.model_scale import in_model_scale
+from plant_models.model_schedules import check_schedules
 from plant_models.model_sections import (
     read_disturbance,
     read_estimate,
@@ -23,6 +26,7 @@ from plant_models.model_sections import (
     read_unit,
 )
 from plant_models.model_tables import FaultList, Table, rows, single, unknown_sections
+from plant_models.schedules import operating_points, path_in_operation
 from plant_models.specification import UnitSpec
 from plant_models.toml_lines import scan_toml_lines
 
@@ -83,13 +87,14 @@ def _unit_spec(document: dict[str, Any], faults: FaultList, source: str) -> Unit
             brackets = f"[{section}]" if section == "unit" else f"at least one [[{section}]]"
             faults.add((section,), section, f"missing; expected {brackets}")
     name, title, sample_time, late_horizon = read_unit(unit if unit is not None else _empty_unit())
+    inputs = tuple(read_input(table) for table in named["input"])
     sensors = tuple(read_sensor(table) for table in named["sensor"])
     tests = read_fault_tests(single(document, "fault_tests", faults), [item.tag for item in sensors])
     spec = UnitSpec(
         name=name,
         title=title,
         sample_time=sample_time,
-        inputs=tuple(read_input(table) for table in named["input"]),
+        inputs=inputs,
         sensors=sensors,
         estimates=tuple(read_estimate(table) for table in named["estimate"]),
         disturbances=tuple(read_disturbance(table) for table in named["disturbance"]),
@@ -103,9 +108,19 @@ def _unit_spec(document: dict[str, Any], faults: FaultList, source: str) -> Unit
         source_text=source,
     )
     check_whole(named, paths, faults)
+    check_schedules(spec, paths, faults)
     if unit is not None and unit.sound("sample_time"):
         check_dead_times(spec, paths, faults)
-    return spec
+    return spec if len(faults) else _in_operation(spec)
+
+
+def _in_operation(spec: UnitSpec) -> UnitSpec:
+    """Paths with a schedule as they are at the operating point of its tag."""
+    scaled = in_model_scale(spec)
+    points = operating_points(scaled)
+    there = [path_in_operation(path, points) for path in scaled.paths]
+    paths = zip(spec.paths, there, strict=True)
+    return replace(spec, paths=tuple(replace(now, schedule=path.schedule) for path, now in paths))
 
 
 def _empty_unit() -> Table:

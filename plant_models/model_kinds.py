@@ -101,6 +101,18 @@ def _numbers(value: object) -> tuple[float, ...]:
     return tuple(_number(item) for item in value)
 
 
+def _lists_of_times(value: object) -> tuple[tuple[float, ...], ...]:
+    if not isinstance(value, list):
+        raise RefusalError("which is no list")
+    lists: list[tuple[float, ...]] = []
+    for place, item in enumerate(value, start=1):
+        try:
+            lists.append(_list_of(_positive_duration)(item))
+        except RefusalError as error:
+            raise RefusalError(f"where item {place} is not: {error}") from None
+    return tuple(lists)
+
+
 def _flag(value: object) -> bool:
     if not isinstance(value, bool):
         raise RefusalError("")
@@ -208,6 +220,7 @@ RANGE = Kind("two finite numbers, the lower first, such as [0.0, 20.0]", _range,
 COEFFICIENTS: Kind[tuple[float, ...]] = Kind(
     "a list of finite numbers in descending powers of s, such as [16.7, 1.0]", _numbers, (1.0,)
 )
+NUMBERS: Kind[tuple[float, ...]] = Kind("a list of finite numbers such as [8.0, 15.0]", _numbers, (0.0, 1.0))
 FLAG = Kind("true or false", _flag, False)
 DURATION = Kind(durations.EXPECTED, _duration, 1.0)
 SAMPLE_TIME = Kind(f"{durations.EXPECTED}, above zero", _sample_time, 1.0)
@@ -216,6 +229,9 @@ LATE_HORIZON: Kind[float | None] = Kind(f"{durations.EXPECTED}, above zero", _po
 TIME_UNIT = Kind("a unit of time such as 'min'", durations.parse_time_unit, 1.0)
 TIME_CONSTANTS: Kind[tuple[float, ...]] = Kind(
     "a list of times above zero, such as ['4.2 min', '0.6 min']", _list_of(_positive_duration), (1.0,)
+)
+TABLE_OF_TIMES: Kind[tuple[tuple[float, ...], ...]] = Kind(
+    "a list of lists of times above zero such as [['5 min'], ['3 min']]", _lists_of_times, ()
 )
 LEAD_TIMES: Kind[tuple[float, ...]] = Kind(
     "a list of times other than zero, negative for inverse response, such as ['-0.5 min']",

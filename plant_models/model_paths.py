@@ -16,6 +16,7 @@ from plant_models.model_kinds import (
     TIME_CONSTANTS,
     TIME_UNIT,
 )
+from plant_models.model_schedules import Points, read_points, with_schedule
 from plant_models.model_tables import Table
 from plant_models.quoting import quoted
 from plant_models.specification import PathSpec
@@ -23,7 +24,7 @@ from plant_models.specification import PathSpec
 HIGHEST_DEGREE = 20
 """Coefficients of higher polynomials say nothing reliable about their roots in double precision."""
 
-_FACTORED = ("gain", "time_constants", "lead_times", "integrating")
+_FACTORED = ("gain", "time_constants", "lead_times", "integrating", "schedule")
 _POLYNOMIAL = ("numerator", "denominator")
 _WHY_TIME_UNIT = (
     ", since numerator and denominator, and the gain of an integrating path, are in some unit of time"
@@ -46,10 +47,10 @@ def read_path(table: Table) -> PathSpec:
 
 
 def _factored(table: Table, source: str, target: str, dead_time: float) -> PathSpec:
-    gain = table.read("gain", NOT_ZERO, ", or numerator with denominator")
-    time_constants = table.read_or("time_constants", TIME_CONSTANTS, ())
+    points = read_points(table)
+    gain, time_constants = _parameters(table, points)
     lead_times = table.read_or("lead_times", LEAD_TIMES, ())
-    integrating = table.read_or("integrating", FLAG, False)
+    integrating, per = table.read_or("integrating", FLAG, False), 1.0
     if integrating:
         per = table.read("time_unit", TIME_UNIT, _WHY_TIME_UNIT)
         if table.sound("gain") and gain / per == 0.0:
@@ -57,17 +58,30 @@ def _factored(table: Table, source: str, target: str, dead_time: float) -> PathS
         gain /= per
     else:
         table.read_or("time_unit", TIME_UNIT, 1.0)
-    poles = len(time_constants) + integrating
+    before = integrating and points is None
+    poles = len(time_constants) + before
     if table.sound("time_constants", "lead_times", "integrating") and len(lead_times) > poles:
         table.fault(
             "lead_times",
             f"expected a proper transfer function, with no more lead times than time constants; "
-            f"got {len(lead_times)} against {poles}{' (the integrator counted)' if integrating else ''}",
+            f"got {len(lead_times)} against {poles}{' (the integrator counted)' if before else ''}",
         )
     for key, times in (("time_constants", time_constants), ("lead_times", lead_times)):
         if len(times) > HIGHEST_DEGREE:
             table.fault(key, f"expected at most {HIGHEST_DEGREE} times; got {len(times)}")
-    return PathSpec(source, target, gain, time_constants, lead_times, dead_time, integrating)
+    path = PathSpec(source, target, gain, time_constants, lead_times, dead_time, integrating)
+    return with_schedule(path, points, per)
+
+
+def _parameters(table: Table, points: Points | None) -> tuple[float, tuple[float, ...]]:
+    """Gain and time constants; those of the first point where the schedule gives them."""
+    if points is not None and points.gain is not None:
+        gain = 1.0
+    else:
+        gain = table.read("gain", NOT_ZERO, ", or numerator with denominator")
+    if points is not None and points.time_constants is not None:
+        return gain, points.time_constants[0] if points.time_constants else ()
+    return gain, table.read_or("time_constants", TIME_CONSTANTS, ())
 
 
 def _polynomial(table: Table, source: str, target: str, dead_time: float) -> PathSpec:

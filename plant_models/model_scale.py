@@ -2,8 +2,8 @@
 
 With T a tag's transform, op its operating point and s = |T'(op)|: the operating point becomes T(op); noise_sd, tolerance,
 bias_walk_sd, bias_initial_sd and lab.sd, which the file gives in the tag's engineering unit, become s times as large;
-range and validated_range keep their place about the operating point, s times as wide. Gains, disturbances, gate,
-interval_scale and everything without a unit are the same in both.
+range and validated_range keep their place about the operating point, s times as wide. The points of a schedule become
+those of its tag's scale. Gains, disturbances, gate, interval_scale and everything without a unit are the same in both.
 """
 
 from __future__ import annotations
@@ -15,7 +15,7 @@ from typing import Any, TypeVar
 import numpy as np
 
 from plant_models.elementary_arrays import Floats
-from plant_models.specification import EstimateSpec, InputSpec, Range, SensorSpec, UnitSpec
+from plant_models.specification import EstimateSpec, InputSpec, PathSpec, Range, SensorSpec, UnitSpec
 
 Variable = InputSpec | SensorSpec | EstimateSpec
 Item = TypeVar("Item", InputSpec, SensorSpec, EstimateSpec)
@@ -32,6 +32,7 @@ def in_model_scale(spec: UnitSpec) -> UnitSpec:
         inputs=tuple(_scaled(item) for item in spec.inputs),
         sensors=tuple(_scaled(item) for item in spec.sensors),
         estimates=tuple(_scaled(item) for item in spec.estimates),
+        paths=tuple(_path_scaled(path, spec) for path in spec.paths),
     )
 
 
@@ -124,6 +125,23 @@ def _scaled(item: Item) -> Item:
     if isinstance(item, EstimateSpec) and item.lab is not None:
         changed["lab"] = replace(item.lab, sd=scale * item.lab.sd)
     return replace(item, transform=None, **changed)
+
+
+def _path_scaled(path: PathSpec, spec: UnitSpec) -> PathSpec:
+    """The path with its schedule's points in the scale of their tag, ascending there too."""
+    schedule = path.schedule
+    item = next((item for item in spec.inputs if schedule is not None and item.tag == schedule.tag), None)
+    if schedule is None or item is None or item.transform is None:
+        return path
+    at = [one_to_model(item, value) for value in schedule.at]
+    order = range(len(at)) if at[0] < at[-1] else range(len(at) - 1, -1, -1)
+    moved = replace(
+        schedule,
+        at=tuple(at[k] for k in order),
+        gain=tuple(schedule.gain[k] for k in order),
+        time_constants=tuple(schedule.time_constants[k] for k in order),
+    )
+    return replace(path, schedule=moved)
 
 
 def _about(item: Variable, limits: Range, centre: float) -> Range:

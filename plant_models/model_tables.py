@@ -26,6 +26,9 @@ class FaultList:
         """A fault at a place, under the key that the message shall name."""
         self._faults.append(Fault(self._file, self.line(place), printable(key), message))
 
+    def __len__(self) -> int:
+        return len(self._faults)
+
     def line(self, place: Place) -> int:
         return self._lines.line(*place)
 

@@ -7,7 +7,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from plant_models.specification import UnitSpec
+from plant_models.specification import PathSpec, UnitSpec
 
 Vector = NDArray[np.float64]
 Matrix = NDArray[np.float64]
@@ -77,6 +77,9 @@ class PlantModel:
     """The specification in the scale of the transfer functions, ``spec`` itself where no tag has a transform: what the
     estimator and the tests compute with. Paths hold between values in that scale.
     """
+    scheduled: tuple[tuple[int, PathSpec], ...] = ()
+    """Index among ``paths`` of each path with a schedule, and its specification; ``paths`` holds it as it is at the
+    operating point of its schedule's tag."""
 
     @property
     def input_tags(self) -> tuple[str, ...]:

@@ -67,7 +67,9 @@ def realise(path: PathSpec) -> Realisation:
     found = faults(path)
     if found:
         raise RealisationError(*found)
-    if path.numerator is None:
+    if path.schedule is not None:
+        system, integrating = _as_written(path), path.integrating
+    elif path.numerator is None:
         system, integrating = _factored(path), path.integrating
     else:
         system, integrating = _polynomial(path)
@@ -87,6 +89,15 @@ def _factored(path: PathSpec) -> _System:
     if path.integrating:
         system = _integrated(system, unpaired)
     return system._replace(C=gain * system.C, D=gain * system.D)
+
+
+def _as_written(path: PathSpec) -> _System:
+    """A cascade in the order of the file, the gain in B and D: the form of :mod:`plant_models.schedules`."""
+    gain, lags, leads = float(path.gain or 0.0), list(path.time_constants), list(path.lead_times)
+    system = _cascade(lags, leads + [0.0] * (len(lags) - len(leads)))
+    if path.integrating:
+        system = _integrated(system)
+    return system._replace(B=gain * system.B, D=gain * system.D)
 
 
 def _cascade(lags: list[float], leads: list[float]) -> _System:

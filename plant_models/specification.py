@@ -97,6 +97,19 @@ class DisturbanceSpec:
 
 
 @dataclass(frozen=True, slots=True)
+class ScheduleSpec:
+    """Gain and time constants of a path at ascending values of a measured input, linear in between, held outside.
+
+    ``time_constants``: one tuple for each value, all of one length, in the order in which the lags act.
+    """
+
+    tag: str
+    at: tuple[float, ...]
+    gain: tuple[float, ...]
+    time_constants: tuple[tuple[float, ...], ...]
+
+
+@dataclass(frozen=True, slots=True)
 class PathSpec:
     """One transfer function, from an input or a disturbance to a sensor or an estimate.
 
@@ -116,6 +129,8 @@ class PathSpec:
     integrating: bool = False
     numerator: tuple[float, ...] | None = None
     denominator: tuple[float, ...] | None = None
+    schedule: ScheduleSpec | None = None
+    """Where there is one, ``gain`` and ``time_constants`` are those at the operating point of its tag."""
 
 
 @dataclass(frozen=True, slots=True)

@@ -22,6 +22,7 @@ from softsensor.estimation.kalman import (
     unless_rounding,
 )
 from softsensor.estimation.kernel import CHUNK, EstimatorState, Floats, Ints, Kernel, empty_states
+from softsensor.estimation.schedules import follow_schedules, private
 
 UNSOUND = -1
 """Returned where an innovation variance is not positive and finite."""
@@ -225,6 +226,7 @@ def run_block(
     with the estimator's before each cycle whose number is a multiple of CHUNK.
     """
     kept = empty_states(est, 0) if kept is None else kept
+    kernel = private(kernel)
     return int(_loop(kernel, est, design, tests, known, data, out, testing, kept, _work_space(kernel)))
 
 
@@ -265,6 +267,7 @@ def _loop(
         if k == keep_at and place < len(kept.head):
             _keep(est, P, kept, place)
             keep_at, place = keep_at + CHUNK, place + 1
+        follow_schedules(kernel, data.u[k])
         accept_inputs(kernel, est, data.u[k])
         input_driven_outputs(kernel, est, base)
         _innovate(kernel, x, P, base, k, data, out)

@@ -15,6 +15,7 @@ from numpy.typing import NDArray
 from plant_models.errors import Problem
 from plant_models.model_scale import from_model, one_to_model, slopes, to_model
 from plant_models.plant_model import PlantModel
+from plant_models.specification import Range
 from softsensor.compiled_cycle import BlockInputs, BlockOutputs, empty_outputs, run_block
 from softsensor.cycle_results import CycleResults, Digest, flag_bytes, outside, result_rows
 from softsensor.detection.detection_design import DetectionDesign, sensors_in_use
@@ -60,6 +61,8 @@ class UnitDesign:
     fresh: Ints
     limits: tuple[Floats, Floats]
     """Lowest and highest value of each sensor that is still a reading."""
+    scheduled: tuple[tuple[int, Range], ...] = ()
+    """Inputs by which transfer functions go, each with the range that their schedules cover."""
 
 
 @dataclass(frozen=True)
@@ -317,8 +320,8 @@ def estimate_status(
     estimate: Floats,
     doubts: tuple[NDArray[np.bool_], NDArray[np.bool_]],
 ) -> NDArray[np.int8]:
-    """1 (Uncertain) where an input is doubtful or was missing, something is outside its validated range, or a sensor is
-    left out, or an estimate lies beyond its physical limits.
+    """1 (Uncertain) where an input is doubtful or was missing, something is outside its validated range or a schedule, a
+    sensor is left out, or an estimate lies beyond its physical limits.
 
     :param doubts: which sensors are left out (N, n_sensors); whether inputs are or were missing (N,).
     """
@@ -330,6 +333,8 @@ def estimate_status(
     for j, item in enumerate(spec.inputs):
         if item.validated_range is not None:
             doubtful |= outside(readings.u[:n, j], item.validated_range)
+    for j, covered in design.scheduled:
+        doubtful |= outside(readings.u[:n, j], covered)
     status = np.repeat(doubtful[:, None], len(spec.estimates), axis=1)
     for e, estimated in enumerate(spec.estimates):
         if estimated.validated_range is not None:

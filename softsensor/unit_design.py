@@ -9,6 +9,7 @@ import numpy as np
 from plant_models.building import build_plant_model
 from plant_models.model_file import read_model_file
 from plant_models.plant_model import PlantModel
+from plant_models.schedules import scheduled_ranges
 from softsensor.cycle import BEYOND_ABOVE, BEYOND_BELOW, UnitDesign
 from softsensor.detection.beginning import forgetting
 from softsensor.detection.design_of_tests import fault_test_design
@@ -67,4 +68,6 @@ def design_unit(model: PlantModel) -> UnitDesign:
     low = np.array([item.range[0] - BEYOND_BELOW * (item.range[1] - item.range[0]) for item in spec.sensors])
     high = np.array([item.range[1] + BEYOND_ABOVE * (item.range[1] - item.range[0]) for item in spec.sensors])
     fresh = np.array([int(not item.on_change) for item in spec.sensors], dtype=np.int64)
-    return UnitDesign(model, kernel, detection, fresh, (low, high))
+    covered = scheduled_ranges(spec)
+    scheduled = tuple((j, covered[tag]) for j, tag in enumerate(model.input_tags) if tag in covered)
+    return UnitDesign(model, kernel, detection, fresh, (low, high), scheduled)

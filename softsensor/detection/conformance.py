@@ -24,9 +24,9 @@ from typing import NamedTuple
 
 import numpy as np
 
-from softsensor.detection.elementary import error_function, exponential, logarithm
 from softsensor.detection.signatures import Hypothesis
 from softsensor.estimation.compiling import allocating, uncounted
+from softsensor.estimation.elementary import error_function, exponential, logarithm
 from softsensor.estimation.kernel import Floats, Ints
 
 BLOCK = 16

@@ -18,8 +18,8 @@ from typing import NamedTuple
 import numpy as np
 from numba import njit
 
-from softsensor.detection.elementary import exponential, logarithm
 from softsensor.detection.signatures import Hypothesis
+from softsensor.estimation.elementary import exponential, logarithm
 from softsensor.estimation.kernel import Floats, Ints
 
 NAMING_RATIO = 10.0

@@ -19,8 +19,8 @@ from numba import njit
 
 from plant_models.plant_model import PlantModel
 from softsensor.detection.diagnosis import Likelihoods, recent
-from softsensor.detection.elementary import exponential, logarithm
 from softsensor.detection.signatures import Hypothesis, SteadyFilter, filter_response, whiten
+from softsensor.estimation.elementary import exponential, logarithm
 from softsensor.estimation.kernel import Floats, Ints, Kernel
 
 PRIOR_SD = 0.2

@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import numpy as np
 
-from softsensor.detection.elementary import error_function
 from softsensor.detection.state_of_tests import (
     LOST,
     LOST_ENDED,
@@ -15,6 +14,7 @@ from softsensor.detection.state_of_tests import (
     TestState,
 )
 from softsensor.estimation.compiling import uncounted
+from softsensor.estimation.elementary import error_function
 
 MIN_REPEATS = 10
 """Fewer equal readings than this are never called stuck."""

@@ -8,7 +8,6 @@ import numpy as np
 
 from softsensor.detection import state_of_tests as told
 from softsensor.detection.detection_design import DetectionDesign, sensors_in_use
-from softsensor.detection.elementary import exponential
 from softsensor.detection.flags import (
     Flag,
     Kind,
@@ -16,6 +15,7 @@ from softsensor.detection.flags import (
 )
 from softsensor.detection.outcomes import SHIFT_KINDS, FollowUp, Moment, cleared, opened
 from softsensor.detection.state_of_tests import TestState
+from softsensor.estimation.elementary import exponential
 
 QUIET = 360
 """Cycles without another spike, or with the sums down, after which a spike's or a shift's flag clears: a fault that comes

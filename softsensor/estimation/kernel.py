@@ -12,6 +12,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from plant_models.plant_model import DiscretePath, Matrix, PlantModel
+from softsensor.estimation.schedule_tables import Schedules, schedule_tables
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -70,6 +71,8 @@ class Kernel(NamedTuple):
     """The same runs as spans of columns, joined across mixed ones where they move alike: longer copies."""
     mixed: Ints
     """The other rows of A, ascending."""
+    schedules: Schedules
+    """Paths that change with an input; the arrays above hold them as they are at the operating point."""
 
 
 class EstimatorState(NamedTuple):
@@ -201,6 +204,7 @@ def build_kernel(model: PlantModel) -> Kernel:
         np.array([item.noise_sd**2 for item in spec.sensors], dtype=np.float64),
         np.array([item.gate for item in spec.sensors], dtype=np.float64),
         *moved_rows(part.A),
+        schedule_tables(model),
     )
 
 

@@ -37,6 +37,7 @@ from softsensor.estimation.kalman import (
     row_variance,
 )
 from softsensor.estimation.kernel import EstimatorState, Floats, Ints, Kernel
+from softsensor.estimation.schedules import follow_schedules
 
 
 @dataclass(frozen=True)
@@ -168,6 +169,7 @@ def run_forward(kernel: Kernel, est: EstimatorState, data: ScalarReadings, trace
     used = np.zeros(len(data.at), dtype=np.int64)
     stop = 0
     for k in range(data.u.shape[0]):
+        follow_schedules(kernel, data.u[k])
         accept_inputs(kernel, est, data.u[k])
         input_driven_outputs(kernel, est, base)
         first, stop = stop, _end_of_cycle(data.at, stop, k)

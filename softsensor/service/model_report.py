@@ -8,12 +8,8 @@ import math
 from collections.abc import Iterator
 from dataclasses import dataclass
 
-import numpy as np
-
-from plant_models.model_scale import variables
 from plant_models.plant_model import PlantModel
-from plant_models.specification import PathSpec, UnitSpec
-from plant_models.transfer_function import dc_gain, is_integrating, poles, ramp_gain, zeros
+from plant_models.specification import UnitSpec
 from softsensor.detection.absorption import LATEST_FLAG
 from softsensor.detection.sheet import InputLine, SheetLine, detectability_sheet
 from softsensor.estimation.observability import (
@@ -25,7 +21,8 @@ from softsensor.estimation.observability import (
 )
 from softsensor.estimation.steady_state import SteadyState, steady_state
 from softsensor.estimation.what_helps import LAB_INTERVAL, Prospects, prospects
-from softsensor.service.scale_report import ScaleReport, scale_reports, scale_unit
+from softsensor.service.path_reports import PathReport, path_reports
+from softsensor.service.scale_report import ScaleReport, scale_reports
 from softsensor.service.second_instrument import Mend, mends
 from softsensor.unit_design import design_unit
 
@@ -41,25 +38,6 @@ path.
 """
 FASTEST_SAMPLING = 0.001
 """... of the fastest path's slowest time constant below which a longer sample time would do as well."""
-
-
-@dataclass(frozen=True, slots=True)
-class PathReport:
-    """One transfer function: steady gain (per second where integrating) and its unit, lags, dead time in seconds
-    and samples.
-    """
-
-    source: str
-    target: str
-    gain: float
-    gain_unit: str
-    integrating: bool
-    time_constants: tuple[float, ...]
-    """-1 / Re(pole) in seconds, longest first; an oscillating pair appears twice."""
-    oscillating: bool
-    inverse_response: bool
-    dead_time: float
-    dead_time_samples: float
 
 
 @dataclass(frozen=True, slots=True)
@@ -120,7 +98,7 @@ def model_report(model: PlantModel, lab_interval: float = LAB_INTERVAL) -> Model
     :raises RunLengthError: a false-flag interval that no test can keep.
     """
     spec = model.spec
-    paths = tuple(_path(path, spec) for path in spec.paths)
+    paths = tuple(line for path in spec.paths for line in path_reports(path, spec))
     sampling = _sampling(paths, spec.sample_time)
     disturbances, estimates = disturbance_knowledge(model), estimate_knowledge(model)
     sheet = detectability_sheet(design_unit(model).detection)
@@ -141,6 +119,7 @@ def model_report(model: PlantModel, lab_interval: float = LAB_INTERVAL) -> Model
         sheet.inputs,
         mends(model, sensors),
         (
+            *_about_schedules(spec),
             *_about_sampling(sampling),
             *_about_disturbances(disturbances),
             *_about_estimates(estimates),
@@ -159,29 +138,14 @@ def _about_commissioning(spec: UnitSpec) -> Iterator[str]:
         yield f"{tag}: its decision intervals are {factor:g} times as wide as independent innovations would need"
 
 
-def _path(path: PathSpec, spec: UnitSpec) -> PathReport:
-    roots = poles(path)
-    integrating = is_integrating(path)
-    lags = sorted((-1.0 / float(pole.real) for pole in roots if pole.real < 0.0), reverse=True)
-    return PathReport(
-        path.source,
-        path.target,
-        ramp_gain(path) if integrating else dc_gain(path),
-        _gain_unit(path, spec) + (" per s" if integrating else ""),
-        integrating,
-        tuple(lags),
-        bool(np.any(np.abs(roots.imag) > 1e-6 * np.abs(roots))),
-        bool(np.any(zeros(path).real > 0.0)),
-        path.dead_time,
-        path.dead_time / spec.sample_time,
-    )
-
-
-def _gain_unit(path: PathSpec, spec: UnitSpec) -> str:
-    """Output unit per input unit, both of differences. A disturbance has no unit but its own."""
-    units = {item.tag: scale_unit(item) for item in variables(spec)}
-    source = units.get(path.source, "unit of the disturbance")
-    return f"{units[path.target]} per {source}"
+def _about_schedules(spec: UnitSpec) -> Iterator[str]:
+    """Everything below the transfer functions is worked out for one model."""
+    for item in spec.inputs:
+        if any(path.schedule is not None and path.schedule.tag == item.tag for path in spec.paths):
+            yield (
+                f"transfer functions change with {item.tag}: tests, signatures and all that is said here of sensors and "
+                f"estimates are computed at {item.tag} = {item.operating_point:g} {item.unit}"
+            )
 
 
 def _sampling(paths: tuple[PathReport, ...], sample_time: float) -> SamplingReport:

@@ -9,7 +9,8 @@ from typing import NamedTuple
 from plant_models.units import difference_unit
 from softsensor.estimation.observability import EstimateKnowledge
 from softsensor.estimation.what_helps import Change, Prospects
-from softsensor.service.model_report import ModelReport, PathReport, duration_text
+from softsensor.service.model_report import ModelReport, duration_text
+from softsensor.service.path_reports import PathReport
 
 ADDED, LOST = 2, 1
 """Changes shown of each estimate: the best, and the losses that hurt most."""
@@ -46,7 +47,7 @@ def _path(path: PathReport) -> tuple[str, ...]:
         if has
     ]
     return (
-        f"{path.source} -> {path.target}",
+        f"{path.source} -> {path.target}" + (f" at {path.at}" if path.at else ""),
         f"{path.gain:.4g} {path.gain_unit}",
         ", ".join(duration_text(lag) for lag in path.time_constants) or "none",
         duration_text(path.dead_time),

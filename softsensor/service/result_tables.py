@@ -8,7 +8,7 @@ import numpy as np
 import pandas as pd
 
 from plant_models.model_scale import columns_from_model
-from plant_models.specification import EstimateSpec
+from plant_models.specification import EstimateSpec, Range
 from softsensor.cycle import UnitDesign
 from softsensor.cycle_results import CycleResults, outside
 from softsensor.detection.conformance import BLOCK, LOOK_EVERY_BLOCKS
@@ -71,6 +71,7 @@ def reasons(design: UnitDesign, readings: CycleReadings, results: CycleResults) 
         [
             readings.u_quality[doubtful],
             _outside_each(readings.u[doubtful], [item.validated_range for item in spec.inputs]),
+            _outside_each(readings.u[doubtful], _covered(design)),
             results.settling[doubtful],
             results.left_out[doubtful],
             _codes(results.doubts[doubtful]),
@@ -113,6 +114,12 @@ def _outside_each(values: np.ndarray, limits: Sequence[tuple[float, float] | Non
     return out
 
 
+def _covered(design: UnitDesign) -> list[Range | None]:
+    """By input the range that schedules cover; None where none goes by it."""
+    covered = dict(design.scheduled)
+    return [covered.get(j) for j in range(len(design.model.spec.inputs))]
+
+
 def _shared_reasons(design: UnitDesign, readings: CycleReadings, results: CycleResults, k: int) -> list[str]:
     spec, found = design.model.spec, []
     for j, item in enumerate(spec.inputs):
@@ -121,6 +128,9 @@ def _shared_reasons(design: UnitDesign, readings: CycleReadings, results: CycleR
             found.append(INPUT_REASONS[quality].format(item.tag))
         if outside(readings.u[k : k + 1, j], item.validated_range)[0]:
             found.append(f"{item.tag} is outside its validated range")
+    for j, covered in design.scheduled:
+        if outside(readings.u[k : k + 1, j], covered)[0]:
+            found.append(f"{spec.inputs[j].tag} is outside the schedule, {covered[0]:g} to {covered[1]:g}")
     if results.settling[k] == 1 and not found:
         found.append("inputs were missing; what they did meanwhile is not in the estimate")
     found += [f"{item.tag} is left out" for i, item in enumerate(spec.sensors) if results.left_out[k, i]]

@@ -24,6 +24,7 @@ from softsensor.detection.flags import FlagBook
 from softsensor.errors import ReplayError
 from softsensor.estimation.kernel import EstimatorState
 from softsensor.estimation.late_readings import LateReadings
+from softsensor.estimation.schedules import private
 from softsensor.estimation.smoothing import (
     ScalarReadings,
     SmoothedCycles,
@@ -227,7 +228,7 @@ class _Interval:
     def forward(self, estimator: EstimatorState, data: ScalarReadings, row: int) -> Trace:
         """Run a chunk; ``estimator`` is advanced in place."""
         trace = empty_trace(len(data.u), len(data.at), self.design.kernel)
-        if not run_forward(self.design.kernel, estimator, data, trace):
+        if not run_forward(private(self.design.kernel), estimator, data, trace):
             raise self.unsound(row)
         return trace
 

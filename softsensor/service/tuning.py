@@ -18,6 +18,7 @@ from plant_models.building import build_plant_model
 from plant_models.durations import parse_duration
 from plant_models.model_scale import to_model
 from plant_models.plant_model import PlantModel
+from plant_models.schedules import slowest_lag
 from plant_models.specification import UnitSpec
 from softsensor.cycle import UnitDesign, rerun, usable, usable_inputs
 from softsensor.detection.flags import FlagBook
@@ -192,6 +193,9 @@ def _settling(model: PlantModel) -> int:
         slow = sizes[(sizes > 0.0) & (sizes < 1.0 - 1e-9)]
         decay = -SETTLED / float(np.log(slow.max())) if slow.size else 0.0
         longest = max(longest, path.whole_delays + 1 + decay)
+    for number, scheduled in model.scheduled:
+        decay = SETTLED * slowest_lag(scheduled) / model.spec.sample_time
+        longest = max(longest, model.paths[number].whole_delays + 1 + decay)
     return math.ceil(longest)
 
 

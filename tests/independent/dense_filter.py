@@ -2,7 +2,7 @@
 
 One augmented matrix for all disturbances, a delay line of its own for every path, batch updates with the inverse of
 the innovations' covariance, laboratory results as further rows at the cycle of their sampling. Known inputs enter
-by superposed step responses. Slow and plain on purpose.
+by superposed step responses, through a schedule by matrices made anew in every cycle. Slow and plain on purpose.
 """
 
 from __future__ import annotations
@@ -12,6 +12,7 @@ from dataclasses import dataclass
 from itertools import pairwise
 
 import numpy as np
+from independent.scheduled_paths import scheduled_response
 from independent.transfer_paths import Array, Mask, continuous, held_transition, response_to_held, split_delay
 
 from plant_models.specification import DisturbanceSpec, EstimateSpec, PathSpec, SensorSpec, UnitSpec
@@ -82,7 +83,11 @@ def input_driven(spec: UnitSpec, u: Array) -> Array:
         for path in spec.paths:
             if path.source == item.tag:
                 deviation = u[:, j] - item.operating_point
-                here = response_to_held(continuous(path, spec.sample_time), deviation)
+                if path.schedule is not None:
+                    values = u[:, [other.tag for other in spec.inputs].index(path.schedule.tag)]
+                    here = scheduled_response(path, deviation, values, spec.sample_time)
+                else:
+                    here = response_to_held(continuous(path, spec.sample_time), deviation)
                 out[:, names.index(path.target)] += here
     return out
 

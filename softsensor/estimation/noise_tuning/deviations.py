@@ -11,6 +11,7 @@ from numpy.typing import NDArray
 from plant_models.plant_model import PlantModel
 from softsensor.estimation.input_driven import accept_inputs, advance_input_driven, input_driven_outputs
 from softsensor.estimation.kernel import EstimatorState, Floats, Ints, Kernel, build_kernel, initial_state
+from softsensor.estimation.schedules import follow_schedules, private
 
 
 class Deviations(NamedTuple):
@@ -27,6 +28,7 @@ class Deviations(NamedTuple):
 @njit(cache=True)
 def _explained(kernel: Kernel, state: EstimatorState, u: Floats, out: Floats, work: Floats) -> None:
     for k in range(u.shape[0]):
+        follow_schedules(kernel, u[k])
         accept_inputs(kernel, state, u[k])
         input_driven_outputs(kernel, state, out[k])
         advance_input_driven(kernel, state, work)
@@ -39,7 +41,7 @@ def deviations(model: PlantModel, u: Floats, y: Floats, scale: Floats, doubtful:
     :param doubtful: (N,) not zero where an input is missing: what it did is unknown, so readings then, and for twice as
         long afterwards, are left out.
     """
-    kernel = build_kernel(model)
+    kernel = private(build_kernel(model))
     outputs = np.zeros((len(u), kernel.n_sensors + kernel.n_estimates))
     _explained(
         kernel,

@@ -7,7 +7,7 @@ import math
 from hypothesis import example, given, settings
 from hypothesis import strategies as st
 
-from softsensor.detection.elementary import error_function, exponential, logarithm
+from softsensor.estimation.elementary import error_function, exponential, logarithm
 
 TOLERANCE = 1e-14
 
