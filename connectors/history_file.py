@@ -28,12 +28,12 @@ def read_history(path: str | Path, tags: Sequence[str], timezone: str | None = N
     """
     file = Path(path)
     origin = Origin(str(path), HistoryFileError)
-    wanted = _wanted(tags)
+    wanted = wanted_columns(tags)
     if is_parquet(file, origin):
         table = parquet_table(file, origin, wanted)
     else:
         table = csv_table(file, origin, wanted, set(tags).__contains__)
-    return _history(table, tags, timezone)
+    return history_of(table, tags, timezone)
 
 
 def history_from_frame(
@@ -43,10 +43,13 @@ def history_from_frame(
 
     :raises HistoryFileError: as :func:`read_history`, with ``name`` in place of the file.
     """
-    return _history(frame_table(frame, Origin(name, HistoryFileError), _wanted(tags)), tags, timezone)
+    return history_of(
+        frame_table(frame, Origin(name, HistoryFileError), wanted_columns(tags)), tags, timezone
+    )
 
 
-def _wanted(tags: Sequence[str]) -> Callable[[str], bool]:
+def wanted_columns(tags: Sequence[str]) -> Callable[[str], bool]:
+    """Which columns of a history belong to these tags."""
     return {TIME, *tags, *(_quality(tag) for tag in tags)}.__contains__
 
 
@@ -54,7 +57,11 @@ def _quality(tag: str) -> str:
     return f"{tag}.quality"
 
 
-def _history(table: Table, tags: Sequence[str], timezone: str | None) -> History:
+def history_of(table: Table, tags: Sequence[str], timezone: str | None) -> History:
+    """A history from a table with a time column and a column per tag.
+
+    :raises HistoryFileError: with row, column and what was expected.
+    """
     origin = table.origin
     zone = time_zone(timezone, origin)
     if TIME not in table.columns:

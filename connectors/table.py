@@ -2,8 +2,9 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Mapping
-from dataclasses import dataclass
+from collections.abc import Callable, Iterator, Mapping
+from contextlib import contextmanager
+from dataclasses import dataclass, replace
 from datetime import date
 from pathlib import Path
 from typing import Any
@@ -29,6 +30,8 @@ class Origin:
     error: type[ConnectorError]
     line_of_row: Callable[[int], int | None] | None = None
     """The text line of a row, both counted from 1; asked only when there is a fault."""
+    rows_before: int = 0
+    """Rows of the file that stand before this table's."""
 
     def fault(self, message: str, row: int | None = None, column: str | None = None) -> ConnectorError:
         """The error to raise; ``row`` is an index from 0, told from 1."""
@@ -41,8 +44,9 @@ class Origin:
 
     def row(self, row: int) -> str:
         """``row 12``, or ``row 12 (line 13)`` of a text file; ``row`` is an index from 0."""
-        line = self.line_of_row(row + 1) if self.line_of_row else None
-        return f"row {row + 1}" if line is None else f"row {row + 1} (line {line})"
+        place = self.rows_before + row + 1
+        line = self.line_of_row(place) if self.line_of_row else None
+        return f"row {place}" if line is None else f"row {place} (line {line})"
 
 
 @dataclass(frozen=True)
@@ -83,17 +87,52 @@ def is_parquet(path: Path, origin: Origin) -> bool:
 
 def parquet_table(path: Path, origin: Origin, wanted: Callable[[str], bool]) -> Table:
     """The wanted columns of a Parquet file."""
+    with _parquet_file(path, origin) as file:
+        names = tuple(file.schema_arrow.names)
+        check_names(origin, names)
+        content = file.read(columns=[name for name in names if wanted(name)])
+        rows = file.metadata.num_rows
+    columns = {name: _single(content.column(name)) for name in content.column_names if wanted(name)}
+    return Table(origin, names, columns, rows)
+
+
+def parquet_parts(path: Path, origin: Origin, wanted: Callable[[str], bool], rows: int) -> Iterator[Table]:
+    """The same, at most ``rows`` rows at a time; faults tell the row of the file."""
+    with _parquet_file(path, origin) as file:
+        names = tuple(file.schema_arrow.names)
+        check_names(origin, names)
+        chosen, before = [name for name in names if wanted(name)], 0
+        for batch in file.iter_batches(batch_size=rows, columns=chosen):
+            columns = {name: _single(batch.column(name)) for name in batch.schema.names if wanted(name)}
+            yield Table(replace(origin, rows_before=before), names, columns, batch.num_rows)
+            before += batch.num_rows
+
+
+def parquet_rows(path: Path, origin: Origin) -> int:
+    """How many rows a Parquet file has."""
+    with _parquet_file(path, origin) as file:
+        return int(file.metadata.num_rows)
+
+
+def parquet_end(path: Path, origin: Origin, name: str) -> Table:
+    """One column of the last rows of a Parquet file that has any: those of its last group."""
+    with _parquet_file(path, origin) as file:
+        names = tuple(file.schema_arrow.names)
+        last = next(k for k in range(file.num_row_groups - 1, -1, -1) if file.metadata.row_group(k).num_rows)
+        content = file.read_row_group(last, columns=[name])
+        before = sum(file.metadata.row_group(k).num_rows for k in range(last))
+    columns = {name: _single(content.column(name))}
+    return Table(replace(origin, rows_before=before), names, columns, content.num_rows)
+
+
+@contextmanager
+def _parquet_file(path: Path, origin: Origin) -> Iterator[Any]:
     try:
         with pq.ParquetFile(path) as file:
-            names = tuple(file.schema_arrow.names)
-            check_names(origin, names)
-            content = file.read(columns=[name for name in names if wanted(name)])
-            rows = file.metadata.num_rows
+            yield file
     except (pa.ArrowException, OSError) as error:
         message = f"is not a whole Parquet file, truncated or damaged: {_one_line(error)}"
         raise origin.fault(message) from error
-    columns = {name: _single(content.column(name)) for name in content.column_names if wanted(name)}
-    return Table(origin, names, columns, rows)
 
 
 def frame_table(frame: pd.DataFrame, origin: Origin, wanted: Callable[[str], bool]) -> Table:
