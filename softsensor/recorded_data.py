@@ -13,6 +13,7 @@ import pandas as pd
 from connectors.files import history_from_frame, lab_from_frame, late_from_frame
 from connectors.history import History, LateRows
 from connectors.lab_results import LabResults, place_lab
+from connectors.long_history import LongHistory
 from connectors.time_column import time_text
 from plant_models.plant_model import PlantModel
 from softsensor.detection.flags import Note
@@ -24,6 +25,7 @@ from softsensor.records import series
 from softsensor.records.engine import Database, open_database
 from softsensor.records.reader import find_unit, revisions_of
 from softsensor.service.assembly import assemble_blocks, assemble_with_late, history_cycles, rules_of
+from softsensor.service.long_assembly import assemble_long
 from softsensor.service.plant_state import StateRule, recorded_changes
 from softsensor.service.replay import Replay, cut_parts, gathered, horizon_of, parts_of
 from softsensor.service.result_tables import (
@@ -98,7 +100,7 @@ def _ignored(lab: LabResults) -> Iterator[str]:
 
 def prepare(
     model: PlantModel,
-    history: History,
+    history: History | LongHistory,
     lab: LabResults | None,
     states: Sequence[StateRule] = (),
     late: LateRows | None = None,
@@ -117,6 +119,13 @@ def prepare(
     if history.ignored_columns:
         names = ", ".join(history.ignored_columns)
         notes.append(Note(history.first_time, "history", f"columns that the model does not know: {names}"))
+    if isinstance(history, LongHistory):
+        if states or late is not None:
+            raise ReplayError(
+                f"{history.name}: states and late readings need the whole history; it is read in stretches"
+            )
+        cycles = assemble_long(model.spec, history, BLOCK)
+        return Replay(designed(model), parts_of(cycles, arrivals), horizon_of(arrivals)), notes
     changes = recorded_changes(states, history.series, history_cycles(model.spec, history)) if states else ()
     if late is None:
         parts = parts_of(assemble_blocks(model.spec, history, BLOCK), arrivals, changes)

@@ -109,13 +109,14 @@ def _from_files(
     beside: tuple[Path | None, Path | None, Path | None],
     timezone: str | None,
 ) -> tuple[Replay, list[Note], int]:
-    from connectors.files import read_history, read_lab, read_late
+    from connectors.files import open_history, read_history, read_lab, read_late
     from softsensor.recorded_data import lab_tags, prepare, replay_tags
     from softsensor.service.state_tables import fitted_states, read_states_file
 
     lab, states, late = beside
     rules = () if states is None else read_states_file(states)
-    recorded = read_history(history, replay_tags(model, rules), timezone)
+    opened = open_history if not rules and late is None else read_history
+    recorded = opened(history, replay_tags(model, rules), timezone)
     fitted = fitted_states(rules, model.spec, recorded.tags, str(states))
     results = read_lab(lab, lab_tags(model), timezone) if lab is not None else None
     rows = read_late(late, recorded.tags, timezone) if late is not None else None

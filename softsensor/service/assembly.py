@@ -41,6 +41,8 @@ __all__ = [
     "assemble_blocks",
     "assemble_history",
     "assemble_with_late",
+    "assembled",
+    "between",
     "history_cycles",
     "late_horizon",
     "rules_of",
@@ -53,7 +55,7 @@ def assemble_history(spec: UnitSpec, history: History) -> CycleReadings:
     :raises ReplayError: the sample time is not a whole number of microseconds.
     """
     rules = rules_of(spec)
-    return _assemble(rules, _times_of(rules, history), rules.start(), history.series)[0]
+    return assembled(rules, _times_of(rules, history), rules.start(), history.series)[0]
 
 
 def assemble_blocks(spec: UnitSpec, history: History, block: int = 8192) -> Iterator[CycleReadings]:
@@ -68,8 +70,8 @@ def assemble_blocks(spec: UnitSpec, history: History, block: int = 8192) -> Iter
     state = rules.start()
     for begin in range(0, len(times), block):
         part = times[begin : begin + block]
-        events = {tag: _between(history.series[tag], state.last_cycle, int(part[-1])) for tag in rules.tags}
-        readings, state = _assemble(rules, part, state, events)
+        events = {tag: between(history.series[tag], state.last_cycle, int(part[-1])) for tag in rules.tags}
+        readings, state = assembled(rules, part, state, events)
         yield readings
 
 
@@ -92,14 +94,14 @@ def assemble_with_late(
         coming = int(learns[begin]) if begin < len(learns) else len(times)
         stop = row + 1 if end > begin else min(row + block, coming, len(times))
         upto = int(times[stop - 1])
-        events = {tag: _between(history.series[tag], state.last_cycle, upto) for tag in rules.tags}
+        events = {tag: between(history.series[tag], state.last_cycle, upto) for tag in rules.tags}
         found: tuple[Late, ...] = ()
         if end > begin:
             events = {tag: joined(series, _rows_of(late, tag, begin, end)) for tag, series in events.items()}
             found = in_order.take(events, upto, state.last_cycle)
         else:
             in_order.remember(events)
-        readings, state = _assemble(rules, times[row:stop], state, events)
+        readings, state = assembled(rules, times[row:stop], state, events)
         yield readings, found
         row = stop
 
@@ -180,7 +182,7 @@ class LiveAssembly:
         events = {tag: _take_until(waiting, cycle_time) for tag, waiting in self._waiting.items()}
         self.late = self._in_order.take(events, cycle_time, self._state.last_cycle)
         times = np.array([cycle_time], dtype=np.int64)
-        readings, self._state = _assemble(self._rules, times, self._state, events)
+        readings, self._state = assembled(self._rules, times, self._state, events)
         return readings
 
 
@@ -189,7 +191,7 @@ def late_horizon(spec: UnitSpec) -> float:
     return DEFAULT_HORIZON_S if spec.late_horizon is None else spec.late_horizon
 
 
-def _assemble(
+def assembled(
     rules: UnitRules, times: NDArray[np.int64], state: AssemblyState, events: Mapping[str, TagSeries]
 ) -> tuple[CycleReadings, AssemblyState]:
     """Run every tag's rule over the cycles ``times`` (N,); ``events`` are those ``state`` has not seen."""
@@ -220,7 +222,7 @@ def _times_of(rules: UnitRules, history: History) -> NDArray[np.int64]:
     return cycle_times(first, history.last_time, rules.sample_time)
 
 
-def _between(series: TagSeries, after: int, upto: int) -> TagSeries:
+def between(series: TagSeries, after: int, upto: int) -> TagSeries:
     """The readings with after < time <= upto."""
     begin, end = np.searchsorted(series.times, [after, upto], side="right")
     return TagSeries(series.times[begin:end], series.values[begin:end], series.qualities[begin:end])

@@ -6,8 +6,8 @@
 are missing. pandas reads the Parquet file and writes two Parquet files with the columns and the number of rows of
 ``estimates`` and ``innovations``, prepared beforehand outside the time. Processor time, medians.
 
-The second table is the peak of what the process holds, measured in a process of its own for each length: a history in
-a file is read whole, so the memory of a replay is that of the history's columns and a constant.
+The second table is the peak of what the process holds, measured in a process of its own for each length: a long history
+in a file is read in stretches, so it does not grow with the length once that is beyond a few row groups.
 """
 
 from __future__ import annotations
@@ -26,7 +26,7 @@ import numpy as np
 import pandas as pd
 from benchmarks.measuring import MISSING, START, in_turn, small_unit
 
-from connectors.files import read_history
+from connectors.files import open_history
 from plant_models.building import build_plant_model
 from plant_models.plant_model import PlantModel
 from softsensor.recorded_data import prepare
@@ -57,7 +57,7 @@ def write_history(model: PlantModel, path: Path, cycles: int) -> None:
 
 def replay_to_files(model: PlantModel, history: Path, out: Path, kind: str = "parquet") -> None:
     """What the command does, without its start-up."""
-    running, _ = prepare(model, read_history(history, rules_of(model.spec).tags), None)
+    running, _ = prepare(model, open_history(history, rules_of(model.spec).tags), None)
     with ResultFiles(out, "csv" if kind == "csv" else "parquet", running.design) as files:
         for stretch in gathered(running.stretches()):
             files.add(stretch)
