@@ -159,8 +159,9 @@ class InOrder:
         return found
 
     def _forget(self, cycle: int) -> None:
-        for memory in self._memory.values():
-            memory.forget(cycle - self._horizon - self._rules.sample_time)
+        for tag, memory in self._memory.items():
+            rules = [rule for _, _, rule in self._rules_of(tag)]
+            memory.forget(cycle - self._horizon - self._rules.sample_time, rules)
 
 
 def _but_first(series: TagSeries) -> NDArray[np.bool_]:

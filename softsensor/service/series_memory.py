@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
+
 import numpy as np
 from numpy.typing import NDArray
 
@@ -71,13 +73,15 @@ class SeriesMemory:
             usable_quality=int(qualities[at]),
         )
 
-    def forget(self, before: int) -> None:
-        """Let go of the readings before a time, but for the last of them and the last usable one."""
+    def forget(self, before: int, rules: Sequence[TagRule]) -> None:
+        """Let go of the readings before a time, but for the last of them and the last that is usable by all ``rules``."""
         if self._end < len(self._times) or self._times[self._begin] >= before:
             return
         mine = self._all()
         last = int(np.searchsorted(mine.times, before, side="left")) - 1
         usable = (mine.qualities[: last + 1] < BAD) & np.isfinite(mine.values[: last + 1])
+        for rule in rules:
+            usable &= mapped(rule, mine)[: last + 1] < BAD
         if last > 0 and usable.any():
             last -= int(usable[::-1].argmax())
             self._begin += last

@@ -8,7 +8,7 @@ from typing import Any, TypeVar
 import numpy as np
 from independent.transfer_paths import Array
 
-from plant_models.specification import EstimateSpec, InputSpec, SensorSpec, UnitSpec
+from plant_models.specification import EstimateSpec, InputSpec, PathSpec, SensorSpec, UnitSpec
 from plant_models.transform import Transform
 
 Item = TypeVar("Item", InputSpec, SensorSpec, EstimateSpec)
@@ -82,6 +82,26 @@ def one_scaled(item: Item) -> Item:
     return replace(item, transform=None, operating_point=centre, **changed)
 
 
+def path_with_points(path: PathSpec, points: Array) -> PathSpec:
+    """A scheduled path with its points elsewhere, put in ascending order again."""
+    assert path.schedule is not None
+    order = [int(place) for place in np.argsort(points)]
+    schedule = replace(
+        path.schedule,
+        at=tuple(float(points[k]) for k in order),
+        gain=tuple(path.schedule.gain[k] for k in order),
+        time_constants=tuple(path.schedule.time_constants[k] for k in order),
+    )
+    return replace(path, schedule=schedule)
+
+
+def _path_scaled(path: PathSpec, spec: UnitSpec) -> PathSpec:
+    if path.schedule is None:
+        return path
+    transform = next(item.transform for item in spec.inputs if item.tag == path.schedule.tag)
+    return path_with_points(path, forward(transform, np.array(path.schedule.at)))
+
+
 def transformed_unit(spec: UnitSpec) -> UnitSpec:
     """The unit in the scale of its transfer functions, without transforms: what the dense filter runs on."""
     return replace(
@@ -89,4 +109,5 @@ def transformed_unit(spec: UnitSpec) -> UnitSpec:
         inputs=tuple(one_scaled(item) for item in spec.inputs),
         sensors=tuple(one_scaled(item) for item in spec.sensors),
         estimates=tuple(one_scaled(item) for item in spec.estimates),
+        paths=tuple(_path_scaled(path, spec) for path in spec.paths),
     )

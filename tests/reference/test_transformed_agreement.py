@@ -13,14 +13,22 @@ import pytest
 from independent.dense_filter import DenseResult, known_at_each_cycle, operating_points
 from independent.random_models import random_unit
 from independent.recorded_runs import Run, by_cycle, late_labs, record
-from independent.scales import forward, inverse, inverse_slopes, local_slope, transformed_unit
+from independent.scales import (
+    forward,
+    inverse,
+    inverse_slopes,
+    local_slope,
+    path_with_points,
+    transformed_unit,
+)  # fmt: skip
+from independent.scheduled_units import scheduled_unit
 from independent.transfer_paths import Array
 from scipy import stats
 from scipy.stats import norm
 
 import softsensor
 from plant_models.building import build_plant_model
-from plant_models.specification import EstimateSpec, InputSpec, SensorSpec, UnitSpec
+from plant_models.specification import EstimateSpec, InputSpec, PathSpec, SensorSpec, UnitSpec
 from plant_models.transform import Transform
 from softsensor.recorded_data import ReplayResult
 
@@ -44,9 +52,12 @@ def at(item: InputSpec | SensorSpec | EstimateSpec, kind: Transform | None) -> d
     return {"transform": kind, "operating_point": point, "range": EVERYTHING}
 
 
-def with_transforms(seed: int) -> UnitSpec:
-    """A random unit in which input, sensor and estimate have transforms, another mixture for every seed."""
-    spec, rng = random_unit(seed), np.random.default_rng([5, seed])
+def with_transforms(seed: int, spec: UnitSpec | None = None) -> UnitSpec:
+    """A random unit in which input, sensor and estimate have transforms, another mixture for every seed.
+
+    Points of schedules keep their distance from the operating point in the transformed scale.
+    """
+    spec, rng = random_unit(seed) if spec is None else spec, np.random.default_rng([5, seed])
 
     def sized(item: object, kind: Transform | None, keys: dict[str, object]) -> dict[str, object]:
         scale = 1.0 if kind is None else abs(local_slope(kind, float(keys["operating_point"])))  # type: ignore[arg-type]
@@ -69,7 +80,17 @@ def with_transforms(seed: int) -> UnitSpec:
         scale = 1.0 if kind is None else abs(local_slope(kind, float(keys["operating_point"])))  # type: ignore[arg-type]
         lab = replace(estimate.lab, sd=estimate.lab.sd / scale)
         estimates.append(replace(estimate, **keys, lab=lab))
-    return replace(spec, inputs=inputs, sensors=tuple(sensors), estimates=tuple(estimates))
+    paths = tuple(_moved(path, spec.inputs, inputs) for path in spec.paths)
+    return replace(spec, inputs=inputs, sensors=tuple(sensors), estimates=tuple(estimates), paths=paths)
+
+
+def _moved(path: PathSpec, before: tuple[InputSpec, ...], after: tuple[InputSpec, ...]) -> PathSpec:
+    if path.schedule is None:
+        return path
+    j = next(j for j, item in enumerate(before) if item.tag == path.schedule.tag)
+    centre = forward(after[j].transform, np.array([after[j].operating_point]))
+    at = centre + np.array(path.schedule.at) - before[j].operating_point
+    return path_with_points(path, inverse(after[j].transform, at))
 
 
 def carried_back(spec: UnitSpec, run: Run) -> Run:
@@ -165,6 +186,14 @@ def check(spec: UnitSpec, seed: int, cycles: int = 160) -> tuple[ReplayResult, D
 @pytest.mark.parametrize("seed", range(1, 16))
 def test_units_with_transforms_agree_with_the_dense_filter(seed: int) -> None:
     check(with_transforms(seed), seed)
+
+
+SCHEDULED = [seed for seed in range(1, 11) if any(path.schedule for path in scheduled_unit(seed).paths)]
+
+
+@pytest.mark.parametrize("seed", SCHEDULED)
+def test_schedules_go_by_the_transformed_tag(seed: int) -> None:
+    check(with_transforms(seed, scheduled_unit(seed)), seed)
 
 
 def test_the_units_have_every_transform_on_every_kind_of_tag() -> None:
