@@ -91,7 +91,7 @@ FAULTS = [
     ("[[disturbance]]", "[[disturbance]] #!", "time_constant", "missing; expected a time with its unit"),
     ('lab = { tag = "AL1", sd = 0.02 }', 'lab = { tag = "AL1" } #!', "lab.sd", "missing; expected a finite number"),
     ('lab = { tag = "AL1", sd = 0.02 }', "lab = { sd = 0.02 } #!", "lab.tag", "missing; expected a tag"),
-    ("noise_sd = 0.15", "noise_sd = 0.15\nnoise = 1 #!", "noise", "validated_range, transform, noise_sd, tolerance, bias_walk_sd"),
+    ("noise_sd = 0.15", "noise_sd = 0.15\nnoise = 1 #!", "noise", "transform, noise_sd, tolerance, bias_walk_sd"),
     ("sd = 0.02 }", "sd = 0.02, unit = 1 } #!", "lab.unit", "unknown key, expected one of tag, sd"),
     ('name = "feed"', 'name = "feed"\ngain = 1 #!', "gain", "unknown key, expected one of name, sd, time_constant"),
     ("[fault_tests]", "[fault_tests]\nfalse_alarm = 1 #!", "false_alarm", "unknown key"),
