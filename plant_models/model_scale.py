@@ -16,6 +16,7 @@ import numpy as np
 
 from plant_models.elementary_arrays import Floats
 from plant_models.specification import EstimateSpec, InputSpec, PathSpec, Range, SensorSpec, UnitSpec
+from plant_models.transform import Transform
 
 Variable = InputSpec | SensorSpec | EstimateSpec
 Item = TypeVar("Item", InputSpec, SensorSpec, EstimateSpec)
@@ -59,24 +60,30 @@ def to_model(items: Sequence[Variable], values: Floats) -> Floats:
     if all(item.transform is None for item in items):
         return values
     out = np.array(values, dtype=np.float64)
-    for column, item in enumerate(items):
-        if item.transform is not None:
-            out[:, column] = item.transform.forward(values[:, column])
+    for transform, columns in _by_transform(items):
+        out[:, columns] = transform.forward(values[:, columns])
     return out
 
 
 def slopes(items: Sequence[Variable], values: Floats) -> Floats:
-    """How fast values in model scale (N, len(items)) move with those in engineering units, as sizes; one row of ones where
-    there is no transform.
+    """How fast values in model scale move with those in engineering units, ``values`` (N, len(items)), as sizes; one row of
+    ones where there is no transform.
     """
     if all(item.transform is None for item in items):
         return np.ones((1, len(items)))
     out = np.ones(values.shape)
-    with np.errstate(divide="ignore"):
-        for column, item in enumerate(items):
-            if item.transform is not None:
-                out[:, column] = 1.0 / np.abs(item.transform.back_slope(values[:, column]))
+    for transform, columns in _by_transform(items):
+        out[:, columns] = np.abs(transform.slopes(values[:, columns]))
     return out
+
+
+def _by_transform(items: Sequence[Variable]) -> list[tuple[Transform, list[int]]]:
+    """Each transform with the columns that have it: a live cycle costs by the call."""
+    found: dict[Transform, list[int]] = {}
+    for column, item in enumerate(items):
+        if item.transform is not None:
+            found.setdefault(item.transform, []).append(column)
+    return list(found.items())
 
 
 def from_model(item: Variable, values: Floats) -> Floats:

@@ -65,6 +65,16 @@ class Transform:
         right = int(np.clip(np.searchsorted(x, raw, side="right") - 1, 0, len(slopes) - 1))
         return 0.5 * float(slopes[left] + slopes[right])
 
+    def slopes(self, raw: Floats) -> Floats:
+        """T' at raw values within the domain; at a point of a table that of the piece above it."""
+        if self.kind == "log":
+            return 1.0 / raw
+        if self.kind == "sqrt":
+            with np.errstate(divide="ignore"):
+                return np.asarray(0.5 / np.sqrt(raw))
+        x, y = self._columns()
+        return (np.diff(y) / np.diff(x))[_piece(x, raw)]
+
     def back_slope(self, model: Floats) -> Floats:
         """How fast the raw value moves with the model value; at a point of a table that of the piece above it."""
         if self.kind == "log":

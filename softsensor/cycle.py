@@ -150,7 +150,7 @@ def block_inputs(
         usable_inputs(design, readings),
         y,
         raw,
-        slopes(sensors, y),
+        slopes(sensors, raw),
         scale,
         in_use(book, first, len(readings), design.kernel.n_sensors),
         design.fresh,

@@ -53,6 +53,7 @@ def test_arrays_of_any_shape_give_the_bits_of_their_elements() -> None:
 def test_back_is_the_inverse_and_the_slopes_are_those_of_differences(kind: Transform, raw: float) -> None:
     model = kind.forward(np.array([raw]))
     assert math.isclose(kind.back(model)[0], raw, rel_tol=1e-13, abs_tol=1e-13)
+    assert math.isclose(kind.slopes(np.array([raw]))[0], 1.0 / kind.back_slope(model)[0], rel_tol=1e-9)
     h = 1e-6 * raw
     near = kind.forward(np.array([raw + h, raw - h]))
     if all(abs(raw - x) > 2.0 * h for x, _ in kind.points):
