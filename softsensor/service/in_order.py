@@ -1,7 +1,8 @@
 """What came late, put where it belongs: the reading rules once more, over readings in the order of their source times.
 
 A reading whose cycle has run is late. One that is the newest of its tag and not too old counts in the coming cycle, as
-ever; every other one belongs to its own cycle and to those that would have gone on seeing it. What these cycles see
+ever; every other one fills a gap: it belongs to its own cycle, unless that has heard of the tag in time, and to those that
+would have gone on seeing it. (A server whose clock was set back must not write over the past.) What these cycles see
 then is worked out here, by the same rules and compiled code as for readings in time, and handed to the estimator to go
 back and forward again with.
 """
@@ -34,6 +35,8 @@ class InOrder:
         self._since = state.last_cycle
         self._memory = {tag: SeriesMemory() for tag in rules.tags}
         self._newest: dict[str, TagState] = {}
+        self._filled: dict[str, set[int]] = {tag: set() for tag in rules.tags}
+        self._told: set[str] = set()
         self._unheard = set(rules.tags) if self._since != NEVER else set[str]()
         for rule, known in zip(rules.inputs + rules.sensors, state.inputs + state.sensors, strict=True):
             self._newest[rule.tag] = known
@@ -66,11 +69,15 @@ class InOrder:
 
     def _late_of(self, tag: str, series: TagSeries, cycle: int, last: int) -> list[Late]:
         late = self._set_apart(tag, series, cycle, last)
-        step = self._rules.sample_time
-        own = last - (last - late.times) // step * step
+        own = self._own_cycles(late, last)
+        gap = np.array(
+            [at <= self._since or not self._heard_in_time(tag, int(at)) for at in own], dtype=np.bool_
+        )
+        found = self._over_the_past(tag, only(late, ~gap), last < int(series.times[-1]))
+        late, own = only(late, gap), own[gap]
         begun = own > self._since
         recent = own >= cycle - self._horizon
-        found: list[Late] = [
+        found += [
             UnusedReadings(tag, part.times, part.values, part.qualities, reason)
             for part, reason in (
                 (only(late, begun & ~recent), f"the estimate goes back {self._horizon * 1e-6:.0f} s at most"),
@@ -81,8 +88,31 @@ class InOrder:
         usable = begun & recent
         if usable.any():
             self._memory[tag].insert(only(late, usable))
+            limit = cycle - 2 * self._horizon
+            self._filled[tag] = {time for time in self._filled[tag] if time > limit}
+            self._filled[tag].update(late.times[usable].tolist())
             found += self._seen_in_order(tag, int(own[usable].min()), last)
         return found
+
+    def _own_cycles(self, late: TagSeries, last: int) -> NDArray[np.int64]:
+        step = self._rules.sample_time
+        return last - (last - late.times) // step * step
+
+    def _heard_in_time(self, tag: str, cycle: int) -> bool:
+        """Did a usable reading of the tag come in time for a cycle that has run?"""
+        part = self._memory[tag].between(cycle - self._rules.sample_time, cycle)
+        usable = part.times[(part.qualities < BAD) & np.isfinite(part.values)].tolist()
+        return any(time not in self._filled[tag] for time in usable)
+
+    def _over_the_past(self, tag: str, late: TagSeries, in_time_again: bool) -> list[Late]:
+        """Told once, until readings come in time again."""
+        if in_time_again:
+            self._told.discard(tag)
+        if not len(late) or tag in self._told:
+            return []
+        self._told.add(tag)
+        reason = "their cycles have a reading already; are the clocks of plant and service right?"
+        return [UnusedReadings(tag, late.times, late.values, late.qualities, reason)]
 
     def _set_apart(self, tag: str, series: TagSeries, cycle: int, last: int) -> TagSeries:
         """The late readings that are news and do not count in the coming cycle; the others are remembered."""

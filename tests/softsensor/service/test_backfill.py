@@ -153,3 +153,47 @@ def test_two_results_at_once_leave_the_estimate_with_both_on_record(
         assert (
             item.estimate.tobytes() == step.revisions[-1].estimate[cycle - step.revisions[-1].first].tobytes()
         )
+
+
+def test_a_plant_s_clock_that_is_set_back_does_not_write_over_the_past(
+    design: UnitDesign, new_bench: Any, story: Any, sqlite_url: str, database_url: str
+) -> None:
+    """From cycle 100 on the server stamps TI1A five minutes too early; that is told once, and the past stays."""
+    away, back = replace(story, arrivals=dict(story.arrivals)), replace(story, arrivals=dict(story.arrivals))
+    for cycle in range(100, 120):
+        here = story.arrivals[cycle]
+        away.arrivals[cycle] = [item for item in here if item.tag != "TI1A"]
+        back.arrivals[cycle] = [
+            replace(item, time=item.time - 30 * STEP + 400_000) if item.tag == "TI1A" else item
+            for item in here
+        ]
+    asyncio.run(new_bench(design, sqlite_url).run(away, 0, END, cut=False))
+    asyncio.run(new_bench(design, database_url).run(back, 0, END, cut=False))
+    for one, other in zip(estimates(sqlite_url), estimates(database_url), strict=True):
+        assert one.tobytes() == other.tobytes()
+    (text,) = told_of(database_url)
+    assert text.startswith(
+        "a late reading of TI1A, up to 301 s old, not used: their cycles have a reading already"
+    )
+    assert replayed_digest(design, database_url)
+
+
+def test_a_gap_filled_in_parts_ends_as_if_filled_at_once(
+    design: UnitDesign, new_bench: Any, story: Any, sqlite_url: str, database_url: str
+) -> None:
+    """Two readings to a cycle, handed over in any order, some cycles apart: the newest of each cycle counts."""
+    told, shuffled = (replace(story, arrivals=dict(story.arrivals)) for _ in range(2))
+    extra: list[Reading] = []
+    for cycle in range(FIRST, STOP):
+        kept = [item for item in story.arrivals[cycle] if item.tag == "TI2"]
+        early = [replace(item, time=item.time - 4_000_000, value=80.0) for item in kept]
+        for into in (told, shuffled):
+            into.arrivals[cycle] = [item for item in story.arrivals[cycle] if item.tag != "TI2"]
+        told.arrivals[BACK] = [*told.arrivals[BACK], *early, *kept]
+        extra += [*kept[::-1], *early]
+    for number, item in enumerate(sorted(extra, key=lambda item: item.value)):
+        shuffled.arrivals[BACK + number % 5] = [*shuffled.arrivals[BACK + number % 5], item]
+    asyncio.run(new_bench(design, sqlite_url).run(told, 0, END, cut=False))
+    asyncio.run(new_bench(design, database_url).run(shuffled, 0, END, cut=False))
+    for one, other in zip(estimates(sqlite_url), estimates(database_url), strict=True):
+        assert one[BACK + 5 :].tobytes() == other[BACK + 5 :].tobytes()
