@@ -27,10 +27,11 @@ from softsensor.records.named_arrays import pack_arrays
 from softsensor.records.plant import Deed, Revision, register_revision, register_unit, set_revision_state
 from softsensor.records.presence import Presence
 from softsensor.records.writer import RecordsWriter
-from softsensor.service.clock import Clock, FollowingClock, SystemClock
+from softsensor.service.clock import Clock, FollowingClock
 from softsensor.service.live import GRACE, LiveService
 from softsensor.service.site_file import SiteSettings, UnitSettings
 from softsensor.service.state_tables import fitted_states
+from softsensor.service.steady_clock import SteadyClock
 from softsensor.service.unit_service import UnitIdentity, UnitService
 from softsensor.unit_design import design_unit
 from softsensor.web.app import create_app
@@ -57,7 +58,7 @@ class Site:
 def site_clock(settings: SiteSettings) -> Clock:
     """The wall's clock, or the one that the site file describes."""
     if settings.clock is None:
-        return SystemClock()
+        return SteadyClock()
     return FollowingClock(settings.clock.speed)
 
 

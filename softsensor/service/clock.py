@@ -28,6 +28,10 @@ class Clock(Protocol):
         """Seconds on the wall until a plant time; zero or less once it has passed."""
         ...
 
+    def news(self) -> tuple[str, ...]:
+        """What there is to tell about the clock since this was asked last."""
+        ...
+
 
 @dataclass(frozen=True, slots=True)
 class SystemClock:
@@ -43,6 +47,10 @@ class SystemClock:
 
     def seconds_until(self, moment: int) -> float:
         return (moment - self.now()) * 1e-6
+
+    def news(self) -> tuple[str, ...]:
+        """Nothing: this clock does not judge."""
+        return ()
 
 
 @dataclass(frozen=True, slots=True)
@@ -64,6 +72,10 @@ class ScaledClock:
     def seconds_until(self, moment: int) -> float:
         return (moment - self.now()) * 1e-6 / self.speed
 
+    def news(self) -> tuple[str, ...]:
+        """Nothing: this clock does not judge."""
+        return ()
+
 
 class FollowingClock:
     """Plant time is the newest source timestamp that has come: for a simulated plant that runs ``speed`` times as fast."""
@@ -84,6 +96,10 @@ class FollowingClock:
 
     def seconds_until(self, moment: int) -> float:
         return (moment - self.now()) * 1e-6 / self._speed
+
+    def news(self) -> tuple[str, ...]:
+        """Nothing: this clock does not judge."""
+        return ()
 
 
 async def wait_until(clock: Clock, moment: int) -> None:

@@ -164,11 +164,9 @@ class LiveService:
             behind = report.state is WriterState.WAITING
             if behind != waiting:
                 waiting = behind
-                text = f"waiting: {report.why}" if behind else "caught up"
-                self._tell_all("records", text)
-                for unit in self._units:
-                    body = {"time": self._clock.now(), "kind": "records", "text": text}
-                    self.feed.publish(News(unit.name, "event", body))
+                self._tell_and_show("records", f"waiting: {report.why}" if behind else "caught up")
+            for text in self._clock.news():
+                self._tell_and_show("clock", text)
             await asyncio.sleep(0.5)
 
     async def _watch_decisions(self, unit: UnitService) -> None:
@@ -187,6 +185,12 @@ class LiveService:
                     taken.add(row)
                     unit.decide(arrival, self._clock.now())
             await asyncio.sleep(DECISIONS_EVERY)
+
+    def _tell_and_show(self, kind: str, text: str) -> None:
+        self._tell_all(kind, text)
+        for unit in self._units:
+            body = {"time": self._clock.now(), "kind": kind, "text": text}
+            self.feed.publish(News(unit.name, "event", body))
 
     def _tell_all(self, kind: str, text: str) -> None:
         for unit in self._units:

@@ -26,6 +26,7 @@ from softsensor.service.live import LiveService
 from softsensor.service.live_feed import News
 from softsensor.service.recording import Step
 from softsensor.service.result_tables import reasons
+from softsensor.service.steady_clock import SteadyClock
 from softsensor.service.unit_service import UnitService
 
 START = 1_796_083_200_000_000
@@ -304,3 +305,33 @@ def test_what_people_decide_about_sensors_and_tests_reaches_a_running_unit_once_
     at = next(step.results.first for step in steps if step.taken)
     assert [step.results.first for step in steps if step.results.left_out[0, 1]] == list(range(at, at + 20))
     assert replayed_digest(design, at_work.url) == digests(at_work.url)[-1]
+
+
+def test_a_machine_s_clock_that_is_set_back_stops_no_cycle_while_the_plant_goes_on(at_work: Any) -> None:
+    """An hour back before cycle 4; the readings keep their time, and so do the cycles."""
+    steady, ahead = 0, START - STEP
+
+    async def story() -> list[Step]:
+        nonlocal steady, ahead
+        clock = SteadyClock(lambda: steady + ahead, lambda: steady)
+        async with running(at_work, clock) as site:
+            async with asyncio.timeout(DEADLINE):
+                while site.unit.next_time is None:
+                    await asyncio.sleep(0)
+            for cycle in range(9):
+                if cycle == 4:
+                    ahead -= 3600 * 1_000_000
+                site.tell(cycle)
+                steady = (cycle + 1) * STEP + 100_000
+                await site.steps.until(lambda taken, cycle=cycle: len(taken) > cycle)  # type: ignore[misc]
+            async with asyncio.timeout(DEADLINE):
+                while not any(item.body.get("kind") == "clock" for item in site.news):
+                    await asyncio.sleep(0)
+            site.writer.flush(DEADLINE)
+            (text,) = events(site.database, "clock")
+            assert text.startswith("this machine's clock was set back by 3600 s; the readings tell")
+            return list(site.steps.taken)
+
+    steps = asyncio.run(story())
+    assert [int(step.results.times[0]) for step in steps] == [START + k * STEP for k in range(9)]
+    assert all(step.results.used[0].all() for step in steps)
