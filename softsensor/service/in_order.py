@@ -16,11 +16,13 @@ from numpy.typing import NDArray
 
 from connectors.history import TagSeries
 from softsensor.estimation.late_readings import Kind, LateReadings, UnusedReadings
-from softsensor.service.reading_rules import BAD, NEVER, TagState, input_values, sensor_readings
+from softsensor.service.reading_rules import BAD, NEVER, input_values, sensor_readings
 from softsensor.service.rules import AssemblyState, TagRule, UnitRules, mapped
 from softsensor.service.series_memory import SeriesMemory, as_series, only
 
 Late = LateReadings | UnusedReadings
+FORGET_EVERY = 64
+"""Cycles between two looks at what lies beyond the horizon."""
 
 
 class InOrder:
@@ -34,12 +36,14 @@ class InOrder:
         self._horizon = horizon
         self._since = state.last_cycle
         self._memory = {tag: SeriesMemory() for tag in rules.tags}
-        self._newest: dict[str, TagState] = {}
+        self._newest: dict[str, tuple[int, float]] = {}
+        """Time and value of each tag's newest reading."""
+        self._cycles = 0
         self._filled: dict[str, set[int]] = {tag: set() for tag in rules.tags}
         self._told: set[str] = set()
         self._unheard = set(rules.tags) if self._since != NEVER else set[str]()
         for rule, known in zip(rules.inputs + rules.sensors, state.inputs + state.sensors, strict=True):
-            self._newest[rule.tag] = known
+            self._newest[rule.tag] = (known.newest_time, known.newest_value)
             if known.usable_time != NEVER:
                 self._memory[rule.tag].insert(as_series(known))
 
@@ -55,16 +59,20 @@ class InOrder:
 
         :param events: by tag, in the order of their times, none after ``cycle``.
         """
-        if all(not len(series) or series.times[0] > last for series in events.values()):
-            self.remember({tag: self._thinned(tag, series) for tag, series in events.items()})
-            self._unheard -= {tag for tag, series in events.items() if len(series)}
-            self._forget(cycle)
-            return ()
         found: list[Late] = []
         for tag, series in events.items():
-            if len(series):
+            if not len(series):
+                continue
+            if series.times[0] <= last:
                 found += self._late_of(tag, series, cycle, last)
-        self._forget(cycle)
+                continue
+            self._memory[tag].insert(self._thinned(tag, series))
+            self._newest[tag] = (int(series.times[-1]), float(series.values[-1]))
+            self._unheard.discard(tag)
+            self._told.discard(tag)
+        self._cycles += 1
+        if self._cycles % FORGET_EVERY == 0:
+            self._forget(cycle)
         return tuple(found)
 
     def _late_of(self, tag: str, series: TagSeries, cycle: int, last: int) -> list[Late]:
@@ -125,7 +133,7 @@ class InOrder:
         before = self._newest[tag]
         if len(series) and late.all():
             time = int(series.times[-1])
-            if time > before.newest_time and cycle - time <= self._max_age(tag):
+            if time > before[0] and cycle - time <= self._max_age(tag):
                 newest = only(series, np.arange(len(series)) == len(series) - 1)
                 self._memory[tag].insert(
                     TagSeries(np.array([cycle], dtype=np.int64), newest.values, newest.qualities)
@@ -137,17 +145,15 @@ class InOrder:
         self._note_newest(tag, series)
         return self._news(tag, only(series, late), before)
 
-    def _news(self, tag: str, late: TagSeries, newest: TagState) -> TagSeries:
+    def _news(self, tag: str, late: TagSeries, newest: tuple[int, float]) -> TagSeries:
         """Without what a server shows again: readings that are known already."""
         known = self._memory[tag].holds(late)
-        again = (late.times == newest.newest_time) & _same(late.values, newest.newest_value)
+        again = (late.times == newest[0]) & _same(late.values, newest[1])
         return only(late, ~(known | again))
 
     def _note_newest(self, tag: str, series: TagSeries) -> None:
-        if len(series) and int(series.times[-1]) > self._newest[tag].newest_time:
-            self._newest[tag] = self._newest[tag]._replace(
-                newest_time=int(series.times[-1]), newest_value=float(series.values[-1])
-            )
+        if len(series) and series.times[-1] > self._newest[tag][0]:
+            self._newest[tag] = (int(series.times[-1]), float(series.values[-1]))
 
     def _rules_of(self, tag: str) -> list[tuple[bool, int, TagRule]]:
         """Whether it is a sensor's, the column, and the rule, for each place that a tag has."""

@@ -31,6 +31,11 @@ class SeriesMemory:
         if len(self) and series.times[0] <= self._times[self._end - 1]:
             self._replace(joined(self._all(), series))
             return
+        if len(series) == 1 and self._end < len(self._times):
+            self._times[self._end], self._values[self._end] = series.times[0], series.values[0]
+            self._qualities[self._end] = series.qualities[0]
+            self._end += 1
+            return
         self._make_room(len(series))
         place = slice(self._end, self._end + len(series))
         self._times[place], self._values[place] = series.times, series.values
@@ -75,7 +80,7 @@ class SeriesMemory:
 
     def forget(self, before: int, rules: Sequence[TagRule]) -> None:
         """Let go of the readings before a time, but for the last of them and the last that is usable by all ``rules``."""
-        if self._end < len(self._times) or self._times[self._begin] >= before:
+        if not len(self) or self._times[self._begin] >= before:
             return
         mine = self._all()
         last = int(np.searchsorted(mine.times, before, side="left")) - 1
