@@ -335,3 +335,33 @@ def test_a_machine_s_clock_that_is_set_back_stops_no_cycle_while_the_plant_goes_
     steps = asyncio.run(story())
     assert [int(step.results.times[0]) for step in steps] == [START + k * STEP for k in range(9)]
     assert all(step.results.used[0].all() for step in steps)
+
+
+def test_cycles_that_a_clock_has_jumped_over_are_run_without_readings(
+    at_work: Any, design: UnitDesign
+) -> None:
+    """Machine and plant are set forward by 200 s before cycle 4: cycles 4 to 23 have no readings, none is left out."""
+    steady, ahead, jump = 0, START - STEP, 20
+
+    async def story() -> list[Step]:
+        nonlocal steady, ahead
+        clock = SteadyClock(lambda: steady + ahead, lambda: steady)
+        async with running(at_work, clock) as site:
+            async with asyncio.timeout(DEADLINE):
+                while site.unit.next_time is None:
+                    await asyncio.sleep(0)
+            for cycle in (0, 1, 2, 3):
+                site.tell(cycle)
+                steady = (cycle + 1) * STEP + 100_000
+                await site.steps.until(lambda taken, cycle=cycle: len(taken) > cycle)  # type: ignore[misc]
+            ahead += jump * STEP
+            site.tell(4 + jump)
+            steady += STEP
+            await site.steps.until(lambda taken: len(taken) > 4 + jump)
+            site.writer.flush(DEADLINE)
+            return list(site.steps.taken)
+
+    steps = asyncio.run(story())
+    assert [int(step.results.times[0]) for step in steps] == [START + k * STEP for k in range(5 + jump)]
+    assert [bool(step.results.used.any()) for step in steps] == [True] * 4 + [False] * jump + [True]
+    assert replayed_digest(design, at_work.url) == digests(at_work.url)[-1]
