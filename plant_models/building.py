@@ -17,7 +17,7 @@ from plant_models.model_scale import in_model_scale
 from plant_models.plant_model import DiscretePath, PlantModel, StochasticPart
 from plant_models.schedules import operating_points, path_in_operation, schedule_faults
 from plant_models.specification import PathSpec, UnitSpec
-from plant_models.stochastic import output_rows, stochastic_part
+from plant_models.stochastic import output_rows, scheduled_states, stochastic_part
 from plant_models.transfer_function import dc_gain, faults, label
 
 Part = TypeVar("Part", DiscretePath, StochasticPart)
@@ -56,8 +56,9 @@ def build_plant_model(spec: UnitSpec) -> PlantModel:
     stochastic = stochastic_part(scaled)
     _check_stochastic(stochastic)
     stochastic = _frozen(stochastic)
-    digest = _digest(spec, tuple(paths), stochastic, tuple(scheduled))
-    return PlantModel(spec, tuple(paths), stochastic, digest, scaled, tuple(scheduled))
+    changing = (tuple(scheduled), scheduled_states(scaled))
+    digest = _digest(spec, tuple(paths), stochastic, changing if any(changing) else ())
+    return PlantModel(spec, tuple(paths), stochastic, digest, scaled, *changing)
 
 
 def _refuse_unsound(spec: UnitSpec) -> None:
@@ -131,7 +132,7 @@ def _digest(
     spec: UnitSpec,
     paths: tuple[DiscretePath, ...],
     stochastic: StochasticPart,
-    scheduled: tuple[tuple[int, PathSpec], ...],
+    scheduled: tuple[Any, ...],
 ) -> str:
     """SHA-256 over the specification without its commentary, the paths, the stochastic part, and schedules if any."""
     parts = (spec, paths, stochastic, scheduled) if scheduled else (spec, paths, stochastic)

@@ -87,6 +87,8 @@ def discretise(path: PathSpec, source: int, row: int, sample_time: float) -> Dis
     system = realise(path)
     whole, fraction = split_dead_time(path.dead_time, sample_time)
     phi, recent, older = held_matrices(system.A, system.B, sample_time, fraction)
+    if path.schedule is not None:
+        phi = np.tril(phi)  # whatever rounding does: of a scheduled path the rest is known to be zero
     return DiscretePath(
         source=source,
         row=row,

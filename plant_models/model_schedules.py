@@ -123,7 +123,6 @@ def check_schedules(spec: UnitSpec, tables: list[Table], faults: FaultList) -> N
             inner.fault("tag", _no_input(schedule.tag, inputs, others))
         else:
             _check_reach(inner, schedule, inputs[schedule.tag])
-        _check_source(inner, path, spec)
 
 
 def _no_input(tag: str, inputs: Mapping[str, InputSpec], others: Mapping[str, str]) -> str:
@@ -164,14 +163,4 @@ def _check_reach(inner: Table, schedule: ScheduleSpec, item: InputSpec) -> None:
         inner.fault(
             "gain",
             f"expected a gain other than zero at the operating point of {item.tag}, {item.operating_point:g}",
-        )
-
-
-def _check_source(inner: Table, path: PathSpec, spec: UnitSpec) -> None:
-    """A disturbance's path may not change: its covariance would."""
-    entering = [item.name for item in spec.disturbances if path.source in (item.name, item.at_input)]
-    if entering:
-        inner.fault(
-            "tag",
-            f"expected a transfer function that no disturbance goes through; {entering[0]} goes through this one",
         )

@@ -65,6 +65,19 @@ class StochasticPart:
 
 
 @dataclass(frozen=True)
+class ScheduledStates:
+    """A path from a disturbance that changes with an input, and its place in the stochastic part: its first state, the
+    state that is the disturbance behind its whole samples of dead time, the fraction of one, the output's row.
+    """
+
+    path: PathSpec
+    row: int
+    state: int
+    newest: int
+    fraction: float
+
+
+@dataclass(frozen=True)
 class PlantModel:
     """What the estimator runs on: the specification, the input-driven paths, the stochastic part, and a digest."""
 
@@ -80,6 +93,8 @@ class PlantModel:
     scheduled: tuple[tuple[int, PathSpec], ...] = ()
     """Index among ``paths`` of each path with a schedule, and its specification; ``paths`` holds it as it is at the
     operating point of its schedule's tag."""
+    scheduled_states: tuple[ScheduledStates, ...] = ()
+    """The same of ``stochastic``; its ``P0`` belongs to the operating point too."""
 
     @property
     def input_tags(self) -> tuple[str, ...]:

@@ -17,8 +17,9 @@ from numpy.typing import NDArray
 
 from plant_models.discretisation import discretise
 from plant_models.errors import RealisationError
-from plant_models.plant_model import DiscretePath, StochasticPart
-from plant_models.specification import DisturbanceSpec, EstimateSpec, SensorSpec, UnitSpec
+from plant_models.plant_model import DiscretePath, ScheduledStates, StochasticPart
+from plant_models.schedules import operating_points, path_in_operation
+from plant_models.specification import DisturbanceSpec, EstimateSpec, PathSpec, SensorSpec, UnitSpec
 
 Vector = NDArray[np.float64]
 Matrix = NDArray[np.float64]
@@ -72,14 +73,38 @@ def stochastic_part(spec: UnitSpec) -> StochasticPart:
 
 def disturbance_paths(spec: UnitSpec, index: int) -> tuple[DiscretePath, ...]:
     """The discretised paths of one disturbance in file order: its own and those of the input it enters at."""
-    disturbance = spec.disturbances[index]
-    rows = output_rows(spec)
-    sources = {disturbance.name} | ({disturbance.at_input} if disturbance.at_input is not None else set())
+    rows, points = output_rows(spec), operating_points(spec)
     return tuple(
-        discretise(path, index, rows[path.target], spec.sample_time)
-        for path in spec.paths
-        if path.source in sources
+        discretise(path_in_operation(path, points), index, rows[path.target], spec.sample_time)
+        for path in _paths_of(spec, index)
     )
+
+
+def _paths_of(spec: UnitSpec, index: int) -> tuple[PathSpec, ...]:
+    disturbance = spec.disturbances[index]
+    sources = {disturbance.name} | ({disturbance.at_input} if disturbance.at_input is not None else set())
+    return tuple(path for path in spec.paths if path.source in sources)
+
+
+def scheduled_states(spec: UnitSpec) -> tuple[ScheduledStates, ...]:
+    """The paths from disturbances that change with an input, and where their states are."""
+    found: list[ScheduledStates] = []
+    start = 0
+    for index in range(len(spec.disturbances)):
+        paths, discrete = _paths_of(spec, index), disturbance_paths(spec, index)
+        state = start + 1 + _past(discrete)
+        for path, held in zip(paths, discrete, strict=True):
+            if path.schedule is not None:
+                newest = start + held.whole_delays
+                found.append(ScheduledStates(path, held.row, state, newest, held.fraction))
+            state += held.c.size
+        start = state
+    return tuple(found)
+
+
+def _past(paths: tuple[DiscretePath, ...]) -> int:
+    """Past values that the dead times of a disturbance's paths need."""
+    return max((path.whole_delays + (path.fraction > 0.0) for path in paths), default=0)
 
 
 def output_rows(spec: UnitSpec) -> dict[str, int]:
@@ -117,7 +142,7 @@ def _driven(spec: UnitSpec, index: int) -> _Driven:
     """One disturbance's block: present value, past values (newest first), then the states of its paths."""
     disturbance = spec.disturbances[index]
     paths = disturbance_paths(spec, index)
-    past = max((path.whole_delays + (path.fraction > 0.0) for path in paths), default=0)
+    past = _past(paths)
     size = 1 + past + sum(path.c.size for path in paths)
     if size > LARGEST:
         raise RealisationError(

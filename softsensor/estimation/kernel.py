@@ -12,7 +12,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from plant_models.plant_model import DiscretePath, Matrix, PlantModel
-from softsensor.estimation.schedule_tables import Schedules, schedule_tables
+from softsensor.estimation.schedule_tables import Mask, Schedules, schedule_tables, scheduled_entries
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -112,13 +112,13 @@ def state_of(stacked: EstimatorState, place: int) -> EstimatorState:
     return EstimatorState(*(part[place] for part in stacked))
 
 
-def compressed_rows(matrix: Matrix) -> tuple[Ints, Ints, Floats]:
-    """Row pointers, column indices and values of the entries that are not zero.
+def compressed_rows(matrix: Matrix, keep: Mask | None = None) -> tuple[Ints, Ints, Floats]:
+    """Row pointers, column indices and values of the entries that are not zero, and of those to ``keep`` anyway.
 
     >>> [part.tolist() for part in compressed_rows(np.array([[0.0, 2.0], [0.0, 0.0]]))]
     [[0, 1, 1], [1], [2.0]]
     """
-    rows, columns = np.nonzero(matrix)
+    rows, columns = np.nonzero(matrix if keep is None else (matrix != 0.0) | keep)
     pointers = np.searchsorted(rows, np.arange(matrix.shape[0] + 1)).astype(np.int64)
     return pointers, columns.astype(np.int64), np.ascontiguousarray(matrix[rows, columns])
 
@@ -172,6 +172,8 @@ def build_kernel(model: PlantModel) -> Kernel:
     """Lay a model out for the compiled loop."""
     spec, paths, part = model.scaled, model.paths, model.stochastic
     sizes = [len(path.steady) for path in paths]
+    entries = scheduled_entries(model)
+    compressed_C = compressed_rows(part.C, entries.C)
     operating = [item.operating_point for item in spec.sensors]
     operating += [item.operating_point for item in spec.estimates]
 
@@ -198,13 +200,13 @@ def build_kernel(model: PlantModel) -> Kernel:
         _flat([path.gamma_older for path in paths]),
         _flat([path.c for path in paths]),
         _flat([path.steady for path in paths]),
-        *compressed_rows(part.A),
-        *compressed_rows(part.C),
+        *compressed_rows(part.A, entries.A),
+        *compressed_C,
         np.array(part.q, dtype=np.float64),
         np.array([item.noise_sd**2 for item in spec.sensors], dtype=np.float64),
         np.array([item.gate for item in spec.sensors], dtype=np.float64),
-        *moved_rows(part.A),
-        schedule_tables(model),
+        *moved_rows(np.where(entries.A, 0.5, part.A)),
+        schedule_tables(model, compressed_C[0], compressed_C[1]),
     )
 
 

@@ -20,40 +20,44 @@ import numpy as np
 from softsensor.estimation.compiling import uncounted
 from softsensor.estimation.exponentials import exponentiate, multiply
 from softsensor.estimation.kernel import Floats, Kernel
+from softsensor.estimation.schedule_tables import Schedules
 
-FOLLOWING = ("block_d", "phi", "gamma_recent", "gamma_older", "c_in", "steady")
+FOLLOWING = ("block_d", "phi", "gamma_recent", "gamma_older", "c_in", "steady", "a_val", "c_val")
 """The arrays of the kernel that follow schedules."""
 
 
 def private(kernel: Kernel) -> Kernel:
     """A kernel whose scheduled arrays may be written; the very kernel where it has no schedules."""
     schedules = kernel.schedules
-    if not len(schedules.block):
+    if not len(schedules.tag):
         return kernel
     own = {name: getattr(kernel, name).copy() for name in FOLLOWING}
-    work = {name: getattr(schedules, name).copy() for name in ("lags_now", "work")}
+    work = {name: getattr(schedules, name).copy() for name in ("lags_now", "c_now", "work")}
     return kernel._replace(
-        **own, schedules=schedules._replace(last=np.full(len(schedules.block), np.nan), **work)
+        **own, schedules=schedules._replace(last=np.full(len(schedules.tag), np.nan), **work)
     )
 
 
 @uncounted
 def follow_schedules(kernel: Kernel, u: Floats) -> None:
     """Bring the scheduled arrays of a private kernel to the inputs ``u`` (n_inputs,) of a cycle."""
-    schedules = kernel.schedules
-    for s in range(len(schedules.block)):
-        value = u[schedules.tag[s]]
-        if value != schedules.last[s]:
-            schedules.last[s] = value
-            gain = _interpolate(kernel, s, value)
-            _cascade(kernel, s, gain)
-            _hold(kernel, s, gain)
+    table = kernel.schedules
+    for s in range(len(table.tag)):
+        value = u[table.tag[s]]
+        if value != table.last[s]:
+            table.last[s] = value
+            gain = _interpolate(table, s, value)
+            direct = gain * _cascade(table, s)
+            _hold(table, s)
+            if table.block[s] >= 0:
+                _to_input(kernel, s, gain, direct)
+            else:
+                _to_disturbance(kernel, s, gain, direct)
 
 
 @uncounted
-def _interpolate(kernel: Kernel, s: int, value: float) -> float:
+def _interpolate(table: Schedules, s: int, value: float) -> float:
     """The gain at a value of the tag; the time constants there into the work space."""
-    table = kernel.schedules
     lower, last = table.first[s], table.first[s + 1] - 1
     upper, share = lower, 0.0
     if value >= table.at[last]:
@@ -70,15 +74,13 @@ def _interpolate(kernel: Kernel, s: int, value: float) -> float:
 
 
 @uncounted
-def _cascade(kernel: Kernel, s: int, gain: float) -> None:
-    """[0 0; B A] of the path's cascade into the work space; its C, D and steady state into the kernel. ::
+def _cascade(table: Schedules, s: int) -> float:
+    """[0 0; B A] and C of the path's cascade without its gain into the work space; returns D. ::
 
     x_i' = (u_i - x_i)/T_i,   y_i = (1 - L_i/T_i) x_i + (L_i/T_i) u_i,   u_{i+1} = y_i
     """
-    table, M = kernel.schedules, kernel.schedules.work[0]
-    b = table.block[s]
-    n, lags, start = kernel.block_size[b], table.n_lags[s], kernel.block_state[b]
-    c, direct = kernel.c_in[start : start + n], 1.0
+    M, c = table.work[0], table.c_now
+    n, lags, direct = table.size[s], table.n_lags[s], 1.0
     for i in range(n + 1):
         for j in range(n + 1):
             M[i, j] = 0.0
@@ -91,33 +93,63 @@ def _cascade(kernel: Kernel, s: int, gain: float) -> None:
         M[i + 1, i + 1] = -1.0 / lag
         c[i] = 1.0 - lead / lag
         direct *= lead / lag
-        kernel.steady[start + i] = gain
-    kernel.block_d[b] = gain * direct
-    if lags < n:
-        M[n, 0] = direct
-        for j in range(lags):
-            M[n, j + 1] = c[j]
-            c[j] = 0.0
-        c[lags] = 1.0
-        kernel.block_d[b] = 0.0
+    if lags == n:
+        return float(direct)
+    M[n, 0] = direct
+    for j in range(lags):
+        M[n, j + 1] = c[j]
+        c[j] = 0.0
+    c[lags] = 1.0
+    return 0.0
 
 
 @uncounted
-def _hold(kernel: Kernel, s: int, gain: float) -> None:
-    """The matrix in the work space held over a sample, into the kernel's phi and gamma."""
-    table = kernel.schedules
-    b, fraction, h = table.block[s], table.fraction[s], table.sample_time
-    n, start, at = kernel.block_size[b], kernel.block_state[b], kernel.block_phi[b]
+def _hold(table: Schedules, s: int) -> None:
+    """The matrix in the work space held over the last part of a sample, work[1], and over all of it, work[2]."""
+    n, fraction, h = table.size[s] + 1, table.fraction[s], table.sample_time
     M, after, whole, before, other = table.work[0], table.work[1], table.work[2], table.work[3], table.work[4]
-    exponentiate(M, n + 1, (1.0 - fraction) * h, after, other)
-    result = after
+    exponentiate(M, n, (1.0 - fraction) * h, after, other)
     if fraction > 0.0:
-        exponentiate(M, n + 1, fraction * h, before, other)
-        multiply(after, before, n + 1, whole)
-        result = whole
+        exponentiate(M, n, fraction * h, before, other)
+        multiply(after, before, n, whole)
+    else:
+        for i in range(n):
+            for j in range(n):
+                whole[i, j] = after[i, j]
+
+
+@uncounted
+def _to_input(kernel: Kernel, s: int, gain: float, direct: float) -> None:
+    """From the work space into the arrays of an input-driven path."""
+    table = kernel.schedules
+    after, whole, n, start = table.work[1], table.work[2], table.size[s], table.state[s]
+    at = kernel.block_phi[table.block[s]]
+    kernel.block_d[table.block[s]] = direct
     for i in range(n):
         recent = after[i + 1, 0]
+        kernel.c_in[start + i] = table.c_now[i]
+        kernel.steady[start + i] = gain if i < table.n_lags[s] else 0.0
         kernel.gamma_recent[start + i] = gain * recent
-        kernel.gamma_older[start + i] = gain * (result[i + 1, 0] - recent)
+        kernel.gamma_older[start + i] = gain * (whole[i + 1, 0] - recent)
         for j in range(n):
-            kernel.phi[at + i * n + j] = result[i + 1, j + 1]
+            kernel.phi[at + i * n + j] = whole[i + 1, j + 1]
+
+
+@uncounted
+def _to_disturbance(kernel: Kernel, s: int, gain: float, direct: float) -> None:
+    """From the work space into A and C: each row of A has the disturbance's recent value, its older one where the dead time
+    has a fraction, then the path's own states so far.
+    """
+    table = kernel.schedules
+    after, whole = table.work[1], table.work[2]
+    for i in range(table.size[s]):
+        entry, recent = kernel.a_ptr[table.state[s] + i], after[i + 1, 0]
+        kernel.a_val[entry] = gain * recent
+        if table.fraction[s] > 0.0:
+            entry += 1
+            kernel.a_val[entry] = gain * (whole[i + 1, 0] - recent)
+        for j in range(i + 1):
+            kernel.a_val[entry + 1 + j] = whole[i + 1, j + 1]
+        kernel.c_val[table.c_at[s] + i] = table.c_now[i]
+    if table.d_at[s] >= 0:
+        kernel.c_val[table.d_at[s]] = direct

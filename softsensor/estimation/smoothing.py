@@ -83,7 +83,7 @@ class Trace(NamedTuple):
 
 
 class Adjoint(NamedTuple):
-    """What the cycles after the present one say of its state: r (n,) and N (n, n), zero after the last cycle."""
+    """What a cycle's readings and all later ones say of the prediction for it: r (n,) and N (n, n), zero after the last."""
 
     r: Floats
     N: Floats
@@ -281,10 +281,11 @@ def run_backward(
     w, M = np.zeros(n), np.zeros((n, n))
     m = len(data.at) - 1
     for k in range(data.u.shape[0] - 1, -1, -1):
+        follow_schedules(kernel, data.u[k])
+        _cycle_before(kernel, adj, w, M)
         if not _smooth_cycle(kernel, trace, k, adj, mean, variance):
             return False
         while m >= 0 and data.at[m] == k:
             _take_reading(kernel, data.row[m], trace.gain[m], trace.innovation[m], trace.s[m], adj, w)
             m -= 1
-        _cycle_before(kernel, adj, w, M)
     return True

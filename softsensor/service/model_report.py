@@ -23,6 +23,7 @@ from softsensor.estimation.steady_state import SteadyState, steady_state
 from softsensor.estimation.what_helps import LAB_INTERVAL, Prospects, prospects
 from softsensor.service.path_reports import PathReport, path_reports
 from softsensor.service.scale_report import ScaleReport, scale_reports
+from softsensor.service.schedule_report import PointReport, along_schedules
 from softsensor.service.second_instrument import Mend, mends
 from softsensor.unit_design import design_unit
 
@@ -83,6 +84,7 @@ class ModelReport:
     sensors: tuple[SheetLine, ...]
     inputs: tuple[InputLine, ...]
     mends: tuple[Mend, ...]
+    along_schedules: tuple[PointReport, ...]
     warnings: tuple[str, ...]
 
     @property
@@ -118,6 +120,7 @@ def model_report(model: PlantModel, lab_interval: float = LAB_INTERVAL) -> Model
         sensors,
         sheet.inputs,
         mends(model, sensors),
+        along_schedules(model),
         (
             *_about_schedules(spec),
             *_about_sampling(sampling),

@@ -26,8 +26,11 @@ class ReportTable(NamedTuple):
 
 
 def knowledge_tables(report: ModelReport) -> tuple[ReportTable, ...]:
-    """Transforms if any, disturbances, estimates, where their uncertainty comes from, and what would change them."""
-    return *_scales(report), _disturbances(report), _estimates(report), _sources(report), _prospects(report)
+    """Transforms if any, disturbances, estimates, along schedules if any, where their uncertainty comes from, and what would
+    change them.
+    """
+    estimates = (_estimates(report), *_along_schedules(report))
+    return *_scales(report), _disturbances(report), *estimates, _sources(report), _prospects(report)
 
 
 def paths_table(report: ModelReport) -> ReportTable:
@@ -54,6 +57,22 @@ def _path(path: PathReport) -> tuple[str, ...]:
         f"{path.dead_time_samples:.4g}",
         ", ".join(shape),
     )
+
+
+def _along_schedules(report: ModelReport) -> Iterator[ReportTable]:
+    """Each estimate while a schedule's tag rests at one of its points."""
+    if report.along_schedules:
+        rows = tuple(
+            (
+                item.estimate,
+                f"{item.tag} = {item.value:g} {item.unit}",
+                sd_text(item.sd_without_sensors),
+                sd_text(item.sd_with_sensors),
+            )
+            for item in report.along_schedules
+        )
+        columns = ("estimate", "while", "no sensors", "all sensors")
+        yield ReportTable("Standard deviation of each estimate along the schedule", columns, rows)
 
 
 def _scales(report: ModelReport) -> Iterator[ReportTable]:

@@ -175,7 +175,7 @@ class SmoothedRun:
             trace = interval.forward(EstimatorState(*self._states.get(number)), data, row)
             mean = np.zeros((len(part), kernel.n_estimates))
             variance = np.zeros_like(mean)
-            if not run_backward(kernel, data, trace, adjoint, mean, variance):
+            if not run_backward(private(kernel), data, trace, adjoint, mean, variance):
                 raise interval.unsound(row)
             self._smoothed.put((part.times, mean, np.sqrt(variance) * scale))
 

@@ -1,7 +1,7 @@
 """Estimates given all readings at once: one joint Gaussian of every output at every cycle, and its conditional.
 
-No recursion over readings, no gain, no adjoint: covariances of outputs at two times from the model's powers, one
-system of equations in all readings. Only for short runs.
+No recursion over readings, no gain, no adjoint: covariances of outputs at two times from products of the model's
+matrices, one system of equations in all readings. Only for short runs.
 """
 
 from __future__ import annotations
@@ -9,23 +9,23 @@ from __future__ import annotations
 from collections.abc import Sequence
 
 import numpy as np
-from independent.dense_filter import LabRow, StateSpace, input_driven, stochastic
+from independent.dense_filter import LabRow, StateSpace, course, input_driven
 from independent.transfer_paths import Array, Mask
 
 from plant_models.specification import UnitSpec
 
 
-def joint_covariance(model: StateSpace, count: int) -> Array:
+def joint_covariance(systems: Sequence[StateSpace]) -> Array:
     """(count, p, count, p): covariance of output i at cycle j and output l at cycle k, from x(0) ~ N(0, P0)."""
-    p = len(model.C)
+    count, p = len(systems), len(systems[0].C)
     joint = np.zeros((count, p, count, p))
-    S = model.P0
-    for k in range(count):
+    S = systems[0].P0
+    for k, model in enumerate(systems):
         G = S @ model.C.T
         for j in range(k, count):
-            joint[j, :, k, :] = model.C @ G
+            joint[j, :, k, :] = systems[j].C @ G
             joint[k, :, j, :] = joint[j, :, k, :].T
-            G = model.A @ G
+            G = systems[j].A @ G
         S = model.A @ S @ model.A.T + model.Q
     return joint
 
@@ -37,7 +37,7 @@ def given_everything(
     count, n_sensors = y.shape
     mean = input_driven(spec, u)
     p = mean.shape[1]
-    joint = joint_covariance(stochastic(spec), count).reshape(count * p, count * p)
+    joint = joint_covariance(course(spec, u)).reshape(count * p, count * p)
     noise = np.array([item.noise_sd for item in spec.sensors]) * np.where(uncertain, 3.0, 1.0)
     seen = np.argwhere(np.isfinite(y))
     at = [*(seen[:, 0] * p + seen[:, 1]), *(lab.cycle * p + n_sensors + lab.estimate for lab in labs)]

@@ -8,27 +8,17 @@ by superposed step responses, through a schedule by matrices made anew in every 
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from itertools import pairwise
 
 import numpy as np
+from independent.dense_disturbances import StateSpace, disturbance_block, offsets, output_names, outputs_of
 from independent.scheduled_paths import scheduled_response
-from independent.transfer_paths import Array, Mask, continuous, held_transition, response_to_held, split_delay
+from independent.transfer_paths import Array, Mask, continuous, response_to_held
 
-from plant_models.specification import DisturbanceSpec, EstimateSpec, PathSpec, SensorSpec, UnitSpec
+from plant_models.specification import UnitSpec
 
-HOUR = 3600.0
 UNCERTAIN_FACTOR = 3.0
-
-
-@dataclass(frozen=True)
-class StateSpace:
-    """x(k+1) = A x(k) + w, w ~ N(0, Q); z = C x, sensors first, then estimates; x(0) ~ N(0, P0)."""
-
-    A: Array
-    Q: Array
-    C: Array
-    P0: Array
 
 
 @dataclass(frozen=True)
@@ -62,15 +52,6 @@ class DenseResult:
     """(N, n_sensors): there, and let through by the gate where there is one."""
 
 
-def output_names(spec: UnitSpec) -> list[str]:
-    return [item.tag for item in outputs_of(spec)]
-
-
-def outputs_of(spec: UnitSpec) -> list[SensorSpec | EstimateSpec]:
-    """Sensors first, then estimates: the order of every row here."""
-    return [*spec.sensors, *spec.estimates]
-
-
 def operating_points(spec: UnitSpec) -> Array:
     return np.array([item.operating_point for item in outputs_of(spec)])
 
@@ -92,85 +73,11 @@ def input_driven(spec: UnitSpec, u: Array) -> Array:
     return out
 
 
-def disturbance_block(spec: UnitSpec, item: DisturbanceSpec) -> StateSpace:
-    """One disturbance, a delay line and a companion form for each of its paths."""
-    names = output_names(spec)
-    Ts = spec.sample_time
-    own = [p for p in spec.paths if p.source == item.name or (item.at_input and p.source == item.at_input)]
-    A, C = np.zeros((1, 1)), np.zeros((len(names), 1))
-    steady, integrators = [1.0], []
-    if item.sd is not None:
-        assert item.time_constant is not None
-        A[0, 0] = np.exp(-Ts / item.time_constant)
-        variance = item.sd**2 * (1.0 - A[0, 0] ** 2)
-    else:
-        assert item.walk_sd is not None
-        A[0, 0] = 1.0
-        variance = item.walk_sd**2 * Ts / HOUR
-    for path in own:
-        A, C = append_path(A, C, path, Ts, names.index(path.target))
-        form = continuous(path, Ts)
-        steady += [1.0] * (len(A) - len(steady) - form.order) + list(form.steady)
-        integrators += [len(A) - 1] if form.integrating else []
-    Q = np.zeros_like(A)
-    Q[0, 0] = variance
-    if item.sd is None:
-        P0 = item.initial_sd**2 * np.outer(steady, steady)
-    else:
-        keep = np.setdiff1d(np.arange(len(A)), integrators)
-        P0 = np.zeros_like(A)
-        P0[np.ix_(keep, keep)] = stationary(A[np.ix_(keep, keep)], Q[np.ix_(keep, keep)])
-    return StateSpace(A, Q, C, P0)
-
-
-def append_path(A: Array, C: Array, path: PathSpec, sample_time: float, row: int) -> tuple[Array, Array]:
-    """Add a path's delay line (newest first) and states behind what is there; the disturbance is state 0."""
-    form = continuous(path, sample_time)
-    whole, rest = split_delay(form.delay)
-    phi, older, recent = held_transition(form)
-    line = whole + (rest > 0.0)
-    start, size = len(A), len(A) + line + form.order
-    A2, C2 = np.zeros((size, size)), np.zeros((len(C), size))
-    A2[:start, :start], C2[:, :start] = A, C
-    past = [0, *range(start, start + line)]
-    for newer, place in pairwise(past):
-        A2[place, newer] = 1.0
-    states = slice(start + line, size)
-    A2[states, states] = phi
-    A2[states, past[whole]] += recent
-    if rest > 0.0:
-        A2[states, past[whole + 1]] += older
-    C2[row, states] += form.c
-    C2[row, past[line]] += form.d
-    return A2, C2
-
-
-def stationary(A: Array, Q: Array) -> Array:
-    """P = A P A' + Q of a stable A: the sum of A^i Q A'^i, doubled until it stands still."""
-    P, power = Q.copy(), A.copy()
-    for _ in range(60):
-        more = power @ P @ power.T
-        P, power = P + more, power @ power
-        if np.abs(more).max() <= 1e-18 * np.abs(P).max():
-            return P
-    raise AssertionError("no stationary covariance")
-
-
-def offsets(spec: UnitSpec) -> StateSpace:
-    """The random-walk offsets of the outputs that have one."""
-    items = outputs_of(spec)
-    moving = [i for i, item in enumerate(items) if item.bias_walk_sd > 0.0 or item.bias_initial_sd > 0.0]
-    walk = np.array([items[i].bias_walk_sd for i in moving])
-    initial = np.array([items[i].bias_initial_sd for i in moving])
-    C = np.zeros((len(items), len(moving)))
-    C[moving, np.arange(len(moving))] = 1.0
-    Q = np.diag(walk**2 * spec.sample_time / HOUR)
-    return StateSpace(np.eye(len(moving)), Q, C, np.diag(initial**2))
-
-
-def stochastic(spec: UnitSpec) -> StateSpace:
-    """All disturbances and offsets as one system."""
-    parts = [disturbance_block(spec, item) for item in spec.disturbances] + [offsets(spec)]
+def stochastic(spec: UnitSpec, inputs: dict[str, float] | None = None) -> StateSpace:
+    """All disturbances and offsets as one system, at the operating points; or at ``inputs``, without P0 then."""
+    now = {item.tag: item.operating_point for item in spec.inputs} if inputs is None else inputs
+    parts = [disturbance_block(spec, item, now, inputs is None) for item in spec.disturbances]
+    parts.append(offsets(spec))
     size = sum(len(part.A) for part in parts)
     A, Q, P0 = np.zeros((size, size)), np.zeros((size, size)), np.zeros((size, size))
     at = 0
@@ -179,6 +86,25 @@ def stochastic(spec: UnitSpec) -> StateSpace:
         A[here, here], Q[here, here], P0[here, here] = part.A, part.Q, part.P0
         at += len(part.A)
     return StateSpace(A, Q, np.hstack([part.C for part in parts]), P0)
+
+
+def course(spec: UnitSpec, u: Array) -> list[StateSpace]:
+    """The system of every cycle: the same one where no disturbance goes through a schedule."""
+    sources = {item.name for item in spec.disturbances} | {item.at_input for item in spec.disturbances}
+    tags = {path.schedule.tag for path in spec.paths if path.schedule is not None and path.source in sources}
+    at_rest = stochastic(spec)
+    if not tags:
+        return [at_rest] * len(u)
+    names = [item.tag for item in spec.inputs]
+    made: dict[tuple[float, ...], StateSpace] = {}
+    systems = []
+    for row in u:
+        now = {tag: float(value) for tag, value in zip(names, row, strict=True)}
+        key = tuple(now[tag] for tag in sorted(tags))
+        if key not in made:
+            made[key] = replace(stochastic(spec, now), P0=at_rest.P0)
+        systems.append(made[key])
+    return systems
 
 
 def through_the_gate(gate: Array, score: Array, row: list[int]) -> Mask:
@@ -208,18 +134,18 @@ def filter_in_order(
     :param uncertain: (N, n_sensors), true where a reading is Uncertain.
     :param gate: (n_sensors,) in standard deviations of the innovation; None for no gate.
     """
-    model, mean = stochastic(spec), input_driven(spec, u)
+    systems, mean = course(spec, u), input_driven(spec, u)
     count, n_sensors = y.shape
     scale = np.array([item.interval_scale for item in spec.estimates])
     noise = np.array([item.noise_sd for item in spec.sensors])
     doubt = np.zeros(y.shape, dtype=bool) if uncertain is None else uncertain
-    x, P = np.zeros(len(model.A)), model.P0
+    x, P = np.zeros(len(systems[0].A)), systems[0].P0
     out = {name: np.full(y.shape, np.nan) for name in ("predicted", "innovation", "innovation_sd")}
     estimate, sd = np.zeros((count, len(scale))), np.zeros((count, len(scale)))
     lab_predicted, lab_sd = np.full(len(labs), np.nan), np.full(len(labs), np.nan)
     minus_log_l, row, use = 0.0, [0] * n_sensors, np.isfinite(y)
-    H = model.C[:n_sensors]
-    for k in range(count):
+    for k, model in enumerate(systems):
+        H = model.C[:n_sensors]
         out["predicted"][k] = mean[k, :n_sensors] + H @ x
         out["innovation"][k] = y[k] - out["predicted"][k]
         variance = np.diag(H @ P @ H.T) + np.square(noise * np.where(doubt[k], UNCERTAIN_FACTOR, 1.0))

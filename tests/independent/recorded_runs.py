@@ -7,7 +7,7 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 import pandas as pd
-from independent.dense_filter import LabRow, input_driven, stochastic
+from independent.dense_filter import LabRow, course, input_driven
 from independent.transfer_paths import Array, Mask
 
 from plant_models.specification import UnitSpec
@@ -54,15 +54,15 @@ def record(spec: UnitSpec, cycles: int, seed: int, gaps: float = 0.0, move: floa
     :param move: standard deviation of an input's steps, in its unit.
     """
     rng = np.random.default_rng([77, seed])
-    model = stochastic(spec)
     operating = np.array([item.operating_point for item in spec.inputs])
     moves = rng.random((cycles, operating.size)) < 0.08
     u = operating + np.cumsum(np.where(moves, rng.normal(0.0, move, moves.shape), 0.0), axis=0)
-    values, vectors = np.linalg.eigh(model.P0)
+    systems = course(spec, u)
+    values, vectors = np.linalg.eigh(systems[0].P0)
     x = vectors @ (np.sqrt(np.clip(values, 0.0, None)) * rng.standard_normal(values.size))
-    walk = np.sqrt(np.diag(model.Q))
-    z = np.zeros((cycles, len(model.C)))
-    for k in range(cycles):
+    walk = np.sqrt(np.diag(systems[0].Q))
+    z = np.zeros((cycles, len(systems[0].C)))
+    for k, model in enumerate(systems):
         z[k] = model.C @ x
         x = model.A @ x + walk * rng.standard_normal(walk.size)
     truth = input_driven(spec, u) + z

@@ -1,4 +1,4 @@
-"""Random units whose paths from inputs change with an input."""
+"""Random units whose paths change with an input."""
 
 from __future__ import annotations
 
@@ -14,24 +14,22 @@ OFFSETS = (-3.0, -1.0, 0.0, 1.5, 4.0)
 
 
 def scheduled_unit(seed: int) -> UnitSpec:
-    """``random_unit(seed)`` with a schedule on every path from an input that may have one."""
+    """``random_unit(seed)`` with a schedule on every path that may have one, on those of disturbances for even seeds."""
     spec = random_unit(seed)
     rng = np.random.default_rng([7, seed])
     return replace(spec, paths=tuple(_scheduled(path, spec, rng) for path in spec.paths))
 
 
-def may_be_scheduled(path: PathSpec, spec: UnitSpec) -> bool:
-    """A factored path from an input where no disturbance enters, with a time constant for each lead."""
-    return (
-        path.source in {item.tag for item in spec.inputs}
-        and path.source not in {item.at_input for item in spec.disturbances}
-        and path.numerator is None
-        and len(path.lead_times) <= len(path.time_constants)
-    )
+def disturbed(path: PathSpec, spec: UnitSpec) -> bool:
+    """Does a disturbance go through the path?"""
+    return any(path.source in (item.name, item.at_input) for item in spec.disturbances)
 
 
 def _scheduled(path: PathSpec, spec: UnitSpec, rng: np.random.Generator) -> PathSpec:
-    if not may_be_scheduled(path, spec):
+    """Factored paths with a time constant for each lead."""
+    if path.numerator is not None or len(path.lead_times) > len(path.time_constants):
+        return path
+    if disturbed(path, spec) and int(spec.name.removeprefix("U-")) % 2:
         return path
     item = spec.inputs[int(rng.integers(len(spec.inputs)))]
     count = int(rng.integers(2, len(OFFSETS) + 1))

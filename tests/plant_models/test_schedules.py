@@ -190,16 +190,30 @@ def _lines_before(text: str, key: str) -> int:
     return next(number for number, line in enumerate(text.splitlines()) if line.startswith(name))
 
 
-def test_a_path_that_a_disturbance_goes_through_may_not_change() -> None:
-    at_input = SOUND.replace(
-        'time_constant = "1.5 h"',
-        'time_constant = "1.5 h"\n\n[[disturbance]]\nname = "duty"\nwalk_sd = 1.0\nat_input = "QI1"',
+def test_paths_of_disturbances_have_their_places_in_the_stochastic_part() -> None:
+    """Its own, and one at an input: behind the disturbance come its past values, then its paths in file order."""
+    duty = '\n[[disturbance]]\nname = "duty"\nwalk_sd = 1.0\nat_input = "QI1"\n'
+    text = SOUND.replace('time_constant = "1.5 h"\n', f'time_constant = "1.5 h"\n{duty}')
+    text = text.replace("gain = 14.0\n", 'schedule = { tag = "FI1", at = [8, 12], gain = [14, 12] }\n')
+    model = build_plant_model(parse_model_text(text, "m.toml"))
+    found = model.scheduled_states
+    assert [(item.path.source, item.state, item.newest, item.row) for item in found] == [
+        ("feed", 1, 0, 0),
+        ("QI1", 6, 4, 0),
+    ]
+    names = model.stochastic.state_names
+    assert names[1] == "feed -> TI1, state 1"
+    assert names[4:8] == (
+        "duty, 1 sample ago",
+        "duty, 2 samples ago",
+        "duty -> TI1, state 1",
+        "duty -> TI1, state 2",
     )
-    with pytest.raises(ModelFileError, match="no disturbance goes through; duty goes through this one"):
-        parse_model_text(at_input, "m.toml")
-    own = SOUND.replace("gain = 14.0\n", 'schedule = { tag = "FI1", at = [8, 12], gain = [14, 12] }\n')
-    with pytest.raises(ModelFileError, match="feed goes through this one"):
-        parse_model_text(own, "m.toml")
+    assert found[1].fraction == pytest.approx(0.4)
+    phi, older, recent = transition(found[1].path, 10.0, 0.4, 10.0)
+    np.testing.assert_allclose(model.stochastic.A[6:8, 6:8], phi, rtol=1e-12)
+    np.testing.assert_allclose(model.stochastic.A[6:8, 4], recent, rtol=1e-12)
+    np.testing.assert_allclose(model.stochastic.A[6:8, 5], older, rtol=1e-12)
 
 
 @pytest.mark.parametrize(

@@ -11,18 +11,22 @@ from numpy.typing import NDArray
 from plant_models.plant_model import PlantModel
 from softsensor.estimation.input_driven import accept_inputs, advance_input_driven, input_driven_outputs
 from softsensor.estimation.kernel import EstimatorState, Floats, Ints, Kernel, build_kernel, initial_state
+from softsensor.estimation.noise_tuning.courses import Course, course
 from softsensor.estimation.schedules import follow_schedules, private
 
 
 class Deviations(NamedTuple):
-    """z (N, m): readings less the input-driven part, nan where there is none; scale (N, m) on the noise variance."""
+    """z (N, m): readings less the input-driven part, nan where there is none; scale (N, m) on the noise variance; how A and
+    C move.
+    """
 
     z: Floats
     scale: Floats
+    course: Course
 
     def between(self, first: int, stop: int) -> Deviations:
         """The cycles from first to stop (exclusive)."""
-        return Deviations(self.z[first:stop], self.scale[first:stop])
+        return Deviations(self.z[first:stop], self.scale[first:stop], self.course.between(first, stop))
 
 
 @njit(cache=True)
@@ -52,7 +56,7 @@ def deviations(model: PlantModel, u: Floats, y: Floats, scale: Floats, doubtful:
     )
     z = np.ascontiguousarray(y - outputs[:, : kernel.n_sensors])
     z[_unsettled(doubtful)] = np.nan
-    return Deviations(z, np.ascontiguousarray(scale))
+    return Deviations(z, np.ascontiguousarray(scale), course(model, kernel, u))
 
 
 @njit(cache=True)

@@ -19,6 +19,8 @@ import numpy as np
 from numba import njit
 
 from softsensor.estimation.kernel import Floats, Ints
+from softsensor.estimation.noise_tuning.courses import Course
+from softsensor.estimation.noise_tuning.deviations import Deviations
 from softsensor.estimation.noise_tuning.parameters import NoiseModel
 
 
@@ -133,8 +135,17 @@ def _correct_sensitivity(
 
 
 @njit(cache=True)
+def _bring(part: NoiseModel, course: Course, k: int) -> None:
+    """A and C of cycle k."""
+    for e in range(len(course.a_to)):
+        part.a_val[course.a_to[e]] = course.a_val[k, e]
+    for e in range(len(course.c_to)):
+        part.c_val[course.c_to[e]] = course.c_val[k, e]
+
+
+@njit(cache=True)
 def _run(
-    part: NoiseModel, z: Floats, scale: Floats, first: int, grad: Floats, info: Floats
+    part: NoiseModel, z: Floats, scale: Floats, course: Course, first: int, grad: Floats, info: Floats
 ) -> tuple[float, int]:
     n, p = len(part.q), len(part.dq)
     x, P, dx, dP = np.zeros(n), part.P0.copy(), np.zeros((p, n)), part.P0_change.copy()
@@ -142,6 +153,7 @@ def _run(
     ds, de = np.zeros(p), np.zeros(p)
     value, count = 0.0, 0
     for k in range(z.shape[0]):
+        _bring(part, course, k)
         for i in range(z.shape[1]):
             if z[k, i] != z[k, i]:
                 continue
@@ -168,16 +180,14 @@ def _run(
     return value, count
 
 
-def innovations_likelihood(part: NoiseModel, z: Floats, scale: Floats, first: int = 0) -> Likelihood:
-    """The likelihood of deviations ``z`` (N, m) from the input-driven part, nan where there is no reading.
+def innovations_likelihood(part: NoiseModel, data: Deviations, first: int = 0) -> Likelihood:
+    """The likelihood of deviations from the input-driven part; A and C of ``part`` are left as in the last cycle.
 
-    :param scale: (N, m) factor on each reading's noise variance.
     :param first: cycles before this one only lead in; they are not counted.
     :return: with the value nan where an innovation's variance is not positive.
     """
     p = len(part.dq)
     gradient, information = np.zeros(p), np.zeros((p, p))
-    value, count = _run(
-        part, np.ascontiguousarray(z), np.ascontiguousarray(scale), first, gradient, information
-    )
+    z, scale = np.ascontiguousarray(data.z), np.ascontiguousarray(data.scale)
+    value, count = _run(part, z, scale, data.course, first, gradient, information)
     return Likelihood(value, count, gradient, information)

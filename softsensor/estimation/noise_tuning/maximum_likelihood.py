@@ -32,6 +32,7 @@ from softsensor.estimation.noise_tuning.parameters import (
     seen_states,
     with_values,
 )
+from softsensor.estimation.schedule_tables import scheduled_entries
 from softsensor.estimation.steady_state import Rows, settle
 
 REACH = 1e4
@@ -77,6 +78,7 @@ class NoiseFit:
         self._model = model
         self._data = data
         self._first = first
+        self._entries = scheduled_entries(model)
 
     def spec_at(self, theta: Floats) -> UnitSpec:
         """The specification with these logarithms of its noise."""
@@ -86,8 +88,8 @@ class NoiseFit:
         """log L, gradient and expected information."""
         spec = in_model_scale(self.spec_at(theta))
         part = part_with_values(spec, self._model.stochastic, self.parameters)
-        noise = noise_model(spec, part, self.parameters)
-        return innovations_likelihood(noise, self._data.z, self._data.scale, self._first)
+        noise = noise_model(spec, part, self.parameters, self._entries)
+        return innovations_likelihood(noise, self._data, self._first)
 
     def observed_information(self, theta: Floats) -> Floats:
         """Minus the second derivatives of log L (p, p), from central differences of the exact gradient."""

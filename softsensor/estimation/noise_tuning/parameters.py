@@ -18,6 +18,7 @@ from plant_models.plant_model import Matrix, StochasticPart
 from plant_models.specification import DisturbanceSpec, UnitSpec
 from plant_models.stochastic import HOUR, stationary_covariance
 from softsensor.estimation.kernel import Floats, Ints, compressed_rows
+from softsensor.estimation.schedule_tables import Masks
 
 Key = Literal["noise_sd", "bias_walk_sd", "sd", "time_constant", "walk_sd"]
 
@@ -159,8 +160,13 @@ def seen_states(spec: UnitSpec, part: StochasticPart) -> NDArray[np.intp]:
         seen = more
 
 
-def noise_model(spec: UnitSpec, part: StochasticPart, parameters: tuple[NoiseParameter, ...]) -> NoiseModel:
-    """The stochastic part that sensors see and its derivatives by the logarithms of ``parameters``, at ``spec``."""
+def noise_model(
+    spec: UnitSpec, part: StochasticPart, parameters: tuple[NoiseParameter, ...], entries: Masks | None = None
+) -> NoiseModel:
+    """The stochastic part that sensors see and its derivatives by the logarithms of ``parameters``, at ``spec``.
+
+    :param entries: what of A and C has a place even where it is zero.
+    """
     states = seen_states(spec, part)
     place = {int(state): at for at, state in enumerate(states)}
     count, n = len(parameters), len(states)
@@ -177,8 +183,8 @@ def noise_model(spec: UnitSpec, part: StochasticPart, parameters: tuple[NoisePar
             P0_change[j] = moved.P0_change[np.ix_(states, states)]
     sensors = len(spec.sensors)
     return NoiseModel(
-        *compressed_rows(part.A[np.ix_(states, states)]),
-        *compressed_rows(part.C[:sensors, states]),
+        *compressed_rows(part.A[np.ix_(states, states)], entries and entries.A[np.ix_(states, states)]),
+        *compressed_rows(part.C[:sensors, states], entries and entries.C[:sensors, states]),
         np.ascontiguousarray(part.q[states]),
         np.array([item.noise_sd**2 for item in spec.sensors]),
         np.ascontiguousarray(part.P0[np.ix_(states, states)]),
