@@ -293,3 +293,27 @@ def test_the_summary_is_in_engineering_units_and_coverage_in_either(
     np.testing.assert_allclose(
         found.smoothed["sd"], found.smoothed["value"] * other.smoothed["sd"], rtol=1e-6
     )
+
+
+def test_late_readings_of_transformed_tags_count_as_if_in_time(model: PlantModel, plain_text: str) -> None:
+    """An hour of the analyser comes two hours late, zeros among it: the same as in logarithms, the zeros not there."""
+    frame = simulated(600, 12)
+    late_at = np.arange(200, 260)
+    late = pd.DataFrame(
+        {
+            "time": frame["time"].iloc[late_at].to_list(),
+            "arrived_at": frame["time"].iloc[late_at + 120].to_list(),
+            "tag": "AI1",
+            "value": frame["AI1"].iloc[late_at].to_numpy(),
+        }
+    )
+    frame.loc[200:259, "AI1"] = np.nan
+    with_zeros = late.copy()
+    with_zeros.loc[::7, "value"] = 0.0
+    found = softsensor.replay(model, frame, late=with_zeros)
+    logs = late.drop(index=late.index[::7]).assign(value=lambda rows: np.log(rows["value"]))
+    plain = build_plant_model(parse_model_text(plain_text, "c1.toml"))
+    expected = softsensor.replay(plain, in_logarithms(frame), late=logs)
+    np.testing.assert_allclose(found.estimates["value"], np.exp(expected.estimates["value"]), rtol=1e-7)
+    without = softsensor.replay(plain, in_logarithms(frame))
+    assert np.abs(without.estimates["value"] - expected.estimates["value"]).max() > 1e-6
