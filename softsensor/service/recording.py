@@ -21,6 +21,7 @@ from softsensor.estimation.late_readings import LateReadings, UnusedReadings
 from softsensor.estimation.past import Revision
 from softsensor.readings_of_cycle import CycleReadings
 from softsensor.records import blocks, decisions, happenings, rests, storing
+from softsensor.records.coverage import watch_coverage
 from softsensor.service.checkpoints import FORMAT, pack_estimator
 from softsensor.service.result_tables import reasons
 from softsensor.service.unit_run import Came
@@ -147,6 +148,9 @@ def write_step(connection: Connection, unit_id: int, design: UnitDesign, step: S
     rests.store_rests(connection, unit_id, step.results.rests)
     for outcome in step.labs:
         _write_lab(connection, unit_id, outcome, int(step.results.times[0]))
+    for tag in {outcome.arrival.tag for outcome in step.labs}:
+        news = sum(outcome.arrival.tag == tag for outcome in step.labs)
+        watch_coverage(connection, unit_id, tag, news, int(step.results.times[0]))
     for revision in step.revisions:
         _write_revision(connection, unit_id, revision, cycle)
     for taken in step.taken:
