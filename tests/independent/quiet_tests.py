@@ -37,5 +37,6 @@ def step(
     """One cycle with readings ``y`` and standardised innovations ``z``; the union of the news."""
     n = len(y)
     fresh, none, events = np.ones(n, dtype=np.int64), np.zeros(n, dtype=np.int64), np.zeros(n, dtype=np.int64)
-    news = one_cycle(design, state, y, np.zeros(1), fresh, doubtful, 0, z, np.ones(n), none, squares, events)
+    slope, still, sd = np.ones(n), np.zeros(1), np.ones(n)
+    news = one_cycle(design, state, y, slope, still, fresh, doubtful, 0, z, sd, none, squares, events)
     return int(news)
