@@ -1,7 +1,7 @@
 """The handbook's chapters as pages: as much of Markdown as they use, everything escaped first.
 
-Headings, paragraphs, lists of one level, fenced code, tables, and within a line code, bold, italics and links to
-chapters and headings. Anything else is shown as it is written.
+Headings, paragraphs, lists of one level, fenced code, tables, and within a line code, bold, italics, pictures of
+the handbook's own and links to chapters and headings. Anything else is shown as it is written.
 """
 
 from __future__ import annotations
@@ -16,6 +16,7 @@ _ITEM = re.compile(r"(-|\d+\.) +(.*)")
 _RULE = re.compile(r"\|[\s:|-]+\|?\s*")
 _CODE = re.compile(r"`([^`]+)`")
 _LINK = re.compile(r"\[([^\]]+)\]\(([a-z0-9-]+\.md)?(#[a-z0-9-]+)?\)")
+_PICTURE = re.compile(r"!\[([^\]]+)\]\((pictures/[a-z0-9-]+\.png)\)")
 _BOLD = re.compile(r"\*\*([^*]+)\*\*")
 _ITALIC = re.compile(r"\*([^*\s](?:[^*]*[^*\s])?)\*")
 
@@ -40,7 +41,7 @@ def inline(text: str) -> str:
 
 
 def _marked(part: str) -> str:
-    part = _LINK.sub(_link, part)
+    part = _LINK.sub(_link, _PICTURE.sub(r'<img src="/handbook/\2" alt="\1">', part))
     return _ITALIC.sub(r"<em>\1</em>", _BOLD.sub(r"<strong>\1</strong>", part))
 
 

@@ -149,6 +149,15 @@ def page_routes(site: Site, pages: Pages) -> APIRouter:
     def handbook(request: Request) -> Response:
         return pages.page(request, "handbook.html", chapters=_chapters(), chapter=None, text="")
 
+    @router.get("/handbook/pictures/{name}")
+    def handbook_picture(name: str) -> Response:
+        pictures = {
+            file.name: file for file in resources.files("softsensor.handbook").joinpath("pictures").iterdir()
+        }
+        if name not in pictures or not name.endswith(".png"):
+            raise NotHere(f"There is no picture {name}.")
+        return Response(pictures[name].read_bytes(), media_type="image/png")
+
     @router.get("/handbook/{chapter}")
     def handbook_chapter(request: Request, chapter: str) -> Response:
         chapters = _chapters()

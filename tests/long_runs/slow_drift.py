@@ -39,15 +39,17 @@ LEAD_IN = 20_000
 
 @dataclass(frozen=True)
 class Run:
-    """One plant: shares of the decision interval, cycle by cycle, of the bank and of the usual pair; the flags opened."""
+    """One plant: shares of the decision interval, cycle by cycle, of the whole bank, of its patient pair and of the usual
+    pair; the flags opened."""
 
     bank: Array
+    patient: Array
     usual: Array
     flags: tuple[Flag, ...]
 
-    def found(self, shares: Array) -> int | None:
+    def found(self, sums: Array) -> int | None:
         """Cycles from the onset until the sum passes its interval; None where it does not."""
-        up = np.flatnonzero(shares[LEAD_IN:] > 1.0)
+        up = np.flatnonzero(sums[LEAD_IN:] > 1.0)
         return int(up[0]) if up.size else None
 
     @property
@@ -69,13 +71,13 @@ def sheet_drift(design: DetectionDesign) -> float:
     return size
 
 
-def usual_shares(z: Array, interval: float) -> Array:
-    """The larger sum of a pair with k = USUAL_K over innovations z, as a share of its interval; nan is passed over."""
+def shares(z: Array, reference: float, interval: float) -> Array:
+    """The larger sum of a pair over innovations z, as a share of its interval; nan is passed over."""
     high = low = 0.0
     out = np.empty(len(z))
     for k, value in enumerate(z.tolist()):
         if value == value:
-            high, low = max(0.0, high + value - USUAL_K), max(0.0, low - value - USUAL_K)
+            high, low = max(0.0, high + value - reference), max(0.0, low - value - reference)
         out[k] = max(high, low) / interval
     return out
 
@@ -90,10 +92,14 @@ def run_one(design: UnitDesign, per_day: float, seed: int, days: float = HORIZON
     seen = seen_by(design, case, Plant(spec, 3000 + seed).readings(case)[1], keep=True)
     z = np.concatenate([(part.innovation / part.innovation_sd)[:, INDEX] for part in seen.parts])
     bank = np.concatenate([np.maximum(part.high, part.low)[:, INDEX] for part in seen.parts])
-    interval = decision_interval(USUAL_K, spec.false_flag_interval / spec.sample_time)
+    own = design.detection.tests
+    patient = shares(
+        np.clip(z, -own.clip, own.clip), float(own.reference[INDEX, 0]), float(own.interval[INDEX, 0])
+    )
+    usual = shares(z, USUAL_K, decision_interval(USUAL_K, spec.false_flag_interval / spec.sample_time))
     onset = LEAD_IN * design.detection.sample_us
     opened = tuple(flag for flag in seen.flags if flag.cleared is None and flag.detected >= onset)
-    return Run(bank, usual_shares(z, interval), opened)
+    return Run(bank, patient, usual, opened)
 
 
 def report(design: UnitDesign, runs: list[Run], per_day: float) -> str:
@@ -138,9 +144,9 @@ def draw(design: UnitDesign, run: Run, per_day: float, path: Path) -> None:
     top.axhline(sensor.tolerance, color="#b34700", linestyle=":", label="tolerance")
     top.set_ylabel(f"{TAG}, K")
     bottom.plot(days, run.usual, color="#8a9499", linewidth=0.6, label=f"one usual pair, k = {USUAL_K:g}")
-    bottom.plot(days, run.bank, color="#2f6f8f", linewidth=0.9, label="bank with its patient pair")
+    bottom.plot(days, run.patient, color="#2f6f8f", linewidth=0.9, label="the patient pair")
     bottom.axhline(1.0, color="#b34700", label="decision interval: one false flag in 30 d")
-    found = run.found(run.bank)
+    found = run.found(run.patient)
     if found is not None:
         bottom.axvline(found * spec.sample_time / DAY, color="#2f6f8f", linestyle="--", label="found")
     bottom.axvline(

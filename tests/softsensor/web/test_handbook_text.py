@@ -27,6 +27,8 @@ CASES = {
     "2 * 3 * 4": "<p>2 * 3 * 4</p>",
     "[x](javascript:alert(1)) [y](http://a.test)": "<p>[x](javascript:alert(1)) [y](http://a.test)</p>",
     "[x](#here) [y](a.md#b)": '<p><a href="#here">x</a> <a href="/handbook/a#b">y</a></p>',
+    "![x\ny](pictures/a-b.png)": '<p><img src="/handbook/pictures/a-b.png" alt="x y"></p>',
+    "![x](http://a.test/b.png)": "<p>![x](http://a.test/b.png)</p>",
     "<script>alert(1)</script>": "<p>&lt;script&gt;alert(1)&lt;/script&gt;</p>",
     "": "",
 }
@@ -53,8 +55,16 @@ def test_every_chapter_is_shown_and_its_links_lead_somewhere(asker: Any, chapter
     assert re.findall(r"^#+ ", body, re.MULTILINE) == []
     for link in re.findall(r'href="([^"#]*)(?:#[^"]*)?"', body):
         assert not link or asker.get(link).status_code == 200
+    for picture in re.findall(r'<img src="([^"]*)"', body):
+        shown = asker.get(picture)
+        assert (shown.status_code, shown.headers["content-type"]) == (200, "image/png")
     for place in re.findall(r'href="#([^"]+)"', body):
         assert f'id="{place}"' in body
+
+
+@pytest.mark.parametrize("name", ["none.png", "__init__.py", "..%2F11-measured.md"])
+def test_nothing_but_the_pictures_is_given_out(asker: Any, name: str) -> None:
+    assert asker.get(f"/handbook/pictures/{name}").status_code == 404
 
 
 def test_the_list_of_chapters_names_them_all(asker: Any) -> None:
