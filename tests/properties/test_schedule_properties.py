@@ -6,11 +6,12 @@ from dataclasses import replace
 from functools import cache
 
 import numpy as np
+import pandas as pd
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 from independent.dense_filter import LabRow
-from independent.recorded_runs import Run, record
+from independent.recorded_runs import Run, by_cycle, record
 from independent.replaying import Outcome, arrival, design_of, readings_of, replay_in_parts
 from independent.scheduled_units import scheduled_unit
 
@@ -149,3 +150,22 @@ def test_an_estimate_is_uncertain_outside_the_schedule_and_says_so() -> None:
     assert 0 < outside.sum() < CYCLES
     np.testing.assert_array_equal(said.to_numpy(), outside)
     assert set(first["status"][outside]) == {"Uncertain"}
+
+
+@pytest.mark.parametrize("model", [0, 1])
+def test_late_values_of_the_tag_count_where_they_belong(model: int) -> None:
+    """The scheduling input is away for thirty cycles and sends what it kept: from then on all is as if it had never been."""
+    run, tag = run_of(model), design_for(model).model.spec.inputs[design_for(model).scheduled[0][0]].tag
+    whole = run.history()
+    history = whole.copy()
+    history.loc[50:79, tag] = np.nan
+    late = pd.DataFrame({"time": whole["time"][50:80], "tag": tag, "value": whole[tag][50:80]})
+    late["arrived_at"] = whole["time"][100]
+    plant = design_for(model).model
+    found, in_time = (
+        by_cycle(result.estimates, "value", plant.estimate_tags)
+        for result in (softsensor.replay(plant, history, late=late), softsensor.replay(plant, whole))
+    )
+    assert found[100:].tobytes() == in_time[100:].tobytes()
+    assert found[:50].tobytes() == in_time[:50].tobytes()
+    assert found[60:100].tobytes() != in_time[60:100].tobytes()
