@@ -9,7 +9,7 @@ from statistics import median
 
 import numpy as np
 import pandas as pd
-from independent.dense_filter import StateSpace, stationary
+from independent.dense_disturbances import StateSpace, stationary
 from independent.recorded_runs import START, Run, record
 from independent.transfer_paths import Array
 
