@@ -15,6 +15,7 @@ from softsensor.detection.diagnosis import (
     judge,
     likelihoods,
     onset_ages,
+    sharp_ages,
 )
 from softsensor.detection.flags import (
     FlagBook,
@@ -102,7 +103,7 @@ def look(
     design: DetectionDesign, tests: TestState, use: Ints, gains: bool = True, only: Hypothesis | None = None
 ) -> tuple[Verdict, Likelihoods]:
     """Weigh all explanations of the innovations since the tests were last restarted; after an outage of
-    inputs, what they explain may be older.
+    inputs, what they explain may be older. A step from before the innovations that are kept is among the explanations.
 
     ``gains``: wrong gains of transfer functions too, which costs several times as much; ``only`` those of the paths that
     concern one sensor or input.
@@ -111,9 +112,12 @@ def look(
     newest = int(tests.cycle[0]) - 1
     available = max(min(newest + 1 - int(tests.valid_from[0]), design.window), 1)
     remembered = max(min(newest + 1, design.window), 1)
-    ages = onset_ages(remembered if tests.resumed[0] != 0 else available)
+    grid = onset_ages(remembered if tests.resumed[0] != 0 else available)
+    ages = np.union1d(grid, sharp_ages(tests.ring, newest, steady.sd, available))
     prior_sd = np.array([suspect.prior_sd for suspect in design.suspects])
-    found = likelihoods(table, prior_sd, tests.ring, newest, steady.whitening, use, ages, available)
+    forgotten = available == design.window
+    older = np.array([int(forgotten and item.shape == "step") for item in design.suspects], dtype=np.int64)
+    found = likelihoods(table, prior_sd, tests.ring, newest, steady.whitening, use, ages, available, older)
     if not (gains and design.paths):
         return judge(design.suspects, found), found
     rings = (tests.ring, tests.moves)

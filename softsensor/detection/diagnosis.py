@@ -26,6 +26,8 @@ NAMING_RATIO = 10.0
 """A single name is given only when it is this many times as probable as all other explanations together."""
 
 
+SHARPEST = 4
+"""Unusual cycles at which onsets are looked for besides the grid."""
 FINEST = 1000.0
 """Log evidence beyond this tells no more: signatures are good to a few per cent (the filter has not quite settled, the gate
 kept a reading out, a gain is not quite the model's), and of a gross fault's e^14000 a difference of e^10 between two
@@ -91,6 +93,19 @@ def score_of(signature: Floats, eps: Floats, whole: Ints, age: int) -> tuple[flo
 
 
 @njit(cache=True)
+def score_of_older(left: Floats, eps: Floats, whole: Ints) -> tuple[float, float]:
+    """N and D of a constant signature (n_sensors,) over all cycles that are whole."""
+    numerator, denominator = 0.0, 0.0
+    for k in range(eps.shape[0]):
+        if whole[k] == 0:
+            continue
+        for i in range(eps.shape[1]):
+            numerator += left[i] * eps[k, i]
+            denominator += left[i] * left[i]
+    return numerator, denominator
+
+
+@njit(cache=True)
 def likelihoods(
     table: Floats,
     prior_sd: Floats,
@@ -100,10 +115,13 @@ def likelihoods(
     use: Ints,
     ages: Ints,
     scored: int,
+    older: Ints,
 ) -> Likelihoods:
     """Score every hypothesis over the onsets in ``ages`` (cycles back, ascending; the largest sets the window).
 
-    Only the latest ``scored`` cycles count; an onset may lie before them, in an outage for example.
+    Only the latest ``scored`` cycles count; an onset may lie before them, in an outage for example. ``older`` (n,) is 1
+    where one onset more is looked at, so long ago that only what is left in the end shows: the last row of the signature,
+    all the time. Its age is given as the largest of ``ages``.
     """
     n, count = table.shape[0], ages[-1]
     eps, whole = np.zeros((count, ring.shape[1])), np.ones(count, dtype=np.int64)
@@ -113,20 +131,23 @@ def likelihoods(
     size, size_sd = np.zeros(n), np.zeros(n)
     for h in range(n):
         precision = 1.0 / (prior_sd[h] * prior_sd[h])
-        scores = np.zeros(len(ages))
-        for a in range(len(ages)):
-            numerator, denominator = score_of(table[h], eps, whole, ages[a])
+        scores = np.zeros(len(ages) + older[h])
+        for a in range(len(scores)):
+            if a < len(ages):
+                numerator, denominator = score_of(table[h], eps, whole, ages[a])
+            else:
+                numerator, denominator = score_of_older(table[h, -1], eps, whole)
             scores[a] = 0.5 * numerator * numerator / (denominator + precision) - 0.5 * logarithm(
                 1.0 + denominator / precision
             )
             if a == 0 or scores[a] > evidence[h]:
-                evidence[h], best_age[h] = scores[a], ages[a]
+                evidence[h], best_age[h] = scores[a], ages[min(a, len(ages) - 1)]
                 size[h] = numerator / (denominator + precision)
                 size_sd[h] = np.sqrt(1.0 / (denominator + precision))
         total = 0.0
-        for a in range(len(ages)):
+        for a in range(len(scores)):
             total += exponential(scores[a] - evidence[h])
-        evidence[h] += logarithm(total / len(ages))
+        evidence[h] += logarithm(total / len(scores))
     return Likelihoods(evidence, best_age, size, size_sd)
 
 
@@ -141,6 +162,18 @@ def onset_ages(available: int) -> Ints:
         ages.append(age)
         age = max(age + 1, age + age // 6)
     return np.array([*ages, max(available, 1)], dtype=np.int64)
+
+
+def sharp_ages(ring: Floats, newest: int, sd: Floats, available: int) -> Ints:
+    """Ages of the innovations (window, n_sensors) furthest from what is usual, and of those before them, ascending.
+
+    A sudden fault's onset must be met, for most of what it leaves may lie in its first cycles; the grid of
+    :func:`onset_ages` passes over it once it is a few dozen cycles old.
+    """
+    rows = ring[(newest - np.arange(available)) % len(ring)]
+    far = np.where(np.isfinite(rows), (rows / sd) ** 2, 0.0).max(axis=1)
+    chosen = np.argsort(-far, kind="stable")[:SHARPEST]
+    return np.unique(np.minimum(np.concatenate((chosen + 1, chosen + 2)), available)).astype(np.int64)
 
 
 def judge(suspects: tuple[Hypothesis, ...], found: Likelihoods) -> Verdict:

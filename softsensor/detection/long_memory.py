@@ -19,7 +19,7 @@ from dataclasses import dataclass, field, replace
 import numpy as np
 
 from plant_models.plant_model import PlantModel
-from softsensor.detection.diagnosis import Likelihoods, Verdict, judge, likelihoods, onset_ages
+from softsensor.detection.diagnosis import Likelihoods, Verdict, judge, likelihoods, onset_ages, sharp_ages
 from softsensor.detection.signatures import (
     Hypothesis,
     SteadyFilter,
@@ -37,8 +37,6 @@ BLOCK = 32
 KEPT = 2048
 """Blocks kept: a week of cycles of 10 s."""
 WHOLE = 0.75
-SHARPEST = 4
-"""Unusual blocks at which onsets are looked for besides the grid."""
 SETTLED = 16_384
 """Cycles after an onset at which a step's signature is taken as settled."""
 
@@ -93,15 +91,6 @@ def block_table(
     return out
 
 
-def _sharp(blocks: Floats, newest: int, steady: SteadyFilter, available: int) -> Ints:
-    """Ages of the blocks furthest from what is usual, and of those before them: a sudden fault's onset must be met, for
-    most of what it leaves lies in its first blocks."""
-    rows = blocks[(newest - np.arange(available)) % len(blocks)]
-    far = np.where(np.isfinite(rows), (rows / steady.sd) ** 2, 0.0).max(axis=1)
-    chosen = np.argsort(-far, kind="stable")[:SHARPEST]
-    return np.unique(np.minimum(np.concatenate((chosen + 1, chosen + 2)), available)).astype(np.int64)
-
-
 def look_back(
     memory: LongMemory, table: Floats, steady: SteadyFilter, tests: TestState, use: Ints
 ) -> tuple[Verdict, Likelihoods] | None:
@@ -116,8 +105,9 @@ def look_back(
     if available < 1:
         return None
     prior_sd = np.array([suspect.prior_sd for suspect in memory.suspects])
-    ages = np.union1d(onset_ages(available), _sharp(tests.blocks, newest, steady, available))
-    found = likelihoods(table, prior_sd, tests.blocks, newest, steady.whitening, use, ages, available)
+    ages = np.union1d(onset_ages(available), sharp_ages(tests.blocks, newest, steady.sd, available))
+    older = np.zeros(len(memory.suspects), dtype=np.int64)
+    found = likelihoods(table, prior_sd, tests.blocks, newest, steady.whitening, use, ages, available, older)
     verdict = judge(memory.suspects, found)
     return verdict, found._replace(age=found.age * BLOCK + (now - (newest + 1) * BLOCK))
 

@@ -41,7 +41,7 @@ class Case:
         for k in range(WINDOW):
             self.ring[(self.newest - (WINDOW - 1 - k)) % WINDOW] = self.innovations[k]
 
-    def found(self, ages: list[int], scored: int = WINDOW) -> Likelihoods:
+    def found(self, ages: list[int], scored: int = WINDOW, older: bool = False) -> Likelihoods:
         return likelihoods(
             self.table,
             self.prior,
@@ -51,6 +51,7 @@ class Case:
             self.use,
             np.array(ages, dtype=np.int64),
             scored,
+            np.full(HYPOTHESES, int(older), dtype=np.int64),
         )
 
     def stacked(self, h: int, age: int) -> tuple[Array, Array, Array]:

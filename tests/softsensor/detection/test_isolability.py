@@ -48,6 +48,7 @@ def test_it_is_the_diagnosis_that_is_asked() -> None:
             use,
             onset_ages(design.window),
             design.window,
+            np.zeros(len(table), dtype=np.int64),
         )
         verdict = judge(design.suspects, found)
         weights = np.exp(logs[draw] - logs[draw].max())
