@@ -69,7 +69,7 @@ def history_of(table: Table, tags: Sequence[str], timezone: str | None) -> Histo
     missing = [tag for tag in tags if tag not in table.columns]
     if missing:
         raise HistoryFileError(
-            *(f"{origin.name}: no column {tag!r}, a tag that the model needs" for tag in missing)
+            *(f"{origin.name}: no column {tag!r}, a tag that is needed" for tag in missing)
         )
     if table.rows == 0:
         raise origin.fault("has no rows; expected at least one")

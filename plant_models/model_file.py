@@ -18,6 +18,7 @@ from plant_models.model_paths import read_path
 from plant_models.model_scale import in_model_scale
 from plant_models.model_schedules import check_schedules
 from plant_models.model_sections import (
+    check_interval,
     read_disturbance,
     read_estimate,
     read_fault_tests,
@@ -89,7 +90,8 @@ def _unit_spec(document: dict[str, Any], faults: FaultList, source: str) -> Unit
     name, title, sample_time, late_horizon = read_unit(unit if unit is not None else _empty_unit())
     inputs = tuple(read_input(table) for table in named["input"])
     sensors = tuple(read_sensor(table) for table in named["sensor"])
-    tests = read_fault_tests(single(document, "fault_tests", faults), [item.tag for item in sensors])
+    about_tests = single(document, "fault_tests", faults)
+    tests = read_fault_tests(about_tests, [item.tag for item in sensors])
     spec = UnitSpec(
         name=name,
         title=title,
@@ -111,6 +113,8 @@ def _unit_spec(document: dict[str, Any], faults: FaultList, source: str) -> Unit
     check_schedules(spec, paths, faults)
     if unit is not None and unit.sound("sample_time"):
         check_dead_times(spec, paths, faults)
+        if about_tests is not None:
+            check_interval(about_tests, tests, sample_time)
     return spec if len(faults) else _in_operation(spec)
 
 

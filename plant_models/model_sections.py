@@ -7,6 +7,7 @@ from collections.abc import Collection
 from dataclasses import dataclass
 from typing import TypeVar
 
+from plant_models.durations import format_duration
 from plant_models.model_kinds import (
     ABOVE_ZERO,
     DURATION_ABOVE_ZERO,
@@ -42,6 +43,9 @@ T = TypeVar("T")
 
 FALSE_FLAG_INTERVAL = 30 * 86400.0
 """Wanted mean time between false flags where the file names none, in seconds."""
+
+LEAST_CYCLES_BETWEEN_FLAGS = 100
+"""A day's promise is thousands of cycles; below this a flag every few minutes would be promised."""
 
 _VARIABLE = ("tag", "unit", "operating_point", "range", "validated_range", "transform")
 _EITHER = "expected sd with time_constant, or walk_sd with initial_sd"
@@ -87,6 +91,17 @@ def read_fault_tests(table: Table | None, sensors: Collection[str]) -> FaultTest
         _by_sensor(table, "disarmed", TEXT, sensors, "a table of reasons such as { TI2101A = 'correlated' }"),
         _patient_sensors(table, sensors),
     )
+
+
+def check_interval(table: Table, tests: FaultTests, sample_time: float) -> None:
+    """Refuse a false-flag interval of so few cycles that no test could keep it."""
+    least = LEAST_CYCLES_BETWEEN_FLAGS * sample_time
+    if table.sound("false_flag_interval") and tests.false_flag_interval < least:
+        table.fault(
+            "false_flag_interval",
+            f"expected at least {LEAST_CYCLES_BETWEEN_FLAGS} sample times, {format_duration(least)}; got "
+            f"{format_duration(tests.false_flag_interval)}",
+        )
 
 
 def _patient_sensors(table: Table, sensors: Collection[str]) -> tuple[str, ...]:

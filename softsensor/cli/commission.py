@@ -128,16 +128,21 @@ def _tell(found: RunLengths, notes: tuple[str, ...], out: Path) -> None:
 def _line(item: SensorRun) -> str:
     seen = item.character
     text = (
-        f"{item.tag}: {seen.readings} innovations, sd {seen.sd_ratio:.3f} of the model's, correlation {seen.lag_one:+.3f} "
+        f"{item.tag}: {seen.readings} innovations, mean {seen.mean:+.3f} and sd {seen.sd_ratio:.3f} of the model's sd, "
+        f"correlation {seen.lag_one:+.3f} "
         f"at lag one, largest {seen.largest:+.3f} at lag {seen.largest_lag} (whiteness p {seen.portmanteau:.1e}), long-run "
         f"variance {seen.slow:.2f}: one false flag per {_time(item.before)}"
     )
     if item.factor is None:
         return f"{text}; DISARMED: {item.reason}"
     if item.factor == 1.0:
-        return f"{text}; nothing is widened"
+        return f"{text}; nothing is widened (up on the stretch {_often(item.ups_before)})"
     after = "" if item.after is None else f"one per {_time(item.after)}"
-    return f"{text}; widened {item.factor:g}: {after} (up on the stretch {item.ups_before} times, then {item.ups_after})"
+    return f"{text}; widened {item.factor:g}: {after} (up on the stretch {_often(item.ups_before)}, then {item.ups_after})"
+
+
+def _often(times: int) -> str:
+    return "once" if times == 1 else f"{times} times"
 
 
 def _time(seconds: float) -> str:

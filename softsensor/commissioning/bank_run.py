@@ -36,6 +36,7 @@ def _count(
     low: Floats,
     up: Ints,
     counts: Ints,
+    up_cycles: Ints,
 ) -> None:
     pairs, widths = len(reference), len(factors)
     widest = factors[widths - 1]
@@ -61,6 +62,8 @@ def _count(
                 counts[j] += 1
             j += 1
         highest_up = max(highest_up, j)
+        for j in range(highest_up):
+            up_cycles[j] += 1
 
 
 class BankRun:
@@ -76,6 +79,8 @@ class BankRun:
         self._up = np.zeros(len(factors), dtype=np.int64)
         self.counts = np.zeros(len(factors), dtype=np.int64)
         """How often the bank has gone up at each width."""
+        self.up_cycles = np.zeros(len(factors), dtype=np.int64)
+        """For how many innovations it was up."""
         self.cycles = 0
         """Innovations so far."""
 
@@ -83,5 +88,16 @@ class BankRun:
         """Run over the next standardised innovations (n,), nan where there is none."""
         bank = self._bank
         high, low = self._sums[0], self._sums[1]
-        _count(z, bank.reference, bank.interval, bank.clip, self.factors, high, low, self._up, self.counts)
+        _count(
+            z,
+            bank.reference,
+            bank.interval,
+            bank.clip,
+            self.factors,
+            high,
+            low,
+            self._up,
+            self.counts,
+            self.up_cycles,
+        )
         self.cycles += int(np.sum(np.isfinite(z)))

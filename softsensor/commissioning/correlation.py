@@ -18,6 +18,8 @@ from softsensor.estimation.kernel import Floats
 PORTMANTEAU_LAGS = 20
 LEVEL = 0.01
 """Chance that innovations of a right model are called correlated, or too wide."""
+MEANS_OF = 20
+"""Times the lags that a stretch must be long for its mean to be taken off."""
 PARZEN_VARIANCE = 0.539
 ONE_SIDED_95 = 1.6448536269514722
 
@@ -53,9 +55,14 @@ class Character:
 
 
 def autocovariances(z: Floats, lags: int) -> Floats:
-    """(lags + 1,) Mean products about the mean at lags 0, 1, ... of z (n,), nan where there is none."""
+    """(lags + 1,) Mean products at lags 0, 1, ... of z (n,), nan where there is none.
+
+    About the mean; where the lags are no small part of the stretch about zero, for the mean of so short a stretch takes
+    part of the slow correlation with it.
+    """
     present = np.isfinite(z)
-    centred = np.where(present, z - np.mean(z[present]), 0.0)
+    mean = float(np.mean(z[present])) if MEANS_OF * lags <= len(z) else 0.0
+    centred = np.where(present, z - mean, 0.0)
     size = 1 << int(np.ceil(np.log2(len(z) + lags + 1)))
     spectrum, mask = np.fft.rfft(centred, size), np.fft.rfft(present.astype(np.float64), size)
     products = np.fft.irfft(np.abs(spectrum) ** 2, size)[: lags + 1]

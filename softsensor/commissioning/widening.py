@@ -34,6 +34,8 @@ EXPECTED = 40.0
 MEMORY = 8.0
 """Lags of the spectrum, in times that a sum needs from zero to its interval under a shift of twice its reference value."""
 LONGEST_MEMORY = 65_536
+UP_SHARE = 0.02
+"""Of the time, for which a bank may be up without a fault."""
 ENOUGH = 0.7
 """Share of the promise that is let pass as chance where nothing speaks against the innovations."""
 
@@ -80,16 +82,31 @@ def widening(z: Floats, bank: Bank, promise: float, seed: int = 1) -> tuple[Char
     bound = 1.0 + ONE_SIDED_95 * math.sqrt(PARZEN_VARIANCE * lags / found.readings)
     offset = 0.0 if found.sound else _offset(found)
     run = simulated(density, offset, bank, EXPECTED * promise, seed)
-    before = run.cycles / max(float(run.counts[0]), 1.0)
-    if found.sound and before >= ENOUGH * promise:
+    before = between_ups(run, 0)
+    if found.sound and before >= ENOUGH * promise and run.up_cycles[0] <= UP_SHARE * run.cycles:
         return found, Widening(1.0, before, before)
     if not found.sound:
         run = simulated(density * bound, offset, bank, EXPECTED * promise, seed)
-    kept = [j for j, count in enumerate(run.counts) if upper_rate(int(count)) * promise <= run.cycles]
+    kept = kept_widths(run, promise)
     if not kept:
         return found, Widening(None, before, None)
     j = kept[0]
-    return found, Widening(float(run.factors[j]), before, run.cycles / max(float(run.counts[j]), 1.0))
+    return found, Widening(float(run.factors[j]), before, between_ups(run, j))
+
+
+def kept_widths(run: BankRun, promise: float) -> list[int]:
+    """Places of the widths at which the bank goes up no more often than promised, and is not up for long either: a bank
+    that never comes down goes up once."""
+    return [
+        j
+        for j, (count, cycles) in enumerate(zip(run.counts, run.up_cycles, strict=True))
+        if upper_rate(int(count)) * promise <= run.cycles and cycles <= UP_SHARE * run.cycles
+    ]
+
+
+def between_ups(run: BankRun, j: int) -> float:
+    """Mean cycles from one going up to the next at a width; the time that the bank is up does not count."""
+    return float(run.cycles - run.up_cycles[j]) / max(float(run.counts[j]), 1.0)
 
 
 def _offset(found: Character) -> float:

@@ -262,14 +262,14 @@ def test_bad_text_files_are_refused(tmp_path: Path, text: str | bytes, said: str
 def test_every_tag_that_is_lacking_is_named(tmp_path: Path) -> None:
     text = "time,B\n2026-01-01T00:00:00Z,1\n"
     assert refusal(tmp_path, text, tags=("A", "B", "C")) == [
-        "no column 'A', a tag that the model needs",
-        "no column 'C', a tag that the model needs",
+        "no column 'A', a tag that is needed",
+        "no column 'C', a tag that is needed",
     ]
 
 
 def test_a_quality_without_its_tag_is_no_column_of_it(tmp_path: Path) -> None:
     assert refusal(tmp_path, "time,A.quality\n2026-01-01T00:00:00Z,Good\n") == [
-        "no column 'A', a tag that the model needs"
+        "no column 'A', a tag that is needed"
     ]
 
 

@@ -55,3 +55,12 @@ def test_a_misspelt_key_is_named_with_what_was_meant() -> None:
     (fault,) = raised.value.faults
     assert (fault.line, fault.key) == (LINE, "leave_out_isolatd")
     assert "did you mean 'leave_out_isolated'?" in fault.message
+
+
+def test_a_promise_of_a_few_cycles_is_a_fault_at_its_line() -> None:
+    with pytest.raises(ModelFileError) as raised:
+        parse_model_text(with_tests('false_flag_interval = "99 min"\n'), "m.toml")
+
+    (fault,) = raised.value.faults
+    assert (fault.line, fault.key) == (LINE, "false_flag_interval")
+    assert "expected at least 100 sample times, 100 min" in fault.message

@@ -185,3 +185,20 @@ def test_a_mean_that_chance_does_not_explain_is_widened_for() -> None:
     _, centred = widening(first_order(30_000, 0.1, 5), one_pair(), PROMISE)
     assert wider.factor is None or wider.factor > 1.1 * (centred.factor or 0.0)
     assert character(first_order(30_000, 0.1, 5) + 0.25, 64).mean == pytest.approx(0.25, abs=0.03)
+
+
+def test_a_bank_that_never_comes_down_keeps_no_promise() -> None:
+    """Innovations off by 0.85 of their sd on average: the bank goes up once and stays; worse data must not look better."""
+    z = 0.85 + np.random.default_rng(8).standard_normal(20_000)
+    _, wider = widening(z, one_pair(promise=5000.0), 5000.0)
+    assert wider.factor is None
+    _, slightly = widening(
+        0.25 + np.random.default_rng(8).standard_normal(20_000), one_pair(promise=5000.0), 5000.0
+    )
+    assert slightly.factor is None or slightly.factor > 1.5
+
+
+def test_the_mean_of_a_stretch_that_is_short_against_the_lags_is_not_taken_off() -> None:
+    """White innovations then have a long-run variance of 1 within its error, and not of 0.05."""
+    found = [character(np.random.default_rng(seed).standard_normal(10_000), 5000).slow for seed in range(40)]
+    assert np.mean(found) == pytest.approx(1.0, abs=0.3)

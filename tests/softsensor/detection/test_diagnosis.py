@@ -113,6 +113,33 @@ def test_onsets_are_averaged_and_the_best_one_reported() -> None:
         assert together.size[h] == single[int(np.argmax(scores))].size[h]
 
 
+@pytest.mark.parametrize("missing", [False, True])
+def test_a_fault_from_before_everything_is_what_is_left_in_the_end(missing: bool) -> None:
+    """One onset more, a signature that stands at its last row: against batch least squares like the others."""
+    case = Case(31, missing)
+    whole = [k for k in range(WINDOW) if not np.isnan(case.innovations[k]).any()]
+    e = np.concatenate([case.innovations[k] for k in whole])
+    S = np.kron(np.eye(len(whole)), case.S)
+    alone, with_older = case.found([WINDOW]), case.found([WINDOW], older=True)
+    for h in range(HYPOTHESES):
+        g = np.tile(case.raw[h, -1], len(whole))
+        ratio = log_density(e, S + case.prior[h] ** 2 * np.outer(g, g)) - log_density(e, S)
+        expected = logsumexp([alone.evidence[h], ratio]) - np.log(2.0)
+        assert np.isclose(with_older.evidence[h], expected, rtol=TOLERANCE)
+        assert with_older.age[h] == WINDOW
+
+
+def test_onsets_are_looked_for_where_innovations_are_far_from_usual() -> None:
+    ring = np.zeros((64, 2))
+    newest = 100
+    ring[(newest - 20) % 64, 1] = -9.0
+    ring[(newest - 33) % 64, 0] = 30.0
+    ages = sharp_ages(ring, newest, np.array([4.0, 1.0]), 40)
+    assert {21, 22, 34, 35} <= set(ages.tolist())
+    assert len(ages) <= 8
+    assert max(sharp_ages(ring, newest, np.array([4.0, 1.0]), 21).tolist()) == 21
+
+
 def test_onsets_reach_back_to_the_first_cycle_and_grow_by_a_sixth() -> None:
     for available in (1, 2, 7, 100, 2048):
         ages = onset_ages(available)
