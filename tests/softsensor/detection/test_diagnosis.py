@@ -11,7 +11,7 @@ import pytest
 from numpy.typing import NDArray
 from scipy.special import logsumexp
 
-from softsensor.detection.diagnosis import Likelihoods, judge, likelihoods, onset_ages
+from softsensor.detection.diagnosis import Likelihoods, judge, likelihoods, onset_ages, sharp_ages
 from softsensor.detection.signatures import Hypothesis, inverse_cholesky
 
 SENSORS, WINDOW, HYPOTHESES = 3, 32, 3
