@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 
 import numpy as np
@@ -85,13 +86,15 @@ def flag_sheet(site: Site, unit: Unit, flag: StoredFlag) -> Sheet:
 
 
 def reference_points(item: SensorSpec | InputSpec | None, value: float) -> tuple[float, ...]:
-    """The operating value and a little below and above it, within the range of the instrument."""
+    """The operating value and a little below and above it, within the range of the instrument; round numbers, so that a
+    printed sheet and the screen an hour later say the same."""
     if item is None or not np.isfinite(value):
         return ()
     low, high = item.range
     step = NEAR * (high - low)
     middle = min(max(value, low + step), high - step)
-    return middle - step, middle, middle + step
+    unit = 10.0 ** math.floor(math.log10(step / 2.0))
+    return tuple(round(point / unit) * unit for point in (middle - step, middle, middle + step))
 
 
 def _item(spec: UnitSpec, tag: str) -> SensorSpec | InputSpec | None:

@@ -136,7 +136,8 @@ def report(count: int = 200, kinds: tuple[str, ...] = KINDS) -> str:
     for kind in kinds:
         counted, delay = outcomes(kind, count)
         shares = [f"{100.0 * counted[name] / count:.1f} %" for name in names]
-        lines.append(f"| {kind} | " + " | ".join(shares) + f" | {delay:.0f} |")
+        when = f"{delay:.0f}" if np.isfinite(delay) else ""
+        lines.append(f"| {kind} | " + " | ".join(shares) + f" | {when} |")
     return "\n".join(lines)
 
 
