@@ -152,7 +152,7 @@ def test_chapters_have_numbers_of_their_own_and_name_each_other_rightly() -> Non
     for name, text in CHAPTERS.items():
         assert text.startswith(f"# {int(name[:2])}. ")
         for target in re.findall(r"\]\(([^)#]+)\)", text):
-            assert target in CHAPTERS
+            assert target in CHAPTERS or resources.files("softsensor.handbook").joinpath(target).is_file()
         for anchor in re.findall(r"\]\(#([^)]+)\)", text):
             assert f"\n## {anchor.capitalize()}\n" in text
 
