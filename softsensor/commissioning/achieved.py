@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Sequence
 from dataclasses import dataclass, replace
 
@@ -29,7 +30,7 @@ from softsensor.unit_design import design_unit
 STRETCH = 5.0
 """Times that a patient sum needs from zero to its interval: the shortest stretch that can judge it."""
 LARGE_MEAN = 0.2
-"""Mean of the standardised innovations that is named as the reason why tests stay disarmed."""
+"""Mean of the standardised innovations that, beyond chance, is named as the reason why tests stay disarmed."""
 LEAST_READINGS = 2000
 """Innovations of a sensor below which nothing is said about its tests."""
 
@@ -184,7 +185,8 @@ def _seconds(wider: Widening, sample_time: float) -> float | None:
 def _reason(found: Character, span: float) -> str:
     days = max(span / 86400.0, 0.1)
     over = f"over {days:.2g} d" if span >= 8640.0 else f"over {format_duration(round(span))}"
-    if abs(found.mean) > LARGE_MEAN:
+    chance = 2.576 * math.sqrt(max(found.slow, 0.0) / found.readings)
+    if abs(found.mean) > max(LARGE_MEAN, chance):
         return f"innovations off by {found.mean:+.2f} of their standard deviation on average {over}"
     correlated = f"correlated {found.lag_one:.2f} at lag one {over}"
     if found.sd_ratio > 1.0 + abs(found.lag_one):

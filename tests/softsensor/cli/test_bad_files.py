@@ -118,7 +118,7 @@ HISTORIES = [
         ("row 2", "time", "is before", "increasing order"),
     ),
     ("text in a column of numbers", "time,FI1,TI1\n2026-12-01T00:00:00Z,11.5,n/a\n", ("row 1", "TI1", "n/a")),
-    ("no such column", "time,FI1\n2026-12-01T00:00:00Z,11.5\n", ("no column 'TI1'", "model needs")),
+    ("no such column", "time,FI1\n2026-12-01T00:00:00Z,11.5\n", ("no column 'TI1'", "is needed")),
     ("no time column", "when,FI1,TI1\n1,2,3\n", ("expected a column named 'time'",)),
     ("infinite", "time,FI1,TI1\n2026-12-01T00:00:00Z,inf,92.4\n", ("row 1", "FI1", "inf")),
     ("no rows", "time,FI1,TI1\n", ("no rows",)),
