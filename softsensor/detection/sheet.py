@@ -109,7 +109,8 @@ def sheet_line(design: DetectionDesign, asked: Diagnostician, index: int, shift:
     """One sensor of a unit, found by its own sums."""
     spec = design.model.spec
     sensor, bank = spec.sensors[index], bank_of(design.tests, index)
-    tests, found = _own_sums(design, index), findable_by_own_sums(design, index)
+    tests = _own_sums(design, index)
+    found = findable(tests, _sizes(design, index))
     scale = scale_at_operating_point(sensor)
     delay = _delay(bank, shift.settled) * spec.sample_time
     return SheetLine(
@@ -132,9 +133,12 @@ def _own_sums(design: DetectionDesign, index: int) -> Watched:
 
 def findable_by_own_sums(design: DetectionDesign, index: int) -> Findable:
     """What of one sensor's faults its own sums find, without asking what they would be taken for."""
+    return findable(_own_sums(design, index), _sizes(design, index))
+
+
+def _sizes(design: DetectionDesign, index: int) -> Sizes:
     sensor = design.model.spec.sensors[index]
-    sizes = Sizes(sensor.tolerance, sensor.range[1] - sensor.range[0])
-    return findable(_own_sums(design, index), sizes)
+    return Sizes(sensor.tolerance, sensor.range[1] - sensor.range[0])
 
 
 def _input_line(design: DetectionDesign, asked: Diagnostician, index: int) -> InputLine:
