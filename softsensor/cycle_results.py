@@ -144,9 +144,14 @@ def result_rows(results: CycleResults) -> NDArray[np.uint8]:
 
 def flag_bytes(flag: Flag) -> bytes:
     """A flag as bytes, for the digest."""
-    times = np.array([flag.onset, flag.detected, -1 if flag.cleared is None else flag.cleared], dtype="<i8")
-    sizes = np.array([flag.size, flag.size_sd, flag.probability], dtype="<f8")
-    text = "\x1f".join((flag.flag, flag.tag, flag.kind, *flag.group))
+    moments = (flag.cleared, flag.onset_from, flag.onset_to)
+    times = np.array(
+        [flag.onset, flag.detected, *(-1 if time is None else time for time in moments)], dtype="<i8"
+    )
+    weighed = (probability for _, probability in flag.hypotheses)
+    sizes = np.array([flag.size, flag.size_sd, flag.probability, *weighed], dtype="<f8")
+    names = (name for name, _ in flag.hypotheses)
+    text = "\x1f".join((flag.flag, flag.tag, flag.kind, *flag.group, "\x1e", *names))
     return text.encode() + times.tobytes() + sizes.tobytes()
 
 

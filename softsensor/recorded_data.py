@@ -36,6 +36,7 @@ from softsensor.service.result_tables import (
     conformance_table,
     estimate_table,
     flag_table,
+    hypothesis_table,
     innovation_table,
     lab_table,
     smoothed_table,
@@ -57,6 +58,8 @@ class ReplayResult:
     estimates: pd.DataFrame
     innovations: pd.DataFrame
     flags: pd.DataFrame
+    hypotheses: pd.DataFrame
+    """What was weighed for each flag, with probabilities, and the interval of its onset."""
     lab_results: pd.DataFrame
     summary: dict[str, Any]
     conformance: pd.DataFrame
@@ -186,10 +189,12 @@ def replay(
             )
         parts = smoothing.cycles(running) if smooth else iter(())
         smoothed = [smoothed_table(running.design, part) for part in parts]
+    flags = list(running.totals.flags.values())
     return ReplayResult(
         _joined(estimates, ESTIMATE_COLUMNS),
         _joined(innovations, INNOVATION_COLUMNS),
-        flag_table(list(running.totals.flags.values())),
+        flag_table(flags),
+        hypothesis_table(flags),
         lab_table(running.totals.labs),
         running.totals.as_dict(running.digest),
         _joined(conformance, CONFORMANCE_COLUMNS),

@@ -27,6 +27,12 @@ class Flag:
     size_sd: float
     probability: float
     group: tuple[str, ...]
+    onset_from: int | None = None
+    """The onset lies between this and ``onset_to`` with 95 %; None with an ``onset_to``: how long before cannot be told."""
+    onset_to: int | None = None
+    """None: the test that found the fault gives no such interval."""
+    hypotheses: tuple[tuple[str, float], ...] = ()
+    """What was weighed, with probabilities, the most probable first: names as in ``group``, and "nothing"."""
 
     @property
     def isolated(self) -> bool:

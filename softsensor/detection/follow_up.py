@@ -26,6 +26,7 @@ from softsensor.detection.flags import (
     flag_name,
     time_words,
 )
+from softsensor.detection.onsets import NO_ACCOUNT, Account, account_of
 from softsensor.detection.outcomes import SHIFT_KINDS, FollowUp, Moment, cleared, opened
 from softsensor.detection.signatures import Hypothesis
 from softsensor.detection.single_faults import QUIET, single_faults
@@ -200,10 +201,11 @@ def _act(design: DetectionDesign, outcome: FollowUp, tests: TestState, moment: M
         episode = replace(episode, weighed=moment.cycle)
         outcome = replace(outcome, book=replace(outcome.book, episode=episode))
     if _worth_a_flag(design, verdict, found, waited):
-        return _open_shift(design, outcome, tests, moment, (verdict, found, use))
+        account = account_of(design, tests, use, verdict, found)
+        return _open_shift(design, outcome, tests, moment, (verdict, found, use, account))
     back = design.look_back(tests, use) if due else None
     if back is not None and _worth_a_flag(design, *back, waited):
-        return _open_shift(design, outcome, tests, moment, (*back, use))
+        return _open_shift(design, outcome, tests, moment, (*back, use, NO_ACCOUNT))
     if waited >= PATIENCE and episode is not None and not episode.noted:
         return _note(outcome, moment, verdict)
     return outcome
@@ -262,9 +264,9 @@ def _open_shift(
     outcome: FollowUp,
     tests: TestState,
     moment: Moment,
-    seen: tuple[Verdict, Likelihoods, Ints],
+    seen: tuple[Verdict, Likelihoods, Ints, Account],
 ) -> FollowUp:
-    verdict, found, use = seen
+    verdict, found, use, account = seen
     suspect = explanations(design)[verdict.best]
     kind: Kind = "drift" if suspect.shape == "ramp" else "bias"
     kind = "model" if suspect.source == "gain" else kind
@@ -282,6 +284,9 @@ def _open_shift(
         size_sd,
         verdict.probabilities[0],
         verdict.group,
+        account.onset_from(moment.time, design.sample_us),
+        account.onset_to(moment.time, design.sample_us),
+        account.hypotheses,
     )
     outcome = opened(outcome, flag)
     isolated = flag.isolated and suspect.source == "sensor"

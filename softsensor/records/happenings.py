@@ -6,6 +6,7 @@ interruption.
 
 from __future__ import annotations
 
+import json
 import math
 from dataclasses import dataclass, field
 from uuid import UUID, uuid4, uuid5
@@ -25,6 +26,9 @@ class Flag:
     """A sensor believed faulty. Times are UTC microseconds; size and size_sd in the unit of the tag, or nan.
 
     :param group: all that the data cannot tell apart from the tag, itself included.
+    :param onset_from_us: with ``onset_to_us`` the onset's 95 % interval; None where it has no beginning.
+    :param onset_to_us: None where there is no interval.
+    :param hypotheses: what was weighed, with probabilities, the most probable first.
     """
 
     id: str
@@ -36,6 +40,9 @@ class Flag:
     size_sd: float
     probability: float
     group: tuple[str, ...]
+    onset_from_us: int | None = None
+    onset_to_us: int | None = None
+    hypotheses: tuple[tuple[str, float], ...] = ()
 
 
 @dataclass(frozen=True, slots=True)
@@ -239,6 +246,9 @@ def _diagnosis(flag: Flag) -> dict[str, object]:
         "size_sd": number(flag.size_sd),
         "probability": number(flag.probability),
         "group": "; ".join(flag.group),
+        "onset_from_us": flag.onset_from_us,
+        "onset_to_us": flag.onset_to_us,
+        "hypotheses": json.dumps(flag.hypotheses, ensure_ascii=False) if flag.hypotheses else None,
     }
 
 

@@ -6,6 +6,7 @@ cycles themselves are in ``softsensor.records.series``.
 
 from __future__ import annotations
 
+import json
 from dataclasses import dataclass
 from typing import Any
 
@@ -73,6 +74,9 @@ class StoredFlag:
     finding_by: str | None
     as_found: float | None
     as_left: float | None
+    onset_from_us: int | None = None
+    onset_to_us: int | None = None
+    hypotheses: tuple[tuple[str, float], ...] = ()
 
 
 @dataclass(frozen=True, slots=True)
@@ -177,6 +181,8 @@ def flag_with_comments(database: Database, flag_id: str) -> tuple[StoredFlag, tu
 def _flag(row: Row[Any]) -> StoredFlag:
     values = dict(row._mapping)
     values["group"] = tuple(values["group"].split("; ")) if values["group"] else ()
+    weighed = json.loads(values["hypotheses"]) if values["hypotheses"] else []
+    values["hypotheses"] = tuple((str(name), float(probability)) for name, probability in weighed)
     return StoredFlag(**values)
 
 

@@ -26,9 +26,9 @@ from softsensor.errors import RecordsError
 from softsensor.estimation.kernel import EstimatorState
 from softsensor.records.named_arrays import pack_arrays, unpack_arrays
 
-FORMAT = 5
+FORMAT = 6
 """2: with the bank of tests; 3: with the gate's streaks in the estimator's state; 4: with the long memory;
-5: with both times of laboratory results."""
+5: with both times of laboratory results; 6: with the onset's interval and what was weighed in open flags."""
 
 
 @dataclass(frozen=True)
@@ -127,7 +127,8 @@ def _rest(state: CycleState, context: Context) -> bytes:
 
 
 def _flag(item: dict[str, Any]) -> Flag:
-    return Flag(**{**item, "group": tuple(item["group"])})
+    weighed = tuple((name, probability) for name, probability in item["hypotheses"])
+    return Flag(**{**item, "group": tuple(item["group"]), "hypotheses": weighed})
 
 
 def _arrays(blob: bytes, version: int) -> dict[str, NDArray[Any]]:

@@ -192,6 +192,9 @@ def _write_flag(connection: Connection, unit_id: int, flag: Flag, answer: Decisi
         flag.size_sd,
         flag.probability,
         flag.group,
+        flag.onset_from,
+        flag.onset_to,
+        flag.hypotheses,
     )
     happenings.open_flag(connection, unit_id, row)
 

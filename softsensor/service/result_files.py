@@ -22,6 +22,7 @@ from softsensor.service.result_tables import (
     conformance_table,
     estimate_table,
     flag_table,
+    hypothesis_table,
     innovation_table,
     lab_table,
     smoothed_table,
@@ -168,7 +169,9 @@ class ResultFiles:
             raise ReplayError(
                 "history: no cycle lies within it; expected at least one row at or after a cycle"
             )
-        self._add("flags", flag_table(list(running.totals.flags.values())))
+        flags = list(running.totals.flags.values())
+        self._add("flags", flag_table(flags))
+        self._add("hypotheses", hypothesis_table(flags))
         self._add("lab_results", lab_table(running.totals.labs))
         for file in self._files.values():
             file.close()

@@ -29,6 +29,7 @@ CONFORMANCE_COLUMNS = ("time", "tag", "beyond_tolerance")
 FLAG_COLUMNS = (
     "flag", "tag", "kind", "onset", "detected", "cleared", "size", "size_sd", "probability", "group",
 )  # fmt: skip
+HYPOTHESIS_COLUMNS = ("flag", "explanation", "probability", "onset_from", "onset_to")
 LAB_COLUMNS = (
     "sampled_at", "reported_at", "tag", "value", "arrived_at_cycle", "counted_at_cycle",
     "predicted", "innovation", "sd", "status", "reason",
@@ -219,6 +220,20 @@ def flag_table(flags: Sequence[Flag]) -> pd.DataFrame:
             "size_sd": np.array([flag.size_sd for flag in flags], dtype=np.float64),
             "probability": np.array([flag.probability for flag in flags], dtype=np.float64),
             "group": ["; ".join(flag.group) for flag in flags],
+        }
+    )
+
+
+def hypothesis_table(flags: Sequence[Flag]) -> pd.DataFrame:
+    """One row per flag and explanation that was weighed; the onset's interval stands beside the one that was flagged."""
+    rows = [(flag, name, probability) for flag in flags for name, probability in flag.hypotheses]
+    return pd.DataFrame(
+        {
+            "flag": [flag.flag for flag, _, _ in rows],
+            "explanation": [name for _, name, _ in rows],
+            "probability": np.array([probability for _, _, probability in rows], dtype=np.float64),
+            "onset_from": moments([flag.onset_from if name == flag.tag else None for flag, name, _ in rows]),
+            "onset_to": moments([flag.onset_to if name == flag.tag else None for flag, name, _ in rows]),
         }
     )
 

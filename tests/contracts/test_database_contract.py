@@ -3,15 +3,19 @@
 from __future__ import annotations
 
 import threading
+from importlib import resources
 
 import pytest
+from alembic import command
 from alembic.autogenerate import compare_metadata
+from alembic.config import Config
 from alembic.runtime.migration import MigrationContext
 from sqlalchemy import inspect, text
 
 from softsensor.errors import RecordsError
+from softsensor.records import reader
 from softsensor.records.audit import Entry, append, verify
-from softsensor.records.engine import Database, open_database
+from softsensor.records.engine import Database, connect_database, open_database
 from softsensor.records.tables import metadata, units
 from softsensor.records.upgrade import upgrade_database
 
@@ -31,7 +35,7 @@ def test_migrations_make_the_tables_of_the_metadata(database: Database) -> None:
 
 
 def test_an_upgrade_says_what_it_applied_and_can_be_repeated(empty_database_url: str) -> None:
-    assert upgrade_database(empty_database_url) == ["0001", "0002", "0003", "0004"]
+    assert upgrade_database(empty_database_url) == ["0001", "0002", "0003", "0004", "0005"]
     assert upgrade_database(empty_database_url) == []
 
 
@@ -45,7 +49,39 @@ def test_two_upgrades_at_once_apply_the_revision_once(empty_database_url: str) -
         thread.start()
     for thread in threads:
         thread.join()
-    assert sorted(applied) == [[], [], ["0001", "0002", "0003", "0004"]]
+    assert sorted(applied) == [[], [], ["0001", "0002", "0003", "0004", "0005"]]
+
+
+def test_flags_from_before_the_onset_s_interval_stay_with_their_trail(empty_database_url: str) -> None:
+    """A database as revision 0004 left it, with a flag and its entry; then the upgrade."""
+    flag = {
+        "id": "a flag", "unit_id": 1, "tag": "TI2101A", "kind": "drift", "onset_us": NOW, "detected_us": NOW + 1,
+        "size": 1.5, "size_sd": 0.2, "probability": 0.97, "group": "TI2101A", "state": "open",
+    }  # fmt: skip
+    columns = ", ".join(f'"{name}"' for name in flag)
+    values = ", ".join(f":{name}" for name in flag)
+    with connect_database(empty_database_url) as database, database.write() as connection:
+        config = Config()
+        config.set_main_option("script_location", str(resources.files("migrations")))
+        config.set_main_option("path_separator", "os")
+        config.attributes["connection"] = connection
+        command.upgrade(config, "0004")
+        connection.execute(units.insert().values(id=1, name="R-210", title="", created_us=NOW))
+        connection.execute(text(f"INSERT INTO flags ({columns}) VALUES ({values})"), flag)
+        append(connection, Entry(NOW, "softsensor", "flag opened", "flag a flag", None, flag, ""))
+        head = connection.execute(text("SELECT audit_head FROM schema_info")).scalar_one()
+    assert upgrade_database(empty_database_url) == ["0005"]
+    with open_database(empty_database_url) as database:
+        (found,) = reader.flags_of(database)
+        report = verify(database)
+    assert (found.size, found.group, found.onset_from_us, found.onset_to_us) == (
+        1.5,
+        ("TI2101A",),
+        None,
+        None,
+    )
+    assert found.hypotheses == ()
+    assert (report.whole, report.head) == (True, head)
 
 
 def test_a_database_that_was_not_upgraded_names_the_command(empty_database_url: str) -> None:
@@ -57,7 +93,7 @@ def test_a_database_from_a_newer_release_is_refused_by_both_revisions(database_u
     with open_database(database_url) as database, database.write() as connection:
         connection.execute(text("UPDATE alembic_version SET version_num = '9999'"))
     for refuse in (open_database, upgrade_database):
-        with pytest.raises(RecordsError, match=r"at revision 9999.* up to 0004.*install that release"):
+        with pytest.raises(RecordsError, match=r"at revision 9999.* up to 0005.*install that release"):
             refuse(database_url)
 
 

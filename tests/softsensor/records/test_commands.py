@@ -33,7 +33,7 @@ def tamper(url: str) -> None:
 
 def test_upgrade_says_what_it_applied(empty_database_url: str) -> None:
     first = RUNNER.invoke(db.app, ["upgrade", "--database", empty_database_url])
-    assert (first.exit_code, first.stdout) == (0, "applied: 0001, 0002, 0003, 0004\n")
+    assert (first.exit_code, first.stdout) == (0, "applied: 0001, 0002, 0003, 0004, 0005\n")
     again = RUNNER.invoke(db.app, ["upgrade", "--database", empty_database_url])
     assert (again.exit_code, again.stdout) == (0, "the database is up to date\n")
     as_json = RUNNER.invoke(db.app, ["upgrade", "--database", empty_database_url, "--json"])

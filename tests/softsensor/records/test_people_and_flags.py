@@ -59,6 +59,27 @@ def test_a_new_diagnosis_is_audited_and_a_new_size_is_not(flagged: Database) -> 
     assert json.loads(last.after or "")["size"] is None
 
 
+def test_what_was_weighed_is_kept_with_the_flag_and_covered_by_the_trail(
+    database: Database, plant: Any
+) -> None:
+    weighed = (("TI2101A", 0.1 + 0.2), ("Feed, größer", 0.25), ("nothing", 1e-9))
+    told = replace(FLAG, onset_from_us=NOW - 90_000_000, onset_to_us=NOW - 30_000_000, hypotheses=weighed)
+    with database.write() as connection:
+        happenings.open_flag(connection, plant.unit, told)
+    (flag,) = reader.flags_of(database, plant.unit)
+    assert (flag.onset_from_us, flag.onset_to_us) == (told.onset_from_us, told.onset_to_us)
+    assert flag.hypotheses == weighed
+    after = json.loads(reader.audit_entries(database)[-1].after or "")
+    assert after["onset_from_us"] == told.onset_from_us
+    assert json.loads(after["hypotheses"]) == [list(item) for item in weighed]
+    assert verify(database).whole
+
+
+def test_a_flag_without_them_says_nothing_of_them(flagged: Database, plant: Any) -> None:
+    (flag,) = reader.flags_of(flagged, plant.unit)
+    assert (flag.onset_from_us, flag.onset_to_us, flag.hypotheses) == (None, None, ())
+
+
 def test_a_flag_is_acknowledged_once_with_its_entry(flagged: Database) -> None:
     changes.acknowledge_flag(flagged, FLAG_ID, "a.mueller", "seen on the round")
     changes.acknowledge_flag(flagged, FLAG_ID, "b.other", "me too")

@@ -70,6 +70,9 @@ def on_record(url: str, first: int = 0, last: int = END - 1) -> dict[str, Any]:
                 f.size,
                 f.probability,
                 f.group,
+                f.onset_from_us,
+                f.onset_to_us,
+                f.hypotheses,
                 f.state,
             )
             for f in reader.flags_of(database, unit)
