@@ -27,6 +27,7 @@ from softsensor.web.chart_data import (
     find_estimate,
     sensor_columns,
 )
+from softsensor.web.flag_seen import seen_of
 from softsensor.web.handbook_text import chapter_html
 from softsensor.web.rows import estimate_rows, latest_cycle, tag_decimals, tag_units
 from softsensor.web.security import COOKIE
@@ -53,7 +54,18 @@ def environment() -> Environment:
         trim_blocks=True,
         lstrip_blocks=True,
     )
-    names = ("iso", "utc", "number", "short", "percent", "address", "difference_unit", "group_words")
+    names = (
+        "iso",
+        "utc",
+        "number",
+        "short",
+        "percent",
+        "share",
+        "clock",
+        "address",
+        "difference_unit",
+        "group_words",
+    )
     found.filters |= {name: getattr(wording, name) for name in names}
     found.globals |= {"SensorStatus": SensorStatus, "FINDINGS": FINDINGS, "PERIODS": PERIODS}
     return found
@@ -98,6 +110,7 @@ def flag_answer(
     shown: dict[str, Any] = {
         "units": tag_units(spec),
         "decimals": tag_decimals(spec),
+        "seen": seen_of(site, unit, flag),
         "typed": {} if refused is None else refused.typed,
         "complaint": "" if refused is None else refused.complaint,
     }

@@ -38,6 +38,15 @@ def utc(us: int) -> str:
     return f"{moment(us):%Y-%m-%d %H:%M:%S} UTC"
 
 
+def clock(us: int) -> str:
+    """The time of day beside a time that names the day.
+
+    >>> clock(1_796_083_200_000_000)
+    '00:00:00'
+    """
+    return f"{moment(us):%H:%M:%S}"
+
+
 def decimals_for(resolution: float) -> int:
     """Decimals that show a third of ``resolution``; the same for every value of a tag, so that digits do not jump.
 
@@ -80,6 +89,17 @@ def percent(probability: float | None) -> str:
     return "under 1 %" if probability < 0.01 else f"{100.0 * probability:.0f} %"
 
 
+def share(probability: float) -> str:
+    """A probability beside others, to a tenth of a percent.
+
+    >>> share(0.985), share(0.0004), share(0.99999)
+    ('98.5 %', 'below 0.1 %', 'above 99.9 %')
+    """
+    if probability < 0.001:
+        return "below 0.1 %"
+    return "above 99.9 %" if probability > 0.999 else f"{100.0 * probability:.1f} %"
+
+
 def duration(seconds: float) -> str:
     """A duration in the largest unit that keeps it above one.
 
@@ -101,7 +121,7 @@ def group_words(tag: str, group: tuple[str, ...]) -> str:
     """What the data can say about which instrument it is.
 
     >>> group_words("A", ("A",)), group_words("A", ("A", "B", "C"))
-    ('isolated', 'cannot be told apart from B, C')
+    ('named alone', 'cannot be told apart from B, C')
     """
     others = [name for name in group if name != tag]
-    return "cannot be told apart from " + ", ".join(others) if others else "isolated"
+    return "cannot be told apart from " + ", ".join(others) if others else "named alone"

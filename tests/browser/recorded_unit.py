@@ -219,7 +219,23 @@ def put_cycle(database: Database, cycle: int, time_us: int, jacket: float) -> No
 
 def _put_happenings(database: Database, unit: int) -> None:
     drift = Flag(
-        FLAG_ID, "TI2101B", "drift", NOW - 60 * MINUTE, NOW - 40 * MINUTE, 1.21, 0.07, 0.994, ("TI2101B",)
+        FLAG_ID,
+        "TI2101B",
+        "drift",
+        NOW - 60 * MINUTE,
+        NOW - 40 * MINUTE,
+        1.21,
+        0.07,
+        0.994,
+        ("TI2101B",),
+        NOW - 66 * MINUTE,
+        NOW - 53 * MINUTE - 10_000_000,
+        (
+            ("TI2101B", 0.994),
+            ("feed concentration", 0.0041),
+            ("FI2103 -> TI2101A", 0.0018),
+            ("nothing", 2e-7),
+        ),
     )
     spike = Flag(
         OLD_FLAG_ID,

@@ -113,7 +113,7 @@ def test_a_new_flag_appears_and_is_said(site: Served, browser_page: Watched) -> 
         happenings.open_flag(connection, 1, flag)
     site.publish(News(UNIT, "flag", {"tag": "TI2101A", "kind": "stuck", "cleared": None}))
     expect(page.locator(".card.flag")).to_have_count(2)
-    expect(page.locator(".card.flag").filter(has_text="TI2101A stuck")).to_contain_text("93 %, isolated")
+    expect(page.locator(".card.flag").filter(has_text="TI2101A stuck")).to_contain_text("93 %, named alone")
     expect(page.locator("tr", has=page.get_by_role("button", name="TI2101A"))).to_contain_text("F failure")
     expect(page.locator("#said")).to_have_text("Flag on TI2101A, stuck, opened.")
     browser_page.assert_quiet()

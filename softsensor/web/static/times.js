@@ -23,7 +23,8 @@ const Times = (() => {
     const moment = new Date(element.dateTime);
     if (Number.isNaN(moment.getTime())) return;
     const both = element.classList.contains("both");
-    const text = both ? words(moment) + " (" + utcClock(moment) + " UTC)" : words(moment);
+    const short = element.classList.contains("clock");
+    const text = both ? words(moment) + " (" + utcClock(moment) + " UTC)" : short ? clock(moment) : words(moment);
     if (element.textContent !== text) element.textContent = text;
     element.title = moment.toISOString().replace("T", " ").replace(/\.\d+Z$/, " UTC");
   }

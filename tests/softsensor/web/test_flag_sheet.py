@@ -48,9 +48,100 @@ def test_it_says_what_is_believed_with_units_and_how_sure(drift: str) -> None:
     assert "measures temperature, range 0 to 200 degC" in page
     assert "Size at detection +1.21 ± 0.07 K (sd)" in page
     assert "Tolerance ± 1 K" in page
-    assert "Probability over 99 % Group isolated" in page
-    assert "Since 2026-12-01 14:00:00 UTC Detected 2026-12-01 14:20:00 UTC" in page
+    assert "Probability over 99 % Group named alone" in page
+    since = "Since 2026-12-01 14:00:00 UTC, with 95 % probability between 13:54:00 and 14:06:50 Detected"
+    assert since in page
+    assert "Detected 2026-12-01 14:20:00 UTC" in page
     assert "Left out 2026-12-01 14:00:00 UTC to now" in page
+
+
+EXPLAINED = (
+    "TI2101B 99.4 % this instrument reads wrong "
+    "feed concentration 0.4 % a disturbance: the process moved, no instrument is wrong "
+    "FI2103 -> TI2101A 0.2 % the model: this transfer function no longer fits "
+    "nothing below 0.1 % no fault: chance alone"
+)
+
+
+def test_what_could_explain_it_stands_on_both_pages_with_the_pictures(asker: Any, drift: str) -> None:
+    page = asker.get(f"/units/{UNIT}/flag?id={quote(FLAG_ID)}").text
+    for shown in (drift, page):
+        assert EXPLAINED in words_of(shown)
+        assert shown.count('<svg class="still"') == 2
+        assert "with 95 % probability between 13:54:00 and 14:06:50" in words_of(shown)
+    spike = asker.get(f"/units/{UNIT}/flag?id={quote(OLD_FLAG_ID)}").text
+    assert "What could explain it" not in spike
+    assert "with 95 % probability" not in spike
+
+
+def test_the_present_error_of_a_drift_is_the_end_of_the_last_hour_s_line(asker: Any, drift: str) -> None:
+    """Recomputed by the normal equations; a line's end has up to four times the variance of the mean."""
+    made = course()
+    last = made.times >= NOW - HOUR
+    innovation, hours = made.innovation[last, 1], (made.times[last] - NOW) / HOUR
+    away = hours - hours.mean()
+    slope = float(away @ innovation / (away @ away))
+    now = innovation.mean() - slope * hours.mean()
+    sd = 2.0 * np.sqrt(0.16**2 - 0.15**2 + 0.15**2 / len(innovation))
+    expected = (
+        f"Now +{now:.2f} ± {sd:.2f} K (sd): reading less prediction, by a straight line through the last hour"
+    )
+    for shown in (drift, asker.get(f"/units/{UNIT}/flag?id={quote(FLAG_ID)}").text):
+        assert expected in words_of(shown)
+        assert f"{len(innovation)} readings" in words_of(shown)
+
+
+def test_the_present_error_of_a_bias_is_the_mean_since_it_is_left_out(recorded: Database, asker: Any) -> None:
+    group = ("TI2101A",)
+    flag = Flag("f", "TI2101A", "bias", NOW - HOUR, NOW - MINUTE, 0.4, 0.1, 0.9, group)
+    with recorded.write() as connection:
+        happenings.open_flag(connection, 1, flag)
+        decisions.store_left_out(connection, 1, [LeftOut("TI2101A", NOW - 10 * MINUTE, None, False)])
+    made = course()
+    innovation = made.innovation[made.times >= NOW - 10 * MINUTE, 0]
+    sd = np.sqrt(0.16**2 - 0.15**2 + 0.15**2 / len(innovation))
+    expected = f"Now {innovation.mean():+.2f} ± {sd:.2f} K (sd): mean of reading less prediction"
+    assert expected in words_of(asker.get(SHEET + "f").text)
+
+
+def test_of_a_sensor_that_counts_nothing_newer_is_said(recorded: Database, asker: Any) -> None:
+    page = words_of(asker.get(SHEET + quote(FLAG_ID)).text)
+    assert "the estimate follows its error. Nothing newer than the size at detection can be said" in page
+    with recorded.write() as connection:
+        decisions.store_left_out(connection, 1, [LeftOut("TI2101B", NOW - 60 * MINUTE, None, True)])
+    assert "what it reads now means nothing" in words_of(asker.get(SHEET + quote(FLAG_ID)).text)
+    with recorded.write() as connection:
+        happenings.clear_flag(connection, FLAG_ID, NOW - MINUTE, "its test has come down")
+    assert " Now " not in words_of(asker.get(SHEET + quote(FLAG_ID)).text)
+
+
+@pytest.mark.parametrize(
+    ("early", "late", "said"),
+    [
+        (None, NOW - HOUR, "before 14:00:00; how long before cannot be told"),
+        (NOW - HOUR, NOW - HOUR, "in this very cycle"),
+        (NOW - 30 * HOUR, NOW - HOUR, "between 2026-11-30 09:00:00 UTC and 2026-12-01 14:00:00 UTC"),
+    ],
+)
+def test_an_onset_s_interval_in_words(
+    recorded: Database, asker: Any, early: int | None, late: int, said: str
+) -> None:
+    group = ("TI2101A",)
+    flag = Flag("f", "TI2101A", "bias", NOW - HOUR, NOW - MINUTE, 0.4, 0.1, 0.9, group, early, late)
+    with recorded.write() as connection:
+        happenings.open_flag(connection, 1, flag)
+    assert f"Since 2026-12-01 14:00:00 UTC, with 95 % probability {said}" in words_of(
+        asker.get(SHEET + "f").text
+    )
+
+
+def test_putting_back_is_offered_only_while_it_has_an_effect(recorded: Database, asker: Any) -> None:
+    page = f"/units/{UNIT}/flag?id={quote(FLAG_ID)}"
+    assert "Put TI2101B back" not in asker.get(page).text
+    for until, offered in ((None, True), (NOW - MINUTE, False)):
+        with recorded.write() as connection:
+            decisions.store_left_out(connection, 1, [LeftOut("TI2101B", NOW - 60 * MINUTE, until, False)])
+        assert ("Put TI2101B back" in asker.get(page).text) is offered
 
 
 def test_the_effect_on_the_estimate_is_that_of_the_settled_filter(drift: str) -> None:

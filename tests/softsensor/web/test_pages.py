@@ -68,7 +68,7 @@ def test_the_unit_page_shows_flags_and_waiting_results(asker: Any) -> None:
     page = words_of(asker.get(f"/units/{UNIT}").text)
     assert "TI2101B drift not acknowledged" in page
     assert "+1.21 ± 0.07 K (sd)" in page
-    assert "over 99 %, isolated" in page
+    assert "over 99 %, named alone" in page
     assert "TI2105 spike detected 2026-12-01 10:12:00 UTC, cleared 2026-12-01 10:20:00 UTC" in page
     assert "sampling time: fits the estimate 45 min earlier than stated" in page
     assert "-5.6 sd away" in page
