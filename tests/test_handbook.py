@@ -26,6 +26,7 @@ from plant_models.unit_spellings import PREFIXED, WHOLE
 from softsensor import cycle, published, unit_design
 from softsensor.cli.check import as_document, print_table
 from softsensor.detection import (
+    absorbed_faults,
     beginning,
     design_of_tests,
     diagnosis,
@@ -33,6 +34,7 @@ from softsensor.detection import (
     isolability,
     reading_tests,
     sheet,
+    single_faults,
 )
 from softsensor.errors import SiteFileError
 from softsensor.estimation import gate, lab_results, what_helps
@@ -344,7 +346,8 @@ LIMITS = [
     (METHOD, f"The fast pair has k = {design_of_tests.FAST_REFERENCE:g},"),
     (METHOD, f"a noise {design_of_tests.SPREAD_RATIO:g} times as large"),
     (METHOD, f"a noise {design_of_tests.JOINT_RATIO:g} times as"),
-    (METHOD, f"stayed down for more than {follow_up.QUIET} cycles"),
+    (METHOD, f"stayed down for more than {single_faults.QUIET} cycles"),
+    (METHOD, f"within {absorbed_faults.LONGEST_QUIET / absorbed_faults.ALLOWANCE:.0f} cycles on average"),
     (
         METHOD,
         f"more than {design_of_tests.LOST_SECONDS:g} s and more than {design_of_tests.LOST_CYCLES} cycles",

@@ -185,7 +185,7 @@ def _begin_onset(evidence: Evidence, cycle: int) -> None:
 
 
 @uncounted
-def _upper(x: float) -> float:
+def upper_tail(x: float) -> float:
     """P(Z > x) of a standard normal variable."""
     half = 0.5 * (1.0 - error_function(abs(x) * 0.7071067811865476))
     return half if x >= 0.0 else 1.0 - half
@@ -237,7 +237,7 @@ def weigh_onsets(known: Standing, evidence: Evidence, now: int) -> None:
             D = evidence.D[c, h] + 1.0 / (scale * scale)
             mean, sd = evidence.N[c, h] / D * reach, np.sqrt(1.0 / D) * reach
             limit = known.tolerance[i]
-            beyond[i] += weight * (_upper((limit - mean) / sd) + _upper((limit + mean) / sd))
+            beyond[i] += weight * (upper_tail((limit - mean) / sd) + upper_tail((limit + mean) / sd))
     for i in range(m):
         evidence.beyond[i] = beyond[i] / total if known.use[i] != 0 else np.nan
 
@@ -285,7 +285,7 @@ def _weigh_left_out(known: Standing, evidence: Evidence, seen: Seen, cycle: int)
         noise = seen.noise_sd[i] * seen.noise_sd[i]
         sd = np.sqrt(max(seen.sd[i] * seen.sd[i] - noise, 0.0) + noise / count)
         mean, limit = total / count, known.tolerance[i]
-        evidence.beyond[i] = _upper((limit - mean) / sd) + _upper((limit + mean) / sd)
+        evidence.beyond[i] = upper_tail((limit - mean) / sd) + upper_tail((limit + mean) / sd)
 
 
 @uncounted

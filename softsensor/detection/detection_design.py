@@ -47,6 +47,7 @@ class DetectionDesign:
     """Cycles from the start before the filter is the settled one that signatures suppose."""
     tables: dict[tuple[int, ...], tuple[SteadyFilter, Floats]] = field(default_factory=dict, repr=False)
     standings: dict[tuple[int, ...], Standing] = field(default_factory=dict, repr=False)
+    settled: dict[tuple[str, tuple[int, ...]], Floats] = field(default_factory=dict, repr=False)
 
     def table(self, use: Ints) -> tuple[SteadyFilter, Floats]:
         """Settled filter and whitened signatures with these sensors in use."""

@@ -71,6 +71,8 @@ class Episode:
     """The cause is on record as no fault of an instrument."""
     weighed: int = -1
     """Cycle at which gains of transfer functions were last weighed; -1: not yet."""
+    explained: bool = False
+    """An error that was flagged has gone back: what the sums say until they are down comes from that."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -154,6 +156,11 @@ class FlagBook:
     beginning: Beginning | None = None
     settling: RestSpell | None = None
     """The rest of the tests that missing inputs or an unsteady beginning have caused, while it lasts."""
+
+    absorbed: tuple[str, ...] = ()
+    """Names of open flags whose error the estimate follows: their sums are down, and that says nothing."""
+    answered: tuple[Flag, ...] = ()
+    """Flags that people have closed lately on instruments in use; see :mod:`softsensor.detection.absorbed_faults`."""
 
     def find(self, tag: str, kinds: tuple[Kind, ...]) -> Flag | None:
         """The open flag of a tag, of one of these kinds."""

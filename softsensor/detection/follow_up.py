@@ -9,6 +9,13 @@ import numpy as np
 
 from plant_models.model_scale import bias_in_unit
 from softsensor.detection import state_of_tests as told
+from softsensor.detection.absorbed_faults import (
+    explains,
+    flagged_once_more,
+    opposed,
+    settle_flags,
+    went_back,
+)
 from softsensor.detection.detection_design import DetectionDesign, explanations, look, sensors_in_use
 from softsensor.detection.diagnosis import (
     NAMING_RATIO,
@@ -27,19 +34,20 @@ from softsensor.detection.flags import (
     time_words,
 )
 from softsensor.detection.onsets import NO_ACCOUNT, Account, account_of
-from softsensor.detection.outcomes import SHIFT_KINDS, FollowUp, Moment, cleared, opened
+from softsensor.detection.outcomes import LASTING, FollowUp, Moment, opened
 from softsensor.detection.signatures import Hypothesis
-from softsensor.detection.single_faults import QUIET, single_faults
+from softsensor.detection.single_faults import single_faults
 from softsensor.detection.state_of_tests import TestState
+from softsensor.estimation.gate import FOLLOWED
 from softsensor.estimation.kernel import Ints
 
-LASTING: tuple[Kind, ...] = (*SHIFT_KINDS, "model")
-"""Kinds that come from a diagnosis and clear when all has been quiet."""
 EXPLAINING: tuple[Kind, ...] = (*LASTING, "stuck", "noisy")
 """While such a fault is open on an instrument in use, it explains what other tests say."""
 PATIENCE = 60
 """Cycles for which a name is waited for before a group is flagged, and between two times that gains are weighed; units take
 their turns within it, so that a hundred of them do not all weigh in the same second."""
+GATED_SHARE = 0.2
+"""Of a size that rests on readings about which the gate had kept others out: its further standard deviation. From trials."""
 UNSTEADY = "start in a moving plant"
 
 
@@ -49,10 +57,11 @@ def follow_up(design: DetectionDesign, book: FlagBook, tests: TestState, moment:
     for sensor in range(design.kernel.n_sensors):
         outcome = single_faults(design, outcome, tests, moment, sensor)
     if not book.resting(moment.cycle):
-        outcome = _clear_shifts(design, outcome, tests, moment)
+        outcome = settle_flags(design, outcome, tests, moment)
     if design.armed:
         outcome = _diagnose(design, outcome, tests, moment)
-    ends_by_itself = all(flag.kind == "lost" for flag in outcome.book.open)
+    followed = outcome.book.absorbed
+    ends_by_itself = all(flag.kind == "lost" or flag.flag in followed for flag in outcome.book.open)
     tests.watch[0] = int(not ends_by_itself or outcome.book.episode is not None)
     return outcome
 
@@ -140,24 +149,6 @@ def climbed_since(design: DetectionDesign, tests: TestState, sensor: int) -> int
     return cycle
 
 
-def _clear_shifts(design: DetectionDesign, outcome: FollowUp, tests: TestState, moment: Moment) -> FollowUp:
-    """A shift's flag clears once its sensor's own sums have stayed down (an input's: once all sums have)."""
-    tags = [item.tag for item in design.model.spec.sensors]
-    for flag in outcome.book.open:
-        if flag.kind not in LASTING or flag.detected == moment.time:
-            continue
-        if flag.tag in tags and outcome.book.worked_on(tags.index(flag.tag), moment.cycle):
-            continue
-        own = slice(tags.index(flag.tag), tags.index(flag.tag) + 1) if flag.tag in tags else slice(None)
-        since = max(
-            int(np.max(tests.down_since[own])),
-            moment.cycle - (moment.time - flag.detected) // design.sample_us,
-        )
-        if not np.any(tests.up[own] != 0) and moment.cycle - since > QUIET:
-            outcome = cleared(outcome, flag, moment.time)
-    return outcome
-
-
 def _diagnose(design: DetectionDesign, outcome: FollowUp, tests: TestState, moment: Moment) -> FollowUp:
     """While a test of a sensor in use is up and no flag explains it: weigh the explanations and act on the verdict."""
     book = outcome.book
@@ -167,26 +158,26 @@ def _diagnose(design: DetectionDesign, outcome: FollowUp, tests: TestState, mome
         return replace(outcome, book=replace(book, episode=None))
     if moment.cycle < tests.valid_from[0]:
         return outcome
-    explained = any(
-        flag.kind in EXPLAINING and not _is_left_out(design, book, flag.tag, moment.cycle)
-        for flag in book.open
-    )
-    if explained:
+    explained = explains(design, book, moment.cycle, EXPLAINING)
+    if (explained and not opposed(design, book, tests)) or (
+        book.episode is not None and book.episode.explained
+    ):
         return outcome
+    if explained:
+        back = went_back(design, outcome, moment, look(design, tests, use, gains=False))
+        return outcome if back is None else back
     if book.episode is None:
         outcome = replace(outcome, book=replace(book, episode=Episode(moment.cycle)))
     return _act(design, outcome, tests, moment, use)
-
-
-def _is_left_out(design: DetectionDesign, book: FlagBook, tag: str, cycle: int) -> bool:
-    tags = [item.tag for item in design.model.spec.sensors]
-    return tag in tags and book.excluded(tags.index(tag), cycle)
 
 
 def _act(design: DetectionDesign, outcome: FollowUp, tests: TestState, moment: Moment, use: Ints) -> FollowUp:
     episode = outcome.book.episode
     waited = moment.cycle - episode.since if episode is not None else 0
     verdict, found = look(design, tests, use, gains=False)
+    back_again = went_back(design, outcome, moment, (verdict, found))
+    if back_again is not None:
+        return back_again
     turn = waited - crc32(design.model.spec.name.encode()) % PATIENCE
     due = turn >= PATIENCE and turn % PATIENCE < design.tests.look_every
     worth = _worth_a_flag(design, verdict, found, waited)
@@ -259,6 +250,15 @@ def _in_unit(
     )
 
 
+def _gated(tests: TestState, suspect: Hypothesis, age: int) -> bool:
+    """Has the gate kept readings of a sensor out about the onset, ``age`` cycles back? The filter then takes the rest in
+    sooner than the settled one, which signatures suppose.
+    """
+    cycle, window = int(tests.cycle[0]) - age, len(tests.ring)
+    about = np.arange(max(cycle - FOLLOWED, 0), cycle + 1) % window
+    return suspect.source == "sensor" and bool(np.any(np.isnan(tests.ring[about, suspect.index])))
+
+
 def _open_shift(
     design: DetectionDesign,
     outcome: FollowUp,
@@ -272,6 +272,8 @@ def _open_shift(
     kind = "model" if suspect.source == "gain" else kind
     size, size_sd = _present_size(suspect, found, verdict.best)
     size, size_sd = _in_unit(design, suspect, size, size_sd)
+    if _gated(tests, suspect, int(found.age[verdict.best])):
+        size_sd = float(np.hypot(size_sd, GATED_SHARE * size))
     back = int(found.age[verdict.best]) - 1
     flag = Flag(
         flag_name(design.model.spec.name, suspect.name, kind, moment.time),
@@ -288,6 +290,10 @@ def _open_shift(
         account.onset_to(moment.time, design.sample_us),
         account.hypotheses,
     )
+    outcome, new = flagged_once_more(outcome, flag)
+    if new is None:
+        return outcome
+    flag = new
     outcome = opened(outcome, flag)
     isolated = flag.isolated and suspect.source == "sensor"
     if not (design.leave_out and isolated and int(np.sum(use)) > 1):

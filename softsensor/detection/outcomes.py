@@ -15,6 +15,8 @@ from softsensor.detection.flags import (
 from softsensor.estimation.kernel import Ints
 
 SHIFT_KINDS: tuple[Kind, ...] = ("bias", "drift")
+LASTING: tuple[Kind, ...] = (*SHIFT_KINDS, "model")
+"""Kinds that come from a diagnosis and clear when all has been quiet."""
 
 
 @dataclass(frozen=True)
@@ -52,6 +54,10 @@ def cleared(outcome: FollowUp, flag: Flag, time: int) -> FollowUp:
     remaining = tuple(item for item in outcome.book.open if item.flag != flag.flag)
     return replace(
         outcome,
-        book=replace(outcome.book, open=remaining),
+        book=replace(
+            outcome.book,
+            open=remaining,
+            absorbed=tuple(name for name in outcome.book.absorbed if name != flag.flag),
+        ),
         changes=(*outcome.changes, flag.closed(time)),
     )

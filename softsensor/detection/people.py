@@ -12,9 +12,10 @@ from typing import Literal
 
 import numpy as np
 
+from softsensor.detection.absorbed_faults import remembered
 from softsensor.detection.detection_design import DetectionDesign
-from softsensor.detection.flags import Exclusion, FlagBook, Note, Rest, RestSpell, time_words
-from softsensor.detection.outcomes import SHIFT_KINDS, FollowUp
+from softsensor.detection.flags import Exclusion, Flag, FlagBook, Note, Rest, RestSpell, time_words
+from softsensor.detection.outcomes import LASTING, FollowUp, cleared
 from softsensor.detection.state_of_tests import TestState
 
 Act = Literal["put back", "leave out", "rest", "go on"]
@@ -69,6 +70,8 @@ def take(
         return _about_the_tests(design, outcome, cycle, time, decision)
     tags = [item.tag for item in design.model.spec.sensors]
     if decision.tag not in tags:
+        if decision.act == "put back" and decision.flag:
+            return _put_back(outcome, cycle, time, (decision, -1))
         return outcome, Taken(decision, cycle, time, None, f"{decision.tag} is no sensor of the model")
     sensor = tags.index(decision.tag)
     if decision.act == "leave out":
@@ -111,23 +114,38 @@ def _leave_out(
 
 
 def _put_back(outcome: FollowUp, cycle: int, time: int, what: tuple[Decision, int]) -> tuple[FollowUp, Taken]:
+    """A sensor that was left out counts again; a flag that a person has answered closes, also where its instrument was in
+    use all the time (sensor -1: no sensor of the model, an input's instrument for one).
+    """
     decision, sensor = what
     before = outcome.book
     people_only = not decision.flag
     exclusions = tuple(_cut(item, sensor, cycle, people_only) for item in before.exclusions)
-    if exclusions == before.exclusions:
+    answered = () if people_only else tuple(flag for flag in before.open if _answers(decision, flag))
+    if exclusions == before.exclusions and not answered:
         return outcome, Taken(decision, cycle, time, None, f"{decision.tag} was in use already")
-    answered = (
-        ()
-        if people_only
-        else tuple(flag for flag in before.open if flag.tag == decision.tag and flag.kind in SHIFT_KINDS)
+    book = replace(before, exclusions=exclusions)
+    if exclusions != before.exclusions:
+        outcome = _noted(outcome, book, time, "put back", f"{decision.tag} is put back; {_who(decision)}")
+    else:
+        text = f"{decision.tag}: its flag is closed by what was found; {_who(decision)}"
+        outcome = _noted(outcome, book, time, "flag answered", text)
+    followed = tuple(flag for flag in answered if not _was_left_out(before, sensor, cycle, flag))
+    for flag in answered:
+        outcome = cleared(outcome, flag, time)
+    outcome = remembered(outcome, tuple(flag.closed(time) for flag in followed), time)
+    return outcome, Taken(decision, cycle, time, None)
+
+
+def _answers(decision: Decision, flag: Flag) -> bool:
+    return flag.tag == decision.tag and flag.kind in LASTING
+
+
+def _was_left_out(book: FlagBook, sensor: int, cycle: int, flag: Flag) -> bool:
+    """Was the error kept from the estimate? Not where a person's leaving out, for the work itself, is all there was."""
+    return flag.flag not in book.absorbed and any(
+        item.sensor == sensor and item.covers(cycle) and not item.by_person for item in book.exclusions
     )
-    book = replace(
-        before, exclusions=exclusions, open=tuple(flag for flag in before.open if flag not in answered)
-    )
-    outcome = _noted(outcome, book, time, "put back", f"{decision.tag} is put back; {_who(decision)}")
-    closed = tuple(flag.closed(time) for flag in answered)
-    return replace(outcome, changes=outcome.changes + closed), Taken(decision, cycle, time, None)
 
 
 def _cut(item: Exclusion, sensor: int, cycle: int, people_only: bool) -> Exclusion:
@@ -164,7 +182,7 @@ def ended(design: DetectionDesign, book: FlagBook, tests: TestState, cycle: int,
     if over:
         for sensor in range(design.kernel.n_sensors):
             tests.repeats[sensor], tests.run_probability[sensor] = 0, 1.0
-    if outcome.notes:
+    if outcome.notes or any(flag.cleared == time for flag in book.answered):
         tests.restart_sums(cycle)
         if over and not book.unsteady(cycle) and cycle >= tests.settling_until[0]:
             tests.give_head_start(design.tests.interval * design.tests.armed[:, None])

@@ -37,7 +37,8 @@ def single_faults(
         (told.STUCK, "stuck", int(tests.repeats[sensor])),
         (told.SPIKE, "spike", 1),
     )
-    shifted = outcome.book.find(tag, SHIFT_KINDS) is not None
+    shift = outcome.book.find(tag, SHIFT_KINDS)
+    shifted = shift is not None and shift.flag not in outcome.book.absorbed
     worked_on = outcome.book.worked_on(sensor, moment.cycle)
     for bit, kind, ago in starts:
         if worked_on or (kind == "spike" and shifted):

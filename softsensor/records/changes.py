@@ -27,6 +27,8 @@ ACTIONS = {
 }
 LONGEST_S = 30 * 86400.0
 """Longest time for which tests rest or a person leaves a sensor out."""
+ANSWERED = ("bias", "drift", "model")
+"""Kinds of flag that a person's finding closes; the others show in the readings themselves, and clear with them."""
 DECISIONS = {"use": "used", "leave out": "left out"}
 
 
@@ -122,12 +124,13 @@ def put_back(
     as_left: float | None = None,
     finding: str = "confirmed",
 ) -> None:
-    """Decide that a sensor which was left out after a flag counts again; what was found becomes the flag's finding.
+    """Decide that a sensor which was left out after a flag counts again, or that a flag whose instrument was in use all
+    the time is answered; what was found becomes the flag's finding.
 
     The service takes it at its next cycle. A confirmed finding needs both values of the calibration.
 
-    :raises RecordsError: no such flag or finding, the sensor is not left out, the decision is made already, no
-        actor or reason, no calibration, or one that is not finite.
+    :raises RecordsError: no such flag or finding, the sensor is not left out and the flag is not open, the decision is
+        made already, no actor or reason, no calibration, or one that is not finite.
     """
     if finding not in FINDINGS:
         raise RecordsError(f"a finding cannot be {finding!r}; expected one of: {', '.join(FINDINGS)}")
@@ -140,8 +143,9 @@ def put_back(
         out = select(left_out.c.tag).where(
             left_out.c.unit_id == row.unit_id, left_out.c.tag == row.tag, left_out.c.until_us.is_(None)
         )
-        if connection.execute(out).first() is None:
-            raise RecordsError(f"{row.tag} is not left out")
+        waits = row.cleared_us is None and row.kind in ANSWERED
+        if not waits and connection.execute(out).first() is None:
+            raise RecordsError(f"{row.tag} is not left out and its flag is not open")
         made = select(decisions.c.id).where(decisions.c.flag_id == flag_id, decisions.c.taken_us.is_(None))
         if connection.execute(made).first() is not None:
             raise RecordsError(f"{row.tag} is being put back already: the decision waits for the next cycle")

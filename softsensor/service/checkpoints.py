@@ -26,9 +26,10 @@ from softsensor.errors import RecordsError
 from softsensor.estimation.kernel import EstimatorState
 from softsensor.records.named_arrays import pack_arrays, unpack_arrays
 
-FORMAT = 6
+FORMAT = 7
 """2: with the bank of tests; 3: with the gate's streaks in the estimator's state; 4: with the long memory;
-5: with both times of laboratory results; 6: with the onset's interval and what was weighed in open flags."""
+5: with both times of laboratory results; 6: with the onset's interval and what was weighed in open flags; 7: with flags whose
+error the estimate follows."""
 
 
 @dataclass(frozen=True)
@@ -82,6 +83,8 @@ def unpack_state(blob: bytes, version: int) -> tuple[CycleState, Context]:
             tuple(HeldState(**item) for item in rest.get("states", ())),
             Beginning(**rest["beginning"]) if rest.get("beginning") else None,
             RestSpell(**rest["settling"]) if rest.get("settling") else None,
+            tuple(rest["absorbed"]),
+            tuple(_flag(item) for item in rest["answered"]),
         )
         digest = Digest(bytes.fromhex(rest["chain"]), bytes.fromhex(rest["pending"]), rest["rows"])
         labs = tuple(
@@ -117,6 +120,8 @@ def _rest(state: CycleState, context: Context) -> bytes:
         "states": [asdict(state) for state in book.states],
         "beginning": asdict(book.beginning) if book.beginning else None,
         "settling": asdict(book.settling) if book.settling else None,
+        "absorbed": list(book.absorbed),
+        "answered": [asdict(flag) for flag in book.answered],
         "exclusions": [asdict(item) for item in book.exclusions],
         "chain": state.digest.chain.hex(),
         "pending": state.digest.pending.hex(),

@@ -60,8 +60,6 @@ class Seen:
     left_out: tuple[LeftOut, ...]
     operating_value: float
     """The median prediction since the onset, nan without one: what the process really did, as far as anybody knows."""
-    put_back: bool
-    """The sensor is left out after a flag, so that putting it back has an effect."""
 
 
 def seen_of(site: Site, unit: Unit, flag: StoredFlag) -> Seen:
@@ -88,7 +86,6 @@ def seen_of(site: Site, unit: Unit, flag: StoredFlag) -> Seen:
         _error_now(site, unit, flag, item, now, newest),
         out,
         value,
-        flag.kind in ("bias", "drift") and any(not row.by_person for row in now),
     )
 
 

@@ -29,6 +29,7 @@ from softsensor.web.chart_data import (
 )
 from softsensor.web.flag_seen import seen_of
 from softsensor.web.handbook_text import chapter_html
+from softsensor.web.in_use import is_answerable, is_out
 from softsensor.web.rows import estimate_rows, latest_cycle, tag_decimals, tag_units
 from softsensor.web.security import COOKIE
 from softsensor.web.site import NotHere, Site, choices_for
@@ -111,6 +112,8 @@ def flag_answer(
         "units": tag_units(spec),
         "decimals": tag_decimals(spec),
         "seen": seen_of(site, unit, flag),
+        "out": is_out(site, unit, flag),
+        "answerable": is_answerable(site, unit, flag),
         "typed": {} if refused is None else refused.typed,
         "complaint": "" if refused is None else refused.complaint,
     }

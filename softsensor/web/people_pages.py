@@ -12,28 +12,15 @@ from plant_models.durations import parse_duration
 from plant_models.errors import UnitError
 from plant_models.specification import SensorSpec
 from softsensor.records import changes, decisions
-from softsensor.records.decisions import LeftOut, StoredDecision
+from softsensor.records.decisions import StoredDecision
 from softsensor.records.reader import Unit, flags_of
 from softsensor.records.rests import rests_at
 from softsensor.records.tables import FINDINGS
 from softsensor.web.flag_sheet import flag_sheet
 from softsensor.web.forms import Field, calibration, person
+from softsensor.web.in_use import is_answerable, is_out, left_out_now, newest_us
 from softsensor.web.pages import Pages, Refused
-from softsensor.web.rows import latest_cycle
 from softsensor.web.site import BadForm, ForeignForm, NotHere, Site
-
-
-def newest_us(site: Site, unit: Unit) -> int | None:
-    """Time of the unit's newest cycle under the model in service."""
-    latest, _ = latest_cycle(site.database, unit, site.models.revision_of(unit))
-    return None if latest is None else int(latest.times[-1])
-
-
-def left_out_now(site: Site, unit: Unit, tag: str) -> list[LeftOut]:
-    """Why a sensor does not count at the newest cycle: what a person decided, what followed from a flag."""
-    now = newest_us(site, unit)
-    rows = decisions.left_out_of(site.database, unit.id, tag)
-    return [] if now is None else [row for row in rows if row.covers(now)]
 
 
 def waiting_for(site: Site, unit: Unit, tag: str | None) -> list[StoredDecision]:
@@ -76,7 +63,8 @@ def put_back_answer(
     unit, flag, _ = site.flag(*place)
     units = {item.tag: item.unit for item in site.models.spec(site.models.revision_of(unit)).sensors}
     shown: dict[str, Any] = {
-        "out": any(not item.by_person for item in left_out_now(site, unit, flag.tag)),
+        "out": is_out(site, unit, flag),
+        "answerable": is_answerable(site, unit, flag),
         "waiting": [item for item in waiting_for(site, unit, flag.tag) if item.act == "put back"],
         "units": units,
         "typed": {} if refused is None else refused.typed,
@@ -167,10 +155,12 @@ def people_forms(site: Site, pages: Pages) -> APIRouter:
             typed = {"finding": finding, "actor": actor, "reason": reason}
             typed |= {"as_found": as_found, "as_left": as_left}
             return put_back_answer(site, pages, request, (name, id), Refused(str(problem), typed))
-        if not any(not item.by_person for item in left_out_now(site, unit, flag.tag)):
-            raise BadForm(f"{flag.tag} is in use; expected a sensor that is left out after a flag")
+        if not is_answerable(site, unit, flag):
+            raise BadForm(
+                f"{flag.tag} is in use and this flag is cleared; expected an open flag, or a sensor left out after one"
+            )
         if any(item.act == "put back" for item in waiting_for(site, unit, flag.tag)):
-            raise BadForm(f"{flag.tag} is being put back already; the next cycle takes it")
+            raise BadForm(f"a finding on {flag.tag} waits already; the next cycle takes it")
         changes.put_back(site.database, id, who.name, who.reason, found, left, finding)
         return back(name, f"flag?id={quote(id, safe='')}")
 

@@ -384,7 +384,7 @@ def test_a_put_back_needs_a_left_out_sensor_and_both_errors(
         "a finding cannot be 'maybe'; expected one of",
         "as found cannot be nan; expected a number in the unit of the tag",
         "TI1B is being put back already",
-        "TI1B is not left out",
+        "TI1B is not left out and its flag is not open",
     ]
     with open_database(sqlite_url) as database:
         (flag,) = reader.flags_of(database)

@@ -9,12 +9,14 @@ from urllib.parse import quote
 
 import pytest
 from browser.recorded_unit import FLAG_ID, HOUR, MINUTE, NOW, OLD_FLAG_ID, UNIT
+from sqlalchemy import update
 
 from softsensor.detection.flags import RestSpell
 from softsensor.records import decisions, reader
 from softsensor.records.decisions import LeftOut, Outcome
 from softsensor.records.engine import Database
 from softsensor.records.rests import store_rests
+from softsensor.records.tables import flags
 
 FLAG = f"/units/{UNIT}/flag?id={quote(FLAG_ID)}"
 PUT_BACK = f"/units/{UNIT}/flag/put-back?id={quote(FLAG_ID)}"
@@ -66,11 +68,11 @@ def test_a_left_out_sensor_is_put_back_with_what_was_found(recorded: Database, a
     assert entries(recorded)[-1].object == f"sensor TI2101B of unit {UNIT}"
     assert entries(recorded)[-1].reason == "new element"
     page = asker.get(PUT_BACK).text
-    assert "is being put back" in page
+    assert "has entered a finding on TI2101B" in page
     assert "<form" not in page
     again = asker.post(PUT_BACK, {"token": asker.token(FLAG), **CALIBRATED})
     assert again.status_code == 400
-    assert "being put back already" in again.text
+    assert "a finding on TI2101B waits already" in again.text
 
 
 def test_a_bad_number_comes_back_with_what_was_typed(recorded: Database, asker: Any) -> None:
@@ -84,7 +86,21 @@ def test_a_bad_number_comes_back_with_what_was_typed(recorded: Database, asker: 
     assert decisions.waiting_decisions(recorded, 1) == []
 
 
-def test_a_sensor_in_use_cannot_be_put_back(recorded: Database, asker: Any) -> None:
+def test_an_open_flag_on_a_sensor_in_use_is_answered_by_a_finding(recorded: Database, asker: Any) -> None:
+    assert f'href="{PUT_BACK}">Answer this flag</a>' in asker.get(FLAG).text
+    assert "Enter the finding and clear the flag" in asker.get(PUT_BACK).text
+    given = {"token": asker.token(PUT_BACK), "finding": "not confirmed", **PERSON}
+    assert asker.post(PUT_BACK, given).status_code == 303
+    (waiting,) = decisions.waiting_decisions(recorded, 1)
+    assert (waiting.act, waiting.tag, waiting.flag_id) == ("put back", "TI2101B", FLAG_ID)
+    flag, _ = reader.flag_with_comments(recorded, FLAG_ID)
+    assert flag.finding == "not confirmed"
+
+
+def test_a_cleared_flag_on_a_sensor_in_use_has_nothing_to_put_back(recorded: Database, asker: Any) -> None:
+    with recorded.write() as connection:
+        connection.execute(update(flags).values(cleared_us=NOW, state="cleared"))
+    assert "put-back" not in asker.get(FLAG).text
     assert "nothing to put back" in asker.get(PUT_BACK).text
     answer = asker.post(PUT_BACK, {"token": asker.token(FLAG), **CALIBRATED})
     assert answer.status_code == 400
