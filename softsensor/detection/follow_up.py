@@ -7,7 +7,6 @@ from zlib import crc32
 
 import numpy as np
 
-from plant_models.model_scale import bias_in_unit
 from softsensor.detection import state_of_tests as told
 from softsensor.detection.absorbed_faults import (
     explains,
@@ -22,6 +21,7 @@ from softsensor.detection.diagnosis import (
     Likelihoods,
     Verdict,
 )
+from softsensor.detection.flag_sizes import present_size, size_in_unit
 from softsensor.detection.flags import (
     Episode,
     Exclusion,
@@ -35,10 +35,8 @@ from softsensor.detection.flags import (
 )
 from softsensor.detection.onsets import NO_ACCOUNT, Account, account_of
 from softsensor.detection.outcomes import LASTING, FollowUp, Moment, opened
-from softsensor.detection.signatures import Hypothesis
 from softsensor.detection.single_faults import single_faults
 from softsensor.detection.state_of_tests import TestState
-from softsensor.estimation.gate import FOLLOWED
 from softsensor.estimation.kernel import Ints
 
 EXPLAINING: tuple[Kind, ...] = (*LASTING, "stuck", "noisy")
@@ -46,8 +44,6 @@ EXPLAINING: tuple[Kind, ...] = (*LASTING, "stuck", "noisy")
 PATIENCE = 60
 """Cycles for which a name is waited for before a group is flagged, and between two times that gains are weighed; units take
 their turns within it, so that a hundred of them do not all weigh in the same second."""
-GATED_SHARE = 0.2
-"""Of a size that rests on readings about which the gate had kept others out: its further standard deviation. From trials."""
 UNSTEADY = "start in a moving plant"
 
 
@@ -210,7 +206,7 @@ def _worth_a_flag(design: DetectionDesign, verdict: Verdict, found: Likelihoods,
     if suspect.source == "disturbance":
         return False
     named = verdict.probabilities[0] * (NAMING_RATIO + 1.0) >= NAMING_RATIO
-    size = abs(_present_size(suspect, found, verdict.best)[0])
+    size = abs(present_size(suspect, found, verdict.best)[0])
     worth = suspect.source != "sensor" or size > design.model.scaled.sensors[suspect.index].tolerance
     certain = verdict.instrument * (NAMING_RATIO + 1.0) > NAMING_RATIO
     return named or (certain and worth and waited >= PATIENCE)
@@ -230,35 +226,6 @@ def _note(outcome: FollowUp, moment: Moment, verdict: Verdict) -> FollowUp:
     )
 
 
-def _present_size(suspect: Hypothesis, found: Likelihoods, best: int) -> tuple[float, float]:
-    """Size of the error now, with its sd: a ramp has run for as many cycles as its onset lies back."""
-    factor = float(found.age[best]) if suspect.shape == "ramp" else 1.0
-    return float(found.size[best]) * factor, float(found.size_sd[best]) * factor
-
-
-def _in_unit(
-    design: DetectionDesign, suspect: Hypothesis, size: float, size_sd: float
-) -> tuple[float, float]:
-    """An instrument's error, with its sd, in the engineering unit at the operating point."""
-    spec = design.model.spec
-    if suspect.source == "sensor":
-        return bias_in_unit(spec.sensors[suspect.index], size, size_sd)
-    return (
-        bias_in_unit(spec.inputs[suspect.index], size, size_sd)
-        if suspect.source == "input"
-        else (size, size_sd)
-    )
-
-
-def _gated(tests: TestState, suspect: Hypothesis, age: int) -> bool:
-    """Has the gate kept readings of a sensor out about the onset, ``age`` cycles back? The filter then takes the rest in
-    sooner than the settled one, which signatures suppose.
-    """
-    cycle, window = int(tests.cycle[0]) - age, len(tests.ring)
-    about = np.arange(max(cycle - FOLLOWED, 0), cycle + 1) % window
-    return suspect.source == "sensor" and bool(np.any(np.isnan(tests.ring[about, suspect.index])))
-
-
 def _open_shift(
     design: DetectionDesign,
     outcome: FollowUp,
@@ -270,10 +237,7 @@ def _open_shift(
     suspect = explanations(design)[verdict.best]
     kind: Kind = "drift" if suspect.shape == "ramp" else "bias"
     kind = "model" if suspect.source == "gain" else kind
-    size, size_sd = _present_size(suspect, found, verdict.best)
-    size, size_sd = _in_unit(design, suspect, size, size_sd)
-    if _gated(tests, suspect, int(found.age[verdict.best])):
-        size_sd = float(np.hypot(size_sd, GATED_SHARE * size))
+    size, size_sd = size_in_unit(design, tests, found, verdict.best)
     back = int(found.age[verdict.best]) - 1
     flag = Flag(
         flag_name(design.model.spec.name, suspect.name, kind, moment.time),

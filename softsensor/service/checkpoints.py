@@ -28,8 +28,8 @@ from softsensor.records.named_arrays import pack_arrays, unpack_arrays
 
 FORMAT = 7
 """2: with the bank of tests; 3: with the gate's streaks in the estimator's state; 4: with the long memory;
-5: with both times of laboratory results; 6: with the onset's interval and what was weighed in open flags; 7: with flags whose
-error the estimate follows."""
+5: with both times of laboratory results; 6: with the onset's interval and what was weighed in open flags;
+7: with flags whose error the estimate follows."""
 
 
 @dataclass(frozen=True)
