@@ -46,7 +46,8 @@ class OpcUaSink:
             )
         book = unit.run.state.book
         for i, tag in enumerate(unit.model.sensor_tags):
-            health = DeviceHealth(sensor_health(book, tag, book.worked_on(i, results.first)).code)
+            use = book.worked_on(i, results.first), book.waits(i, results.first)
+            health = DeviceHealth(sensor_health(book, tag, *use).code)
             await self._publisher.publish_sensor_health(
                 unit.name, tag, health, now, float(results.beyond[0, i])
             )

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterable
 from enum import Enum
 
 from softsensor.detection.flags import FlagBook
@@ -48,8 +49,20 @@ SEVERITY = (
 """From least to most severe, as in the device manuals quoted for NE 107 (edition 2006-06-12)."""
 
 
-def sensor_health(book: FlagBook, tag: str, worked_on: bool = False) -> SensorStatus:
-    """The most severe status that the open flags give a sensor; function check where a person has left it out."""
+def most_severe(found: Iterable[SensorStatus], worked_on: bool, waits: bool) -> SensorStatus:
+    """The status of a sensor from those that its open flags give.
+
+    :param worked_on: a person has left it out, for work on it: function check.
+    :param waits: it was left out after a flag and waits to be put back: maintenance required, also once the flag is
+        cleared.
+    """
+    together = [*found]
+    together += [SensorStatus.FUNCTION_CHECK] if worked_on else []
+    together += [SensorStatus.MAINTENANCE_REQUIRED] if waits else []
+    return max(together, key=SEVERITY.index, default=SensorStatus.NORMAL)
+
+
+def sensor_health(book: FlagBook, tag: str, worked_on: bool = False, waits: bool = False) -> SensorStatus:
+    """The most severe status that the open flags and its use give a sensor."""
     found = [status_of(flag.kind, flag.probability, flag.isolated) for flag in book.open if flag.tag == tag]
-    found += [SensorStatus.FUNCTION_CHECK] if worked_on else []
-    return max(found, key=SEVERITY.index, default=SensorStatus.NORMAL)
+    return most_severe(found, worked_on, waits)

@@ -185,6 +185,13 @@ class FlagBook:
             item.sensor == sensor and item.by_person and item.covers(cycle) for item in self.exclusions
         )
 
+    def waits(self, sensor: int, cycle: int) -> bool:
+        """Has the sensor been left out after a flag, and waits to be put back?"""
+        return any(
+            item.sensor == sensor and item.covers(cycle) and not item.by_person and not item.state
+            for item in self.exclusions
+        )
+
     def resting(self, cycle: int) -> bool:
         """Do the unit's tests rest at a cycle because a person said so, or because of the plant's state?"""
         return self.rested(cycle) or any(state.covers(cycle) for state in self.states)

@@ -4,18 +4,19 @@ from __future__ import annotations
 
 import json
 import math
-from collections.abc import Collection, Sequence
+from collections.abc import Sequence
 from dataclasses import dataclass
 
 from sqlalchemy import select
 
 from plant_models.model_scale import one_from_model
 from plant_models.specification import EstimateSpec, SensorSpec, UnitSpec
-from softsensor.alarms.sensor_status import SEVERITY, SensorStatus, status_of
+from softsensor.alarms.sensor_status import SensorStatus, most_severe, status_of
 from softsensor.estimation.kernel import Floats
 from softsensor.published import published_one
 from softsensor.readings_of_cycle import CycleReadings
 from softsensor.records import series
+from softsensor.records.decisions import LeftOut
 from softsensor.records.engine import Database
 from softsensor.records.reader import StoredEvent, StoredFlag, StoredLab, Unit
 from softsensor.records.tables import lab_results
@@ -116,15 +117,15 @@ def tag_decimals(spec: UnitSpec) -> dict[str, int]:
     return found
 
 
-def health_of(tag: str, flags: Sequence[StoredFlag], worked_on: bool = False) -> SensorStatus:
-    """The most severe status that the open flags give a tag; function check where a person has left it out."""
+def health_of(tag: str, flags: Sequence[StoredFlag], left_out: LeftOut | None = None) -> SensorStatus:
+    """The most severe status that the open flags and its use give a tag."""
     found = [
         status_of(flag.kind, flag.probability or 0.0, flag.group == (tag,))
         for flag in flags
         if flag.tag == tag
     ]
-    found += [SensorStatus.FUNCTION_CHECK] if worked_on else []
-    return max(found, key=SEVERITY.index, default=SensorStatus.NORMAL)
+    by_person = left_out is not None and left_out.by_person
+    return most_severe(found, by_person, left_out is not None and not by_person)
 
 
 def finite(value: float) -> float | None:
@@ -157,7 +158,8 @@ def _sensor_row(
     reading = finite(seen.y[-1, i])
     deviation = results.innovation[-1, i] / results.innovation_sd[-1, i]
     left_out = f"{item.tag} is left out" in results.reasons[-1]
-    unused = "left out" if left_out else "not used: it cannot be right"
+    waits = "left out, waits to be put back" if health is SensorStatus.MAINTENANCE_REQUIRED else "left out"
+    unused = waits if left_out else "not used: it cannot be right"
     if reading is None:
         unused = f"no reading: {NO_READING[seen.y_quality[-1, i]]}"
     return SensorRow(
@@ -184,15 +186,16 @@ def sensor_rows(
     latest: series.TimedResults | None,
     seen: CycleReadings | None,
     flags: Sequence[StoredFlag],
-    worked_on: Collection[str] = (),
+    left_out: Sequence[LeftOut] = (),
 ) -> tuple[SensorRow, ...]:
     """Every sensor of the model with its latest reading, prediction and health.
 
-    :param worked_on: tags that a person has left out.
+    :param left_out: what the newest cycle kept from the estimate.
     """
     rows = []
+    out = {row.tag: row for row in sorted(left_out, key=lambda row: row.by_person)}
     for i, item in enumerate(spec.sensors):
-        health = health_of(item.tag, flags, item.tag in worked_on)
+        health = health_of(item.tag, flags, out.get(item.tag))
         if latest is None or seen is None:
             places = (difference_unit(item.unit), decimals_for(item.noise_sd), None, None, None, None)
             rows.append(SensorRow(item.tag, item.unit, *places, health, "no reading"))

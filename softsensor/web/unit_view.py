@@ -101,8 +101,7 @@ class UnitView:
     @cached_property
     def sensors(self) -> tuple[SensorRow, ...]:
         """Every sensor."""
-        worked_on = {item.tag for item in self.left_out if item.by_person}
-        return sensor_rows(self.spec, *self._cycle, self.open_flags, worked_on)
+        return sensor_rows(self.spec, *self._cycle, self.open_flags, self.left_out)
 
     @cached_property
     def left_out(self) -> tuple[LeftOut, ...]:

@@ -108,6 +108,17 @@ def test_a_cleared_flag_on_a_sensor_in_use_has_nothing_to_put_back(recorded: Dat
     assert decisions.waiting_decisions(recorded, 1) == []
 
 
+def test_a_left_out_sensor_asks_for_maintenance_also_once_its_flag_is_cleared(
+    recorded: Database, asker: Any
+) -> None:
+    with recorded.write() as connection:
+        connection.execute(update(flags).values(cleared_us=NOW, state="cleared"))
+    row = f"/units/{UNIT}/part/sensors"
+    assert "maintenance required" not in asker.get(row).text
+    put_left_out(recorded)
+    assert '<b class="letter" aria-hidden="true">M</b> maintenance required' in asker.get(row).text
+
+
 def test_a_sensor_is_left_out_for_a_time_and_back_sooner(recorded: Database, asker: Any) -> None:
     fields = {"token": asker.token(SENSOR), "time": "2.5 h", **PERSON}
     answer = asker.post(LEAVE_OUT, fields)
