@@ -10,6 +10,7 @@ from typing import TYPE_CHECKING, Annotated, Any
 import typer
 
 from plant_models.errors import Problem
+from plant_models.number_text import plain
 
 if TYPE_CHECKING:
     from plant_models.plant_model import PlantModel
@@ -138,7 +139,8 @@ def _line(item: SensorRun) -> str:
     if item.factor == 1.0:
         return f"{text}; nothing is widened (up on the stretch {_often(item.ups_before)})"
     after = "" if item.after is None else f"one per {_time(item.after)}"
-    return f"{text}; widened {item.factor:g}: {after} (up on the stretch {_often(item.ups_before)}, then {item.ups_after})"
+    ups = f"up on the stretch {_often(item.ups_before)}, then {item.ups_after}"
+    return f"{text}; widened {plain(item.factor)}: {after} ({ups})"
 
 
 def _often(times: int) -> str:
@@ -149,4 +151,4 @@ def _time(seconds: float) -> str:
     if not math.isfinite(seconds):
         return "never"
     unit, size = ("d", 86400.0) if seconds >= 86400.0 else ("h", 3600.0)
-    return f"{seconds / size:.3g} {unit}"
+    return f"{plain(seconds / size, 3)} {unit}"

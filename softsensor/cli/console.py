@@ -8,6 +8,7 @@ from typing import Any
 
 import typer
 
+from plant_models.number_text import plain
 from plant_models.plant_model import PlantModel
 from plant_models.units import difference_unit
 from softsensor.service.live_feed import LiveFeed, News
@@ -54,7 +55,7 @@ def line_of(news: News, units: Units) -> str | None:
 
 
 def _lab_line(body: dict[str, Any], unit: str) -> str:
-    value = "no value" if body["value"] is None else _quantity(f"{body['value']:.4g}", unit)
+    value = "no value" if body["value"] is None else _quantity(plain(body["value"], 4), unit)
     text = f"laboratory: {clock_text(body['sampled'])} {body['tag']} {value}"
     text += f", reported {clock_text(body['reported'])}: {body['status']}"
     return f"{text}; {body['reason']}" if body["reason"] else text
@@ -67,10 +68,10 @@ def _flag_line(body: dict[str, Any], unit: str) -> str:
         f"{clock_text(body['detected'])} FLAG {body['tag']} {body['kind']}, since {clock_text(body['onset'])}"
     )
     if body["size"] is not None:
-        size = _quantity(f"{body['size']:.3g}", difference_unit(unit))
+        size = _quantity(plain(body["size"], 3), difference_unit(unit))
         text += f", size {size}"
         if body["size_sd"] is not None:
-            sd = _quantity(f"{body['size_sd']:.2g}", difference_unit(unit))
+            sd = _quantity(plain(body["size_sd"], 2), difference_unit(unit))
             text += f" (sd {sd})"
         text += f", probability {body['probability']:.3f}"
     alone = body["group"] == body["tag"]

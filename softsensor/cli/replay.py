@@ -9,6 +9,7 @@ from typing import TYPE_CHECKING, Annotated, Literal
 
 import typer
 
+from plant_models.number_text import plain
 from softsensor.errors import ReplayError
 
 if TYPE_CHECKING:
@@ -159,8 +160,8 @@ def _tell(summary: dict[str, object], out: Path) -> None:
     for tag, item in estimates.items():
         if item["lab_count"]:
             typer.echo(
-                f"{tag}: {item['lab_count']} laboratory results, rmsep {item['rmsep']:.4g}, bias {item['bias']:.3g}, "
-                f"coverage {item['coverage']:.0%}"
+                f"{tag}: {item['lab_count']} laboratory results, rmsep {plain(item['rmsep'], 4)}, "
+                f"bias {plain(item['bias'], 3)}, coverage {item['coverage']:.0%}"
             )
     notes = summary["notes"]
     assert isinstance(notes, list)

@@ -12,6 +12,7 @@ from numpy.typing import NDArray
 from connectors.history import History
 from plant_models.building import build_plant_model
 from plant_models.durations import format_duration
+from plant_models.number_text import plain
 from plant_models.plant_model import PlantModel
 from softsensor.commissioning.bank_run import Bank, BankRun
 from softsensor.commissioning.correlation import Character
@@ -173,8 +174,8 @@ def _too_short(design: UnitDesign, i: int, cycles: int) -> str | None:
         return None
     days = spec.sample_time / 86400.0
     return (
-        f"{spec.sensors[i].tag} is watched patiently, and {cycles * days:.2g} d cannot judge sums that remember so long: "
-        f"take a stretch of {needed * days:.2g} d or more, or take it out of `patient`"
+        f"{spec.sensors[i].tag} is watched patiently, and {plain(cycles * days, 2)} d cannot judge sums that remember "
+        f"so long: take a stretch of {plain(needed * days, 2)} d or more, or take it out of `patient`"
     )
 
 
@@ -184,7 +185,7 @@ def _seconds(wider: Widening, sample_time: float) -> float | None:
 
 def _reason(found: Character, span: float) -> str:
     days = max(span / 86400.0, 0.1)
-    over = f"over {days:.2g} d" if span >= 8640.0 else f"over {format_duration(round(span))}"
+    over = f"over {plain(days, 2)} d" if span >= 8640.0 else f"over {format_duration(round(span))}"
     chance = 2.576 * math.sqrt(max(found.slow, 0.0) / found.readings)
     if abs(found.mean) > max(LARGE_MEAN, chance):
         return f"innovations off by {found.mean:+.2f} of their standard deviation on average {over}"

@@ -7,6 +7,7 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
+from plant_models.number_text import plain
 from plant_models.plant_model import PlantModel
 from plant_models.simulators.scenario import DemoScenario
 from softsensor.cycle import start
@@ -126,7 +127,7 @@ def report_lines(report: Report, story: DemoScenario, began: int) -> list[str]:
     used = sum(lab.status == "used" for lab in report.labs)
     lines.append(f"Laboratory results: {used} used of {len(report.labs)}.")
     lines += [
-        f"  not used: {lab.value:.4g} {unit}, {lab.status}; {lab.reason}"
+        f"  not used: {plain(lab.value, 4)} {unit}, {lab.status}; {lab.reason}"
         for lab in report.labs
         if lab.status != "used"
     ]

@@ -78,7 +78,7 @@ def _say_settling(outcome: FollowUp, moment: Moment) -> FollowUp:
 
 def _rested(outcome: FollowUp, spell: RestSpell, text: str, time: int) -> FollowUp:
     book = replace(outcome.book, settling=spell if spell.until is None or spell.until > time else None)
-    note = Note(time, "suppression", text)
+    note = Note(time, "rest", text)
     return replace(outcome, book=book, notes=(*outcome.notes, note), rests=(*outcome.rests, spell))
 
 

@@ -88,12 +88,12 @@ def _about_the_tests(
         until = time + length * design.sample_us
         text = f"{decision.occasion}: the tests rest until {time_words(until)}, the estimates go on; {_who(decision)}"
         rest = Rest(cycle + length, decision.occasion, time, _who(decision))
-        outcome = _noted(outcome, replace(book, rest=rest), time, "suppression", text)
+        outcome = _noted(outcome, replace(book, rest=rest), time, "rest", text)
         return _with_spell(outcome, rest, until), Taken(decision, cycle, time, until)
     if book.rest is None or not book.rested(cycle):
         return outcome, Taken(decision, cycle, time, None, "the tests were not at rest")
     text = f"{book.rest.occasion}: the rest of the tests is ended; {_who(decision)}"
-    outcome = _noted(outcome, replace(book, rest=replace(book.rest, until=cycle)), time, "suppression", text)
+    outcome = _noted(outcome, replace(book, rest=replace(book.rest, until=cycle)), time, "rest", text)
     return _with_spell(outcome, book.rest, time), Taken(decision, cycle, time, None)
 
 
@@ -203,7 +203,7 @@ def _rests_over(outcome: FollowUp, cycle: int, time: int) -> tuple[FollowUp, boo
     still = [state.name for state in kept] + ([] if rest is None else [rest.occasion])
     what = f"they still rest: {', '.join(still)}" if still else "the tests go on"
     text = f"{', '.join(ending)}: {what}"
-    return _noted(outcome, after, time, "suppression", text), not still
+    return _noted(outcome, after, time, "rest", text), not still
 
 
 def _forget_readings(design: DetectionDesign, book: FlagBook, tests: TestState, sensor: int) -> None:

@@ -142,5 +142,5 @@ def _spell(state: HeldState, until: int | None) -> RestSpell:
 
 
 def _noted(before: FollowUp, after: FollowUp, time: int, text: str, spell: RestSpell) -> FollowUp:
-    note = Note(time, "suppression", text)
+    note = Note(time, "rest", text)
     return replace(after, notes=(*before.notes, note), rests=(*before.rests, spell))

@@ -49,7 +49,8 @@ class Flag:
 class Event:
     """Something that happened and is not a flag: a connection lost, a test up because a disturbance moved.
 
-    :param kind: such as ``connection``, ``disturbance``, ``suppression``, ``lost readings``.
+    :param kind: such as ``connection``, ``disturbance``, ``rest`` (earlier releases: ``suppression``), ``lost
+        readings``.
     :param key: what tells this event from every other; an event made from a cycle should name unit, cycle and
         kind.
     """

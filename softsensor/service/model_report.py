@@ -8,6 +8,7 @@ import math
 from collections.abc import Iterator
 from dataclasses import dataclass
 
+from plant_models.number_text import plain
 from plant_models.plant_model import PlantModel
 from plant_models.specification import UnitSpec
 from softsensor.detection.absorption import LATEST_FLAG
@@ -138,7 +139,7 @@ def _about_commissioning(spec: UnitSpec) -> Iterator[str]:
     for tag, reason in spec.disarmed:
         yield f"{tag}: its tests of innovations are disarmed: {reason}"
     for tag, factor in spec.widening:
-        yield f"{tag}: its decision intervals are {factor:g} times as wide as independent innovations would need"
+        yield f"{tag}: its decision intervals are {plain(factor)} times as wide as independent innovations would need"
 
 
 def _about_schedules(spec: UnitSpec) -> Iterator[str]:
@@ -147,7 +148,7 @@ def _about_schedules(spec: UnitSpec) -> Iterator[str]:
         if any(path.schedule is not None and path.schedule.tag == item.tag for path in spec.paths):
             yield (
                 f"transfer functions change with {item.tag}: tests, signatures and all that is said here of sensors and "
-                f"estimates are computed at {item.tag} = {item.operating_point:g} {item.unit}"
+                f"estimates are computed at {item.tag} = {plain(item.operating_point)} {item.unit}"
             )
 
 
@@ -175,8 +176,8 @@ def duration_text(seconds: float) -> str:
     """
     for unit, size in (("d", 86400.0), ("h", 3600.0), ("min", 60.0)):
         if seconds >= size:
-            return f"{seconds / size:.3g} {unit}"
-    return f"{seconds:.3g} s"
+            return f"{plain(seconds / size, 3)} {unit}"
+    return f"{plain(seconds, 3)} s"
 
 
 def _solution(state: SteadyState) -> SolutionReport:
@@ -239,7 +240,7 @@ def _about_sensors(model: PlantModel, sensors: tuple[SheetLine, ...]) -> list[st
             shift = item.shift
             by = f"is absorbed by {shift.absorbed_by}" if shift.absorbed_by else "is too small for its noise"
             lines.append(
-                f"{spec.tag}: a lasting bias of its tolerance {by}: it leaves {shift.settled:.2g} sd, for which the "
+                f"{spec.tag}: a lasting bias of its tolerance {by}: it leaves {plain(shift.settled, 2)} sd, for which the "
                 f"test needs more than {LATEST_FLAG:.0%} of the false-flag interval on average"
                 + (": only its onset shows, and the estimates go wrong with it" if shift.absorbed_by else "")
             )
@@ -253,8 +254,8 @@ def _about_gates(spec: UnitSpec, sensors: tuple[SheetLine, ...]) -> list[str]:
         width, span = sensor.gate * item.shift.innovation_sd, sensor.range[1] - sensor.range[0]
         if width > span:
             lines.append(
-                f"{sensor.tag}: its gate can never fire: {sensor.gate:g} sd of its innovation are {width:.3g} "
-                f"{item.shift.unit}, more than its whole range of {span:.3g}: one impossible reading within the range "
+                f"{sensor.tag}: its gate can never fire: {plain(sensor.gate)} sd of its innovation are {plain(width, 3)} "
+                f"{item.shift.unit}, more than its whole range of {plain(span, 3)}: one impossible reading within the range "
                 "moves the estimates"
             )
     return lines

@@ -6,6 +6,7 @@ import math
 from collections.abc import Iterator
 from typing import NamedTuple
 
+from plant_models.number_text import plain
 from plant_models.units import difference_unit
 from softsensor.estimation.observability import EstimateKnowledge
 from softsensor.estimation.what_helps import Change, Prospects
@@ -51,10 +52,10 @@ def _path(path: PathReport) -> tuple[str, ...]:
     ]
     return (
         f"{path.source} -> {path.target}" + (f" at {path.at}" if path.at else ""),
-        f"{path.gain:.4g} {path.gain_unit}",
+        f"{plain(path.gain, 4)} {path.gain_unit}",
         ", ".join(duration_text(lag) for lag in path.time_constants) or "none",
         duration_text(path.dead_time),
-        f"{path.dead_time_samples:.4g}",
+        plain(path.dead_time_samples, 4),
         ", ".join(shape),
     )
 
@@ -65,7 +66,7 @@ def _along_schedules(report: ModelReport) -> Iterator[ReportTable]:
         rows = tuple(
             (
                 item.estimate,
-                f"{item.tag} = {item.value:g} {item.unit}",
+                f"{item.tag} = {plain(item.value)} {item.unit}",
                 sd_text(item.sd_without_sensors),
                 sd_text(item.sd_with_sensors),
             )
@@ -83,11 +84,13 @@ def _scales(report: ModelReport) -> Iterator[ReportTable]:
         (
             item.tag,
             item.transform or "none",
-            "" if item.slope is None else f"{abs(item.slope):.3g} per {difference_unit(item.unit)}",
+            "" if item.slope is None else f"{plain(abs(item.slope), 3)} per {difference_unit(item.unit)}",
             ""
             if item.slope_from is None or item.slope_to is None
-            else f"{item.slope_from:.3g} to {item.slope_to:.3g}",
-            "none" if item.limits is None else f"{item.limits[0]:g} to {item.limits[1]:g} {item.unit}",
+            else f"{plain(item.slope_from, 3)} to {plain(item.slope_to, 3)}",
+            "none"
+            if item.limits is None
+            else f"{plain(item.limits[0])} to {plain(item.limits[1])} {item.unit}",
         )
         for item in report.scales
     )
@@ -226,4 +229,4 @@ def sd_text(sd: float) -> str:
     >>> sd_text(0.0123456), sd_text(math.inf)
     ('0.0123', 'without limit')
     """
-    return "without limit" if math.isinf(sd) else f"{sd:.3g}"
+    return "without limit" if math.isinf(sd) else plain(sd, 3)

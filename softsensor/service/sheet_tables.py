@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from plant_models.number_text import plain
 from softsensor.detection.absorption import SensorShift
 from softsensor.detection.detectability import HORIZONS
 from softsensor.detection.sheet import NAMED, FaultTold, SheetLine
@@ -35,10 +36,10 @@ def _shifts(report: ModelReport) -> ReportTable:
     rows = tuple(
         (
             line.shift.tag,
-            f"{line.shift.bias:.4g} {line.shift.unit}",
+            f"{plain(line.shift.bias, 4)} {line.shift.unit}",
             f"{line.shift.at_once:.2f} sd",
             _half_faded(line.shift),
-            f"{line.shift.settled:.2g} sd",
+            f"{plain(line.shift.settled, 2)} sd",
             line.shift.absorbed_by or "",
             "\n".join(f"{k:.3f} / {h:.3f}" for k, h in zip(line.references, line.intervals, strict=True)),
             _tolerance_within(line),
@@ -94,9 +95,9 @@ def _inputs(report: ModelReport) -> ReportTable:
         (
             line.tag,
             line.unit,
-            *("none" if size is None else f"{size:.3g}" for size in line.found.steps),
+            *("none" if size is None else plain(size, 3) for size in line.found.steps),
             f"{line.unit}/d",
-            *("none" if size is None else f"{size:.3g}" for size in line.found.ramps),
+            *("none" if size is None else plain(size, 3) for size in line.found.ramps),
         )
         for line in report.inputs
     )
@@ -109,7 +110,7 @@ def _inputs(report: ModelReport) -> ReportTable:
 
 def _size(size: float | None, line: SheetLine) -> str:
     if size is not None:
-        return f"{size:.3g}"
+        return plain(size, 3)
     return "absorbed" if line.absorbed and line.shift.absorbed_by else "none"
 
 
@@ -131,8 +132,8 @@ def _told(report: ModelReport) -> ReportTable:
 
 def _fault(fault: FaultTold, unit: str) -> str:
     if fault.shape == "step":
-        return f"step of {fault.size:.3g} {unit}"
-    return f"drift of {fault.size:.3g} {unit}/d"
+        return f"step of {plain(fault.size, 3)} {unit}"
+    return f"drift of {plain(fault.size, 3)} {unit}/d"
 
 
 def _alike(fault: FaultTold) -> str:

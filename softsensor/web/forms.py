@@ -12,7 +12,7 @@ from fastapi.responses import RedirectResponse, Response
 
 from softsensor.records import changes
 from softsensor.records.tables import FINDINGS
-from softsensor.web.pages import Pages, Refused, flag_answer
+from softsensor.web.pages import Pages, Refused, flag_answer, lab_answer
 from softsensor.web.site import BadForm, ForeignForm, Site, choices_for
 
 LONGEST_NAME, LONGEST_TEXT = 100, 2000
@@ -99,20 +99,28 @@ def form_routes(site: Site, pages: Pages) -> APIRouter:
     @router.post("/units/{name:path}/flag/acknowledge")
     def acknowledge(
         request: Request, name: str, id: str, token: Field = "", actor: Field = "", reason: Field = ""
-    ) -> RedirectResponse:
+    ) -> Response:
         ours(request, token)
         site.flag(name, id)
-        who = person(actor, reason)
+        try:
+            who = person(actor, reason)
+        except BadForm as problem:
+            typed = {"actor": actor, "reason": reason}
+            return flag_answer(site, pages, request, (name, id), Refused(str(problem), typed, "acknowledge"))
         changes.acknowledge_flag(site.database, id, who.name, who.reason)
         return back_to_flag(name, id)
 
     @router.post("/units/{name:path}/flag/comment")
     def comment(
         request: Request, name: str, id: str, token: Field = "", actor: Field = "", reason: Field = ""
-    ) -> RedirectResponse:
+    ) -> Response:
         ours(request, token)
         site.flag(name, id)
-        who = person(actor, reason)
+        try:
+            who = person(actor, reason)
+        except BadForm as problem:
+            typed = {"actor": actor, "reason": reason}
+            return flag_answer(site, pages, request, (name, id), Refused(str(problem), typed, "comment"))
         changes.comment_flag(site.database, id, who.name, who.reason)
         return back_to_flag(name, id)
 
@@ -141,7 +149,7 @@ def form_routes(site: Site, pages: Pages) -> APIRouter:
                 "as_found": as_found,
                 "as_left": as_left,
             }
-            return flag_answer(site, pages, request, (name, id), Refused(str(problem), typed))
+            return flag_answer(site, pages, request, (name, id), Refused(str(problem), typed, "finding"))
         changes.set_finding(site.database, id, finding, who.name, who.reason, as_found=found, as_left=left)
         return back_to_flag(name, id)
 
@@ -154,7 +162,7 @@ def form_routes(site: Site, pages: Pages) -> APIRouter:
         decision: Field = "",
         actor: Field = "",
         reason: Field = "",
-    ) -> RedirectResponse:
+    ) -> Response:
         ours(request, token)
         _, lab = site.lab(name, id)
         choices = choices_for(lab, site.other_reports(lab))
@@ -163,7 +171,11 @@ def form_routes(site: Site, pages: Pages) -> APIRouter:
                 f"expected one of: {', '.join(choices)}" if choices else f"the result is {lab.status} already"
             )
             raise BadForm(f"the decision is {decision[:40]!r}; {wanted}")
-        who = person(actor, reason)
+        try:
+            who = person(actor, reason)
+        except BadForm as problem:
+            typed = {"actor": actor, "reason": reason}
+            return lab_answer(site, pages, request, (name, id), Refused(str(problem), typed, "decide"))
         changes.decide_lab(site.database, id, decision, who.name, who.reason)
         return RedirectResponse(f"/units/{quote(name, safe='')}/lab?id={id}", 303)
 

@@ -66,6 +66,7 @@ def environment() -> Environment:
         "address",
         "difference_unit",
         "group_words",
+        "event_words",
     )
     found.filters |= {name: getattr(wording, name) for name in names}
     found.globals |= {"SensorStatus": SensorStatus, "FINDINGS": FINDINGS, "PERIODS": PERIODS}
@@ -74,10 +75,27 @@ def environment() -> Environment:
 
 @dataclass(frozen=True)
 class Refused:
-    """A form that was not taken: why, and what was typed, by field."""
+    """A form that was not taken: why, what was typed by field, and which form of its page it is."""
 
     complaint: str
     typed: dict[str, str]
+    form: str
+
+    def typed_in(self, form: str) -> dict[str, str]:
+        """What to show in a form: what was typed there, so that nobody types it twice."""
+        return self.typed if form == self.form else {}
+
+    @property
+    def status(self) -> int:
+        """Of the answer that shows the page again."""
+        return 400 if self.form else 200
+
+    def complaint_about(self, form: str) -> str:
+        """Why a form was not taken; empty for the others of its page."""
+        return self.complaint if form == self.form else ""
+
+
+NOTHING_REFUSED = Refused("", {}, "")
 
 
 class Pages:
@@ -103,7 +121,7 @@ class Pages:
 
 
 def flag_answer(
-    site: Site, pages: Pages, request: Request, place: tuple[str, str], refused: Refused | None = None
+    site: Site, pages: Pages, request: Request, place: tuple[str, str], refused: Refused = NOTHING_REFUSED
 ) -> Response:
     """A flag's page; ``place``: the unit's name and the flag's id."""
     unit, flag, comments = site.flag(*place)
@@ -114,11 +132,25 @@ def flag_answer(
         "seen": seen_of(site, unit, flag),
         "out": is_out(site, unit, flag),
         "answerable": is_answerable(site, unit, flag),
-        "typed": {} if refused is None else refused.typed,
-        "complaint": "" if refused is None else refused.complaint,
+        "refused": refused,
     }
-    status = 200 if refused is None else 400
-    return pages.page(request, "flag.html", status, unit=unit, flag=flag, comments=comments, **shown)
+    return pages.page(request, "flag.html", refused.status, unit=unit, flag=flag, comments=comments, **shown)
+
+
+def lab_answer(
+    site: Site, pages: Pages, request: Request, place: tuple[str, int], refused: Refused = NOTHING_REFUSED
+) -> Response:
+    """A laboratory result's page; ``place``: the unit's name and the result's id."""
+    unit, lab = site.lab(*place)
+    spec = site.models.spec(site.models.revision_of(unit))
+    shown: dict[str, Any] = {
+        "units": tag_units(spec),
+        "decimals": tag_decimals(spec),
+        "choices": choices_for(lab, others := site.other_reports(lab)),
+        "others": others,
+        "refused": refused,
+    }
+    return pages.page(request, "lab.html", refused.status, unit=unit, lab=lab, **shown)
 
 
 def page_routes(site: Site, pages: Pages) -> APIRouter:
@@ -145,15 +177,7 @@ def page_routes(site: Site, pages: Pages) -> APIRouter:
 
     @router.get("/units/{name:path}/lab")
     def lab_page(request: Request, name: str, id: int) -> Response:
-        unit, lab = site.lab(name, id)
-        spec = site.models.spec(site.models.revision_of(unit))
-        shown: dict[str, Any] = {
-            "units": tag_units(spec),
-            "decimals": tag_decimals(spec),
-            "choices": choices_for(lab, others := site.other_reports(lab)),
-            "others": others,
-        }
-        return pages.page(request, "lab.html", unit=unit, lab=lab, **shown)
+        return lab_answer(site, pages, request, (name, id))
 
     @router.get("/audit-trail")
     def trail(request: Request, before: Annotated[int | None, Query(ge=1)] = None) -> Response:

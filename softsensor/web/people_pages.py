@@ -19,7 +19,7 @@ from softsensor.records.tables import FINDINGS
 from softsensor.web.flag_sheet import flag_sheet
 from softsensor.web.forms import Field, calibration, person
 from softsensor.web.in_use import is_answerable, is_out, left_out_now, newest_us
-from softsensor.web.pages import Pages, Refused
+from softsensor.web.pages import NOTHING_REFUSED, Pages, Refused
 from softsensor.web.site import BadForm, ForeignForm, NotHere, Site
 
 
@@ -57,7 +57,7 @@ def how_long(text: str) -> float:
 
 
 def put_back_answer(
-    site: Site, pages: Pages, request: Request, place: tuple[str, str], refused: Refused | None = None
+    site: Site, pages: Pages, request: Request, place: tuple[str, str], refused: Refused = NOTHING_REFUSED
 ) -> Response:
     """The page that puts a flag's sensor back; ``place``: the unit's name and the flag's id."""
     unit, flag, _ = site.flag(*place)
@@ -67,11 +67,42 @@ def put_back_answer(
         "answerable": is_answerable(site, unit, flag),
         "waiting": [item for item in waiting_for(site, unit, flag.tag) if item.act == "put back"],
         "units": units,
-        "typed": {} if refused is None else refused.typed,
-        "complaint": "" if refused is None else refused.complaint,
+        "refused": refused,
     }
-    status = 200 if refused is None else 400
-    return pages.page(request, "put_back.html", status, unit=unit, flag=flag, **shown)
+    return pages.page(request, "put_back.html", refused.status, unit=unit, flag=flag, **shown)
+
+
+def sensor_answer(
+    site: Site, pages: Pages, request: Request, place: tuple[str, str], refused: Refused = NOTHING_REFUSED
+) -> Response:
+    """A sensor's page; ``place``: the unit's name and the sensor's tag."""
+    name, tag = place
+    unit = site.unit(name)
+    flags = [flag for flag in flags_of(site.database, unit.id) if flag.tag == tag and flag.size]
+    shown: dict[str, Any] = {
+        "sensor": sensor_of(site, unit, tag),
+        "out": left_out_now(site, unit, tag),
+        "before": decisions.left_out_of(site.database, unit.id, tag),
+        "flag": next(iter(flags), None),
+        "waiting": waiting_for(site, unit, tag),
+        "refused": refused,
+    }
+    return pages.page(request, "sensor.html", refused.status, unit=unit, **shown)
+
+
+def rests_answer(
+    site: Site, pages: Pages, request: Request, name: str, refused: Refused = NOTHING_REFUSED
+) -> Response:
+    """The page of a unit's tests."""
+    unit = site.unit(name)
+    now = newest_us(site, unit)
+    rest = None if now is None else decisions.rest_at(site.database, unit.id, now)
+    others = [] if now is None else rests_at(site.database, unit.id, now)
+    if rest is not None:
+        others = [item for item in others if item.tag or item.cause != rest.occasion]
+    shown: dict[str, Any] = {"rest": rest, "others": others, "waiting": waiting_for(site, unit, None)}
+    shown |= {"refused": refused, "OCCASIONS": changes.OCCASIONS}
+    return pages.page(request, "tests.html", refused.status, unit=unit, **shown)
 
 
 def people_pages(site: Site, pages: Pages) -> APIRouter:
@@ -90,28 +121,11 @@ def people_pages(site: Site, pages: Pages) -> APIRouter:
 
     @router.get("/units/{name:path}/sensor")
     def sensor_page(request: Request, name: str, tag: str) -> Response:
-        unit = site.unit(name)
-        shown: dict[str, Any] = {
-            "sensor": sensor_of(site, unit, tag),
-            "out": left_out_now(site, unit, tag),
-            "before": decisions.left_out_of(site.database, unit.id, tag),
-            "flag": next(
-                (flag for flag in flags_of(site.database, unit.id) if flag.tag == tag and flag.size), None
-            ),
-            "waiting": waiting_for(site, unit, tag),
-        }
-        return pages.page(request, "sensor.html", unit=unit, **shown)
+        return sensor_answer(site, pages, request, (name, tag))
 
     @router.get("/units/{name:path}/tests")
     def tests_page(request: Request, name: str) -> Response:
-        unit = site.unit(name)
-        now = newest_us(site, unit)
-        rest = None if now is None else decisions.rest_at(site.database, unit.id, now)
-        others = [] if now is None else rests_at(site.database, unit.id, now)
-        if rest is not None:
-            others = [item for item in others if item.tag or item.cause != rest.occasion]
-        shown: dict[str, Any] = {"rest": rest, "others": others, "waiting": waiting_for(site, unit, None)}
-        return pages.page(request, "tests.html", unit=unit, OCCASIONS=changes.OCCASIONS, **shown)
+        return rests_answer(site, pages, request, name)
 
     return router
 
@@ -154,7 +168,7 @@ def people_forms(site: Site, pages: Pages) -> APIRouter:
         except BadForm as problem:
             typed = {"finding": finding, "actor": actor, "reason": reason}
             typed |= {"as_found": as_found, "as_left": as_left}
-            return put_back_answer(site, pages, request, (name, id), Refused(str(problem), typed))
+            return put_back_answer(site, pages, request, (name, id), Refused(str(problem), typed, "put-back"))
         if not is_answerable(site, unit, flag):
             raise BadForm(
                 f"{flag.tag} is in use and this flag is cleared; expected an open flag, or a sensor left out after one"
@@ -173,22 +187,30 @@ def people_forms(site: Site, pages: Pages) -> APIRouter:
         time: Field = "",
         actor: Field = "",
         reason: Field = "",
-    ) -> RedirectResponse:
+    ) -> Response:
         ours(request, token)
         unit = site.unit(name)
         sensor_of(site, unit, tag)
-        seconds, who = how_long(time), person(actor, reason)
+        try:
+            seconds, who = how_long(time), person(actor, reason)
+        except BadForm as problem:
+            typed = {"time": time, "actor": actor, "reason": reason}
+            return sensor_answer(site, pages, request, (name, tag), Refused(str(problem), typed, "leave-out"))
         changes.leave_out(site.database, unit.id, tag, seconds, who.name, who.reason)
         return back(name, f"sensor?tag={quote(tag, safe='')}")
 
     @router.post("/units/{name:path}/sensor/put-back")
     def end_leaving_out(
         request: Request, name: str, tag: str, token: Field = "", actor: Field = "", reason: Field = ""
-    ) -> RedirectResponse:
+    ) -> Response:
         ours(request, token)
         unit = site.unit(name)
         sensor_of(site, unit, tag)
-        who = person(actor, reason)
+        try:
+            who = person(actor, reason)
+        except BadForm as problem:
+            typed = {"actor": actor, "reason": reason}
+            return sensor_answer(site, pages, request, (name, tag), Refused(str(problem), typed, "put-back"))
         if not any(item.by_person for item in left_out_now(site, unit, tag)):
             raise BadForm(f"{tag} is not left out by a person; there is nothing to end")
         changes.end_leaving_out(site.database, unit.id, tag, who.name, who.reason)
@@ -203,23 +225,31 @@ def people_forms(site: Site, pages: Pages) -> APIRouter:
         time: Field = "",
         actor: Field = "",
         reason: Field = "",
-    ) -> RedirectResponse:
+    ) -> Response:
         ours(request, token)
         unit = site.unit(name)
-        if occasion not in changes.OCCASIONS:
-            listed = ", ".join(changes.OCCASIONS)
-            raise BadForm(f"the occasion is {occasion[:40]!r}; expected one of: {listed}")
-        seconds, who = how_long(time), person(actor, reason)
+        try:
+            if occasion not in changes.OCCASIONS:
+                listed = ", ".join(changes.OCCASIONS)
+                raise BadForm(f"the occasion is {occasion[:40]!r}; expected one of: {listed}")
+            seconds, who = how_long(time), person(actor, reason)
+        except BadForm as problem:
+            typed = {"occasion": occasion, "time": time, "actor": actor, "reason": reason}
+            return rests_answer(site, pages, request, name, Refused(str(problem), typed, "rest"))
         changes.rest_tests(site.database, unit.id, occasion, seconds, who.name, who.reason)
         return back(name, "tests")
 
     @router.post("/units/{name:path}/tests/go-on")
     def go_on(
         request: Request, name: str, token: Field = "", actor: Field = "", reason: Field = ""
-    ) -> RedirectResponse:
+    ) -> Response:
         ours(request, token)
         unit = site.unit(name)
-        who = person(actor, reason)
+        try:
+            who = person(actor, reason)
+        except BadForm as problem:
+            typed = {"actor": actor, "reason": reason}
+            return rests_answer(site, pages, request, name, Refused(str(problem), typed, "go-on"))
         now = newest_us(site, unit)
         if now is None or decisions.rest_at(site.database, unit.id, now) is None:
             raise BadForm("the tests are not at rest; there is nothing to end")

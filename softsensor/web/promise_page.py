@@ -7,6 +7,7 @@ from typing import Any
 from fastapi import APIRouter, Request
 from fastapi.responses import HTMLResponse, Response
 
+from plant_models.number_text import plain
 from softsensor.records.false_flags import achieved
 from softsensor.records.reader import revisions_of
 from softsensor.web.pages import Pages
@@ -21,7 +22,7 @@ def interval_words(seconds: float | None) -> str:
     """
     if seconds is None:
         return "no bound"
-    return f"{seconds / 86400.0:.3g} d" if seconds >= 86400.0 else f"{seconds / 3600.0:.3g} h"
+    return f"{plain(seconds / 86400.0, 3)} d" if seconds >= 86400.0 else f"{plain(seconds / 3600.0, 3)} h"
 
 
 def promise_pages(site: Site, pages: Pages) -> APIRouter:

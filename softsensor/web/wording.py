@@ -6,6 +6,7 @@ import math
 from datetime import UTC, datetime, timedelta
 from urllib.parse import quote
 
+from plant_models.number_text import plain
 from plant_models.units import difference_unit as difference_unit
 
 EPOCH = datetime(1970, 1, 1, tzinfo=UTC)
@@ -13,6 +14,8 @@ STATUS_WORDS = ("Good", "Uncertain", "Bad")
 QUALITY_WORDS = ("Good", "Uncertain", "Bad", "no value yet", "too old", "outside its transform")
 """Words for the codes of :class:`softsensor.readings_of_cycle.CycleQuality`, of an input's value."""
 MOST_DECIMALS = 6
+OLDER_WORDS = {"suppression": "rest"}
+"""Kinds of events as earlier releases put them on record."""
 
 
 def moment(us: int) -> datetime:
@@ -70,10 +73,12 @@ def number(value: float | None, decimals: int, sign: bool = False) -> str:
 
 
 def short(value: float | None, digits: int = 3) -> str:
-    """A number with so many significant digits, or ``none``."""
-    if value is None or not math.isfinite(value):
-        return "none"
-    return f"{value:.{digits}g}"
+    """A number with so many significant digits, or ``none``.
+
+    >>> short(1268.0), short(0.5), short(None)
+    ('1,270', '0.5', 'none')
+    """
+    return "none" if value is None or not math.isfinite(value) else plain(value, digits)
 
 
 def percent(probability: float | None) -> str:
@@ -115,6 +120,15 @@ def duration(seconds: float) -> str:
 def address(part: str) -> str:
     """Text as one part of an address: flag ids hold blanks, colons and more."""
     return quote(part, safe="")
+
+
+def event_words(kind: str) -> str:
+    """The kind of an event, in the word of today where earlier releases had another.
+
+    >>> event_words("suppression"), event_words("connection")
+    ('rest', 'connection')
+    """
+    return OLDER_WORDS.get(kind, kind)
 
 
 def group_words(tag: str, group: tuple[str, ...]) -> str:

@@ -34,6 +34,7 @@ def test_files_in_order_replay(command: Any, files: Any) -> None:
         "innovations.csv",
         "conformance.csv",
         "flags.csv",
+        "hypotheses.csv",
         "lab_results.csv",
         "summary.json",
     }

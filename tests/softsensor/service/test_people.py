@@ -275,7 +275,7 @@ def test_a_rest_silences_the_tests_leaves_the_estimates_and_ends_by_itself(
     before = (untold.detected_us - START) // STEP
     assert np.array_equal(found["estimate"][235:before], plain.results.estimate[235:before])
     assert np.array_equal(found["status"][235:before], plain.results.status[235:before])
-    told = [(time, text) for time, kind, text in found["events"] if kind == "suppression" and "grade" in text]
+    told = [(time, text) for time, kind, text in found["events"] if kind == "rest" and "grade" in text]
     assert told == [
         (
             START + 235 * STEP,

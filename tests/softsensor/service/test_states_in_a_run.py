@@ -93,9 +93,7 @@ def results_of(url: str) -> dict[str, Any]:
             "flags": [(flag.tag, flag.detected_us, flag.state) for flag in reader.flags_of(database, unit)],
             "rests": rests_of(database, unit),
             "left_out": decisions.left_out_of(database, unit),
-            "notes": [
-                item.event.text for item in reader.events_since(database) if item.event.kind == "suppression"
-            ],
+            "notes": [item.event.text for item in reader.events_since(database) if item.event.kind == "rest"],
         }
 
 

@@ -135,15 +135,6 @@ def test_an_onset_s_interval_in_words(
     )
 
 
-def test_putting_back_is_offered_only_while_it_has_an_effect(recorded: Database, asker: Any) -> None:
-    page = f"/units/{UNIT}/flag?id={quote(FLAG_ID)}"
-    assert "Put TI2101B back" not in asker.get(page).text
-    for until, offered in ((None, True), (NOW - MINUTE, False)):
-        with recorded.write() as connection:
-            decisions.store_left_out(connection, 1, [LeftOut("TI2101B", NOW - 60 * MINUTE, until, False)])
-        assert ("Put TI2101B back" in asker.get(page).text) is offered
-
-
 def test_the_effect_on_the_estimate_is_that_of_the_settled_filter(drift: str) -> None:
     """Computed here from the Riccati solution with and without the sensor, without the report's code."""
     model = build_plant_model(parse_model_text(MODEL.format(title="x"), "m.toml"))

@@ -98,6 +98,28 @@ def test_a_bad_number_comes_back_with_what_was_typed(recorded: Database, asker: 
     assert (flag.as_found, flag.as_left, flag.finding_by) == (1.4, 0.02, 'A "B"')
 
 
+@pytest.mark.parametrize(
+    ("address", "page", "field"),
+    [
+        (f"/units/{UNIT}/flag/acknowledge?id={quote(FLAG_ID)}", FLAG, "acknowledge-reason"),
+        (f"/units/{UNIT}/flag/comment?id={quote(FLAG_ID)}", FLAG, "comment-reason"),
+        (DECIDE + "&decision=use", f"/units/{UNIT}/lab?id={WAITING_LAB}", "decide-reason"),
+    ],
+)
+def test_a_form_without_a_name_comes_back_with_its_text_in_its_own_field(
+    recorded: Database, asker: Any, address: str, page: str, field: str
+) -> None:
+    before = last_entry(recorded)
+    typed = {"actor": " ", "reason": "well <dry>", "decision": "use"}
+    answer = asker.post(address, {"token": asker.token(page), **typed})
+    assert answer.status_code == 400
+    assert answer.text.count("Nothing is on record yet: your name is missing") == 1
+    texts = dict(re.findall(r'<textarea id="([a-z-]+)"[^>]*>([^<]*)</textarea>', answer.text))
+    assert texts.pop(field) == "well &lt;dry&gt;"
+    assert set(texts.values()) <= {""}
+    assert last_entry(recorded) == before
+
+
 def test_a_finding_shows_its_calibration_on_the_units_page_too(asker: Any) -> None:
     assert "Size at detection" in asker.get(FLAG).text
     fields = {"token": asker.token(FLAG), "finding": "confirmed", "as_found": "-1.25", **PERSON}

@@ -15,7 +15,7 @@ from sqlalchemy import text
 
 from softsensor.records import happenings
 from softsensor.records.engine import Database, open_database
-from softsensor.records.happenings import Flag
+from softsensor.records.happenings import Event, Flag
 from softsensor.records.plant import register_unit
 from softsensor.records.upgrade import upgrade_database
 from softsensor.service.live_feed import LiveFeed
@@ -304,3 +304,11 @@ def test_examples_in_the_text_are_true(module: str) -> None:
     failed, tried = doctest.testmod(import_module(f"softsensor.web.{module}"))
     assert tried > 0
     assert failed == 0
+
+
+def test_an_event_of_an_earlier_release_is_told_in_today_s_word(recorded: Database, asker: Any) -> None:
+    with recorded.write() as connection:
+        happenings.record_event(connection, Event(1, NOW, "suppression", "the tests rest"))
+    page = words_of(asker.get(f"/units/{UNIT}/part/events").text)
+    assert "rest: the tests rest" in page
+    assert "suppression" not in page

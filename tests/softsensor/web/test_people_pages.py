@@ -163,6 +163,25 @@ def test_the_tests_rest_with_who_why_and_until_when(recorded: Database, asker: A
     assert "running" in asker.get(f"/units/{UNIT}/part/state").text
 
 
+def test_what_was_typed_about_a_rest_and_about_leaving_out_comes_back(recorded: Database, asker: Any) -> None:
+    typed = {"occasion": "shutdown", "time": "soon", **PERSON}
+    answer = asker.post(REST, {"token": asker.token(TESTS), **typed})
+    assert answer.status_code == 400
+    for part in (
+        'value="shutdown" required checked',
+        'value="soon"',
+        'value="A. Müller"',
+        ">new element</textarea>",
+    ):
+        assert part in answer.text
+    assert answer.text.count('role="alert"') == 1
+    answer = asker.post(LEAVE_OUT, {"token": asker.token(SENSOR), "time": "3 h", "actor": "A. Müller"})
+    assert answer.status_code == 400
+    assert "Nothing is on record yet: the reason is missing" in answer.text
+    assert 'value="3 h"' in answer.text
+    assert 'value="A. Müller"' in answer.text
+
+
 BAD = {
     "no calibration": (
         PUT_BACK,
