@@ -103,6 +103,7 @@ def _unit_spec(document: dict[str, Any], faults: FaultList, source: str) -> Unit
         paths=tuple(read_path(table) for table in paths),
         false_flag_interval=tests.false_flag_interval,
         leave_out_isolated=tests.leave_out_isolated,
+        back_by_itself=tests.back_by_itself,
         widening=tests.widening,
         disarmed=tests.disarmed,
         patient=tests.patient,

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Collection
-from dataclasses import dataclass
+from dataclasses import dataclass, fields
 from typing import TypeVar
 
 from plant_models.durations import format_duration
@@ -71,6 +71,7 @@ class FaultTests:
 
     false_flag_interval: float = FALSE_FLAG_INTERVAL
     leave_out_isolated: bool = False
+    back_by_itself: bool = False
     widening: tuple[tuple[str, float], ...] = ()
     disarmed: tuple[tuple[str, str], ...] = ()
     patient: tuple[str, ...] = ()
@@ -83,10 +84,15 @@ def read_fault_tests(table: Table | None, sensors: Collection[str]) -> FaultTest
     """
     if table is None:
         return FaultTests()
-    table.only("false_flag_interval", "leave_out_isolated", "widening", "disarmed", "patient")
+    table.only(*(item.name for item in fields(FaultTests)))
+    left_out = table.read_or("leave_out_isolated", FLAG, False)
+    by_itself = table.read_or("back_by_itself", FLAG, False)
+    if by_itself and not left_out and table.sound("leave_out_isolated"):
+        table.fault("back_by_itself", "expected leave_out_isolated = true beside it: no sensor is left out")
     return FaultTests(
         table.read_or("false_flag_interval", DURATION_ABOVE_ZERO, FALSE_FLAG_INTERVAL),
-        table.read_or("leave_out_isolated", FLAG, False),
+        left_out,
+        by_itself,
         _by_sensor(table, "widening", FACTOR, sensors, "a table such as { TI2101A = 1.42 }"),
         _by_sensor(table, "disarmed", TEXT, sensors, "a table of reasons such as { TI2101A = 'correlated' }"),
         _patient_sensors(table, sensors),

@@ -149,6 +149,8 @@ class UnitSpec:
     """Wanted mean time between false flags, per sensor, in seconds."""
     leave_out_isolated: bool = False
     """A sensor that the data name alone as faulty is kept from the estimate until a person puts it back."""
+    back_by_itself: bool = False
+    """A sensor left out so counts again once its readings have agreed for a while with the prediction without it."""
     widening: tuple[tuple[str, float], ...] = ()
     """By sensor, the factor on its decision intervals that commissioning found; 1 where a sensor is not listed."""
     disarmed: tuple[tuple[str, str], ...] = ()

@@ -60,6 +60,7 @@ def design_unit(model: PlantModel) -> UnitDesign:
         WINDOW,
         round(spec.sample_time * 1e6),
         spec.leave_out_isolated,
+        spec.back_by_itself,
         True,
         past,
         long_memory(model),

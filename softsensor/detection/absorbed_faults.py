@@ -114,14 +114,37 @@ def _settle_one(
         design.model.sensor_tags.index(flag.tag), moment.cycle
     )
     needed = QUIET if left_out else quiet_needed(design, flag, use)
+    if needed is not None and quiet <= needed:
+        return outcome
     if needed is not None:
-        return cleared(outcome, flag, moment.time) if quiet > needed else outcome
+        outcome = cleared(outcome, flag, moment.time)
+        return (
+            _back_by_itself(design, outcome, moment, flag) if left_out and design.back_by_itself else outcome
+        )
     text = (
         f"{flag.tag}: the sums are down because the estimate follows the error, not because it is gone; the flag stays "
         "until the error is seen to go back or a person enters a finding"
     )
     book = replace(outcome.book, absorbed=(*outcome.book.absorbed, flag.flag))
     return replace(outcome, book=book, notes=(*outcome.notes, Note(moment.time, "error followed", text)))
+
+
+def _back_by_itself(design: DetectionDesign, outcome: FollowUp, moment: Moment, flag: Flag) -> FollowUp:
+    """A sensor left out after its flag counts again from the next cycle on; what a person has left out stays so."""
+    sensor, after = design.model.sensor_tags.index(flag.tag), moment.cycle + 1
+    book = outcome.book
+    ours = [
+        item for item in book.exclusions if item.sensor == sensor and not item.by_person and not item.state
+    ]
+    if not any(item.covers(after) for item in ours):
+        return outcome
+    ended = tuple(
+        replace(item, until=after) if item in ours and item.covers(after) else item
+        for item in book.exclusions
+    )
+    text = f"{flag.tag} agrees with the prediction without it again and is put back, as the model file allows"
+    note = Note(moment.time, "put back", text)
+    return replace(outcome, book=replace(book, exclusions=ended), notes=(*outcome.notes, note))
 
 
 def opposed(design: DetectionDesign, book: FlagBook, tests: TestState) -> bool:

@@ -40,6 +40,7 @@ class DetectionDesign:
     window: int
     sample_us: int
     leave_out: bool
+    back_by_itself: bool
     armed: bool
     forgetting: Forgetting
     long_memory: LongMemory | None = None

@@ -48,6 +48,17 @@ def test_anything_but_true_or_false_is_a_fault_at_its_line(value: str) -> None:
     assert "expected true or false; got " in fault.message
 
 
+def test_coming_back_by_itself_is_asked_for_and_needs_a_leaving_out() -> None:
+    assert not parse_model_text(with_tests("leave_out_isolated = true\n"), "m.toml").back_by_itself
+    both = with_tests("leave_out_isolated = true\nback_by_itself = true\n")
+    assert parse_model_text(both, "m.toml").back_by_itself
+    with pytest.raises(ModelFileError) as raised:
+        parse_model_text(with_tests("back_by_itself = true\n"), "m.toml")
+    (fault,) = raised.value.faults
+    assert (fault.line, fault.key) == (LINE, "back_by_itself")
+    assert "expected leave_out_isolated = true beside it" in fault.message
+
+
 def test_a_misspelt_key_is_named_with_what_was_meant() -> None:
     with pytest.raises(ModelFileError) as raised:
         parse_model_text(with_tests("leave_out_isolatd = true\n"), "m.toml")

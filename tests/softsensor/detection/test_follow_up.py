@@ -83,6 +83,7 @@ class Told:
 
     flags: list[Flag]
     notes: list[Note]
+    used: list[NDArray[np.int8]]
 
     def opened(self) -> list[tuple[str, str]]:
         return [(flag.tag, flag.kind) for flag in self.flags if flag.cleared is None]
@@ -130,10 +131,11 @@ def told(design: UnitDesign, y: Array) -> Told:
         quality,
     )
     run = Replay(design, [(cycles, [])])
-    found = Told([], [])
+    found = Told([], [], [])
     for stretch in run.stretches():
         found.flags += stretch.results.flags
         found.notes += stretch.results.notes
+        found.used.append(stretch.results.used)
     return found
 
 
@@ -169,6 +171,25 @@ def test_a_drift_is_named_with_its_onset(leaving_out: UnitDesign, model: PlantMo
     error = 2.5 * (flag.detected / STEP - 1000) / 360.0
     assert error < 3.0 * 0.6
     assert found.opened() == [("TI1B", flag.kind)]
+
+
+@pytest.mark.parametrize("by_itself", [False, True])
+def test_a_sensor_that_heals_comes_back_by_itself_only_where_the_file_says_so(
+    model: PlantModel, by_itself: bool
+) -> None:
+    text = MODEL + f"\n[fault_tests]\nleave_out_isolated = true\nback_by_itself = {str(by_itself).lower()}\n"
+    design = design_unit(build_plant_model(parse_model_text(text, "r1.toml")))
+    y = readings(model, 3000, 2)
+    y[1000:1500, 1] += 2.5
+    found = told(design, y)
+    used = np.concatenate(found.used)[:, 1]
+    assert found.opened() == [("TI1B", "bias")]
+    (cleared,) = [flag.cleared // STEP for flag in found.flags if flag.cleared is not None]
+    assert 1860 < cleared < 2600
+    assert not used[1100 : cleared + 1].any()
+    assert used[cleared + 1 :].all() == by_itself
+    lines = [note.text for note in found.notes if note.kind == "put back"]
+    assert any("as the model file allows" in line for line in lines) == by_itself
 
 
 @pytest.mark.parametrize("size", [0.3, 1.0, 2.0])
