@@ -84,6 +84,23 @@ def settled_error(state: SteadyState, A: Matrix) -> Matrix:
     return np.asarray(T @ error, dtype=np.float64)
 
 
+def settled_estimates(model: PlantModel) -> Matrix:
+    """(n_estimates, n_sensors): where each estimate settles, after the readings of a cycle, for a unit bias of each sensor.
+
+    C_e (x + K (I - C x)) with x the settled error of the predicted state; in the estimate's unit per unit of the sensor, by
+    the slopes at the operating points.
+
+    :raises RealisationError: the filter does not settle, or forgets its errors too slowly.
+    """
+    spec, state = model.spec, steady_state(model)
+    error = settled_error(state, model.stochastic.A)
+    corrected = error + state.K @ (np.eye(state.rows.r.size) - state.rows.C @ error)
+    moved = model.stochastic.C[len(spec.sensors) :] @ corrected
+    of_sensors = np.array([scale_at_operating_point(item) for item in spec.sensors])
+    of_estimates = np.array([scale_at_operating_point(item) for item in spec.estimates])
+    return np.asarray(moved * of_sensors / of_estimates[:, None], dtype=np.float64)
+
+
 def fading(state: SteadyState, A: Matrix) -> list[int | None]:
     """Cycles after which a constant bias of each sensor has lost half of what its own innovation will lose.
 

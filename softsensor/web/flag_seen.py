@@ -96,10 +96,10 @@ def meaning(spec: UnitSpec, name: str) -> str:
     ):
         return "this instrument reads wrong"
     if name in [item.name for item in spec.disturbances]:
-        return "a disturbance: the process moved, no instrument is wrong"
+        return "the process moved"
     if " -> " in name:
-        return "the model: this transfer function no longer fits"
-    return "no fault: chance alone" if name == "nothing" else ""
+        return "the model no longer fits"
+    return "chance alone" if name == "nothing" else ""
 
 
 def _error_now(

@@ -22,7 +22,8 @@ NEAR = 0.05
 
 @dataclass(frozen=True)
 class Effect:
-    """An estimate's settled sd with the sensor and without it, and its sd now; None where it has none."""
+    """An estimate's settled sd with the sensor and without it, its sd now, and how far the sensor's error moves it in the
+    end, while it counts; None where it has none."""
 
     tag: str
     unit: str
@@ -30,6 +31,7 @@ class Effect:
     sd_with: float
     sd_without: float
     sd_now: float | None
+    moved: float | None
 
 
 @dataclass(frozen=True)
@@ -41,6 +43,8 @@ class Sheet:
     units: dict[str, str]
     decimals: dict[str, int]
     effects: tuple[Effect, ...]
+    error: float | None
+    """The error for which they are moved: the present one, or that at detection."""
     operating_value: float
     points: tuple[float, ...]
     causes: tuple[str, ...]
@@ -54,12 +58,15 @@ def flag_sheet(site: Site, unit: Unit, flag: StoredFlag) -> Sheet:
     item, value = seen.item, seen.operating_value
     if not np.isfinite(value) and item is not None:
         value = item.operating_point
+    known = None if seen.now is None else seen.now.size
+    error = flag.size if known is None else known
     return Sheet(
         seen,
         FIRST_LETTERS.get(flag.tag[:1].upper(), "by its tag not known"),
         tag_units(spec),
         tag_decimals(spec),
-        _effects(site, unit, flag.tag),
+        _effects(site, unit, flag.tag, error),
+        error,
         value,
         reference_points(item, value),
         causes_of(flag.tag, flag.kind),
@@ -83,11 +90,13 @@ def _published_sd(item: EstimateSpec, latest: TimedResults, e: int) -> float:
     return published_one(item, float(latest.results.estimate[-1, e]), float(latest.results.sd[-1, e]))[1]
 
 
-def _effects(site: Site, unit: Unit, tag: str) -> tuple[Effect, ...]:
+def _effects(site: Site, unit: Unit, tag: str, error: float | None) -> tuple[Effect, ...]:
     revision = site.models.revision_of(unit)
     spec = site.models.spec(revision)
-    if tag not in [sensor.tag for sensor in spec.sensors]:
+    tags = [sensor.tag for sensor in spec.sensors]
+    if tag not in tags:
         return ()
+    moved = site.models.moved(revision)
     latest, _ = latest_cycle(site.database, unit, revision)
     decimals, found = tag_decimals(spec), []
     for e, known in enumerate(site.models.knowledge(revision)):
@@ -100,6 +109,7 @@ def _effects(site: Site, unit: Unit, tag: str) -> tuple[Effect, ...]:
                 known.sd_with_sensors,
                 dict(known.sd_without)[tag],
                 now if now is not None and np.isfinite(now) else None,
+                None if moved is None or error is None else float(moved[e, tags.index(tag)]) * error,
             )
         )
     return tuple(found)

@@ -7,9 +7,12 @@ import threading
 from sqlalchemy import select
 
 from plant_models.building import build_plant_model
+from plant_models.errors import RealisationError
 from plant_models.model_file import parse_model_text
 from plant_models.specification import UnitSpec
+from softsensor.detection.absorption import settled_estimates
 from softsensor.errors import RecordsError
+from softsensor.estimation.kernel import Floats
 from softsensor.estimation.observability import EstimateKnowledge, estimate_knowledge
 from softsensor.records.engine import Database
 from softsensor.records.reader import Unit
@@ -24,6 +27,7 @@ class ModelsInService:
         self._database = database
         self._specs: dict[int, UnitSpec] = {}
         self._knowledge: dict[int, tuple[EstimateKnowledge, ...]] = {}
+        self._moved: dict[int, Floats | None] = {}
         self._reports: dict[str, ModelReport] = {}
         self._solving = threading.Lock()
         self._reporting = threading.Lock()
@@ -65,6 +69,16 @@ class ModelsInService:
                 known = estimate_knowledge(build_plant_model(self.spec(revision_id)))
                 self._knowledge[revision_id] = known
         return known
+
+    def moved(self, revision_id: int) -> Floats | None:
+        """(n_estimates, n_sensors) Where estimates settle for a unit bias of each sensor; None where they do not settle."""
+        with self._solving:
+            if revision_id not in self._moved:
+                try:
+                    self._moved[revision_id] = settled_estimates(build_plant_model(self.spec(revision_id)))
+                except RealisationError:
+                    self._moved[revision_id] = None
+            return self._moved[revision_id]
 
     def report(self, revision_id: int) -> ModelReport:
         """All that the model of a revision promises; worked out once for each digest, which takes some seconds."""

@@ -57,9 +57,9 @@ def test_it_says_what_is_believed_with_units_and_how_sure(drift: str) -> None:
 
 EXPLAINED = (
     "TI2101B 99.4 % this instrument reads wrong "
-    "feed concentration 0.4 % a disturbance: the process moved, no instrument is wrong "
-    "FI2103 -> TI2101A 0.2 % the model: this transfer function no longer fits "
-    "nothing below 0.1 % no fault: chance alone"
+    "feed concentration 0.4 % the process moved "
+    "FI2103 -> TI2101A 0.2 % the model no longer fits "
+    "nothing below 0.1 % chance alone"
 )
 
 
@@ -144,6 +144,26 @@ def test_the_effect_on_the_estimate_is_that_of_the_settled_filter(drift: str) ->
     now = float(course().sd[-1, 0])
     assert without > with_it
     assert f"AY2101 {with_it:.4f} mol/L {without:.4f} mol/L {now:.4f} mol/L" in words_of(drift)
+
+
+def test_how_far_the_error_moves_the_estimate_is_that_of_a_filter_fed_with_it(drift: str) -> None:
+    """A textbook filter of the disturbance, in numpy, with a bias on the second sensor until it has settled."""
+    part = build_plant_model(parse_model_text(MODEL.format(title="x"), "m.toml")).stochastic
+    A, C, R = part.A, part.C[:3], np.diag([0.15, 0.15, 0.2]) ** 2
+    x, P = np.zeros(len(A)), part.P0.copy()
+    said = re.search(
+        r"an error of ([+-][\d.]+) K takes the estimate in the end, if it counted", words_of(drift)
+    )
+    assert said is not None
+    y = np.array([0.0, float(said[1]), 0.0])
+    for _ in range(20_000):
+        K = P @ C.T @ np.linalg.inv(C @ P @ C.T + R)
+        after = x + K @ (y - C @ x)
+        x, P = A @ after, A @ (P - K @ C @ P) @ A.T + np.diag(part.q)
+    found = re.search(r"AY2101 .*? mol/L .*? mol/L .*? mol/L ([+-][\d.]+) mol/L", words_of(drift))
+    assert found is not None
+    assert float(found[1]) == pytest.approx(float(part.C[3] @ after), abs=0.005 * abs(float(said[1])) + 1e-4)
+    assert abs(float(found[1])) > 0.01
 
 
 def test_reference_points_lie_around_the_operating_value_within_the_range(drift: str) -> None:
