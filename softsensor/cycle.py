@@ -19,7 +19,7 @@ from plant_models.specification import Range
 from softsensor.compiled_cycle import BlockInputs, BlockOutputs, empty_outputs, run_block
 from softsensor.cycle_results import CycleResults, Digest, flag_bytes, outside, result_rows
 from softsensor.detection.detection_design import DetectionDesign, sensors_in_use
-from softsensor.detection.flagged_bias import no_less_than_flags
+from softsensor.detection.flagged_bias import as_diagnosed
 from softsensor.detection.flags import Beginning, FlagBook
 from softsensor.detection.follow_up import follow_up
 from softsensor.detection.outcomes import FollowUp, Moment
@@ -206,7 +206,7 @@ def run_cycles(
     sensors = design.model.spec.sensors
     results = replace(
         results,
-        beyond=no_less_than_flags(sensors, begun.book, first, results.beyond),
+        beyond=as_diagnosed(sensors, begun.book, first, results.beyond),
         settling=results.settling * np.int8(2 if begun.book.unsteady(first) else 1),
         doubts=np.tile(np.array(doubts, dtype=object), (done, 1)),
         status=results.status | np.array([bool(text) for text in doubts], dtype=np.int8),

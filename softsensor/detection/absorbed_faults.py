@@ -182,7 +182,12 @@ def went_back(
         outcome = replace(outcome, notes=(*outcome.notes, Note(moment.time, "error gone back", text)))
         outcome = remembered(cleared(outcome, flag, moment.time), (flag.closed(moment.time),), moment.time)
     episode = Episode(moment.cycle) if outcome.book.episode is None else outcome.book.episode
-    return replace(outcome, book=replace(outcome.book, episode=replace(episode, explained=True)))
+    weighed = tuple(
+        0.0 if tag == flag.tag else value
+        for tag, value in zip(design.model.sensor_tags, outcome.book.weighed, strict=False)
+    )
+    book = replace(outcome.book, episode=replace(episode, explained=True), weighed=weighed)
+    return replace(outcome, book=book)
 
 
 def remembered(outcome: FollowUp, flags: tuple[Flag, ...], time: int) -> FollowUp:

@@ -162,6 +162,9 @@ class FlagBook:
     answered: tuple[Flag, ...] = ()
     """Flags that people have closed lately on instruments in use; see :mod:`softsensor.detection.absorbed_faults`."""
 
+    weighed: tuple[float, ...] = ()
+    """While a test is up: per sensor, the probability of a bias beyond the tolerance, by the latest look."""
+
     def find(self, tag: str, kinds: tuple[Kind, ...]) -> Flag | None:
         """The open flag of a tag, of one of these kinds."""
         return next((flag for flag in self.open if flag.tag == tag and flag.kind in kinds), None)

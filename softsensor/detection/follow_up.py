@@ -22,6 +22,7 @@ from softsensor.detection.diagnosis import (
     Verdict,
 )
 from softsensor.detection.flag_sizes import present_size, size_in_unit
+from softsensor.detection.flagged_bias import AT_FAULT, beyond_by_look
 from softsensor.detection.flags import (
     Episode,
     Exclusion,
@@ -150,11 +151,12 @@ def _diagnose(design: DetectionDesign, outcome: FollowUp, tests: TestState, mome
     book = outcome.book
     use = sensors_in_use(design, book, tests, moment.cycle)
     up = bool(np.any((tests.up != 0) & (use != 0))) or tests.misfit[0] != 0
+    explained = explains(design, book, moment.cycle, EXPLAINING)
     if not up:
-        return replace(outcome, book=replace(book, episode=None))
+        outcome = replace(outcome, book=replace(book, episode=None))
+        return outcome if explained else _looked_enough(outcome, tests)
     if moment.cycle < tests.valid_from[0]:
         return outcome
-    explained = explains(design, book, moment.cycle, EXPLAINING)
     if (explained and not opposed(design, book, tests)) or (
         book.episode is not None and book.episode.explained
     ):
@@ -167,10 +169,20 @@ def _diagnose(design: DetectionDesign, outcome: FollowUp, tests: TestState, mome
     return _act(design, outcome, tests, moment, use)
 
 
+def _looked_enough(outcome: FollowUp, tests: TestState) -> FollowUp:
+    """The running conformance probability takes over; anew where what brought the test up was no sensor's error."""
+    weighed = outcome.book.weighed
+    if weighed and max(weighed) < AT_FAULT:
+        tests.forget_evidence()
+    return replace(outcome, book=replace(outcome.book, weighed=()))
+
+
 def _act(design: DetectionDesign, outcome: FollowUp, tests: TestState, moment: Moment, use: Ints) -> FollowUp:
     episode = outcome.book.episode
     waited = moment.cycle - episode.since if episode is not None else 0
     verdict, found = look(design, tests, use, gains=False)
+    weighed = beyond_by_look(design, found, min(moment.cycle + 1 - int(tests.valid_from[0]), design.window))
+    outcome = replace(outcome, book=replace(outcome.book, weighed=weighed))
     back_again = went_back(design, outcome, moment, (verdict, found))
     if back_again is not None:
         return back_again
@@ -263,7 +275,7 @@ def _open_shift(
     if not (design.leave_out and isolated and int(np.sum(use)) > 1):
         return outcome
     exclusion = Exclusion(suspect.index, moment.cycle - back)
-    book = replace(outcome.book, episode=None, exclusions=(*outcome.book.exclusions, exclusion))
+    book = replace(outcome.book, episode=None, weighed=(), exclusions=(*outcome.book.exclusions, exclusion))
     _restart(tests, moment.cycle + 1)
     return replace(outcome, book=book, exclusion=exclusion)
 

@@ -85,6 +85,7 @@ def unpack_state(blob: bytes, version: int) -> tuple[CycleState, Context]:
             RestSpell(**rest["settling"]) if rest.get("settling") else None,
             tuple(rest["absorbed"]),
             tuple(_flag(item) for item in rest["answered"]),
+            tuple(float.fromhex(value) for value in rest["weighed"]),
         )
         digest = Digest(bytes.fromhex(rest["chain"]), bytes.fromhex(rest["pending"]), rest["rows"])
         labs = tuple(
@@ -121,6 +122,7 @@ def _rest(state: CycleState, context: Context) -> bytes:
         "beginning": asdict(book.beginning) if book.beginning else None,
         "settling": asdict(book.settling) if book.settling else None,
         "absorbed": list(book.absorbed),
+        "weighed": [float(value).hex() for value in book.weighed],
         "answered": [asdict(flag) for flag in book.answered],
         "exclusions": [asdict(item) for item in book.exclusions],
         "chain": state.digest.chain.hex(),

@@ -3,8 +3,8 @@
     python tests/long_runs/calibration.py [plants] [picture.png]
 
 Twice, on three models. First as many faults as plants, with sizes up to twice the tolerance. Then as the program supposes:
-sizes from its own prior, as many plants without a fault as with one, and each kind weighted by how often it would occur
-at the program's own rate of faults. A picture needs matplotlib.
+a sensor at fault, an input's instrument at fault, a disturbance that moves out of what its model allows, or nothing; sizes
+from the program's own prior, each kind weighted by how often it would occur. A picture needs matplotlib.
 """
 
 from __future__ import annotations
@@ -24,14 +24,19 @@ from long_runs.models import MODELS, design_named
 from long_runs.simulated_plant import Case, Plant, seen_by, still_inputs
 
 from softsensor.cycle import UnitDesign
-from softsensor.detection.conformance import BLOCK, FAULTS_PER_YEAR, LOOK_EVERY_BLOCKS, YEAR_S
+from softsensor.detection.conformance import (
+    BLOCK,
+    FAULTS_PER_YEAR,
+    LOOK_EVERY_BLOCKS,
+    MOVES_PER_YEAR,
+    YEAR_S,
+)
 
 EDGES = (0.0, 0.01, 0.05, 0.2, 0.4, 0.6, 0.8, 0.95, 0.99, 1.0)
 CYCLES = 4000
 EVERY = BLOCK * LOOK_EVERY_BLOCKS
-Sizes = Literal["uniform", "prior", "none"]
-PRIOR_SD = 3.0
-"""Of a size, in tolerances: the program's own."""
+Kind = Literal["uniform", "sensor", "input", "disturbance", "none"]
+SUPPOSED: tuple[Kind, ...] = ("sensor", "input", "disturbance", "none")
 
 
 @dataclass(frozen=True)
@@ -54,39 +59,77 @@ def together(parts: list[Moments]) -> Moments:
     )
 
 
-def fault_of(design: UnitDesign, number: int, sizes: Sizes) -> tuple[Array, int]:
-    """The bias put into a plant (CYCLES, n_sensors), and the sensor: steps and ramps in turn."""
+def course_of(random: np.random.Generator, number: int, onset: int) -> Array:
+    """(CYCLES,) A step of unit size from the onset on, or a ramp that reaches one or more: in turn."""
+    course = np.zeros(CYCLES)
+    course[onset:] = 1.0
+    if number % 2:
+        course[onset:] = np.arange(CYCLES - onset) / random.uniform(300.0, CYCLES)
+    return course
+
+
+def prior_sd(design: UnitDesign, name: str) -> float:
+    """Of the size of a step: the program's own."""
+    steps = (item for item in design.detection.suspects if item.name == name and item.shape == "step")
+    return next(steps).prior_sd
+
+
+def plant_with(design: UnitDesign, number: int, kind: Kind) -> tuple[Case, Plant]:
+    """One plant's life, and who draws its readings; ``bias`` of the case is what is true of the sensors."""
     spec = design.model.spec
     random = np.random.default_rng([number, 11])
-    onset, i = int(random.integers(300, CYCLES // 2)), number % len(spec.sensors)
-    size = random.uniform(-2.0, 2.0) if sizes == "uniform" else PRIOR_SD * random.standard_normal()
-    course = np.ones(CYCLES - onset)
-    if number % 2:
-        course = np.arange(CYCLES - onset) / random.uniform(300.0, CYCLES)
-    bias = np.zeros((CYCLES, len(spec.sensors)))
-    if sizes != "none":
-        bias[onset:, i] = size * spec.sensors[i].tolerance * course
-    return bias, i
+    plant = Plant(spec, (70_000 if kind != "none" else 90_000) + number)
+    course = course_of(random, number, int(random.integers(300, CYCLES // 2)))
+    case = replace(Case(still_inputs(spec, CYCLES)), bias=np.zeros((CYCLES, len(spec.sensors))))
+    if kind in ("uniform", "sensor"):
+        item, bias = spec.sensors[number % len(spec.sensors)], np.zeros((CYCLES, len(spec.sensors)))
+        relative = random.uniform(-2.0, 2.0) * item.tolerance if kind == "uniform" else None
+        size = prior_sd(design, item.tag) * random.standard_normal() if relative is None else relative
+        bias[:, number % len(spec.sensors)] = size * course
+        return replace(case, bias=bias), plant
+    if kind == "input":
+        j, error = number % len(spec.inputs), np.zeros(case.u.shape)
+        error[:, j] = prior_sd(design, spec.inputs[j].tag) * random.standard_normal() * course
+        return replace(case, input_bias=error), plant
+    if kind == "disturbance":
+        d, jump = number % len(spec.disturbances), np.zeros((CYCLES, len(plant.driven)))
+        size = prior_sd(design, spec.disturbances[d].name) * random.standard_normal()
+        jump[:, d] = size * np.diff(course, prepend=0.0)
+        return replace(case, jump=jump), plant
+    return case, plant
 
 
-def moments(design: UnitDesign, plants: int, sizes: Sizes = "uniform") -> Moments:
-    """Every plant has a fault of one sensor, or none. With the prior's sizes only that sensor's moments count."""
-    spec, parts = design.model.spec, []
-    tolerance = np.array([item.tolerance for item in spec.sensors])
-    chance = FAULTS_PER_YEAR * CYCLES * spec.sample_time / YEAR_S
-    weight = {"uniform": 1.0, "prior": chance * len(spec.sensors), "none": 1.0 - chance}[sizes]
+def weight_of(design: UnitDesign, kind: Kind) -> float:
+    """How often a plant's life would be of this kind, by the program's own rates."""
+    spec = design.model.spec
+    years = CYCLES * spec.sample_time / YEAR_S
+    expected = {
+        "sensor": FAULTS_PER_YEAR * years * len(spec.sensors),
+        "input": FAULTS_PER_YEAR * years * len(spec.inputs),
+        "disturbance": MOVES_PER_YEAR * years * len(spec.disturbances),
+    }
+    return {**expected, "none": 1.0 - sum(expected.values()), "uniform": 1.0}[kind]
+
+
+def moments(design: UnitDesign, plants: int, kind: Kind = "uniform") -> Moments:
+    """Every moment of every sensor, of plants of one kind."""
+    tolerance = np.array([item.tolerance for item in design.model.spec.sensors])
+    parts, weight = [], weight_of(design, kind)
     for number in range(plants):
-        bias, i = fault_of(design, number, sizes)
-        case = replace(Case(still_inputs(spec, CYCLES)), bias=bias)
-        _, y = Plant(spec, (70_000 if sizes != "none" else 90_000) + number).readings(case)
-        seen = seen_by(design, case, y, keep=True).parts
+        case, plant = plant_with(design, number, kind)
+        seen = seen_by(design, case, plant.readings(case)[1], keep=True).parts
         said = np.concatenate([part.beyond for part in seen])[EVERY - 1 :: EVERY]
+        bias = case.bias if case.bias is not None else np.zeros(said.shape)
         true = (np.abs(bias) > tolerance)[EVERY - 1 :: EVERY]
-        if sizes == "prior":
-            said, true = said[:, i : i + 1], true[:, i : i + 1]
         told = np.isfinite(said)
         parts.append(Moments(said[told], true[told], np.full(int(told.sum()), weight)))
     return together(parts)
+
+
+def share_true(found: Moments, low: float, high: float) -> float:
+    """Of the moments that say a probability in a range, the share that was so, weighted."""
+    chosen = found.within(low, high)
+    return float(np.average(found.true[chosen], weights=found.weight[chosen]))
 
 
 def rows(found: Moments) -> list[tuple[str, int, float, float]]:
@@ -139,8 +182,8 @@ def main(plants: int = 300, picture: str | None = None) -> None:
     """All three models, both views."""
     designs = [design_named(name) for name in MODELS]
     everywhere = together([moments(design, plants) for design in designs])
-    rare = together([moments(design, plants, kind) for design in designs for kind in ("prior", "none")])
-    views = {"a fault in every plant": everywhere, "faults as rare as the program supposes": rare}
+    rare = together([moments(design, plants, kind) for design in designs for kind in SUPPOSED])
+    views = {"a fault in every plant": everywhere, "all as rare as the program supposes": rare}
     for name, found in views.items():
         print(f"{name}:\n\n{table(found)}\n", flush=True)
     if picture is not None:

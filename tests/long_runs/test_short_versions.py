@@ -3,8 +3,8 @@
 from __future__ import annotations
 
 import pytest
-from long_runs.calibration import moments
-from long_runs.models import COLUMN, FRACTIONATOR, design_named
+from long_runs.calibration import SUPPOSED, moments, share_true, together
+from long_runs.models import COLUMN, design_named
 from long_runs.naming import outcomes
 from long_runs.promise import without_fault
 from long_runs.schedules import SPEC, judged, simulated
@@ -46,9 +46,10 @@ def test_wrong_gains_are_the_model_s() -> None:
 
 def test_what_is_called_probable_is_mostly_so() -> None:
     """The two ends; how often a probability in between is right needs the long run."""
-    found = moments(design_named(FRACTIONATOR), 20)
-    assert found.true[found.within(0.95, 1.0)].mean() > 0.9
-    assert found.true[found.within(0.0, 0.05)].mean() < 0.02
+    design = design_named(COLUMN)
+    found = together([moments(design, 20, kind) for kind in SUPPOSED])
+    assert share_true(found, 0.95, 1.0) > 0.9
+    assert share_true(found, 0.0, 0.05) < 0.02
 
 
 def test_a_drift_that_the_filter_follows_is_found_by_the_patient_pair_alone() -> None:

@@ -13,6 +13,7 @@ import numpy as np
 import pytest
 from long_runs.models import COLUMN, FRACTIONATOR, design_named
 from long_runs.simulated_plant import Array, Case, Plant, replay_of, seen_by, still_inputs
+from scipy.stats import norm
 
 from softsensor.cycle import UnitDesign, start
 from softsensor.cycle_results import CycleResults
@@ -25,7 +26,8 @@ from softsensor.detection.absorbed_faults import (
     settled_response,
 )
 from softsensor.detection.absorption import settled_innovation
-from softsensor.detection.flagged_bias import beyond_by_flag
+from softsensor.detection.diagnosis import Likelihoods
+from softsensor.detection.flagged_bias import beyond_by_flag, beyond_by_look
 from softsensor.detection.flags import Exclusion, Flag, FlagBook
 from softsensor.detection.outcomes import FollowUp, Moment
 from softsensor.detection.people import Decision, take
@@ -119,6 +121,36 @@ def test_the_conformance_probability_is_never_below_what_an_open_flag_says() -> 
     late = np.concatenate([part.beyond[:, 0] for part in parts if part.times[0] > flags[0].detected])
     assert late.size > 3000
     assert np.all(late >= least)
+
+
+def test_once_the_error_has_gone_back_it_is_no_longer_probable() -> None:
+    flags, _, parts = told()
+    gone = flags[-1].cleared
+    assert gone is not None
+    after = np.concatenate([part.beyond[:, 0] for part in parts if part.times[0] > gone])
+    assert np.nanmax(after) < 0.5
+
+
+def test_a_look_weighs_a_sensor_s_error_with_the_rates_of_faults_and_moves() -> None:
+    """Against the sum written out in numpy and scipy."""
+    design = design_named(FRACTIONATOR).detection
+    random, count = np.random.default_rng(3), len(design.suspects)
+    evidence, size = random.uniform(-2.0, 6.0, count), random.normal(0.0, 0.3, count)
+    ages, sd = random.integers(1, 50, count), random.uniform(0.02, 0.2, count)
+    found = Likelihoods(evidence, ages, size, sd)
+    years = 1500 * 60.0 / (365.25 * 86400.0)
+    rates = np.array([12.0 if item.source == "disturbance" else 1.0 for item in design.suspects])
+    weight = 0.5 * rates * years * np.exp(evidence)
+    reach = np.array(
+        [age if item.shape == "ramp" else 1 for item, age in zip(design.suspects, ages, strict=True)]
+    )
+    wanted = np.zeros(5)
+    for h, item in enumerate(design.suspects):
+        if item.source == "sensor":
+            limit = design.model.spec.sensors[item.index].tolerance
+            now = norm(size[h] * reach[h], sd[h] * reach[h])
+            wanted[item.index] += weight[h] * (now.sf(limit) + now.cdf(-limit))
+    assert beyond_by_look(design, found, 1500) == pytest.approx(wanted / (1.0 + weight.sum()), abs=1e-6)
 
 
 def test_a_run_in_pieces_keeps_what_is_followed_and_gives_the_same_digest() -> None:
