@@ -1,8 +1,9 @@
-"""A replay's estimates once more, each given all readings and laboratory results of the period: for review.
+"""Estimates once more, each given all readings and laboratory results of consecutive cycles: for review.
 
-While the replay runs, what its cycles saw goes to a temporary file; afterwards the filter runs forward once more with the
-laboratory results and left-out sensors as known at the end, keeping a state every CHUNK cycles, and the smoother runs
-backward, chunk by chunk. Memory holds one chunk; what grows with the period is on disk, and gone afterwards.
+What the cycles saw goes to a temporary file; then the filter runs forward once more with the laboratory results and
+left-out sensors as known at the end, keeping a state every CHUNK cycles, and the smoother runs backward, chunk by chunk.
+Memory holds one chunk; what grows with the period is on disk, and gone afterwards. :class:`SmoothedRun` does that for a
+replay, :mod:`softsensor.service.smoothed_window` for a period on record.
 """
 
 from __future__ import annotations
@@ -85,8 +86,26 @@ def _plain_errors() -> Iterator[None]:
         raise ReplayError(f"temporary file of the smoother: {error.strerror or error}") from None
 
 
-class SmoothedRun:
-    """Smooths one replay: pass its stretches through :meth:`keeping`, then ask for :meth:`cycles`.
+@dataclass(frozen=True)
+class Known:
+    """What consecutive cycles are smoothed with, as known when that is done.
+
+    :param estimator: the state before the first cycle, with everything from before it.
+    :param first: the first cycle's number.
+    :param labs: the laboratory results that count within these cycles, in order of cycle.
+    :param book: which sensors are left out, and when.
+    :param late: what these cycles came to see later, in the order in which it was learnt.
+    """
+
+    estimator: EstimatorState
+    first: int
+    labs: tuple[LabAtCycle, ...]
+    book: FlagBook
+    late: tuple[LateReadings, ...] = ()
+
+
+class Smoother:
+    """Smooths consecutive cycles: :meth:`keep` what they saw, in order, then ask for :meth:`cycles`.
 
     :param folder: where the temporary files go; by default the system's own place.
     :param chunk: cycles between two kept states; the results do not depend on it.
@@ -95,12 +114,10 @@ class SmoothedRun:
     def __init__(self, design: UnitDesign, folder: Path | None = None, chunk: int = CHUNK) -> None:
         self._design = design
         self._chunk = chunk
-        self._waited: list[NDArray[np.int64]] = []
         self._loose: list[CycleReadings] = []
-        self._late: list[LateReadings] = []
         self._readings, self._states, self._smoothed = Shelf(folder), Shelf(folder), Shelf(folder)
 
-    def __enter__(self) -> SmoothedRun:
+    def __enter__(self) -> Smoother:
         return self
 
     def __exit__(
@@ -109,16 +126,8 @@ class SmoothedRun:
         for shelf in (self._readings, self._states, self._smoothed):
             shelf.close()
 
-    def keeping(self, stretches: Iterable[Stretch]) -> Iterator[Stretch]:
-        """The same stretches; what their cycles saw is kept on the way."""
-        for stretch in stretches:
-            if stretch.results.first < 0:
-                self._waited.append(stretch.readings.times)
-            else:
-                self._keep(stretch.readings)
-            yield stretch
-
-    def _keep(self, readings: CycleReadings) -> None:
+    def keep(self, readings: CycleReadings) -> None:
+        """What the next cycles saw."""
         self._loose.append(readings)
         if sum(len(part) for part in self._loose) >= self._chunk:
             whole = join_readings(self._loose)
@@ -131,8 +140,8 @@ class SmoothedRun:
     def _shelve(self, part: CycleReadings) -> None:
         self._readings.put((part.times, part.u, part.u_quality, part.y, part.y_quality))
 
-    def cycles(self, running: Replay) -> Iterator[SmoothedCycles]:
-        """All cycles of a replay that has ended, in order of time.
+    def cycles(self, known: Known) -> Iterator[SmoothedCycles]:
+        """All cycles kept, in order of time; worked out once.
 
         :raises UnsoundArithmetic: a variance is not positive.
         :raises ReplayError: the temporary file cannot be written.
@@ -141,14 +150,8 @@ class SmoothedRun:
         if rest:
             self._shelve(join_readings(rest))
         self._loose = []
-        estimates = len(self._design.model.spec.estimates)
-        for times in self._waited:
-            nothing = np.full((len(times), estimates), np.nan)
-            yield SmoothedCycles(times, nothing, nothing)
         if not len(self._smoothed):
-            self._late = running.late
-            book, labs = running.run.state.book, running.counted_labs
-            interval = _Interval(self._design, book, labs, running.first_cycle)
+            interval = _Interval(self._design, known)
             self._forward(interval)
             self._backward(interval)
         at_once = max(1, ROWS // self._chunk)
@@ -159,10 +162,10 @@ class SmoothedRun:
 
     def _forward(self, interval: _Interval) -> None:
         """Keep the state before every chunk."""
-        estimator = start(self._design, interval.first).estimator
+        estimator = interval.known.estimator.copy()
         for number in range(len(self._readings)):
             self._states.put(estimator)
-            data = interval.readings(number * self._chunk, self._chunk_of(number))
+            data = interval.readings(number * self._chunk, self._chunk_of(number, interval))
             interval.forward(estimator, data, number * self._chunk)
 
     def _backward(self, interval: _Interval) -> None:
@@ -170,7 +173,7 @@ class SmoothedRun:
         scale = np.array([item.interval_scale for item in self._design.model.spec.estimates])
         adjoint = last_adjoint(kernel)
         for number in range(len(self._readings) - 1, -1, -1):
-            row, part = number * self._chunk, self._chunk_of(number)
+            row, part = number * self._chunk, self._chunk_of(number, interval)
             data = interval.readings(row, part)
             trace = interval.forward(EstimatorState(*self._states.get(number)), data, row)
             mean = np.zeros((len(part), kernel.n_estimates))
@@ -179,10 +182,10 @@ class SmoothedRun:
                 raise interval.unsound(row)
             self._smoothed.put((part.times, mean, np.sqrt(variance) * scale))
 
-    def _chunk_of(self, number: int) -> CycleReadings:
+    def _chunk_of(self, number: int, interval: _Interval) -> CycleReadings:
         """What the cycles of a chunk saw, and what came late for them."""
         part = CycleReadings(*self._readings.get(number))
-        for late in self._late:
+        for late in interval.late_of(part):
             inside = (late.times >= part.times[0]) & (late.times <= part.times[-1])
             if inside.any():
                 rows = np.searchsorted(part.times, late.times[inside])
@@ -192,25 +195,74 @@ class SmoothedRun:
         return part
 
 
+class SmoothedRun:
+    """Smooths one replay: pass its stretches through :meth:`keeping`, then ask for :meth:`cycles`.
+
+    :param folder, chunk: as for :class:`Smoother`.
+    """
+
+    def __init__(self, design: UnitDesign, folder: Path | None = None, chunk: int = CHUNK) -> None:
+        self._design = design
+        self._waited: list[NDArray[np.int64]] = []
+        self._smoother = Smoother(design, folder, chunk)
+
+    def __enter__(self) -> SmoothedRun:
+        return self
+
+    def __exit__(
+        self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None
+    ) -> None:
+        self._smoother.__exit__(kind, error, trace)
+
+    def keeping(self, stretches: Iterable[Stretch]) -> Iterator[Stretch]:
+        """The same stretches; what their cycles saw is kept on the way."""
+        for stretch in stretches:
+            if stretch.results.first < 0:
+                self._waited.append(stretch.readings.times)
+            else:
+                self._smoother.keep(stretch.readings)
+            yield stretch
+
+    def cycles(self, running: Replay) -> Iterator[SmoothedCycles]:
+        """All cycles of a replay that has ended, in order of time.
+
+        :raises UnsoundArithmetic: a variance is not positive.
+        :raises ReplayError: the temporary file cannot be written.
+        """
+        for times in self._waited:
+            nothing = np.full((len(times), len(self._design.model.spec.estimates)), np.nan)
+            yield SmoothedCycles(times, nothing, nothing)
+        before = start(self._design, running.first_cycle).estimator
+        book, late = running.run.state.book, tuple(running.late)
+        yield from self._smoother.cycles(Known(before, running.first_cycle, running.counted_labs, book, late))
+
+
 def _cycle_of(lab: LabAtCycle) -> int:
     return lab.cycle
 
 
-@dataclass(frozen=True)
 class _Interval:
-    """What holds for the whole period, as known at its end; ``first`` is the number of its first cycle."""
+    """What holds for all cycles kept."""
 
-    design: UnitDesign
-    book: FlagBook
-    labs: tuple[LabAtCycle, ...]
-    first: int
+    def __init__(self, design: UnitDesign, known: Known) -> None:
+        self.design = design
+        self.known = known
+        there = [item for item in known.late if len(item.times)]
+        self._late = np.empty(len(there), dtype=object)
+        self._late[:] = there
+        self._begins = np.array([item.times[0] for item in there], dtype=np.int64)
+        self._ends = np.array([item.times[-1] for item in there], dtype=np.int64)
+
+    def late_of(self, part: CycleReadings) -> Iterator[LateReadings]:
+        """Late readings that may belong to a chunk, in the order in which they were learnt."""
+        yield from self._late[(self._begins <= part.times[-1]) & (self._ends >= part.times[0])]
 
     def readings(self, row: int, part: CycleReadings) -> ScalarReadings:
         """The readings of a chunk that begins ``row`` cycles after the first, as the filter takes them."""
-        begin = self.first + row
-        low = bisect_left(self.labs, begin, key=_cycle_of)
-        labs = self.labs[low : bisect_left(self.labs, begin + len(part), key=_cycle_of)]
-        data = block_inputs(self.design, self.book, begin, part, labs)
+        begin, labs = self.known.first + row, self.known.labs
+        low = bisect_left(labs, begin, key=_cycle_of)
+        labs = labs[low : bisect_left(labs, begin + len(part), key=_cycle_of)]
+        data = block_inputs(self.design, self.known.book, begin, part, labs)
         at, sensor = np.nonzero((data.use != 0) & np.isfinite(data.y))
         order = np.argsort(np.concatenate([at, data.lab_at]), kind="stable")
 
@@ -234,7 +286,7 @@ class _Interval:
 
     def unsound(self, row: int) -> UnsoundArithmetic:
         """What is raised where a variance is not positive."""
-        near = self.first + row
+        near = self.known.first + row
         return UnsoundArithmetic(
             f"{self.design.model.spec.name}: a smoothed variance is not positive near cycle {near}"
         )
