@@ -8,7 +8,7 @@ from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
-from sqlalchemy import Row, Select, select
+from sqlalchemy import Row, Select, func, select
 
 from softsensor.readings_of_cycle import CycleReadings
 from softsensor.records.blocks import (
@@ -58,6 +58,30 @@ def latest_cycle(database: Database, unit_id: int) -> int | None:
     with database.read() as connection:
         newest: int | None = connection.execute(query.limit(1)).scalar_one_or_none()
     return newest
+
+
+def revisions_between(database: Database, unit_id: int, first: int, last: int) -> list[int]:
+    """The revisions that ran cycles ``first`` to ``last``, both included, by id; the one that ran last is the last."""
+    query = (
+        select(cycles.c.revision_id)
+        .where(cycles.c.unit_id == unit_id, cycles.c.cycle >= first, cycles.c.cycle <= last)
+        .group_by(cycles.c.revision_id)
+        .order_by(func.max(cycles.c.cycle))
+    )
+    with database.read() as connection:
+        return [int(found) for found in connection.execute(query).scalars()]
+
+
+def decided(database: Database, unit_id: int, first: int, last: int) -> list[bytes]:
+    """What was decided before cycles ``first`` to ``last``, both included, in their order, where anything was."""
+    query = (
+        select(cycles.c.decisions)
+        .where(cycles.c.unit_id == unit_id, cycles.c.cycle >= first, cycles.c.cycle <= last)
+        .where(cycles.c.decisions != b"")
+        .order_by(cycles.c.cycle)
+    )
+    with database.read() as connection:
+        return [bytes(found) for found in connection.execute(query).scalars()]
 
 
 def readings(database: Database, unit_id: int, first: int, last: int) -> Iterator[ReadingsBlock]:
