@@ -22,6 +22,7 @@ from softsensor.web.models_in_service import ModelsInService
 from softsensor.web.pages import Pages, data_routes, page_routes
 from softsensor.web.people_pages import people_forms, people_pages
 from softsensor.web.promise_page import promise_pages
+from softsensor.web.review_pages import review_pages
 from softsensor.web.security import HEADERS, ProtectiveHeaders
 from softsensor.web.site import BadForm, ForeignForm, NotHere, Site
 
@@ -50,6 +51,7 @@ def create_app(database: Database, feed: LiveFeed, clock_speed: float = 1.0) -> 
     app.include_router(data_routes(site))
     app.include_router(model_pages(site, pages))
     app.include_router(promise_pages(site, pages))
+    app.include_router(review_pages(site, pages))
     app.include_router(people_pages(site, pages))
     app.include_router(people_forms(site, pages))
     app.include_router(page_routes(site, pages))

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import Any
 
@@ -112,28 +113,47 @@ class Track:
     """(N, 2), high and low; empty for an estimate."""
 
 
-def _track(database: Database, models: ModelsInService, unit: Unit, tag: str, window: Window) -> Track:
-    parts: list[tuple[Any, ...]] = []
+def tracks_of(
+    database: Database, models: ModelsInService, unit: Unit, tags: Sequence[str], window: Window
+) -> dict[str, Track]:
+    """The published cycles of several tags, read once."""
+    parts: dict[str, list[tuple[Any, ...]]] = {tag: [] for tag in tags}
     cycles = series.cycles_between(database, unit.id, window.from_us, window.to_us)
     for block in series.published(database, unit.id, cycles.start, cycles.stop - 1) if cycles else ():
-        spec, results = models.spec(block.revision_id), block.results
-        numbers = np.arange(len(results), dtype=np.int64) + results.first_cycle
-        estimates, sensors = [item.tag for item in spec.estimates], [item.tag for item in spec.sensors]
-        if tag in estimates:
-            e = estimates.index(tag)
-            sums = np.empty((len(results), 2))
-            shown = published(spec.estimates[e], results.estimate[:, e], results.sd[:, e])
-            parts.append((block.times, numbers, shown.value, shown.lower, shown.upper, sums))
-        elif tag in sensors:
-            i, n = sensors.index(tag), len(sensors)
-            sums = results.sums[:, [i, n + i]]
-            item, predicted = spec.sensors[i], results.predicted[:, i]
-            reading = from_model(item, predicted + results.innovation[:, i])
-            parts.append((block.times, numbers, from_model(item, predicted), reading, reading, sums))
+        spec = models.spec(block.revision_id)
+        for tag in tags:
+            parts[tag] += _part_of(spec, block, tag)
+    return {tag: _joined(found) for tag, found in parts.items()}
+
+
+def _part_of(spec: UnitSpec, block: series.TimedResults, tag: str) -> list[tuple[Any, ...]]:
+    """A tag's columns of one block; none where the block's revision does not know the tag."""
+    results = block.results
+    numbers = np.arange(len(results), dtype=np.int64) + results.first_cycle
+    estimates, sensors = [item.tag for item in spec.estimates], [item.tag for item in spec.sensors]
+    if tag in estimates:
+        e = estimates.index(tag)
+        sums = np.empty((len(results), 2))
+        shown = published(spec.estimates[e], results.estimate[:, e], results.sd[:, e])
+        return [(block.times, numbers, shown.value, shown.lower, shown.upper, sums)]
+    if tag in sensors:
+        i, n = sensors.index(tag), len(sensors)
+        sums = results.sums[:, [i, n + i]]
+        item, predicted = spec.sensors[i], results.predicted[:, i]
+        reading = from_model(item, predicted + results.innovation[:, i])
+        return [(block.times, numbers, from_model(item, predicted), reading, reading, sums)]
+    return []
+
+
+def _joined(parts: list[tuple[Any, ...]]) -> Track:
     if not parts:
         nothing = np.empty(0, dtype=np.int64)
         return Track(nothing, nothing, np.empty(0), np.empty(0), np.empty(0), np.empty((0, 2)))
     return Track(*(np.concatenate(part) for part in zip(*parts, strict=True)))
+
+
+def _track(database: Database, models: ModelsInService, unit: Unit, tag: str, window: Window) -> Track:
+    return tracks_of(database, models, unit, (tag,), window)[tag]
 
 
 def estimate_columns(
@@ -145,8 +165,8 @@ def estimate_columns(
     flags = reader.flags_of(database, unit.id)
     return {
         "estimate": estimate_band(track, window, sample_us),
-        "revised": _revised(database, models, unit, item, track, window, sample_us),
-        **_labs(database, unit, item, window),
+        "revised": revised_columns(database, models, unit, item, track, window, sample_us),
+        **lab_columns(database, unit, item, window),
         "flags": flag_columns(flags, window),
     }
 
@@ -170,7 +190,7 @@ def estimate_band(track: Track, window: Window, sample_us: float) -> Columns:
     }
 
 
-def _revised(
+def revised_columns(
     database: Database,
     models: ModelsInService,
     unit: Unit,
@@ -179,9 +199,10 @@ def _revised(
     window: Window,
     sample_us: float,
 ) -> Columns:
-    if not len(track.cycles):
-        return {"x": [], "value": []}
+    """The newest revised estimates of a track's cycles, where there are any."""
     tags = [each.tag for each in models.spec(models.revision_of(unit)).estimates]
+    if not len(track.cycles) or item.tag not in tags:
+        return {"x": [], "value": []}
     e, values = tags.index(item.tag), np.full(len(track.cycles), np.nan)
     place = {int(cycle): k for k, cycle in enumerate(track.cycles)}
     found = series.revised(database, unit.id, int(track.cycles[0]), int(track.cycles[-1]))
@@ -197,7 +218,8 @@ def _revised(
 LAB_SOURCES = {"used": "lab used", "waiting for a person": "lab waiting", "left out": "lab left out"}
 
 
-def _labs(database: Database, unit: Unit, item: EstimateSpec, window: Window) -> dict[str, Columns]:
+def lab_columns(database: Database, unit: Unit, item: EstimateSpec, window: Window) -> dict[str, Columns]:
+    """Laboratory results of an estimate, by what became of them."""
     out: dict[str, Columns] = {name: {"x": [], "value": [], "text": []} for name in LAB_SOURCES.values()}
     if item.lab is None:
         return out

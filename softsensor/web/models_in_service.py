@@ -10,6 +10,7 @@ from plant_models.building import build_plant_model
 from plant_models.errors import RealisationError
 from plant_models.model_file import parse_model_text
 from plant_models.specification import UnitSpec
+from softsensor.cycle import UnitDesign
 from softsensor.detection.absorption import settled_estimates
 from softsensor.errors import RecordsError
 from softsensor.estimation.kernel import Floats
@@ -18,6 +19,7 @@ from softsensor.records.engine import Database
 from softsensor.records.reader import Unit
 from softsensor.records.tables import model_revisions
 from softsensor.service.model_report import ModelReport, model_report
+from softsensor.unit_design import design_unit
 
 
 class ModelsInService:
@@ -29,6 +31,7 @@ class ModelsInService:
         self._knowledge: dict[int, tuple[EstimateKnowledge, ...]] = {}
         self._moved: dict[int, Floats | None] = {}
         self._reports: dict[str, ModelReport] = {}
+        self._designs: dict[int, UnitDesign] = {}
         self._solving = threading.Lock()
         self._reporting = threading.Lock()
 
@@ -79,6 +82,15 @@ class ModelsInService:
                 except RealisationError:
                     self._moved[revision_id] = None
             return self._moved[revision_id]
+
+    def design(self, revision_id: int) -> UnitDesign:
+        """Everything that a revision runs on; made once, which takes about a second."""
+        with self._solving:
+            known = self._designs.get(revision_id)
+            if known is None:
+                known = design_unit(build_plant_model(self.spec(revision_id)))
+                self._designs[revision_id] = known
+        return known
 
     def report(self, revision_id: int) -> ModelReport:
         """All that the model of a revision promises; worked out once for each digest, which takes some seconds."""

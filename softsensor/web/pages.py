@@ -29,7 +29,8 @@ from softsensor.web.chart_data import (
 )
 from softsensor.web.flag_seen import seen_of
 from softsensor.web.handbook_text import chapter_html
-from softsensor.web.in_use import is_answerable, is_out
+from softsensor.web.in_use import is_answerable, is_out, newest_us
+from softsensor.web.review_period import period_of_flag
 from softsensor.web.rows import estimate_rows, latest_cycle, tag_decimals, tag_units
 from softsensor.web.security import COOKIE
 from softsensor.web.site import NotHere, Site, choices_for
@@ -133,6 +134,7 @@ def flag_answer(
         "out": is_out(site, unit, flag),
         "answerable": is_answerable(site, unit, flag),
         "refused": refused,
+        "review": period_of_flag(flag, newest_us(site, unit)).query,
     }
     return pages.page(request, "flag.html", refused.status, unit=unit, flag=flag, comments=comments, **shown)
 

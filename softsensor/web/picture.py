@@ -28,6 +28,28 @@ class Course:
 
 
 @dataclass(frozen=True)
+class Area:
+    """A band between two lines over time (milliseconds since 1970); None breaks it."""
+
+    kind: str
+    x: Sequence[float | None]
+    lower: Sequence[float | None]
+    upper: Sequence[float | None]
+
+
+@dataclass(frozen=True)
+class Marks:
+    """Single points. ``kind`` names their look, ``shape`` is a circle, a diamond or a cross."""
+
+    kind: str
+    shape: str
+    x: Sequence[float]
+    y: Sequence[float]
+    leads: bool = True
+    """Do they stretch the axis without limit? Others do so by the height of the rest at most and stand at its edge."""
+
+
+@dataclass(frozen=True)
 class Picture:
     """What is drawn between two times (milliseconds since 1970)."""
 
@@ -40,6 +62,8 @@ class Picture:
     """Stretches of time to shade: start, end, kind."""
     levels: tuple[float, ...] = ()
     """Values drawn as horizontal lines."""
+    areas: tuple[Area, ...] = ()
+    marks: tuple[Marks, ...] = ()
 
 
 def round_step(span: float, wanted: int = TICKS) -> float:
@@ -61,25 +85,42 @@ def time_step(span_s: float) -> int:
 
 def svg_of(picture: Picture) -> Markup:
     """The picture as an SVG element; times in UTC, every text escaped."""
-    values = [float(y) for course in picture.courses for y in course.y if y is not None] + list(
-        picture.levels
-    )
-    low, high = (min(values), max(values)) if values else (0.0, 1.0)
-    if high - low < 1e-12 * max(1.0, abs(high)):
-        low, high = low - 0.5, high + 0.5
+    low, high = _scale(picture)
     margin = 0.06 * (high - low)
     frame = _Frame(picture.start, picture.end, low - margin, high + margin)
     parts = [_band(frame, *band) for band in picture.bands]
+    parts += [_area(frame, area) for area in picture.areas]
     parts += _value_axis(frame, picture.unit) + _time_axis(frame)
     parts += [
         f'<path class="level" d="M{LEFT} {frame.y(level):.1f}H{WIDTH - RIGHT}"/>' for level in picture.levels
     ]
     parts += [_course(frame, course) for course in picture.courses]
+    parts += [
+        _mark(frame, marks, x, y) for marks in picture.marks for x, y in zip(marks.x, marks.y, strict=True)
+    ]
     title = escape(picture.title)
     return Markup(
         f'<svg class="still" viewBox="0 0 {WIDTH:.0f} {HEIGHT:.0f}" role="img" aria-label="{title}">'
         f"<title>{title}</title>{''.join(parts)}</svg>"
     )
+
+
+def _scale(picture: Picture) -> tuple[float, float]:
+    """Lowest and highest value that the axis must show."""
+    values = [float(y) for course in picture.courses for y in course.y if y is not None]
+    values += [float(y) for area in picture.areas for y in (*area.lower, *area.upper) if y is not None]
+    values += [*picture.levels, *(y for marks in picture.marks if marks.leads for y in marks.y)]
+    others = [y for marks in picture.marks if not marks.leads for y in marks.y]
+    values = values or others
+    low, high = (min(values), max(values)) if values else (0.0, 1.0)
+    if high - low < 1e-12 * max(1.0, abs(high)):
+        low, high = low - 0.5, high + 0.5
+    span = high - low
+    low, high = (
+        min([low, *(max(y, low - span) for y in others)]),
+        max([high, *(min(y, high + span) for y in others)]),
+    )
+    return low, high
 
 
 @dataclass(frozen=True)
@@ -145,6 +186,39 @@ def _course(frame: _Frame, course: Course) -> str:
     return f'<path class="{escape(course.kind)}" d="{"".join(pieces)}"/>'
 
 
+def _area(frame: _Frame, area: Area) -> str:
+    """One closed outline for each unbroken stretch."""
+    stretches: list[list[tuple[float, float, float]]] = [[]]
+    for time, lower, upper in zip(area.x, area.lower, area.upper, strict=True):
+        if time is None or lower is None or upper is None or not frame.start <= time <= frame.end:
+            stretches.append([])
+        else:
+            stretches[-1].append((frame.x(time), frame.y(lower), frame.y(upper)))
+    outlines = []
+    for points in (points for points in stretches if points):
+        there = [f"{x:.1f} {upper:.1f}" for x, _, upper in points]
+        back = [f"{x:.1f} {lower:.1f}" for x, lower, _ in reversed(points)]
+        outlines.append(f"M{'L'.join([*there, *back])}Z")
+    return f'<path class="{escape(area.kind)}" d="{"".join(outlines)}"/>'
+
+
+SHAPES = {
+    "circle": "M{0:.1f} {1:.1f}m-4 0a4 4 0 1 0 8 0a4 4 0 1 0 -8 0Z",
+    "diamond": "M{0:.1f} {1:.1f}m0 -6l5 6l-5 6l-5 -6Z",
+    "cross": "M{0:.1f} {1:.1f}m-4 -4l8 8m0 -8l-8 8",
+}
+
+
+def _mark(frame: _Frame, marks: Marks, time: float, value: float) -> str:
+    place = SHAPES[marks.shape].format(frame.x(time), frame.y(min(max(value, frame.low), frame.high)))
+    return f'<path class="{escape(marks.kind)}" d="{place}"/>'
+
+
 def course_of(kind: str, columns: dict[str, list[Any]]) -> Course:
     """A course from a chart's columns."""
     return Course(kind, columns["x"], columns["value"])
+
+
+def area_of(kind: str, columns: dict[str, list[Any]]) -> Area:
+    """A band from a chart's columns."""
+    return Area(kind, columns["x"], columns["lower"], columns["upper"])
