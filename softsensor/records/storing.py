@@ -28,6 +28,9 @@ from softsensor.records.inserting import insert_new, insert_or_replace
 from softsensor.records.tables import checkpoints, cycles, results, revised_estimates, rollups
 from softsensor.records.vectors import pack
 
+LASTING = 8192
+"""The state before each of this many cycles stays on record for good: about one a day at 10 s."""
+
 
 def store_readings(
     connection: Connection, unit_id: int, block: ReadingsBlock, holder: str | None = None
@@ -113,9 +116,12 @@ def store_checkpoint(connection: Connection, unit_id: int, checkpoint: Checkpoin
 
 
 def drop_checkpoints(connection: Connection, unit_id: int, before_cycle: int) -> None:
-    """Forget the checkpoints before a cycle, once no laboratory result can reach back so far."""
+    """Forget the checkpoints before a cycle, once no laboratory result can reach back so far, but for one in every
+    LASTING cycles: from those a period long ago can still be smoothed.
+    """
+    old = checkpoints.c.cycle < before_cycle
     connection.execute(
-        delete(checkpoints).where(checkpoints.c.unit_id == unit_id, checkpoints.c.cycle < before_cycle)
+        delete(checkpoints).where(checkpoints.c.unit_id == unit_id, old, checkpoints.c.cycle % LASTING != 0)
     )
 
 

@@ -94,7 +94,7 @@ def smoothed_window(
     if before is None:
         nothing = np.empty((0, design.kernel.n_estimates))
         empty = SmoothedCycles(np.empty(0, dtype=np.int64), nothing, nothing)
-        return SmoothedWindow(chosen, empty, known_at, known_at, (_no_state(database, unit_id, cycles),))
+        return SmoothedWindow(chosen, empty, known_at, known_at, (_no_state(state, stretch, begin),))
     labs, remarks = _labs(database, unit_id, design, stretch)
     book, late = _book(database, unit_id, design, stretch), _late(database, unit_id, begin, last)
     found = _smoothed(design, stretch, Known(before, stretch.first, labs, book, late), cycles)
@@ -138,14 +138,15 @@ def _state_before(database: Database, unit_id: int, cycle: int) -> Checkpoint | 
     return found if found is not None and found.format_version == FORMAT else None
 
 
-def _no_state(database: Database, unit_id: int, cycles: range) -> str:
+def _no_state(state: Checkpoint | None, stretch: _Stretch, begin: int) -> str:
     """Why there is no smoothed estimate."""
-    found = series.last_checkpoint(database, unit_id, cycles.start)
-    if found is not None and found.format_version != FORMAT:
-        return "not smoothed: the states on record from before this period were written by another release"
+    if state is not None and state.cycle == stretch.first:
+        return "not smoothed: the state on record does not suit the model as this release makes it"
+    if stretch.first > begin:
+        return "not smoothed: cycles before this period are missing on record, and no state from after them is there"
     return (
-        "not smoothed: no state from before this period is on record any more, and the run began more than "
-        f"{LONGEST} cycles earlier; softsensor replay --smooth over an exported history can still do it"
+        "not smoothed: no state that this release reads is on record from before this period, and the run began more than "
+        f"{LONGEST} cycles earlier"
     )
 
 

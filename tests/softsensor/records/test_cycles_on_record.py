@@ -134,13 +134,32 @@ def test_cycles_are_found_by_their_times(database: Database, plant: Any) -> None
 def test_the_newest_checkpoint_before_a_cycle_is_found(database: Database, plant: Any) -> None:
     assert series.last_checkpoint(database, plant.unit) is None
     with database.write() as connection:
-        for cycle in (0, 100, 200):
+        for cycle in (50, 100, 200):
             storing.store_checkpoint(connection, plant.unit, Checkpoint(cycle, 1, b"old"))
         storing.store_checkpoint(connection, plant.unit, Checkpoint(100, 2, b"new\x00"))
         storing.drop_checkpoints(connection, plant.unit, 100)
     assert series.last_checkpoint(database, plant.unit) == Checkpoint(200, 1, b"old")
     assert series.last_checkpoint(database, plant.unit, 199) == Checkpoint(100, 2, b"new\x00")
     assert series.last_checkpoint(database, plant.unit, 99) is None
+
+
+def test_one_old_checkpoint_in_8192_cycles_stays(database: Database, plant: Any) -> None:
+    with database.write() as connection:
+        for cycle in (0, 64, 8128, 8192, 8256, 16384, 20032):
+            storing.store_checkpoint(connection, plant.unit, Checkpoint(cycle, 1, b"state"))
+        storing.drop_checkpoints(connection, plant.unit, 20000)
+    left, at_most = [], 10**6
+    while (found := series.last_checkpoint(database, plant.unit, at_most)) is not None:
+        left.append(found.cycle)
+        at_most = found.cycle - 1
+    assert left == [20032, 16384, 8192, 0]
+
+
+def test_what_was_decided_and_which_revisions_ran_is_found(database: Database, plant: Any) -> None:
+    store(database, plant, 0, 20)
+    assert series.decided(database, plant.unit, 3, 5) == [b"decided 3", b"decided 4", b"decided 5"]
+    assert series.revisions_between(database, plant.unit, 0, 19) == [plant.revision]
+    assert series.revisions_between(database, plant.unit, 20, 30) == []
 
 
 def test_the_newest_revised_estimate_of_a_cycle_counts_and_the_published_stays(

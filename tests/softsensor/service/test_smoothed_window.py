@@ -134,7 +134,9 @@ def test_without_a_state_on_record_it_begins_at_the_beginning_of_the_run(
         monkeypatch.setattr("softsensor.service.smoothed_window.LONGEST", 100)
         far = smoothed(database, design, range(230, 300))
     assert len(far.cycles.times) == 0
-    assert far.remarks[0].startswith("not smoothed: no state from before this period is on record any more")
+    assert far.remarks[0].startswith(
+        "not smoothed: no state that this release reads is on record from before"
+    )
 
 
 def test_states_of_another_release_are_not_taken(
@@ -146,8 +148,24 @@ def test_states_of_another_release_are_not_taken(
         with database.write() as connection:
             connection.execute(text("UPDATE checkpoints SET format_version = 1 WHERE cycle < 300"))
         found = smoothed(database, design, range(230, 300))
+    assert found.remarks[0].startswith(
+        "not smoothed: no state that this release reads is on record from before"
+    )
+    assert len(found.cycles.times) == 0
+
+
+def test_cycles_that_are_missing_on_record_are_no_beginning(
+    design: UnitDesign, new_bench: Any, interrupted: Any, sqlite_url: str
+) -> None:
+    asyncio.run(new_bench(design, sqlite_url).run(interrupted, 0, END, cut=False))
+    with open_database(sqlite_url) as database:
+        with database.write() as connection:
+            for table in ("results", "revised_estimates", "cycles"):
+                connection.execute(text(f"DELETE FROM {table} WHERE cycle BETWEEN 130 AND 140"))
+            connection.execute(text("DELETE FROM checkpoints WHERE cycle BETWEEN 129 AND 300"))
+        found = smoothed(database, design, range(100, 200))
     assert found.remarks == (
-        "not smoothed: the states on record from before this period were written by another release",
+        "not smoothed: cycles before this period are missing on record, and no state from after them is there",
     )
 
 
