@@ -32,6 +32,10 @@ from softsensor.service.smoothed_run import Known, Smoother
 LONGEST = 200_000
 """Cycles of a period at most, and cycles before it at most that are run where no state is on record."""
 
+NEWEST = "the newest cycle"
+AS_LONG = "as many cycles after the period as it has itself"
+END_OF_RUN = "the last cycle of the run"
+
 DesignOf = Callable[[int], UnitDesign]
 """The design of a revision by its id."""
 
@@ -41,13 +45,13 @@ class SmoothedWindow:
     """A period's smoothed cycles, none where that is not possible; what they were given; what is to be said about it.
 
     :param revision_id: the revision whose cycles these are.
-    :param given_to: time of the last cycle whose readings were given.
+    :param given_to: time of the last cycle whose readings were given, and what that one is.
     :param known_at: time of the newest cycle: what had been learnt by then counts.
     """
 
     revision_id: int
     cycles: SmoothedCycles
-    given_to: int
+    given_to: tuple[int, str]
     known_at: int
     remarks: tuple[str, ...]
 
@@ -94,7 +98,9 @@ def smoothed_window(
     if before is None:
         nothing = np.empty((0, design.kernel.n_estimates))
         empty = SmoothedCycles(np.empty(0, dtype=np.int64), nothing, nothing)
-        return SmoothedWindow(chosen, empty, known_at, known_at, (_no_state(state, stretch, begin),))
+        return SmoothedWindow(
+            chosen, empty, (known_at, NEWEST), known_at, (_no_state(state, stretch, begin),)
+        )
     labs, remarks = _labs(database, unit_id, design, stretch)
     book, late = _book(database, unit_id, design, stretch), _late(database, unit_id, begin, last)
     found = _smoothed(design, stretch, Known(before, stretch.first, labs, book, late), cycles)
@@ -103,7 +109,9 @@ def smoothed_window(
         remarks.insert(
             0, "smoothed with the revision of the model that ran then, not with the one in service now"
         )
-    return SmoothedWindow(chosen, found, int(stretch.readings.times[-1]), known_at, tuple(remarks))
+    what = NEWEST if stretch.stop > last else AS_LONG if stretch.stop == run.stop else END_OF_RUN
+    given_to = (int(stretch.readings.times[-1]), what)
+    return SmoothedWindow(chosen, found, given_to, known_at, tuple(remarks))
 
 
 def _smoothed(design: UnitDesign, stretch: _Stretch, known: Known, cycles: range) -> SmoothedCycles:

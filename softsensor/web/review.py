@@ -135,10 +135,10 @@ def review_of(site: Site, unit: Unit, period: Period, newest_us: int) -> Review:
 def _refuse_too_long(spec: UnitSpec, period: Period) -> None:
     cycles = period.hours * 3600.0 / spec.sample_time
     if cycles > LONGEST:
-        most = LONGEST * spec.sample_time / 3600.0
+        most = int(LONGEST * spec.sample_time / 3600.0)
         raise BadForm(
             f"hours: {period.hours:g}; the period is too long: {cycles:.0f} cycles, expected {LONGEST} at most, which are "
-            f"{most:.0f} h"
+            f"{most} h"
         )
 
 

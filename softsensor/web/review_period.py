@@ -14,6 +14,8 @@ PERIODS = {"8 h": 8.0, "24 h": 24.0, "7 d": 168.0}
 USUAL = 8.0
 MOST_HOURS = 87_660.0
 """Ten years: beyond, a number is a slip and no period."""
+YEARS = (1970, 2999)
+"""Others are slips, and near the ends of the calendar a period has no beginning."""
 AROUND = 1.25
 """A flag's period is chosen with at least this share of the flagged time."""
 
@@ -66,6 +68,8 @@ def _moment(text: str) -> int:
     try:
         found = datetime.fromisoformat(text.strip())
         aware = found.replace(tzinfo=UTC) if found.tzinfo is None else found.astimezone(UTC)
+        if not YEARS[0] <= aware.year <= YEARS[1]:
+            raise ValueError(aware)
     except (ValueError, OverflowError):
         raise BadForm(f"until: {text!r}; expected a time in UTC such as 2026-12-01T14:00") from None
     seconds = aware - EPOCH

@@ -23,7 +23,7 @@ from softsensor.recorded_data import prepare_from_records
 from softsensor.records import reader, series
 from softsensor.records.engine import Database, open_database
 from softsensor.service.smoothed_run import SmoothedRun
-from softsensor.service.smoothed_window import LONGEST, SmoothedWindow, smoothed_window
+from softsensor.service.smoothed_window import LONGEST, NEWEST, SmoothedWindow, smoothed_window
 
 END = 400
 LATE = {"TI1A": range(262, 266), "FI1": range(270, 275), "TI2": range(150, 153)}
@@ -100,7 +100,7 @@ def test_a_period_up_to_the_newest_cycle_is_what_a_replay_of_all_records_gives(
             ]
             np.testing.assert_allclose(found.cycles.estimate, whole.estimate[first:], rtol=1e-9)
             np.testing.assert_allclose(found.cycles.sd, whole.sd[first:], rtol=1e-9)
-            assert (found.given_to, found.remarks) == (found.known_at, ())
+            assert (found.given_to, found.remarks) == ((found.known_at, NEWEST), ())
 
 
 def test_readings_count_for_as_long_again_as_the_period_lasts(
@@ -111,7 +111,8 @@ def test_readings_count_for_as_long_again_as_the_period_lasts(
     whole = whole_of(design, sqlite_url)
     with open_database(sqlite_url) as database:
         found = smoothed(database, design, range(220, 280))
-    assert found.given_to == found.cycles.times[0] + (339 - 220) * design.detection.sample_us
+    last = found.cycles.times[0] + (339 - 220) * design.detection.sample_us
+    assert found.given_to == (last, "as many cycles after the period as it has itself")
     to = slice(0, 340)
     labs = [lab for lab in whole.labs if lab.cycle < 340]
     value, sd = given_everything(design.model.spec, whole.u[to], whole.y[to], whole.uncertain[to], labs)

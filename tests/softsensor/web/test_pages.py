@@ -213,7 +213,7 @@ def test_a_unit_s_name_may_hold_any_sign(recorded: Database, asker: Any) -> None
     page = asker.get(address)
     assert page.status_code == 200
     found = [html.unescape(link) for link in re.findall(r'href="(/units/[^"]+)"', page.text)]
-    assert len(found) == 9
+    assert len(found) == 10
     for link in [
         *found,
         f"{address}/estimates.json",
