@@ -186,7 +186,7 @@ def went_back(
         0.0 if tag == flag.tag else value
         for tag, value in zip(design.model.sensor_tags, outcome.book.weighed, strict=False)
     )
-    book = replace(outcome.book, episode=replace(episode, explained=True), weighed=weighed)
+    book = replace(outcome.book, episode=replace(episode, explained_at=moment.cycle), weighed=weighed)
     return replace(outcome, book=book)
 
 
@@ -220,7 +220,7 @@ def _same_size(design: DetectionDesign, flag: Flag, time: int, back: tuple[float
     return against > 0.5 * near and abs(flag.size) - near <= against <= most + near
 
 
-def flagged_once_more(outcome: FollowUp, newer: Flag) -> tuple[FollowUp, Flag | None]:
+def flagged_once_more(outcome: FollowUp, newer: Flag, cycle: int) -> tuple[FollowUp, Flag | None]:
     """A followed error is flagged once more: the same one, and the older flag goes on; or a further one, and the newer flag
     takes its place. What is left of an error long followed tells its size, but hardly when it began.
     """
@@ -235,7 +235,8 @@ def flagged_once_more(outcome: FollowUp, newer: Flag) -> tuple[FollowUp, Flag | 
         text = f"{newer.tag}: a test is up once more by the same error, now {newer.size:.3g}"
         note = Note(newer.detected, "error seen again", text)
         episode = outcome.book.episode
-        book = replace(outcome.book, episode=None if episode is None else replace(episode, explained=True))
+        seen = None if episode is None else replace(episode, explained_at=cycle)
+        book = replace(outcome.book, episode=seen)
         return replace(outcome, book=book, notes=(*outcome.notes, note)), None
     newer = replace(newer, size=older.size + newer.size, size_sd=math.hypot(older.size_sd, newer.size_sd))
     text = (
@@ -243,6 +244,12 @@ def flagged_once_more(outcome: FollowUp, newer: Flag) -> tuple[FollowUp, Flag | 
     )
     outcome = replace(outcome, notes=(*outcome.notes, Note(newer.detected, "error has grown", text)))
     return cleared(outcome, older, newer.detected), newer
+
+
+def explained_lately(book: FlagBook, cycle: int) -> bool:
+    """Do the sums still say what an error known already, or one that has gone back, has left in them?"""
+    at = -1 if book.episode is None else book.episode.explained_at
+    return at >= 0 and cycle - at <= LONGEST_QUIET
 
 
 def explains(design: DetectionDesign, book: FlagBook, cycle: int, kinds: tuple[Kind, ...]) -> bool:

@@ -71,8 +71,8 @@ class Episode:
     """The cause is on record as no fault of an instrument."""
     weighed: int = -1
     """Cycle at which gains of transfer functions were last weighed; -1: not yet."""
-    explained: bool = False
-    """An error that was flagged has gone back: what the sums say until they are down comes from that."""
+    explained_at: int = -1
+    """Cycle at which an error known already was seen again, or gone back: that explains the sums for a while; -1: none."""
 
 
 @dataclass(frozen=True, slots=True)

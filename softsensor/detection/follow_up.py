@@ -9,6 +9,7 @@ import numpy as np
 
 from softsensor.detection import state_of_tests as told
 from softsensor.detection.absorbed_faults import (
+    explained_lately,
     explains,
     flagged_once_more,
     opposed,
@@ -157,9 +158,7 @@ def _diagnose(design: DetectionDesign, outcome: FollowUp, tests: TestState, mome
         return outcome if explained else _looked_enough(outcome, tests)
     if moment.cycle < tests.valid_from[0]:
         return outcome
-    if (explained and not opposed(design, book, tests)) or (
-        book.episode is not None and book.episode.explained
-    ):
+    if (explained and not opposed(design, book, tests)) or explained_lately(book, moment.cycle):
         return outcome
     if explained:
         back = went_back(design, outcome, moment, look(design, tests, use, gains=False))
@@ -266,7 +265,7 @@ def _open_shift(
         account.onset_to(moment.time, design.sample_us),
         account.hypotheses,
     )
-    outcome, new = flagged_once_more(outcome, flag)
+    outcome, new = flagged_once_more(outcome, flag, moment.cycle)
     if new is None:
         return outcome
     flag = new

@@ -19,6 +19,7 @@ from softsensor.cycle import UnitDesign, start
 from softsensor.cycle_results import CycleResults
 from softsensor.detection.absorbed_faults import (
     LONGEST_QUIET,
+    explained_lately,
     flagged_once_more,
     quiet_needed,
     remembered,
@@ -28,7 +29,7 @@ from softsensor.detection.absorbed_faults import (
 from softsensor.detection.absorption import settled_innovation
 from softsensor.detection.diagnosis import Likelihoods
 from softsensor.detection.flagged_bias import beyond_by_flag, beyond_by_look
-from softsensor.detection.flags import Exclusion, Flag, FlagBook
+from softsensor.detection.flags import Episode, Exclusion, Flag, FlagBook
 from softsensor.detection.outcomes import FollowUp, Moment
 from softsensor.detection.people import Decision, take
 from softsensor.detection.single_faults import QUIET
@@ -202,7 +203,7 @@ def test_closed_flags_are_forgotten_after_a_day() -> None:
 
 def _once_more(newer: Flag) -> tuple[FollowUp, Flag | None]:
     older = flag_on(TAG, 0.8)
-    return flagged_once_more(FollowUp(FlagBook((older,), absorbed=(older.flag,))), newer)
+    return flagged_once_more(FollowUp(FlagBook((older,), absorbed=(older.flag,))), newer, 10_000)
 
 
 def test_the_same_error_seen_again_opens_no_second_flag() -> None:
@@ -213,6 +214,15 @@ def test_the_same_error_seen_again_opens_no_second_flag() -> None:
         outcome, opened = _once_more(newer)
         assert opened is None
         assert [flag.flag for flag in outcome.book.open] == [f"{TAG} bias"]
+
+
+def test_what_explains_the_sums_does_so_for_a_while() -> None:
+    book = FlagBook(episode=Episode(90, explained_at=100))
+    assert explained_lately(book, 100)
+    assert explained_lately(book, 100 + LONGEST_QUIET)
+    assert not explained_lately(book, 101 + LONGEST_QUIET)
+    assert not explained_lately(FlagBook(episode=Episode(90)), 100)
+    assert not explained_lately(FlagBook(), 100)
 
 
 def test_a_further_error_takes_the_older_flag_s_place_and_adds_to_it() -> None:
