@@ -133,8 +133,8 @@ class DemoScenario:
     drift_rate: float = 0.7
     drift_limit: float = 1.9
     """The largest error that the drift grows to, K."""
-    drift_end: float = 9.0 * HOUR
-    """The thermometer is exchanged; the story has been told by then."""
+    drift_end: float = math.inf
+    """Nobody exchanges the thermometer by itself: it stays left out until somebody at the page puts it back."""
     mistaken_sample: int | None = 2
     """The sample after 2 h 30 min, near the swing's peak ..."""
     mistake: float = -2.25 * HOUR
