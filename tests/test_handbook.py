@@ -39,13 +39,13 @@ from softsensor.detection import (
 from softsensor.errors import SiteFileError
 from softsensor.estimation import gate, lab_results, what_helps
 from softsensor.estimation.noise_tuning import archive_checks, interval_scale, separability
-from softsensor.records import changes, tables
-from softsensor.service import assembly, live, result_tables, tuning
+from softsensor.records import changes, storing, tables
+from softsensor.service import assembly, live, result_tables, smoothed_window, tuning
 from softsensor.service.model_report import model_report
 from softsensor.service.report_tables import ReportTable, knowledge_tables
 from softsensor.service.sheet_tables import sheet_tables
 from softsensor.service.site_file import read_site_file
-from softsensor.web import flag_sheet
+from softsensor.web import flag_sheet, review_period
 
 HANDBOOK = resources.files("softsensor.handbook")
 CHAPTERS = {
@@ -532,3 +532,10 @@ def test_the_keys_of_the_sheet_in_json_are_described() -> None:
         document["prospects"][0]["changes"][0],
     ):
         assert all(f"`{key}`" in text for key in item if key not in ("tag", "unit"))
+
+
+def test_what_the_review_can_look_back_on_is_the_code_s() -> None:
+    assert f"one in {storing.LASTING} cycles" in AFTER
+    assert f"one in {storing.LASTING} cycles" in CHAPTERS["06-records.md"]
+    assert AFTER.count(f"{smoothed_window.LONGEST:,} cycles") == 2
+    assert ", ".join(list(review_period.PERIODS)[:-1]) + " or 7 d" in AFTER

@@ -134,7 +134,7 @@ def flag_answer(
         "out": is_out(site, unit, flag),
         "answerable": is_answerable(site, unit, flag),
         "refused": refused,
-        "review": period_of_flag(flag, newest_us(site, unit)).query,
+        "review": period_of_flag(flag, spec, newest_us(site, unit)).query,
     }
     return pages.page(request, "flag.html", refused.status, unit=unit, flag=flag, comments=comments, **shown)
 

@@ -46,7 +46,7 @@ class Marks:
     x: Sequence[float]
     y: Sequence[float]
     leads: bool = True
-    """Do they stretch the axis without limit? Others do so by the height of the rest at most and stand at its edge."""
+    """Do they always stretch the axis? Others do where that at most trebles it; those further away stand on its edge."""
 
 
 @dataclass(frozen=True)
@@ -116,11 +116,8 @@ def _scale(picture: Picture) -> tuple[float, float]:
     if high - low < 1e-12 * max(1.0, abs(high)):
         low, high = low - 0.5, high + 0.5
     span = high - low
-    low, high = (
-        min([low, *(max(y, low - span) for y in others)]),
-        max([high, *(min(y, high + span) for y in others)]),
-    )
-    return low, high
+    near = [y for y in others if low - span <= y <= high + span]
+    return min([low, *near]), max([high, *near])
 
 
 @dataclass(frozen=True)

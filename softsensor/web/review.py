@@ -23,7 +23,7 @@ from softsensor.web.chart_data import (
     tracks_of,
 )
 from softsensor.web.picture import Marks, Picture, area_of, course_of, svg_of
-from softsensor.web.review_period import Period
+from softsensor.web.review_period import Period, longest_hours
 from softsensor.web.rows import tag_decimals
 from softsensor.web.site import BadForm, Site
 
@@ -133,12 +133,11 @@ def review_of(site: Site, unit: Unit, period: Period, newest_us: int) -> Review:
 
 
 def _refuse_too_long(spec: UnitSpec, period: Period) -> None:
-    cycles = period.hours * 3600.0 / spec.sample_time
-    if cycles > LONGEST:
-        most = int(LONGEST * spec.sample_time / 3600.0)
+    if period.hours > longest_hours(spec):
+        cycles = period.hours * 3600.0 / spec.sample_time
         raise BadForm(
             f"hours: {period.hours:g}; the period is too long: {cycles:.0f} cycles, expected {LONGEST} at most, which are "
-            f"{most} h"
+            f"{int(longest_hours(spec))} h"
         )
 
 

@@ -11,7 +11,7 @@ from fastapi.responses import HTMLResponse, Response
 from softsensor.web.in_use import newest_us
 from softsensor.web.pages import Pages
 from softsensor.web.review import review_of
-from softsensor.web.review_period import PERIODS, USUAL, period_of
+from softsensor.web.review_period import USUAL, period_of, usual_periods
 from softsensor.web.site import Site
 
 
@@ -28,7 +28,8 @@ def review_pages(site: Site, pages: Pages) -> APIRouter:
         period = period_of(until, hours, last)
         with working:
             found = review_of(site, unit, period, last)
-        shown: dict[str, Any] = {"review": found, "period": period, "periods": PERIODS}
+        periods = usual_periods(site.models.spec(site.models.revision_of(unit)))
+        shown: dict[str, Any] = {"review": found, "period": period, "periods": periods}
         return pages.page(request, "review.html", unit=unit, **shown)
 
     return router

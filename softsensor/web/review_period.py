@@ -5,7 +5,9 @@ from __future__ import annotations
 from dataclasses import dataclass
 from datetime import UTC, datetime
 
+from plant_models.specification import UnitSpec
 from softsensor.records.reader import StoredFlag
+from softsensor.service.smoothed_window import LONGEST
 from softsensor.web.site import BadForm
 from softsensor.web.wording import EPOCH, address, iso
 
@@ -54,11 +56,23 @@ def period_of(until: str, hours: str, newest: int) -> Period:
     return Period(_moment(until) if until.strip() else newest, _hours(hours))
 
 
-def period_of_flag(flag: StoredFlag, newest: int | None) -> Period:
+def longest_hours(spec: UnitSpec) -> float:
+    """The longest period that is worked out for a unit."""
+    return LONGEST * spec.sample_time / 3600.0
+
+
+def usual_periods(spec: UnitSpec) -> dict[str, float]:
+    """Those of the PERIODS that are not too long, the shortest at least."""
+    most = max(longest_hours(spec), min(PERIODS.values()))
+    return {label: hours for label, hours in PERIODS.items() if hours <= most}
+
+
+def period_of_flag(flag: StoredFlag, spec: UnitSpec, newest: int | None) -> Period:
     """The shortest of the usual periods with the flagged time in its middle; of an open flag, up to its detection."""
     end = flag.detected_us if flag.cleared_us is None else flag.cleared_us
     span = max(end - flag.onset_us, 0)
-    hours = next((hours for hours in PERIODS.values() if hours * HOUR_US >= AROUND * span), 168.0)
+    usual = usual_periods(spec).values()
+    hours = next((hours for hours in usual if hours * HOUR_US >= AROUND * span), max(usual))
     spare = max(round(hours * HOUR_US) - span, 0)
     middle = end + spare // 2
     return Period(middle if newest is None else min(middle, max(newest, end)), hours)

@@ -24,7 +24,7 @@ from softsensor.service.smoothed_window import SmoothedWindow, smoothed_window
 from softsensor.web.app import create_app
 from softsensor.web.models_in_service import ModelsInService
 from softsensor.web.picture import Area, Marks, Picture, svg_of
-from softsensor.web.review_period import Period, period_of_flag
+from softsensor.web.review_period import Period, period_of_flag, usual_periods
 
 PAGE = f"/units/{UNIT}/review"
 UNTIL, HOURS = NOW - 123 * MINUTE, 5
@@ -182,13 +182,17 @@ def test_the_unit_s_page_and_the_flag_s_page_lead_here(asker: Any) -> None:
 
 def test_a_flag_s_period_holds_its_time_and_ends_with_the_records(recorded: Database) -> None:
     flags = {flag.id: flag for flag in reader.flags_of(recorded, 1)}
-    assert period_of_flag(flags[FLAG_ID], NOW) == Period(NOW, 8.0)
-    spike = period_of_flag(flags[OLD_FLAG_ID], NOW)
+    spec = ModelsInService(recorded).spec(1)
+    assert period_of_flag(flags[FLAG_ID], spec, NOW) == Period(NOW, 8.0)
+    spike = period_of_flag(flags[OLD_FLAG_ID], spec, NOW)
     assert (spike.until_us, spike.hours) == (NOW - 284 * MINUTE + 4 * HOUR, 8.0)
     long = replace(flags[FLAG_ID], onset_us=NOW - 20 * HOUR)
-    assert period_of_flag(long, NOW).hours == 168.0
-    assert period_of_flag(long, NOW).from_us <= long.onset_us
-    assert period_of_flag(replace(long, onset_us=NOW - 18 * HOUR), None).hours == 24.0
+    assert period_of_flag(long, spec, NOW).hours == 168.0
+    assert period_of_flag(long, spec, NOW).from_us <= long.onset_us
+    assert period_of_flag(replace(long, onset_us=NOW - 18 * HOUR), spec, None).hours == 24.0
+    fast = replace(spec, sample_time=2.0)
+    assert list(usual_periods(fast)) == ["8 h", "24 h"]
+    assert period_of_flag(long, fast, NOW).hours == 24.0
 
 
 def test_a_sensor_that_was_left_out_is_left_out_here_and_framed(
@@ -215,7 +219,8 @@ def test_a_band_is_broken_by_gaps_and_a_far_mark_stands_at_the_edge() -> None:
         Marks("lab-left-out", "cross", [1.0, 2.0], [50.0, 1.5], leads=False),
         Marks("lab-used", "circle", [3.0], [2.5]),
     )
-    drawn = ElementTree.fromstring(svg_of(Picture("a", "K", 0.0, 4.0, (), areas=(area,), marks=marks)))
+    picture = Picture("a", "K", 0.0, 4.0, (), areas=(area,), marks=marks)
+    drawn = ElementTree.fromstring(svg_of(picture))
     paths = {
         kind: [p.get("d", "") for p in drawn.iter() if p.get("class") == kind]
         for kind in ("live-band", "lab-left-out", "lab-used")
@@ -225,6 +230,11 @@ def test_a_band_is_broken_by_gaps_and_a_far_mark_stands_at_the_edge() -> None:
     assert far == pytest.approx(12.0)
     top = float(paths["lab-used"][0].split("m")[0].split()[1])
     assert far < top < near
+    assert top < 24.0, "the far mark has not stretched the axis"
+    nearer = replace(marks[0], y=[3.9, 1.5])
+    drawn = ElementTree.fromstring(svg_of(replace(picture, marks=(nearer, marks[1]))))
+    (moved,) = (p.get("d", "") for p in drawn.iter() if p.get("class") == "lab-used")
+    assert float(moved.split("m")[0].split()[1]) > 80.0, "one that is near enough has"
 
 
 def test_one_period_of_two_revisions_says_what_is_smoothed(
