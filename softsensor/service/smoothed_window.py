@@ -8,7 +8,7 @@ lasts or up to the newest cycle.
 
 from __future__ import annotations
 
-from collections.abc import Callable, Sequence
+from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
@@ -27,6 +27,7 @@ from softsensor.records.engine import Database
 from softsensor.records.reader import lab_results_of
 from softsensor.service.checkpoints import FORMAT, unpack_estimator
 from softsensor.service.recording import unpack_decisions
+from softsensor.service.replay import horizon_cycles
 from softsensor.service.smoothed_run import Known, Smoother
 
 LONGEST = 200_000
@@ -102,7 +103,7 @@ def smoothed_window(
             chosen, empty, (known_at, NEWEST), known_at, (_no_state(state, stretch, begin),)
         )
     labs, remarks = _labs(database, unit_id, design, stretch)
-    book, late = _book(database, unit_id, design, stretch), _late(database, unit_id, begin, last)
+    book, late = _book(database, unit_id, design, stretch), _late(database, unit_id, design, stretch)
     found = _smoothed(design, stretch, Known(before, stretch.first, labs, book, late), cycles)
     remarks = [*_part_only(stretch, cycles), *remarks]
     if chosen != in_service:
@@ -235,7 +236,10 @@ def _book(database: Database, unit_id: int, design: UnitDesign, stretch: _Stretc
     )
 
 
-def _late(database: Database, unit_id: int, first: int, last: int) -> tuple[LateReadings, ...]:
-    """What cycles ``first`` to ``last`` have learnt of earlier ones, in the order in which it was learnt."""
-    found: Sequence[bytes] = series.decided(database, unit_id, first, last)
+def _late(
+    database: Database, unit_id: int, design: UnitDesign, stretch: _Stretch
+) -> tuple[LateReadings, ...]:
+    """What came late for the stretch's cycles, in the order in which it was learnt; nothing older than a run remembers."""
+    remembered = horizon_cycles(design.model.spec) + 2 * CHUNK
+    found = series.decided(database, unit_id, stretch.first, stretch.stop + remembered)
     return tuple(item for blob in found for item in unpack_decisions(blob) if isinstance(item, LateReadings))

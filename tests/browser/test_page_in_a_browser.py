@@ -253,3 +253,24 @@ def test_the_models_page_opens_from_the_units_page_and_fits_a_narrow_screen(
     # the browser lays the page out anew some time after it has been told the size
     page.wait_for_function("document.documentElement.scrollWidth <= 400")
     browser_page.assert_quiet()
+
+
+def test_the_review_opens_steps_and_prints_within_a_sheet(site: Served, browser_page: Watched) -> None:
+    page = browser_page.page
+    opened(site, page)
+    page.get_by_role("link", name="Review a past period").click(timeout=60_000)
+    expect(page.get_by_role("heading", name=re.compile("^Review of"))).to_be_visible(timeout=60_000)
+    page.get_by_label("Up to (UTC)").fill("2026-12-01 12:50:00")
+    page.get_by_role("button", name="Go").click()
+    expect(page.get_by_text("Smoothed less live")).to_be_visible(timeout=60_000)
+    expect(page.locator("svg.still path.smoothed")).to_have_count(1)
+    page.get_by_role("link", name="Earlier").click()
+    expect(page.get_by_label("Up to (UTC)")).to_have_value("2026-12-01 04:50:00", timeout=60_000)
+    page.go_back()
+    page.set_viewport_size({"width": 400, "height": 800})
+    page.wait_for_function("document.documentElement.scrollWidth <= 400")
+    page.emulate_media(media="print")
+    page.set_viewport_size({"width": 718, "height": 1000})
+    page.wait_for_function("document.documentElement.scrollWidth <= 718")
+    expect(page.locator(".review-bar")).to_be_hidden()
+    browser_page.assert_quiet()
