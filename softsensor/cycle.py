@@ -13,12 +13,11 @@ import numpy as np
 from numpy.typing import NDArray
 
 from plant_models.errors import Problem
-from plant_models.model_scale import from_model, one_to_model, slopes, to_model
-from plant_models.plant_model import PlantModel
-from plant_models.specification import Range
-from softsensor.compiled_cycle import BlockInputs, BlockOutputs, empty_outputs, run_block
-from softsensor.cycle_results import CycleResults, Digest, flag_bytes, outside, result_rows
-from softsensor.detection.detection_design import DetectionDesign, sensors_in_use
+from plant_models.model_scale import from_model
+from softsensor.block_arrays import BlockInputs, BlockOutputs, empty_outputs, rows_of_inputs, rows_of_outputs
+from softsensor.compiled_cycle import run_block
+from softsensor.cycle_results import CycleResults, Digest, digest_of, flag_bytes, outside
+from softsensor.detection.detection_design import sensors_in_use
 from softsensor.detection.flagged_bias import as_diagnosed
 from softsensor.detection.flags import Beginning, FlagBook
 from softsensor.detection.follow_up import follow_up
@@ -26,58 +25,49 @@ from softsensor.detection.outcomes import FollowUp, Moment
 from softsensor.detection.people import Decision, Taken, ended, next_end, take
 from softsensor.detection.plant_states import StateChange, change_state
 from softsensor.detection.state_of_tests import TestState, initial_tests
-from softsensor.estimation.kernel import (
-    CHUNK,
-    EstimatorState,
-    Floats,
-    Ints,
-    Kernel,
-    empty_states,
-    initial_state,
-    state_of,
+from softsensor.estimation.kernel import CHUNK, EstimatorState, Floats, empty_states, initial_state, state_of
+from softsensor.layout import (
+    BEYOND_ABOVE,
+    BEYOND_BELOW,
+    LabAtCycle,
+    Laid,
+    UnitDesign,
+    block_inputs,
+    laid_out,
+    usable,
+    usable_inputs,
+    with_book,
 )
 from softsensor.published import limits_in_model_scale
-from softsensor.readings_of_cycle import CycleQuality, CycleReadings
+from softsensor.readings_of_cycle import CycleReadings
 
-UNCERTAIN_VARIANCE = 9.0
-"""An Uncertain reading counts as one with three times the noise_sd."""
-BEYOND_BELOW, BEYOND_ABOVE = 0.025, 0.0625
-"""Share of the span below and above a sensor's range beyond which a reading is a failed instrument's, not a reading:
-the failure limits 3.6 mA and 21 mA of a 4-20 mA signal (NAMUR NE 43; from memory)."""
+__all__ = [
+    "BEYOND_ABOVE",
+    "BEYOND_BELOW",
+    "REJECTED",
+    "CycleState",
+    "LabAtCycle",
+    "UnitDesign",
+    "UnsoundArithmetic",
+    "block_inputs",
+    "decide",
+    "doubts_of",
+    "estimate_status",
+    "rerun",
+    "run_cycles",
+    "run_laid",
+    "start",
+    "unit_tests",
+    "usable",
+    "usable_inputs",
+]
+
 REJECTED = 2
 """After so many laboratory results in a row that do not fit, the estimate is in doubt, not the laboratory."""
 
 
 class UnsoundArithmetic(Problem):
     """An innovation's variance is not positive: nothing is repaired, the unit stops."""
-
-
-@dataclass(frozen=True)
-class UnitDesign:
-    """One unit's model, its kernel and its tests, made once."""
-
-    model: PlantModel
-    kernel: Kernel
-    detection: DetectionDesign
-    fresh: Ints
-    limits: tuple[Floats, Floats]
-    """Lowest and highest value of each sensor that is still a reading."""
-    scheduled: tuple[tuple[int, Range], ...] = ()
-    """Inputs by which transfer functions go, each with the range that their schedules cover."""
-
-
-@dataclass(frozen=True)
-class LabAtCycle:
-    """A laboratory result where it counts: cycle, index of its estimate, value in engineering units, variance in
-    model scale; its two times (UTC microseconds) tell whether a later value of the same sample takes its place.
-    """
-
-    cycle: int
-    estimate: int
-    value: float
-    variance: float
-    sampled: int
-    reported: int
 
 
 @dataclass(frozen=True)
@@ -116,64 +106,12 @@ def start(design: UnitDesign, first_cycle: int = 0) -> CycleState:
     return CycleState(initial_state(design.model, design.kernel), tests, book, Digest(), none)
 
 
-def usable(design: UnitDesign, readings: CycleReadings) -> tuple[Floats, Floats]:
-    """Sensor values with what is no reading taken out, and the factor on each one's noise variance."""
-    low, high = design.limits
-    bad = readings.y_quality > CycleQuality.UNCERTAIN
-    y = np.where(bad | (readings.y < low) | (readings.y > high), np.nan, readings.y)
-    scale = np.where(readings.y_quality == CycleQuality.UNCERTAIN, UNCERTAIN_VARIANCE, 1.0)
-    return np.ascontiguousarray(y), np.ascontiguousarray(scale)
-
-
-def usable_inputs(design: UnitDesign, readings: CycleReadings) -> Floats:
-    """Input values in model scale."""
-    return np.ascontiguousarray(to_model(design.model.spec.inputs, readings.u), dtype=np.float64)
-
-
-def in_use(book: FlagBook, first: int, cycles: int, n_sensors: int) -> Ints:
-    """(cycles, n_sensors): 0 where a sensor is left out of the estimate."""
-    use = np.ones((cycles, n_sensors), dtype=np.int64)
-    for item in book.exclusions:
-        start = max(item.since - first, 0)
-        stop = cycles if item.until is None else min(max(item.until - first, 0), cycles)
-        use[start:stop, item.sensor] = 0
-    return use
-
-
-def block_inputs(
-    design: UnitDesign, book: FlagBook, first: int, readings: CycleReadings, labs: tuple[LabAtCycle, ...]
-) -> BlockInputs:
-    """Lay readings and laboratory results out for the compiled loop."""
-    raw, scale = usable(design, readings)
-    sensors, estimates = design.model.spec.sensors, design.model.spec.estimates
-    y = np.ascontiguousarray(to_model(sensors, raw))
-    return BlockInputs(
-        usable_inputs(design, readings),
-        y,
-        raw,
-        slopes(sensors, raw),
-        scale,
-        in_use(book, first, len(readings), design.kernel.n_sensors),
-        design.fresh,
-        np.any(readings.u_quality > CycleQuality.UNCERTAIN, axis=1).astype(np.int64),
-        _resting(book, first, len(readings)),
-        np.array([lab.cycle - first for lab in labs], dtype=np.int64),
-        np.array([design.kernel.n_sensors + lab.estimate for lab in labs], dtype=np.int64),
-        np.array([one_to_model(estimates[lab.estimate], lab.value) for lab in labs], dtype=np.float64),
-        np.array([lab.variance for lab in labs], dtype=np.float64),
-    )
-
-
-def _resting(book: FlagBook, first: int, cycles: int) -> Ints:
-    """(cycles,) 1 where the unit's tests rest."""
-    if book.rest is None and not book.states:
-        return np.zeros(cycles, dtype=np.int64)
-    return np.array([book.resting(first + k) for k in range(cycles)], dtype=np.int64)
+Ran = tuple[CycleState, CycleResults, tuple[tuple[int, EstimatorState], ...]]
 
 
 def run_cycles(
     design: UnitDesign, state: CycleState, readings: CycleReadings, labs: tuple[LabAtCycle, ...] = ()
-) -> tuple[CycleState, CycleResults, tuple[tuple[int, EstimatorState], ...]]:
+) -> Ran:
     """Run cycles up to the end of ``readings``, to the first one at which a test has news, that one included, or to
     the last one before something that a person decided ends.
 
@@ -182,12 +120,17 @@ def run_cycles(
     :return: state and results, and the estimator's state before each of these cycles that begins a chunk, with its number.
     :raises UnsoundArithmetic: a variance is not positive.
     """
-    first, n = state.next_cycle, min(len(readings), next_end(state.book, state.next_cycle))
+    return run_laid(design, state, laid_out(design, readings), labs)
+
+
+def run_laid(design: UnitDesign, state: CycleState, laid: Laid, labs: tuple[LabAtCycle, ...] = ()) -> Ran:
+    """As :func:`run_cycles`, for cycles that are laid out; the results share their memory."""
+    first, n = state.next_cycle, min(len(laid), next_end(state.book, state.next_cycle))
+    times = laid.readings.times
     estimator, tests = state.estimator.copy(), state.tests.copy()
-    begun = ended(design.detection, state.book, tests, first, int(readings.times[0]))
-    data = block_inputs(design, begun.book, first, readings, labs)
-    data = data._replace(u=data.u[:n])
-    out = empty_outputs(n, design.kernel, len(labs))
+    begun = ended(design.detection, state.book, tests, first, int(times[0]))
+    data = with_book(design, rows_of_inputs(laid.data, 0, n), begun.book, first, labs)
+    out = rows_of_outputs(laid.out, 0, n, len(labs))
     known = design.detection.standing(sensors_in_use(design.detection, begun.book, tests, first))
     starts = range(first + -first % CHUNK, first + n, CHUNK)
     kept = empty_states(estimator, len(starts))
@@ -198,24 +141,16 @@ def run_cycles(
         )
     outcome = FollowUp(begun.book)
     if done and out.news[done - 1]:
-        time, news = int(readings.times[done - 1]), int(out.news[done - 1])
-        moment = Moment(first + done - 1, time, out.events[done - 1], news)
+        moment = Moment(first + done - 1, int(times[done - 1]), out.events[done - 1], int(out.news[done - 1]))
         outcome = follow_up(design.detection, begun.book, tests, moment)
-    results = _results(design, first, done, readings, data, out)
-    doubts = doubts_of(design, begun.book, first, state.rejected)
-    sensors = design.model.spec.sensors
     results = replace(
-        results,
-        beyond=as_diagnosed(sensors, begun.book, first, results.beyond),
-        settling=results.settling * np.int8(2 if begun.book.unsteady(first) else 1),
-        doubts=np.tile(np.array(doubts, dtype=object), (done, 1)),
-        status=results.status | np.array([bool(text) for text in doubts], dtype=np.int8),
+        _results(design, begun.book, state, done, laid, (data, out)),
         flags=outcome.changes,
         notes=begun.notes + outcome.notes,
         rests=begun.rests + outcome.rests,
         rewind=outcome if outcome.exclusion is not None else None,
     )
-    digest = state.digest.add(result_rows(results), b"".join(flag_bytes(flag) for flag in results.flags))
+    digest = digest_of(state.digest, results)
     states = tuple((at, state_of(kept, m)) for m, at in enumerate(starts) if at < first + done)
     return CycleState(estimator, tests, outcome.book, digest, state.rejected), results, states
 
@@ -286,62 +221,52 @@ def rerun(
 
 def _results(
     design: UnitDesign,
-    first: int,
+    book: FlagBook,
+    before: CycleState,
     done: int,
-    readings: CycleReadings,
-    data: BlockInputs,
-    out: BlockOutputs,
+    laid: Laid,
+    arrays: tuple[BlockInputs, BlockOutputs],
 ) -> CycleResults:
+    """The first ``done`` cycles as results; ``before``: the state before them."""
+    (data, out), first = arrays, before.next_cycle
     scale = np.array([item.interval_scale for item in design.model.spec.estimates])
-    estimate = out.estimate[:done]
-    in_block = data.lab_at < done
+    doubts = doubts_of(design, book, first, before.rejected)
+    estimate, in_block = out.estimate[:done], data.lab_at < done
+    doubtful = laid.doubtful[:done] | (out.settling[:done] != 0)
+    if book.exclusions:
+        doubtful |= np.any(data.use[:done] == 0, axis=1)
+    status = estimate_status(design, estimate, doubtful)
     return CycleResults(
         first,
-        readings.times[:done],
-        np.where(np.isfinite(out.innovation[:done]), readings.y[:done], np.nan),
+        laid.readings.times[:done],
+        laid.reading[:done],
         estimate,
         out.estimate_sd[:done] * scale,
-        estimate_status(design, readings, estimate, (data.use[:done] == 0, out.settling[:done] != 0)),
+        status | np.array([bool(text) for text in doubts], dtype=np.int8),
         out.predicted[:done],
         out.innovation[:done],
         out.innovation_sd[:done],
-        out.used[:done].astype(np.int8),
-        (data.use[:done] == 0).astype(np.int8),
-        np.full((done, design.kernel.n_estimates), "", dtype=object),
-        out.settling[:done].astype(np.int8),
+        out.used[:done],
+        (data.use[:done] == 0).view(np.int8),
+        np.broadcast_to(np.array(doubts, dtype=object), (done, len(doubts))),
+        out.settling[:done] * np.int8(2 if book.unsteady(first) else 1),
         out.high[:done],
         out.low[:done],
-        out.beyond[:done],
+        as_diagnosed(design.model.spec.sensors, book, first, out.beyond[:done]),
         out.lab_predicted[in_block],
         out.lab_sd[in_block],
     )
 
 
-def estimate_status(
-    design: UnitDesign,
-    readings: CycleReadings,
-    estimate: Floats,
-    doubts: tuple[NDArray[np.bool_], NDArray[np.bool_]],
-) -> NDArray[np.int8]:
-    """1 (Uncertain) where an input is doubtful or was missing, something is outside its validated range or a schedule, a
-    sensor is left out, or an estimate lies beyond its physical limits.
-
-    :param doubts: which sensors are left out (N, n_sensors); whether inputs are or were missing (N,).
+def estimate_status(design: UnitDesign, estimate: Floats, doubtful: NDArray[np.bool_]) -> NDArray[np.int8]:
+    """(N, n_estimates) 1 (Uncertain) where all are ``doubtful`` (N,), or one is outside its validated range or its physical
+    limits.
     """
-    n, spec = len(estimate), design.model.spec
-    left_out, settling = doubts
-    doubtful = (
-        np.any(readings.u_quality[:n] != CycleQuality.GOOD, axis=1) | np.any(left_out, axis=1) | settling
-    )
-    for j, item in enumerate(spec.inputs):
-        if item.validated_range is not None:
-            doubtful |= outside(readings.u[:n, j], item.validated_range)
-    for j, covered in design.scheduled:
-        doubtful |= outside(readings.u[:n, j], covered)
-    status = np.repeat(doubtful[:, None], len(spec.estimates), axis=1)
-    for e, estimated in enumerate(spec.estimates):
+    estimates = design.model.spec.estimates
+    status = np.repeat(doubtful[:, None], len(estimates), axis=1)
+    for e, estimated in enumerate(estimates):
         if estimated.validated_range is not None:
             status[:, e] |= outside(from_model(estimated, estimate[:, e]), estimated.validated_range)
         if estimated.limits is not None or estimated.transform is not None:
             status[:, e] |= outside(estimate[:, e], limits_in_model_scale(estimated))
-    return status.astype(np.int8)
+    return status.view(np.int8)

@@ -17,6 +17,8 @@ from softsensor.readings_of_cycle import CycleReadings
 
 DIGEST_CHUNK = 64
 """Cycles per link of the digest's chain."""
+PACKED = 1024
+"""Cycles whose bytes are put side by side at a time: they stay in the processor's cache."""
 
 
 @dataclass(frozen=True)
@@ -32,9 +34,14 @@ class Digest:
         chain, pending, row = self.chain, self.pending, 0
         while row < len(rows):
             stop = min(row + DIGEST_CHUNK - (self.rows + row) % DIGEST_CHUNK, len(rows))
-            pending += rows[row:stop].tobytes() + (tail if stop == len(rows) else b"")
+            after = tail if stop == len(rows) else b""
             if (self.rows + stop) % DIGEST_CHUNK == 0:
-                chain, pending = hashlib.sha256(chain + pending).digest(), b""
+                link = hashlib.sha256(chain + pending)
+                link.update(rows[row:stop].data)
+                link.update(after)
+                chain, pending = link.digest(), b""
+            else:
+                pending += rows[row:stop].tobytes() + after
             row = stop
         return Digest(chain, pending, self.rows + len(rows))
 
@@ -122,9 +129,18 @@ def outside(values: Floats, limits: tuple[float, float] | None) -> NDArray[np.bo
     return (values < limits[0]) | (values > limits[1])
 
 
-def result_rows(results: CycleResults) -> NDArray[np.uint8]:
-    """Every result of each cycle as bytes (N, bytes), for the digest."""
-    parts = [
+def digest_of(before: Digest, results: CycleResults) -> Digest:
+    """The digest after these cycles and what was flagged at the last of them."""
+    tail, n, digest = b"".join(flag_bytes(flag) for flag in results.flags), len(results), before
+    for row in range(0, n, PACKED):
+        stop = min(row + PACKED, n)
+        digest = digest.add(result_rows(results, row, stop), tail if stop == n else b"")
+    return digest
+
+
+def result_rows(results: CycleResults, start: int, stop: int) -> NDArray[np.uint8]:
+    """Every result of cycles start to stop as bytes (cycles, bytes), for the digest."""
+    parts: list[NDArray[Any]] = [
         results.times.reshape(-1, 1),
         results.estimate,
         results.sd,
@@ -138,7 +154,8 @@ def result_rows(results: CycleResults) -> NDArray[np.uint8]:
         results.beyond,
     ]
     return np.concatenate(
-        [np.ascontiguousarray(part).view(np.uint8).reshape(len(results), -1) for part in parts], axis=1
+        [np.ascontiguousarray(part[start:stop]).view(np.uint8).reshape(stop - start, -1) for part in parts],
+        axis=1,
     )
 
 

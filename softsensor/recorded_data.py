@@ -40,6 +40,7 @@ from softsensor.service.result_tables import (
     innovation_table,
     lab_table,
     smoothed_table,
+    words_of,
 )
 from softsensor.service.resuming import recorded_cycles
 from softsensor.service.smoothed_run import SmoothedRun
@@ -204,10 +205,11 @@ def replay(
 
 def _joined(tables: list[pd.DataFrame], columns: tuple[str, ...]) -> pd.DataFrame:
     joined = tables[0] if len(tables) == 1 else pd.concat(tables, ignore_index=True)
-    joined = joined[list(columns)]
+    if tuple(joined.columns) != columns:
+        joined = joined[list(columns)]
     for name in ("tag", "status"):
         if name in joined:
-            joined[name] = joined[name].astype(str)
+            joined[name] = words_of(joined[name].cat.codes.to_numpy(), joined[name].cat.categories)
     return joined
 
 

@@ -25,7 +25,7 @@ from typing import NamedTuple
 import numpy as np
 
 from softsensor.detection.signatures import Hypothesis
-from softsensor.estimation.compiling import allocating, uncounted
+from softsensor.estimation.compiling import allocating, inlined, inner, uncounted
 from softsensor.estimation.elementary import error_function, exponential, logarithm
 from softsensor.estimation.kernel import Floats, Ints
 
@@ -121,7 +121,7 @@ def standing(
     )
 
 
-@uncounted
+@inner
 def _signature(table: Floats, ramp: Ints, j: int, i: int, h: int) -> float:
     """Of block j for sensor i; beyond the table a step stays as it was, a ramp goes on."""
     last = table.shape[0] - 1
@@ -132,7 +132,7 @@ def _signature(table: Floats, ramp: Ints, j: int, i: int, h: int) -> float:
     return float(table[last, i, h] + (j - last) * (table[last, i, h] - table[last - 1, i, h]))
 
 
-@uncounted
+@inner
 def _add_block(known: Standing, evidence: Evidence, first: int) -> None:
     """The block that began at cycle ``first`` into the sums of every onset."""
     m, last = len(known.tolerance), known.table.shape[0] - 1
@@ -191,7 +191,7 @@ def upper_tail(x: float) -> float:
     return half if x >= 0.0 else 1.0 - half
 
 
-@uncounted
+@inner
 def _span(evidence: Evidence, c: int, now: int) -> float:
     """Cycles that an onset stands for: half-way to its neighbours."""
     onset = evidence.onset
@@ -242,7 +242,7 @@ def weigh_onsets(known: Standing, evidence: Evidence, now: int) -> None:
         evidence.beyond[i] = beyond[i] / total if known.use[i] != 0 else np.nan
 
 
-@uncounted
+@inlined
 def _whiten_into(known: Standing, innovation: Floats, block: Floats) -> None:
     m = len(known.tolerance)
     for i in range(m):
@@ -267,7 +267,7 @@ def _forget(evidence: Evidence) -> None:
     evidence.beyond[:] = np.nan
 
 
-@uncounted
+@inner
 def _weigh_left_out(known: Standing, evidence: Evidence, seen: Seen, cycle: int) -> None:
     """A sensor that is not in use: its mean difference from the prediction without it, over the last LATELY cycles."""
     window = seen.ring.shape[0]
@@ -288,8 +288,8 @@ def _weigh_left_out(known: Standing, evidence: Evidence, seen: Seen, cycle: int)
         evidence.beyond[i] = upper_tail((limit - mean) / sd) + upper_tail((limit + mean) / sd)
 
 
-@uncounted
-def follow_conformance(
+@inlined
+def follow_cycle(
     known: Standing, evidence: Evidence, seen: Seen, cycle: int, valid_from: int, resting: bool
 ) -> None:
     """One cycle. What comes before ``valid_from`` and while the tests rest does not count; a rest forgets everything."""
@@ -310,3 +310,11 @@ def follow_conformance(
         if (cycle // BLOCK) % LOOK_EVERY_BLOCKS == LOOK_EVERY_BLOCKS - 1:
             weigh_onsets(known, evidence, cycle + 1)
             _weigh_left_out(known, evidence, seen, cycle)
+
+
+@uncounted
+def follow_conformance(
+    known: Standing, evidence: Evidence, seen: Seen, cycle: int, valid_from: int, resting: bool
+) -> None:
+    """:func:`follow_cycle`, to be called from Python."""
+    follow_cycle(known, evidence, seen, cycle, valid_from, resting)

@@ -20,7 +20,7 @@ from softsensor.detection.state_of_tests import (
     TestDesign,
     TestState,
 )
-from softsensor.estimation.compiling import uncounted
+from softsensor.estimation.compiling import inlined
 from softsensor.estimation.kernel import Floats, Ints
 
 SETTLING_SHARE = 3
@@ -28,7 +28,7 @@ SETTLING_SHARE = 3
 the inputs did meanwhile is not in the prediction. No longer, though, than until it shows no more in the innovations."""
 
 
-@uncounted
+@inlined
 def _settle(design: TestDesign, state: TestState, doubtful: int) -> int:
     """Rest the tests of innovations while inputs are missing and for a while after; returns the news."""
     now, until = state.cycle[0], state.settling_until[0]
@@ -49,7 +49,7 @@ def _settle(design: TestDesign, state: TestState, doubtful: int) -> int:
     return 0
 
 
-@uncounted
+@inlined
 def _rest(state: TestState, i: int) -> None:
     state.high[i] = 0.0
     state.low[i] = 0.0
@@ -61,7 +61,7 @@ def _rest(state: TestState, i: int) -> None:
     state.older_z[i] = np.nan
 
 
-@uncounted
+@inlined
 def _cut_off(y: Floats, doubtful: int) -> bool:
     """Inputs and all sensors missing together: the connection or the service was away, no sensor is lost."""
     if doubtful == 0:
@@ -72,7 +72,7 @@ def _cut_off(y: Floats, doubtful: int) -> bool:
     return True
 
 
-@uncounted
+@inlined
 def test_cycle(
     design: TestDesign,
     state: TestState,

@@ -29,7 +29,7 @@ from softsensor.detection.signatures import (
     whiten,
 )
 from softsensor.detection.state_of_tests import TestState
-from softsensor.estimation.compiling import uncounted
+from softsensor.estimation.compiling import inner
 from softsensor.estimation.kernel import Floats, Ints, Kernel
 
 BLOCK = 32
@@ -55,7 +55,7 @@ def long_memory(model: PlantModel) -> LongMemory | None:
     return LongMemory(hypotheses(model, BLOCK * KEPT), KEPT) if model.spec.patient else None
 
 
-@uncounted
+@inner
 def remember(state: TestState, slot: int) -> None:
     """Add the cycle's innovations, in ``slot`` of the ring, to the block under way; at its end the block is kept."""
     ends = (state.cycle[0] + 1) % BLOCK == 0

@@ -13,7 +13,7 @@ from softsensor.detection.state_of_tests import (
     TestDesign,
     TestState,
 )
-from softsensor.estimation.compiling import uncounted
+from softsensor.estimation.compiling import inlined
 from softsensor.estimation.elementary import error_function
 
 MIN_REPEATS = 10
@@ -26,7 +26,7 @@ WARM_UP = 200
 """Readings before the share of equal neighbours says anything about a sensor's resolution."""
 
 
-@uncounted
+@inlined
 def test_stuck(design: TestDesign, state: TestState, i: int, value: float, slope: float) -> int:
     """A run of equal readings is judged by how often this very sensor repeats itself, and by its resolution.
 
@@ -60,7 +60,7 @@ def test_stuck(design: TestDesign, state: TestState, i: int, value: float, slope
     return event
 
 
-@uncounted
+@inlined
 def test_lost(design: TestDesign, state: TestState, i: int, missing: bool) -> int:
     state.missing[i] = state.missing[i] + 1 if missing else 0
     if state.lost[i] == 0 and state.missing[i] > design.lost_after[i]:
@@ -72,7 +72,7 @@ def test_lost(design: TestDesign, state: TestState, i: int, missing: bool) -> in
     return 0
 
 
-@uncounted
+@inlined
 def test_spike(design: TestDesign, state: TestState, i: int, z: float) -> int:
     """One reading far out between neighbours that agree, seen one cycle later; the diagnosis does not get to see it.
 

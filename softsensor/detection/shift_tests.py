@@ -17,7 +17,7 @@ from softsensor.detection.state_of_tests import (
     TestDesign,
     TestState,
 )
-from softsensor.estimation.compiling import uncounted
+from softsensor.estimation.compiling import inlined
 from softsensor.estimation.kernel import Floats
 
 CAP = 2.0
@@ -26,7 +26,7 @@ DOWN = 0.5
 """A test that was up is down again below this share of its interval."""
 
 
-@uncounted
+@inlined
 def test_shift(design: TestDesign, state: TestState, i: int, z: float) -> int:
     """One cycle of a sensor's whole bank; the sensor is up while any pair of it is."""
     top, upward = 0.0, True
@@ -49,7 +49,7 @@ def test_shift(design: TestDesign, state: TestState, i: int, z: float) -> int:
     return 0
 
 
-@uncounted
+@inlined
 def test_spread(design: TestDesign, state: TestState, i: int, z: float) -> int:
     """The noise test, on differences of two readings in turn that share none: a shift of the mean does not reach them."""
     if state.held[i] != state.held[i]:
@@ -69,7 +69,7 @@ def test_spread(design: TestDesign, state: TestState, i: int, z: float) -> int:
     return 0
 
 
-@uncounted
+@inlined
 def test_joint(design: TestDesign, state: TestState, squares: float) -> int:
     """All innovations together, whitened: does the model as a whole still fit? A cycle without a number is passed over."""
     if squares != squares:
@@ -84,7 +84,7 @@ def test_joint(design: TestDesign, state: TestState, squares: float) -> int:
     return 0
 
 
-@uncounted
+@inlined
 def highest_share(sums: Floats, interval: Floats) -> float:
     """The furthest of a sensor's sums (n_pairs,), as a share of its decision interval; above 1 the test is up."""
     top = 0.0

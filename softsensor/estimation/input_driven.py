@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from softsensor.estimation.compiling import uncounted
+from softsensor.estimation.compiling import inlined, uncounted
 from softsensor.estimation.kernel import EstimatorState, Floats, Kernel
 
 
@@ -26,7 +26,7 @@ def accept_inputs(kernel: Kernel, state: EstimatorState, u: Floats) -> None:
     state.head[0] = head
 
 
-@uncounted
+@inlined
 def past_column(head: int, delay: int, ring: int) -> int:
     """Column of u(k - delay) in the ring of past inputs; 0 <= delay < ring."""
     column = head - delay

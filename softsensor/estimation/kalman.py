@@ -11,8 +11,8 @@ from __future__ import annotations
 
 import numpy as np
 
-from softsensor.estimation.compiling import uncounted
-from softsensor.estimation.kernel import Floats, Kernel
+from softsensor.estimation.compiling import inlined, inner, uncounted
+from softsensor.estimation.kernel import Floats, Ints, Kernel
 
 ROUNDING = 1e-12
 """What rounding alone may leave of a variance that is zero, as a share of the largest state's variance."""
@@ -27,22 +27,36 @@ def row_mean(kernel: Kernel, x: Floats, row: int) -> float:
     return total
 
 
-@uncounted
+@inlined
+def _combine_rows(P: Floats, idx: Ints, val: Floats, entries: tuple[int, int], v: Floats) -> None:
+    """v = sum of val[e] P[idx[e]] over the entries, in order from zero; two at a time go over ``v`` once."""
+    e, stop = entries
+    if e + 2 <= stop:
+        one, other, a, b = P[idx[e]], P[idx[e + 1]], val[e], val[e + 1]
+        for k in range(len(v)):
+            v[k] = (0.0 + a * one[k]) + b * other[k]
+        e += 2
+    else:
+        for k in range(len(v)):
+            v[k] = 0.0
+    while e < stop:
+        one, a = P[idx[e]], val[e]
+        for k in range(len(v)):
+            v[k] += a * one[k]
+        e += 1
+
+
+@inner
 def row_covariance(kernel: Kernel, P: Floats, row: int, v: Floats) -> float:
     """v = P C_row' into ``v``; returns C_row P C_row'."""
     first, stop, total = kernel.c_ptr[row], kernel.c_ptr[row + 1], 0.0
-    for i in range(len(v)):
-        v[i] = 0.0
-    for e in range(first, stop):
-        of_entry, value = P[kernel.c_idx[e]], kernel.c_val[e]
-        for i in range(len(v)):
-            v[i] += value * of_entry[i]
+    _combine_rows(P, kernel.c_idx, kernel.c_val, (first, stop), v)
     for e in range(first, stop):
         total += kernel.c_val[e] * v[kernel.c_idx[e]]
     return total
 
 
-@uncounted
+@inner
 def row_variance(kernel: Kernel, P: Floats, row: int) -> float:
     """C_row P C_row' alone, the same bits as from :func:`row_covariance`."""
     first, stop, total = kernel.c_ptr[row], kernel.c_ptr[row + 1], 0.0
@@ -54,7 +68,7 @@ def row_variance(kernel: Kernel, P: Floats, row: int) -> float:
     return total
 
 
-@uncounted
+@inner
 def unless_rounding(kernel: Kernel, P: Floats, row: int, variance: float) -> float:
     """The variance of an output without noise; 0 where a true zero has come out below zero by rounding alone.
 
@@ -71,7 +85,7 @@ def unless_rounding(kernel: Kernel, P: Floats, row: int, variance: float) -> flo
     return 0.0 if variance >= -ROUNDING * weight * weight * largest else variance
 
 
-@uncounted
+@inner
 def output_variance(kernel: Kernel, P: Floats, row: int, v: Floats) -> float:
     """C_row P C_row' of an output without noise, and P C_row' into ``v``; a zero that rounding made negative is 0."""
     return unless_rounding(kernel, P, row, row_covariance(kernel, P, row, v))
@@ -103,24 +117,25 @@ def correct(
     return float(s)
 
 
-@uncounted
+@inner
 def predict_into(kernel: Kernel, x: Floats, P: Floats, v: Floats, M: Floats) -> None:
     """x = A x;  M = A P A' + diag(q), exactly symmetric, with ``v`` (n,) as work space.
 
     States that A only moves (shift registers, offsets) are moved: their entries of P are copied. Only the other rows
     are multiplied.
     """
-    _predict_mean(kernel, x, v)
+    predict_mean(kernel, x, v)
     _move(kernel, P, M)
+    mix(kernel, P, v, M)
+
+
+@inner
+def mix(kernel: Kernel, P: Floats, v: Floats, M: Floats) -> None:
+    """The rows and columns of A P A' that are not only moved, and diag(q); reads the rows of P that these take in."""
     mixed = kernel.mixed
     for a in range(len(mixed)):
         i = mixed[a]
-        for k in range(len(v)):
-            v[k] = 0.0
-        for e in range(kernel.a_ptr[i], kernel.a_ptr[i + 1]):
-            of_entry, value = P[kernel.a_idx[e]], kernel.a_val[e]
-            for k in range(len(v)):
-                v[k] += value * of_entry[k]
+        _combine_rows(P, kernel.a_idx, kernel.a_val, (kernel.a_ptr[i], kernel.a_ptr[i + 1]), v)
         for b in range(len(kernel.moved_start)):
             start, stop = kernel.moved_start[b], kernel.moved_stop[b]
             before, row, column = v[start + kernel.moved_from[b] :], M[i, start:stop], M[start:stop, i]
@@ -138,7 +153,7 @@ def predict_into(kernel: Kernel, x: Floats, P: Floats, v: Floats, M: Floats) -> 
         M[i, i] += kernel.q[i]
 
 
-@uncounted
+@inner
 def _move(kernel: Kernel, P: Floats, M: Floats) -> None:
     """Copy what is only moved; columns in between are written over afterwards."""
     for a in range(len(kernel.moved_start)):
@@ -151,8 +166,9 @@ def _move(kernel: Kernel, P: Floats, M: Floats) -> None:
                     after[k] = before[k]
 
 
-@uncounted
-def _predict_mean(kernel: Kernel, x: Floats, v: Floats) -> None:
+@inner
+def predict_mean(kernel: Kernel, x: Floats, v: Floats) -> None:
+    """x = A x, with ``v`` (n,) as work space."""
     for i in range(len(v)):
         total = 0.0
         for e in range(kernel.a_ptr[i], kernel.a_ptr[i + 1]):
@@ -162,11 +178,11 @@ def _predict_mean(kernel: Kernel, x: Floats, v: Floats) -> None:
         x[i] = v[i]
 
 
-@uncounted
+@inner
 def copy_into(M: Floats, P: Floats) -> None:
-    """P = M, entry by entry."""
-    for i in range(M.shape[0]):
-        for j in range(M.shape[1]):
+    """P = M, entry by entry, as far as both reach."""
+    for i in range(min(M.shape[0], P.shape[0])):
+        for j in range(min(M.shape[1], P.shape[1])):
             P[i, j] = M[i, j]
 
 

@@ -12,6 +12,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from plant_models.plant_model import DiscretePath, Matrix, PlantModel
+from softsensor.estimation.eight_states import EightStates, eight_states
 from softsensor.estimation.schedule_tables import Mask, Schedules, schedule_tables, scheduled_entries
 
 Floats = NDArray[np.float64]
@@ -71,8 +72,12 @@ class Kernel(NamedTuple):
     """The same runs as spans of columns, joined across mixed ones where they move alike: longer copies."""
     mixed: Ints
     """The other rows of A, ascending."""
+    mixed_from: Ints
+    """States that these have entries for, ascending."""
     schedules: Schedules
     """Paths that change with an input; the arrays above hold them as they are at the operating point."""
+    eight: EightStates
+    """The stochastic part written out, where it is small."""
 
 
 class EstimatorState(NamedTuple):
@@ -174,6 +179,7 @@ def build_kernel(model: PlantModel) -> Kernel:
     sizes = [len(path.steady) for path in paths]
     entries = scheduled_entries(model)
     compressed_C = compressed_rows(part.C, entries.C)
+    moved = moved_rows(np.where(entries.A, 0.5, part.A))
     operating = [item.operating_point for item in spec.sensors]
     operating += [item.operating_point for item in spec.estimates]
 
@@ -205,8 +211,10 @@ def build_kernel(model: PlantModel) -> Kernel:
         np.array(part.q, dtype=np.float64),
         np.array([item.noise_sd**2 for item in spec.sensors], dtype=np.float64),
         np.array([item.gate for item in spec.sensors], dtype=np.float64),
-        *moved_rows(np.where(entries.A, 0.5, part.A)),
+        *moved,
+        np.flatnonzero(((part.A != 0.0) | entries.A)[moved[-1]].any(axis=0)).astype(np.int64),
         schedule_tables(model, compressed_C[0], compressed_C[1]),
+        eight_states(part.A, part.C, part.q, scheduled=bool(entries.A.any() or entries.C.any())),
     )
 
 

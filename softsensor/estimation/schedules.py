@@ -17,7 +17,7 @@ from __future__ import annotations
 
 import numpy as np
 
-from softsensor.estimation.compiling import uncounted
+from softsensor.estimation.compiling import inner
 from softsensor.estimation.exponentials import exponentiate, multiply
 from softsensor.estimation.kernel import Floats, Kernel
 from softsensor.estimation.schedule_tables import Schedules
@@ -38,7 +38,7 @@ def private(kernel: Kernel) -> Kernel:
     )
 
 
-@uncounted
+@inner
 def follow_schedules(kernel: Kernel, u: Floats) -> None:
     """Bring the scheduled arrays of a private kernel to the inputs ``u`` (n_inputs,) of a cycle."""
     table = kernel.schedules
@@ -55,7 +55,7 @@ def follow_schedules(kernel: Kernel, u: Floats) -> None:
                 _to_disturbance(kernel, s, gain, direct)
 
 
-@uncounted
+@inner
 def _interpolate(table: Schedules, s: int, value: float) -> float:
     """The gain at a value of the tag; the time constants there into the work space."""
     lower, last = table.first[s], table.first[s + 1] - 1
@@ -73,7 +73,7 @@ def _interpolate(table: Schedules, s: int, value: float) -> float:
     return float(table.gain[lower] + share * (table.gain[upper] - table.gain[lower]))
 
 
-@uncounted
+@inner
 def _cascade(table: Schedules, s: int) -> float:
     """[0 0; B A] and C of the path's cascade without its gain into the work space; returns D. ::
 
@@ -103,7 +103,7 @@ def _cascade(table: Schedules, s: int) -> float:
     return 0.0
 
 
-@uncounted
+@inner
 def _hold(table: Schedules, s: int) -> None:
     """The matrix in the work space held over the last part of a sample, work[1], and over all of it, work[2]."""
     n, fraction, h = table.size[s] + 1, table.fraction[s], table.sample_time
@@ -118,7 +118,7 @@ def _hold(table: Schedules, s: int) -> None:
                 whole[i, j] = after[i, j]
 
 
-@uncounted
+@inner
 def _to_input(kernel: Kernel, s: int, gain: float, direct: float) -> None:
     """From the work space into the arrays of an input-driven path."""
     table = kernel.schedules
@@ -135,7 +135,7 @@ def _to_input(kernel: Kernel, s: int, gain: float, direct: float) -> None:
             kernel.phi[at + i * n + j] = whole[i + 1, j + 1]
 
 
-@uncounted
+@inner
 def _to_disturbance(kernel: Kernel, s: int, gain: float, direct: float) -> None:
     """From the work space into A and C: each row of A has the disturbance's recent value, its older one where the dead time
     has a fraction, then the path's own states so far.

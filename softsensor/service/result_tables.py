@@ -2,19 +2,20 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Iterable, Sequence
+from typing import Any
 
 import numpy as np
 import pandas as pd
 
 from plant_models.model_scale import columns_from_model
 from plant_models.specification import EstimateSpec, Range
-from softsensor.cycle import UnitDesign
 from softsensor.cycle_results import CycleResults, outside
 from softsensor.detection.conformance import BLOCK, LOOK_EVERY_BLOCKS
 from softsensor.detection.flags import Flag
 from softsensor.estimation.lab_results import LabOutcome
 from softsensor.estimation.smoothing import SmoothedCycles
+from softsensor.layout import UnitDesign
 from softsensor.published import Published, interval, limits_in_model_scale, published
 from softsensor.readings_of_cycle import CycleQuality, CycleReadings
 
@@ -35,6 +36,8 @@ LAB_COLUMNS = (
     "predicted", "innovation", "sd", "status", "reason",
 )  # fmt: skip
 
+NOT_A_TIME = np.iinfo(np.int64).min
+"""How numpy writes it."""
 INPUT_REASONS = {
     CycleQuality.UNCERTAIN: "{} is Uncertain",
     CycleQuality.BAD: "{} is Bad, its last value is held",
@@ -46,9 +49,14 @@ INPUT_REASONS = {
 
 def moments(times: np.ndarray | Sequence[int | None]) -> pd.DatetimeIndex:
     """UTC times of integer microseconds; None becomes not-a-time."""
-    if isinstance(times, np.ndarray):
-        return pd.DatetimeIndex(times.astype(np.int64).view("datetime64[us]")).tz_localize("UTC")
-    return pd.DatetimeIndex(pd.to_datetime(pd.array(list(times), dtype="Int64"), unit="us", utc=True))
+    if not isinstance(times, np.ndarray):
+        times = np.array([NOT_A_TIME if time is None else time for time in times], dtype=np.int64)
+    return pd.DatetimeIndex(times.astype(np.int64).view("datetime64[us]")).tz_localize("UTC")
+
+
+def words_of(codes: np.ndarray, words: Iterable[str]) -> Any:
+    """Texts by their codes (of any shape, in order), as an array of text: put together from whole words, not one by one."""
+    return pd.array(list(words), dtype="str").take(codes.ravel())
 
 
 def _words(codes: np.ndarray, words: Sequence[str]) -> pd.Categorical:
@@ -58,11 +66,20 @@ def _words(codes: np.ndarray, words: Sequence[str]) -> pd.Categorical:
 
 def reasons(design: UnitDesign, readings: CycleReadings, results: CycleResults) -> np.ndarray:
     """(N, n_estimates) texts: why an estimate is not Good; empty where it is. Put into words once for each pattern."""
+    codes, texts = _coded_reasons(design, readings, results)
+    words: np.ndarray = np.array(texts, dtype=object)[codes]
+    return words
+
+
+def _coded_reasons(
+    design: UnitDesign, readings: CycleReadings, results: CycleResults
+) -> tuple[np.ndarray, list[str]]:
+    """As :func:`reasons`: (N, n_estimates) places in a list of texts, whose first is empty."""
     spec, n = design.model.spec, len(results)
-    out = np.full((n, len(spec.estimates)), "", dtype=object)
+    codes, texts = np.zeros((n, len(spec.estimates)), dtype=np.int64), [""]
     doubtful = np.flatnonzero(np.any(results.status != 0, axis=1))
     if not doubtful.size:
-        return out
+        return codes, texts
     known = results.estimate[doubtful]
     own = _outside_each(
         columns_from_model(spec.estimates, known), [item.validated_range for item in spec.estimates]
@@ -81,16 +98,17 @@ def reasons(design: UnitDesign, readings: CycleReadings, results: CycleResults) 
         ]
     )
     _, at, of_row = np.unique(pattern, axis=0, return_index=True, return_inverse=True)
-    texts = np.full((len(at), len(spec.estimates)), "", dtype=object)
+    places = np.zeros((len(at), len(spec.estimates)), dtype=np.int64)
     for place, first in enumerate(at):
         shared = _shared_reasons(design, readings, results, int(doubtful[first]))
         for e, item in enumerate(spec.estimates):
             beyond = f"{item.tag} is outside its validated range" if own[first, e] else ""
             words = [*shared, results.doubts[doubtful[first], e], beyond]
             words += [_impossible(item)] if impossible[first, e] else []
-            texts[place, e] = "; ".join(text for text in words if text)
-    out[doubtful] = texts[of_row.reshape(-1)]
-    return out
+            places[place, e] = len(texts)
+            texts.append("; ".join(text for text in words if text))
+    codes[doubtful] = places[of_row.reshape(-1)]
+    return codes, texts
 
 
 def _impossible(item: EstimateSpec) -> str:
@@ -147,8 +165,9 @@ def estimate_table(design: UnitDesign, readings: CycleReadings, results: CycleRe
             "tag": _words(np.tile(np.arange(len(tags)), n), tags),
             **_published(design, results.estimate, results.sd),
             "status": _words(results.status.ravel(), STATUS_NAMES),
-            "reason": reasons(design, readings, results).ravel(),
-        }
+            "reason": words_of(*_coded_reasons(design, readings, results)),
+        },
+        copy=False,
     )
 
 
@@ -188,7 +207,8 @@ def innovation_table(design: UnitDesign, results: CycleResults) -> pd.DataFrame:
             "used": results.used.ravel(),
             "cusum_high": results.high.ravel(),
             "cusum_low": results.low.ravel(),
-        }
+        },
+        copy=False,
     )
 
 

@@ -7,28 +7,21 @@ from typing import Any
 
 import numpy as np
 
-from softsensor.cycle import UnitDesign
 from softsensor.cycle_results import CycleResults
 from softsensor.detection.flags import Flag, Note
-from softsensor.detection.shift_tests import DOWN
 from softsensor.estimation.lab_results import LabOutcome, with_corrections
+from softsensor.layout import UnitDesign
 from softsensor.published import NORMAL_95
+from softsensor.service.running_counts import count, no_counts
 
 
 class RunSummary:
     """Adds results up as they come; nothing is kept per cycle. nis and whiteness are of the readings used."""
 
     def __init__(self, design: UnitDesign) -> None:
-        n = design.kernel.n_sensors
         self._design = design
         self._cycles = 0
-        self._count = np.zeros(n, dtype=np.int64)
-        self._squares = np.zeros(n)
-        self._pairs = np.zeros(n)
-        self._pair_count = np.zeros(n, dtype=np.int64)
-        self._last = np.full((1, n), np.nan)
-        self._ups = np.zeros(n, dtype=np.int64)
-        self._up = np.zeros(n, dtype=bool)
+        self._counts = no_counts(design.kernel.n_sensors)
         self.flags: dict[str, Flag] = {}
         self.notes: list[Note] = []
         self._arrived: list[LabOutcome] = []
@@ -45,28 +38,10 @@ class RunSummary:
     def add(self, results: CycleResults) -> None:
         """Count these cycles' results."""
         self._cycles += len(results)
-        z = np.where(results.used != 0, results.innovation / results.innovation_sd, np.nan)
-        present = np.isfinite(z)
-        self._count += present.sum(axis=0)
-        self._squares += np.nansum(z * z, axis=0)
-        both = np.concatenate([self._last, z])
-        product = both[1:] * both[:-1]
-        self._pairs += np.nansum(product, axis=0)
-        self._pair_count += np.isfinite(product).sum(axis=0)
-        self._last = both[-1:]
-        self._count_tests(results)
+        count(self._counts, results)
         for flag in results.flags:
             self.flags[flag.flag] = flag
         self.notes += results.notes
-
-    def _count_tests(self, results: CycleResults) -> None:
-        top = np.where(results.left_out != 0, 0.0, np.maximum(results.high, results.low))
-        for row in top[np.any(top > DOWN, axis=1)]:
-            rising = (row > 1.0) & ~self._up
-            self._ups += rising
-            self._up = (self._up | rising) & (row >= DOWN)
-        if len(top) and np.all(top[-1] < DOWN):
-            self._up[:] = False
 
     def as_dict(self, digest: str) -> dict[str, Any]:
         """The content of summary.json."""
@@ -83,17 +58,18 @@ class RunSummary:
         }
 
     def _sensor(self, i: int, tag: str) -> dict[str, Any]:
-        count, pairs = int(self._count[i]), int(self._pair_count[i])
-        nis = float(self._squares[i]) / count if count else None
-        whiteness = float(self._pairs[i]) / pairs / nis if pairs and nis else None
+        counts = self._counts
+        readings, pairs, runs = int(counts.readings[i]), int(counts.pairs[i]), int(counts.runs[i])
+        nis = float(counts.squares[i]) / readings if readings else None
+        whiteness = float(counts.products[i]) / pairs / nis if pairs and nis else None
         return {
-            "readings": count,
+            "readings": readings,
             "nis": nis,
             "whiteness": whiteness,
             "flags": sum(flag.tag == tag for flag in self.flags.values()),
             "promised_run_length": self._design.model.spec.false_flag_interval
             / self._design.model.spec.sample_time,
-            "achieved_run_length": self._cycles / int(self._ups[i]) if self._ups[i] else None,
+            "achieved_run_length": self._cycles / runs if runs else None,
             "disarmed": dict(self._design.model.spec.disarmed).get(tag),
         }
 

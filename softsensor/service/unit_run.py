@@ -13,15 +13,7 @@ from numpy.typing import NDArray
 
 from plant_models.model_scale import one_from_model, one_to_model
 from plant_models.transform import Transform
-from softsensor.cycle import (
-    REJECTED,
-    CycleState,
-    LabAtCycle,
-    UnitDesign,
-    decide,
-    rerun,
-    run_cycles,
-)
+from softsensor.cycle import REJECTED, CycleState, decide, rerun, run_laid
 from softsensor.cycle_results import CycleResults, waiting_results
 from softsensor.detection.flags import Note
 from softsensor.detection.people import Decision, Taken
@@ -38,6 +30,7 @@ from softsensor.estimation.lab_results import (
 )
 from softsensor.estimation.late_readings import LateReadings, UnusedReadings, late_words
 from softsensor.estimation.past import Past, Revision
+from softsensor.layout import LabAtCycle, Laid, UnitDesign, laid_out
 from softsensor.readings_of_cycle import CycleReadings, slice_readings
 
 
@@ -54,7 +47,7 @@ class Advance:
 
 
 IN_MEMORY = 2**25
-"""Bytes of remembered states that one call of the loop may add: the length of its stretches grows up to that."""
+"""Bytes of remembered states that one call of the loop may add: its stretches are no longer than that."""
 
 Came = LabArrival | Decision | StateChange | LateReadings | UnusedReadings
 """What may come before a cycle besides its readings."""
@@ -84,7 +77,6 @@ class UnitRun:
         self._early: list[StateChange] = []
         held = sum(part.nbytes for part in state.estimator)
         self._longest = max(IN_MEMORY // held, 1) * CHUNK
-        self._most = CHUNK
 
     @property
     def started(self) -> bool:
@@ -119,12 +111,11 @@ class UnitRun:
             outcome, revision = self._take(arrival, slice_readings(readings, waiting, waiting + 1))
             outcomes.append(outcome)
             revisions += [revision] if revision is not None else []
-        row = waiting
-        while row < len(readings):
-            part = slice_readings(readings, row, min(row + self.past.room(self._most), len(readings)))
+        row, laid = 0, laid_out(self.design, slice_readings(readings, waiting, len(readings)))
+        while row < len(laid):
+            part = laid.rows(row, min(row + self.past.room(self._longest), len(laid)))
             result, revision = self._run(part)
-            self._most = min(2 * self._most, self._longest) if len(result) == len(part) else CHUNK
-            if row == waiting:
+            if row == 0:
                 flags, notes = told.changes + result.flags, told.notes + noted + result.notes
                 result = replace(result, flags=flags, notes=notes, rests=told.rests + result.rests)
             results.append(result)
@@ -144,11 +135,11 @@ class UnitRun:
     def _labs_between(self, first: int, stop: int) -> tuple[LabAtCycle, ...]:
         return tuple(lab for lab in self._labs if first <= lab.cycle < stop)
 
-    def _run(self, readings: CycleReadings) -> tuple[CycleResults, Revision | None]:
+    def _run(self, laid: Laid) -> tuple[CycleResults, Revision | None]:
         first = self.state.next_cycle
-        labs = self._labs_between(first, first + len(readings))
-        self.state, results, states = run_cycles(self.design, self.state, readings, labs)
-        done = slice_readings(readings, 0, len(results))
+        labs = self._labs_between(first, first + len(laid))
+        self.state, results, states = run_laid(self.design, self.state, laid, labs)
+        done = slice_readings(laid.readings, 0, len(results))
         self.past.remember(states, done, results.estimate, results.sd)
         if results.rewind is None or results.rewind.exclusion is None:
             return results, None

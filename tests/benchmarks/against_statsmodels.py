@@ -35,8 +35,10 @@ from statsmodels.tsa.statespace.kalman_filter import (
 import softsensor
 from plant_models.library import published_model_path
 from plant_models.plant_model import PlantModel
-from softsensor.compiled_cycle import empty_outputs, run_block
-from softsensor.cycle import block_inputs, start
+from softsensor.block_arrays import empty_outputs
+from softsensor.compiled_cycle import run_block
+from softsensor.cycle import start
+from softsensor.layout import block_inputs
 from softsensor.unit_design import design_unit
 
 

@@ -19,10 +19,12 @@ from plant_models.library import published_model_path, published_models
 from plant_models.model_file import read_model_file
 from plant_models.simulators import reactor_model_path
 from plant_models.specification import UnitSpec
-from softsensor.compiled_cycle import empty_outputs, run_block
-from softsensor.cycle import block_inputs, unit_tests
+from softsensor.block_arrays import empty_outputs
+from softsensor.compiled_cycle import run_block
+from softsensor.cycle import unit_tests
 from softsensor.detection.flags import FlagBook
 from softsensor.estimation.kernel import EstimatorState, initial_state
+from softsensor.layout import block_inputs
 from softsensor.readings_of_cycle import CycleReadings
 from softsensor.unit_design import design_unit
 
