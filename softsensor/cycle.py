@@ -252,7 +252,7 @@ def _results(
         out.settling[:done] * np.int8(2 if book.unsteady(first) else 1),
         out.high[:done],
         out.low[:done],
-        as_diagnosed(design.model.spec.sensors, book, first, out.beyond[:done]),
+        as_diagnosed(design.detection, book, first, out.beyond[:done]),
         out.lab_predicted[in_block],
         out.lab_sd[in_block],
     )

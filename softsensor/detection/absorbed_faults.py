@@ -252,12 +252,15 @@ def explained_lately(book: FlagBook, cycle: int) -> bool:
     return at >= 0 and cycle - at <= LONGEST_QUIET
 
 
-def explains(design: DetectionDesign, book: FlagBook, cycle: int, kinds: tuple[Kind, ...]) -> bool:
-    """Does an open flag of these kinds, on an instrument in use, explain what the tests say?"""
+def explaining(
+    design: DetectionDesign, book: FlagBook, cycle: int, kinds: tuple[Kind, ...]
+) -> tuple[Flag, ...]:
+    """Open flags of these kinds, on instruments in use, that explain what the tests say."""
     tags = design.model.sensor_tags
-    return any(
-        flag.kind in kinds
+    return tuple(
+        flag
+        for flag in book.open
+        if flag.kind in kinds
         and flag.flag not in book.absorbed
         and not (flag.tag in tags and book.excluded(tags.index(flag.tag), cycle))
-        for flag in book.open
     )

@@ -56,6 +56,11 @@ class Verdict(NamedTuple):
     group: tuple[str, ...]
 
 
+def named(verdict: Verdict) -> bool:
+    """Is one explanation ten times as probable as all others together?"""
+    return verdict.best >= 0 and verdict.probabilities[0] * (NAMING_RATIO + 1.0) >= NAMING_RATIO
+
+
 @njit(cache=True)
 def recent(
     ring: Floats, newest: int, whitening: Floats, use: Ints, count: int, out: Floats, whole: Ints

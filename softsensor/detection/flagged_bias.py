@@ -7,7 +7,7 @@ while a test is up the probability told is that of the latest look, with the rat
     P(nothing) ~ 1,   P(h) ~ rate_h (cycles looked at) (averaged likelihood ratio of h)
     P(beyond) = sum over the sensor's own hypotheses of P(h) P(|size now| > tolerance)
 
-and while a flag on the sensor is open no less than what the flag says::
+and while a flag is open whose error the estimate follows no less than what the flag says::
 
     p (P(size > tolerance) + P(size < -tolerance)),   size ~ N(flag's size, its sd),   p the flag's probability
 """
@@ -17,6 +17,7 @@ from __future__ import annotations
 import numpy as np
 
 from plant_models.specification import SensorSpec
+from softsensor.detection.absorbed_faults import quiet_needed
 from softsensor.detection.conformance import FAULTS_PER_YEAR, MOVES_PER_YEAR, YEAR_S, upper_tail
 from softsensor.detection.detection_design import DetectionDesign
 from softsensor.detection.diagnosis import FINEST, Likelihoods
@@ -64,16 +65,21 @@ def _beyond(tolerance: float, size: float, sd: float) -> float:
     )
 
 
-def as_diagnosed(sensors: tuple[SensorSpec, ...], book: FlagBook, cycle: int, beyond: Floats) -> Floats:
+def as_diagnosed(design: DetectionDesign, book: FlagBook, cycle: int, beyond: Floats) -> Floats:
     """(N, n_sensors) the conformance probability of cycles from ``cycle`` on, in place, as the diagnosis lets it stand."""
-    for i, sensor in enumerate(sensors):
+    for i, sensor in enumerate(design.model.spec.sensors):
         if book.excluded(i, cycle):
             continue
         column = beyond[:, i]
         if book.weighed:
             column[:] = book.weighed[i]
         flag = book.find(sensor.tag, SHIFT_KINDS)
-        if flag is not None:
+        if flag is not None and (flag.flag in book.absorbed or not book.weighed) and _stays(design, flag):
             least = beyond_by_flag(sensor, flag)
             column[~(column >= least)] = least
     return beyond
+
+
+def _stays(design: DetectionDesign, flag: Flag) -> bool:
+    """Is it one whose error the estimate follows, so that sums that are down say nothing?"""
+    return quiet_needed(design, flag, np.ones(design.kernel.n_sensors, dtype=np.int64)) is None

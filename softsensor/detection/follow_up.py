@@ -10,9 +10,8 @@ import numpy as np
 from softsensor.detection import state_of_tests as told
 from softsensor.detection.absorbed_faults import (
     explained_lately,
-    explains,
+    explaining,
     flagged_once_more,
-    opposed,
     settle_flags,
     went_back,
 )
@@ -21,6 +20,7 @@ from softsensor.detection.diagnosis import (
     NAMING_RATIO,
     Likelihoods,
     Verdict,
+    named,
 )
 from softsensor.detection.flag_sizes import present_size, size_in_unit
 from softsensor.detection.flagged_bias import AT_FAULT, beyond_by_look
@@ -36,16 +36,12 @@ from softsensor.detection.flags import (
     time_words,
 )
 from softsensor.detection.onsets import NO_ACCOUNT, Account, account_of
-from softsensor.detection.outcomes import LASTING, FollowUp, Moment, opened
+from softsensor.detection.outcomes import EXPLAINING, PATIENCE, FollowUp, Moment, opened
 from softsensor.detection.single_faults import single_faults
 from softsensor.detection.state_of_tests import TestState
+from softsensor.detection.while_flagged import look_again
 from softsensor.estimation.kernel import Ints
 
-EXPLAINING: tuple[Kind, ...] = (*LASTING, "stuck", "noisy")
-"""While such a fault is open on an instrument in use, it explains what other tests say."""
-PATIENCE = 60
-"""Cycles for which a name is waited for before a group is flagged, and between two times that gains are weighed; units take
-their turns within it, so that a hundred of them do not all weigh in the same second."""
 UNSTEADY = "start in a moving plant"
 
 
@@ -152,17 +148,18 @@ def _diagnose(design: DetectionDesign, outcome: FollowUp, tests: TestState, mome
     book = outcome.book
     use = sensors_in_use(design, book, tests, moment.cycle)
     up = bool(np.any((tests.up != 0) & (use != 0))) or tests.misfit[0] != 0
-    explained = explains(design, book, moment.cycle, EXPLAINING)
+    explained = bool(explaining(design, book, moment.cycle, EXPLAINING))
     if not up:
-        outcome = replace(outcome, book=replace(book, episode=None))
-        return outcome if explained else _looked_enough(outcome, tests)
+        return _looked_enough(replace(outcome, book=replace(book, episode=None)), tests)
     if moment.cycle < tests.valid_from[0]:
         return outcome
-    if (explained and not opposed(design, book, tests)) or explained_lately(book, moment.cycle):
-        return outcome
     if explained:
-        back = went_back(design, outcome, moment, look(design, tests, use, gains=False))
-        return outcome if back is None else back
+        outcome, beside = look_again(design, outcome, tests, moment, use)
+        if beside is None:
+            return outcome
+        return _open_shift(design, outcome, tests, moment, (beside.verdict, beside.found, use, NO_ACCOUNT))
+    if explained_lately(book, moment.cycle):
+        return outcome
     if book.episode is None:
         outcome = replace(outcome, book=replace(book, episode=Episode(moment.cycle)))
     return _act(design, outcome, tests, moment, use)
@@ -216,11 +213,10 @@ def _worth_a_flag(design: DetectionDesign, verdict: Verdict, found: Likelihoods,
     suspect = explanations(design)[verdict.best]
     if suspect.source == "disturbance":
         return False
-    named = verdict.probabilities[0] * (NAMING_RATIO + 1.0) >= NAMING_RATIO
     size = abs(present_size(suspect, found, verdict.best)[0])
     worth = suspect.source != "sensor" or size > design.model.scaled.sensors[suspect.index].tolerance
     certain = verdict.instrument * (NAMING_RATIO + 1.0) > NAMING_RATIO
-    return named or (certain and worth and waited >= PATIENCE)
+    return named(verdict) or (certain and worth and waited >= PATIENCE)
 
 
 def _note(outcome: FollowUp, moment: Moment, verdict: Verdict) -> FollowUp:
@@ -281,6 +277,6 @@ def _open_shift(
 
 def _restart(tests: TestState, cycle: int) -> None:
     """After a sensor has been left out the sums start anew: what they had added up is explained."""
-    down_since = tests.down_since.copy()
+    down_since = np.where(tests.up != 0, cycle, tests.down_since)
     tests.restart_sums(cycle)
     tests.down_since[:] = down_since

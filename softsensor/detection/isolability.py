@@ -27,7 +27,7 @@ from scipy.special import logsumexp
 
 from softsensor.detection.detection_design import DetectionDesign
 from softsensor.detection.diagnosis import NAMING_RATIO, onset_ages
-from softsensor.detection.follow_up import PATIENCE
+from softsensor.detection.outcomes import PATIENCE
 from softsensor.detection.signatures import Hypothesis, Shape, signatures
 from softsensor.detection.step_signatures import Instrument
 from softsensor.estimation.kernel import Floats, Ints

@@ -17,6 +17,11 @@ from softsensor.estimation.kernel import Ints
 SHIFT_KINDS: tuple[Kind, ...] = ("bias", "drift")
 LASTING: tuple[Kind, ...] = (*SHIFT_KINDS, "model")
 """Kinds that come from a diagnosis and clear when all has been quiet."""
+EXPLAINING: tuple[Kind, ...] = (*LASTING, "stuck", "noisy")
+"""While such a fault is open on an instrument in use, it explains what other tests say."""
+PATIENCE = 60
+"""Cycles for which a name is waited for before a group is flagged, and between two times that gains are weighed; units take
+their turns within it, so that a hundred of them do not all weigh in the same second."""
 
 
 @dataclass(frozen=True)
