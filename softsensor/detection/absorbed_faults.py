@@ -19,6 +19,7 @@ from numpy.typing import NDArray
 
 from plant_models.model_scale import scale_at_operating_point
 from plant_models.specification import InputSpec, SensorSpec
+from plant_models.units import difference_unit
 from softsensor.detection.detection_design import DetectionDesign, explanations, sensors_in_use
 from softsensor.detection.diagnosis import Likelihoods, Verdict
 from softsensor.detection.flags import Episode, Flag, FlagBook, Kind, Note
@@ -178,7 +179,7 @@ def went_back(
     ):
         return None
     if flag.cleared is None:
-        text = f"{flag.tag}: the error has gone back; it was {flag.size:.3g} when it was flagged"
+        text = f"{flag.tag}: the error has gone back; it was {_amount(design, flag)} when it was flagged"
         outcome = replace(outcome, notes=(*outcome.notes, Note(moment.time, "error gone back", text)))
         outcome = remembered(cleared(outcome, flag, moment.time), (flag.closed(moment.time),), moment.time)
     episode = Episode(moment.cycle) if outcome.book.episode is None else outcome.book.episode
@@ -188,6 +189,10 @@ def went_back(
     )
     book = replace(outcome.book, episode=replace(episode, explained_at=moment.cycle), weighed=weighed)
     return replace(outcome, book=book)
+
+
+def _amount(design: DetectionDesign, flag: Flag) -> str:
+    return f"{flag.size:.3g} {difference_unit(_instrument(design, flag.tag).unit)}"
 
 
 def remembered(outcome: FollowUp, flags: tuple[Flag, ...], time: int) -> FollowUp:

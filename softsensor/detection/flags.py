@@ -174,7 +174,7 @@ class FlagBook:
         return tuple(
             flag
             for flag in self.open
-            if flag.kind in ("bias", "drift", "stuck", "model")
+            if flag.kind in ("bias", "drift", "stuck", "noisy", "model")
             and not (flag.tag in sensors and self.excluded(sensors.index(flag.tag), cycle))
         )
 

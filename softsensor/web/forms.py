@@ -10,10 +10,14 @@ from urllib.parse import quote
 from fastapi import APIRouter, Form, Request
 from fastapi.responses import RedirectResponse, Response
 
+from plant_models.number_text import plain
+from plant_models.specification import InputSpec, SensorSpec
 from softsensor.records import changes
+from softsensor.records.reader import Unit
 from softsensor.records.tables import FINDINGS
 from softsensor.web.pages import Pages, Refused, flag_answer, lab_answer
 from softsensor.web.site import BadForm, ForeignForm, Site, choices_for
+from softsensor.web.wording import difference_unit
 
 LONGEST_NAME, LONGEST_TEXT = 100, 2000
 Field = Annotated[str, Form()]
@@ -69,6 +73,20 @@ def calibration(text: str, what: str) -> float | None:
             f"{what} is {text.strip()[:40]!r}; expected a number with a decimal point, such as -0.35"
         )
     return value
+
+
+def check_errors(site: Site, unit: Unit, tag: str, found: float | None, left: float | None) -> None:
+    """Refuse an error that the instrument cannot have.
+
+    :raises BadForm: one larger than its range is wide.
+    """
+    spec = site.models.spec(site.models.revision_of(unit))
+    items: tuple[SensorSpec | InputSpec, ...] = (*spec.sensors, *spec.inputs)
+    item = next((item for item in items if item.tag == tag), None)
+    for what, value in (("as found", found), ("as left", left)):
+        if item is not None and value is not None and abs(value) > item.range[1] - item.range[0]:
+            width = f"{plain(item.range[1] - item.range[0])} {difference_unit(item.unit)}"
+            raise BadForm(f"{what} is {value:g}; expected an error no larger than the range is wide, {width}")
 
 
 def checked_finding(finding: str, as_found: str, as_left: str) -> tuple[float | None, float | None]:
@@ -137,10 +155,11 @@ def form_routes(site: Site, pages: Pages) -> APIRouter:
         as_left: Field = "",
     ) -> Response:
         ours(request, token)
-        site.flag(name, id)
+        unit, flag, _ = site.flag(name, id)
         try:
             who = person(actor, reason)
             found, left = checked_finding(finding, as_found, as_left)
+            check_errors(site, unit, flag.tag, found, left)
         except BadForm as problem:
             typed = {
                 "finding": finding,

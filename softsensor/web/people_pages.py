@@ -17,7 +17,7 @@ from softsensor.records.reader import Unit, flags_of
 from softsensor.records.rests import rests_at
 from softsensor.records.tables import FINDINGS
 from softsensor.web.flag_sheet import flag_sheet
-from softsensor.web.forms import Field, calibration, person
+from softsensor.web.forms import Field, calibration, check_errors, person
 from softsensor.web.in_use import is_answerable, is_out, left_out_now, newest_us
 from softsensor.web.pages import NOTHING_REFUSED, Pages, Refused
 from softsensor.web.site import BadForm, ForeignForm, NotHere, Site
@@ -165,6 +165,7 @@ def people_forms(site: Site, pages: Pages) -> APIRouter:
                 raise BadForm(
                     "a confirmed finding needs the errors as found and as left; expected two numbers"
                 )
+            check_errors(site, unit, flag.tag, found, left)
         except BadForm as problem:
             typed = {"finding": finding, "actor": actor, "reason": reason}
             typed |= {"as_found": as_found, "as_left": as_left}

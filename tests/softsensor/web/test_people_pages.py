@@ -188,6 +188,11 @@ BAD = {
         PERSON | {"finding": "confirmed"},
         "as found and as left; expected two numbers",
     ),
+    "an error that no instrument has": (
+        PUT_BACK,
+        CALIBRATED | {"as_found": "1e308"},
+        "expected an error no larger than the range is wide, ",
+    ),
     "no finding": (PUT_BACK, PERSON, "expected one of: confirmed"),
     "no name": (PUT_BACK, CALIBRATED | {"actor": ""}, "your name is missing"),
     "no time": (LEAVE_OUT, PERSON, "expected a time such as"),
