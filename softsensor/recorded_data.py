@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import itertools
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 from pathlib import Path
@@ -14,19 +13,17 @@ from connectors.files import history_from_frame, lab_from_frame, late_from_frame
 from connectors.history import History, LateRows
 from connectors.lab_results import LabResults, place_lab
 from connectors.long_history import LongHistory
-from connectors.time_column import time_text
 from plant_models.plant_model import PlantModel
 from softsensor.detection.flags import Note
 from softsensor.errors import ReplayError
 from softsensor.estimation.kernel import CHUNK
 from softsensor.estimation.lab_results import LabArrival
-from softsensor.readings_of_cycle import CycleReadings
-from softsensor.records import series
-from softsensor.records.engine import Database, open_database
-from softsensor.records.reader import find_unit, revisions_of
+from softsensor.records.engine import open_database
+from softsensor.records.reader import find_unit
 from softsensor.service.assembly import assemble_blocks, assemble_with_late, history_cycles, rules_of
 from softsensor.service.long_assembly import assemble_long
 from softsensor.service.plant_state import StateRule, recorded_changes
+from softsensor.service.recorded_period import Period, check_tags, chosen_cycles, cycles_in
 from softsensor.service.replay import Replay, cut_parts, gathered, horizon_of, parts_of
 from softsensor.service.result_tables import (
     CONFORMANCE_COLUMNS,
@@ -227,81 +224,10 @@ def prepare_from_records(
     """
     with open_database(url) as database:
         unit_id = find_unit(database, unit).id
-        period = (_moment(start, "--from", -(2**62)), _moment(end, "--to", 2**62))
-        cycles = series.cycles_between(database, unit_id, *period)
-        if not cycles:
-            raise ReplayError(f"{database.name}: no cycle of {unit} is on record in this period")
-        chosen, notes = _chosen(database, unit_id, cycles, model)
+        cycles = cycles_in(database, unit_id, Period(unit, start, end))
+        chosen, notes = chosen_cycles(database, unit_id, cycles, model)
         parts = list(recorded_cycles(database, unit_id, chosen.start, chosen.stop - 1))
-    _check_tags(model, parts[0][0], unit)
+    check_tags(model, parts[0][0], unit)
     first = chosen.start if chosen.start % CHUNK == 0 else 0
     running = Replay(designed(model), parts, first_cycle=first)
     return running, notes, sum(len(readings) for readings, _ in parts)
-
-
-@dataclass(frozen=True)
-class _Recorded:
-    """Consecutive cycles on record, all run by the model in question or all by others; first and last time."""
-
-    own: bool
-    cycles: range
-    begins: int
-    ends: int
-
-
-def _stretches(database: Database, unit_id: int, cycles: range, model: PlantModel) -> list[_Recorded]:
-    own = {item.id for item in revisions_of(database, unit_id) if item.digest == model.digest}
-    found: list[_Recorded] = []
-    for block in series.readings(database, unit_id, cycles.start, cycles.stop - 1):
-        stop, times = block.first_cycle + len(block), block.readings.times
-        new = _Recorded(
-            block.revision_id in own, range(block.first_cycle, stop), int(times[0]), int(times[-1])
-        )
-        if found and found[-1].own == new.own and found[-1].cycles.stop == block.first_cycle:
-            before = found.pop()
-            new = _Recorded(new.own, range(before.cycles.start, stop), before.begins, new.ends)
-        found.append(new)
-    return found
-
-
-def _chosen(database: Database, unit_id: int, cycles: range, model: PlantModel) -> tuple[range, list[Note]]:
-    """Which of these recorded cycles a model replays: the latest stretch that it ran itself, else all of them.
-
-    :raises ReplayError: cycles of other revisions that do not follow each other in time.
-    """
-    found = _stretches(database, unit_id, cycles, model)
-    latest = next((item for item in reversed(found) if item.own), None)
-    if latest is not None:
-        text = "the cycles before or after were run by other revisions of the model and are left out"
-        return latest.cycles, [Note(latest.begins, "records", text)] if len(found) > 1 else []
-    step = round(model.spec.sample_time * 1e6)
-    for before, after in itertools.pairwise(found):
-        if after.begins != before.ends + step:
-            raise ReplayError(
-                f"no cycle is on record between {time_text(before.ends)} and {time_text(after.begins)}; "
-                "expected a period (--from, --to) on one side of it"
-            )
-    return cycles, []
-
-
-def _check_tags(model: PlantModel, recorded: CycleReadings, unit: str) -> None:
-    """The records keep readings in the order of the model file that ran, without tags."""
-    found = (recorded.u.shape[1], recorded.y.shape[1])
-    expected = (len(model.input_tags), len(model.sensor_tags))
-    if found != expected:
-        raise ReplayError(
-            f"{unit}: the recorded cycles have {found[0]} inputs and {found[1]} sensors; expected those of the "
-            f"model, {expected[0]} and {expected[1]}"
-        )
-
-
-def _moment(text: str | None, option: str, default: int) -> int:
-    if text is None:
-        return default
-    try:
-        moment = pd.Timestamp(text)
-    except ValueError:
-        raise ReplayError(f"{option}: {text!r}; expected a time such as 2026-12-01T08:00:00Z") from None
-    if moment.tz is None:
-        raise ReplayError(f"{option}: {text!r} names no time zone; expected Z or an offset")
-    return int(moment.tz_convert("UTC").value // 1000)

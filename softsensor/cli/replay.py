@@ -80,7 +80,7 @@ def replay(
                 "--states: the records hold the plant's states already; expected none with a database"
             )
     else:
-        _only_with_a_database({"--unit": unit, "--from": start, "--to": end})
+        only_with_a_database({"--unit": unit, "--from": start, "--to": end}, "replayed")
         running, notes, cycles = _from_files(plant_model, Path(history), (lab, states, late), timezone)
     running.totals.notes += notes
     with ResultFiles(out, format, running.design) as files, SmoothedRun(running.design, out) as smoothing:
@@ -95,12 +95,13 @@ def replay(
         _tell(summary, out)
 
 
-def _only_with_a_database(options: dict[str, str | None]) -> None:
+def only_with_a_database(options: dict[str, str | None], done: str) -> None:
+    """Refuse options that say which of the recorded cycles are meant, where a file is given."""
     given = [name for name, value in options.items() if value is not None]
     if given:
         raise ReplayError(
             f"{', '.join(given)}: expected only with a database's address (such as sqlite:///records.db) in place of "
-            "the history file; of a file all rows are replayed"
+            f"the history file; of a file all rows are {done}"
         )
 
 

@@ -10,15 +10,30 @@ from typing import TYPE_CHECKING, Annotated, Any
 import typer
 
 from plant_models.errors import Problem
+from softsensor.cli.replay import only_with_a_database
+from softsensor.errors import ReplayError
 
 if TYPE_CHECKING:
+    from collections.abc import Sequence
+
+    from connectors.history import History
     from plant_models.plant_model import PlantModel
+    from softsensor.estimation.lab_results import LabArrival
+    from softsensor.readings_of_cycle import CycleReadings
     from softsensor.service.tuning_report import FittedNumber, IntervalProposal, TuningReport, Whiteness
+
+    Taken = tuple[History | CycleReadings, Sequence[LabArrival], tuple[str, ...]]
+    """What is tuned on: readings, laboratory results within them, notes on what was left out."""
 
 
 def tune(
     model: Annotated[Path, typer.Argument(help="The model file (TOML).")],
-    history: Annotated[Path, typer.Argument(help="CSV or Parquet with a time column: routine operation.")],
+    history: Annotated[
+        str,
+        typer.Argument(
+            help="Routine operation: CSV or Parquet with a time column; or the address of the records' database."
+        ),
+    ],
     out: Annotated[Path, typer.Option("--out", help="The tuned model file; never the one that is read.")],
     lab: Annotated[
         Path | None, typer.Option("--lab", help="Laboratory results (CSV or Parquet), for interval_scale.")
@@ -32,11 +47,22 @@ def tune(
     interval_only: Annotated[
         bool,
         typer.Option(
-            "--interval-only", help="Leave the noise as it is; only propose interval_scale, from --lab."
+            "--interval-only",
+            help="Leave the noise as it is; only propose interval_scale, from laboratory results.",
         ),
     ] = False,
     timezone: Annotated[
         str | None, typer.Option("--timezone", help="Zone of times that name none, such as Europe/Berlin.")
+    ] = None,
+    unit: Annotated[
+        str | None, typer.Option("--unit", help="With a database: the unit; by default the model's.")
+    ] = None,
+    start: Annotated[
+        str | None, typer.Option("--from", help="With a database: first time, ISO 8601; by default all.")
+    ] = None,
+    end: Annotated[str | None, typer.Option("--to", help="With a database: time after the last.")] = None,
+    page: Annotated[
+        Path | None, typer.Option("--report", help="An HTML page with pictures; written when refused, too.")
     ] = None,
     json: Annotated[bool, typer.Option("--json", help="Print one JSON document and nothing else.")] = False,
 ) -> None:
@@ -47,39 +73,88 @@ def tune(
 
     if out.exists() and model.exists() and out.samefile(model):
         raise Problem(f"--out: {out} is the model file that is read; expected another name")
-    if interval_only and (lab is None or keep):
+    _check_page(page, (model, out))
+    in_database = "://" in history
+    if interval_only and (keep or not (in_database or lab)):
         raise Problem("--interval-only: expected --lab with it, and no --keep")
     plant_model = load_model(model)
-    report, notes = _tuned(plant_model, history, lab, None if interval_only else keep or [], timezone)
+    if in_database:
+        if lab is not None:
+            raise ReplayError(
+                "--lab: the records hold the laboratory results already; expected none with a database"
+            )
+        taken = _from_database(plant_model, history, unit, start, end)
+    else:
+        only_with_a_database({"--unit": unit, "--from": start, "--to": end}, "tuned on")
+        taken = _from_files(plant_model, Path(history), lab, timezone)
+    report = _tuned(plant_model, taken, keep, interval_only)
     if report.accepted:
         _write(model, out, report)
+    document = as_document(report, taken[2], out) | {
+        "model": str(model),
+        "model_digest": plant_model.digest,
+        "history": f"records of {unit or plant_model.spec.name}" if in_database else history,
+    }
+    if page is not None:
+        _write_page(page, plant_model, report, document)
     if json:
-        typer.echo(json_text.dumps(as_document(report, notes, out), ensure_ascii=False, allow_nan=False))
+        typer.echo(json_text.dumps(document, ensure_ascii=False, allow_nan=False))
     else:
-        _tell(report, notes, out)
+        _tell(report, taken[2], out)
+        if page is not None:
+            typer.echo(f"report: {page}")
     if not report.accepted:
         raise typer.Exit(1)
 
 
-def _tuned(
-    model: PlantModel, history: Path, lab: Path | None, keep: list[str] | None, timezone: str | None
-) -> tuple[TuningReport, tuple[str, ...]]:
+def _tuned(model: PlantModel, taken: Taken, keep: list[str] | None, interval_only: bool) -> TuningReport:
+    from softsensor.service.tuning import tune as tune_model
+    from softsensor.service.tuning import tune_intervals
+
+    recorded, arrivals, _ = taken
+    if interval_only:
+        return tune_intervals(model, recorded, arrivals)
+    return tune_model(model, recorded, arrivals, keep or ())
+
+
+def _from_files(model: PlantModel, history: Path, lab: Path | None, timezone: str | None) -> Taken:
     from connectors.files import read_history, read_lab
     from connectors.lab_results import place_lab
     from softsensor.recorded_data import lab_arrivals, lab_tags
     from softsensor.service.assembly import rules_of
-    from softsensor.service.tuning import tune as tune_model
-    from softsensor.service.tuning import tune_intervals
 
     recorded = read_history(history, rules_of(model.spec).tags, timezone)
     if lab is None:
-        return tune_model(model, recorded, (), keep or ()), ()
+        return recorded, (), ()
     results = read_lab(lab, lab_tags(model), timezone)
     usable, notes = place_lab(results, recorded.first_time, recorded.last_time)
-    arrivals = lab_arrivals(model, usable)
-    if keep is None:
-        return tune_intervals(model, recorded, arrivals), notes
-    return tune_model(model, recorded, arrivals, keep), notes
+    return recorded, lab_arrivals(model, usable), notes
+
+
+def _from_database(
+    model: PlantModel, url: str, unit: str | None, start: str | None, end: str | None
+) -> Taken:
+    from softsensor.service.recorded_period import Period
+    from softsensor.service.tuning_records import routine_operation
+
+    routine = routine_operation(model, url, Period(unit or model.spec.name, start, end))
+    return routine.readings, routine.labs, routine.notes
+
+
+def _check_page(page: Path | None, others: tuple[Path, Path]) -> None:
+    """Before the fit: a page must not take the place of a model file, and needs a folder."""
+    if page is None:
+        return
+    if any(page.resolve() == other.resolve() for other in others):
+        raise Problem(f"--report: {page} is a model file here; expected another name")
+    if not page.parent.is_dir():
+        raise Problem(f"--report: {page}: there is no such folder; expected a place to write to")
+
+
+def _write_page(page: Path, model: PlantModel, report: TuningReport, document: dict[str, Any]) -> None:
+    from softsensor.web.tuning_page import tuning_page
+
+    _put(page, tuning_page(model.spec, report, document), "--report")
 
 
 def _write(model: Path, out: Path, report: TuningReport) -> None:
@@ -87,12 +162,16 @@ def _write(model: Path, out: Path, report: TuningReport) -> None:
     from softsensor.service.tuned_file import changed_text
 
     text = changed_text(model.read_bytes().decode("utf-8"), str(model), report.changes)
-    partial = out.with_name(f"{out.name}.partial")
+    _put(out, text, "--out")
+
+
+def _put(path: Path, text: str, option: str) -> None:
+    partial = path.with_name(f"{path.name}.partial")
     try:
         partial.write_bytes(text.encode("utf-8"))
-        partial.replace(out)
+        partial.replace(path)
     except OSError as error:
-        raise Problem(f"--out: {out}: {error.strerror or error}; expected a place to write to") from None
+        raise Problem(f"{option}: {path}: {error.strerror or error}; expected a place to write to") from None
 
 
 def as_document(report: TuningReport, notes: tuple[str, ...], out: Path) -> dict[str, Any]:
@@ -152,7 +231,7 @@ def _tell(report: TuningReport, notes: tuple[str, ...], out: Path) -> None:
     for item in report.numbers:
         typer.echo(f"{item.parameter.name}: {_number_text(item)}")
     for sensor in report.sensors:
-        typer.echo(_sensor_text(sensor))
+        typer.echo(_sensor_text(sensor, bool(report.numbers)))
     for estimate in report.intervals:
         typer.echo(_interval_text(estimate))
     for note in notes:
@@ -184,10 +263,15 @@ def _number_text(item: FittedNumber) -> str:
     return f"{text(item.fitted)} (95 % interval {text(item.low)} to {text(item.high)}; was {was})"
 
 
-def _sensor_text(item: Whiteness) -> str:
+def _sensor_text(item: Whiteness, fitted: bool) -> str:
+    def both(before: float, after: float, form: str = ".3f") -> str:
+        return f"{before:{form}} -> {after:{form}}" if fitted else f"{before:{form}}"
+
     return (
-        f"{item.tag}, not fitted: nis {item.nis_before:.3f} -> {item.nis_after:.3f} (1 is right), whiteness "
-        f"{item.whiteness_before:+.3f} -> {item.whiteness_after:+.3f} (white within {item.bound:.3f})"
+        f"{item.tag}, not fitted: nis {both(item.nis_before, item.nis_after)} (1 is right), whiteness "
+        f"{both(item.whiteness_before, item.whiteness_after, '+.3f')} (white within {item.bound:.3f}), cumulative "
+        f"periodogram off by {both(item.periodogram_before, item.periodogram_after)} (white within "
+        f"{item.periodogram_bound:.3f})"
     )
 
 

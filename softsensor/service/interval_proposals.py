@@ -6,6 +6,7 @@ import math
 from collections.abc import Sequence
 
 import numpy as np
+from numpy.typing import NDArray
 
 from plant_models.model_scale import one_to_model
 from plant_models.specification import EstimateSpec
@@ -23,15 +24,27 @@ from softsensor.estimation.noise_tuning.interval_scale import (
 from softsensor.readings_of_cycle import CycleReadings
 from softsensor.service.replay import Replay, parts_of
 from softsensor.service.tuned_file import Change
-from softsensor.service.tuning_report import IntervalProposal
+from softsensor.service.tuning_report import IntervalProposal, LabCourse
 
 LEAST_SCALE = 0.05
 
 
 def interval_proposals(
     tuned: UnitDesign, readings: CycleReadings, split: int, labs: Sequence[LabArrival]
-) -> tuple[IntervalProposal, ...]:
-    """For each estimate what the laboratory results after cycle ``split`` say about its interval."""
+) -> tuple[tuple[IntervalProposal, ...], tuple[LabCourse, ...]]:
+    """For each estimate what the laboratory results after cycle ``split`` say about its interval, and their course."""
+    proposals, courses = [], []
+    scores = _scores(tuned, readings, split, labs)
+    for estimate, (times, own) in zip(tuned.model.spec.estimates, scores, strict=True):
+        proposals.append(_proposal(estimate, own))
+        courses.append(_course(estimate, proposals[-1], times, own))
+    return tuple(proposals), tuple(courses)
+
+
+def _scores(
+    tuned: UnitDesign, readings: CycleReadings, split: int, labs: Sequence[LabArrival]
+) -> list[tuple[NDArray[np.int64], Scores]]:
+    """For each estimate the laboratory results after cycle ``split``: sampling times and scores, in order of sampling."""
     outcomes: list[LabOutcome] = []
     variances: dict[tuple[int, int, float], float] = {}
     spec = tuned.model.spec
@@ -44,26 +57,48 @@ def interval_proposals(
             published[0, here], published[1, here] = stretch.results.estimate, stretch.results.sd
         variances = {(item.cycle, item.estimate, item.value): item.variance for item in running.run.labs}
     published[1] /= [item.interval_scale for item in spec.estimates]
-    since = int(readings.times[split])
+    counted = sorted(_counted(outcomes, int(readings.times[split])), key=lambda item: item.arrival.sampled)
     out = []
     for e, estimate in enumerate(spec.estimates):
         lab = tuned.model.scaled.estimates[e].lab
-        own = lab.sd**2 if lab is not None else math.nan
+        own = [item for item in counted if item.arrival.estimate == e]
+        usual = lab.sd**2 if lab is not None else math.nan
         results = [
             _score(
                 item,
                 one_to_model(estimate, item.arrival.value),
-                variances.get((item.counted_cycle, e, item.arrival.value), own),
+                variances.get((item.counted_cycle, e, item.arrival.value), usual),
                 published[:, :, e],
             )
-            for item in with_corrections(outcomes)
-            if item.arrival.estimate == e
-            and item.arrival.sampled > since
-            and item.counted_cycle >= 0
-            and math.isfinite(item.innovation)
+            for item in own
         ]
-        out.append(_proposal(estimate, Scores(*np.array(results, dtype=np.float64).reshape(-1, 3).T)))
-    return tuple(out)
+        times = np.array([item.arrival.sampled for item in own], dtype=np.int64)
+        out.append((times, Scores(*np.array(results, dtype=np.float64).reshape(-1, 3).T)))
+    return out
+
+
+def _counted(outcomes: Sequence[LabOutcome], since: int) -> list[LabOutcome]:
+    """Results sampled after a time that the estimate can be held against, without those that were corrected later."""
+    return [
+        item
+        for item in with_corrections(outcomes)
+        if item.arrival.sampled > since and item.counted_cycle >= 0 and math.isfinite(item.innovation)
+    ]
+
+
+def _course(
+    estimate: EstimateSpec, proposal: IntervalProposal, times: NDArray[np.int64], scores: Scores
+) -> LabCourse:
+    """Results less predictions with half of the 95 % interval before and after scaling."""
+    return LabCourse(
+        estimate.tag,
+        estimate.unit,
+        estimate.transform is not None,
+        times,
+        scores.error,
+        scores.half_width(proposal.scale_before),
+        scores.half_width(proposal.scale),
+    )
 
 
 def _score(item: LabOutcome, result: float, variance: float, published: Floats) -> tuple[float, float, float]:

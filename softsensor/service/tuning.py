@@ -6,45 +6,35 @@ where what was fitted does worse than the file on the rest of the history.
 
 from __future__ import annotations
 
-import math
 from collections.abc import Collection, Sequence
-from dataclasses import dataclass, replace
+from dataclasses import replace
 
 import numpy as np
-from numpy.typing import NDArray
 
 from connectors.history import History
 from plant_models.building import build_plant_model
 from plant_models.durations import parse_duration
-from plant_models.model_scale import to_model
 from plant_models.plant_model import PlantModel
-from plant_models.schedules import slowest_lag
 from plant_models.specification import UnitSpec
-from softsensor.cycle import UnitDesign, rerun, usable, usable_inputs
-from softsensor.detection.flags import FlagBook
-from softsensor.estimation.kernel import Floats, initial_state
+from softsensor.cycle import UnitDesign
+from softsensor.estimation.kernel import Floats
 from softsensor.estimation.lab_results import LabArrival
 from softsensor.estimation.noise_tuning.archive_checks import objection_to_archive, objection_to_spectrum
-from softsensor.estimation.noise_tuning.deviations import Deviations, deviations
 from softsensor.estimation.noise_tuning.maximum_likelihood import Maximum, NoiseFit, maximise
 from softsensor.estimation.noise_tuning.parameters import NoiseParameter, noise_parameters
 from softsensor.estimation.noise_tuning.separability import alike, certainty, interval, too_fast
-from softsensor.readings_of_cycle import CycleQuality, CycleReadings
-from softsensor.service.assembly import assemble_history
+from softsensor.readings_of_cycle import CycleReadings
 from softsensor.service.interval_proposals import interval_proposals, scale_changes
+from softsensor.service.judged_stretch import innovation_courses, whiteness_of
 from softsensor.service.tuned_file import UNITS_OF_TIME, Change, changed_spec, tolerances_given
-from softsensor.service.tuning_report import FittedNumber, TuningReport, Whiteness
-from softsensor.service.unit_run import slice_readings
+from softsensor.service.tuning_data import FIT_SHARE, TuningData, beyond_gates, standardised, tuning_data
+from softsensor.service.tuning_report import FittedNumber, TuningReport
 from softsensor.unit_design import design_unit
 
-FIT_SHARE = 0.6
-"""Share of the history that is fitted; the rest judges the fit."""
+__all__ = ["FIT_SHARE", "LEAST_CYCLES", "tune", "tune_intervals", "written_value"]
+
 LEAST_CYCLES = 500
 """In either part."""
-LEAD_IN = 0.05
-"""At most this share of the fit only leads in: the inputs before the history are not known."""
-SETTLED = 3.0
-"""Slowest time constants of the inputs' paths after which the lead-in ends."""
 GATE_TURNS = 5
 """Fits after which gate and fit must agree on the readings that are kept out."""
 DIGITS = 4
@@ -53,35 +43,27 @@ CHANCE = 3.0
 """By this and one per parameter log L on the rest may fall by chance."""
 
 
-@dataclass(frozen=True)
-class _Data:
-    """A history as it is tuned on: cycles, readings as shown (``y``), which cycles are fitted, what the likelihood sees."""
-
-    design: UnitDesign
-    readings: CycleReadings
-    y: Floats
-    split: int
-    lead_in: int
-    seen: Deviations
-
-
 def tune(
-    model: PlantModel, history: History, labs: Sequence[LabArrival] = (), keep: Collection[str] = ()
+    model: PlantModel,
+    recorded: History | CycleReadings,
+    labs: Sequence[LabArrival] = (),
+    keep: Collection[str] = (),
 ) -> TuningReport:
     """Fit a model's noise on the first part of a history and judge it on the rest.
 
-    :param labs: laboratory results that lie within the history.
+    :param recorded: a history, or cycles on record that follow each other without a gap.
+    :param labs: laboratory results that lie within it.
     :param keep: names of parameters that stay as they are, such as ``TI2101A.noise_sd``.
     :raises Problem: a name in ``keep`` that the model does not have.
     """
     parameters = noise_parameters(model.spec, keep)
-    data = _data(design_unit(model), history)
+    data = tuning_data(design_unit(model), recorded)
     report = _blank(model.spec, data)
     refusals = _too_short(report) or (
         _archive(model.spec, data) + alike(model.spec, model.stochastic, parameters)
     )
     if refusals:
-        return replace(report, refusals=refusals)
+        return replace(_looked_at(report, data, data.design), refusals=refusals)
     data, fitted, best, disagreement = _fitted(data, parameters)
     known = certainty(best)
     report = replace(
@@ -93,56 +75,60 @@ def tune(
     refusals = known.objections + disagreement + too_fast(best, model.spec.sample_time)
     refusals += _filtered(fitted, data)
     if refusals:
-        return replace(report, refusals=refusals)
+        return replace(_looked_at(report, data, fitted), refusals=refusals)
     return _judged(data, report, labs)
 
 
-def tune_intervals(model: PlantModel, history: History, labs: Sequence[LabArrival]) -> TuningReport:
+def tune_intervals(
+    model: PlantModel, recorded: History | CycleReadings, labs: Sequence[LabArrival]
+) -> TuningReport:
     """Leave the noise as the file has it, and propose interval scales only, from the same later part of the history.
 
     For a model whose noise the data cannot give: a factor on the interval asks for no fit.
     """
     design = design_unit(model)
-    data = _data(design, history)
-    report = _blank(model.spec, data)
+    data = tuning_data(design, recorded)
+    report = _looked_at(_blank(model.spec, data), data, design)
     refusals = _too_short(report) + _archive(model.spec, data)
     if refusals:
         return replace(report, refusals=refusals)
-    intervals = interval_proposals(design, data.readings, data.split, labs)
-    return replace(
-        report, sensors=_whiteness(data, design), intervals=intervals, changes=scale_changes(intervals)
-    )
+    intervals, courses = interval_proposals(design, data.readings, data.split, labs)
+    return replace(report, intervals=intervals, lab_courses=courses, changes=scale_changes(intervals))
+
+
+def _looked_at(report: TuningReport, data: TuningData, tuned: UnitDesign) -> TuningReport:
+    """The report with each sensor's innovations on the cycles that were not fitted: by the file, and by another design."""
+    if report.check_cycles < LEAST_CYCLES:
+        return report
+    before = standardised(data.design, data)[data.split :]
+    after = before if tuned is data.design else standardised(tuned, data)[data.split :]
+    tags = data.design.model.sensor_tags
+    courses = innovation_courses(tags, before, after)
+    return replace(report, sensors=whiteness_of(tags, before, after), courses=courses)
 
 
 def _fitted(
-    data: _Data, parameters: tuple[NoiseParameter, ...]
-) -> tuple[_Data, UnitDesign, Maximum, tuple[str, ...]]:
+    data: TuningData, parameters: tuple[NoiseParameter, ...]
+) -> tuple[TuningData, UnitDesign, Maximum, tuple[str, ...]]:
     """The fit without the readings that the gate keeps out: data without them, fitted unit, fit, what speaks against it.
 
     Which readings those are depends on the noise, so gate and fit take turns until they agree.
     """
-    kept_out = _kept_out(data.design, data)
+    kept_out = beyond_gates(data.design, data)
     for _ in range(GATE_TURNS):
         z = np.where(kept_out, np.nan, data.seen.z)
         seen = replace(data, seen=data.seen._replace(z=z))
         fit = NoiseFit(data.design.model, parameters, seen.seen.between(0, data.split), data.lead_in)
         best = maximise(fit)
         fitted = design_unit(build_plant_model(fit.spec_at(np.log(best.values))))
-        before, kept_out = kept_out, _kept_out(fitted, data)
+        before, kept_out = kept_out, beyond_gates(fitted, data)
         if np.array_equal(before, kept_out):
             return seen, fitted, best, ()
     text = f"after {GATE_TURNS} fits it is not settled which readings lie beyond the sensors' gates"
     return seen, fitted, best, (text,)
 
 
-def _kept_out(design: UnitDesign, data: _Data) -> NDArray[np.bool_]:
-    """(N, m) true where a reading lies beyond its sensor's gate and is not used."""
-    state = initial_state(design.model, design.kernel)
-    _, out = rerun(design, state, FlagBook(), 0, data.readings, ())
-    return np.asarray(np.isfinite(out.innovation) & (out.used == 0), dtype=np.bool_)
-
-
-def _judged(data: _Data, report: TuningReport, labs: Sequence[LabArrival]) -> TuningReport:
+def _judged(data: TuningData, report: TuningReport, labs: Sequence[LabArrival]) -> TuningReport:
     """The report with what the rest of the history says about the numbers to be written."""
     model = data.design.model
     changes = tuple(
@@ -159,53 +145,24 @@ def _judged(data: _Data, report: TuningReport, labs: Sequence[LabArrival]) -> Tu
             f"on the part that was not fitted the fit does worse than the file (log L {after:.1f}, before {before:.1f}): "
             "the two parts of the history differ",
         )
-    intervals = interval_proposals(tuned, data.readings, data.split, labs)
+    intervals, courses = interval_proposals(tuned, data.readings, data.split, labs)
     return replace(
-        report,
+        _looked_at(report, data, tuned),
         check_log_likelihood=(before, after),
-        sensors=_whiteness(data, tuned),
         intervals=intervals,
+        lab_courses=courses,
         refusals=refusals,
         changes=changes + scale_changes(intervals),
     )
 
 
-def _data(design: UnitDesign, history: History) -> _Data:
-    """Cycles from the first that has every input, and what the likelihood sees of them."""
-    model = design.model
-    readings = assemble_history(model.spec, history)
-    complete = np.flatnonzero(np.all(np.isfinite(readings.u), axis=1))
-    first = int(complete[0]) if len(complete) else len(readings)
-    readings = slice_readings(readings, first, len(readings))
-    y, scale = usable(design, readings)
-    doubtful = np.any(readings.u_quality > CycleQuality.UNCERTAIN, axis=1).astype(np.int64)
-    in_scale = to_model(model.spec.sensors, y)
-    seen = deviations(model, usable_inputs(design, readings), in_scale, scale, doubtful)
-    split = int(FIT_SHARE * len(readings))
-    return _Data(design, readings, y, split, min(_settling(model), int(LEAD_IN * split)), seen)
-
-
-def _settling(model: PlantModel) -> int:
-    """Cycles after which what came before the history no longer shows in any path from an input."""
-    longest = 0.0
-    for path in model.paths:
-        sizes = np.abs(np.linalg.eigvals(path.phi)) if path.phi.size else np.zeros(0)
-        slow = sizes[(sizes > 0.0) & (sizes < 1.0 - 1e-9)]
-        decay = -SETTLED / float(np.log(slow.max())) if slow.size else 0.0
-        longest = max(longest, path.whole_delays + 1 + decay)
-    for number, scheduled in model.scheduled:
-        decay = SETTLED * slowest_lag(scheduled) / model.spec.sample_time
-        longest = max(longest, model.paths[number].whole_delays + 1 + decay)
-    return math.ceil(longest)
-
-
-def _blank(spec: UnitSpec, data: _Data) -> TuningReport:
+def _blank(spec: UnitSpec, data: TuningData) -> TuningReport:
     times = data.readings.times
     if not len(times):
         return TuningReport(spec.name, 0, 0, 0, 0, 0, 0)
     split = int(times[data.split])
     return TuningReport(
-        spec.name, int(times[0]), split, int(times[-1]), data.split, len(times) - data.split, 0
+        spec.name, int(times[0]), split, int(times[-1]), data.split, len(times) - data.split, 0, data.lead_in
     )
 
 
@@ -218,7 +175,7 @@ def _too_short(report: TuningReport) -> tuple[str, ...]:
     )
 
 
-def _archive(spec: UnitSpec, data: _Data) -> tuple[str, ...]:
+def _archive(spec: UnitSpec, data: TuningData) -> tuple[str, ...]:
     """A line per sensor whose readings an archive has changed."""
     found = []
     for i, sensor in enumerate(spec.sensors):
@@ -231,9 +188,9 @@ def _archive(spec: UnitSpec, data: _Data) -> tuple[str, ...]:
     return tuple(found)
 
 
-def _filtered(fitted: UnitDesign, data: _Data) -> tuple[str, ...]:
+def _filtered(fitted: UnitDesign, data: TuningData) -> tuple[str, ...]:
     """A line per sensor whose innovations, with the fitted noise, show that its readings were filtered."""
-    z = _standardised(fitted, data)[data.lead_in : data.split]
+    z = standardised(fitted, data)[data.lead_in : data.split]
     found = []
     for i, sensor in enumerate(fitted.model.spec.sensors):
         objection = objection_to_spectrum(z[:, i])
@@ -262,34 +219,3 @@ def written_value(parameter: NoiseParameter, value: float) -> float:
         return float(f"{value:.{DIGITS}g}")
     unit, size = next((unit, size) for unit, size, until in UNITS_OF_TIME if value < until)
     return parse_duration(f"{value / size:.{DIGITS}g} {unit}")
-
-
-def _standardised(design: UnitDesign, data: _Data) -> Floats:
-    """Innovations over their sd (N, m) of the live cycle without tests; nan where there is no reading."""
-    state = initial_state(design.model, design.kernel)
-    _, out = rerun(design, state, FlagBook(), 0, data.readings, ())
-    z = np.asarray(out.innovation / out.innovation_sd, dtype=np.float64)
-    z[~np.isfinite(data.seen.z)] = np.nan
-    return z
-
-
-def _whiteness(data: _Data, tuned: UnitDesign) -> tuple[Whiteness, ...]:
-    before = _standardised(data.design, data)[data.split :]
-    after = _standardised(tuned, data)[data.split :]
-    out = []
-    for i, tag in enumerate(tuned.model.sensor_tags):
-        count = int(np.isfinite(after[:, i]).sum())
-        old, new = _nis_and_whiteness(before[:, i]), _nis_and_whiteness(after[:, i])
-        out.append(Whiteness(tag, count, old[0], new[0], old[1], new[1]))
-    return tuple(out)
-
-
-def _nis_and_whiteness(z: Floats) -> tuple[float, float]:
-    """Mean square and lag-one correlation of standardised innovations (N,) with gaps; nan where there are none."""
-    present = z[np.isfinite(z)]
-    pairs = z[1:] * z[:-1]
-    pairs = pairs[np.isfinite(pairs)]
-    if not len(pairs):
-        return math.nan, math.nan
-    nis = float(np.mean(present**2))
-    return nis, float(np.mean(pairs)) / nis

@@ -11,7 +11,7 @@ from urllib.parse import quote
 
 from fastapi import APIRouter, Query, Request
 from fastapi.responses import HTMLResponse, JSONResponse, RedirectResponse, Response, StreamingResponse
-from jinja2 import Environment, PackageLoader, StrictUndefined
+from jinja2 import Environment
 
 from plant_models.errors import Problem
 from softsensor.alarms.sensor_status import SensorStatus
@@ -34,6 +34,7 @@ from softsensor.web.review_period import period_of_flag
 from softsensor.web.rows import estimate_rows, latest_cycle, tag_decimals, tag_units
 from softsensor.web.security import COOKIE
 from softsensor.web.site import NotHere, Site, choices_for
+from softsensor.web.templating import templates
 from softsensor.web.unit_view import UnitView
 
 PERIODS = {"1 h": 1.0, "8 h": 8.0, "24 h": 24.0, "7 d": 168.0}
@@ -48,28 +49,8 @@ OffsetMinutes = Annotated[int, Query(ge=-1440, le=1440)]
 
 
 def environment() -> Environment:
-    """Templates in which everything is escaped and a name that is not there is an error."""
-    found = Environment(
-        loader=PackageLoader("softsensor.web", "templates"),
-        autoescape=True,
-        undefined=StrictUndefined,
-        trim_blocks=True,
-        lstrip_blocks=True,
-    )
-    names = (
-        "iso",
-        "utc",
-        "number",
-        "short",
-        "percent",
-        "share",
-        "clock",
-        "address",
-        "difference_unit",
-        "group_words",
-        "event_words",
-    )
-    found.filters |= {name: getattr(wording, name) for name in names}
+    """The templates with what the pages ask of them besides words."""
+    found = templates()
     found.globals |= {"SensorStatus": SensorStatus, "FINDINGS": FINDINGS, "PERIODS": PERIODS}
     return found
 

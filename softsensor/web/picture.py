@@ -1,4 +1,4 @@
-"""A still picture of courses over time as inline SVG: for paper, without a script."""
+"""A still picture of courses over time, or over a number, as inline SVG: for paper, without a script."""
 
 from __future__ import annotations
 
@@ -14,13 +14,29 @@ from softsensor.web.wording import moment
 WIDTH, HEIGHT = 760.0, 230.0
 LEFT, RIGHT, TOP, BOTTOM = 62.0, 22.0, 12.0, 34.0
 TICKS = 5
-STEPS_S = (60, 300, 600, 1800, 3600, 7200, 14400, 28800, 86400, 172800, 604800)
+STEPS_S = (
+    60,
+    300,
+    600,
+    1800,
+    3600,
+    7200,
+    14400,
+    28800,
+    86400,
+    172800,
+    604800,
+    1209600,
+    2419200,
+    4838400,
+    14515200,
+)
 """Distances between two times on the axis."""
 
 
 @dataclass(frozen=True)
 class Course:
-    """A line through points (milliseconds since 1970, value); None breaks it. ``kind`` names its look."""
+    """A line through points (milliseconds since 1970 or a number, value); None breaks it. ``kind`` names its look."""
 
     kind: str
     x: Sequence[float | None]
@@ -51,7 +67,7 @@ class Marks:
 
 @dataclass(frozen=True)
 class Picture:
-    """What is drawn between two times (milliseconds since 1970)."""
+    """What is drawn between two times (milliseconds since 1970), or between two numbers where ``across`` names them."""
 
     title: str
     unit: str
@@ -64,6 +80,9 @@ class Picture:
     """Values drawn as horizontal lines."""
     areas: tuple[Area, ...] = ()
     marks: tuple[Marks, ...] = ()
+    across: str = ""
+    """What the horizontal axis counts; empty for time."""
+    size: tuple[float, float] = (WIDTH, HEIGHT)
 
 
 def round_step(span: float, wanted: int = TICKS) -> float:
@@ -87,12 +106,13 @@ def svg_of(picture: Picture) -> Markup:
     """The picture as an SVG element; times in UTC, every text escaped."""
     low, high = _scale(picture)
     margin = 0.06 * (high - low)
-    frame = _Frame(picture.start, picture.end, low - margin, high + margin)
+    frame = _Frame(picture.start, picture.end, low - margin, high + margin, *picture.size)
     parts = [_band(frame, *band) for band in picture.bands]
     parts += [_area(frame, area) for area in picture.areas]
-    parts += _value_axis(frame, picture.unit) + _time_axis(frame)
+    parts += _value_axis(frame, picture.unit)
+    parts += _number_axis(frame, picture.across) if picture.across else _time_axis(frame)
     parts += [
-        f'<path class="level" d="M{LEFT} {frame.y(level):.1f}H{WIDTH - RIGHT}"/>' for level in picture.levels
+        f'<path class="level" d="M{LEFT} {frame.y(level):.1f}H{frame.right}"/>' for level in picture.levels
     ]
     parts += [_course(frame, course) for course in picture.courses]
     parts += [
@@ -100,7 +120,7 @@ def svg_of(picture: Picture) -> Markup:
     ]
     title = escape(picture.title)
     return Markup(
-        f'<svg class="still" viewBox="0 0 {WIDTH:.0f} {HEIGHT:.0f}" role="img" aria-label="{title}">'
+        f'<svg class="still" viewBox="0 0 {frame.width:.0f} {frame.height:.0f}" role="img" aria-label="{title}">'
         f"<title>{title}</title>{''.join(parts)}</svg>"
     )
 
@@ -126,20 +146,30 @@ class _Frame:
     end: float
     low: float
     high: float
+    width: float
+    height: float
+
+    @property
+    def right(self) -> float:
+        return self.width - RIGHT
+
+    @property
+    def bottom(self) -> float:
+        return self.height - BOTTOM
 
     def x(self, time: float) -> float:
         share = (min(max(time, self.start), self.end) - self.start) / (self.end - self.start)
-        return LEFT + share * (WIDTH - LEFT - RIGHT)
+        return LEFT + share * (self.right - LEFT)
 
     def y(self, value: float) -> float:
-        return TOP + (self.high - value) / (self.high - self.low) * (HEIGHT - TOP - BOTTOM)
+        return TOP + (self.high - value) / (self.high - self.low) * (self.bottom - TOP)
 
 
 def _band(frame: _Frame, start: float, end: float, kind: str) -> str:
     left, right = frame.x(start), frame.x(end)
     return (
         f'<rect class="{escape(kind)}" x="{left:.1f}" y="{TOP}" width="{right - left:.1f}" '
-        f'height="{HEIGHT - TOP - BOTTOM}"/>'
+        f'height="{frame.bottom - TOP}"/>'
     )
 
 
@@ -149,24 +179,43 @@ def _value_axis(frame: _Frame, unit: str) -> list[str]:
     parts = []
     for k in range(math.ceil(frame.low / step), math.floor(frame.high / step) + 1):
         y = frame.y(k * step)
-        parts.append(f'<path class="grid" d="M{LEFT} {y:.1f}H{WIDTH - RIGHT}"/>')
+        parts.append(f'<path class="grid" d="M{LEFT} {y:.1f}H{frame.right}"/>')
         parts.append(f'<text class="end" x="{LEFT - 6}" y="{y + 4:.1f}">{k * step:.{decimals}f}</text>')
-    middle = TOP + (HEIGHT - TOP - BOTTOM) / 2.0
+    middle = TOP + (frame.bottom - TOP) / 2.0
     parts.append(f'<text class="middle" transform="translate(13 {middle}) rotate(-90)">{escape(unit)}</text>')
     return parts
 
 
+def _number_axis(frame: _Frame, across: str) -> list[str]:
+    step = round_step(frame.end - frame.start, 6)
+    decimals = max(0, -math.floor(math.log10(step) + 1e-9))
+    parts = [_axis(frame)]
+    for k in range(math.ceil(frame.start / step - 1e-9), math.floor(frame.end / step + 1e-9) + 1):
+        x = frame.x(k * step)
+        parts.append(f'<path class="axis" d="M{x:.1f} {frame.bottom}v4"/>')
+        parts.append(
+            f'<text class="middle" x="{x:.1f}" y="{frame.bottom + 16}">{k * step:.{decimals}f}</text>'
+        )
+    middle = (LEFT + frame.right) / 2.0
+    parts.append(f'<text class="middle" x="{middle:.1f}" y="{frame.height - 4}">{escape(across)}</text>')
+    return parts
+
+
+def _axis(frame: _Frame) -> str:
+    return f'<path class="axis" d="M{LEFT} {TOP}V{frame.bottom}H{frame.right}"/>'
+
+
 def _time_axis(frame: _Frame) -> list[str]:
     step = time_step((frame.end - frame.start) / 1000.0) * 1000
-    parts = [f'<path class="axis" d="M{LEFT} {TOP}V{HEIGHT - BOTTOM}H{WIDTH - RIGHT}"/>']
+    parts = [_axis(frame)]
     day = ""
     for time in range(math.ceil(frame.start / step) * step, math.floor(frame.end) + 1, step):
         at, x = moment(time * 1000), frame.x(time)
         new = f"{at:%Y-%m-%d}"
-        parts.append(f'<path class="axis" d="M{x:.1f} {HEIGHT - BOTTOM}v4"/>')
-        parts.append(f'<text class="middle" x="{x:.1f}" y="{HEIGHT - BOTTOM + 16}">{at:%H:%M}</text>')
+        parts.append(f'<path class="axis" d="M{x:.1f} {frame.bottom}v4"/>')
+        parts.append(f'<text class="middle" x="{x:.1f}" y="{frame.bottom + 16}">{at:%H:%M}</text>')
         if new != day:
-            parts.append(f'<text class="middle" x="{x:.1f}" y="{HEIGHT - 4}">{new} UTC</text>')
+            parts.append(f'<text class="middle" x="{x:.1f}" y="{frame.height - 4}">{new} UTC</text>')
             day = new
     return parts
 

@@ -40,8 +40,12 @@ class Scores(NamedTuple):
 
     def inside(self, scale: float) -> int:
         """How many results lie inside the 95 % interval with this factor on the estimate's sd."""
+        return int(np.count_nonzero(np.abs(self.error) <= self.half_width(scale) * (1.0 + 1e-12)))
+
+    def half_width(self, scale: float) -> Floats:
+        """Half of the 95 % interval of each error (n,) with this factor on the estimate's sd."""
         spread = np.sqrt(scale**2 * self.estimate_variance + self.result_variance)
-        return int(np.count_nonzero(np.abs(self.error) <= NORMAL_95 * spread * (1.0 + 1e-12)))
+        return np.asarray(NORMAL_95 * spread, dtype=np.float64)
 
 
 def conformal_scale(scores: Scores) -> float:
