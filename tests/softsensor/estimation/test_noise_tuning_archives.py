@@ -6,6 +6,8 @@ import numpy as np
 import pytest
 
 from softsensor.estimation.noise_tuning.archive_checks import (
+    RISE,
+    low_rise,
     objection_to_archive,
     objection_to_spectrum,
     resolution,
@@ -127,6 +129,47 @@ def test_innovations_of_a_model_that_is_slow_to_follow_are_not_called_filtered()
     slow = 0.5 * np.sin(np.arange(3000) / 200.0)
 
     assert objection_to_spectrum(np.random.default_rng(5).standard_normal(3000) + slow) is None
+
+
+def with_slow_misfit(seed: int, count: int = 6000) -> np.ndarray:
+    """Innovations of a model that is wrong: little noise, and what wanders with the inputs, smooth at the top."""
+    random = np.random.default_rng(seed)
+    moves = np.where(random.random(count) < 0.01, random.standard_normal(count), 0.0)
+    slow = np.cumsum(moves)
+    for pole in (0.95, 0.8):
+        for k in range(1, count):
+            slow[k] = pole * slow[k - 1] + (1.0 - pole) * slow[k]
+    z = slow - slow.mean() + 0.01 * random.standard_normal(count)
+    return z / z.std()
+
+
+@pytest.mark.parametrize("seed", range(5))
+def test_a_model_that_is_wrong_at_low_frequencies_is_not_called_filtered(seed: int) -> None:
+    z = with_slow_misfit(seed)
+    over_all, over_next = low_rise(z)
+
+    said = str(objection_to_spectrum(z))
+
+    assert over_all > RISE
+    assert over_next > RISE
+    assert "does not fit at low frequencies" in said
+    assert "filtered" not in said
+
+
+def test_the_rise_at_low_frequencies_against_a_sum_of_cosines() -> None:
+    """Two lines in white noise: the mean powers follow from their amplitudes, by hand."""
+    n, k = 6400, np.arange(6400)
+    z = np.random.default_rng(8).standard_normal(n)
+    assert low_rise(z) == pytest.approx((1.0, 1.0), abs=0.5)
+
+    line = 0.8 * np.cos(2.0 * np.pi * 20.0 * k / n)
+    over_all, over_next = low_rise(z + line)
+
+    power = np.abs(np.fft.rfft(z + line - np.mean(z + line))) ** 2
+    lowest, following = [power[1:51].mean()], [power[101:201].mean()]
+    assert over_all == pytest.approx(lowest[0] / power[1:].mean(), rel=1e-9)
+    assert over_next == pytest.approx(lowest[0] / following[0], rel=1e-9)
+    assert over_all > 10.0
 
 
 def test_resolution_is_the_smallest_step() -> None:
