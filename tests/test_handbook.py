@@ -23,7 +23,7 @@ from plant_models.model_sections import FALSE_FLAG_INTERVAL
 from plant_models.simulators import reactor_model_path
 from plant_models.specification import GATE, UnitSpec
 from plant_models.unit_spellings import PREFIXED, WHOLE
-from softsensor import cycle, published, unit_design
+from softsensor import cycle, layout, published, unit_design
 from softsensor.cli.check import as_document, print_table
 from softsensor.detection import (
     absorbed_faults,
@@ -335,7 +335,7 @@ LIMITS = [
     (METHOD, f"(within {lab_results.FITS:g} standard deviations)"),
     (METHOD, f"at another time within {lab_results.SEARCH_HOURS:g} h"),
     (METHOD, f"may be {assembly.DEFAULT_HORIZON_S / 86400.0:g} days late at least"),
-    (METHOD, f"{cycle.UNCERTAIN_VARIANCE:g} noise_sd^2 where the reading is Uncertain"),
+    (METHOD, f"{layout.UNCERTAIN_VARIANCE:g} noise_sd^2 where the reading is Uncertain"),
     (METHOD, f"the interval of {published.NORMAL_95:.2f} sd to either side"),
     (METHOD, f"is beyond `gate` standard deviations ({GATE:g},"),
     (METHOD, f"In the {gate.FOLLOWED} cycles after a sensor began to be followed"),
