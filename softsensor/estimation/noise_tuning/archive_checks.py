@@ -28,8 +28,8 @@ LOWEST = 1.0 / 64.0
 RISE = 3.0
 """By this the lowest frequencies have more power than all on average, and than those two to four times as high, where the
 model is wrong: slow moves of the inputs leave a rise that has no end. A filter's plateau is flat, and the fit makes it as
-large as the rest; of one that is not fitted with a pole of 0.8 the two are 9 and 1.4, of the fractionator with gains
-and time constants 20 % off 28 to 64 and 24 to 1070."""
+large as the rest; of one that is not fitted with a pole of 0.8 the two are 9 and 1.4. Of the fractionator with gains
+and time constants 20 % off the first was 3 to 82, median 57 (15 sensors, three runs of 12,000 cycles)."""
 
 
 def resolution(values: Floats) -> float:
