@@ -7,8 +7,8 @@ ramp) as likely as the other; so afterwards::
     p(a, shape) proportional to exp(score(a, shape)),   a = 1 ... count, every cycle of the innovations that are kept
 
 The interval leaves 2.5 % to either side. A step from before all that is kept stands for as many cycles again. Where more
-than 2.5 % lies on the oldest onset that can be looked at or before, the interval has no beginning. Every cycle is weighed
-and not only the grid of a look, once per flag; so the interval is as fine as the cycles.
+than 2.5 % lies on the oldest onset that can be looked at or before, the interval has no beginning. Between the
+likely ends of a look's grid every cycle is weighed, once per flag; so the interval is as fine as the cycles.
 
 Source: the change point's posterior of a Gaussian linear model, as in Bernardo & Smith, Bayesian Theory (1994), ch. 5;
 Smith, A. F. M., Biometrika 62 (1975) 407-416, for one change and a flat prior on its place (from memory).
@@ -22,13 +22,25 @@ import numpy as np
 from numba import njit
 
 from softsensor.detection.detection_design import DetectionDesign, explanations
-from softsensor.detection.diagnosis import FINEST, Likelihoods, Verdict, recent, score_of, score_of_older
+from softsensor.detection.diagnosis import (
+    FINEST,
+    Likelihoods,
+    Verdict,
+    onset_ages,
+    recent,
+    score_of,
+    score_of_older,
+    sharp_ages,
+)
 from softsensor.detection.state_of_tests import TestState
 from softsensor.estimation.elementary import exponential, logarithm
 from softsensor.estimation.kernel import Floats, Ints
 
 TAIL = 0.025
 """Probability left to either side of the interval."""
+UNLIKELY = 25.0
+"""Onsets whose log likelihood ratio lies so far below the best one's on the grid of a look, and all beyond them, are not
+weighed cycle by cycle: together they have less than a millionth."""
 LEAST_TOLD = 0.001
 """An explanation less probable than this is not kept with the flag; "nothing" always is."""
 
@@ -88,7 +100,14 @@ def _interval(design: DetectionDesign, tests: TestState, use: Ints, shapes: Ints
     suspects = [design.suspects[h] for h in shapes]
     older = np.array([int(available == design.window and item.shape == "step") for item in suspects])
     prior_sd = np.array([item.prior_sd for item in suspects])
-    scores = onset_scores(table[shapes], prior_sd, eps, counted, older)
+    grid = np.union1d(onset_ages(count), sharp_ages(tests.ring, newest, steady.sd, available))
+    chosen = np.zeros(count, dtype=np.int64)
+    chosen[grid - 1] = 1
+    rough = onset_scores(table[shapes], prior_sd, eps, counted, older, chosen)[:, :count].max(axis=0)
+    likely = np.flatnonzero(rough[grid - 1] > rough.max() - UNLIKELY)
+    first, last = grid[max(likely[0] - 1, 0)], grid[min(likely[-1] + 1, len(grid) - 1)]
+    chosen[first - 1 : last] = 1
+    scores = onset_scores(table[shapes], prior_sd, eps, counted, older, chosen)
     earliest, latest = onset_span(scores)
     while 0 < earliest < available and whole[count - earliest - 1] == 0:
         earliest += 1  # a cycle without all readings tells nothing of an onset in it
@@ -96,13 +115,20 @@ def _interval(design: DetectionDesign, tests: TestState, use: Ints, shapes: Ints
 
 
 @njit(cache=True)
-def onset_scores(table: Floats, prior_sd: Floats, eps: Floats, whole: Ints, older: Ints) -> Floats:
-    """(shapes, count + 1) log likelihood ratio of an onset 1 ... count cycles back; last: long before, where ``older``."""
+def onset_scores(
+    table: Floats, prior_sd: Floats, eps: Floats, whole: Ints, older: Ints, chosen: Ints
+) -> Floats:
+    """(shapes, count + 1) log likelihood ratio of an onset 1 ... count cycles back; last: long before, where ``older``.
+
+    Only the ages that are 1 in ``chosen`` (count,) are looked at; the others get next to nothing.
+    """
     n, count = table.shape[0], eps.shape[0]
     scores = np.full((n, count + 1), -1e300)
     for h in range(n):
         precision = 1.0 / (prior_sd[h] * prior_sd[h])
         for age in range(1, count + 1 + older[h]):
+            if age <= count and chosen[age - 1] == 0:
+                continue
             if age <= count:
                 numerator, denominator = score_of(table[h], eps, whole, age)
             else:

@@ -14,6 +14,7 @@ from numpy.typing import NDArray
 from scipy.special import logsumexp
 from scipy.stats import binom, multivariate_normal
 
+from softsensor.detection import onsets
 from softsensor.detection.flags import Flag
 from softsensor.detection.onsets import onset_scores, onset_span
 
@@ -39,6 +40,9 @@ def log_ratio(eps: Array, signature: Array, prior_sd: float) -> float:
     return float(with_it.logpdf(eps.ravel()) - multivariate_normal(np.zeros(len(g))).logpdf(eps.ravel()))
 
 
+EVERY = np.ones(COUNT, dtype=np.int64)
+
+
 @pytest.mark.parametrize(
     ("seed", "onset", "size", "beginning"),
     [(1, 9, 2.0, True), (2, 14, 1.2, False), (3, 5, 3.0, True), (4, 20, 0.4, False)],
@@ -55,9 +59,7 @@ def test_the_interval_is_that_of_the_posterior_over_every_cycle(
         ]
     )
     long_ago = log_ratio(eps, np.tile(step[-1], (COUNT, 1)), 2.0)
-    scores = onset_scores(
-        np.stack([step, ramp]), prior_sd, eps, np.ones(COUNT, dtype=np.int64), np.array([1, 0])
-    )
+    scores = onset_scores(np.stack([step, ramp]), prior_sd, eps, EVERY, np.array([1, 0]), EVERY)
     np.testing.assert_allclose(scores[:, :COUNT], expected, rtol=1e-9, atol=1e-9)
     assert np.isclose(scores[0, COUNT], long_ago, rtol=1e-9)
     weights = np.append(logsumexp(expected, axis=0), long_ago + np.log(COUNT))
@@ -73,9 +75,7 @@ def test_the_interval_is_that_of_the_posterior_over_every_cycle(
 
 def test_a_gross_fault_s_onset_is_one_cycle_and_its_weights_do_not_overflow() -> None:
     eps, step, ramp = drawn(7, 9, 200.0)
-    scores = onset_scores(
-        np.stack([step, ramp]), np.full(2, 50.0), eps, np.ones(COUNT, dtype=np.int64), np.zeros(2, np.int64)
-    )
+    scores = onset_scores(np.stack([step, ramp]), np.full(2, 50.0), eps, EVERY, np.zeros(2, np.int64), EVERY)
     assert scores.max() > 10_000.0
     assert onset_span(scores) == (9, 9)
 
@@ -95,6 +95,15 @@ def test_the_true_onset_lies_within_the_interval_as_often_as_it_says() -> None:
     for item in found:
         assert item.flag is not None
         holds(item.flag)
+
+
+def test_weighing_only_between_likely_ends_changes_no_interval(monkeypatch: pytest.MonkeyPatch) -> None:
+    design = design_named(FRACTIONATOR)
+    near = [dated(design, number).flag for number in range(12)]
+    monkeypatch.setattr(onsets, "UNLIKELY", 1e12)
+    whole = [dated(design, number).flag for number in range(12)]
+    assert sum(flag is not None for flag in near) >= 8
+    assert near == whole
 
 
 def holds(flag: Flag) -> None:
